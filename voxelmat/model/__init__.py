@@ -1,0 +1,1 @@
+"""The nouns: grids, materials, blends, parts, regions, loads, designs and results."""
