@@ -1,0 +1,161 @@
+"""One-bit PNG bitmaps with a true physical pitch: a minimal, strict writer and reader.
+
+Follows the Portable Network Graphics specification (W3C Recommendation, second edition, 2003),
+sections 11.2.2 (IHDR), 11.3.5.3 (pHYs) and 9 (filtering; only filter 0 is used).
+"""
+
+from __future__ import annotations
+
+import struct
+import zlib
+from dataclasses import dataclass
+
+import numpy as np
+from isal import isal_zlib
+from numpy.typing import NDArray
+
+from voxelmat.errors import FileFormatError, InputError
+
+__all__ = ["Bitmap", "decode_bitmap", "encode_bitmap"]
+
+_SIGNATURE = b"\x89PNG\r\n\x1a\n"
+_LARGEST = 1 << 20  # sites along one side; far beyond any tray, far below any overflow
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Bitmap:
+    """A decoded bitmap.
+
+    Attributes
+    ----------
+    bits : ndarray of uint8, shape (rows, ceil(width / 8))
+        Eight pixels a byte, the leftmost in the highest bit; padding bits are 0.
+    width : int
+        Pixels a row.
+    pixels_per_metre : tuple of int or None
+        Along x and y, from the pHYs chunk.
+    """
+
+    bits: NDArray[np.uint8]
+    width: int
+    pixels_per_metre: tuple[int, int] | None
+
+
+def _chunk(kind: bytes, data: bytes) -> bytes:
+    code = zlib.crc32(data, zlib.crc32(kind))
+    return struct.pack(">I", len(data)) + kind + data + struct.pack(">I", code)
+
+
+def encode_bitmap(
+    bits: NDArray[np.uint8], width: int, pixels_per_metre: tuple[int, int]
+) -> bytes:
+    """Encode packed rows as a one-bit greyscale PNG.
+
+    Parameters
+    ----------
+    bits : ndarray of uint8, shape (rows, ceil(width / 8))
+        As in `Bitmap`; 1 is white.
+    width : int
+        Pixels a row.
+    pixels_per_metre : tuple of int
+        Along x and y, for the pHYs chunk.
+
+    Returns
+    -------
+    bytes
+        The whole file; the same input gives the same bytes.
+
+    Raises
+    ------
+    InputError
+        If shape and width do not agree.
+    """
+    rows, stride = bits.shape
+    if not (1 <= rows <= _LARGEST and 1 <= width <= _LARGEST and stride == (width + 7) // 8):
+        raise InputError(f"A bitmap {width} pixels wide does not fit rows of shape {bits.shape}.")
+    raw = np.zeros((rows, stride + 1), dtype=np.uint8)  # column 0: filter type 0, none
+    raw[:, 1:] = bits
+    header = struct.pack(">IIBBBBB", width, rows, 1, 0, 0, 0, 0)
+    return b"".join(
+        (
+            _SIGNATURE,
+            _chunk(b"IHDR", header),
+            _chunk(b"pHYs", struct.pack(">IIB", *pixels_per_metre, 1)),
+            _chunk(b"IDAT", isal_zlib.compress(raw.data, 1)),
+            _chunk(b"IEND", b""),
+        )
+    )
+
+
+def _chunks(data: bytes, name: str) -> list[tuple[bytes, bytes]]:
+    """All chunks up to IEND, each checked against its CRC."""
+    if not data.startswith(_SIGNATURE):
+        raise FileFormatError(f"{name} is not a PNG file.")
+    found: list[tuple[bytes, bytes]] = []
+    at = len(_SIGNATURE)
+    while not found or found[-1][0] != b"IEND":
+        if at + 12 > len(data):
+            raise FileFormatError(f"{name} is cut short: it has {len(data)} bytes and no end.")
+        (size,) = struct.unpack_from(">I", data, at)
+        end = at + 8 + size
+        if end + 4 > len(data):
+            raise FileFormatError(f"{name} is cut short inside a chunk of {size} bytes.")
+        if struct.unpack_from(">I", data, end)[0] != zlib.crc32(data[at + 4 : end]):
+            raise FileFormatError(f"{name} is damaged: a chunk does not match its check sum.")
+        found.append((data[at + 4 : at + 8], data[at + 8 : end]))
+        at = end + 4
+    return found
+
+
+def _inflate(packed: bytes, size: int, name: str) -> bytes:
+    """Exactly `size` bytes; never inflates more than that."""
+    engine = isal_zlib.decompressobj()
+    try:
+        raw = engine.decompress(packed, size + 1)
+    except isal_zlib.error as error:
+        raise FileFormatError(f"{name} is damaged: {error}.") from None
+    if len(raw) != size:
+        raise FileFormatError(f"{name} does not hold the {size} bytes that its header states.")
+    return bytes(raw)
+
+
+def decode_bitmap(data: bytes, name: str = "The bitmap") -> Bitmap:
+    """Decode a one-bit greyscale PNG without row filters, as `encode_bitmap` writes them.
+
+    Parameters
+    ----------
+    data : bytes
+        The whole file.
+    name : str
+        Named in errors.
+
+    Raises
+    ------
+    FileFormatError
+        If the file is damaged, cut short, of another depth or kind, or filtered.
+    """
+    chunks = _chunks(data, name)
+    if chunks[0][0] != b"IHDR" or len(chunks[0][1]) != 13:
+        raise FileFormatError(f"{name} does not begin with a header.")
+    width, rows, depth, colour, _, _, interlace = struct.unpack(">IIBBBBB", chunks[0][1])
+    if (depth, colour, interlace) != (1, 0, 0):
+        raise FileFormatError(
+            f"{name} must be a one-bit greyscale PNG without interlace; it has depth {depth}, "
+            f"colour type {colour}, interlace {interlace}."
+        )
+    if not (1 <= width <= _LARGEST and 1 <= rows <= _LARGEST):
+        raise FileFormatError(f"{name} states a size of {width} x {rows} pixels.")
+    stride = (width + 7) // 8
+    packed = b"".join(content for kind, content in chunks if kind == b"IDAT")
+    raw = _inflate(packed, rows * (stride + 1), name)
+    table = np.frombuffer(raw, dtype=np.uint8).reshape(rows, stride + 1)
+    if table[:, 0].any():
+        raise FileFormatError(
+            f"{name} uses row filters, so other software has saved it; write the stack again."
+        )
+    bits = table[:, 1:].copy()
+    if width % 8:
+        bits[:, -1] &= np.uint8((0xFF00 >> (width % 8)) & 0xFF)
+    pitch = next((c for k, c in chunks if k == b"pHYs" and len(c) == 9 and c[8] == 1), None)
+    ppm = None if pitch is None else struct.unpack(">II", pitch[:8])
+    return Bitmap(bits, width, ppm)
