@@ -93,7 +93,7 @@ class VoxelGrid:
     def centres(self) -> tuple[NDArray[np.float64], NDArray[np.float64], NDArray[np.float64]]:
         """Voxel centre coordinates along each axis, mm: three 1-D arrays."""
         x, y, z = (
-            o + h * (np.arange(n) + 0.5)
+            o + h * (np.arange(n, dtype=np.float64) + 0.5)
             for o, h, n in zip(self.origin, self.spacing, self.shape, strict=True)
         )
         return x, y, z
@@ -101,7 +101,7 @@ class VoxelGrid:
     def nodes(self) -> tuple[NDArray[np.float64], NDArray[np.float64], NDArray[np.float64]]:
         """Node coordinates along each axis, mm: three 1-D arrays."""
         x, y, z = (
-            o + h * np.arange(n + 1)
+            o + h * np.arange(n + 1, dtype=np.float64)
             for o, h, n in zip(self.origin, self.spacing, self.shape, strict=True)
         )
         return x, y, z

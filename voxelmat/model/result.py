@@ -14,7 +14,7 @@ from voxelmat.model.part import Part
 from voxelmat.model.region import Region
 from voxelmat.provenance import Provenance
 
-__all__ = ["STRAIN_LIMIT", "ROTATION_LIMIT", "Extreme", "StaticResult"]
+__all__ = ["ROTATION_LIMIT", "STRAIN_LIMIT", "Extreme", "StaticResult"]
 
 #: Above these a small-displacement, linear answer is not used for a verdict. Both limits are
 #: ours: common practice calls a few per cent of strain and some degrees of rotation "small".
@@ -134,4 +134,6 @@ class StaticResult:
             values = self.size[nodes]
         else:
             values = self.displacement[nodes][:, "xyz".index(component)]
-        return float({"mean": np.mean, "max": np.max, "min": np.min}[reduce](values))
+        if reduce == "mean":
+            return float(values.mean())
+        return float(values.max() if reduce == "max" else values.min())
