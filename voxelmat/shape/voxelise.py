@@ -1,0 +1,237 @@
+"""A closed mesh on a grid: true signed distance and solid fraction of every voxel."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Iterable, Sequence
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from voxelmat.errors import InputError
+from voxelmat.model.grid import VoxelGrid
+from voxelmat.model.mesh import TriangleMesh
+from voxelmat.monitor import SILENT, Monitor, computing
+from voxelmat.shape.shells import balanced, cavities_with_parents, shells_of
+from voxelmat.shape.tree import LEAF, box_tree
+
+__all__ = ["BAND_SIXTEENTHS", "VoxelShape", "grid_for", "voxelise"]
+
+#: Distances are kept to this many sixteenths of the smallest spacing, on both sides.
+BAND_SIXTEENTHS = 127
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class VoxelShape:
+    """A body on a grid.
+
+    Attributes
+    ----------
+    grid : VoxelGrid
+    distance : (nx, ny, nz) int8, Fortran order
+        Signed distance at voxel centres, negative inside, in 1/16 of the smallest
+        spacing, clipped to +-127.
+    occupancy : (nx, ny, nz) uint8, Fortran order
+        Solid fraction of each voxel, 0 to 255.
+    cautions : tuple of str
+        What was done that the user should know.
+    """
+
+    grid: VoxelGrid
+    distance: NDArray[np.int8]
+    occupancy: NDArray[np.uint8]
+    cautions: tuple[str, ...] = ()
+
+    @property
+    def volume(self) -> float:
+        """Solid volume by occupancy, mm^3."""
+        return float(self.occupancy.sum(dtype=np.int64)) / 255 * self.grid.voxel_volume
+
+
+def grid_for(
+    meshes: TriangleMesh | Iterable[TriangleMesh],
+    spacing: float | Sequence[float],
+    *,
+    margin_voxels: int = 1,
+) -> VoxelGrid:
+    """A grid round meshes, with a voxel wall on the low corner of their joint box.
+
+    Parameters
+    ----------
+    meshes : TriangleMesh or iterable of them
+    spacing : float or three floats
+        Voxel edge, mm.
+    margin_voxels : int
+        Empty voxels added on every side.
+    """
+    several = [meshes] if isinstance(meshes, TriangleMesh) else list(meshes)
+    if not several:
+        raise InputError("A grid needs at least one mesh to go round; got none.")
+    if margin_voxels < 0:
+        raise InputError(f"margin_voxels is 0 or more; got {margin_voxels}.")
+    edge = [float(h) for h in np.broadcast_to(np.asarray(spacing, dtype=float), (3,))]
+    if not all(math.isfinite(h) and h > 0 for h in edge):
+        raise InputError(f"Spacing must be positive, in mm; got {spacing}.")
+    low = np.min([m.bounds[0] for m in several], axis=0)
+    high = np.max([m.bounds[1] for m in several], axis=0)
+    # A size that is a whole number of voxels but for rounding gets no extra voxel.
+    counts = [
+        max(1, math.ceil((b - a) / h * (1 - 1e-12) - 1e-9))
+        for a, b, h in zip(low, high, edge, strict=True)
+    ]
+    return VoxelGrid(
+        shape=(
+            counts[0] + 2 * margin_voxels,
+            counts[1] + 2 * margin_voxels,
+            counts[2] + 2 * margin_voxels,
+        ),
+        spacing=(edge[0], edge[1], edge[2]),
+        origin=(
+            float(low[0]) - margin_voxels * edge[0],
+            float(low[1]) - margin_voxels * edge[1],
+            float(low[2]) - margin_voxels * edge[2],
+        ),
+    )
+
+
+def voxelise(mesh: TriangleMesh, grid: VoxelGrid, *, monitor: Monitor = SILENT) -> VoxelShape:
+    """Turn a closed mesh into distance and solid fraction on a grid.
+
+    A voxel centre is inside where the surface winds round it at least once, decided by
+    exact integer tests. The solid fraction is the exact volume of the mesh in the voxel,
+    rounded to 1/255. The distance is to the nearest triangle.
+
+    Closed shells of one mesh that overlap are joined; a shell that is inside out and lies
+    inside another is a cavity.
+
+    Parameters
+    ----------
+    mesh : TriangleMesh
+        Closed, normals outwards; `voxelmat.shape.repair.mend` helps.
+    grid : VoxelGrid
+        May be smaller or larger than the mesh.
+    monitor : Monitor
+
+    Raises
+    ------
+    InputError
+        If the mesh is open or inside out.
+    """
+    if not len(mesh.faces) or not balanced(mesh):
+        raise InputError(
+            f"Mesh '{mesh.name}' is not closed, so it has no inside. Check it with "
+            "find_defects(mesh), which says where it is open; mend it there."
+        )
+    monitor.report("voxelising", done=0, total=2, faces=len(mesh.faces), voxels=grid.n_voxels)
+    occupancy, winding = _fill(mesh, grid)
+    least, most = int(winding.min()), int(winding.max())
+    if least < 0:
+        k, j, i = (int(a[0]) for a in np.nonzero(winding < 0))
+        at = [
+            round(o + (n + 0.5) * h, 3)
+            for o, n, h in zip(grid.origin, (i, j, k), grid.spacing, strict=True)
+        ]
+        raise InputError(
+            f"Mesh '{mesh.name}' is inside out round ({at[0]}, {at[1]}, {at[2]}) mm: its "
+            "normals point inwards there. Flip the normals, or mend it with repair allowed."
+        )
+    if most > 1:
+        groups = cavities_with_parents(mesh)
+        if len(groups) > 1:
+            return _joined(mesh, groups, grid, monitor)
+    monitor.report("voxelising", done=1, total=2)
+    distance = _distance(mesh, grid, winding)
+    monitor.report("voxelising", done=2, total=2)
+    return _shape(grid, distance, occupancy, ())
+
+
+def _shape(
+    grid: VoxelGrid,
+    distance: NDArray[np.int8],
+    occupancy: NDArray[np.uint8],
+    cautions: tuple[str, ...],
+) -> VoxelShape:
+    """Turn the kernels' [k, j, i] arrays into the public [i, j, k] ones."""
+    for array in (distance, occupancy):
+        array.setflags(write=False)
+    return VoxelShape(
+        grid=grid,
+        distance=distance.transpose(2, 1, 0),
+        occupancy=occupancy.transpose(2, 1, 0),
+        cautions=cautions,
+    )
+
+
+def _joined(
+    mesh: TriangleMesh,
+    groups: list[TriangleMesh],
+    grid: VoxelGrid,
+    monitor: Monitor,
+) -> VoxelShape:
+    """Overlapping shells, each with its cavities, one by one: walls inside vanish."""
+    distance = np.full(grid.shape[::-1], BAND_SIXTEENTHS, dtype=np.int8)
+    total = np.zeros(grid.shape[::-1], dtype=np.uint16)
+    for number, group in enumerate(groups):
+        monitor.report("voxelising", done=number, total=len(groups))
+        occupancy, winding = _fill(group, grid)
+        np.minimum(distance, _distance(group, grid, winding), out=distance)
+        total = np.minimum(total + occupancy, 255)
+    caution = (
+        f"Mesh '{mesh.name}' has {len(shells_of(mesh))} closed shells, of which some overlap; "
+        "they were joined into one body."
+    )
+    return _shape(grid, distance, total.astype(np.uint8), (caution,))
+
+
+def _fill(mesh: TriangleMesh, grid: VoxelGrid) -> tuple[NDArray[np.uint8], NDArray[np.int8]]:
+    """Solid fraction and winding number, [k, j, i]."""
+    from voxelmat.kernels.voxelise import bin_by_plane, fill_planes
+
+    corners = (mesh.triangles - np.array(grid.origin)) / np.array(grid.spacing)
+    step = _whole_step(corners, grid)
+    whole = np.rint(corners[:, :, 1:] * step).astype(np.int64)
+    shape = grid.shape[::-1]
+    occupancy = np.empty(shape, dtype=np.uint8)
+    winding = np.empty(shape, dtype=np.int8)
+    with computing():
+        start, member = bin_by_plane(corners, shape[0])
+        fill_planes(corners, whole, step, start, member, occupancy, winding)
+    return occupancy, winding
+
+
+def _whole_step(corners: NDArray[np.float64], grid: VoxelGrid) -> int:
+    """Whole steps a voxel, a power of two: so fine that products still fit 64 bits."""
+    reach = max(float(np.abs(corners).max()), *grid.shape) + 1.0
+    bits = 29 - math.ceil(math.log2(reach))
+    if bits < 1:
+        raise InputError(
+            f"The mesh reaches {reach:.3g} voxels from the corner of the grid; it does not "
+            "belong to this grid. Check the unit of the mesh and the spacing."
+        )
+    return int(2 ** min(bits, 24))
+
+
+def _distance(
+    mesh: TriangleMesh, grid: VoxelGrid, winding: NDArray[np.int8]
+) -> NDArray[np.int8]:
+    """Signed distance, [k, j, i]."""
+    from voxelmat.kernels.nearest import signed_distance
+
+    smallest = min(grid.spacing)
+    corners = (mesh.triangles - np.array(grid.origin)) / smallest
+    edges = corners[:, 1:] - corners[:, :1]
+    # A face without area adds nothing: its neighbours have its edges.
+    wide = np.linalg.norm(np.cross(edges[:, 0], edges[:, 1]), axis=1) > 0
+    corners, edges = corners[wide], edges[wide]
+    tree = box_tree(corners)
+    u, v = edges[tree.order].transpose(1, 0, 2)
+    products = [np.einsum("ij,ij->i", a, b) for a, b in ((u, u), (u, v), (v, v))]
+    triangles = np.concatenate(
+        [corners[tree.order, 0], u, v, np.stack(products, axis=1)], axis=1
+    )
+    distance = np.empty(grid.shape[::-1], dtype=np.int8)
+    pitch = np.array(grid.spacing) / smallest
+    with computing():
+        signed_distance(tree.boxes, triangles, LEAF, pitch, winding, distance)
+    return distance
