@@ -1,0 +1,149 @@
+"""The shell command `voxelmat`: one subcommand a stage, `--json` on each, documented exit codes."""
+
+from __future__ import annotations
+
+import argparse
+import json
+import os
+import sys
+from collections.abc import Callable, Sequence
+from pathlib import Path
+from typing import Any, NoReturn
+
+from voxelmat.errors import Cancelled, FileFormatError, InputError, VoxelmatError
+
+__all__ = ["EXIT_CODES", "main"]
+
+#: What the exit code of every subcommand means.
+EXIT_CODES = {
+    0: "every requirement is met (or there is none, and nothing was found)",
+    1: "a requirement is not met, or a check says: do not print",
+    2: "a requirement cannot be judged; the report says why",
+    3: "bad input: nothing was computed from it",
+    4: "failed or stopped; what was finished is kept",
+}
+
+_EPILOG = "exit codes: " + "; ".join(f"{code} {text}" for code, text in EXIT_CODES.items()) + "."
+
+Answer = tuple[int, dict[str, Any], str]
+
+
+class _Parser(argparse.ArgumentParser):
+    """argparse, except that a wrong command line is bad input (3), not 2."""
+
+    def error(self, message: str) -> NoReturn:
+        self.print_usage(sys.stderr)
+        print(f"{self.prog}: {message}", file=sys.stderr)
+        raise SystemExit(3)
+
+
+def _parser() -> argparse.ArgumentParser:
+    from voxelmat import __version__
+
+    parser = _Parser(
+        prog="voxelmat",
+        description="From a mesh, loads and resins to a checked stack of bitmaps and a report.",
+        epilog=_EPILOG,
+    )
+    parser.add_argument("--version", action="version", version=f"voxelmat {__version__}")
+    commands = parser.add_subparsers(dest="command", required=True, metavar="COMMAND")
+
+    def command(name: str, text: str) -> argparse.ArgumentParser:
+        sub = commands.add_parser(name, help=text, description=text, epilog=_EPILOG)
+        sub.add_argument("--json", action="store_true", help="print the answer as JSON")
+        sub.add_argument("--quiet", action="store_true", help="no progress on standard error")
+        return sub
+
+    def design(sub: argparse.ArgumentParser, out: str = "out") -> None:
+        sub.add_argument("design", type=Path, metavar="DESIGN.toml")
+        sub.add_argument(
+            "--out", type=Path, default=Path(out), metavar="FOLDER",
+            help=f"where results go, and where an interrupted run goes on (default: {out})",
+        )
+
+    design(command("run", "do everything: part, optimise, solve, stack, check, report"))
+    design(command("solve", "solve the load cases and judge the requirements"))
+    design(command("optimise", "choose blends and where material goes"))
+    design(command("stack", "write the bitmap stacks, read them back and check them"))
+    sub = command("preflight", "check a stack that is on disk")
+    sub.add_argument("stack", type=Path, metavar="STACK")
+    sub.add_argument("--design", type=Path, metavar="DESIGN.toml",
+                     help="compare volumes with this design too")
+    sub.add_argument("--out", type=Path, default=Path("out"), metavar="FOLDER",
+                     help="where the design's run left its part (default: out)")
+    design(command("report", "write the report of what a run left in its folder"))
+    sub = command("materials", "show the resin library")
+    sub.add_argument("--file", type=Path, action="append", default=[], metavar="RESIN.toml",
+                     help="add a material file of your own (may be repeated)")
+    return parser
+
+
+def _dispatch(options: argparse.Namespace) -> Answer:
+    from voxelmat.console import ConsoleMonitor
+    from voxelmat.workflow import commands
+
+    calls: dict[str, Callable[..., Answer]] = {
+        "run": commands.run,
+        "solve": commands.solve,
+        "optimise": commands.optimise,
+        "stack": commands.stack,
+        "preflight": commands.preflight,
+        "report": commands.report,
+        "materials": commands.materials,
+    }
+    given = {k: v for k, v in vars(options).items() if k not in ("command", "json", "quiet")}
+    with ConsoleMonitor(quiet=options.quiet) as monitor:
+        return calls[options.command](monitor=monitor, **given)
+
+
+def main(arguments: Sequence[str] | None = None) -> int:
+    """Run the command line.
+
+    Parameters
+    ----------
+    arguments : sequence of str, optional
+        The words after ``voxelmat``; those of the process where left out.
+
+    Returns
+    -------
+    int
+        See `EXIT_CODES`.
+    """
+    try:
+        options = _parser().parse_args(arguments)
+    except SystemExit as stop:
+        return int(stop.code or 0)
+    # Idle threads that spin cost more than they gain on the few cores of a desk machine.
+    os.environ.setdefault("OMP_WAIT_POLICY", "passive")
+    os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
+    code, data, text = 4, {}, ""
+    try:
+        code, data, text = _dispatch(options)
+    except (InputError, FileFormatError) as error:
+        code, text = 3, str(error)
+        data = {"error": text, "kind": "bad input"}
+        if isinstance(error, InputError):
+            data |= {"file": error.file, "key": error.key}
+    except Cancelled as error:
+        text = f"{error} What was finished is kept; call the same command again to go on."
+        data = {"error": text, "kind": "stopped"}
+    except KeyboardInterrupt:
+        text = "Interrupted. What was finished is kept; call the same command again to go on."
+        data = {"error": text, "kind": "stopped"}
+    except VoxelmatError as error:
+        text = str(error)
+        data = {"error": text, "kind": "failed"}
+    except MemoryError:
+        text = "There is not enough memory for this grid; use larger voxels (grid.spacing_mm)."
+        data = {"error": text, "kind": "failed"}
+    if options.json:
+        print(json.dumps({"exit_code": code, **data}, indent=2, allow_nan=False))
+    elif code in (3, 4) and "error" in data:
+        print(f"voxelmat {options.command}: {text}", file=sys.stderr)
+    else:
+        print(text)
+    return code
+
+
+if __name__ == "__main__":
+    raise SystemExit(main())
