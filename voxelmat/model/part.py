@@ -97,7 +97,9 @@ class Part:
         if not self.palette or not self.palette[0].is_empty:
             raise InputError("Entry 0 of a palette is empty space (voxelmat.model.blend.EMPTY).")
         if any(b.is_empty for b in self.palette[1:]) or len(self.palette) > 65536:
-            raise InputError("Only entry 0 of a palette may be empty; it has at most 65536 entries.")
+            raise InputError(
+                "Only entry 0 of a palette may be empty; it has at most 65536 entries."
+            )
         names = [m.name for m in self.resins]
         if len(set(names)) != len(names):
             raise InputError(f"Each resin is given once; got {names}.")
@@ -165,6 +167,7 @@ class Part:
                 self.palette_fractions()[1:],
                 np.array([m.bulk for m in self.resins]),
                 np.array([m.shear for m in self.resins]),
+                resins=[m.name for m in self.resins],
             )
             bulk[1:], shear[1:] = value.bulk, value.shear
         return bulk, shear
