@@ -1,0 +1,1 @@
+"""Unknowns, filters, responses and optimisers for material layout."""

@@ -1,0 +1,318 @@
+"""What an optimiser is asked for: resins, objective, limits, and what it must leave alone."""
+
+from __future__ import annotations
+
+import hashlib
+import itertools
+import math
+from collections.abc import Mapping
+from dataclasses import dataclass, field
+from typing import Any, Literal
+
+import numpy as np
+from numpy.typing import NDArray
+
+from voxelmat.errors import InputError
+from voxelmat.provenance import text_digest
+
+__all__ = [
+    "Compliance",
+    "DesignSpec",
+    "Limit",
+    "MassLimit",
+    "Objective",
+    "Projection",
+    "ResinLimit",
+    "TargetDeflection",
+    "VolumeLimit",
+]
+
+Bools = NDArray[np.bool_]
+
+
+def _mask(value: object, what: str) -> Bools:
+    array = np.asarray(value)
+    if array.ndim != 3 or array.dtype != np.bool_:
+        raise InputError(f"{what} must be a 3-D array of true and false; got {array.dtype}, "
+                         f"{array.ndim}-D.")  # fmt: skip
+    out = np.array(array, order="F")
+    out.flags.writeable = False
+    return out
+
+
+def _positive(value: float, what: str, unit: str) -> None:
+    if not (math.isfinite(value) and value > 0):
+        raise InputError(f"{what} must be above 0 {unit}; got {value!r}.")
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Compliance:
+    """Least work of the loads, N mm: the stiffest part.
+
+    Summed over the load cases, each times its `LoadCase.weight`.
+    """
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class TargetDeflection:
+    """A map of how much a surface is to move under one load case.
+
+    The objective is the relative error sqrt(sum (u - u*)^2 / sum u*^2) over the nodes.
+
+    Attributes
+    ----------
+    nodes : ndarray of bool, shape ``grid.node_shape``
+        Where the displacement counts.
+    target : ndarray of float, shape ``grid.node_shape``
+        Wanted displacement along `direction`, mm; only read at `nodes`.
+    direction : tuple of float
+        Scaled to length 1.
+    load_case : str or None
+        Name of the load case; may be left out where there is only one.
+    """
+
+    nodes: Bools
+    target: NDArray[np.float64]
+    direction: tuple[float, float, float] = (0.0, 0.0, 1.0)
+    load_case: str | None = None
+
+    def __post_init__(self) -> None:
+        nodes = _mask(self.nodes, "The nodes of a target deflection")
+        target = np.array(self.target, dtype=np.float64, order="F")
+        if target.shape != nodes.shape:
+            raise InputError(
+                f"A target deflection has nodes of shape {nodes.shape} and targets of shape "
+                f"{target.shape}; they must be the same."
+            )
+        if not nodes.any():
+            raise InputError("A target deflection selects no node; name a surface of the part.")
+        if not np.all(np.isfinite(target[nodes])):
+            raise InputError("A target deflection (mm) holds values that are no number.")
+        if not np.any(target[nodes] != 0):
+            raise InputError(
+                "A target deflection is zero at every node, so an error relative to it has no "
+                "meaning; minimise compliance instead."
+            )
+        length = math.sqrt(sum(d * d for d in self.direction))
+        if not (math.isfinite(length) and length > 0):
+            raise InputError(f"A target's direction must not be zero; got {self.direction}.")
+        target.flags.writeable = False
+        x, y, z = (float(d) / length for d in self.direction)
+        object.__setattr__(self, "nodes", nodes)
+        object.__setattr__(self, "target", target)
+        object.__setattr__(self, "direction", (x, y, z))
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class VolumeLimit:
+    """At most this fraction of the shape's volume is solid (kept voxels are not counted)."""
+
+    fraction: float
+
+    def __post_init__(self) -> None:
+        if not 0 < self.fraction < 1:
+            raise InputError(f"A volume limit lies between 0 and 1; got {self.fraction!r}.")
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class MassLimit:
+    """At most this mass, tonne, in the voxels that are designed (kept ones are not counted)."""
+
+    mass: float
+
+    def __post_init__(self) -> None:
+        _positive(self.mass, "A mass limit", "tonne")
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class ResinLimit:
+    """At most this fraction of the shape's volume is one resin (kept voxels not counted)."""
+
+    resin: str
+    fraction: float
+
+    def __post_init__(self) -> None:
+        if not 0 < self.fraction < 1:
+            raise InputError(
+                f"The limit on '{self.resin}' lies between 0 and 1; got {self.fraction!r}. "
+                "Leave a resin out of the design to forbid it."
+            )
+
+
+Objective = Compliance | TargetDeflection
+Limit = VolumeLimit | MassLimit | ResinLimit
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Projection:
+    """Continuation of the smoothed step that makes densities empty or solid.
+
+    Attributes
+    ----------
+    sharpness : tuple of float
+        One value a stage, rising; 0 means no projection.
+    every : int
+        Iterations a stage; the last one lasts to the end.
+    threshold : float
+        Filtered density that counts as the border, between 0 and 1.
+    """
+
+    sharpness: tuple[float, ...] = (0.0, 2.0, 4.0, 8.0, 16.0)
+    every: int = 15
+    threshold: float = 0.5
+
+    def __post_init__(self) -> None:
+        s = tuple(float(b) for b in self.sharpness)
+        rising = all(a < b for a, b in itertools.pairwise(s))
+        if not s or not all(math.isfinite(b) and b >= 0 for b in s) or not rising:
+            raise InputError(f"Projection sharpness must be >= 0 and rise; got {self.sharpness}.")
+        if self.every < 1 or not 0 < self.threshold < 1:
+            raise InputError(
+                "A projection needs at least 1 iteration a stage and a threshold between 0 and 1; "
+                f"got {self.every} and {self.threshold}."
+            )
+        object.__setattr__(self, "sharpness", s)
+
+    def stage(self, iteration: int) -> int:
+        """Which stage an iteration (from 0) belongs to."""
+        return min(iteration // self.every, len(self.sharpness) - 1)
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class DesignSpec:
+    """All that `voxelmat.topopt.optimise.optimise` needs besides a part and its load cases.
+
+    Attributes
+    ----------
+    resins : tuple of str
+        Names of the part's resins to choose from. With two or more, every voxel is a blend.
+    objective : Compliance or TargetDeflection
+    limits : tuple of VolumeLimit, MassLimit, ResinLimit
+    void : bool
+        Whether voxels may become empty.
+    filter_radius : float
+        mm; sets the least size of struts and holes, and how fast a blend may change.
+    penalty : float
+        Exponent that makes half-solid voxels a bad bargain; blends are never penalised.
+    void_law : str
+        ``"bounded"`` keeps the Hashin-Shtrikman bound at any nu; ``"plain"`` scales K and G
+        alike and is for comparison with published values at small nu.
+    void_stiffness : float
+        What an empty voxel keeps, relative to the softest resin.
+    projection : Projection
+    fixed_resin : mapping of str to ndarray of bool
+        Voxels that must be this resin (and solid).
+    solid, empty : ndarray of bool or None
+        Voxels that must be solid, must be empty; the shape of the grid, ``[i, j, k]``.
+    keep : ndarray of bool or None
+        Voxels that keep the blend which the part gives them. Bought-in bodies always do.
+    protected : ndarray of bool or None
+        Region in which the shape's own surface stays solid, `protected_depth` deep.
+    protected_depth : float or None
+        mm; one voxel where left out.
+    symmetry : tuple of str
+        ``"x"``: mirror halves about the middle of the shape's bounding box along x; and so on.
+    iterations : int
+    levels : int
+        Blends in the palette of the result, at most.
+    method : str
+        ``"mma"``, ``"oc"`` (optimality criteria) or ``"auto"``.
+    move : float
+        Longest change of an unknown in one iteration.
+    seed : int
+        Recorded; nothing in the method draws random numbers.
+    """
+
+    resins: tuple[str, ...]
+    objective: Objective
+    filter_radius: float
+    limits: tuple[Limit, ...] = ()
+    void: bool = True
+    penalty: float = 3.0
+    void_law: Literal["bounded", "plain"] = "bounded"
+    void_stiffness: float = 1e-6
+    projection: Projection = field(default_factory=Projection)
+    fixed_resin: Mapping[str, Bools] = field(default_factory=dict)
+    solid: Bools | None = None
+    empty: Bools | None = None
+    keep: Bools | None = None
+    protected: Bools | None = None
+    protected_depth: float | None = None
+    symmetry: tuple[str, ...] = ()
+    iterations: int = 80
+    levels: int = 64
+    method: Literal["auto", "mma", "oc"] = "auto"
+    move: float = 0.2
+    seed: int = 0
+
+    def __post_init__(self) -> None:
+        put = object.__setattr__
+        put(self, "resins", tuple(self.resins))
+        put(self, "limits", tuple(self.limits))
+        put(self, "symmetry", tuple(self.symmetry))
+        fixed = {r: _mask(m, f"The region fixed to '{r}'") for r, m in self.fixed_resin.items()}
+        put(self, "fixed_resin", fixed)
+        for name in ("solid", "empty", "keep", "protected"):
+            if (given := getattr(self, name)) is not None:
+                put(self, name, _mask(given, f"The region '{name}'"))
+        self._check_numbers()
+        self._check_choices()
+
+    def _check_numbers(self) -> None:
+        _positive(self.filter_radius, "The filter radius", "mm")
+        if self.protected_depth is not None:
+            _positive(self.protected_depth, "The depth of a protected surface", "mm")
+        if not (math.isfinite(self.penalty) and self.penalty >= 1):
+            raise InputError(f"The penalty must be at least 1; got {self.penalty!r}.")
+        if not 0 < self.void_stiffness <= 1e-2:
+            raise InputError(
+                f"The stiffness of empty voxels must lie in 0 to 0.01; got {self.void_stiffness}."
+            )
+        if self.iterations < 1 or not 2 <= self.levels <= 4096 or not 0 < self.move <= 1:
+            raise InputError(
+                "A design needs at least 1 iteration, 2 to 4096 palette levels and a move in "
+                f"0 to 1; got {self.iterations}, {self.levels}, {self.move}."
+            )
+
+    def _check_choices(self) -> None:
+        if not self.resins or len(set(self.resins)) != len(self.resins):
+            raise InputError(f"A design names each resin once, at least one; got {self.resins}.")
+        if not self.void and len(self.resins) == 1:
+            raise InputError(
+                f"With the one resin '{self.resins[0]}' and no empty voxels allowed there is "
+                "nothing to design; add a resin or allow empty voxels."
+            )
+        if any(a not in "xyz" or len(a) != 1 for a in self.symmetry):
+            raise InputError(f"Symmetry is any of x, y, z; got {self.symmetry}.")
+        if self.method not in ("auto", "mma", "oc"):
+            raise InputError(f"The method is auto, mma or oc; got {self.method!r}.")
+        if self.void_law not in ("bounded", "plain"):
+            raise InputError(f"The void law is bounded or plain; got {self.void_law!r}.")
+        kinds = [(type(x).__name__, getattr(x, "resin", "")) for x in self.limits]
+        if len(set(kinds)) != len(kinds):
+            raise InputError("The same quantity is limited twice; keep the tighter limit.")
+
+    @property
+    def digest(self) -> str:
+        """SHA-256 over everything but the number of iterations and palette levels."""
+        head: dict[str, Any] = {}
+        arrays: list[NDArray[Any]] = []
+        for name in self.__dataclass_fields__:
+            value = getattr(self, name)
+            if name in ("iterations", "levels", "seed"):
+                continue
+            if isinstance(value, np.ndarray):
+                head[name] = list(value.shape)
+                arrays.append(value)
+            elif name == "fixed_resin":
+                head[name] = list(value)
+                arrays += value.values()
+            elif isinstance(value, TargetDeflection):
+                head[name] = [value.direction, value.load_case]
+                arrays += [value.nodes, value.target]
+            else:
+                head[name] = repr(value)
+        code = hashlib.sha256(text_digest(head).encode())
+        for array in arrays:
+            code.update(b"|" + np.ascontiguousarray(array.T).tobytes())
+        return code.hexdigest()
