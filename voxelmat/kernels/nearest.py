@@ -53,17 +53,18 @@ def _to_box(box, px, py, pz):
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
-def _nearest(boxes, triangles, leaf, px, py, pz, guess, stack, reach):
-    """Squared distance to the nearest triangle and its number; `guess` starts the bound."""
+def _nearest(boxes, triangles, leaf, px, py, pz, slack, bound, guess, stack, reach):
+    """Squared distance to the nearest triangle, at most `slack` times too large and cut
+    off at `bound`, and the triangle's number; `guess` is a triangle to begin with."""
     best = guess
-    least = _to_triangle(triangles[best], px, py, pz)
+    least = min(bound, _to_triangle(triangles[best], px, py, pz))
     leaves = (boxes.shape[0] + 1) // 2
     top = 1
     stack[0] = 0
     reach[0] = _to_box(boxes[0], px, py, pz)
     while top > 0:
         top -= 1
-        if reach[top] >= least:
+        if reach[top] * slack >= least:
             continue
         node = stack[top]
         if node >= leaves - 1:
@@ -79,11 +80,11 @@ def _nearest(boxes, triangles, leaf, px, py, pz, guess, stack, reach):
         db = _to_box(boxes[b], px, py, pz)
         if da < db:
             a, b, da, db = b, a, db, da
-        if da < least:
+        if da * slack < least:
             stack[top] = a
             reach[top] = da
             top += 1
-        if db < least:
+        if db * slack < least:
             stack[top] = b
             reach[top] = db
             top += 1
@@ -113,6 +114,7 @@ def signed_distance(boxes, triangles, leaf, pitch, winding, distance):
     nz, ny, nx = distance.shape
     hx, hy, hz = pitch[0], pitch[1], pitch[2]
     band = 127.0 / 16.0
+    bound = (band + 4.0 * hx) ** 2
     for k in prange(nz):
         stack = np.empty(64, np.int32)
         reach = np.empty(64)
@@ -120,11 +122,22 @@ def signed_distance(boxes, triangles, leaf, pitch, winding, distance):
         for j in range(ny):
             y = (j + 0.5) * hy
             guess = 0
+            far = True
             i = 0
             while i < nx:
-                least, guess = _nearest(
-                    boxes, triangles, leaf, (i + 0.5) * hx, y, z, guess, stack, reach
-                )
+                x = (i + 0.5) * hx
+                least = 0.0
+                if far:
+                    # Far off, half the distance is enough to know how far to walk.
+                    least, guess = _nearest(
+                        boxes, triangles, leaf, x, y, z, 4.0, np.inf, guess, stack, reach
+                    )
+                    least *= 0.25
+                if least < bound:
+                    least, guess = _nearest(
+                        boxes, triangles, leaf, x, y, z, 1.0, bound, guess, stack, reach
+                    )
+                far = least >= bound
                 d = math.sqrt(least)
                 if d < band:
                     q = int(16.0 * d + 0.5)

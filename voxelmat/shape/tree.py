@@ -9,7 +9,7 @@ from numpy.typing import NDArray
 
 __all__ = ["BoxTree", "box_tree"]
 
-LEAF = 4  # triangles a leaf: fewer means more boxes, more means more triangle tests
+LEAF = 2
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
