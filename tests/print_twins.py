@@ -74,9 +74,7 @@ def _lerp(array, index, axis, rounded=False):
 
 def nearest_printed(labels, keep):
     """Each voxel's label, or that of the nearest kept one among its 26 neighbours."""
-    offsets = sorted(
-        np.ndindex(3, 3, 3), key=lambda o: (sum(abs(v - 1) for v in o), o)
-    )
+    offsets = sorted(np.ndindex(3, 3, 3), key=lambda o: (sum(abs(v - 1) for v in o), o))
     padded = np.pad(np.where(keep[labels], labels, 0), 1)
     out = np.zeros_like(labels)
     for a, b, c in offsets:
@@ -88,7 +86,9 @@ def nearest_printed(labels, keep):
 def _cells(values, low, axes=(0, 1, 2)):
     """The eight corners of the cell of every site."""
     for corner in np.ndindex(2, 2, 2):
-        picks = [np.minimum(lo + c, n - 1) for lo, c, n in zip(low, corner, values.shape, strict=True)]
+        picks = [
+            np.minimum(lo + c, n - 1) for lo, c, n in zip(low, corner, values.shape, strict=True)
+        ]
         yield values[np.ix_(*picks)]
 
 

@@ -19,11 +19,17 @@ def _raster(part, profile, turns=()):
 @pytest.mark.parametrize("outline", ["distance", "occupancy", "voxels"])
 @pytest.mark.parametrize(
     ("profile", "turns"),
-    [("invented-standard", ()), ("invented-coarse", ["x 90", "z -90"]), ("invented-fine", ["y 180"])],
+    [
+        ("invented-standard", ()),
+        ("invented-coarse", ["x 90", "z -90"]),
+        ("invented-fine", ["y 180"]),
+    ],
 )
 def test_bits_equal_the_numpy_twin(outline, profile, turns):
     part = layered_part(outline, shape=(7, 6, 5))
-    raster = _raster(part, load_profile(profile).replace(layer=load_profile(profile).layer * 3), turns)
+    raster = _raster(
+        part, load_profile(profile).replace(layer=load_profile(profile).layer * 3), turns
+    )
     resins = used_resins(part)
     slicer = Slicer(part, raster, resins, support=True, seed=5)
     n = raster.image_shape[0]

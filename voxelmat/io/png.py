@@ -46,9 +46,7 @@ def _chunk(kind: bytes, data: bytes) -> bytes:
     return struct.pack(">I", len(data)) + kind + data + struct.pack(">I", code)
 
 
-def encode_bitmap(
-    bits: NDArray[np.uint8], width: int, pixels_per_metre: tuple[int, int]
-) -> bytes:
+def encode_bitmap(bits: NDArray[np.uint8], width: int, pixels_per_metre: tuple[int, int]) -> bytes:
     """Encode packed rows as a one-bit greyscale PNG.
 
     Parameters

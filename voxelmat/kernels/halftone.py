@@ -217,9 +217,7 @@ def halftone_layer(
         if has_both:
             _stamp(both, column_at, column_ow, window[2], window[3], support, site)
         if has_part:
-            _row_thresholds(
-                mask, start[0], start[1] + y, start[2], skew_x, skew_y, threshold
-            )
+            _row_thresholds(mask, start[0], start[1] + y, start[2], skew_x, skew_y, threshold)
             _choose_resin(
                 smooth, near, hard, i, row_w[y], column_at, column_w, threshold, base, slope, wx,
                 resin,

@@ -152,7 +152,9 @@ class PrintProfile:
         if len(set(loaded)) != len(loaded):
             _refuse("channels", f"each resin in one channel only; got {loaded}")
         if self.support_channel and self.support_channel not in self.channels:
-            _refuse("support.channel", f"one of {list(self.channels)}; got {self.support_channel!r}")
+            _refuse(
+                "support.channel", f"one of {list(self.channels)}; got {self.support_channel!r}"
+            )
         if self.support_policy == "columns" and not self.support_channel:
             _refuse("support.channel", "a channel, because the policy 'columns' lays support")
 

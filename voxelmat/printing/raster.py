@@ -104,8 +104,10 @@ class Raster:
 
     def __post_init__(self) -> None:
         turn = np.array(self.rotation)
-        if turn.shape != (3, 3) or not (turn @ turn.T == np.eye(3)).all() or (
-            round(float(np.linalg.det(turn))) != 1
+        if (
+            turn.shape != (3, 3)
+            or not (turn @ turn.T == np.eye(3)).all()
+            or (round(float(np.linalg.det(turn))) != 1)
         ):
             raise InputError(f"A rotation is a right-handed signed permutation; got {turn}.")
         if not all(n >= 1 for n in self.shape) or self.offset[2] != 0 or min(self.offset) < 0:
@@ -275,9 +277,11 @@ def place(
             "at each side). Turn the part, or take a printer with a larger tray.",
             key="profile",
         )
-    corner = position if position is not None else [
-        (t - s) / 2 for t, s in zip(profile.tray_size[:2], size[:2], strict=True)
-    ]
+    corner = (
+        position
+        if position is not None
+        else [(t - s) / 2 for t, s in zip(profile.tray_size[:2], size[:2], strict=True)]
+    )
     for axis in (0, 1):
         if not (
             margin[axis] - _EPSILON <= corner[axis]

@@ -1,0 +1,190 @@
+"""The folder in which a stack is written: locked, journalled, resumable, renamed when whole."""
+
+from __future__ import annotations
+
+import hashlib
+import json
+import shutil
+import threading
+from collections.abc import Iterator, Sequence
+from contextlib import contextmanager
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Any
+
+from voxelmat.errors import FileFormatError, ResourceError
+from voxelmat.printing.manifest import FORMAT, MANIFEST, layer_name, read_manifest
+
+__all__ = ["Journal", "LayerRecord", "locked", "publish", "refuse_foreign"]
+
+_JOURNAL = "journal.jsonl"
+_FRESH = f"{_JOURNAL}.new"
+
+
+@dataclass(frozen=True, slots=True)
+class LayerRecord:
+    """One finished layer: SHA-256 and set sites of each channel's file."""
+
+    layer: int
+    sha256: tuple[str, ...]
+    sites: tuple[int, ...]
+
+
+@contextmanager
+def locked(folder: Path) -> Iterator[None]:
+    """Hold the lock beside `folder`; `ResourceError` where another run holds it."""
+    import filelock
+
+    lock = filelock.FileLock(folder.parent / f".{folder.name}.lock")
+    try:
+        folder.parent.mkdir(parents=True, exist_ok=True)
+        lock.acquire(timeout=0)
+    except filelock.Timeout:
+        raise ResourceError(
+            f"Another run is writing to '{folder.name}' at this moment. Wait for it to end, or "
+            "give this one a folder of its own."
+        ) from None
+    except OSError as error:
+        raise ResourceError(f"'{folder.parent}' cannot be written to: {error}.") from None
+    try:
+        yield
+    finally:
+        lock.release()
+
+
+def _is_ours(folder: Path) -> bool:
+    """True for a stack, whole or partial, that holds nothing but what we write."""
+    if all(entry.name in (_JOURNAL, _FRESH) for entry in folder.iterdir()):
+        return True
+    try:
+        if (folder / MANIFEST).is_file():
+            channels = {c["name"] for c in read_manifest(folder)["channels"]}
+        else:
+            first = json.loads((folder / _JOURNAL).read_text("utf-8").splitlines()[0])
+            if first["format"] != FORMAT:
+                return False
+            channels = set(first["channels"])
+    except (FileFormatError, OSError, ValueError, LookupError, TypeError):
+        return False
+    for entry in folder.iterdir():
+        if entry.name in (MANIFEST, _JOURNAL, _FRESH):
+            continue
+        if entry.name not in channels or not entry.is_dir() or entry.is_symlink():
+            return False
+        if any(not (f.suffix == ".png" and f.stem.isdigit()) for f in entry.iterdir()):
+            return False
+    return True
+
+
+def refuse_foreign(folder: Path) -> None:
+    """Raise `ResourceError` if `folder` exists and holds anything that is not a stack of ours."""
+    if folder.is_symlink() or (folder.exists() and not folder.is_dir()):
+        raise ResourceError(f"'{folder.name}' exists and is not a folder; choose another name.")
+    if folder.is_dir() and any(folder.iterdir()) and not _is_ours(folder):
+        raise ResourceError(
+            f"The folder '{folder.name}' exists and holds files that are not a stack. Nothing was "
+            "changed; choose another folder or empty this one."
+        )
+
+
+def _remove(folder: Path) -> None:
+    """Delete a folder of ours; images first, so that a rest still shows whose it is."""
+    if folder.is_dir():
+        for entry in folder.iterdir():
+            if entry.is_dir():
+                shutil.rmtree(entry)
+        shutil.rmtree(folder)
+
+
+def publish(partial: Path, folder: Path) -> None:
+    """Put the finished `partial` in the place of `folder`; both are ours."""
+    old = folder.with_name(f"{folder.name}.old")
+    refuse_foreign(old)
+    _remove(old)
+    if folder.exists():
+        folder.rename(old)
+    partial.rename(folder)
+    (folder / _JOURNAL).unlink()
+    _remove(old)
+
+
+class Journal:
+    """What is finished in the partial folder; safe to use from threads.
+
+    Parameters
+    ----------
+    partial : Path
+        Created where it is missing; emptied where it belongs to another job.
+    job : str
+        Digest of everything that decides the bits.
+    channels : sequence of str
+    resume : bool
+        Keep the layers of an earlier run of the same job whose files still have their digest.
+    """
+
+    def __init__(self, partial: Path, job: str, channels: Sequence[str], *, resume: bool) -> None:
+        refuse_foreign(partial)
+        self.partial = partial
+        self._channels = tuple(channels)
+        self._lock = threading.Lock()
+        self.done: dict[int, LayerRecord] = {}
+        head = {"format": FORMAT, "job": job, "channels": list(channels)}
+        if resume:
+            self.done = self._surviving(head)
+        if not self.done:
+            _remove(partial)
+        partial.mkdir(exist_ok=True)
+        lines = [head, *(_as_dict(r) for r in self.done.values())]
+        fresh = partial / _FRESH
+        fresh.write_text("".join(json.dumps(line) + "\n" for line in lines), encoding="utf-8")
+        fresh.replace(partial / _JOURNAL)
+        (partial / MANIFEST).unlink(missing_ok=True)
+        for channel in channels:
+            (partial / channel).mkdir(exist_ok=True)
+        self._handle = (partial / _JOURNAL).open("a", encoding="utf-8")
+
+    def _surviving(self, head: dict[str, Any]) -> dict[int, LayerRecord]:
+        """Journalled layers of the same job whose files are on disk, unchanged."""
+        found: dict[int, LayerRecord] = {}
+        try:
+            lines = (self.partial / _JOURNAL).read_text("utf-8").splitlines()
+            if not lines or json.loads(lines[0]) != head:
+                return found
+        except (OSError, ValueError):
+            return found
+        for line in lines[1:]:
+            try:
+                entry = json.loads(line)
+                record = LayerRecord(entry["layer"], tuple(entry["sha256"]), tuple(entry["sites"]))
+            except (ValueError, KeyError, TypeError):
+                continue  # the line that was being written when the run was stopped
+            if self._intact(record):
+                found[record.layer] = record
+        return found
+
+    def _intact(self, record: LayerRecord) -> bool:
+        if not len(record.sha256) == len(record.sites) == len(self._channels):
+            return False
+        for channel, wanted in zip(self._channels, record.sha256, strict=True):
+            try:
+                data = (self.partial / channel / layer_name(record.layer)).read_bytes()
+            except OSError:
+                return False
+            if hashlib.sha256(data).hexdigest() != wanted:
+                return False
+        return True
+
+    def add(self, record: LayerRecord) -> None:
+        """Note a layer whose files are written."""
+        with self._lock:
+            self._handle.write(json.dumps(_as_dict(record)) + "\n")
+            self._handle.flush()
+            self.done[record.layer] = record
+
+    def close(self) -> None:
+        """Close the journal's file; the folder stays for a later run."""
+        self._handle.close()
+
+
+def _as_dict(record: LayerRecord) -> dict[str, Any]:
+    return {"layer": record.layer, "sha256": list(record.sha256), "sites": list(record.sites)}

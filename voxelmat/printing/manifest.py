@@ -1,0 +1,118 @@
+"""The manifest of a stack: what it says, how it is written, and how it is checked on reading."""
+
+from __future__ import annotations
+
+import json
+import os
+from collections.abc import Mapping
+from functools import cache
+from importlib.resources import files
+from pathlib import Path
+from typing import Any
+
+from voxelmat.errors import FileFormatError, InputError
+from voxelmat.printing.raster import Raster
+
+__all__ = [
+    "FORMAT",
+    "MANIFEST",
+    "image_entry",
+    "layer_name",
+    "manifest_schema",
+    "read_manifest",
+    "write_manifest",
+]
+
+FORMAT = "voxelmat-stack"
+MANIFEST = "manifest.json"
+_LARGEST = 256 << 20  # bytes; a full tray of 64 channels stays below
+
+
+def layer_name(layer: int) -> str:
+    """File name of one layer inside the folder of its channel."""
+    return f"{layer:05d}.png"
+
+
+@cache
+def manifest_schema() -> dict[str, Any]:
+    """The JSON Schema of a manifest."""
+    text = (files("voxelmat.printing") / "manifest.schema.json").read_text("utf-8")
+    schema: dict[str, Any] = json.loads(text)
+    return schema
+
+
+def image_entry(raster: Raster, polarity: str) -> dict[str, Any]:
+    """The manifest's ``image`` entry."""
+    layers, height, width = raster.image_shape
+    return {
+        "layers": layers,
+        "width": width,
+        "height": height,
+        "polarity": polarity,
+        "layer_order": "layer 0 lies on the tray",
+        "file_name": "channel/layer.png, layer with five digits",
+        "pixels_per_metre": list(raster.pixels_per_metre),
+    }
+
+
+def _check(data: Any, name: str) -> None:
+    """Against the schema, then what a schema cannot say."""
+    import jsonschema
+
+    validator = jsonschema.Draft202012Validator(manifest_schema())
+    error = next(iter(validator.iter_errors(data)), None)
+    if error is not None:
+        where = ".".join(str(p) for p in error.absolute_path) or "the top"
+        said = error.message if len(error.message) < 200 else error.message[:200] + "..."
+        raise FileFormatError(f"{name} is not a stack manifest: at {where}: {said}")
+    try:
+        raster = Raster.from_dict(data["raster"])
+    except (InputError, ValueError, TypeError) as problem:
+        raise FileFormatError(f"{name}: the raster cannot be: {problem}") from None
+    if data["image"] != image_entry(raster, data["image"]["polarity"]):
+        raise FileFormatError(f"{name}: 'image' does not agree with 'raster'.")
+    channels = data["channels"]
+    layers = raster.image_shape[0]
+    for channel in channels:
+        if len(channel["sha256"]) != layers:
+            raise FileFormatError(
+                f"{name}: channel '{channel['name']}' lists {len(channel['sha256'])} layers; the "
+                f"raster has {layers}."
+            )
+    if len({c["name"].lower() for c in channels}) != len(channels):
+        raise FileFormatError(f"{name}: two channels share one folder.")
+    if sum(c["role"] == "support" for c in channels) > 1:
+        raise FileFormatError(f"{name}: more than one channel lays support.")
+
+
+def read_manifest(folder: Path) -> dict[str, Any]:
+    """Read and check the manifest of `folder`.
+
+    Raises
+    ------
+    FileFormatError
+        If there is none, or if it is not what the schema asks for.
+    """
+    path = folder / MANIFEST
+    try:
+        if path.stat().st_size > _LARGEST:
+            raise FileFormatError(f"{path.name} is larger than any manifest can be.")
+        data: dict[str, Any] = json.loads(path.read_text("utf-8"))
+    except FileNotFoundError:
+        raise FileFormatError(
+            f"'{folder.name}' is not a finished stack: it has no {MANIFEST}."
+        ) from None
+    except (OSError, ValueError, RecursionError) as error:
+        raise FileFormatError(f"{path.name} in '{folder.name}' cannot be read: {error}") from None
+    _check(data, f"{path.name} in '{folder.name}'")
+    return data
+
+
+def write_manifest(folder: Path, data: Mapping[str, Any]) -> None:
+    """Check a manifest and write it to `folder`, down to the disk."""
+    _check(data, MANIFEST)
+    with (folder / MANIFEST).open("w", encoding="utf-8") as handle:
+        json.dump(data, handle, indent=1, ensure_ascii=False)
+        handle.write("\n")
+        handle.flush()
+        os.fsync(handle.fileno())

@@ -1,0 +1,244 @@
+"""A finished stack, read lazily, one layer at a time, nothing believed unchecked."""
+
+from __future__ import annotations
+
+import hashlib
+from dataclasses import dataclass
+from functools import cached_property
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from voxelmat.errors import FileFormatError, InputError
+from voxelmat.io.png import decode_bitmap
+from voxelmat.model.grid import VoxelGrid
+from voxelmat.model.profile import PrintProfile
+from voxelmat.printing.manifest import layer_name, read_manifest
+from voxelmat.printing.raster import Raster
+
+__all__ = ["Channel", "Stack", "read_stack"]
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Channel:
+    """One material channel of a stack.
+
+    Attributes
+    ----------
+    name, resin, role : str
+        Role is ``"model"`` or ``"support"``.
+    sites : int
+        Droplet sites that it claims.
+    volume_mm3 : float
+        Of these sites.
+    designed_mm3 : float or None
+        Volume of the resin in the part; None for support.
+    density_t_mm3 : float or None
+        tonne/mm^3, where known.
+    sha256 : tuple of str
+        Of each layer's file.
+    """
+
+    name: str
+    resin: str
+    role: str
+    sites: int
+    volume_mm3: float
+    designed_mm3: float | None
+    density_t_mm3: float | None
+    sha256: tuple[str, ...]
+
+
+class Stack:
+    """A stack of one-bit images on disk; layers are read when asked for.
+
+    Parameters
+    ----------
+    folder : Path
+    manifest : dict
+        As `voxelmat.printing.manifest.read_manifest` returns it.
+    """
+
+    def __init__(self, folder: Path, manifest: dict[str, Any]) -> None:
+        self.folder = folder
+        self.manifest = manifest
+        self.raster = Raster.from_dict(manifest["raster"])
+        self.channels = tuple(
+            Channel(**{**c, "sha256": tuple(c["sha256"])}) for c in manifest["channels"]
+        )
+        self._inverted = manifest["image"]["polarity"] == "black is material"
+
+    # ------------------------------------------------------------------ what it is
+    @property
+    def shape(self) -> tuple[int, int, int]:
+        """Sites of the window along tray x, y, z."""
+        return self.raster.shape
+
+    @property
+    def n_layers(self) -> int:
+        """Printed layers."""
+        return self.raster.shape[2]
+
+    @property
+    def pitch_mm(self) -> tuple[float, float, float]:
+        """Distance between sites along tray x, y, z, mm, rounded to a float."""
+        x, y, z = (float(p) for p in self.raster.pitch)
+        return (x, y, z)
+
+    @property
+    def support_channel(self) -> int | None:
+        """Index of the channel that lays support, if any."""
+        return next((i for i, c in enumerate(self.channels) if c.role == "support"), None)
+
+    @property
+    def support_policy(self) -> str:
+        """How support is made: "columns", "machine" or "none"."""
+        return str(self.manifest["method"]["support"])
+
+    @cached_property
+    def profile(self) -> PrintProfile:
+        """The profile that it was written for."""
+        return PrintProfile.from_dict(self.manifest["profile"], file="manifest.json")
+
+    @property
+    def grid(self) -> VoxelGrid:
+        """The design grid that it was made from."""
+        g = self.manifest["part"]["grid"]
+        return VoxelGrid(
+            shape=tuple(g["shape"]), spacing=tuple(g["spacing_mm"]), origin=tuple(g["origin_mm"])
+        )
+
+    @property
+    def volumes_mm3(self) -> dict[str, float]:
+        """Volume of each resin, support included, mm^3."""
+        return {c.resin: c.volume_mm3 for c in self.channels}
+
+    def __repr__(self) -> str:
+        names = ", ".join(f"{c.name} = {c.resin}" for c in self.channels)
+        x, y, z = self.shape
+        return f"Stack({self.folder.name!r}, {x} x {y} x {z} sites, {names})"
+
+    # ------------------------------------------------------------------ layers
+    def path(self, channel: int, layer: int) -> Path:
+        """File of one channel's layer."""
+        return self.folder / self.channels[channel].name / layer_name(layer)
+
+    def file_bytes(self, channel: int, layer: int) -> bytes:
+        """One file as it is on disk.
+
+        Raises
+        ------
+        FileFormatError
+            If it is missing, cannot be read, or lies outside the stack's folder.
+        """
+        path = self.path(channel, layer)
+        if not path.resolve().is_relative_to(self.folder.resolve()):
+            raise FileFormatError(f"{self._label(channel, layer)} lies outside the stack.")
+        try:
+            return path.read_bytes()
+        except OSError as error:
+            reason = error.strerror or str(error)
+            raise FileFormatError(f"{self._label(channel, layer)} is missing: {reason}.") from None
+
+    def _label(self, channel: int, layer: int) -> str:
+        return f"{self.channels[channel].name}/{layer_name(layer)}"
+
+    def is_intact(self, channel: int, layer: int, data: bytes) -> bool:
+        """True where `data` has the digest that the manifest states."""
+        return hashlib.sha256(data).hexdigest() == self.channels[channel].sha256[layer]
+
+    def decode(self, channel: int, layer: int, data: bytes) -> NDArray[np.uint8]:
+        """Bits of one file, 1 for material, checked for size, depth and pitch."""
+        label = self._label(channel, layer)
+        bitmap = decode_bitmap(data, label)
+        _, height, width = self.raster.image_shape
+        if (bitmap.bits.shape[0], bitmap.width) != (height, width):
+            raise FileFormatError(
+                f"{label} is {bitmap.width} x {bitmap.bits.shape[0]} pixels; the manifest states "
+                f"{width} x {height}."
+            )
+        if bitmap.pixels_per_metre != self.raster.pixels_per_metre:
+            raise FileFormatError(
+                f"{label} states {bitmap.pixels_per_metre} pixels a metre; the manifest "
+                f"{self.raster.pixels_per_metre}."
+            )
+        if not self._inverted:
+            return bitmap.bits
+        bits: NDArray[np.uint8] = ~bitmap.bits
+        if width % 8:
+            bits[:, -1] &= np.uint8((0xFF00 >> (width % 8)) & 0xFF)
+        return bits
+
+    def bits(self, layer: int) -> NDArray[np.uint8]:
+        """Packed bits of one layer in image order.
+
+        Returns
+        -------
+        ndarray of uint8, shape (channels, rows, ceil(columns / 8))
+
+        Raises
+        ------
+        FileFormatError
+            If a file is missing, damaged, or not the one that the manifest lists.
+        """
+        if not 0 <= layer < self.n_layers:
+            raise InputError(f"Layer {layer} is not one of 0 to {self.n_layers - 1}.")
+        planes = []
+        for channel in range(len(self.channels)):
+            data = self.file_bytes(channel, layer)
+            if not self.is_intact(channel, layer, data):
+                raise FileFormatError(
+                    f"{self._label(channel, layer)} is not the file that was written: its SHA-256 "
+                    "differs from the manifest's. Write the stack again."
+                )
+            planes.append(self.decode(channel, layer, data))
+        return np.stack(planes)
+
+    def layer(self, k: int) -> NDArray[np.uint8]:
+        """The channel of every site of layer `k`, counted from the tray.
+
+        Returns
+        -------
+        ndarray of uint8, shape (nx, ny)
+            Indexed ``[ix, iy]`` along tray x and y: 0 for empty, m + 1 for ``channels[m]``.
+            Where two channels claim a site, the first of them.
+        """
+        width = self.raster.image_shape[2]
+        site = np.zeros(self.raster.image_shape[1:], dtype=np.uint8)
+        planes = np.unpackbits(self.bits(k), axis=2, count=width)
+        for channel in range(len(self.channels) - 1, -1, -1):
+            site[planes[channel] > 0] = channel + 1
+        return self.raster.from_image(site)
+
+
+def read_stack(folder: str | Path) -> Stack:
+    """Open a finished stack.
+
+    Parameters
+    ----------
+    folder : str or Path
+        As `write_stack` made it.
+
+    Returns
+    -------
+    Stack
+        The manifest is checked now, each image when it is read.
+
+    Raises
+    ------
+    FileFormatError
+        If the folder is no finished stack, or its manifest cannot be trusted.
+    """
+    path = Path(folder)
+    if not path.is_dir():
+        raise FileFormatError(f"There is no folder '{path.name}' to read a stack from.")
+    stack = Stack(path, read_manifest(path))
+    try:
+        differs = stack.profile.pitch != stack.raster.pitch
+    except InputError as error:
+        raise FileFormatError(f"The profile in manifest.json cannot be: {error}") from None
+    if differs:
+        raise FileFormatError("manifest.json states one pitch in its profile, another in 'raster'.")
+    return stack
