@@ -1,0 +1,1 @@
+"""What materials do: hardness, conditions of use, tables."""

@@ -26,6 +26,8 @@ Floats = NDArray[np.float64]
 
 #: Width of the transition at a bound, as a part of the distance that a law can have from it.
 SOFTNESS = 0.05
+#: A law is said to have been moved where its log modulus changed by more than this.
+NOTABLE = 1e-3
 #: Bounds closer than this (in log modulus) are treated as one value when it comes to slopes.
 NARROW = 1e-7
 
@@ -144,15 +146,15 @@ def _parallel(a: Floats, b: Floats) -> Floats:
 
 def _floor(
     x: Floats, dx: Floats, low: Floats, d_low: Floats, soft: Floats, d_soft: Floats
-) -> tuple[Floats, Floats, NDArray[np.bool_]]:
-    """Smooth ``max(x, low)`` with transition half-width `soft`; also where it moved x."""
+) -> tuple[Floats, Floats]:
+    """Smooth ``max(x, low)`` with transition half-width `soft`, and its slopes."""
     safe = np.where(soft > 0, soft, 1.0)
     far = np.where(x >= low, 1.0, -1.0)
     s = np.where(soft > 0, np.clip((x - low) / safe, -1.0, 1.0), far)
     q, slope = _soft(s)
     y = np.where(s >= 1.0, x, low + soft * q)
     dy = d_low + slope * (dx - d_low) + (q - s * slope) * d_soft
-    return y, dy, s < 1.0
+    return y, dy
 
 
 def clamp(
@@ -196,15 +198,15 @@ def clamp(
         return SOFTNESS * _parallel(gap, room), SOFTNESS * (share**2 * d_gap + rest**2 * d_room)
 
     soft, d_soft = half_width(middle - np.log(reuss), d_middle - d_reuss)
-    y, dy, raised = _floor(x, dx, band.low, band.d_low, soft, d_soft)
+    y, dy = _floor(x, dx, band.low, band.d_low, soft, d_soft)
     soft, d_soft = half_width(np.log(voigt) - middle, d_voigt - d_middle)
-    y, dy, lowered = _floor(-y, -dy, -band.high, -band.d_high, soft, d_soft)
+    y, dy = _floor(-y, -dy, -band.high, -band.d_high, soft, d_soft)
     y, dy = np.clip(-y, band.low, np.maximum(band.low, band.high)), -dy
     rows = np.flatnonzero(gap < NARROW)
     if rows.size:
         near = Band(band.low[rows], band.high[rows], band.d_low[:, rows], band.d_high[:, rows])
         dy[:, rows] = _cone(w[:, rows], phase, x[rows] - near.low, dx[:, rows], near)
-    return y, dy, (raised | lowered) & (gap >= NARROW)
+    return y, dy, np.abs(y - x) > NOTABLE
 
 
 def _cone(w: Floats, phase: Floats, above_low: Floats, dx: Floats, band: Band) -> Floats:
@@ -222,7 +224,7 @@ def _cone(w: Floats, phase: Floats, above_low: Floats, dx: Floats, band: Band) -
     none = np.zeros_like(gap)
     below = SOFTNESS * _parallel(gap, np.maximum(middle - d_reuss, 0.0))
     above = SOFTNESS * _parallel(gap, np.maximum(d_voigt - middle, 0.0))
-    y, _, _ = _floor(dx, none, low, none, below, none)
-    y, _, _ = _floor(-y, none, -(low + gap), none, above, none)
+    y, _ = _floor(dx, none, low, none, below, none)
+    y, _ = _floor(-y, none, -(low + gap), none, above, none)
     beyond = np.where(above_low > 0, low + gap, low)
     return np.where(np.abs(above_low) > NARROW, beyond, -y)

@@ -63,7 +63,7 @@ class LawValue:
     low_bulk, high_bulk, low_shear, high_shear : ndarray, shape (n,)
         Hashin-Shtrikman bounds, MPa.
     clipped : ndarray of bool, shape (n,)
-        Where bulk or shear modulus was moved to keep it within these bounds.
+        Where bulk or shear modulus was moved, by more than 0.1 %, to keep it within them.
     uncalibrated : ndarray of bool, shape (n,)
         Where a calibrated law had no curve for the blend and mixed logarithms instead.
     """
@@ -322,7 +322,8 @@ class CalibratedCurve(_ClippedLaw):
     ----------
     curves : tuple of PairCurve
     side : str
-        ``"value"``, or ``"low"`` or ``"high"`` for an edge of the curves' bands.
+        ``"value"``, or ``"low"`` or ``"high"`` for an edge of the curves' bands (Young's modulus
+        goes there, the bulk modulus stays).
     """
 
     key: ClassVar[str] = "calibrated"
@@ -361,14 +362,19 @@ class CalibratedCurve(_ClippedLaw):
         i, j = at
         share = w[i] + w[j]
         t = np.divide(w[j], share, out=np.zeros_like(share), where=share > 0)
-        g, dg, free, dfree = curve.shape(t, self.side)
+        g, dg, free, dfree = curve.shape(t)
         ends = [np.log(3.0 * shear[m] / (3.0 * bulk[m] + shear[m])) for m in at]
-        log_q = (1.0 - t) * ends[0] + t * ends[1] + free
-        d_log_q = ends[1] - ends[0] + dfree
         # E = G (3 - q), and log E runs between the resins' own moduli as the curve's does.
         rest = [np.log(3.0 - np.exp(e)) for e in ends]
         log_g = [np.log(shear[m]) for m in at]
         span = log_g[1] + rest[1] - log_g[0] - rest[0]
+        if self.side != "value":
+            # The band is one of shear: K = E / (3 q) stays, so q goes along with E.
+            g_side, dg_side, _, _ = curve.shape(t, self.side)
+            free, dfree = free + span * (g_side - g), dfree + span * (dg_side - dg)
+            g, dg = g_side, dg_side
+        log_q = (1.0 - t) * ends[0] + t * ends[1] + free
+        d_log_q = ends[1] - ends[0] + dfree
         three_q = 3.0 - np.exp(log_q)
         extra = span * g + rest[0] - np.log(three_q) - t * (log_g[1] - log_g[0])
         d_extra = span * dg + np.exp(log_q) / three_q * d_log_q - (log_g[1] - log_g[0])
