@@ -15,6 +15,8 @@ Array = NDArray[np.float64]
 Bools = NDArray[np.bool_]
 
 _NEAREST = 4  # crossing points whose tangent planes are averaged
+_PLANES_WITHIN = 2.0  # of the largest spacing; farther off the nearest point alone counts
+_FLAT = 0.05  # of the steepest slope; a direction in a flatter field is noise
 _SUB = 5  # sub-points an axis for the solid fraction of a cut voxel
 
 
@@ -49,13 +51,18 @@ def _crossings(phi: Array, slopes: list[Array], step: Array) -> tuple[Array, Arr
         slope = np.column_stack(
             [(1 - t[:, 0]) * g[tuple(a)][change] + t[:, 0] * g[tuple(b)][change] for g in slopes]
         )
-        length = np.linalg.norm(slope, axis=1, keepdims=True)
         own = np.zeros_like(slope)
         own[:, axis] = np.where(second[change] > first[change], 1.0, -1.0)
-        normals.append(np.where(length > 0, slope / np.where(length > 0, length, 1.0), own))
+        normals.append(np.where((slope != 0).any(axis=1, keepdims=True), _unit(slope), own))
     if not points:
         return np.zeros((0, 3)), np.zeros((0, 3))
     return np.concatenate(points), np.concatenate(normals)
+
+
+def _unit(vectors: Array) -> Array:
+    """Scaled to length 1 along the last axis; zero stays zero."""
+    length = np.linalg.norm(vectors, axis=-1, keepdims=True)
+    return np.asarray(vectors / np.where(length > 0, length, 1.0))
 
 
 def _slopes(phi: Array, step: Array) -> list[Array]:
@@ -92,7 +99,8 @@ def void_distance(
     phi = level - density
     sign = np.where(phi < 0, -1.0, 1.0)
     out = sign * reach
-    points, normals = _crossings(phi, _slopes(phi, step), step)
+    slopes = _slopes(phi, step)
+    points, normals = _crossings(phi, slopes, step)
     if not len(points):
         return out
     tree = cKDTree(points)
@@ -105,10 +113,17 @@ def void_distance(
     near = far[rows, 0]
     flat = out.reshape(-1)
     flat[rows] = sign.reshape(-1)[rows] * near
-    close = rows[near < 1.5 * step.max()]
+    close = rows[near < _PLANES_WITHIN * step.max()]
     some = np.minimum(which[close], len(points) - 1)
     offset = centres[close][:, None, :] - points[some]
-    plane = np.einsum("nkd,nkd->nk", offset, normals[some])
+    # The mean of the normal there and the normal here: on a round surface the tangent plane at
+    # the point alone would be off by the sagitta, always to the same side.
+    here = np.column_stack([g.reshape(-1)[close] for g in slopes])
+    size = np.linalg.norm(here, axis=1, keepdims=True)
+    here = np.where(size > _FLAT * size.max(initial=0.0), _unit(here), 0.0)
+    alike = np.einsum("nkd,nd->nk", normals[some], here) > 0.5
+    normal = _unit(normals[some] + np.where(alike[..., None], here[:, None, :], 0.0))
+    plane = np.einsum("nkd,nkd->nk", offset, normal)
     weight = np.where(np.isfinite(far[close]), 1.0 / (far[close] ** 2 + 1e-6 * step.min() ** 2), 0)
     mean = (plane * weight).sum(1) / weight.sum(1)
     # A tangent plane far from its own point can lie on the wrong side; the sign of phi is sure.
@@ -130,8 +145,7 @@ def void_fill(distance: Array, density: Array, spacing: tuple[float, float, floa
     out = np.where(distance < 0, 1.0, 0.0)
     cut = np.abs(distance) < 0.5 * np.linalg.norm(step)
     slope = np.column_stack([-g[cut] for g in _slopes(density, step)])
-    length = np.linalg.norm(slope, axis=1, keepdims=True)
-    normal = slope / np.where(length > 0, length, 1.0)
+    normal = _unit(slope)
     middle = (np.arange(_SUB) + 0.5) / _SUB - 0.5
     solid = np.zeros(len(normal))
     for offset in itertools.product(middle, repeat=3):

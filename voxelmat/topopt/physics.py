@@ -107,6 +107,10 @@ class Physics:
         self._solved = {}
         self.cg_iterations = 0
 
+    def quiet(self) -> None:
+        """No more reports, and so no more cancelling: for the last solves after a stop."""
+        self._monitor = SILENT
+
     def warm_state(self) -> dict[str, Array]:
         """Last solutions by name; never changed in place."""
         return dict(self._warm)

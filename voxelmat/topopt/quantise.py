@@ -6,11 +6,13 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
+from scipy.spatial import cKDTree
 
 __all__ = ["Quantised", "quantise"]
 
 Array = NDArray[np.float64]
 
+_ROUNDS = 8
 _TRACE = 1e-4  # a smaller fraction of a resin is dropped from a blend
 
 
@@ -27,8 +29,9 @@ def quantise(fractions: Array, weight: Array, stiffness: Array, levels: int) -> 
     """Group blends: split at the weighted median until there are enough groups.
 
     Always split is the group that holds the largest weighted squared deviation, along the
-    direction (a fraction or the log stiffness) in which it deviates most. For two resins the
-    groups are quantiles of the design where it is dense. Pure resins stay pure.
+    direction (a fraction or the log stiffness) in which it deviates most; then every blend goes
+    to the nearest group, a few times over. Levels so lie where the design is dense. Pure resins
+    stay pure.
 
     Parameters
     ----------
@@ -70,16 +73,35 @@ def quantise(fractions: Array, weight: Array, stiffness: Array, levels: int) -> 
         groups[worst], spread[worst] = low, _spread(features, amount, low)
         groups.append(high)
         spread.append(_spread(features, amount, high))
-    table = np.array([amount[g] @ rows[g] / amount[g].sum() for g in groups])
     row_of = np.empty(len(rows), dtype=np.intp)
     for number, g in enumerate(groups):
         row_of[g] = number
+    row_of[mixed] = _settled(features[mixed], amount[mixed], row_of[mixed])
+    total = np.bincount(row_of, weights=amount, minlength=len(groups))
+    table = np.column_stack(
+        [np.bincount(row_of, weights=amount * r, minlength=len(groups)) / total for r in rows.T]
+    )
     table[table < 1e-9] = 0.0
     table /= table.sum(1, keepdims=True)
     index = row_of[back]
     return Quantised(
         table=table, index=index, error=float(np.abs(table[index] - fractions).max())
     )
+
+
+def _settled(features: Array, amount: Array, group: NDArray[np.intp]) -> NDArray[np.intp]:
+    """Move each row to the nearest group mean, a few times over; no group becomes empty."""
+    names, group = np.unique(group, return_inverse=True)
+    for _ in range(_ROUNDS):
+        total = np.bincount(group, weights=amount)
+        means = np.column_stack(
+            [np.bincount(group, weights=amount * f) / total for f in features.T]
+        )
+        nearest = cKDTree(means).query(features)[1]
+        if len(np.unique(nearest)) < len(names) or np.array_equal(nearest, group):
+            break
+        group = nearest
+    return np.asarray(names[group])
 
 
 def _spread(features: Array, amount: Array, group: NDArray[np.intp]) -> tuple[float, int]:

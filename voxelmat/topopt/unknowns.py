@@ -161,22 +161,28 @@ class Unknowns:
     # ------------------------------------------------------------------ forward
     def forward(self, x: Array) -> Fields:
         """Fields of the design `x`, (n,), at the present `sharpness`."""
-        c = self.choice
         rho, filtered, d_projection = self._density(x[: self.n_rho])
         w = self._fractions(x[self.n_rho :])
+        return self._fields(rho, w, filtered, d_projection)
+
+    def with_fractions(self, fields: Fields, w: Array) -> Fields:
+        """The same densities with other fractions, (K, nz, ny, nx)."""
+        return self._fields(fields.rho, w, fields.filtered, fields.d_projection)
+
+    def _fields(self, rho: Array, w: Array, filtered: Array, d_projection: Array) -> Fields:
+        c, p = self.choice, self.palette
         inside = c.domain
-        p = self.palette
-        m = p.law.evaluate(w[:, inside].T, p.bulk, p.shear, resins=p.names)
+        blend = p.law.evaluate(w[:, inside].T, p.bulk, p.shear, resins=p.names)
         if self.void is None:
-            lam_in, mu_in = m.bulk - 2.0 * m.shear / 3.0, m.shear
+            lam_in, mu_in = blend.bulk - 2.0 * blend.shear / 3.0, blend.shear
         else:
-            lam_in, mu_in = self.void.forward(rho[inside], m.bulk, m.shear)
+            lam_in, mu_in = self.void.forward(rho[inside], blend.bulk, blend.shear)
         lam, mu = c.kept_lam.copy(), c.kept_mu.copy()
         lam[inside] = lam_in * c.fill[inside]
         mu[inside] = mu_in * c.fill[inside]
         return Fields(
             lam=lam, mu=mu, rho=rho, w=w, filtered=filtered, d_projection=d_projection,
-            blend=m,
+            blend=blend,
         )  # fmt: skip
 
     def _density(self, x: Array) -> tuple[Array, Array, Array]:

@@ -1,0 +1,253 @@
+"""What may be designed where: from a part and a specification to masks, contradictions refused."""
+
+from __future__ import annotations
+
+import difflib
+
+import numpy as np
+from numpy.typing import NDArray
+
+from voxelmat.errors import InputError
+from voxelmat.model.design_spec import DesignSpec, TargetDeflection
+from voxelmat.model.part import DISTANCE_STEPS, Part
+from voxelmat.topopt.outline import staircase_distance
+from voxelmat.topopt.physics import Case
+from voxelmat.topopt.unknowns import Choice
+
+__all__ = ["build_choice", "resin_numbers", "touching"]
+
+Bools = NDArray[np.bool_]
+
+
+def resin_numbers(part: Part, spec: DesignSpec) -> list[int]:
+    """Index among the part's resins of each resin of the specification."""
+    names = [m.name for m in part.resins]
+    found = []
+    for resin in (*spec.resins, *spec.fixed_resin, *_limited(spec)):
+        if resin not in names:
+            near = difflib.get_close_matches(resin, names, n=1)
+            hint = f" Did you mean '{near[0]}'?" if near else ""
+            raise InputError(
+                f"The design names resin '{resin}', which the part does not have; it has "
+                f"{', '.join(names)}.{hint}"
+            )
+        found.append(names.index(resin))
+    for resin in (*spec.fixed_resin, *_limited(spec)):
+        if resin not in spec.resins:
+            raise InputError(
+                f"'{resin}' is fixed or limited, but is not among the resins of the design "
+                f"({', '.join(spec.resins)}); add it there, or put its voxels under 'keep'."
+            )
+    return found[: len(spec.resins)]
+
+
+def _limited(spec: DesignSpec) -> list[str]:
+    return [limit.resin for limit in spec.limits if hasattr(limit, "resin")]
+
+
+def touching(nodes: Bools) -> Bools:
+    """Voxels with at least one marked node; both shapes in any one axis order."""
+    n = tuple(s - 1 for s in nodes.shape)
+    out = np.zeros(n, dtype=bool)
+    for corner in range(8):
+        at = tuple(slice(corner >> a & 1, (corner >> a & 1) + n[a]) for a in range(3))
+        out |= nodes[at]
+    return out
+
+
+def build_choice(
+    part: Part, spec: DesignSpec, cases: tuple[Case, ...]
+) -> tuple[Choice, tuple[str, ...]]:
+    """Masks of the design problem, and what was frozen without being asked for.
+
+    Parameters
+    ----------
+    part : Part
+    spec : DesignSpec
+    cases : tuple of Case
+        Forces, springs and supports as arrays over the nodes.
+
+    Returns
+    -------
+    choice : Choice
+    notes : tuple of str
+
+    Raises
+    ------
+    InputError
+        If regions have another shape than the grid, contradict each other, or leave nothing.
+    """
+    _check_shapes(part, spec)
+    notes: list[str] = []
+    shape = np.ascontiguousarray(part.solid.T)
+    keep = _given(spec.keep, shape) & shape | _bought_in(part)
+    domain = shape & ~keep
+    if not domain.any():
+        raise InputError("Nothing is left to design: all voxels of the shape are kept as they are.")
+    mirrors = tuple(2 - "xyz".index(a) for a in spec.symmetry)
+    box = _box(shape)
+    _check_mirror(shape, keep, mirrors, box)
+    resin = np.full(shape.shape, -1, dtype=np.intp)
+    empty = _mirrored(_given(spec.empty, shape) & domain, mirrors, box)
+    solid = _mirrored(_given(spec.solid, shape) & domain, mirrors, box)
+    for number, name in enumerate(spec.resins):
+        if name in spec.fixed_resin:
+            mask = _mirrored(_given(spec.fixed_resin[name], shape) & domain, mirrors, box)
+            clash = mask & (resin >= 0)
+            if clash.any():
+                other = spec.resins[int(resin[clash][0])]
+                raise InputError(
+                    f"{int(clash.sum())} voxels are fixed both to '{name}' and to '{other}'."
+                )
+            resin[mask] = number
+            solid |= mask
+    if empty.any() and not spec.void:
+        raise InputError(
+            f"{int(empty.sum())} voxels must be empty, but the design allows no empty voxels; "
+            "set void to true."
+        )
+    _refuse(solid & empty, "must be solid (or one resin) and must be empty at once")
+    if spec.void:
+        solid |= _protected(part, spec, domain, mirrors, box, empty)
+        solid |= _carrying(spec, cases, domain, mirrors, box, empty, notes)
+    lam, mu = _kept_lame(part, keep)
+    choice = Choice(
+        domain=domain,
+        solid=solid,
+        empty=empty,
+        resin=resin,
+        fill=np.where(domain, part.fill.T, 0.0).astype(np.float64),
+        kept_lam=lam,
+        kept_mu=mu,
+        mirrors=mirrors,
+    )
+    return choice, tuple(notes)
+
+
+def _given(mask: Bools | None, like: Bools) -> Bools:
+    return np.zeros_like(like) if mask is None else np.ascontiguousarray(mask.T)
+
+
+def _check_shapes(part: Part, spec: DesignSpec) -> None:
+    named = {n: getattr(spec, n) for n in ("solid", "empty", "keep", "protected")}
+    named |= {f"fixed_resin '{r}'": m for r, m in spec.fixed_resin.items()}
+    for name, mask in named.items():
+        if mask is not None and mask.shape != part.grid.shape:
+            raise InputError(
+                f"The region '{name}' has shape {mask.shape}; the grid has {part.grid.shape}."
+            )
+        if mask is not None and not (mask & part.solid).any():
+            raise InputError(f"The region '{name}' holds no voxel of the shape.")
+    target = spec.objective
+    if isinstance(target, TargetDeflection) and target.nodes.shape != part.grid.node_shape:
+        raise InputError(
+            f"The target deflection has nodes of shape {target.nodes.shape}; the grid has "
+            f"{part.grid.node_shape}."
+        )
+
+
+def _bought_in(part: Part) -> Bools:
+    bought = {m.name for m in part.resins if m.kind == "bought-in"}
+    flag = np.array([any(n in bought for n, _ in b.fractions) for b in part.palette])
+    return np.ascontiguousarray((flag[part.labels] & part.solid).T)
+
+
+def _kept_lame(part: Part, keep: Bools) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+    fill = np.where(keep, part.fill.T, 0.0).astype(np.float64)
+    labels = np.ascontiguousarray(part.labels.T)
+    lam, mu = part.palette_lame()
+    return lam[labels] * fill, mu[labels] * fill
+
+
+def _box(shape: Bools) -> tuple[slice, ...]:
+    places = np.argwhere(shape)
+    low, high = places.min(0), places.max(0)
+    return tuple(slice(int(a), int(b) + 1) for a, b in zip(low, high, strict=True))
+
+
+def _check_mirror(
+    shape: Bools, keep: Bools, mirrors: tuple[int, ...], box: tuple[slice, ...]
+) -> None:
+    for axis in mirrors:
+        for what, mask in (("shape", shape), ("kept voxels", keep)):
+            off = int((mask[box] != np.flip(mask[box], axis)).sum()) // 2
+            if off:
+                raise InputError(
+                    f"Symmetry in {'zyx'[axis]} is asked for, but the {what} differs from the "
+                    f"mirror image in {off} voxels; move the part on the grid or leave it out."
+                )
+
+
+def _mirrored(mask: Bools, mirrors: tuple[int, ...], box: tuple[slice, ...]) -> Bools:
+    out = mask.copy()
+    for axis in mirrors:
+        out[box] |= np.flip(out[box], axis)
+    return out
+
+
+def _refuse(clash: Bools, what: str) -> None:
+    if clash.any():
+        k, j, i = (int(n) for n in np.argwhere(clash)[0])
+        raise InputError(
+            f"{int(clash.sum())} voxels {what}, the first at ({i}, {j}, {k}); make the regions "
+            "disjoint."
+        )
+
+
+def _protected(
+    part: Part,
+    spec: DesignSpec,
+    domain: Bools,
+    mirrors: tuple[int, ...],
+    box: tuple[slice, ...],
+    empty: Bools,
+) -> Bools:
+    """Voxels of the shape's surface that must stay solid."""
+    if spec.protected is None:
+        return np.zeros_like(domain)
+    h = part.grid.spacing
+    depth = max(h) if spec.protected_depth is None else spec.protected_depth
+    unit = min(h) / DISTANCE_STEPS
+    if part.distance is not None and depth <= 120 * unit:
+        distance = part.distance.T * unit
+    else:
+        distance = staircase_distance(np.ascontiguousarray(part.solid.T), h, depth + max(h))
+    layer = domain & (distance > -depth)
+    mask = _mirrored(layer & np.ascontiguousarray(spec.protected.T), mirrors, box)
+    _refuse(mask & empty, "belong to a protected surface and must be empty at once")
+    return mask
+
+
+def _carrying(
+    spec: DesignSpec,
+    cases: tuple[Case, ...],
+    domain: Bools,
+    mirrors: tuple[int, ...],
+    box: tuple[slice, ...],
+    empty: Bools,
+    notes: list[str],
+) -> Bools:
+    """Voxels that loads, springs and full supports act on, and those whose motion is asked for."""
+    out = np.zeros_like(domain)
+    loaded = np.zeros(cases[0].force.shape[1:], dtype=bool)
+    held = np.zeros_like(loaded)
+    for case in cases:
+        loaded |= (case.force != 0).any(axis=0)
+        if case.springs is not None:
+            loaded |= (case.springs != 0).any(axis=0)
+        # A plane that slides is a symmetry plane as often as not, and is left to the design.
+        held |= case.fixed.all(axis=0)
+    measured = np.zeros_like(loaded)
+    if isinstance(spec.objective, TargetDeflection):
+        measured = np.ascontiguousarray(spec.objective.nodes.T)
+    for nodes, what in (
+        (loaded, "that carry a load or a spring"),
+        (held, "that are held in all directions"),
+        (measured, "whose deflection is asked for"),
+    ):
+        mask = _mirrored(touching(nodes) & domain, mirrors, box)
+        _refuse(mask & empty, f"{what[5:]} must be empty at once")
+        if mask.any():
+            notes.append(f"{int(mask.sum())} voxels {what} stay solid.")
+        out |= mask
+    return out
