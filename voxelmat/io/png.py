@@ -110,7 +110,7 @@ def _inflate(packed: bytes, size: int, name: str) -> bytes:
     engine = isal_zlib.decompressobj()
     try:
         raw = engine.decompress(packed, size + 1)
-    except isal_zlib.error as error:
+    except isal_zlib.error as error:  # type: ignore[misc]
         raise FileFormatError(f"{name} is damaged: {error}.") from None
     if len(raw) != size:
         raise FileFormatError(f"{name} does not hold the {size} bytes that its header states.")

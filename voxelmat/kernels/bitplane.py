@@ -162,13 +162,12 @@ def dilate_columns(plane, before, after, edge, out):
 
 
 @njit(cache=True, nogil=True)
-def add_to_voxels(bits, row_at, row_part, column_at, column_part, weight, total):
+def add_to_voxels(bits, row_at, row_share, column_at, column_share, total):
     """Add the set sites of one plane to the design voxels that they overlap.
 
-    bits u8 [rows, stride], row_at i32 and row_part f64 [rows]: the first voxel that a site
-    touches and the share of it there, the rest going to the next; -1 for off the grid on the
-    low side is not possible, shares off the grid are 0. weight: share of this layer. total
-    f64 [r + 1, c + 1] (added to).
+    bits u8 [rows, stride]; row_at i32 [rows] the first voxel that a row of sites overlaps,
+    row_share f64 [rows, 2] the share of that voxel and of the next; the same for columns;
+    total f64 [r, c] (added to) has an entry for every voxel named and the one after.
     """
     line = np.zeros(total.shape[1])
     for y in range(bits.shape[0]):
@@ -181,11 +180,11 @@ def add_to_voxels(bits, row_at, row_part, column_at, column_part, weight, total)
             for q in range(8):
                 if v >> (7 - q) & 1:
                     x = b * 8 + q
-                    line[column_at[x]] += column_part[x, 0]
-                    line[column_at[x] + 1] += column_part[x, 1]
+                    line[column_at[x]] += column_share[x, 0]
+                    line[column_at[x] + 1] += column_share[x, 1]
         if used:
             for i in range(2):
-                share = weight * row_part[y, i]
+                share = row_share[y, i]
                 if share > 0:
                     for c in range(line.shape[0]):
                         total[row_at[y] + i, c] += share * line[c]

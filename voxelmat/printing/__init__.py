@@ -1,0 +1,1 @@
+"""From a part to droplets: raster, halftone, stack on disk, and the checks of what was written."""

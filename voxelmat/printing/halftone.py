@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterator
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -56,7 +57,7 @@ def _rounded(weight: NDArray[np.float32]) -> NDArray[np.float32]:
     return (weight >= np.float32(0.5)).astype(np.float32)
 
 
-def _at_least_two(array: NDArray[np.int8] | NDArray[np.uint16]) -> NDArray[np.generic]:
+def _at_least_two(array: NDArray[Any]) -> NDArray[Any]:
     """Repeat an axis of one voxel, so that every site lies between two."""
     for axis, size in enumerate(array.shape):
         if size == 1:

@@ -152,7 +152,7 @@ class Raster:
         return view.T if self.row_direction == "x" else view
 
     # ------------------------------------------------------------------ design grid
-    def _part_axes(self) -> list[tuple[int, int]]:
+    def part_axes(self) -> list[tuple[int, int]]:
         """Part axis and sign that layers, rows and columns follow."""
         turn = np.array(self.rotation)
         axes = []
@@ -163,13 +163,13 @@ class Raster:
 
     def to_image(self, array: NDArray[Any]) -> NDArray[Any]:
         """A field ``[i, j, k]`` on the design grid as a C-ordered copy ``[layer, row, column]``."""
-        axes = self._part_axes()
+        axes = self.part_axes()
         view = array.transpose([a for a, _ in axes])
         return np.ascontiguousarray(view[tuple(slice(None, None, s) for _, s in axes)])
 
     def to_part(self, array: NDArray[Any]) -> NDArray[Any]:
         """The inverse of `to_image`, x fastest in memory."""
-        axes = self._part_axes()
+        axes = self.part_axes()
         view = array[tuple(slice(None, None, s) for _, s in axes)]
         return np.asfortranarray(view.transpose(np.argsort([a for a, _ in axes])))
 
@@ -188,13 +188,13 @@ class Raster:
             One value a layer, row or column; 0.0 is the centre of the first voxel.
         """
         tray, sign = self.image_axes[image_axis]
-        part, part_sign = self._part_axes()[image_axis]
+        part, part_sign = self.part_axes()[image_axis]
         order = np.arange(self.shape[tray])
         sites = (order if sign > 0 else order[::-1]) + self.offset[tray]
         mm = (sites + 0.5) * float(self.pitch[tray])
         along = sign * part_sign * (mm - self.translation[tray])
         index = (along - grid.origin[part]) / grid.spacing[part] - 0.5
-        return index if part_sign > 0 else grid.shape[part] - 1 - index
+        return np.asarray(index if part_sign > 0 else grid.shape[part] - 1 - index, np.float64)
 
     # ------------------------------------------------------------------ points
     def site_to_part(self, site: tuple[float, float, float]) -> tuple[float, float, float]:

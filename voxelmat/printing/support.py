@@ -56,7 +56,7 @@ def outline_box(part: Part, field: NDArray[np.int8]) -> Box:
     low, high = [], []
     for axis in range(3):
         lines = np.moveaxis(field, axis, 0)
-        inside = (lines < 0).any(axis=(1, 2))
+        inside = np.asarray((lines < 0).any(axis=(1, 2)))
         if not inside.any():
             raise InputError(
                 f"Part '{part.name}' has nothing to print: no voxel with a printed resin lies "
