@@ -1,0 +1,73 @@
+"""The coarsest level of the multigrid as a dense matrix, factorised once."""
+
+from __future__ import annotations
+
+import numpy as np
+import scipy.linalg
+from numpy.typing import NDArray
+
+from voxelmat.fea.levels import Level
+
+__all__ = ["Coarsest"]
+
+# Added to the matrix after it was scaled to a unit diagonal: makes free rigid motions solvable.
+_SHIFT = 1e-6
+
+
+def _dense(level: Level) -> NDArray[np.float64]:
+    """The matrix behind `level`, from products with 81 combs of unit vectors.
+
+    A node couples only with its direct neighbours, so nodes three apart share one product.
+    """
+    size = int(np.prod(level.shape))
+    nodes = np.arange(size).reshape(level.shape)
+    A = np.zeros((size, size))
+    x, y = np.zeros(level.shape, np.float32), np.empty(level.shape, np.float32)
+    index = [np.arange(n) for n in level.shape[1:]]
+    for comb in np.ndindex(3, 3, 3):
+        # The comb's tooth within one node of each node, along each axis.
+        teeth = [i - ((i - o + 1) % 3 - 1) for i, o in zip(index, comb, strict=True)]
+        near = [
+            np.flatnonzero((t >= 0) & (t < n)) for t, n in zip(teeth, level.shape[1:], strict=True)
+        ]
+        if any(o >= n for o, n in zip(comb, level.shape[1:], strict=True)):
+            continue
+        rows = np.ix_(range(3), *near)
+        columns = np.ix_([0], *(t[n] for t, n in zip(teeth, near, strict=True)))
+        for d in range(3):
+            x[:] = 0
+            x[d, comb[0] :: 3, comb[1] :: 3, comb[2] :: 3] = 1
+            level.product(x, y)
+            at = np.broadcast_to(nodes[d][columns[1:]], nodes[rows].shape)
+            A[nodes[rows], at] = y[rows]
+    return A
+
+
+class Coarsest:
+    """A direct solve, steady also where the coarsest grid is singular."""
+
+    def __init__(self, level: Level) -> None:
+        A = _dense(level)
+        exists = (level.B[:3] > 0).ravel()
+        A[~exists] = 0
+        A[:, ~exists] = 0
+        A = (A + A.T) / 2
+        diagonal = np.where(exists, np.diag(A), 1.0)
+        self._scale = np.where(exists, 1 / np.sqrt(np.where(diagonal > 0, diagonal, 1.0)), 0.0)
+        A *= self._scale[:, None] * self._scale
+        A[np.diag_indices_from(A)] = 1.0 + _SHIFT
+        try:
+            self._inverse = scipy.linalg.inv(scipy.linalg.cholesky(A, lower=True))
+        except scipy.linalg.LinAlgError:
+            values, vectors = np.linalg.eigh(A)
+            self._inverse = (vectors / np.sqrt(np.maximum(values, _SHIFT))).T
+
+    def solve(self, b: NDArray[np.float32], x: NDArray[np.float32]) -> None:
+        """Write the solution of A x = b to x."""
+        v = self._inverse @ (b.ravel().astype(np.float64) * self._scale)
+        x[:] = ((self._inverse.T @ v) * self._scale).reshape(x.shape)
+
+    @property
+    def nbytes(self) -> int:
+        """Memory held, bytes."""
+        return int(self._inverse.nbytes)

@@ -1,0 +1,213 @@
+"""The multigrid V-cycle in single precision that preconditions conjugate gradients.
+
+Two ways to make the coarse levels: ``avg2`` takes the mean of the Lame constants of 2x2x2
+voxels and is cheap; ``gal4b`` uses the exact Galerkin products as 27-point stencils and holds
+where nu is near 0.5, voxels alternate in stiffness, are flat, or hang on a few points. Both
+smooth with Chebyshev polynomials in the inverse 3x3 nodal blocks.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+from typing import NamedTuple, Protocol
+
+import numpy as np
+from numpy.typing import NDArray
+
+from voxelmat.fea.coarsest import Coarsest
+from voxelmat.fea.element import Spacing
+from voxelmat.fea.galerkin import add_springs, galerkin_stencils, held_springs
+from voxelmat.fea.levels import Level, StencilLevel, VoxelLevel
+from voxelmat.fea.operator import planes
+from voxelmat.kernels.transfer import prolong_add, restrict
+from voxelmat.kernels.vector import residual, scaled_copy, smooth_first
+
+__all__ = ["METHODS", "Grid", "Jacobi", "Multigrid", "Preconditioner", "make_preconditioner"]
+
+Single = NDArray[np.float32]
+Double = NDArray[np.float64]
+
+#: Coarse methods, cheapest first; ``jacobi`` has no coarse levels and is kept as a check.
+METHODS = ("avg2", "gal4b", "jacobi")
+
+# Unknowns below which a grid is solved directly.
+_COARSEST = 750
+# Smoothing polynomial: degree, and the range of eigenvalues that it damps, [max / ratio, max].
+_SMOOTHING = {"avg2": (2, 10.0), "gal4b": (4, 40.0)}
+
+
+class Grid(NamedTuple):
+    """What a hierarchy is made from.
+
+    Attributes
+    ----------
+    lam, mu : ndarray of float64, shape (nz, ny, nx)
+        Lame constants, MPa.
+    spacing : tuple of float
+        mm.
+    element : str
+    held : ndarray of bool, shape (3, nz+1, ny+1, nx+1)
+        Unknowns of touched nodes whose displacement is given.
+    touched : ndarray of bool, shape (nz+1, ny+1, nx+1)
+        Nodes that touch material.
+    springs : ndarray of float64 or None, shape of `held`
+        Springs to ground, N/mm.
+    """
+
+    lam: Double
+    mu: Double
+    spacing: Spacing
+    element: str
+    held: NDArray[np.bool_]
+    touched: NDArray[np.bool_]
+    springs: Double | None
+
+
+class Preconditioner(Protocol):
+    """What conjugate gradients need."""
+
+    method: str
+
+    def apply(self, r: Double, scale: float) -> Single:
+        """Approximate solution of K z = scale r; the array belongs to the preconditioner."""
+
+    @property
+    def nbytes(self) -> int:
+        """Memory held, bytes."""
+
+
+def _depths(shape: tuple[int, ...]) -> int:
+    """Number of coarse levels below a grid of `shape` voxels."""
+    depth, dims = 0, np.array(shape)
+    while 3 * np.prod(dims + 1) > _COARSEST and dims.max() > 1:
+        dims = -(-dims // 2)
+        depth += 1
+    return depth
+
+
+def _halved(a: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Mean over 2x2x2 voxels; what lies beyond an odd end counts as empty."""
+    padded = np.pad(a, [(0, n % 2) for n in a.shape])
+    nz, ny, nx = (n // 2 for n in padded.shape)
+    return np.asarray(padded.reshape(nz, 2, ny, 2, nx, 2).mean(axis=(1, 3, 5)))
+
+
+def _injected(held: NDArray[np.bool_], shape: tuple[int, ...]) -> NDArray[np.bool_]:
+    """Coarse unknowns that sit on a fine one that is held."""
+    out = np.zeros(shape, dtype=bool)
+    sub = held[:, ::2, ::2, ::2]
+    out[:, : sub.shape[1], : sub.shape[2], : sub.shape[3]] = sub
+    return out
+
+
+def _finest(grid: Grid) -> VoxelLevel:
+    free = (~grid.held & grid.touched).astype(np.uint8)
+    return VoxelLevel(grid.lam, grid.mu, grid.spacing, grid.element, free, grid.springs)
+
+
+def _averaged(grid: Grid, depths: int) -> Iterator[Level]:
+    """Coarse levels of ``avg2``."""
+    lam, mu, held = grid.lam, grid.mu, grid.held
+    h = grid.spacing
+    springs = grid.springs
+    for _ in range(depths):
+        lam, mu = _halved(lam), _halved(mu)
+        h = (2 * h[0], 2 * h[1], 2 * h[2])
+        shape = (3, *(n + 1 for n in lam.shape))
+        held = _injected(held, shape)
+        if springs is not None:
+            # P^T of the diagonal: the lumped springs.
+            coarse = np.zeros(shape, dtype=np.float32)
+            restrict(springs.astype(np.float32), coarse)
+            springs = coarse.astype(np.float64)
+        yield VoxelLevel(lam, mu, h, grid.element, (~held).astype(np.uint8), springs)
+
+
+def _galerkin(grid: Grid, depths: int) -> Iterator[Level]:
+    """Coarse levels of ``gal4b``."""
+    where, stiffness = held_springs(grid.lam, grid.mu, grid.spacing, grid.element, grid.held)
+    if grid.springs is not None:
+        more = np.argwhere(grid.springs > 0)
+        where = np.concatenate([where, more])
+        stiffness = np.concatenate([stiffness, grid.springs[tuple(more.T)]])
+    stencils = galerkin_stencils(grid.lam, grid.mu, grid.spacing, grid.element, depths)
+    for depth, S in enumerate(stencils, start=1):
+        add_springs(S, where, stiffness, depth)
+        yield StencilLevel(S)
+
+
+class Multigrid:
+    """The V-cycle.
+
+    Parameters
+    ----------
+    grid : Grid
+    method : str
+        ``"avg2"`` or ``"gal4b"``.
+    """
+
+    def __init__(self, grid: Grid, method: str) -> None:
+        self.method = method
+        depths = _depths(grid.lam.shape)
+        self.levels: list[Level] = [_finest(grid)]
+        make = _averaged if method == "avg2" else _galerkin
+        self.levels.extend(make(grid, depths))
+        degree, ratio = _SMOOTHING[method]
+        for level in self.levels:
+            level.allocate()
+        for level in self.levels[:-1]:
+            level.choose_steps(degree, ratio)
+        self.coarsest = Coarsest(self.levels[-1])
+
+    def _cycle(self, n: int) -> None:
+        level = self.levels[n]
+        if n == len(self.levels) - 1:
+            self.coarsest.solve(level.b, level.x)
+            return
+        below = self.levels[n + 1]
+        level.smooth(from_zero=True)
+        level.product(level.x, level.y)
+        residual(level.flat(level.b), level.flat(level.y), level.flat(level.B), level.flat(level.y))
+        restrict(level.y, below.b)
+        self._cycle(n + 1)
+        prolong_add(below.x, level.x, level.B)
+        level.smooth(from_zero=False)
+
+    def apply(self, r: Double, scale: float) -> Single:
+        """One V-cycle for ``scale * r``."""
+        top = self.levels[0]
+        scaled_copy(planes(r), scale, planes(top.b))
+        self._cycle(0)
+        return top.x
+
+    @property
+    def nbytes(self) -> int:
+        """Memory held, bytes."""
+        return sum(level.nbytes for level in self.levels) + self.coarsest.nbytes
+
+
+class Jacobi:
+    """The inverse nodal blocks alone: slow and simple, a check on the multigrid."""
+
+    method = "jacobi"
+
+    def __init__(self, grid: Grid) -> None:
+        self._level = _finest(grid)
+        self._level.allocate()
+
+    def apply(self, r: Double, scale: float) -> Single:
+        """Blocks times ``scale * r``."""
+        top = self._level
+        scaled_copy(planes(r), scale, planes(top.b))
+        smooth_first(*(top.flat(v) for v in (top.b, top.B, top.x, top.d)), np.float32(1))
+        return top.x
+
+    @property
+    def nbytes(self) -> int:
+        """Memory held, bytes."""
+        return self._level.nbytes
+
+
+def make_preconditioner(grid: Grid, method: str) -> Preconditioner:
+    """The preconditioner called `method`, one of `METHODS`."""
+    return Jacobi(grid) if method == "jacobi" else Multigrid(grid, method)

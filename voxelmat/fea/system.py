@@ -1,0 +1,269 @@
+"""A linear system of one grid of voxels: set up once, solved for any number of loads."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from voxelmat.errors import ConvergenceError, InputError
+from voxelmat.fea.element import DEFAULT, Spacing
+from voxelmat.fea.krylov import Iteration, conjugate_gradients
+from voxelmat.fea.multigrid import METHODS, Grid, Preconditioner, make_preconditioner
+from voxelmat.fea.operator import Stiffness, check_moduli, dot, touched_nodes
+from voxelmat.monitor import SILENT, Monitor, computing
+
+__all__ = ["LinearSystem", "Solution", "first_method"]
+
+Double = NDArray[np.float64]
+
+# With the cheap coarse levels, go over to the exact ones after this many iterations.
+_CHEAP_LIMIT = 25
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Solution:
+    """Displacement of one load.
+
+    Attributes
+    ----------
+    u : ndarray of float64, shape (3, nz+1, ny+1, nx+1)
+        mm; 0 at nodes that touch no material.
+    iterations : int
+    residual : float
+        Size of f - K u over the size of f (less what prescribed displacements take), both on
+        free unknowns.
+    history : tuple of float
+        Relative residual at the start and after each iteration.
+    """
+
+    u: Double
+    iterations: int
+    residual: float
+    history: tuple[float, ...]
+
+
+def _lost_supports(held: NDArray[np.bool_]) -> bool:
+    """Whether halving the grid would lose most held unknowns of some direction."""
+    for d in range(3):
+        count = int(held[d].sum())
+        if count and int(held[d, ::2, ::2, ::2].sum()) * 16 < count:
+            return True
+    return False
+
+
+def _largest_jump(mu: Double) -> float:
+    """Largest ratio of shear moduli of two neighbouring voxels with material."""
+    largest = 1.0
+    for axis in range(3):
+        n = mu.shape[axis]
+        low, high = np.take(mu, range(n - 1), axis), np.take(mu, range(1, n), axis)
+        both = (low > 0) & (high > 0)
+        if both.any():
+            ratio = high[both] / low[both]
+            largest = max(largest, float(ratio.max()), float(1 / ratio.min()))
+    return largest
+
+
+def first_method(lam: Double, mu: Double, spacing: Spacing, held: NDArray[np.bool_]) -> str:
+    """The coarse method to begin with.
+
+    ``gal4b`` where the cheap one is known to be slow: nu above .45, neighbours that differ
+    more than 100 times, voxels flatter than 2, plates of fewer than 4 voxels, supports that lie
+    between coarse nodes.
+    """
+    rubbery = bool(np.any(lam > 9.0 * mu))  # lambda = 2 mu nu / (1 - 2 nu) = 9 mu at nu .45
+    flat = max(spacing) > 2.0 * min(spacing) or min(lam.shape) < 4
+    hard = rubbery or flat or _lost_supports(held) or _largest_jump(mu) > 100.0
+    return "gal4b" if hard else "avg2"
+
+
+class LinearSystem:
+    """K u = f on a grid of voxels, with held unknowns and springs.
+
+    Parameters
+    ----------
+    lam, mu : ndarray of float64, shape (nz, ny, nx)
+        Lame constants of each voxel, MPa; both exactly 0 where the voxel is empty. Nodes that
+        touch no material are no unknowns.
+    spacing : tuple of float
+        Voxel edge along x, y, z, mm.
+    fixed : ndarray of bool, shape (3, nz+1, ny+1, nx+1)
+        Where the displacement along x, y, z is given (0 unless `solve` is told otherwise).
+    springs : ndarray of float64, shape of `fixed`, optional
+        Springs to ground, N/mm.
+    element : str
+        See `voxelmat.fea.element`.
+    coarse : str
+        ``"auto"``, or one of `voxelmat.fea.multigrid.METHODS`.
+    monitor : Monitor
+
+    Raises
+    ------
+    InputError
+        Arrays of wrong shape, impossible moduli, negative springs, an unknown name.
+    """
+
+    def __init__(
+        self,
+        lam: Double,
+        mu: Double,
+        spacing: Spacing,
+        fixed: NDArray[np.bool_],
+        *,
+        springs: Double | None = None,
+        element: str = DEFAULT,
+        coarse: str = "auto",
+        monitor: Monitor = SILENT,
+    ) -> None:
+        lam = np.ascontiguousarray(lam, dtype=np.float64)
+        mu = np.ascontiguousarray(mu, dtype=np.float64)
+        check_moduli(lam, mu)
+        shape = (3, *(n + 1 for n in lam.shape))
+        if fixed.shape != shape or fixed.dtype != bool:
+            raise InputError(f"fixed must be bool of shape {shape}; got {fixed.shape}.")
+        if springs is not None and not (springs.shape == shape and np.all(springs >= 0)):
+            raise InputError(f"springs must be >= 0 N/mm and of shape {shape}.")
+        if not all(np.isfinite(h) and h > 0 for h in spacing):
+            raise InputError(f"The spacing must be above 0 mm; got {spacing}.")
+        if coarse not in ("auto", *METHODS):
+            raise InputError(f"coarse is one of auto, {', '.join(METHODS)}; got {coarse!r}.")
+        self.shape = shape
+        self._monitor = monitor
+        touched = touched_nodes(mu > 0)
+        held = fixed & touched
+        self._grid = Grid(lam, mu, spacing, element, held, touched, springs)
+        self.free = (~held & touched).astype(np.uint8)
+        self.operator = Stiffness(lam, mu, spacing, element, springs)
+        self._automatic = coarse == "auto"
+        self._method = first_method(lam, mu, spacing, held) if self._automatic else coarse
+        self._preconditioner: Preconditioner | None = None
+
+    @property
+    def method(self) -> str:
+        """The coarse method in use."""
+        return self._method
+
+    @property
+    def nbytes(self) -> int:
+        """Memory held between solves, bytes."""
+        extra = 0 if self._preconditioner is None else self._preconditioner.nbytes
+        return self.operator.nbytes + int(self.free.nbytes) + extra
+
+    def apply(self, u: Double) -> Double:
+        """K u (springs included), N, on all nodes, held ones too."""
+        u = np.ascontiguousarray(u, dtype=np.float64)
+        if u.shape != self.shape:
+            raise InputError(f"u must have shape {self.shape}; got {u.shape}.")
+        out = np.empty_like(u)
+        with computing():
+            self.operator.apply(u, out)
+        return out
+
+    def _ready(self) -> Preconditioner:
+        if self._preconditioner is None or self._preconditioner.method != self._method:
+            self._preconditioner = None  # let go of the old one before the new one is built
+            self._monitor.report("preparing the solver", done=0, total=0, method=self._method)
+            self._preconditioner = make_preconditioner(self._grid, self._method)
+        return self._preconditioner
+
+    def _start(self, x0: Double | None, prescribed: Double | None) -> tuple[Double, Double]:
+        """First guess and the given displacements, both on all nodes."""
+        given = np.zeros(self.shape)
+        if prescribed is not None:
+            if prescribed.shape != self.shape:
+                raise InputError(f"prescribed must have shape {self.shape}.")
+            given[self._grid.held] = prescribed[self._grid.held]
+        x = given.copy()
+        if x0 is not None:
+            if x0.shape != self.shape:
+                raise InputError(f"x0 must have shape {self.shape}; got {x0.shape}.")
+            x += x0 * self.free
+        if not (np.all(np.isfinite(x))):
+            raise InputError("A first guess or a prescribed displacement is not finite.")
+        return x, given
+
+    def solve(
+        self,
+        b: Double,
+        *,
+        x0: Double | None = None,
+        prescribed: Double | None = None,
+        tol: float = 1e-8,
+        maxiter: int = 400,
+    ) -> Solution:
+        """Solve for one load.
+
+        Parameters
+        ----------
+        b : ndarray of float64, shape (3, nz+1, ny+1, nx+1)
+            Nodal forces, N; what falls on held or untouched nodes has no effect.
+        x0 : ndarray, optional
+            First guess, mm.
+        prescribed : ndarray, optional
+            Displacement at held unknowns, mm; other entries are ignored.
+        tol : float
+            Relative residual to reach.
+        maxiter : int
+            Most iterations.
+
+        Raises
+        ------
+        ConvergenceError
+            With the residual history, when `tol` is out of reach.
+        """
+        if b.shape != self.shape or not np.all(np.isfinite(b)):
+            raise InputError(f"The load must be finite and of shape {self.shape}; got {b.shape}.")
+        with computing():
+            x, given = self._start(x0, prescribed)
+            force = b * self.free
+            norm = float(np.sqrt(dot(force, force)))
+            if prescribed is not None:
+                carried = self.apply(given) * self.free
+                np.subtract(force, carried, out=carried)
+                norm = float(np.sqrt(dot(carried, carried)))
+            if norm == 0.0:
+                return Solution(u=given, iterations=0, residual=0.0, history=(0.0,))
+            run = self._iterate(force, Iteration(x), norm, tol, maxiter)
+        if run.state != "converged":
+            raise ConvergenceError(self._complaint(run, tol), run.history)
+        return Solution(
+            u=run.x,
+            iterations=run.iterations,
+            residual=run.residual,
+            history=tuple(run.history),
+        )
+
+    def _iterate(
+        self, force: Double, run: Iteration, norm: float, tol: float, maxiter: int
+    ) -> Iteration:
+        while True:
+            switch = self._automatic and self._method == "avg2"
+            M = self._ready()
+            limit = min(maxiter, _CHEAP_LIMIT) if switch else maxiter
+            conjugate_gradients(
+                self.operator,
+                M,
+                force,
+                self.free,
+                run,
+                norm=norm,
+                tol=tol,
+                limit=limit,
+                monitor=self._monitor,
+            )
+            if run.state == "converged" or not switch or run.iterations >= maxiter:
+                return run
+            self._method = "gal4b"
+
+    def _complaint(self, run: Iteration, tol: float) -> str:
+        mu = self._grid.mu[self._grid.mu > 0]
+        contrast = float(mu.max() / mu.min()) if mu.size else 1.0
+        how = {"limit": "stopped", "stalled": "stalled", "broken": "broke down"}[run.state]
+        return (
+            f"The solver {how} after {run.iterations} iterations at residual {run.residual:.2g} "
+            f"(asked for {tol:.2g}), with coarse method {self._method}. The stiffness contrast is "
+            f"{contrast:.2g}. Check that every piece is held, raise maxiter, or ask for a larger "
+            f"tolerance."
+        )
