@@ -23,7 +23,7 @@ KEY = (50.0, 51.5, 58.5, 60.0)
 CELL = 4.0  # mm, edge of a cell of the pressure mat
 ROWS, COLUMNS = 9, 26
 FIRST_CELL = (6.0, 16.0)  # mm, x and y of the centre of row 0, column 0
-PALM_FORCE = 90.0  # N, the resultant that the invented print is scaled to
+PALM_FORCE = 60.0  # N, the resultant that the invented print is scaled to
 
 
 def ring(x: float, half_y: float, half_z: float) -> np.ndarray:
@@ -139,7 +139,7 @@ def main() -> None:
     head = [
         "# Palm pressure on the grip, kPa. INVENTED for the demo: no person was measured.",
         "# Cells of 4 mm x 4 mm. Columns run along x+ from x = 6 mm, rows along y- from y = 16 mm.",
-        "# The mat lies on top (z+). The resultant is about 90 N.",
+        "# The mat lies on top (z+). The resultant is about 60 N.",
     ]
     (HERE / "palm.csv").write_text("\n".join(head + rows) + "\n", encoding="utf-8")
 
