@@ -96,7 +96,9 @@ def test_bounded_void_law_keeps_the_porous_bound_and_plain_does_not():
 
 
 @pytest.mark.parametrize("law", [LogMix(), SelfConsistent()])
-@pytest.mark.parametrize(("resins", "void"), [(1, True), (2, True), (3, True), (2, False), (3, False)])  # fmt: skip
+@pytest.mark.parametrize(
+    ("resins", "void"), [(1, True), (2, True), (3, True), (2, False), (3, False)]
+)
 def test_transpose_equals_central_differences(resins, void, law):
     rng = np.random.default_rng(resins)
     u = unknowns(resins, void, law)

@@ -62,7 +62,7 @@ def read_checkpoint(path: Path, digest: str) -> State | None:
     if not path.exists():
         return None
     try:
-        with np.load(path, allow_pickle=False) as data:
+        with path.open("rb") as handle, np.load(handle, allow_pickle=False) as data:
             head = json.loads(str(data["head"]))
             arrays = {name: data[name] for name in data.files if name != "head"}
         if head["format"] != _FORMAT:

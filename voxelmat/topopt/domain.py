@@ -8,7 +8,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from voxelmat.errors import InputError
-from voxelmat.model.design_spec import DesignSpec, TargetDeflection
+from voxelmat.model.design_spec import DesignSpec, ResinLimit, TargetDeflection
 from voxelmat.model.part import DISTANCE_STEPS, Part
 from voxelmat.topopt.outline import staircase_distance
 from voxelmat.topopt.physics import Case
@@ -42,7 +42,7 @@ def resin_numbers(part: Part, spec: DesignSpec) -> list[int]:
 
 
 def _limited(spec: DesignSpec) -> list[str]:
-    return [limit.resin for limit in spec.limits if hasattr(limit, "resin")]
+    return [limit.resin for limit in spec.limits if isinstance(limit, ResinLimit)]
 
 
 def touching(nodes: Bools) -> Bools:

@@ -230,9 +230,10 @@ def _iteration(
     gap = float("nan")
     if (n + 1) % _GAP_EVERY == 0 and problem.settled(n):
         size = abs(first * scale) if stopping.gap_of_first else max(abs(F[0]), 1e-300)
-        gap = linearised_gap(
+        bound = linearised_gap(
             state.x, problem.low, problem.high, F, dF, optimiser.multipliers
-        ) / size  # fmt: skip
+        )
+        gap = float(bound / size)
     moved = e.weight * np.abs(new - state.x) / (problem.high - problem.low)
     record = IterationRecord(
         iteration=n + 1,

@@ -9,7 +9,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from voxelmat.fea.krylov import LinearSystem
+from voxelmat.fea.system import LinearSystem
 from voxelmat.fea.sensitivity import stiffness_forms
 from voxelmat.monitor import SILENT, Monitor
 from voxelmat.topopt.unknowns import Fields

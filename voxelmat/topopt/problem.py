@@ -13,7 +13,7 @@ from voxelmat.model.design_spec import (
     DesignSpec,
     MassLimit,
     Projection,
-    TargetDeflection,
+    ResinLimit,
     VolumeLimit,
 )
 from voxelmat.topopt.loop import Evaluation
@@ -158,7 +158,7 @@ def limits_of(spec: DesignSpec, unknowns: Unknowns, voxel_volume: float) -> tupl
 
 def _check_shares(spec: DesignSpec) -> None:
     """Resin limits must leave something to fill every voxel where none may be empty."""
-    shares = {x.resin: x.fraction for x in spec.limits if not isinstance(x, VolumeLimit | MassLimit)}
+    shares = {x.resin: x.fraction for x in spec.limits if isinstance(x, ResinLimit)}
     if not spec.void and set(shares) == set(spec.resins) and sum(shares.values()) < 1:
         raise InputError(
             f"Every resin is limited and the limits sum to {number(sum(shares.values()))} of the "
@@ -194,7 +194,7 @@ def _start_fractions(spec: DesignSpec) -> Array:
     """Equal shares, those over a limit cut down to it and the rest handed to the others."""
     top = np.ones(len(spec.resins))
     for limit in spec.limits:
-        if not isinstance(limit, VolumeLimit | MassLimit) and not spec.void:
+        if isinstance(limit, ResinLimit) and not spec.void:
             top[spec.resins.index(limit.resin)] = limit.fraction
     share = np.full(len(top), 1.0 / len(top))
     for _ in range(len(top)):

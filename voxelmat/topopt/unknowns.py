@@ -143,7 +143,7 @@ class Unknowns:
 
     # ------------------------------------------------------------------ start
     def start(self, rho: float, fractions: Array) -> Array:
-        """x of a uniform design: density `rho` and fractions (K,) in every free voxel."""
+        """Unknowns of a uniform design: density `rho` and fractions (K,) in every free voxel."""
         if self._coordinates == 0:
             blend = np.empty(0)
         elif self._coordinates == 1:
