@@ -158,6 +158,11 @@ class PairCurve:
         return frozenset((self.first, self.second))
 
     @property
+    def span(self) -> float:
+        """Logarithm of the ratio of the end moduli."""
+        return math.log(self.E[-1] / self.E[0])
+
+    @property
     def indicative(self) -> bool:
         """True where no source stands behind the curve."""
         return self.source.strip().lower().startswith(INDICATIVE)

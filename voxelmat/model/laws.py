@@ -368,6 +368,8 @@ class CalibratedCurve(_ClippedLaw):
         rest = [np.log(3.0 - np.exp(e)) for e in ends]
         log_g = [np.log(shear[m]) for m in at]
         span = log_g[1] + rest[1] - log_g[0] - rest[0]
+        # As much of the curve's bend in nu as the resins have of the curve's contrast.
+        free, dfree = free * (span / curve.span), dfree * (span / curve.span)
         if self.side != "value":
             # The band is one of shear: K = E / (3 q) stays, so q goes along with E.
             g_side, dg_side, _, _ = curve.shape(t, self.side)
