@@ -9,7 +9,8 @@ from numba import njit, prange
 @njit(cache=True, nogil=True, error_model="numpy")
 def _to_triangle(tri, px, py, pz):
     """Squared distance from a point to a triangle (Ericson 2005, Real-Time Collision
-    Detection, section 5.1.5: the seven Voronoi regions of a triangle)."""
+    Detection, section 5.1.5: the seven Voronoi regions of a triangle).
+    """
     ax, ay, az = px - tri[0], py - tri[1], pz - tri[2]
     ux, uy, uz = tri[3], tri[4], tri[5]
     vx, vy, vz = tri[6], tri[7], tri[8]
@@ -55,7 +56,8 @@ def _to_box(box, px, py, pz):
 @njit(cache=True, nogil=True, error_model="numpy")
 def _nearest(boxes, triangles, leaf, px, py, pz, slack, bound, guess, stack, reach):
     """Squared distance to the nearest triangle, at most `slack` times too large and cut
-    off at `bound`, and the triangle's number; `guess` is a triangle to begin with."""
+    off at `bound`, and the triangle's number; `guess` is a triangle to begin with.
+    """
     best = guess
     least = min(bound, _to_triangle(triangles[best], px, py, pz))
     leaves = (boxes.shape[0] + 1) // 2

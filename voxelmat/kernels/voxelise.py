@@ -110,8 +110,8 @@ def _deposit(poly, n, i, nx, row):
 def _deposit_row(poly, n, nx, row, low, high):
     """Cut a piece of surface that lies in one row into columns and add each."""
     x0, x1 = _span(poly, n, 0)
-    first = max(-1, int(math.floor(min(max(x0, -1.0), nx + 1.0))))
-    last = min(nx, int(math.floor(min(max(x1, -1.0), nx + 1.0))))
+    first = max(-1, math.floor(min(max(x0, -1.0), nx + 1.0)))
+    last = min(nx, math.floor(min(max(x1, -1.0), nx + 1.0)))
     for i in range(first, last):
         n_low, n_high = _cut(poly, n, 0, i + 1.0, low, high)
         if n_low > 2:
@@ -145,8 +145,8 @@ def _cover(corner, k, nx, ny, rows, poly, strip, low, high):
     if n < 3:
         return
     y0, y1 = _span(poly, n, 1)
-    first = int(math.floor(min(max(y0, -1.0), ny + 1.0)))
-    last = int(math.floor(min(max(y1, -1.0), ny + 1.0)))
+    first = math.floor(min(max(y0, -1.0), ny + 1.0))
+    last = math.floor(min(max(y1, -1.0), ny + 1.0))
     for j in range(first, min(last, ny - 1) + 1):
         if j < last:
             n_low, n_high = _cut(poly, n, 1, j + 1.0, strip, high)
@@ -203,7 +203,7 @@ def _wind(corner, whole, step, z, nx, ny, turns):
         s2, left2 = _beside(y0, z0, y1, z1, y, z)
         if left0 == left1 and left1 == left2:
             x = (s0 * corner[0, 0] + s1 * corner[1, 0] + s2 * corner[2, 0]) / twice
-            i = int(math.ceil(min(max(x - 0.5, 0.0), float(nx))))
+            i = math.ceil(min(max(x - 0.5, 0.0), float(nx)))
             # A ray along +x enters where the normal points to -x.
             turns[j, i] += -1 if twice > 0 else 1
 

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import hashlib
 from dataclasses import dataclass, field
+from typing import TypeVar
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
@@ -11,6 +12,8 @@ from numpy.typing import ArrayLike, NDArray
 from voxelmat.errors import InputError
 
 __all__ = ["TriangleMesh"]
+
+_Number = TypeVar("_Number", np.float64, np.int32)
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -50,8 +53,8 @@ class TriangleMesh:
     digest: str = field(init=False, default="")
 
     def __post_init__(self) -> None:
-        vertices = _table(self.vertices, np.float64, "vertices")
-        faces = _table(self.faces, np.int32, "faces")
+        vertices = _table(np.array(self.vertices, dtype=np.float64, order="C"), "vertices")
+        faces = _table(np.array(self.faces, dtype=np.int32, order="C"), "faces")
         broken = np.flatnonzero(~np.isfinite(vertices).all(axis=1))
         if broken.size:
             raise InputError(
@@ -143,13 +146,10 @@ class TriangleMesh:
         )
 
 
-def _table(
-    values: ArrayLike, dtype: type[np.float64] | type[np.int32], what: str
-) -> NDArray[np.float64 | np.int32]:
-    """A private (n, 3) copy."""
-    array = np.array(values, dtype=dtype, order="C")
+def _table(array: NDArray[_Number], what: str) -> NDArray[_Number]:
+    """Check that an array has three columns."""
     if array.size == 0:
-        array = array.reshape(0, 3)
+        return array.reshape(0, 3)
     if array.ndim != 2 or array.shape[1] != 3:
         raise InputError(f"Mesh {what} form a table of three columns; got shape {array.shape}.")
     return array

@@ -3,6 +3,8 @@
 from __future__ import annotations
 
 import math
+from dataclasses import dataclass
+from functools import lru_cache
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
@@ -41,29 +43,58 @@ def winding_number(mesh: TriangleMesh, points: ArrayLike) -> NDArray[np.int32]:
     held = np.flatnonzero(((where >= low) & (where <= high)).all(axis=1))
     if not held.size:
         return turns
-    from voxelmat.kernels.winding import bin_by_column, winding_at
+    from voxelmat.kernels.winding import winding_at
 
-    extent = max(float((high - low)[1:].max()), 1e-300)
-    scale = (2**_BITS - 1) / extent
-    whole = np.rint((mesh.triangles[:, :, 1:] - low[1:]) * scale).astype(np.int64)
-    asked = np.rint((where[held, 1:] - low[1:]) * scale).astype(np.int64)
-    # About one triangle a cell on a smooth surface.
-    fine = min(10, max(0, round(math.log2(len(mesh.faces)) / 2)))
-    start, member = bin_by_column(whole, _BITS - fine, 2**fine)
+    raster = _raster(mesh)
+    asked = np.rint((where[held, 1:] - low[1:]) * raster.scale).astype(np.int64)
     found = np.empty(len(held), dtype=np.int32)
     winding_at(
-        np.ascontiguousarray(mesh.triangles[:, :, 0]),
-        whole,
-        _BITS - fine,
-        2**fine,
-        start,
-        member,
+        raster.xs,
+        raster.whole,
+        raster.bits,
+        raster.across,
+        raster.start,
+        raster.member,
         np.ascontiguousarray(where[held, 0]),
         asked,
         found,
     )
     turns[held] = found
     return turns
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class _Raster:
+    """A mesh seen along x, sorted into square cells."""
+
+    xs: NDArray[np.float64]
+    whole: NDArray[np.int64]
+    scale: float
+    bits: int
+    across: int
+    start: NDArray[np.int64]
+    member: NDArray[np.int32]
+
+
+@lru_cache(maxsize=4)  # regions ask plane by plane
+def _raster(mesh: TriangleMesh) -> _Raster:
+    from voxelmat.kernels.winding import bin_by_column
+
+    low, high = mesh.bounds
+    scale = (2**_BITS - 1) / max(float((high - low)[1:].max()), 1e-300)
+    whole = np.rint((mesh.triangles[:, :, 1:] - low[1:]) * scale).astype(np.int64)
+    # About one triangle a cell on a smooth surface.
+    fine = min(10, max(0, round(math.log2(len(mesh.faces)) / 2)))
+    start, member = bin_by_column(whole, _BITS - fine, 2**fine)
+    return _Raster(
+        xs=np.ascontiguousarray(mesh.triangles[:, :, 0]),
+        whole=whole,
+        scale=scale,
+        bits=_BITS - fine,
+        across=2**fine,
+        start=start,
+        member=member,
+    )
 
 
 def contains(mesh: TriangleMesh, points: ArrayLike) -> NDArray[np.bool_]:

@@ -113,9 +113,7 @@ def _together(group: list[TriangleMesh]) -> TriangleMesh:
     offsets = np.cumsum([0, *(len(m.vertices) for m in group)])
     return TriangleMesh(
         vertices=np.concatenate([m.vertices for m in group]),
-        faces=np.concatenate(
-            [m.faces + int(o) for m, o in zip(group, offsets[:-1], strict=True)]
-        ),
+        faces=np.concatenate([m.faces + int(o) for m, o in zip(group, offsets[:-1], strict=True)]),
         name=group[0].name,
         source=group[0].source,
         source_digest=group[0].source_digest,

@@ -175,6 +175,4 @@ def tube(
         a, b = i * segments + here, i * segments + on
         d, c = (i + 1) % 4 * segments + here, (i + 1) % 4 * segments + on
         faces += [np.stack([a, b, c], axis=1), np.stack([a, c, d], axis=1)]
-    return TriangleMesh(
-        vertices=vertices, faces=np.concatenate(faces).astype(np.int32), name=name
-    )
+    return TriangleMesh(vertices=vertices, faces=np.concatenate(faces).astype(np.int32), name=name)

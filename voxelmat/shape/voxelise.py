@@ -13,8 +13,10 @@ from voxelmat.errors import InputError
 from voxelmat.model.grid import VoxelGrid
 from voxelmat.model.mesh import TriangleMesh
 from voxelmat.monitor import SILENT, Monitor, computing
+from voxelmat.shape.seams import close_seams
 from voxelmat.shape.shells import balanced, cavities_with_parents, shells_of
 from voxelmat.shape.tree import LEAF, box_tree
+from voxelmat.shape.words import place_text, voxel_centre
 
 __all__ = ["BAND_SIXTEENTHS", "VoxelShape", "grid_for", "voxelise"]
 
@@ -128,12 +130,9 @@ def voxelise(mesh: TriangleMesh, grid: VoxelGrid, *, monitor: Monitor = SILENT) 
     least, most = int(winding.min()), int(winding.max())
     if least < 0:
         k, j, i = (int(a[0]) for a in np.nonzero(winding < 0))
-        at = [
-            round(o + (n + 0.5) * h, 3)
-            for o, n, h in zip(grid.origin, (i, j, k), grid.spacing, strict=True)
-        ]
+        at = place_text(voxel_centre(grid, (i, j, k)))
         raise InputError(
-            f"Mesh '{mesh.name}' is inside out round ({at[0]}, {at[1]}, {at[2]}) mm: its "
+            f"Mesh '{mesh.name}' is inside out round {at}: its "
             "normals point inwards there. Flip the normals, or mend it with repair allowed."
         )
     if most > 1:
@@ -172,16 +171,20 @@ def _joined(
     """Overlapping shells, each with its cavities, one by one: walls inside vanish."""
     distance = np.full(grid.shape[::-1], BAND_SIXTEENTHS, dtype=np.int8)
     total = np.zeros(grid.shape[::-1], dtype=np.uint16)
+    shared = np.zeros(grid.shape[::-1], dtype=bool)
     for number, group in enumerate(groups):
         monitor.report("voxelising", done=number, total=len(groups))
         occupancy, winding = _fill(group, grid)
         np.minimum(distance, _distance(group, grid, winding), out=distance)
+        shared |= (total > 0) & (occupancy > 0)
         total = np.minimum(total + occupancy, 255)
+    filled = total.astype(np.uint8)
+    close_seams(distance, filled, shared)
     caution = (
         f"Mesh '{mesh.name}' has {len(shells_of(mesh))} closed shells, of which some overlap; "
         "they were joined into one body."
     )
-    return _shape(grid, distance, total.astype(np.uint8), (caution,))
+    return _shape(grid, distance, filled, (caution,))
 
 
 def _fill(mesh: TriangleMesh, grid: VoxelGrid) -> tuple[NDArray[np.uint8], NDArray[np.int8]]:
@@ -212,9 +215,7 @@ def _whole_step(corners: NDArray[np.float64], grid: VoxelGrid) -> int:
     return int(2 ** min(bits, 24))
 
 
-def _distance(
-    mesh: TriangleMesh, grid: VoxelGrid, winding: NDArray[np.int8]
-) -> NDArray[np.int8]:
+def _distance(mesh: TriangleMesh, grid: VoxelGrid, winding: NDArray[np.int8]) -> NDArray[np.int8]:
     """Signed distance, [k, j, i]."""
     from voxelmat.kernels.nearest import signed_distance
 
@@ -227,9 +228,7 @@ def _distance(
     tree = box_tree(corners)
     u, v = edges[tree.order].transpose(1, 0, 2)
     products = [np.einsum("ij,ij->i", a, b) for a, b in ((u, u), (u, v), (v, v))]
-    triangles = np.concatenate(
-        [corners[tree.order, 0], u, v, np.stack(products, axis=1)], axis=1
-    )
+    triangles = np.concatenate([corners[tree.order, 0], u, v, np.stack(products, axis=1)], axis=1)
     distance = np.empty(grid.shape[::-1], dtype=np.int8)
     pitch = np.array(grid.spacing) / smallest
     with computing():
