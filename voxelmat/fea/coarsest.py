@@ -32,8 +32,8 @@ def _dense(level: Level) -> NDArray[np.float64]:
         ]
         if any(o >= n for o, n in zip(comb, level.shape[1:], strict=True)):
             continue
-        rows = np.ix_(range(3), *near)
-        columns = np.ix_([0], *(t[n] for t, n in zip(teeth, near, strict=True)))
+        rows = np.ix_(np.arange(3), *near)
+        columns = np.ix_(np.arange(1), *(t[n] for t, n in zip(teeth, near, strict=True)))
         for d in range(3):
             x[:] = 0
             x[d, comb[0] :: 3, comb[1] :: 3, comb[2] :: 3] = 1

@@ -94,7 +94,7 @@ def kernel_constants(
 def coefficients(
     lam: Floats, mu: Floats, element: str = DEFAULT
 ) -> tuple[Floats, Floats, Floats, Floats]:
-    """The four numbers that an element matrix is linear in: lam, mu, linear lambda, bilinear modulus."""
+    """What an element matrix is linear in: lam, mu, linear lambda, bilinear modulus."""
     linear, bilinear, _ = _recipe(element)
     lam, mu = np.asarray(lam, dtype=np.float64), np.asarray(mu, dtype=np.float64)
     star = 2.0 * mu * lam / (lam + 2.0 * mu + _TINY)
@@ -126,8 +126,7 @@ def _strain_rows(
             # Shear of a bending mode: component a of mode (a, v) sheared along v, and so on.
             blocks.extend((1, 1 / 3, [{(c, bit[c] | bit[v]): g[v]}]) for c in (a, b))
     for c in range(3):
-        for a in range(3):
-            blocks.append((3 if a == c else 1, 1 / 9, [{(c, 7): g[a]}]))
+        blocks.extend((3 if a == c else 1, 1 / 9, [{(c, 7): g[a]}]) for a in range(3))
     return blocks
 
 

@@ -94,7 +94,8 @@ class Stiffness:
 
     def apply(self, u: Floats, y: Floats) -> None:
         """Write K u to y; both C-contiguous, of the same float type as the moduli."""
-        apply_stiffness(u, self.lam, self.mu, y, self.constants, threads())
+        chunks = int(threads())  # type: ignore[no-untyped-call]
+        apply_stiffness(u, self.lam, self.mu, y, self.constants, chunks)
         if self.springs is not None:
             add_product(planes(self.springs), planes(u), planes(y))
 

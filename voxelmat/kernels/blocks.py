@@ -11,15 +11,15 @@ _FAST = {"reassoc", "contract", "arcp", "nsz"}
 
 
 @njit(fastmath=_FAST, error_model="numpy")
-def _corner_block(row, l, m, w, c):
+def _corner_block(row, lam, mu, w, c):
     tiny, s0, s1, s2, t0, t1, t2 = c[5], c[6], c[7], c[8], c[9], c[10], c[11]
     w0, w1, w2, w3 = w[0], w[1], w[2], w[3]
     for i in range(row.size):
-        m2 = m[i] + m[i]
-        star = m2 * l[i] / (l[i] + m2 + tiny)
-        ls = s0 * star + s1 * l[i] + s2 * m[i]
-        lb = t0 * star + t1 * l[i] + t2 * m[i]
-        row[i] += w0 * l[i] + w1 * m[i] + w2 * ls + w3 * lb
+        m2 = mu[i] + mu[i]
+        star = m2 * lam[i] / (lam[i] + m2 + tiny)
+        ls = s0 * star + s1 * lam[i] + s2 * mu[i]
+        lb = t0 * star + t1 * lam[i] + t2 * mu[i]
+        row[i] += w0 * lam[i] + w1 * mu[i] + w2 * ls + w3 * lb
 
 
 @njit(error_model="numpy")
@@ -83,7 +83,7 @@ def _inverse_plane(lam, mu, springs, c, basis, free, B, k):
 
 @njit(parallel=True, cache=True)
 def voxel_inverses(lam, mu, springs, c, basis, free, B):
-    """B <- inverse nodal blocks of voxels lam, mu [nz, ny, nx] plus springs, in double inside.
+    """Set B <- inverse nodal blocks of voxels lam, mu [nz, ny, nx] plus springs, in double inside.
 
     springs is [3, nz+1, ny+1, nx+1] or has no entries; basis[8, 6, 4] are the corner blocks that
     the four coefficients of a voxel multiply; c are the constants of the element; free[3, ...]
@@ -112,6 +112,6 @@ def _stencil_plane(S, B, k):
 
 @njit(parallel=True, cache=True)
 def stencil_inverses(S, B):
-    """B <- inverse centre blocks of the stencils S[nk, nj, 243, ni]."""
+    """Set B <- inverse centre blocks of the stencils S[nk, nj, 243, ni]."""
     for k in prange(B.shape[1]):
         _stencil_plane(S, B, k)

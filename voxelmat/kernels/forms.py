@@ -62,11 +62,10 @@ def _forms_plane(u, v, lam, mu, c, dlam, dmu, k):
             _modes(u, k, j, i, c, A)
             _modes(v, k, j, i, c, B)
             ql, qm, qs, qb = _forms(A, B, c[0], c[1], c[2], c[12])
-            l = lam[k, j, i]
             m2 = 2.0 * mu[k, j, i]
-            s = l + m2 + c[5]
+            s = lam[k, j, i] + m2 + c[5]
             sl = m2 * m2 / (s * s)  # d l*/d lam
-            sm = 2.0 * l * l / (s * s)  # d l*/d mu
+            sm = 2.0 * lam[k, j, i] ** 2 / (s * s)  # d l*/d mu
             dlam[k, j, i] = ql + (c[6] * sl + c[7]) * qs + (c[9] * sl + c[10]) * qb
             dmu[k, j, i] = qm + (c[6] * sm + c[8]) * qs + (c[9] * sm + c[11]) * qb
 

@@ -76,23 +76,23 @@ def _outgoing(T, r, i, o0, o1, o2, o3):
 
 
 @njit(inline="always", fastmath=_FAST)
-def _material(qx, qy, qz, l, m, c):
-    """Modal forces from modal displacements of a voxel with Lame constants l, m."""
+def _material(qx, qy, qz, lam, m, c):
+    """Modal forces from modal displacements of a voxel with Lame constants lam, m."""
     x_y, x_x, x_xy, x_z, x_yz, x_xz, x_xyz = qx
     y_y, y_x, y_xy, y_z, y_yz, y_xz, y_xyz = qy
     z_y, z_x, z_xy, z_z, z_yz, z_xz, z_xyz = qz
     gx, gy, gz, third, ninth, tiny, s0, s1, s2, t0, t1, t2, kept = c
     m2 = m + m
-    star = m2 * l / (l + m2 + tiny)
-    ls = s0 * star + s1 * l + s2 * m
-    lb = t0 * star + t1 * l + t2 * m
+    star = m2 * lam / (lam + m2 + tiny)
+    ls = s0 * star + s1 * lam + s2 * m
+    lb = t0 * star + t1 * lam + t2 * m
     shear = kept * m
 
     # Constant strains.
     ex = gx * x_x
     ey = gy * y_y
     ez = gz * z_z
-    p = l * (ex + ey + ez)
+    p = lam * (ex + ey + ez)
     sxy = m * (gy * x_y + gx * y_x)
     sxz = m * (gz * x_z + gx * z_x)
     syz = m * (gz * y_z + gy * z_y)

@@ -4,7 +4,6 @@ S[k, j, 9 o + 3 c + d, i] couples component c of node (i, j, k) with component d
 o = 9 (dk + 1) + 3 (dj + 1) + (di + 1).
 """
 
-import numpy as np
 from numba import njit, prange
 
 _FAST = {"reassoc", "contract", "nsz"}
@@ -42,7 +41,7 @@ def _stencil_plane(S, u, y, k):
 
 @njit(parallel=True, cache=True)
 def apply_stencil(S, u, y):
-    """y <- S u on node fields [3, nk, nj, ni]."""
+    """Set y <- S u on node fields [3, nk, nj, ni]."""
     for k in prange(u.shape[1]):
         _stencil_plane(S, u, y, k)
 

@@ -41,7 +41,7 @@ def _restrict_plane(f, c, d, K):
 
 @njit(parallel=True, cache=True)
 def restrict(f, c):
-    """c <- P^T f, with P the trilinear interpolation from the coarse nodes c to the fine f."""
+    """Set c <- P^T f, with P the trilinear interpolation from the coarse nodes c to the fine f."""
     planes = c.shape[1]
     for n in prange(3 * planes):
         _restrict_plane(f, c, n // planes, n % planes)
@@ -81,7 +81,7 @@ def _prolong_plane(c, f, B, d, k):
 
 @njit(parallel=True, cache=True)
 def prolong_add(c, f, B):
-    """f <- f + P c, and 0 where the nodal blocks B of the fine grid have no unknown."""
+    """Set f <- f + P c, and 0 where the nodal blocks B of the fine grid have no unknown."""
     planes = f.shape[1]
     for n in prange(3 * planes):
         _prolong_plane(c, f, B, n // planes, n % planes)

@@ -33,7 +33,7 @@ def _direction(p, z, free, scale, beta):
 
 @njit(parallel=True, cache=True)
 def cg_direction(p, z, free, scale, beta):
-    """p <- scale z + beta p, on free unknowns."""
+    """Set p <- scale z + beta p, on free unknowns."""
     for k in prange(p.shape[0]):
         _direction(p[k], z[k], free[k], scale, beta)
 
@@ -51,7 +51,7 @@ def _advance(x, r, p, q, free, alpha):
 
 @njit(parallel=True, cache=True)
 def cg_advance(x, r, p, q, free, alpha, sums):
-    """x <- x + alpha p and r <- r - alpha q; sums[k] = r[k] . r[k]."""
+    """Set x <- x + alpha p and r <- r - alpha q; sums[k] = r[k] . r[k]."""
     for k in prange(sums.size):
         sums[k] = _advance(x[k], r[k], p[k], q[k], free[k], alpha)
 
@@ -64,7 +64,7 @@ def _scaled(a, s, out):
 
 @njit(parallel=True, cache=True)
 def scaled_copy(a, s, out):
-    """out <- s a, in the float type of out."""
+    """Set out <- s a, in the float type of out."""
     for k in prange(a.shape[0]):
         _scaled(a[k], s, out[k])
 
@@ -77,7 +77,7 @@ def _add_product(d, x, y):
 
 @njit(parallel=True, cache=True)
 def add_product(d, x, y):
-    """y <- y + d x, entry by entry."""
+    """Set y <- y + d x, entry by entry."""
     for k in prange(y.shape[0]):
         _add_product(d[k], x[k], y[k])
 
@@ -147,7 +147,7 @@ def _residual(b, y, m, r):
 
 @njit(parallel=True, cache=True)
 def residual(b, y, B, r):
-    """r <- b - y on unknowns that exist, 0 elsewhere; r may be y."""
+    """Set r <- b - y on unknowns that exist, 0 elsewhere; r may be y."""
     for k in prange(b.shape[1]):
         for d in range(3):
             _residual(b[d, k], y[d, k], B[d, k], r[d, k])
