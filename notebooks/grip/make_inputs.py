@@ -80,13 +80,15 @@ def core_profile() -> list[tuple[float, float]]:
 
 def shaft() -> trimesh.Trimesh:
     """The bought-in steel shaft end, a plain rod."""
-    return closed_by_rings(round_rings([(0.0, SHAFT_RADIUS), (SHAFT_END, SHAFT_RADIUS)]), hollow=False)
+    ends = [(0.0, SHAFT_RADIUS), (SHAFT_END, SHAFT_RADIUS)]
+    return closed_by_rings(round_rings(ends), hollow=False)
 
 
 def core() -> trimesh.Trimesh:
     """The rigid core: a tube with a blind bore, a flange at each end and a key ring."""
     outside = [(0.0, FLANGE_RADIUS), (PAD_START, FLANGE_RADIUS), *core_profile()]
-    outside += [(PAD_END, FLANGE_RADIUS), (LENGTH - 1.0, FLANGE_RADIUS), (LENGTH, FLANGE_RADIUS - 1)]
+    outside += [(PAD_END, FLANGE_RADIUS), (LENGTH - 1.0, FLANGE_RADIUS)]
+    outside += [(LENGTH, FLANGE_RADIUS - 1.0)]
     inside = [(0.0, SHAFT_RADIUS), (SHAFT_END, SHAFT_RADIUS)]
     walk = round_rings([*reversed(inside), *outside])
     return closed_by_rings(walk, hollow=False)

@@ -1,0 +1,19 @@
+"""The made-up grip for the tests of this folder."""
+
+from __future__ import annotations
+
+import importlib.util
+from pathlib import Path
+
+import pytest
+
+_SOURCE = Path(__file__).resolve().parents[1] / "fabricated.py"
+
+
+@pytest.fixture(scope="session")
+def made_up():
+    """The module `tests/fabricated.py`."""
+    spec = importlib.util.spec_from_file_location("fabricated", _SOURCE)
+    module = importlib.util.module_from_spec(spec)
+    spec.loader.exec_module(module)
+    return module
