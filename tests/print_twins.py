@@ -152,3 +152,10 @@ def slice_layer_numpy(part, raster, resins, layer, *, support, seed):
     site = np.where(level[0] < 0, site, np.where(level[1] < 0, len(resins) + 1, 0))
     planes = [site == m + 1 for m in range(len(resins) + int(support))]
     return np.packbits(np.stack(planes), axis=2)
+
+
+def pack_words(plane):
+    """One bool plane as words of 64 sites, the first highest."""
+    packed = np.packbits(plane, axis=1)
+    padded = np.pad(packed, ((0, 0), (0, -packed.shape[1] % 8)))
+    return padded.view(">u8").astype(np.uint64)

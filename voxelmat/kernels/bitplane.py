@@ -92,73 +92,55 @@ def first_site(plane):
 
 
 @njit(cache=True, nogil=True)
-def _shifted(row, w, by, edge):
-    """Word `w` of a row whose bit x is bit x + by of `row`; |by| < 64; `edge` beyond its ends."""
+def _moved(row, w, by, edge):
+    """Word `w` of a row whose bit x is bit x + by of `row`, or of `edge` beyond its ends."""
     n = row.shape[0]
-    if by == 0:
-        return row[w]
-    if by > 0:
-        after = row[w + 1] if w + 1 < n else edge
-        return (row[w] << np.uint64(by)) | (after >> np.uint64(64 - by))
-    before = row[w - 1] if w > 0 else edge
-    return (row[w] >> np.uint64(-by)) | (before << np.uint64(64 + by))
-
-
-@njit(cache=True, nogil=True)
-def erode_rows(plane, before, after, edge, out):
-    """AND of every site with its `before` and `after` neighbours along a row.
-
-    plane, out u64 [rows, words]; before, after < 64; edge u64, all ones or 0, is what lies
-    outside. Bits past the true width must already equal the edge.
-    """
-    words = plane.shape[1]
-    for y in range(plane.shape[0]):
-        for w in range(words):
-            v = plane[y, w]
-            for s in range(-before, after + 1):
-                if v == 0:
-                    break
-                v &= _shifted(plane[y], w, s, edge)
-            out[y, w] = v
+    q, r = by >> 6, by & 63  # floor division, so that r is never negative
+    a = row[w + q] if 0 <= w + q < n else edge
+    if r == 0:
+        return a
+    b = row[w + q + 1] if 0 <= w + q + 1 < n else edge
+    return (a << np.uint64(r)) | (b >> np.uint64(64 - r))
 
 
 @njit(cache=True, nogil=True)
 def dilate_rows(plane, before, after, edge, out):
-    """OR of every site with its `before` and `after` neighbours along a row; as `erode_rows`."""
-    full = ~np.uint64(0)
+    """OR of every site with its `before` and `after` neighbours along a row.
+
+    plane, out u64 [rows, words]; edge u64, all ones or 0, is what lies outside. First forwards,
+    then backwards, each by doubling, so the work grows with the logarithm of the reach.
+    """
     words = plane.shape[1]
+    a, b = np.empty(words, np.uint64), np.empty(words, np.uint64)
     for y in range(plane.shape[0]):
-        for w in range(words):
-            v = plane[y, w]
-            for s in range(-before, after + 1):
-                if v == full:
-                    break
-                v |= _shifted(plane[y], w, s, edge)
-            out[y, w] = v
-
-
-@njit(cache=True, nogil=True)
-def erode_columns(plane, before, after, edge, out):
-    """AND of every site with its `before` and `after` neighbours across rows."""
-    rows, words = plane.shape
-    for y in range(rows):
-        for w in range(words):
-            v = plane[y, w]
-            for s in range(-before, after + 1):
-                v &= plane[y + s, w] if 0 <= y + s < rows else edge
-            out[y, w] = v
+        a[:] = plane[y]
+        for reach, sign in ((after, 1), (before, -1)):
+            span = 1
+            while span <= reach:
+                step = min(span, reach + 1 - span)
+                for w in range(words):
+                    b[w] = a[w] | _moved(a, w, sign * step, edge)
+                a, b = b, a
+                span += step
+        out[y] = a
 
 
 @njit(cache=True, nogil=True)
 def dilate_columns(plane, before, after, edge, out):
-    """OR of every site with its `before` and `after` neighbours across rows."""
+    """OR of every site with its `before` and `after` neighbours across rows; as `dilate_rows`."""
     rows, words = plane.shape
-    for y in range(rows):
-        for w in range(words):
-            v = plane[y, w]
-            for s in range(-before, after + 1):
-                v |= plane[y + s, w] if 0 <= y + s < rows else edge
-            out[y, w] = v
+    a, b = plane.copy(), np.empty_like(plane)
+    for reach, sign in ((after, 1), (before, -1)):
+        span = 1
+        while span <= reach:
+            step = sign * min(span, reach + 1 - span)
+            for y in range(rows):
+                on_plane = 0 <= y + step < rows
+                for w in range(words):
+                    b[y, w] = a[y, w] | (a[y + step, w] if on_plane else edge)
+            a, b = b, a
+            span += abs(step)
+    out[:] = a
 
 
 @njit(cache=True, nogil=True)

@@ -131,7 +131,7 @@ def _rounded(fractions: NDArray[np.float64], levels: int) -> NDArray[np.int64]:
     short = (levels - base.sum(axis=1)).astype(int)
     order = np.argsort(-(scaled - base), axis=1, kind="stable")
     place = np.argsort(order, axis=1, kind="stable")
-    return (base + (place < short[:, None])).astype(np.int64)
+    return np.asarray(base + (place < short[:, None]), dtype=np.int64)
 
 
 def stack_to_part(stack: Stack, part: Part, *, monitor: Monitor = SILENT) -> Part:

@@ -203,6 +203,13 @@ class Raster:
         x, y, z = np.array(self.rotation).T @ (tray - np.array(self.translation))
         return (float(x), float(y), float(z))
 
+    def pixel_to_part(self, layer: int, row: int, column: int) -> tuple[float, float, float]:
+        """The centre of a pixel of the images, in part coordinates, mm."""
+        site = [0.0, 0.0, 0.0]
+        for (axis, sign), at in zip(self.image_axes, (layer, row, column), strict=True):
+            site[axis] = at if sign > 0 else self.shape[axis] - 1 - at
+        return self.site_to_part((site[0], site[1], site[2]))
+
     @property
     def site_volume(self) -> Fraction:
         """Volume of one site, mm^3, exact."""

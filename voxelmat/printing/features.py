@@ -1,0 +1,119 @@
+"""What preflight says of pieces, cavities and features that are too small."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+
+from voxelmat.model.finding import Finding
+from voxelmat.model.profile import PrintProfile
+from voxelmat.printing.pieces import Piece
+from voxelmat.printing.readback import Stack
+from voxelmat.printing.scan import Facts
+from voxelmat.units import quantity
+
+__all__ = ["piece_findings", "small_findings"]
+
+_SPECK = 8  # sites; smaller pieces are counted as specks and not named one by one
+_NAMED = 3  # findings of one kind that are listed with their place; the rest is counted
+
+
+def _place(stack: Stack, piece: Piece) -> tuple[float, float, float]:
+    column, row, layer = piece.place
+    return stack.raster.pixel_to_part(layer, row, column)
+
+
+def _volume(stack: Stack, piece: Piece) -> str:
+    return quantity(piece.sites * float(stack.raster.site_volume), "mm^3")
+
+
+def piece_findings(stack: Stack, facts: Facts) -> Iterator[Finding]:
+    """Floating pieces, a part that falls into several, sealed cavities."""
+    yield from _floating(stack, facts)
+    pieces = [p for p in facts.part if p.sites >= _SPECK]
+    if len(pieces) > 1:
+        yield Finding(
+            severity="warn",
+            code="separate pieces",
+            message=f"Without support the part comes in {len(pieces)} pieces; the smallest has "
+            f"{_volume(stack, pieces[-1])}.",
+            place_mm=_place(stack, pieces[-1]),
+            remedy="Join what should be one part.",
+            value=len(pieces),
+            limit=1,
+        )
+    sealed = [p for p in facts.hollows if not p.on_tray and not p.at_side and p.sites >= _SPECK]
+    for piece in sealed[:_NAMED]:
+        yield Finding(
+            severity="warn",
+            code="sealed cavity",
+            message=f"A cavity of {_volume(stack, piece)} has no way out: support inside it stays "
+            f"there ({len(sealed)} such cavities in all).",
+            place_mm=_place(stack, piece),
+            remedy="Add a drain, or fill the cavity with a resin.",
+            value=len(sealed),
+            limit=0,
+        )
+
+
+def _floating(stack: Stack, facts: Facts) -> Iterator[Finding]:
+    """Pieces of what is printed (support included) that do not reach the tray."""
+    floating = [p for p in facts.printed if not p.on_tray and p.sites >= _SPECK]
+    machine = stack.support_policy == "machine"
+    for piece in floating[:_NAMED]:
+        what = f"A piece of {_volume(stack, piece)} ({len(floating)} such pieces in all)"
+        if machine:
+            yield Finding(
+                severity="note",
+                code="floating piece",
+                message=f"{what} is held only by the support that the machine adds.",
+                place_mm=_place(stack, piece),
+                remedy="Check that it is meant to be loose.",
+                value=len(floating),
+            )
+        else:
+            yield Finding(
+                severity="stop",
+                code="floating piece",
+                message=f"{what} is held by nothing below it.",
+                place_mm=_place(stack, piece),
+                remedy="Join it to the part, support it, or remove it.",
+                value=len(floating),
+                limit=0,
+            )
+
+
+def small_findings(stack: Stack, facts: Facts, profile: PrintProfile) -> Iterator[Finding]:
+    """Walls, struts and gaps under the profile's minimum, specks and pinholes."""
+    smallest = profile.minimum
+    for name, pieces, limit, remedy in (
+        ("wall or strut", facts.walls, min(smallest.wall, smallest.strut), "Thicken it."),
+        ("gap", facts.gaps, smallest.gap, "Widen it or close it."),
+    ):
+        large = [p for p in pieces if p.sites >= _SPECK]
+        for piece in large[:_NAMED]:
+            yield Finding(
+                severity="warn",
+                code=f"thin {name}",
+                message=f"A {name} holds no cube of {limit:g} mm, the minimum of "
+                f"'{profile.name}', over {_volume(stack, piece)} ({len(large)} such places in "
+                "all).",
+                place_mm=_place(stack, piece),
+                remedy=remedy,
+                value=len(large),
+                limit=limit,
+                unit="mm",
+            )
+    for code, seen, what in (
+        ("specks", facts.specks, "solid sites have only empty neighbours"),
+        ("pinholes", facts.holes, "empty sites have only solid neighbours"),
+    ):
+        if seen.place is not None:
+            yield Finding(
+                severity="warn",
+                code=code,
+                message=f"{seen.sites} {what} on their six sides.",
+                place_mm=stack.raster.pixel_to_part(*seen.place),
+                remedy="Check the design there; a feature may be thinner than the raster.",
+                value=seen.sites,
+                limit=0,
+            )

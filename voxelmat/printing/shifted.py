@@ -1,0 +1,66 @@
+"""Which channel's images, moved by a few sites, would fit the others again."""
+
+from __future__ import annotations
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy import ndimage
+
+from voxelmat.errors import FileFormatError
+from voxelmat.printing.readback import Stack
+
+__all__ = ["shifted_channel"]
+
+_REACH = 3  # sites that are tried either way
+_CROP = 96  # sites round the first conflict that are looked at
+
+
+def _conflict(one: NDArray[np.bool_], others: NDArray[np.bool_]) -> int:
+    """Sites claimed twice, and narrow slits that no one claims."""
+    both = one | others
+    slits = ndimage.binary_closing(both, np.ones((2 * _REACH + 1,) * 2, dtype=np.bool_)) & ~both
+    inner = slice(2 * _REACH, -2 * _REACH)
+    return int((one & others)[inner, inner].sum() + slits[inner, inner].sum())
+
+
+def shifted_channel(stack: Stack, place: tuple[int, int, int]) -> tuple[str, int, int] | None:
+    """Find the one channel whose shift explains the conflicts at `place`.
+
+    Parameters
+    ----------
+    stack : Stack
+    place : tuple of int
+        Layer, row and column of a site that two channels claim.
+
+    Returns
+    -------
+    tuple or None
+        Channel name and the rows and columns to move its images by; None where no single shift
+        of up to three sites removes nine tenths of the conflicts.
+    """
+    layer, row, column = place
+    width = stack.raster.image_shape[2]
+    rows = slice(max(0, row - _CROP), row + _CROP)
+    columns = slice(max(0, column - _CROP), column + _CROP)
+    planes = []
+    for channel in range(len(stack.channels)):
+        try:
+            bits = stack.decode(channel, layer, stack.file_bytes(channel, layer))
+        except FileFormatError:
+            return None
+        planes.append(np.unpackbits(bits, axis=1, count=width)[rows, columns].astype(bool))
+    margin = 2 * _REACH + 1
+    padded = [np.pad(p, margin) for p in planes]
+    everything = np.sum(padded, axis=0)
+    best: tuple[int, str, int, int] | None = None
+    start = _conflict(padded[0], everything - padded[0] > 0)
+    for channel, plane in enumerate(padded):
+        others = everything - plane > 0
+        for dy in range(-_REACH, _REACH + 1):
+            for dx in range(-_REACH, _REACH + 1):
+                left = _conflict(np.roll(plane, (dy, dx), axis=(0, 1)), others)
+                if (dy or dx) and (best is None or left < best[0]):
+                    best = (left, stack.channels[channel].name, dy, dx)
+    if best is None or best[0] > start / 10:
+        return None
+    return best[1:]
