@@ -3,6 +3,7 @@
 import numpy as np
 import pytest
 
+from voxelmat.fea.element import basis_matrices, coefficients
 from voxelmat.model.laws import LogMix
 from voxelmat.topopt.interpolation import VoidLaw
 from voxelmat.topopt.physics import Case
@@ -54,6 +55,49 @@ def _pad(shape, pressure):
         for a in (0, 1):
             force[2, nz, b : ny + b, a : nx + a] -= pressure / 4
     return (Case(name="press", weight=1.0, force=force, fixed=fixed),)
+
+
+class _DenseSystem:
+    """Same interface as the real solver, but an assembled matrix and a dense factorisation."""
+
+    def __init__(self, lam, mu, spacing, fixed, *, springs, element, monitor):
+        nz, ny, nx = lam.shape
+        number = np.arange(fixed.size).reshape(fixed.shape)
+        rows = np.stack([
+            number[c, a >> 2 : nz + (a >> 2), (a >> 1 & 1) : ny + (a >> 1 & 1),
+                   (a & 1) : nx + (a & 1)].ravel()
+            for a in range(8) for c in range(3)
+        ])  # fmt: skip
+        values = sum(
+            B[:, :, None] * v.ravel()
+            for B, v in zip(
+                basis_matrices(spacing, element), coefficients(lam, mu, element), strict=True
+            )
+        )
+        K = np.zeros((fixed.size, fixed.size))
+        np.add.at(K, (rows[:, None].repeat(24, 1), rows[None].repeat(24, 0)), values)
+        if springs is not None:
+            K[np.diag_indices_from(K)] += springs.ravel()
+        self._free = np.flatnonzero(~fixed.ravel())
+        self._K = K[np.ix_(self._free, self._free)]
+        self._shape = fixed.shape
+
+    def solve(self, b, *, x0=None, tol=0.0):
+        u = np.zeros(b.size)
+        u[self._free] = np.linalg.solve(self._K, b.ravel()[self._free])
+        return _Answer(u.reshape(self._shape))
+
+
+class _Answer:
+    iterations = 1
+
+    def __init__(self, u):
+        self.u = u
+
+
+@pytest.fixture
+def dense_system():
+    return _DenseSystem
 
 
 @pytest.fixture

@@ -8,6 +8,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from voxelmat.errors import InputError
+from voxelmat.fea.assemble import moduli
 from voxelmat.model.design_spec import DesignSpec, ResinLimit, TargetDeflection
 from voxelmat.model.part import DISTANCE_STEPS, Part
 from voxelmat.topopt.outline import staircase_distance
@@ -110,7 +111,7 @@ def build_choice(
     if spec.void:
         solid |= _protected(part, spec, domain, mirrors, box, empty)
         solid |= _carrying(spec, cases, domain, mirrors, box, empty, notes)
-    lam, mu = _kept_lame(part, keep)
+    lam, mu = (np.where(keep, m, 0.0) for m in moduli(part))
     choice = Choice(
         domain=domain,
         solid=solid,
@@ -150,13 +151,6 @@ def _bought_in(part: Part) -> Bools:
     bought = {m.name for m in part.resins if m.kind == "bought-in"}
     flag = np.array([any(n in bought for n, _ in b.fractions) for b in part.palette])
     return np.ascontiguousarray((flag[part.labels] & part.solid).T)
-
-
-def _kept_lame(part: Part, keep: Bools) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
-    fill = np.where(keep, part.fill.T, 0.0).astype(np.float64)
-    labels = np.ascontiguousarray(part.labels.T)
-    lam, mu = part.palette_lame()
-    return lam[labels] * fill, mu[labels] * fill
 
 
 def _box(shape: Bools) -> tuple[slice, ...]:

@@ -233,7 +233,8 @@ def _iteration(
         bound = linearised_gap(
             state.x, problem.low, problem.high, F, dF, optimiser.multipliers
         )
-        gap = float(bound / size)
+        # Both objectives are never negative, so no design can win more than all there is.
+        gap = float(min(bound, F[0]) / size)
     moved = e.weight * np.abs(new - state.x) / (problem.high - problem.low)
     record = IterationRecord(
         iteration=n + 1,

@@ -13,7 +13,7 @@ from voxelmat.model.design_result import ConstraintValue, DesignResult
 from voxelmat.model.design_spec import DesignSpec, TargetDeflection
 from voxelmat.model.loadcase import LoadCase
 from voxelmat.model.part import Part
-from voxelmat.monitor import SILENT, Monitor
+from voxelmat.monitor import SILENT, Figure, Monitor
 from voxelmat.provenance import Provenance, text_digest, utc_now
 from voxelmat.topopt.assemble import assemble
 from voxelmat.topopt.cases import as_arrays
@@ -81,10 +81,11 @@ def optimise(
         If the linear solver fails.
     """
     started = utc_now()
+    progress = _Progress(monitor, spec.iterations)
     cases = as_arrays(part, load_cases)
     choice, notes = build_choice(part, spec, cases)
     unknowns = _unknowns(part, spec, choice)
-    physics = Physics(cases, part.grid.spacing, element=element, monitor=monitor)
+    physics = Physics(cases, part.grid.spacing, element=element, monitor=progress)
     is_target = isinstance(spec.objective, TargetDeflection)
     physics.tolerance = _RUNNING["target" if is_target else "compliance"]
     problem = LayoutProblem(
@@ -103,7 +104,7 @@ def optimise(
         state or State(x=start, whole=start),
         iterations=spec.iterations,
         stopping=Stopping(gap=1e-7 if is_target else 1e-3, gap_of_first=is_target),
-        monitor=monitor,
+        monitor=progress,
         keep=None if checkpoint is None else lambda s: write_checkpoint(checkpoint, s, digest),
         keep_every=_KEEP_EVERY,
     )
@@ -116,6 +117,22 @@ def optimise(
         finished_utc=utc_now(),
     )
     return dataclasses.replace(result, provenance=provenance)
+
+
+class _Progress:
+    """Passes reports on; what the solver says becomes a repetition of the optimiser's figures.
+
+    So a long solve can be cancelled and shows that it is alive, but the stage stays the same.
+    """
+
+    def __init__(self, inner: Monitor, total: int) -> None:
+        self._inner, self._total, self._done = inner, total, 0
+        self._figures: dict[str, Figure] = {}
+
+    def report(self, stage: str, *, done: int, total: int, **figures: Figure) -> None:
+        if stage == "optimising":
+            self._total, self._done, self._figures = total, done, figures
+        self._inner.report("optimising", done=self._done, total=self._total, **self._figures)
 
 
 def _unknowns(part: Part, spec: DesignSpec, choice: Choice) -> Unknowns:
