@@ -19,7 +19,7 @@ __all__ = ["LinearSystem", "Solution", "first_method"]
 Double = NDArray[np.float64]
 
 # With the cheap coarse levels, go over to the exact ones after this many iterations.
-_CHEAP_LIMIT = 25
+_CHEAP_LIMIT = 40
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

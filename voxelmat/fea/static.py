@@ -1,0 +1,225 @@
+"""Solve one load case of a part: small displacement, linear elastic."""
+
+from __future__ import annotations
+
+from dataclasses import replace
+from typing import NamedTuple
+
+import numpy as np
+from numpy.typing import NDArray
+
+from voxelmat.fea.assemble import Assembled, assemble, moduli
+from voxelmat.fea.cautions import film_caution, record_cautions, size_cautions
+from voxelmat.fea.element import DEFAULT
+from voxelmat.fea.held import check_held
+from voxelmat.fea.operator import touched_nodes
+from voxelmat.fea.sensitivity import stiffness_forms, strain
+from voxelmat.fea.stress import largest_principal_strain, largest_rotation, stress
+from voxelmat.fea.system import LinearSystem, Solution
+from voxelmat.kernels.threads import threads
+from voxelmat.model.loadcase import LoadCase
+from voxelmat.model.part import Part
+from voxelmat.model.result import StaticResult
+from voxelmat.monitor import SILENT, Monitor
+from voxelmat.provenance import Provenance, utc_now
+
+__all__ = ["solve"]
+
+Double = NDArray[np.float64]
+Vector = tuple[float, float, float]
+
+# Applied forces and reactions that miss each other by more than this get a caution.
+_BALANCE = 1e-4
+
+
+class _Forces(NamedTuple):
+    reactions: dict[str, Vector]
+    applied: Vector
+    balance: float
+
+
+def _vector(v: Double) -> Vector:
+    return float(v[0]), float(v[1]), float(v[2])
+
+
+def _without_loose(acts: Assembled, touched: NDArray[np.bool_]) -> Assembled:
+    """Take away what acts on nodes of loose pieces."""
+    loads = []
+    for load in acts.loads:
+        keep = touched.ravel()[load.node]
+        loads.append(replace(load, node=load.node[keep], force=load.force[keep]))
+    return replace(
+        acts,
+        force=acts.force * touched,
+        held=acts.held & touched,
+        springs=None if acts.springs is None else acts.springs * touched,
+        loads=tuple(loads),
+    )
+
+
+def _loaded(acts: Assembled) -> NDArray[np.bool_]:
+    """Nodes where a load other than a body force, or a given displacement, acts."""
+    out = np.any(acts.held & (acts.prescribed != 0), axis=0)
+    for load in acts.loads:
+        if not load.follows_mass:
+            out.ravel()[load.node[np.any(load.force != 0, axis=1)]] = True
+    return np.asarray(out)
+
+
+def _reactions(system: LinearSystem, acts: Assembled, u: Double) -> _Forces:
+    """Force of each support and spring on the part, and how well all forces balance."""
+    pull = system.apply(u) - acts.force
+    found: dict[str, Vector] = {}
+    for number, name in enumerate(acts.supports):
+        mine = acts.held & (acts.owner == number)
+        found[name] = _vector(np.array([pull[d][mine[d]].sum() for d in range(3)]))
+    for name, node, stiffness in acts.ground:
+        moved = u.reshape(3, -1)[:, node].T
+        found[name] = _vector(-(stiffness * moved).sum(axis=0))
+    applied = np.sum([load.resultant for load in acts.loads] or [(0.0, 0.0, 0.0)], axis=0)
+    total = np.sum(list(found.values()) or [(0.0, 0.0, 0.0)], axis=0)
+    sizes = [np.linalg.norm(v) for v in found.values()]
+    sizes += [np.linalg.norm(load.resultant) for load in acts.loads]
+    scale = max(float(max(sizes, default=0.0)), 1e-300)
+    return _Forces(found, _vector(applied), float(np.linalg.norm(applied + total) / scale))
+
+
+def _mean_displacement(acts: Assembled, u: Double) -> dict[str, float]:
+    """Mean displacement along each load's resultant, weighted like the load, mm."""
+    out = {}
+    for load in acts.loads:
+        size = float(np.linalg.norm(load.resultant))
+        if size > 1e-9 * float(np.abs(load.force).sum()):
+            work = float((load.force * u.reshape(3, -1)[:, load.node].T).sum())
+            out[load.name] = work / size
+    return out
+
+
+def _first_guess(warm: StaticResult | None, shape: tuple[int, ...]) -> Double | None:
+    if warm is None or warm.displacement.T.shape != shape:
+        return None
+    return np.ascontiguousarray(warm.displacement.T)
+
+
+def _result(
+    part: Part,
+    case: LoadCase,
+    element: str,
+    system: LinearSystem,
+    acts: Assembled,
+    solution: Solution,
+    lam: Double,
+    mu: Double,
+    cautions: list[str],
+    started: str,
+) -> StaticResult:
+    u, grid = solution.u, part.grid
+    forces = _reactions(system, acts, u)
+    dlam, dmu = stiffness_forms(u, u, lam, mu, grid.spacing, element)
+    # Every coefficient of the element is of first degree in (lam, mu) together (Euler).
+    energy = 0.5 * (lam * dlam + mu * dmu)
+    fill = np.where(mu > 0, part.fill.T, 1.0).astype(np.float64)
+    e = strain(u, grid.spacing) * (mu > 0)
+    s = stress(e, lam / fill, mu / fill)
+    strains = e.astype(np.float32).T
+    largest = largest_principal_strain(part, strains)
+    rotation = largest_rotation(part, u)
+    notes = [*cautions, *(c for load in acts.loads for c in load.cautions)]
+    notes += size_cautions(largest, rotation)
+    notes += film_caution(part, lam, mu) + record_cautions(part, case)
+    if forces.balance > _BALANCE:
+        notes.append(f"Loads and reactions miss each other by {forces.balance:.1e} of the load.")
+    return StaticResult(
+        part=part,
+        load_case=case,
+        displacement=u.T,
+        strain=strains,
+        stress=s.astype(np.float32).T,
+        energy=float(energy.sum()),
+        energy_density=(energy / (fill * grid.voxel_volume)).astype(np.float32).T,
+        applied=forces.applied,
+        reactions=forces.reactions,
+        balance=forces.balance,
+        resultants={load.name: load.resultant for load in acts.loads},
+        load_displacement=_mean_displacement(acts, u),
+        largest_strain=largest,
+        largest_rotation=rotation,
+        iterations=solution.iterations,
+        residual=solution.residual,
+        history=solution.history,
+        element=element,
+        cautions=tuple(notes),
+        provenance=Provenance(
+            inputs={"part": part.digest},
+            threads=int(threads()),  # type: ignore[no-untyped-call]
+            started_utc=started,
+            finished_utc=utc_now(),
+        ),
+    )
+
+
+def solve(
+    part: Part,
+    load_case: LoadCase,
+    *,
+    element: str = DEFAULT,
+    tol: float = 1e-8,
+    maxiter: int = 400,
+    monitor: Monitor = SILENT,
+    warm: StaticResult | None = None,
+) -> StaticResult:
+    """Solve one load case.
+
+    Parameters
+    ----------
+    part : Part
+        A partly filled voxel takes part with its material's moduli times the filled fraction.
+    load_case : LoadCase
+    element : str
+        See `voxelmat.fea.element`; the default locks neither in bending nor at nu 0.499.
+    tol : float
+        Relative residual to reach.
+    maxiter : int
+        Most iterations.
+    monitor : Monitor
+        Told of each iteration; may cancel.
+    warm : StaticResult, optional
+        An earlier result on the same grid to start from.
+
+    Returns
+    -------
+    StaticResult
+
+    Raises
+    ------
+    InputError
+        A region without material, a part or a loaded piece that is not held (the message names
+        the motions and the place), nothing that acts.
+    ConvergenceError
+        With the residual history.
+    """
+    started = utc_now()
+    monitor.report("assembling loads", done=0, total=0)
+    lam, mu = moduli(part)
+    acts = assemble(part, load_case)
+    anchored = acts.held if acts.springs is None else acts.held | (acts.springs > 0)
+    keep, cautions = check_held(mu > 0, anchored, _loaded(acts), part.grid)
+    lam, mu = lam * keep, mu * keep
+    acts = _without_loose(acts, touched_nodes(keep))
+    system = LinearSystem(
+        lam,
+        mu,
+        part.grid.spacing,
+        acts.held,
+        springs=acts.springs,
+        element=element,
+        monitor=monitor,
+    )
+    solution = system.solve(
+        acts.force,
+        x0=_first_guess(warm, system.shape),
+        prescribed=acts.prescribed,
+        tol=tol,
+        maxiter=maxiter,
+    )
+    return _result(part, load_case, element, system, acts, solution, lam, mu, cautions, started)
