@@ -58,18 +58,11 @@ def layered_part(outline="distance", shape=(7, 6, 5), spacing=(0.31, 0.4, 0.27),
     return Part(grid=grid, resins=resins, palette=(EMPTY, *blends), labels=labels, **options)
 
 
-def _lerp(array, index, axis, rounded=False):
-    """Linear interpolation along one axis in float32, at site positions in voxels."""
-    n = array.shape[axis]
+def weights(index, n):
+    """Lower and upper voxel of each site along one axis, and the weight of the upper one."""
     index = np.clip(index, 0, n - 1)
     low = np.minimum(index.astype(int), max(n - 2, 0))
-    w = (index - low).astype(np.float32)
-    if rounded:
-        w = (w >= 0.5).astype(np.float32)
-    a = np.take(array, low, axis)
-    b = np.take(array, np.minimum(low + 1, n - 1), axis)
-    w = w.reshape([-1 if d == axis else 1 for d in range(array.ndim)])
-    return a + w * (b - a)
+    return low, np.minimum(low + 1, n - 1), (index - low).astype(np.float32)
 
 
 def nearest_printed(labels, keep):
@@ -83,75 +76,97 @@ def nearest_printed(labels, keep):
     return out
 
 
-def _cells(values, low, axes=(0, 1, 2)):
-    """The eight corners of the cell of every site."""
-    for corner in np.ndindex(2, 2, 2):
-        picks = [
-            np.minimum(lo + c, n - 1) for lo, c, n in zip(low, corner, values.shape, strict=True)
+class NumpySlicer:
+    """The slicer in whole-array NumPy: separable interpolation, planes first."""
+
+    def __init__(self, part, raster, resins, *, support, seed):
+        names = [m.name for m in part.resins]
+        self.table = part.palette_fractions()[:, [names.index(r) for r in resins]]
+        total = np.cumsum(self.table, axis=1)[:, :-1]
+        total[total > 1 - 1e-6] = 1.0
+        self.total = total.astype(np.float32)
+        self.pure = self.table.max(axis=1) == 1.0
+        self.f32 = self.table.astype(np.float32)
+        outline = raster.to_image(outline_field(part))
+        self.fields = [outline, column_support(outline)] if support else [outline]
+        self.labels = nearest_printed(raster.to_image(part.labels), part.printed_labels())
+        self.stepped = part.distance is None and part.occupancy is None
+        self.raster = raster
+        self.support = support
+        self.index = [raster.image_index(part.grid, m) for m in range(3)]
+        shape = outline.shape
+        self.on_grid = [
+            (i >= -0.5) & (i <= n - 0.5) for i, n in zip(self.index, shape, strict=True)
         ]
-        yield values[np.ix_(*picks)]
+        self.axes = [weights(i, n) for i, n in zip(self.index, shape, strict=True)]
+        start = np.add(mask_module.mask_phase(seed), raster.image_offset)
+        self.start = start[0]
+        self.rows = start[1] + np.arange(raster.image_shape[1])[:, None]
+        self.columns = start[2] + np.arange(raster.image_shape[2])[None, :]
+        self.mask = mask_module.thresholds()
 
+    def along_plane(self, plane, stepped):
+        """Rows, then columns."""
+        for axis in (1, 2):
+            low, high, w = self.axes[axis]
+            w = (w >= 0.5).astype(np.float32) if stepped else w
+            w = w[:, None] if axis == 1 else w[None, :]
+            a = np.take(plane, low, axis - 1)
+            plane = a + w * (np.take(plane, high, axis - 1) - a)
+        return plane
 
-def slice_layer_numpy(part, raster, resins, layer, *, support, seed):
-    """One printer layer by whole-array NumPy, packed bits ``[channel, row, byte]``."""
-    names = [m.name for m in part.resins]
-    table = part.palette_fractions()[:, [names.index(r) for r in resins]]
-    total = np.cumsum(table, axis=1)[:, :-1]
-    total[total > 1 - 1e-6] = 1.0
-    total = total.astype(np.float32)
-    outline = raster.to_image(outline_field(part))
-    fields = [outline, column_support(outline)]
-    labels = nearest_printed(raster.to_image(part.labels), part.printed_labels())
-    index = [raster.image_index(part.grid, m) for m in range(3)]
-    index[0] = index[0][layer : layer + 1]
-    inside = [(i >= -0.5) & (i <= n - 0.5) for i, n in zip(index, outline.shape, strict=True)]
-    stepped = part.distance is None and part.occupancy is None
+    def threshold(self, layer):
+        n = mask_module.SIDE
+        sx, sy = mask_module.SKEW
+        z = (self.start + layer + sx * (self.columns // n) + sy * (self.rows // n)) % n
+        return self.mask[z, self.rows % n, self.columns % n]
 
-    def at_sites(array):
-        for axis in range(3):
-            array = _lerp(array, index[axis], axis, stepped)
-        return array[0]
+    def hard_cells(self, lower, upper):
+        """Cells of eight voxels that hold an interface."""
+        pad = [np.pad(p, [(0, int(n == 1)) for n in p.shape], mode="edge") for p in (lower, upper)]
+        corner = np.stack(
+            [p[a : p.shape[0] - 1 + a, b : p.shape[1] - 1 + b] for p in pad
+             for a in (0, 1) for b in (0, 1)]
+        )  # fmt: skip
+        same = (corner == corner[0]).all(axis=0)
+        known = (corner > 0)[..., None]
+        f = self.f32[corner]
+        spread = np.where(known, f, -1).max(axis=0) - np.where(known, f, 2).min(axis=0)
+        return ~same & (self.pure[corner].any(axis=0) | (spread >= np.float32(0.5)).any(axis=-1))
 
-    on_grid = np.ix_(inside[1], inside[2])
-    level = []
-    for f in fields:
-        value = np.full(raster.image_shape[1:], 1.0, np.float32)
-        if inside[0][0]:
-            value[on_grid] = at_sites(f.astype(np.float32))[on_grid]
-        level.append(value)
-    clipped = [np.clip(i, 0, n - 1) for i, n in zip(index, labels.shape, strict=True)]
-    low = [
-        np.minimum(c.astype(int), max(n - 2, 0)) for c, n in zip(clipped, labels.shape, strict=True)
-    ]
-    corner = np.stack([c[0] for c in _cells(labels, low)])
-    same = (corner == corner[0]).all(axis=0)
-    pure = (table.max(axis=1) == 1.0)[corner].any(axis=0)
-    f32 = table.astype(np.float32)[corner]
-    known = (corner > 0)[..., None]
-    spread = np.where(known, f32, -1).max(axis=0) - np.where(known, f32, 2).min(axis=0)
-    hard = ~same & (pure | (spread >= np.float32(0.5)).any(axis=-1))
-    near_at = [
-        np.minimum(lo + ((c - lo).astype(np.float32) >= 0.5), n - 1)
-        for lo, c, n in zip(low, clipped, labels.shape, strict=True)
-    ]
-    near = labels[np.ix_(*near_at)][0]
-    phase = mask_module.mask_phase(seed)
-    l0, r0, c0 = np.add(phase, raster.image_offset)
-    rows = r0 + np.arange(raster.image_shape[1])[:, None]
-    columns = c0 + np.arange(raster.image_shape[2])[None, :]
-    sx, sy = mask_module.SKEW
-    n = mask_module.SIDE
-    z = (l0 + layer + sx * (columns // n) + sy * (rows // n)) % n
-    threshold = mask_module.thresholds()[z, rows % n, columns % n]
-    site = np.ones(raster.image_shape[1:], np.uint8)
-    for m in range(total.shape[1]):
-        smooth = total[:, m][labels]
-        for axis in range(3):
-            smooth = _lerp(smooth, index[axis], axis)
-        site += threshold >= np.where(hard, total[near, m], smooth[0])
-    site = np.where(level[0] < 0, site, np.where(level[1] < 0, len(resins) + 1, 0))
-    planes = [site == m + 1 for m in range(len(resins) + int(support))]
-    return np.packbits(np.stack(planes), axis=2)
+    def sites(self, layer):
+        """Material number of every pixel of one layer."""
+        rows, columns = self.raster.image_shape[1:]
+        n_resins = self.table.shape[1]
+        if not self.on_grid[0][layer]:
+            return np.zeros((rows, columns), np.uint8)
+        low, high, w = (v[layer] for v in self.axes[0])
+        wo = np.float32(w >= 0.5) if self.stepped else w
+        inside = []
+        for field in self.fields:
+            a, b = field[low].astype(np.float32), field[high].astype(np.float32)
+            level = self.along_plane(a + wo * (b - a), self.stepped)
+            inside.append((level < 0) & self.on_grid[1][:, None] & self.on_grid[2])
+        hard = self.hard_cells(self.labels[low], self.labels[high])
+        hard = hard[np.ix_(self.axes[1][0], self.axes[2][0])]
+        nearest = [np.where(v[2] >= 0.5, v[1], v[0]) for v in self.axes[1:]]
+        near = self.labels[high if w >= 0.5 else low][np.ix_(*nearest)]
+        threshold = self.threshold(layer)
+        site = np.ones((rows, columns), np.uint8)
+        for m in range(n_resins - 1):
+            a, b = self.total[self.labels[low], m], self.total[self.labels[high], m]
+            value = np.where(hard, self.total[near, m], self.along_plane(a + w * (b - a), False))
+            site += threshold >= value
+        out = np.where(inside[0], site, 0)
+        if self.support:
+            out = np.where(inside[1] & ~inside[0], n_resins + 1, out)
+        return out.astype(np.uint8)
+
+    def bits(self, layer):
+        """Packed bits of one layer."""
+        site = self.sites(layer)
+        n = self.table.shape[1] + int(self.support)
+        return np.packbits(np.stack([site == m + 1 for m in range(n)]), axis=2)
 
 
 def pack_words(plane):

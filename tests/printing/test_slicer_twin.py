@@ -4,7 +4,7 @@ import itertools
 
 import numpy as np
 import pytest
-from print_twins import layered_part, slice_layer_numpy
+from print_twins import NumpySlicer, layered_part
 
 from voxelmat.printing.halftone import Slicer, used_resins
 from voxelmat.printing.profile import load_profile
@@ -32,12 +32,12 @@ def test_bits_equal_the_numpy_twin(outline, profile, turns):
     )
     resins = used_resins(part)
     slicer = Slicer(part, raster, resins, support=True, seed=5)
+    twin = NumpySlicer(part, raster, resins, support=True, seed=5)
     n = raster.image_shape[0]
     wanted = [0, 1, n // 3, n // 2, n - 1]
     for layer, bits in enumerate(slicer.layers(0, n)):
         if layer in wanted:
-            twin = slice_layer_numpy(part, raster, resins, layer, support=True, seed=5)
-            assert np.array_equal(bits, twin)
+            assert np.array_equal(bits, twin.bits(layer))
 
 
 def test_any_split_gives_the_same_bits():

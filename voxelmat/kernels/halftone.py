@@ -119,19 +119,25 @@ def _stamp(outline, column_at, column_w, first, last, value, site):
 
 
 @njit(cache=True, nogil=True)
-def _choose_resin(smooth, near, hard, i, w, column_at, column_w, threshold, base, slope, wx, out):
+def _column_weights(hard, column_at, column_w, out):
+    """Weights along a row, rounded to 0 or 1 (the nearest voxel) where a cell is flagged."""
+    half = np.float32(0.5)
+    for x in range(column_at.shape[0]):
+        w = column_w[x]
+        near = np.float32(1.0) if w >= half else np.float32(0.0)
+        out[x] = near if hard[column_at[x]] else w
+
+
+@njit(cache=True, nogil=True)
+def _choose_resin(smooth, near, hard, i, w, column_at, wx, threshold, base, slope, out):
     """The resin number (from 1) of every site of a row, by its threshold.
 
-    Where a cell is flagged `hard` the value of the nearest voxel is taken in place of the
-    interpolated one, along columns by a weight rounded to 0 or 1.
+    Where a cell is flagged `hard` the nearest plane's and row's values replace the interpolated
+    ones; `wx` then picks the nearest column.
     """
-    half = np.float32(0.5)
-    i_near = i + 1 if w >= half else i
+    i_near = i + 1 if w >= np.float32(0.5) else i
     n_columns = smooth.shape[2]
-    for x in range(column_at.shape[0]):
-        wr = np.float32(1.0) if column_w[x] >= half else np.float32(0.0)
-        wx[x] = wr if hard[i, column_at[x]] else column_w[x]
-        out[x] = 1
+    out[:] = 1
     for f in range(smooth.shape[0]):
         for k in range(n_columns):
             a = smooth[f, i, k]
@@ -145,7 +151,7 @@ def _choose_resin(smooth, near, hard, i, w, column_at, column_w, threshold, base
                 slope[k] = near[f, i_near, k + 1] - a
         for x in range(column_at.shape[0]):
             j = column_at[x]
-            out[x] += np.uint8(threshold[x] >= base[j] + wx[x] * slope[j])
+            out[x] += np.uint8(1) if threshold[x] >= base[j] + wx[x] * slope[j] else np.uint8(0)
 
 
 @njit(cache=True, nogil=True)
@@ -185,7 +191,7 @@ def halftone_layer(
 
     Parameters: outlines f32 [1 or 2, r, c] (part, then part or support; negative inside),
     smooth and near f32 [resins - 1, r, c] cumulative fractions interpolated along layers and
-    of the nearest plane, hard u8 [r - 1, c - 1], row_at i32 and row_w, row_ow f32 [rows]
+    of the nearest plane, hard u8 [r - 1, c - 1], row_at u32 and row_w, row_ow f32 [rows]
     (weights for blends and for outlines), the same for columns, window i64 [4] first and last
     row and column that lie on the grid, mask f32 [n, n, n], start i64 [3] layer, row and
     column of the first pixel in the mask, bits u8 [channels, rows, stride] (out).
@@ -207,20 +213,21 @@ def halftone_layer(
         i = row_at[y]
         on_grid = window[0] <= y < window[1]
         has_part = on_grid and _outline_row(outlines[0], i, row_ow[y], part)
-        has_both = (
-            on_grid and outlines.shape[0] > 1 and _outline_row(outlines[1], i, row_ow[y], both)
-        )
-        if not (has_part or has_both):
+        has_support = False
+        if on_grid and outlines.shape[0] > 1 and _outline_row(outlines[1], i, row_ow[y], both):
+            for k in range(part.shape[0]):  # without support the two fields are the same
+                has_support = has_support or both[k] != part[k]
+        if not (has_part or has_support):
             bits[:, y, :] = 0
             continue
         site[:] = 0
-        if has_both:
+        if has_support:
             _stamp(both, column_at, column_ow, window[2], window[3], support, site)
         if has_part:
             _row_thresholds(mask, start[0], start[1] + y, start[2], skew_x, skew_y, threshold)
+            _column_weights(hard[i], column_at, column_w, wx)
             _choose_resin(
-                smooth, near, hard, i, row_w[y], column_at, column_w, threshold, base, slope, wx,
-                resin,
-            )  # fmt: skip
+                smooth, near, hard, i, row_w[y], column_at, wx, threshold, base, slope, resin
+            )
             _stamp(part, column_at, column_ow, window[2], window[3], resin, site)
         _pack(words, n_channels, y, bits)

@@ -44,12 +44,12 @@ def used_resins(part: Part) -> tuple[str, ...]:
 
 def _axis(
     index: NDArray[np.float64], count: int
-) -> tuple[NDArray[np.int32], NDArray[np.float32], tuple[int, int]]:
+) -> tuple[NDArray[np.uint32], NDArray[np.float32], tuple[int, int]]:
     """Lower voxel, weight of the upper one, and the first and last site on the grid."""
     on_grid = np.flatnonzero((index >= -0.5) & (index <= count - 0.5))
     bounds = (int(on_grid[0]), int(on_grid[-1]) + 1) if on_grid.size else (0, 0)
     clipped = np.clip(index, 0, count - 1)
-    lower = np.minimum(clipped.astype(np.int32), max(count - 2, 0)).astype(np.int32)
+    lower = np.minimum(clipped.astype(np.int64), max(count - 2, 0)).astype(np.uint32)
     return lower, (clipped - lower).astype(np.float32), bounds
 
 
