@@ -1,9 +1,78 @@
-"""Signed distance from voxel centres to the nearest triangle, by a bounding-box tree."""
+"""Signed distance from voxel centres to the nearest triangle, by a tree of thick discs."""
 
 import math
 
 import numpy as np
 from numba import njit, prange
+
+
+@njit(cache=True, nogil=True)
+def _fit(corners, first, last, slack, disc):
+    """Thick disc round the triangles `first` to `last`, along their mean normal."""
+    nx, ny, nz = 0.0, 0.0, 0.0
+    low = np.full(3, np.inf)
+    high = np.full(3, -np.inf)
+    for t in range(first, last):
+        a, b, c = corners[t, 0], corners[t, 1], corners[t, 2]
+        ux, uy, uz = b[0] - a[0], b[1] - a[1], b[2] - a[2]
+        vx, vy, vz = c[0] - a[0], c[1] - a[1], c[2] - a[2]
+        nx += uy * vz - uz * vy
+        ny += uz * vx - ux * vz
+        nz += ux * vy - uy * vx
+        for d in range(3):
+            low[d] = min(low[d], min(a[d], min(b[d], c[d])))
+            high[d] = max(high[d], max(a[d], max(b[d], c[d])))
+    length = math.sqrt(nx * nx + ny * ny + nz * nz)
+    if length > 0.0:
+        nx, ny, nz = nx / length, ny / length, nz / length
+    else:
+        nx, ny, nz = 1.0, 0.0, 0.0  # the two sides of a sheet: any direction will do
+    mx, my, mz = 0.5 * (low[0] + high[0]), 0.5 * (low[1] + high[1]), 0.5 * (low[2] + high[2])
+    least, most, wide = np.inf, -np.inf, 0.0
+    for t in range(first, last):
+        for p in range(3):
+            x, y, z = corners[t, p, 0] - mx, corners[t, p, 1] - my, corners[t, p, 2] - mz
+            along = x * nx + y * ny + z * nz
+            least = min(least, along)
+            most = max(most, along)
+            wide = max(wide, x * x + y * y + z * z - along * along)
+    middle = 0.5 * (least + most)
+    disc[0], disc[1], disc[2] = mx + middle * nx, my + middle * ny, mz + middle * nz
+    disc[3], disc[4], disc[5] = nx, ny, nz
+    disc[6] = 0.5 * (most - least) + slack
+    disc[7] = math.sqrt(wide) + slack
+
+
+@njit(cache=True, nogil=True)
+def fit_discs(corners, leaves, leaf, slack, discs):
+    """Thick discs round all nodes of a complete binary tree.
+
+    Parameters
+    ----------
+    corners : (m, 3, 3) float64
+        Triangle corners in tree order.
+    leaves, leaf : int
+        Leaves of the tree, triangles a leaf.
+    slack : float
+        Added to thickness and radius against rounding.
+    discs : (2 * leaves - 1, 8) float64
+        Filled; see `signed_distance`. Nodes that hold nothing are put far away.
+    """
+    m = corners.shape[0]
+    width = leaves
+    size = leaf
+    while width >= 1:
+        for n in range(width):
+            disc = discs[width - 1 + n]
+            first = n * size
+            if first < m:
+                _fit(corners, first, min(first + size, m), slack, disc)
+            else:
+                disc[:] = 0.0
+                disc[0] = 1e100
+                disc[3] = 1.0
+        width //= 2
+        size *= 2
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
@@ -46,24 +115,27 @@ def _to_triangle(tri, px, py, pz):
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
-def _to_box(box, px, py, pz):
-    dx = max(max(box[0] - px, px - box[3]), 0.0)
-    dy = max(max(box[1] - py, py - box[4]), 0.0)
-    dz = max(max(box[2] - pz, pz - box[5]), 0.0)
-    return dx * dx + dy * dy + dz * dz
+def _to_disc(disc, px, py, pz):
+    """Squared distance to a thick disc: centre, axis, half thickness, radius."""
+    x, y, z = px - disc[0], py - disc[1], pz - disc[2]
+    along = x * disc[3] + y * disc[4] + z * disc[5]
+    across = math.sqrt(max(x * x + y * y + z * z - along * along, 0.0))
+    high = max(abs(along) - disc[6], 0.0)
+    wide = max(across - disc[7], 0.0)
+    return high * high + wide * wide
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
-def _nearest(boxes, triangles, leaf, px, py, pz, slack, bound, guess, stack, reach):
+def _nearest(discs, triangles, leaf, px, py, pz, slack, bound, guess, stack, reach):
     """Squared distance to the nearest triangle, at most `slack` times too large and cut
     off at `bound`, and the triangle's number; `guess` is a triangle to begin with.
     """
     best = guess
     least = min(bound, _to_triangle(triangles[best], px, py, pz))
-    leaves = (boxes.shape[0] + 1) // 2
+    leaves = (discs.shape[0] + 1) // 2
     top = 1
     stack[0] = 0
-    reach[0] = _to_box(boxes[0], px, py, pz)
+    reach[0] = _to_disc(discs[0], px, py, pz)
     while top > 0:
         top -= 1
         if reach[top] * slack >= least:
@@ -78,8 +150,8 @@ def _nearest(boxes, triangles, leaf, px, py, pz, slack, bound, guess, stack, rea
                     best = t
             continue
         a, b = 2 * node + 1, 2 * node + 2
-        da = _to_box(boxes[a], px, py, pz)
-        db = _to_box(boxes[b], px, py, pz)
+        da = _to_disc(discs[a], px, py, pz)
+        db = _to_disc(discs[b], px, py, pz)
         if da < db:
             a, b, da, db = b, a, db, da
         if da * slack < least:
@@ -94,14 +166,14 @@ def _nearest(boxes, triangles, leaf, px, py, pz, slack, bound, guess, stack, rea
 
 
 @njit(cache=True, parallel=True, error_model="numpy")
-def signed_distance(boxes, triangles, leaf, pitch, winding, distance):
+def signed_distance(discs, triangles, leaf, pitch, winding, distance):
     """True distance in a narrow band, negative where the winding number is positive.
 
     Parameters
     ----------
-    boxes : (2 * leaves - 1, 6) float64
-        Bounding boxes of a complete binary tree, root first; leaf number l holds
-        triangles ``l * leaf`` to ``(l + 1) * leaf``.
+    discs : (2 * leaves - 1, 8) float64
+        Thick discs (centre, axis, half thickness, radius) round the triangles below each
+        node of a complete binary tree, root first; leaf number l holds triangles ``l * leaf`` to ``(l + 1) * leaf``.
     triangles : (m, 12) float64
         Corner, two edges, and the edges' products uu, uv, vv, in tree order. Lengths are
         in units of the smallest spacing, with the low corner of the grid at 0.
@@ -132,12 +204,12 @@ def signed_distance(boxes, triangles, leaf, pitch, winding, distance):
                 if far:
                     # Far off, half the distance is enough to know how far to walk.
                     least, guess = _nearest(
-                        boxes, triangles, leaf, x, y, z, 4.0, np.inf, guess, stack, reach
+                        discs, triangles, leaf, x, y, z, 4.0, np.inf, guess, stack, reach
                     )
                     least *= 0.25
                 if least < bound:
                     least, guess = _nearest(
-                        boxes, triangles, leaf, x, y, z, 1.0, bound, guess, stack, reach
+                        discs, triangles, leaf, x, y, z, 1.0, bound, guess, stack, reach
                     )
                 far = least >= bound
                 d = math.sqrt(least)

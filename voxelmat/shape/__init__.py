@@ -1,0 +1,1 @@
+"""Shapes: primitive meshes, checks and repairs, voxelisation, assemblies of bodies."""

@@ -238,7 +238,8 @@ def _cut_cavities(
         volume = (before - after) / 255 * grid.voxel_volume
         text = (
             f"Bought-in body '{body.name}' is a cavity in the print, with "
-            f"{number(body.clearance_mm)} mm of clearance; {number(volume)} mm^3 were cut from printed bodies for it."
+            f"{number(body.clearance_mm)} mm of clearance; {number(volume)} mm^3 were cut from "
+            "printed bodies for it."
         )
         events.append(
             Event(

@@ -192,7 +192,7 @@ def _crossing_defects(mesh: TriangleMesh) -> list[Defect]:
     found, looked = crossing_pairs(
         mesh.vertices,
         np.ascontiguousarray(mesh.faces[tree.order]),
-        tree.boxes,
+        tree.nodes,
         tree.order,
         LEAF,
         FLAT,

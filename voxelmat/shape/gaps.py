@@ -83,7 +83,8 @@ def find_gap(rule: GapRule, first: VoxelShape, second: VoxelShape, free: NDArray
         raise InputError(
             f"Gaps of {number(rule.width_mm)} mm between '{rule.first}' and '{rule.second}' "
             "cannot be closed at this spacing: distances are known up to "
-            f"{number(BAND_SIXTEENTHS * unit)} mm. Use a smaller width, larger voxels, or close the gap in the mesh."
+            f"{number(BAND_SIXTEENTHS * unit)} mm. Use a smaller width, larger voxels, or close "
+            "the gap in the mesh."
         )
     apart = first.distance.astype(np.int16) + second.distance
     found = np.nonzero(free & (apart < width))

@@ -1,4 +1,4 @@
-"""A tree of bounding boxes over triangles, so that kernels find near ones fast."""
+"""Trees over triangles, of boxes or of discs, so that kernels find near ones fast."""
 
 from __future__ import annotations
 
@@ -7,56 +7,67 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-__all__ = ["BoxTree", "box_tree"]
+__all__ = ["LEAF", "TriangleTree", "box_tree", "disc_tree"]
 
-LEAF = 2
+LEAF = 2  # triangles a leaf: fewer means more nodes, more means more triangle tests
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
-class BoxTree:
+class TriangleTree:
     """A complete binary tree, root first; children of node n are 2 n + 1 and 2 n + 2.
 
     Attributes
     ----------
-    boxes : (2 * leaves - 1, 6) float64
-        Low and high corner of each node; leaves that hold nothing are inside out.
+    nodes : (2 * leaves - 1, 6 or 8) float64
+        Boxes: low and high corner; nodes that hold nothing are inside out. Discs: centre,
+        axis, half thickness, radius; nodes that hold nothing are far away.
     order : (m,) int64
         Triangle numbers as they stand in the leaves, `LEAF` a leaf.
     """
 
-    boxes: NDArray[np.float64]
+    nodes: NDArray[np.float64]
     order: NDArray[np.int64]
 
 
-def _spread(bits: NDArray[np.uint64]) -> NDArray[np.uint64]:
-    """Put two zero bits between the 21 low bits of each number."""
-    x = bits
-    for shift, mask in (
-        (32, 0x1F00000000FFFF),
-        (16, 0x1F0000FF0000FF),
-        (8, 0x100F00F00F00F00F),
-        (4, 0x10C30C30C30C30C3),
-        (2, 0x1249249249249249),
-    ):
-        x = (x | (x << np.uint64(shift))) & np.uint64(mask)
-    return x
-
-
-def box_tree(corners: NDArray[np.float64]) -> BoxTree:
-    """Build the tree over (m, 3, 3) triangle corners, m at least 1.
-
-    Triangles are sorted along a Morton curve through their middles (Morton 1966, IBM
-    report), which keeps near ones together without a recursive split.
-    """
-    middle = corners.mean(axis=1)
-    low = middle.min(axis=0)
-    extent = max(float((middle.max(axis=0) - low).max()), 1e-300)
-    cell = ((middle - low) / extent * (2**21 - 1)).astype(np.uint64)
-    x, y, z = (_spread(cell[:, a]) for a in range(3))
-    order = np.argsort(x | (y << np.uint64(1)) | (z << np.uint64(2)), kind="stable")
+def _leaves(m: int) -> int:
+    """Leaves of a complete tree for m triangles: a power of two."""
     leaves = 1
-    while leaves * LEAF < len(order):
+    while leaves * LEAF < m:
         leaves *= 2
+    return leaves
+
+
+def _halved(corners: NDArray[np.float64]) -> NDArray[np.int64]:
+    """Order triangles so that each half of each run lies on one side of a cut.
+
+    Every run is cut across the longest edge of the box round its triangles' middles, at
+    the median, all runs of a level at once.
+    """
+    m = len(corners)
+    leaves = _leaves(m)
+    middle = np.full((leaves * LEAF, 3), np.inf)
+    middle[:m] = corners.mean(axis=1)
+    order = np.arange(leaves * LEAF)
+    runs = 1
+    while runs < leaves:
+        rows = order.reshape(runs, -1)
+        points = middle[rows]
+        high = np.where(np.isinf(points), -np.inf, points).max(axis=1)
+        high = np.where(np.isinf(high), 0.0, high)  # runs of padding only: any axis will do
+        longest = (high - np.minimum(points.min(axis=1), high)).argmax(axis=1)
+        key = np.take_along_axis(points, longest[:, None, None], axis=2)[:, :, 0]
+        half = rows.shape[1] // 2
+        # Padding is infinite, so it collects at the end of the order.
+        chosen = np.argpartition(key, half - 1, axis=1)
+        order = np.take_along_axis(rows, chosen, axis=1).ravel()
+        runs *= 2
+    return order[order < m]
+
+
+def box_tree(corners: NDArray[np.float64]) -> TriangleTree:
+    """Build a tree of bounding boxes over (m, 3, 3) triangle corners, m at least 1."""
+    order = _halved(corners)
+    leaves = _leaves(len(order))
     boxes = np.empty((2 * leaves - 1, 6))
     boxes[:, :3] = np.inf
     boxes[:, 3:] = -np.inf
@@ -70,4 +81,20 @@ def box_tree(corners: NDArray[np.float64]) -> BoxTree:
         boxes[width - 1 : 2 * width - 1, :3] = children[:, :, :3].min(axis=1)
         boxes[width - 1 : 2 * width - 1, 3:] = children[:, :, 3:].max(axis=1)
         width //= 2
-    return BoxTree(boxes=boxes, order=order)
+    return TriangleTree(nodes=boxes, order=order)
+
+
+def disc_tree(corners: NDArray[np.float64]) -> TriangleTree:
+    """Build a tree of thick discs over (m, 3, 3) triangle corners, m at least 1.
+
+    A disc along the surface hugs a patch of it far closer than a box does, so that a
+    search for the nearest triangle looks at few that are not.
+    """
+    from voxelmat.kernels.nearest import fit_discs
+
+    order = _halved(corners)
+    leaves = _leaves(len(order))
+    discs = np.empty((2 * leaves - 1, 8))
+    # Rounding must not put a triangle outside its disc.
+    fit_discs(corners[order], leaves, LEAF, 1e-8 * (float(np.abs(corners).max()) + 1.0), discs)
+    return TriangleTree(nodes=discs, order=order)

@@ -15,7 +15,7 @@ from voxelmat.model.mesh import TriangleMesh
 from voxelmat.monitor import SILENT, Monitor, computing
 from voxelmat.shape.seams import close_seams
 from voxelmat.shape.shells import balanced, cavities_with_parents, shells_of
-from voxelmat.shape.tree import LEAF, box_tree
+from voxelmat.shape.tree import LEAF, disc_tree
 from voxelmat.shape.words import place_text, voxel_centre
 
 __all__ = ["BAND_SIXTEENTHS", "VoxelShape", "grid_for", "voxelise"]
@@ -225,12 +225,12 @@ def _distance(mesh: TriangleMesh, grid: VoxelGrid, winding: NDArray[np.int8]) ->
     # A face without area adds nothing: its neighbours have its edges.
     wide = np.linalg.norm(np.cross(edges[:, 0], edges[:, 1]), axis=1) > 0
     corners, edges = corners[wide], edges[wide]
-    tree = box_tree(corners)
+    tree = disc_tree(corners)
     u, v = edges[tree.order].transpose(1, 0, 2)
     products = [np.einsum("ij,ij->i", a, b) for a, b in ((u, u), (u, v), (v, v))]
     triangles = np.concatenate([corners[tree.order, 0], u, v, np.stack(products, axis=1)], axis=1)
     distance = np.empty(grid.shape[::-1], dtype=np.int8)
     pitch = np.array(grid.spacing) / smallest
     with computing():
-        signed_distance(tree.boxes, triangles, LEAF, pitch, winding, distance)
+        signed_distance(tree.nodes, triangles, LEAF, pitch, winding, distance)
     return distance
