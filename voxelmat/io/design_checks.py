@@ -4,10 +4,14 @@ from __future__ import annotations
 
 import difflib
 import re
-from collections.abc import Collection, Iterable
+from collections.abc import Collection, Iterable, Mapping
+from typing import Any
+
+import numpy as np
 
 from voxelmat.errors import InputError
 from voxelmat.model.design import Design, LoadEntry, RequirementEntry, TargetEntry
+from voxelmat.model.region import parse_side
 from voxelmat.model.requirement import MEASURES
 
 __all__ = ["check_design", "resin_uses"]
@@ -188,11 +192,26 @@ def _region_uses(design: Design) -> Iterable[tuple[str, str]]:
             yield name, f"optimise.fixed[{i}].region"
 
 
-def _check_axes(settings: object, key: str) -> None:
-    axes = {str(settings[k])[0] for k in ("side", "columns_grow", "rows_grow")}  # type: ignore[index]
-    if len(axes) != 3:
+def _check_axes(settings: Mapping[str, Any], key: str) -> None:
+    """Three different axes, and a map that is not mirrored unawares."""
+    side, right, down = np.zeros((3, 3))
+    for vector, name in ((side, "side"), (right, "columns_grow"), (down, "rows_grow")):
+        axis, sense = parse_side(settings[name], name)
+        vector[axis] = sense
+    outward = float(np.cross(right, -down) @ side)
+    if outward == 0:
         raise InputError(
             "side, columns_grow and rows_grow must lie along three different axes.",
+            key=f"{key}.columns_grow",
+        )
+    seen = settings.get("seen_from", "outside")
+    if (outward > 0) != (seen == "outside"):
+        other = "inside" if seen == "outside" else "outside"
+        raise InputError(
+            f"With columns along {settings['columns_grow']} and rows along "
+            f"{settings['rows_grow']} on side {settings['side']} the map lies mirrored: it would "
+            f"show the surface as seen from {other}. Turn one of the two directions, or say "
+            f'seen_from = "{other}" if the map was taken so.',
             key=f"{key}.columns_grow",
         )
 
@@ -215,9 +234,8 @@ def _check_target(target: TargetEntry, key: str) -> None:
     if (target.deflection_mm is None) == (target.file is None):
         raise InputError("A target takes exactly one of deflection_mm and file.", key=key)
     if target.file is None:
-        for name in _MAP_KEYS:
-            if name in target.settings:
-                raise InputError("This goes with file, which is not given.", key=f"{key}.{name}")
+        for name in target.settings:
+            raise InputError("This goes with file, which is not given.", key=f"{key}.{name}")
         return
     for name in _MAP_KEYS:
         if name not in target.settings:

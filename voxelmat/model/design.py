@@ -9,6 +9,7 @@ from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any
 
+from voxelmat.errors import InputError
 from voxelmat.model.material import Constant, Material
 from voxelmat.provenance import text_digest
 from voxelmat.units import DENSITY_G_CM3
@@ -51,9 +52,14 @@ class BoughtIn:
     density_g_cm3: float | None = None
     strength_MPa: float | None = None
 
-    def material(self, library: Mapping[str, Material]) -> Material:
+    def material(self, library: Mapping[str, Material] | None = None) -> Material:
         """The library's record, or one that holds for any temperature, duration and cycles."""
         if self.E_MPa is None or self.nu is None or self.density_g_cm3 is None:
+            if library is None or self.name not in library:
+                raise InputError(
+                    f"Bought-in material '{self.name}' states no E_MPa, nu and density_g_cm3, and "
+                    "is not in the material library; give these three."
+                )
             return library[self.name]
 
         def stated(value: float, unit: str) -> Constant:

@@ -46,6 +46,8 @@ class Requirement:
         ``"mean"``, ``"max"`` or ``"min"`` over the region.
     resin : str or None
         For mass and volume: of this resin alone.
+    target : str or None
+        For the deflection error: name of the target that it is measured from.
     """
 
     name: str
@@ -57,6 +59,7 @@ class Requirement:
     component: str = "size"
     reduce: str = "max"
     resin: str | None = None
+    target: str | None = None
 
     def __post_init__(self) -> None:
         if self.measure not in MEASURES:
@@ -146,8 +149,13 @@ def judge(
     if not all(math.isfinite(v) for v in (value, low, high)):
         reasons.append("the value could not be computed")
         return Verdict(
-            requirement=requirement, value=value, low=low, high=high, status="cannot be said",
-            reasons=tuple(reasons), margin=math.nan,
+            requirement=requirement,
+            value=value,
+            low=low,
+            high=high,
+            status="cannot be said",
+            reasons=tuple(reasons),
+            margin=math.nan,
         )
     low, high = min(low, value), max(high, value)
     inside = [_margin(requirement, v) >= 0 for v in (low, value, high)]
@@ -163,6 +171,11 @@ def judge(
     else:
         status = "met" if inside[1] else "not met"
     return Verdict(
-        requirement=requirement, value=value, low=low, high=high, status=status,
-        reasons=tuple(reasons), margin=_margin(requirement, value),
+        requirement=requirement,
+        value=value,
+        low=low,
+        high=high,
+        status=status,
+        reasons=tuple(reasons),
+        margin=_margin(requirement, value),
     )
