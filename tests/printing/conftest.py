@@ -1,0 +1,6 @@
+"""Makes `tests/print_twins.py` importable from the tests of this folder."""
+
+import sys
+from pathlib import Path
+
+sys.path.insert(0, str(Path(__file__).resolve().parents[1]))
