@@ -7,6 +7,7 @@ from voxelmat.topopt.physics import Case, Physics
 from voxelmat.topopt.responses import Amount, ComplianceResponse, TargetResponse
 
 SHAPE, SPACING = (2, 3, 4), (1.0, 0.9, 1.2)
+STEPS = tuple(10.0 ** np.arange(-2, -6.1, -0.5))
 RESINS = {
     "one": ([100.0], [0.3]),
     "two": ([1.0, 2000.0], [0.49, 0.35]),
@@ -58,7 +59,7 @@ def test_gradient_through_the_real_solver(unknowns, cantilever):
     check_gradient(u, ComplianceResponse(), physics, steps=(1e-3, 1e-4, 1e-5))
 
 
-def check_gradient(u, r, physics, steps=tuple(10.0 ** np.arange(-2, -6.1, -0.5))):
+def check_gradient(u, r, physics, steps=STEPS):
     rng = np.random.default_rng(2)
     x, direction = rng.uniform(0.3, 0.7, u.n), rng.uniform(-1, 1, u.n)
 

@@ -117,7 +117,7 @@ def _outline(
     if shape_distance is None:
         shape = staircase_distance(shape_fill > 0, h, reach)
     else:
-        shape = shape_distance * unit
+        shape = shape_distance.astype(np.float64) * unit
     steps = np.rint(np.maximum(shape, void) / unit)
     distance = np.clip(steps, -_FARTHEST, _FARTHEST).astype(np.int8)
     return distance, np.rint(255.0 * fill).astype(np.uint8)

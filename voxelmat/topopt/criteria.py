@@ -50,7 +50,7 @@ class OptimalityCriteria:
         high = np.minimum(self._high, x + self._longest)
 
         def candidate(log_multiplier: float) -> Array:
-            return np.clip(x * scale * np.exp(-0.5 * log_multiplier), low, high)
+            return np.asarray(np.clip(x * scale * np.exp(-0.5 * log_multiplier), low, high))
 
         bottom, top = -200.0, 200.0
         while top - bottom > 1e-12:

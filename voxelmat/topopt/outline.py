@@ -106,8 +106,8 @@ def void_distance(
     tree = cKDTree(points)
     centres = np.argwhere(np.ones(phi.shape, bool)) * step
     k = min(_NEAREST, len(points))
-    far, which = tree.query(centres, k=k, distance_upper_bound=reach)
-    far, which = far.reshape(-1, k), which.reshape(-1, k)
+    answer = tree.query(centres, k=k, distance_upper_bound=reach)
+    far, which = (np.asarray(a).reshape(-1, k) for a in answer)
     found = np.isfinite(far[:, 0])
     rows = np.flatnonzero(found)
     near = far[rows, 0]

@@ -9,8 +9,8 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from voxelmat.fea.system import LinearSystem
 from voxelmat.fea.sensitivity import stiffness_forms
+from voxelmat.fea.system import LinearSystem
 from voxelmat.monitor import SILENT, Monitor
 from voxelmat.topopt.unknowns import Fields
 

@@ -207,7 +207,7 @@ def _start_fractions(spec: DesignSpec) -> Array:
         if not room.any():
             break
         share[room] += spare / room.sum()
-    return share / share.sum()
+    return np.asarray(share / share.sum())
 
 
 def suits_criteria(spec: DesignSpec, unknowns: Unknowns) -> bool:

@@ -52,15 +52,18 @@ def quantise(fractions: Array, weight: Array, stiffness: Array, levels: int) -> 
     clean /= clean.sum(1, keepdims=True)
     rows, back = np.unique(clean, axis=0, return_inverse=True)
     back = back.reshape(-1)
-    amount = np.bincount(back, weights=np.maximum(weight, 1e-12), minlength=len(rows))
+    weight = np.maximum(weight, 1e-12)
+    amount = np.bincount(back, weights=weight, minlength=len(rows)).astype(np.float64)
     if len(rows) <= levels:
         return Quantised(table=rows, index=back, error=float(np.abs(rows[back] - fractions).max()))
     log = np.zeros(len(rows))
     log[back] = np.log(stiffness)
     span = float(np.ptp(log))
-    features = np.column_stack([rows, log / span if span > 0 else 0 * log])
+    features: Array = np.column_stack([rows, log / span if span > 0 else 0 * log])
     pure = rows.max(1) == 1.0
-    groups = [np.flatnonzero(pure & (rows[:, m] == 1.0)) for m in range(rows.shape[1])]
+    groups: list[NDArray[np.intp]] = [
+        np.flatnonzero(pure & (rows[:, m] == 1.0)) for m in range(rows.shape[1])
+    ]
     groups = [g for g in groups if len(g)]
     mixed = np.flatnonzero(~pure)
     groups.append(mixed)
@@ -97,7 +100,7 @@ def _settled(features: Array, amount: Array, group: NDArray[np.intp]) -> NDArray
         means = np.column_stack(
             [np.bincount(group, weights=amount * f) / total for f in features.T]
         )
-        nearest = cKDTree(means).query(features)[1]
+        nearest = np.asarray(cKDTree(means).query(features)[1])
         if len(np.unique(nearest)) < len(names) or np.array_equal(nearest, group):
             break
         group = nearest
