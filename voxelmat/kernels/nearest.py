@@ -173,7 +173,8 @@ def signed_distance(discs, triangles, leaf, pitch, winding, distance):
     ----------
     discs : (2 * leaves - 1, 8) float64
         Thick discs (centre, axis, half thickness, radius) round the triangles below each
-        node of a complete binary tree, root first; leaf number l holds triangles ``l * leaf`` to ``(l + 1) * leaf``.
+        node of a complete binary tree, root first; leaf number l holds triangles
+        ``l * leaf`` to ``(l + 1) * leaf``.
     triangles : (m, 12) float64
         Corner, two edges, and the edges' products uu, uv, vv, in tree order. Lengths are
         in units of the smallest spacing, with the low corner of the grid at 0.
