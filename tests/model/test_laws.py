@@ -197,7 +197,8 @@ def test_slopes_against_central_differences(law, mix):
             up, down = evaluate(law, w + h, bulk, shear), evaluate(law, w - h, bulk, shear)
             for row, f in enumerate(("bulk", "shear")):
                 slope = getattr(value, f"d_{f}")
-                scale = np.abs(slope).max(axis=1) + 1e-3 * getattr(value, f)
+                # Slopes under 1 % of the modulus a unit fraction are judged against that.
+                scale = np.maximum(np.abs(slope).max(axis=1), 1e-2 * getattr(value, f))
                 rise = (getattr(up, f) - getattr(down, f)) / (2 * h[:, m])
                 error = np.abs(rise - slope[:, m]) / scale
                 best[row, :, m] = np.minimum(best[row, :, m], error)
@@ -223,7 +224,7 @@ def test_slopes_at_pure_resins_point_towards_the_others(law, mix):
     _, bulk, shear = mix
     count = len(bulk)
     at = evaluate(law, np.eye(count), bulk, shear)
-    step = 1e-6 * min(bulk.min(), shear.min()) / max(bulk.max(), shear.max())
+    step = 1e-5 * min(bulk.min(), shear.min()) / max(bulk.max(), shear.max())
     for a in range(count):
         for b in set(range(count)) - {a}:
             w = np.zeros((1, count))
@@ -232,9 +233,9 @@ def test_slopes_at_pure_resins_point_towards_the_others(law, mix):
             for f, x in (("bulk", bulk), ("shear", shear)):
                 rise = (getattr(near, f)[0] - x[a]) / step
                 slope = getattr(at, f"d_{f}")[a]
-                # Moduli round off at 1e-16 x[a], which the step blows up.
-                noise = 1e-15 * x[a] / step
-                assert abs(rise - (slope[b] - slope[a])) <= 1e-4 * abs(rise) + 10 * noise
+                # Moduli are good to 1e-13 (an iterated law), which the step blows up.
+                noise = 1e-13 * x[a] / step
+                assert abs(rise - (slope[b] - slope[a])) <= 1e-4 * abs(rise) + noise
 
 
 @each_law
@@ -248,7 +249,7 @@ def test_order_of_resins_changes_nothing(law, mix, data):
     b = evaluate(law, w[:, order], bulk[order], shear[order], names)
     for f in ("bulk", "shear"):
         np.testing.assert_allclose(getattr(a, f), getattr(b, f), rtol=1e-12)
-        scale = np.abs(getattr(a, f"d_{f}")).max() + 1e-300
+        scale = np.abs(getattr(a, f"d_{f}")).max() + 1e-3 * getattr(a, f).max()
         ours, theirs = getattr(a, f"d_{f}")[:, order] / scale, getattr(b, f"d_{f}") / scale
         np.testing.assert_allclose(ours, theirs, atol=1e-9)
 

@@ -29,7 +29,7 @@ SOFTNESS = 0.05
 #: A law is said to have been moved where its log modulus changed by more than this.
 NOTABLE = 1e-3
 #: Bounds closer than this (in log modulus) are treated as one value when it comes to slopes.
-NARROW = 1e-7
+NARROW = 1e-8
 
 
 @dataclass(frozen=True, slots=True)
@@ -113,10 +113,9 @@ def hashin_shtrikman(w: Floats, bulk: Floats, shear: Floats) -> tuple[Band, Band
     ):
         bottom, d_bottom = generalised_mean(w, x, medium(*low))
         top, d_top = generalised_mean(w, x, medium(*high))
-        band = Band(
-            np.log(np.clip(bottom, x_min, x_max)), np.log(np.clip(top, x_min, x_max)),
-            d_bottom, d_top,
-        )  # fmt: skip
+        log_low = np.log(np.clip(bottom, x_min, x_max))
+        log_high = np.maximum(np.log(np.clip(top, x_min, x_max)), log_low)
+        band = Band(log_low, log_high, d_bottom, d_top)
         rows = np.flatnonzero(band.high - band.low < NARROW) if sparse else np.empty(0, np.intp)
         for m in range(len(x) if rows.size else 0):
             near = w[:, rows]
@@ -189,7 +188,6 @@ def clamp(
     d_middle = logs[:, None] - middle
     d_voigt = phase[:, None] / voigt - 1.0
     gap, d_gap = band.high - band.low, band.d_high - band.d_low
-    gap = np.maximum(gap, 0.0)
 
     def half_width(room: Floats, d_room: Floats) -> tuple[Floats, Floats]:
         room = np.maximum(room, 0.0)
@@ -201,11 +199,12 @@ def clamp(
     y, dy = _floor(x, dx, band.low, band.d_low, soft, d_soft)
     soft, d_soft = half_width(np.log(voigt) - middle, d_voigt - d_middle)
     y, dy = _floor(-y, -dy, -band.high, -band.d_high, soft, d_soft)
-    y, dy = np.clip(-y, band.low, np.maximum(band.low, band.high)), -dy
+    y, dy = np.clip(-y, band.low, band.high), -dy
     rows = np.flatnonzero(gap < NARROW)
     if rows.size:
         near = Band(band.low[rows], band.high[rows], band.d_low[:, rows], band.d_high[:, rows])
-        dy[:, rows] = _cone(w[:, rows], phase, x[rows] - near.low, dx[:, rows], near)
+        cone = _cone(w[:, rows], phase, x[rows] - near.low, dx[:, rows], near)
+        dy[:, rows] = cone - np.einsum("kn,kn->n", w[:, rows], cone)
     return y, dy, np.abs(y - x) > NOTABLE
 
 

@@ -140,6 +140,7 @@ class BlendLaw:
             part = np.maximum(w[rows].T, 0.0)
             total = part.sum(axis=0)
             part = part / total
+            pure = part.max(axis=0) == 1.0
             bands = hashin_shtrikman(part, k, g)
             logs, lost = self._logs(_Mixture(part, k, g, bands, resins))
             uncalibrated[rows] = lost
@@ -153,8 +154,8 @@ class BlendLaw:
                 high[f][rows] = np.clip(np.exp(band.high), least, most)
                 value = np.exp(y)
                 if self._inside:
-                    value = np.clip(value, low[f][rows], high[f][rows])
-                one[f][rows] = np.clip(value, least, most)
+                    value = np.clip(np.clip(value, low[f][rows], high[f][rows]), least, most)
+                one[f][rows] = np.where(pure, least, value)
                 slope[f][rows] = (dy * (value / total)).T
         return LawValue(
             bulk=one["bulk"], shear=one["shear"], d_bulk=slope["bulk"], d_shear=slope["shear"],
