@@ -15,12 +15,12 @@ _REACH = 3  # sites that are tried either way
 _CROP = 96  # sites round the first conflict that are looked at
 
 
-def _conflict(one: NDArray[np.bool_], others: NDArray[np.bool_]) -> int:
-    """Sites claimed twice, and narrow slits that no one claims."""
-    both = one | others
+def _conflict(claims: NDArray[np.int64]) -> int:
+    """Sites claimed more than once, and narrow slits that no one claims."""
+    both = claims > 0
     slits = ndimage.binary_closing(both, np.ones((2 * _REACH + 1,) * 2, dtype=np.bool_)) & ~both
     inner = slice(2 * _REACH, -2 * _REACH)
-    return int((one & others)[inner, inner].sum() + slits[inner, inner].sum())
+    return int((claims > 1)[inner, inner].sum() + slits[inner, inner].sum())
 
 
 def shifted_channel(stack: Stack, place: tuple[int, int, int]) -> tuple[str, int, int] | None:
@@ -50,15 +50,15 @@ def shifted_channel(stack: Stack, place: tuple[int, int, int]) -> tuple[str, int
             return None
         planes.append(np.unpackbits(bits, axis=1, count=width)[rows, columns].astype(bool))
     margin = 2 * _REACH + 1
-    padded = [np.pad(p, margin) for p in planes]
+    padded = [np.pad(p, margin).astype(np.int64) for p in planes]
     everything = np.sum(padded, axis=0)
     best: tuple[int, str, int, int] | None = None
-    start = _conflict(padded[0], everything - padded[0] > 0)
+    start = _conflict(everything)
     for channel, plane in enumerate(padded):
-        others = everything - plane > 0
+        others = everything - plane
         for dy in range(-_REACH, _REACH + 1):
             for dx in range(-_REACH, _REACH + 1):
-                left = _conflict(np.roll(plane, (dy, dx), axis=(0, 1)), others)
+                left = _conflict(others + np.roll(plane, (dy, dx), axis=(0, 1)))
                 if (dy or dx) and (best is None or left < best[0]):
                     best = (left, stack.channels[channel].name, dy, dx)
     if best is None or best[0] > start / 10:
