@@ -104,8 +104,8 @@ def test_moduli_times_slopes_are_the_form(element):
 def test_centre_strain_of_a_linear_field():
     shape = (2, 3, 4)
     G = np.array([[1.0, 2.0, 3.0], [0.5, -1.0, 0.25], [4.0, 1.5, -2.0]])  # du_a/dx_b
-    z, y, x = np.meshgrid(*(h * np.arange(n + 1) for h, n in zip(SPACING[::-1], shape, strict=True)),
-                          indexing="ij")  # fmt: skip
+    axes = [h * np.arange(n + 1) for h, n in zip(SPACING[::-1], shape, strict=True)]
+    z, y, x = np.meshgrid(*axes, indexing="ij")
     u = np.einsum("ab,b...->a...", G, np.stack([x, y, z]))
     out = np.empty((6, *shape))
     centre_strain(u, 1 / np.array(SPACING), out)
@@ -131,9 +131,8 @@ def test_inverse_blocks(element):
     free = (rng.random(shape) < 0.7).astype(np.uint8)
     springs = rng.random(shape)
     B = np.empty((6, *shape[1:]), np.float32)
-    voxel_inverses(
-        lam, mu, springs, kernel_constants(SPACING, element), corner_blocks(SPACING, element), free, B
-    )  # fmt: skip
+    c, corner = kernel_constants(SPACING, element), corner_blocks(SPACING, element)
+    voxel_inverses(lam, mu, springs, c, corner, free, B)
     for at in np.ndindex(shape[1:]):
         block = np.diag(springs[(slice(None), *at)])
         for d in range(3):

@@ -26,6 +26,11 @@ class Level:
         self.B: Single = np.zeros((6, *shape[1:]), dtype=np.float32)
         self.steps: list[tuple[np.float32, np.float32]] = []
 
+    @property
+    def nodes(self) -> int:
+        """Nodes of the grid."""
+        return int(np.prod(self.shape[1:]))
+
     def allocate(self) -> None:
         """Make the work vectors."""
         self.x, self.b, self.d, self.y = (np.zeros(self.shape, np.float32) for _ in range(4))

@@ -19,6 +19,7 @@ from voxelmat.fea.element import Spacing
 from voxelmat.fea.galerkin import add_springs, galerkin_stencils, held_springs
 from voxelmat.fea.levels import Level, StencilLevel, VoxelLevel
 from voxelmat.fea.operator import planes
+from voxelmat.kernels.threads import crew
 from voxelmat.kernels.transfer import prolong_add, restrict
 from voxelmat.kernels.vector import residual, scaled_copy, smooth_first
 
@@ -156,8 +157,10 @@ class Multigrid:
         for level in self.levels:
             level.allocate()
         for level in self.levels[:-1]:
-            level.choose_steps(degree, ratio)
-        self.coarsest = Coarsest(self.levels[-1])
+            with crew(level.nodes):
+                level.choose_steps(degree, ratio)
+        with crew(self.levels[-1].nodes):
+            self.coarsest = Coarsest(self.levels[-1])
 
     def _cycle(self, n: int) -> None:
         level = self.levels[n]
@@ -165,13 +168,16 @@ class Multigrid:
             self.coarsest.solve(level.b, level.x)
             return
         below = self.levels[n + 1]
-        level.smooth(from_zero=True)
-        level.product(level.x, level.y)
-        residual(level.flat(level.b), level.flat(level.y), level.flat(level.B), level.flat(level.y))
-        restrict(level.y, below.b)
+        with crew(level.nodes):
+            level.smooth(from_zero=True)
+            level.product(level.x, level.y)
+            flat = level.flat
+            residual(flat(level.b), flat(level.y), flat(level.B), flat(level.y))
+            restrict(level.y, below.b)
         self._cycle(n + 1)
-        prolong_add(below.x, level.x, level.B)
-        level.smooth(from_zero=False)
+        with crew(level.nodes):
+            prolong_add(below.x, level.x, level.B)
+            level.smooth(from_zero=False)
 
     def apply(self, r: Double, scale: float) -> Single:
         """One V-cycle for ``scale * r``."""

@@ -12,6 +12,7 @@ from voxelmat.fea.element import DEFAULT, Spacing
 from voxelmat.fea.krylov import Iteration, conjugate_gradients
 from voxelmat.fea.multigrid import METHODS, Grid, Preconditioner, make_preconditioner
 from voxelmat.fea.operator import Stiffness, check_moduli, dot, touched_nodes
+from voxelmat.kernels.threads import crew
 from voxelmat.monitor import SILENT, Monitor, computing
 
 __all__ = ["LinearSystem", "Solution", "first_method"]
@@ -155,7 +156,7 @@ class LinearSystem:
         if u.shape != self.shape:
             raise InputError(f"u must have shape {self.shape}; got {u.shape}.")
         out = np.empty_like(u)
-        with computing():
+        with computing(), crew(u[0].size):
             self.operator.apply(u, out)
         return out
 
@@ -213,7 +214,7 @@ class LinearSystem:
         """
         if b.shape != self.shape or not np.all(np.isfinite(b)):
             raise InputError(f"The load must be finite and of shape {self.shape}; got {b.shape}.")
-        with computing():
+        with computing(), crew(b[0].size):
             x, given = self._start(x0, prescribed)
             force = b * self.free
             norm = float(np.sqrt(dot(force, force)))
