@@ -1,0 +1,159 @@
+"""What each shell command does: an exit code, plain data for JSON, and text."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from pathlib import Path
+from typing import Any
+
+from voxelmat.errors import FileFormatError, InputError
+from voxelmat.io.design import load_design
+from voxelmat.io.materials import load_library
+from voxelmat.io.store import load_part
+from voxelmat.material.table import material_rows
+from voxelmat.model.part import Part
+from voxelmat.monitor import Monitor
+from voxelmat.units import number
+
+__all__ = ["materials", "optimise", "preflight", "report", "run", "solve", "stack"]
+
+Answer = tuple[int, dict[str, Any], str]
+
+# The stages load the compiled solver and slicer; a command that needs neither starts without.
+
+
+def _stages(design: Path, out: Path, stages: Sequence[str] | None, monitor: Monitor) -> Answer:
+    from voxelmat.workflow.answer import summary_lines
+    from voxelmat.workflow.pipeline import STAGES
+    from voxelmat.workflow.pipeline import run as run_stages
+
+    result = run_stages(design, out, stages=STAGES if stages is None else stages, monitor=monitor)
+    lines = summary_lines(
+        result.data, stack=result.stack, report=result.report, folder=result.folder
+    )
+    return result.exit_code, result.as_dict(), "\n".join(lines)
+
+
+def run(*, design: Path, out: Path, monitor: Monitor) -> Answer:
+    """Everything."""
+    return _stages(design, out, None, monitor)
+
+
+def solve(*, design: Path, out: Path, monitor: Monitor) -> Answer:
+    """The load cases on the part as it is laid out (and optimised, if the design asks)."""
+    return _stages(design, out, ("optimise", "solve"), monitor)
+
+
+def optimise(*, design: Path, out: Path, monitor: Monitor) -> Answer:
+    """The optimisation, and the load cases on what it made."""
+    if load_design(design).optimise is None:
+        raise InputError(
+            "The design has no [optimise] table, so there is nothing to optimise.",
+            file=str(design),
+            key="optimise",
+        )
+    return _stages(design, out, ("optimise", "solve"), monitor)
+
+
+def stack(*, design: Path, out: Path, monitor: Monitor) -> Answer:
+    """The stacks, written, read back and checked."""
+    if load_design(design).printing is None:
+        raise InputError(
+            "The design has no [print] table, so there is nothing to print on. Name a profile.",
+            file=str(design),
+            key="print",
+        )
+    return _stages(design, out, ("optimise", "stack"), monitor)
+
+
+def report(*, design: Path, out: Path, monitor: Monitor) -> Answer:
+    """The report of what a run left; its optimisation and stack are taken as they are."""
+    if not (out / "result.json").is_file():
+        raise InputError(
+            f"There is no finished run in '{out}'. Call 'voxelmat run {design} --out {out}' first."
+        )
+    return _stages(design, out, None, monitor)
+
+
+def preflight(*, stack: Path, design: Path | None, out: Path, monitor: Monitor) -> Answer:
+    """The checks on a stack that is on disk."""
+    from voxelmat.printing.preflight import preflight as check_stack
+    from voxelmat.printing.readback import read_stack
+
+    part: Part | None = None
+    if design is not None:
+        plan = load_design(design)
+        law = load_library([plan.file(f) for f in plan.material_files]).law(plan.law)
+        kept = out / "part.npz"
+        if not kept.is_file():
+            raise FileFormatError(
+                f"'{kept}' is missing: give with --out the folder that the design's run wrote to."
+            )
+        part = load_part(kept, law)
+    opened = read_stack(stack)
+    findings = check_stack(opened, part=part, monitor=monitor)
+    data = {
+        "stack": str(stack),
+        "findings": [
+            {
+                "severity": f.severity,
+                "code": f.code,
+                "message": f.message,
+                "place_mm": list(f.place_mm) if f.place_mm is not None else None,
+                "remedy": f.remedy,
+            }
+            for f in findings
+        ],
+    }
+    lines = [f"{opened!r}"]
+    for f in findings:
+        place = "" if f.place_mm is None else f" at {', '.join(map(number, f.place_mm))} mm"
+        lines.append(f"  {f.severity}: {f.message}{place}")
+        if f.remedy:
+            lines.append(f"        {f.remedy}")
+    if not findings:
+        lines.append("  nothing found")
+    bad = any(f.severity == "stop" for f in findings)
+    return (1 if bad else 0), data, "\n".join(lines)
+
+
+_COLUMNS = (
+    ("name", "name"),
+    ("kind", "kind"),
+    ("shore_A", "Shore A"),
+    ("E_MPa", "E, MPa"),
+    ("E_low_MPa", "low"),
+    ("E_high_MPa", "high"),
+    ("nu", "nu"),
+    ("density_g_cm3", "g/cm3"),
+    ("strength_MPa", "strength, MPa"),
+    ("elongation_percent", "elongation, %"),
+    ("source", "source of E"),
+)
+
+
+def materials(*, file: Sequence[Path], monitor: Monitor) -> Answer:
+    """The resin library as a table."""
+    del monitor  # nothing takes long here
+    library = load_library(file)
+    rows = material_rows(library)
+    texts = [[head for _, head in _COLUMNS]]
+    for row in rows:
+        cells = []
+        for key, _ in _COLUMNS:
+            value = row[key]
+            cells.append(
+                "-" if value is None else value if isinstance(value, str) else number(value, 4)
+            )
+        texts.append(cells)
+    width = [max(len(line[c]) for line in texts) for c in range(len(_COLUMNS))]
+    right = {c for c, (key, _) in enumerate(_COLUMNS) if key not in ("name", "kind", "source")}
+    lines = [
+        "  ".join(
+            cell.rjust(width[c]) if c in right else cell.ljust(width[c])
+            for c, cell in enumerate(line)
+        ).rstrip()
+        for line in texts
+    ]
+    lines += [f"note: {note}" for note in library.notes]
+    return 0, {"materials": rows, "notes": list(library.notes)}, "\n".join(lines)

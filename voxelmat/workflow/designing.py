@@ -1,0 +1,152 @@
+"""From the [optimise] table of a design to what the optimiser is asked for, and the run of it."""
+
+from __future__ import annotations
+
+from pathlib import Path
+
+import numpy as np
+from numpy.typing import NDArray
+
+from voxelmat.errors import InputError
+from voxelmat.model.design import LimitEntry, OptimiseEntry
+from voxelmat.model.design_result import DesignResult
+from voxelmat.model.design_spec import (
+    Compliance,
+    DesignSpec,
+    Limit,
+    MassLimit,
+    Objective,
+    Projection,
+    ResinLimit,
+    TargetDeflection,
+    VolumeLimit,
+)
+from voxelmat.monitor import SILENT, Monitor
+from voxelmat.topopt.optimise import optimise
+from voxelmat.workflow.build import Built
+
+__all__ = ["design_spec", "optimised"]
+
+Bools = NDArray[np.bool_]
+
+
+def optimised(
+    built: Built, *, checkpoint: Path | None = None, monitor: Monitor = SILENT
+) -> DesignResult:
+    """Run the optimisation that the design asks for.
+
+    Parameters
+    ----------
+    built : Built
+    checkpoint : Path, optional
+        Where the run keeps its state, and goes on from it.
+    monitor : Monitor
+
+    Raises
+    ------
+    InputError
+        If the design has no ``[optimise]`` table, or it contradicts itself.
+    """
+    spec = design_spec(built)
+    try:
+        return optimise(
+            built.part, built.load_cases, spec, monitor=monitor, checkpoint=checkpoint
+        )
+    except InputError as error:
+        if error.file is not None:
+            raise
+        raise InputError(error.message, file=built.design.file_name, key="optimise") from error
+
+
+def design_spec(built: Built) -> DesignSpec:
+    """What the optimiser is asked for, on this part."""
+    entry = built.design.optimise
+    if entry is None:
+        raise InputError(
+            "The design has no [optimise] table, so there is nothing to optimise. Add one, or use "
+            "'solve' and 'stack', which take the part as it is laid out.",
+            file=built.design.file_name,
+            key="optimise",
+        )
+    standard = Projection()
+    sharpness = (0.0,) if not entry.void and entry.sharpness is None else entry.sharpness
+    given = {
+        "penalty": entry.penalty,
+        "iterations": entry.iterations,
+        "levels": entry.levels,
+        "move": entry.move,
+        "method": entry.method,
+        "void_law": entry.void_law,
+        "protected_depth": entry.protected_depth_mm,
+    }
+    try:
+        return DesignSpec(
+            resins=entry.resins,
+            objective=_objective(built, entry),
+            filter_radius=entry.filter_radius_mm,
+            limits=tuple(_limit(limit) for limit in entry.limits),
+            void=entry.void,
+            projection=Projection(
+                sharpness=standard.sharpness if sharpness is None else sharpness,
+                every=entry.sharpness_every or standard.every,
+            ),
+            fixed_resin=_fixed(built, entry),
+            solid=_union(built, entry.solid),
+            empty=_union(built, entry.empty),
+            keep=_kept(built, entry),
+            protected=_union(built, entry.protected),
+            symmetry=entry.symmetry,
+            seed=built.design.seed,
+            **{k: v for k, v in given.items() if v is not None},  # type: ignore[arg-type]
+        )
+    except InputError as error:
+        if error.file is not None:
+            raise
+        raise InputError(error.message, file=built.design.file_name, key="optimise") from error
+
+
+def _objective(built: Built, entry: OptimiseEntry) -> Objective:
+    if entry.objective == "compliance" or entry.target is None:
+        return Compliance()
+    target = built.resolved.targets[entry.target]
+    return TargetDeflection(
+        nodes=target.nodes,
+        target=target.deflection,
+        direction=target.direction,
+        load_case=target.load_case,
+    )
+
+
+def _limit(entry: LimitEntry) -> Limit:
+    if entry.kind == "mass":
+        return MassLimit(mass=entry.at_most * 1e-6)
+    if entry.kind == "resin":
+        return ResinLimit(resin=entry.resin or "", fraction=entry.at_most)
+    return VolumeLimit(fraction=entry.at_most)
+
+
+def _union(built: Built, names: tuple[str, ...]) -> Bools | None:
+    """Voxels of any of the regions; None where none is named."""
+    found = None
+    for name in names:
+        voxels = built.regions[name].voxels(built.part)
+        found = voxels if found is None else found | voxels
+    return found
+
+
+def _fixed(built: Built, entry: OptimiseEntry) -> dict[str, Bools]:
+    masks: dict[str, Bools] = {}
+    for region, resin in entry.fixed:
+        voxels = built.regions[region].voxels(built.part)
+        masks[resin] = voxels | masks[resin] if resin in masks else voxels
+    return masks
+
+
+def _kept(built: Built, entry: OptimiseEntry) -> Bools | None:
+    """What is not designed: named to be kept, or outside the regions that are designed."""
+    kept = _union(built, entry.keep)
+    inside = _union(built, entry.design_in)
+    if inside is None:
+        return kept
+    outside = built.part.solid & ~inside
+    return outside if kept is None else outside | kept

@@ -1,0 +1,282 @@
+"""The whole job in order: part, optimise, solve, stack, read back, check, solve again, report."""
+
+from __future__ import annotations
+
+import time
+from collections.abc import Iterator, Sequence
+from contextlib import contextmanager
+from dataclasses import dataclass, field, replace
+from pathlib import Path
+from typing import Any
+
+from filelock import FileLock, Timeout
+
+from voxelmat.errors import Cancelled, InputError, ResourceError
+from voxelmat.fea.static import solve
+from voxelmat.io.atomic import explain_os_error, write_json
+from voxelmat.io.store import save_part
+from voxelmat.model.design import Design
+from voxelmat.model.design_result import DesignResult
+from voxelmat.model.finding import Finding
+from voxelmat.model.part import Part
+from voxelmat.model.requirement import Verdict
+from voxelmat.model.result import StaticResult
+from voxelmat.monitor import SILENT, Monitor
+from voxelmat.printing.estimate import estimate
+from voxelmat.printing.preflight import preflight
+from voxelmat.printing.readback import Stack, read_stack
+from voxelmat.printing.stack import write_stack
+from voxelmat.provenance import Provenance, utc_now
+from voxelmat.workflow.answer import as_dict, exit_code, joined_verdicts
+from voxelmat.workflow.build import Built, build
+from voxelmat.workflow.designing import optimised
+from voxelmat.workflow.printed import as_printed
+from voxelmat.workflow.report import write_report
+from voxelmat.workflow.report_data import RunData
+from voxelmat.workflow.summary import summarise
+from voxelmat.workflow.verdicts import safety_factors, verdicts
+
+__all__ = ["STAGES", "RunResult", "run"]
+
+#: The stages of a run, in order. "as printed" needs "stack", "report" needs none.
+STAGES = ("optimise", "solve", "stack", "as printed", "report")
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class RunResult:
+    """What a run made.
+
+    Attributes
+    ----------
+    data : RunData
+        Everything that the report shows.
+    built : Built
+    folder : Path
+    stack : Stack or None
+    report : Path or None
+    """
+
+    data: RunData
+    built: Built
+    folder: Path
+    stack: Stack | None = None
+    report: Path | None = None
+
+    @property
+    def part(self) -> Part:
+        """The part as designed."""
+        return self.data.part
+
+    @property
+    def verdicts(self) -> tuple[Verdict, ...]:
+        """One a requirement."""
+        return self.data.verdicts
+
+    @property
+    def exit_code(self) -> int:
+        """0 met, 1 not met or do not print, 2 cannot be said."""
+        return exit_code(self.data)
+
+    def as_dict(self) -> dict[str, Any]:
+        """Plain data for JSON."""
+        return as_dict(self.data, stack=self.stack, report=self.report, folder=self.folder)
+
+
+@dataclass(slots=True)
+class _Clock:
+    """Seconds a stage."""
+
+    seconds: dict[str, float] = field(default_factory=dict)
+
+    @contextmanager
+    def stage(self, name: str) -> Iterator[None]:
+        start = time.perf_counter()
+        try:
+            yield
+        finally:
+            self.seconds[name] = self.seconds.get(name, 0.0) + time.perf_counter() - start
+
+
+@contextmanager
+def _held(folder: Path) -> Iterator[None]:
+    """Make the folder and keep other runs out of it."""
+    try:
+        folder.mkdir(parents=True, exist_ok=True)
+        lock = FileLock(folder / ".voxelmat.lock", timeout=0)
+        lock.acquire()
+    except Timeout:
+        raise ResourceError(
+            f"Another run is writing to '{folder}'. Wait for it to end, or choose another --out."
+        ) from None
+    except OSError as error:
+        raise explain_os_error(folder, error) from error
+    try:
+        yield
+    finally:
+        lock.release()
+
+
+def run(
+    design: Design | Built | str | Path,
+    folder: str | Path = "out",
+    *,
+    stages: Sequence[str] = STAGES,
+    monitor: Monitor = SILENT,
+) -> RunResult:
+    """Do the whole job, or some of its stages.
+
+    Parameters
+    ----------
+    design : Design, Built or path
+    folder : str or Path
+        Results go here. A run that was interrupted goes on from what it finds here: the
+        optimiser from its last kept design, the stack from its last whole layer.
+    stages : sequence of str
+        Some of `STAGES`; the order does not matter.
+    monitor : Monitor
+
+    Returns
+    -------
+    RunResult
+
+    Raises
+    ------
+    InputError, FileFormatError
+        With file and key where the design is at fault.
+    ResourceError
+        If the folder cannot be used.
+    ConvergenceError
+        If a linear solve fails.
+    Cancelled
+        From the monitor; what was finished is kept in `folder`.
+    """
+    unknown = [s for s in stages if s not in STAGES]
+    if unknown:
+        raise InputError(f"There is no stage {unknown[0]!r}; use some of {', '.join(STAGES)}.")
+    folder = Path(folder)
+    with _held(folder):
+        return _Run(folder, frozenset(stages), monitor).all(design)
+
+
+class _Run:
+    """One run: carries the folder, the monitor and the clock from stage to stage."""
+
+    def __init__(self, folder: Path, stages: frozenset[str], monitor: Monitor) -> None:
+        self.folder = folder
+        self.stages = stages
+        self.monitor = monitor
+        self.clock = _Clock()
+        self.started = utc_now()
+
+    def all(self, design: Design | Built | str | Path) -> RunResult:
+        with self.clock.stage("part"):
+            built = design if isinstance(design, Built) else build(design, monitor=self.monitor)
+        found = self._designed(built)
+        part = built.part if found is None else found.part
+        save_part(part, self.folder / "part.npz")
+        with self.clock.stage("solve"):
+            results = self._solved(built, part, "solve")
+        stack, findings = self._stacked(built, part)
+        again: dict[str, StaticResult] = {}
+        if stack is not None and "as printed" in self.stages:
+            with self.clock.stage("as printed"):
+                printed = as_printed(stack, part, monitor=self.monitor)
+                again = self._solved(built, printed, "as printed")
+        with self.clock.stage("verdicts"):
+            data = self._data(built, part, found, results, again, stack, findings)
+        report = None
+        if "report" in self.stages:
+            with self.clock.stage("report"):
+                report = write_report(data, self.folder / "report.html", monitor=self.monitor)
+        result = RunResult(
+            data=data, built=built, folder=self.folder, stack=stack, report=report
+        )
+        write_json(self.folder / "result.json", result.as_dict())
+        return result
+
+    def _designed(self, built: Built) -> DesignResult | None:
+        """The optimised design, taken up from its checkpoint where there is one."""
+        if built.design.optimise is None or "optimise" not in self.stages:
+            return None
+        with self.clock.stage("optimise"):
+            found = optimised(
+                built, checkpoint=self.folder / "optimise.npz", monitor=self.monitor
+            )
+        if found.cancelled:
+            raise Cancelled(f"Stopped by the user while optimising: {found.reason}")
+        return found
+
+    def _solved(self, built: Built, part: Part, stage: str) -> dict[str, StaticResult]:
+        if stage not in self.stages:
+            return {}
+        cases = built.load_cases
+        results = {}
+        for n, case in enumerate(cases):
+            self.monitor.report(f"load cases, {stage}", done=n, total=len(cases), case=case.name)
+            results[case.name] = solve(part, case, monitor=self.monitor)
+        self.monitor.report(f"load cases, {stage}", done=len(cases), total=len(cases))
+        return results
+
+    def _stacked(self, built: Built, part: Part) -> tuple[Stack | None, list[Finding]]:
+        printing = built.design.printing
+        if "stack" not in self.stages or printing is None or built.profile is None:
+            return None, []
+        folder = self.folder / "stack"
+        with self.clock.stage("stack"):
+            write_stack(
+                part,
+                built.profile,
+                folder,
+                orientation=printing.orientation,
+                position=printing.position_mm,
+                support=printing.support,
+                seed=built.design.seed,
+                monitor=self.monitor,
+                inputs=built.design.inputs,
+            )
+            stack = read_stack(folder)
+        with self.clock.stage("preflight"):
+            findings = preflight(stack, part=part, monitor=self.monitor)
+        return stack, findings
+
+    def _data(
+        self,
+        built: Built,
+        part: Part,
+        found: DesignResult | None,
+        results: dict[str, StaticResult],
+        again: dict[str, StaticResult],
+        stack: Stack | None,
+        findings: list[Finding],
+    ) -> RunData:
+        answers: tuple[Verdict, ...] = ()
+        if results:
+            answers = tuple(verdicts(built.resolved, part, results))
+            if again:
+                printed = next(iter(again.values())).part
+                answers = joined_verdicts(answers, verdicts(built.resolved, printed, again))
+        cautions = [*built.cautions, *(c for r in results.values() for c in r.cautions)]
+        notes = [*built.notes, *(found.notes if found is not None else ())]
+        data = RunData(
+            name=built.design.name,
+            part=part,
+            question=built.design.note,
+            results=results,
+            as_printed=again,
+            verdicts=answers,
+            safety={name: safety_factors(r) for name, r in results.items()},
+            optimised=found,
+            stack=summarise(stack, estimate(stack)) if stack is not None else None,
+            findings=tuple(findings),
+            checked=stack is not None,
+            cautions=tuple(dict.fromkeys(cautions)),
+            notes=tuple(dict.fromkeys(notes)),
+            provenance=Provenance(
+                inputs=built.design.inputs,
+                seed=built.design.seed,
+                started_utc=self.started,
+                finished_utc=utc_now(),
+            ),
+            timings=dict(self.clock.seconds),
+        )
+        return replace(data, timings=dict(self.clock.seconds))

@@ -1,0 +1,80 @@
+"""A written stack in numbers and a few pictures, for reports and answers."""
+
+from __future__ import annotations
+
+import numpy as np
+
+from voxelmat.printing.estimate import PrintEstimate
+from voxelmat.printing.readback import Stack
+from voxelmat.units import number
+from voxelmat.workflow.report_data import LayerPicture, StackSummary
+
+__all__ = ["summarise"]
+
+#: Pictures of layers at these shares of the height.
+_HEIGHTS = (0.25, 0.5, 0.75)
+#: Longest side of a layer's picture, pixels: beyond it every n-th site is drawn.
+_PIXELS = 1400
+
+_SUPPORT = {
+    "columns": "columns below overhangs, laid by us through the support channel",
+    "machine": "the machine adds it; none is in the stack",
+    "none": "none",
+}
+
+
+def _layer_picture(stack: Stack, layer: int) -> LayerPicture:
+    """One layer as seen from above, y up, thinned to what a screen can show."""
+    site = stack.layer(layer)
+    step = max(1, -(-max(site.shape) // _PIXELS))
+    pitch = stack.pitch_mm
+    note = "" if step == 1 else f"every {step}th site is drawn"
+    return LayerPicture(
+        number=layer,
+        height_mm=(layer + 0.5) * pitch[2],
+        codes=np.ascontiguousarray(site[::step, ::step].T[::-1]),
+        size_mm=(site.shape[0] * pitch[0], site.shape[1] * pitch[1]),
+        note=note,
+    )
+
+
+def _in_words(figures: PrintEstimate) -> dict[str, str]:
+    """The estimate as the report prints it."""
+    low, high = (t / 3600 for t in figures.time_s)
+    rows = {
+        "layers": f"{figures.layers}",
+        "passes a layer": f"{figures.passes}",
+        "time, h (warm-up and cleaning left out)": f"{number(low)} to {number(high)}",
+    }
+    for resin, mass in figures.mass_t.items():
+        rows[f"{resin}, g"] = number(mass * 1e6)
+    if figures.support_mm3 is not None:
+        rows["support, cm³"] = number(figures.support_mm3 / 1000)
+    else:
+        rows["support, cm³"] = "not known: the machine adds it"
+    if figures.invented:
+        rows["basis"] = "an invented profile: no real printer's time"
+    return rows
+
+
+def summarise(stack: Stack, figures: PrintEstimate | None = None) -> StackSummary:
+    """Gather what a reader wants to know of a stack."""
+    turns = stack.manifest["part"].get("orientation") or []
+    method = stack.manifest["method"]
+    size = [n * p for n, p in zip(stack.shape, stack.pitch_mm, strict=True)]
+    layers = sorted({int(share * (stack.n_layers - 1)) for share in _HEIGHTS})
+    return StackSummary(
+        folder=stack.folder.name,
+        pitch_mm=stack.pitch_mm,
+        sites=stack.shape,
+        size_mm=(size[0], size[1], size[2]),
+        resins=tuple(c.resin for c in stack.channels),
+        channels=tuple(c.name for c in stack.channels),
+        volumes_mm3=tuple(c.volume_mm3 for c in stack.channels),
+        designed_mm3=tuple(c.designed_mm3 for c in stack.channels),
+        support=_SUPPORT[stack.support_policy],
+        orientation=", then ".join(turns) if turns else "as drawn, z up",
+        halftone=f"{method['halftone']}; seed {number(method['seed'])}",
+        layers=tuple(_layer_picture(stack, k) for k in layers),
+        estimate={} if figures is None else _in_words(figures),
+    )
