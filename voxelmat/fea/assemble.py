@@ -61,7 +61,7 @@ def moduli(part: Part) -> tuple[Double, Double]:
     labels = np.ascontiguousarray(part.labels.T)
     lam, mu = lam[labels], mu[labels]
     if part.occupancy is not None:
-        fill = part.occupancy.T.astype(np.float64) / 255.0
+        fill = np.where(part.solid, part.occupancy, 0).T / 255.0
         lam *= fill
         mu *= fill
     return np.ascontiguousarray(lam), np.ascontiguousarray(mu)

@@ -18,10 +18,14 @@ from voxelmat.model.laws import BlendLaw, LogMix
 from voxelmat.model.material import Material
 from voxelmat.provenance import text_digest
 
-__all__ = ["DISTANCE_STEPS", "Part"]
+__all__ = ["DISTANCE_STEPS", "SOLID_FROM", "Part"]
 
 #: Signed distance is kept in 1/16 of the smallest spacing.
 DISTANCE_STEPS = 16
+#: Least occupancy (of 255) with which a voxel takes part in a solve. A feather of a voxel has next
+#: to no stiffness, so that a load on it would read as a large displacement of the part. The limit
+#: of one tenth is ours.
+SOLID_FROM = 26
 
 
 def _owned(array: object, dtype: type, shape: tuple[int, int, int], name: str) -> NDArray[Any]:
@@ -124,17 +128,17 @@ class Part:
     # ------------------------------------------------------------------ what it is made of
     @property
     def solid(self) -> NDArray[np.bool_]:
-        """Voxels that hold material, ``[i, j, k]``."""
+        """Voxels that hold enough material to be solved, ``[i, j, k]``; see `SOLID_FROM`."""
         if self.occupancy is not None:
-            return (self.labels > 0) & (self.occupancy > 0)
+            return (self.labels > 0) & (self.occupancy >= SOLID_FROM)
         return self.labels > 0
 
     @property
     def fill(self) -> NDArray[np.float32]:
-        """Solid fraction of each voxel, 0 to 1."""
+        """Solid fraction of each voxel that is solved, 0 to 1; 0 in the others."""
         if self.occupancy is None:
             return np.asarray(self.labels > 0, dtype=np.float32)
-        return np.where(self.labels > 0, self.occupancy, 0) / np.float32(255)
+        return np.where(self.solid, self.occupancy, 0) / np.float32(255)
 
     @property
     def outline(self) -> str:

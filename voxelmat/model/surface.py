@@ -1,4 +1,9 @@
-"""Exposed voxel faces of a part, with the true normal and the projected area of each."""
+"""Exposed voxel faces of a part, with the true normal and the projected area of each.
+
+Where voxels are partly filled, the surface is that of the voxels that are at least half full
+(and of fuller ones than all their neighbours, so that a thin wall keeps one). A load then acts
+on voxels that are about as stiff as the material; the thinner rest outside still adds its share.
+"""
 
 from __future__ import annotations
 
@@ -9,7 +14,7 @@ from numpy.typing import NDArray
 
 from voxelmat.model.part import DISTANCE_STEPS, Part
 
-__all__ = ["Faces", "exposed_faces", "visible_from"]
+__all__ = ["Faces", "carriers", "exposed_faces", "visible_from"]
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -88,9 +93,25 @@ def _slopes(part: Part) -> list[NDArray[np.float32]]:
     return grads
 
 
-def exposed_faces(part: Part) -> Faces:
-    """All faces of solid voxels that border empty space or the edge of the grid."""
+def carriers(part: Part) -> NDArray[np.bool_]:
+    """Solid voxels that bound the surface: half full or more, or fuller than all around them."""
     solid = part.solid
+    if part.occupancy is None:
+        return solid
+    fill = np.where(solid, part.occupancy, 0)
+    padded = np.pad(fill, 1)
+    most = np.zeros_like(fill)
+    for axis in range(3):
+        for start in (slice(0, -2), slice(2, None)):
+            shift = [slice(1, -1)] * 3
+            shift[axis] = start
+            np.maximum(most, padded[tuple(shift)], out=most)
+    return np.asarray(solid & ((fill >= 128) | (fill >= most)))
+
+
+def exposed_faces(part: Part) -> Faces:
+    """All faces of surface voxels that border thinner ones, empty space or the grid's edge."""
+    solid = carriers(part)
     padded = np.pad(solid, 1)
     spacing = part.grid.spacing
     centres = part.grid.centres()
@@ -147,7 +168,7 @@ def visible_from(part: Part, faces: Faces, axis: int, side: int) -> NDArray[np.b
     ndarray of bool, shape (n,)
         A face is seen where the empty voxel before it has nothing between it and the viewer.
     """
-    solid = np.pad(part.solid, 1)
+    solid = np.pad(carriers(part), 1)
     order = np.flip(solid, axis=axis) if side > 0 else solid
     hidden = np.logical_or.accumulate(order, axis=axis)
     if side > 0:
