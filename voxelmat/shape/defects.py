@@ -221,7 +221,7 @@ def _crossing_defects(mesh: TriangleMesh) -> list[Defect]:
         )
         if found == _LISTED:
             text = text.replace("{n} pairs", "at least {n} pairs")
-        place = mesh.triangles[some[0]].reshape(-1, 3).mean(axis=0)
+        place = _meeting_point(*mesh.triangles[some[0]])
         defects.append(_defect(kind, len(some), place, kind == "crossing", text))
     if looked == _PAIRS:
         text = (
@@ -231,3 +231,19 @@ def _crossing_defects(mesh: TriangleMesh) -> list[Defect]:
         place = mesh.triangles[0].mean(axis=0)
         defects.append(_defect("unchecked", looked, place, False, text))
     return defects
+
+
+def _meeting_point(f: NDArray[np.float64], g: NDArray[np.float64]) -> NDArray[np.float64]:
+    """A point where an edge of one triangle passes through the other."""
+    for one, two in ((f, g), (g, f)):
+        normal = np.cross(two[1] - two[0], two[2] - two[0])
+        for p, q in zip(one, np.roll(one, -1, axis=0), strict=True):
+            before, after = (p - two[0]) @ normal, (q - two[0]) @ normal
+            if before * after >= 0:
+                continue
+            point: NDArray[np.float64] = p + before / (before - after) * (q - p)
+            sides = np.cross(np.roll(two, -1, axis=0) - two, point - two) @ normal
+            if (sides >= 0).all():
+                return point
+    middle: NDArray[np.float64] = np.concatenate([f, g]).mean(axis=0)
+    return middle

@@ -168,19 +168,19 @@ def _outwards(mesh: TriangleMesh) -> tuple[TriangleMesh, str]:
     """Turn closed shells that are inside out, unless they are cavities."""
     if edges_of(mesh.faces).turn.any():
         return mesh, ""
+    told = []
+    if mesh.volume < 0:
+        # Everything at once, so that cavities stay cavities.
+        mesh = replace(mesh, faces=mesh.faces[:, ::-1])
+        told.append("The mesh was inside out and was turned.")
     numbers = shells_of(mesh)
-    shells = [part_of(mesh, faces) for faces in numbers]
-    outer = [s for s in shells if s.volume > 0]
-    inverted = [n for n, s in zip(numbers, shells, strict=True) if s.volume < 0]
-    if not outer and len(inverted) > 1:
-        # All inside out: turn everything, so that cavities stay cavities.
-        faces = mesh.faces[:, ::-1]
-        return replace(mesh, faces=faces), "The whole mesh was inside out and was turned."
-    lonely = [n for n in inverted if not is_cavity(part_of(mesh, n), outer)]
-    if not lonely:
-        return mesh, ""
-    faces = mesh.faces.copy()
-    for n in lonely:
-        faces[n] = faces[n][:, ::-1]
-    many = "A closed shell was" if len(lonely) == 1 else f"{len(lonely)} closed shells were"
-    return replace(mesh, faces=faces), f"{many} inside out and turned."
+    shells = {n: part_of(mesh, faces) for n, faces in enumerate(numbers)}
+    outer = [s for s in shells.values() if s.volume > 0]
+    lonely = [n for n, s in shells.items() if s.volume < 0 and not is_cavity(s, outer)]
+    if lonely:
+        faces = mesh.faces.copy()
+        for n in lonely:
+            faces[numbers[n]] = faces[numbers[n]][:, ::-1]
+        mesh = replace(mesh, faces=faces)
+        told.append(f"Closed shells that were inside out and were turned: {len(lonely)}.")
+    return mesh, " ".join(told)
