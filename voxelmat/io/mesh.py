@@ -134,6 +134,11 @@ def _load(file: Path, kind: str) -> list[tuple[str, NDArray[np.float64], NDArray
                     continue
                 vertices = np.asarray(part.vertices, dtype=np.float64)
                 faces = np.asarray(part.faces, dtype=np.int64)
+                if not (np.isfinite(vertices).all() and np.isfinite(matrix).all()):
+                    raise FileFormatError(
+                        f"{file.name} holds vertices that are not finite numbers. Export the "
+                        "mesh again."
+                    )
                 if np.linalg.det(matrix[:3, :3]) < 0:
                     faces = faces[:, ::-1]
                 name = str(node if kind == "3mf" else key)
