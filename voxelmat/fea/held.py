@@ -72,7 +72,7 @@ def _subspace_names(kind: str, basis: Double) -> list[str]:
     if left:
         u = np.linalg.svd(rest)[0][:, :left]
         for column in u.T:
-            v = column * np.sign(column[np.argmax(np.abs(column))])
+            v = np.round(column * np.sign(column[np.argmax(np.abs(column))]), 2) + 0.0
             names.append(f"{kind} {preposition} the direction ({v[0]:.2f}, {v[1]:.2f}, {v[2]:.2f})")
     return names
 

@@ -27,6 +27,9 @@ Double = NDArray[np.float64]
 
 # A map whose force on the part is further than this from what was expected gets a caution; ours.
 _EXPECTED = 0.05
+# Smallest component of a true normal along the map's axis: walls steeper than this (78 degrees)
+# are loaded sideways as if they had that slope.
+_STEEPEST = 0.2
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -163,36 +166,50 @@ def _pressure(part: Part, load: Pressure, name: str) -> NodalLoad:
 
 
 def _map_pressure(part: Part, load: PressureMap, faces: Faces) -> Double:
-    """Mean pressure over each face, sampled at least as finely as the map's cells."""
+    """Mean pressure over each face that looks to the map, sampled as finely as its cells."""
     axis, _ = parse_side(load.side, load.region.name)
     h = part.grid.spacing
-    others = [a for a in range(3) if a != axis]
-    count = min(8, max(1, math.ceil(max(h[a] for a in others) / min(load.cell))))
+    a, b = (d for d in range(3) if d != axis)
+    count = min(8, max(1, math.ceil(max(h[a], h[b]) / min(load.cell))))
     steps = (np.arange(count) + 0.5) / count - 0.5
     total = np.zeros(len(faces))
     for s in steps:
         for t in steps:
             points = faces.centre.copy()
-            points[:, others[0]] += np.where(faces.axis == others[0], 0.0, s * h[others[0]])
-            points[:, others[1]] += np.where(faces.axis == others[1], 0.0, t * h[others[1]])
+            points[:, a] += s * h[a]
+            points[:, b] += t * h[b]
             total += load.at(points)
     return total / count**2
+
+
+def _map_traction(part: Part, load: PressureMap, faces: Faces) -> Double:
+    """Force on each face: pressure times the true surface over which it lies.
+
+    Every point of the map lies over one face that looks to it; the true surface there has the
+    vector area ``A n / n_axis``, so the part along the axis is exact and the rest follows the
+    slope of the true normal.
+    """
+    axis, side = parse_side(load.side, load.region.name)
+    normal = faces.normal.copy()
+    normal[:, axis] = np.maximum(side * normal[:, axis], _STEEPEST)
+    direction = normal / normal[:, axis, None]
+    direction[:, axis] = side
+    if load.acts == "along":
+        direction[:, [d for d in range(3) if d != axis]] = 0.0
+    return -(_map_pressure(part, load, faces) * faces.area)[:, None] * direction
 
 
 def _pressure_map(part: Part, load: PressureMap, name: str) -> NodalLoad:
     axis, side = parse_side(load.side, load.region.name)
     faces = load.region.faces(part)
+    faces = faces.select((faces.axis == axis) & (faces.side == side))
     faces = faces.select(visible_from(part, faces, axis, side)) if len(faces) else faces
     if not len(faces):
         raise InputError(
             f"{name[0].upper()}{name[1:]}: nothing of region '{load.region.name}' can be seen from "
             f"{load.side}. Check the region and the side."
         )
-    traction = -_map_pressure(part, load, faces)[:, None] * faces.vector_area
-    if load.acts == "along":
-        others = [a for a in range(3) if a != axis]
-        traction[:, others] = 0.0
-    node, force = _shared(_corners_of_faces(part, faces), traction)
+    node, force = _shared(_corners_of_faces(part, faces), _map_traction(part, load, faces))
     pressed = -side * float(force[:, axis].sum())
     if not np.any(force):
         raise InputError(
