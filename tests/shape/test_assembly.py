@@ -91,7 +91,7 @@ def test_a_cut_block_is_the_whole_block(at, low):
     one, two = assemble([whole], grid), assemble(parts, grid)
     off = two.occupancy.astype(int) - one.occupancy
     assert np.abs(off).max() <= 1
-    # Beside the wall between them the joint outline stays where it was, to a tenth of a voxel.
+    # Beside the wall between them the joint outline stays where it was, within a quarter voxel.
     near = (np.abs(one.distance) <= 8) & (np.abs(two.distance) < 16)
     assert np.abs(one.distance.astype(int) - two.distance)[near].max() <= 4
 

@@ -175,10 +175,30 @@ def test_open_and_inside_out_meshes_are_refused():
         voxelise(inside_out(ball), grid)
 
 
-def test_mesh_far_from_its_grid_is_told():
-    block = box((1, 1, 1), (1e9, 0, 0))
+def test_mesh_of_another_unit_is_told():
+    block = box((1e7, 1e7, 1e7), (-5e6, -5e6, -5e6))
     with pytest.raises(InputError, match="Check the unit"):
         voxelise(block, VoxelGrid(shape=(4, 4, 4), spacing=(1e-3, 1e-3, 1e-3)))
+
+
+def test_shells_that_touch_leave_no_wall():
+    # The common wall lies on voxel centres, where the distance to it is 0.
+    two = joined(box((4.25, 4, 4)), box((3.75, 4, 4), (4.25, 0, 0)))
+    shape = voxelise(two, grid_for(two, 0.5))
+    assert (shape.occupancy[1:17, 1:9, 1:9] == 255).all()
+    assert (shape.distance[1:17, 1:9, 1:9] <= -8).all()
+    assert "touch" in shape.cautions[0]
+    apart = joined(box((4, 4, 4)), box((4, 4, 4), (5, 0, 0)))
+    assert voxelise(apart, grid_for(apart, 0.5)).cautions == ()
+
+
+def test_a_flat_sheet_has_no_volume():
+    sheet = TriangleMesh(vertices=np.eye(3), faces=[[0, 1, 2], [0, 2, 1]])
+    shape = voxelise(sheet, grid_for(sheet, 0.25))
+    assert not shape.occupancy.any()
+    line = TriangleMesh(vertices=np.diag([1.0, 0, 0]), faces=[[0, 1, 2], [0, 2, 1]])
+    with pytest.raises(InputError, match="no face with an area"):
+        voxelise(line, VoxelGrid(shape=(2, 2, 2), spacing=(1, 1, 1)))
 
 
 def test_cancelling_stops_the_work():

@@ -12,7 +12,7 @@ from scipy.sparse.csgraph import connected_components
 from voxelmat.model.mesh import TriangleMesh
 from voxelmat.shape.inside import contains
 
-__all__ = ["Edges", "balanced", "cavities_with_parents", "edges_of", "part_of", "shells_of"]
+__all__ = ["Edges", "boxes_meet", "edges_of", "part_of", "shells_of", "with_cavities"]
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -59,14 +59,12 @@ def edges_of(faces: NDArray[np.int32]) -> Edges:
     )
 
 
-def balanced(mesh: TriangleMesh) -> bool:
-    """Whether every edge is run as often one way as the other, so that an inside exists."""
-    return not edges_of(mesh.faces).turn.any()
+def shells_of(mesh: TriangleMesh, edges: Edges | None = None) -> list[NDArray[np.int64]]:
+    """Face numbers of each set of faces that hang together by edges, largest first.
 
-
-def shells_of(mesh: TriangleMesh) -> list[NDArray[np.int64]]:
-    """Face numbers of each set of faces that hang together by edges, largest first."""
-    edges = edges_of(mesh.faces)
+    `edges` saves time where they are known.
+    """
+    edges = edges_of(mesh.faces) if edges is None else edges
     m = len(mesh.faces)
     if not m:
         return []
@@ -95,9 +93,16 @@ def part_of(mesh: TriangleMesh, faces: NDArray[np.int64]) -> TriangleMesh:
     )
 
 
-def cavities_with_parents(mesh: TriangleMesh) -> list[TriangleMesh]:
-    """Split a closed mesh into bodies: each outer shell with the cavities inside it."""
-    shells = [part_of(mesh, faces) for faces in shells_of(mesh)]
+def with_cavities(mesh: TriangleMesh, numbers: list[NDArray[np.int64]]) -> list[TriangleMesh]:
+    """Split a closed mesh into bodies: each outer shell with the cavities inside it.
+
+    Parameters
+    ----------
+    mesh : TriangleMesh
+    numbers : list of arrays
+        Its shells, from `shells_of`.
+    """
+    shells = [part_of(mesh, faces) for faces in numbers]
     outer = sorted((s for s in shells if s.volume > 0), key=lambda s: s.volume)
     groups = [[shell] for shell in outer]
     for cavity in (s for s in shells if s.volume < 0):
@@ -107,6 +112,16 @@ def cavities_with_parents(mesh: TriangleMesh) -> list[TriangleMesh]:
                 group.append(cavity)
                 break
     return [_together(group) for group in groups]
+
+
+def boxes_meet(meshes: list[TriangleMesh]) -> bool:
+    """Whether the bounding boxes of any two meshes touch or overlap."""
+    low = np.array([m.bounds[0] for m in meshes])
+    high = np.array([m.bounds[1] for m in meshes])
+    for n in range(len(meshes) - 1):
+        if ((low[n + 1 :] <= high[n]) & (high[n + 1 :] >= low[n])).all(axis=1).any():
+            return True
+    return False
 
 
 def _together(group: list[TriangleMesh]) -> TriangleMesh:

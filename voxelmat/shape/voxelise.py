@@ -14,7 +14,7 @@ from voxelmat.model.grid import VoxelGrid
 from voxelmat.model.mesh import TriangleMesh
 from voxelmat.monitor import SILENT, Monitor, computing
 from voxelmat.shape.seams import close_seams
-from voxelmat.shape.shells import balanced, cavities_with_parents, shells_of
+from voxelmat.shape.shells import boxes_meet, edges_of, shells_of, with_cavities
 from voxelmat.shape.tree import LEAF, disc_tree
 from voxelmat.shape.words import place_text, voxel_centre
 
@@ -120,38 +120,31 @@ def voxelise(mesh: TriangleMesh, grid: VoxelGrid, *, monitor: Monitor = SILENT) 
     InputError
         If the mesh is open or inside out.
     """
-    if not len(mesh.faces) or not balanced(mesh):
+    edges = edges_of(mesh.faces)
+    if not len(mesh.faces) or edges.turn.any():
         raise InputError(
             f"Mesh '{mesh.name}' is not closed, so it has no inside. Check it with "
             "find_defects(mesh), which says where it is open; mend it there."
         )
-    monitor.report("voxelising", done=0, total=2, faces=len(mesh.faces), voxels=grid.n_voxels)
-    occupancy, winding = _fill(mesh, grid)
-    least, most = int(winding.min()), int(winding.max())
-    if least < 0:
-        k, j, i = (int(a[0]) for a in np.nonzero(winding < 0))
-        at = place_text(voxel_centre(grid, (i, j, k)))
-        raise InputError(
-            f"Mesh '{mesh.name}' is inside out round {at}: its "
-            "normals point inwards there. Flip the normals, or mend it with repair allowed."
-        )
-    if most > 1:
-        groups = cavities_with_parents(mesh)
-        if len(groups) > 1:
-            return _joined(mesh, groups, grid, monitor)
-    monitor.report("voxelising", done=1, total=2)
-    distance = _distance(mesh, grid, winding)
+    distance = np.full(grid.shape[::-1], BAND_SIXTEENTHS, dtype=np.int8)
+    occupancy = np.zeros(grid.shape[::-1], dtype=np.uint8)
+    cautions: tuple[str, ...] = ()
+    window = _window(mesh, grid)
+    if window is not None:
+        monitor.report("voxelising", done=0, total=2, faces=len(mesh.faces))
+        at, part = window
+        occupancy[at], winding = _fill(mesh, part)
+        _refuse_inside_out(mesh, part, winding)
+        shells = shells_of(mesh, edges)
+        groups = with_cavities(mesh, shells) if len(shells) > 1 else []
+        overlap = int(winding.max()) > 1
+        if len(groups) > 1 and (overlap or boxes_meet(groups)):
+            touch = _join(groups, grid, distance, occupancy, monitor)
+            cautions = _join_caution(mesh, len(shells), overlap, touch)
+        else:
+            monitor.report("voxelising", done=1, total=2)
+            distance[at] = _distance(mesh, part, winding)
     monitor.report("voxelising", done=2, total=2)
-    return _shape(grid, distance, occupancy, ())
-
-
-def _shape(
-    grid: VoxelGrid,
-    distance: NDArray[np.int8],
-    occupancy: NDArray[np.uint8],
-    cautions: tuple[str, ...],
-) -> VoxelShape:
-    """Turn the kernels' [k, j, i] arrays into the public [i, j, k] ones."""
     for array in (distance, occupancy):
         array.setflags(write=False)
     return VoxelShape(
@@ -162,29 +155,68 @@ def _shape(
     )
 
 
-def _joined(
-    mesh: TriangleMesh,
+def _window(
+    mesh: TriangleMesh, grid: VoxelGrid
+) -> tuple[tuple[slice, slice, slice], VoxelGrid] | None:
+    """The part of a grid that a mesh and its band reach: where ([k, j, i]), and its grid."""
+    origin, spacing = np.array(grid.origin), np.array(grid.spacing)
+    band = BAND_SIXTEENTHS / 16 * spacing.min()
+    low, high = mesh.bounds
+    first = np.clip(np.floor((low - band - origin) / spacing), 0, grid.shape).astype(int)
+    last = np.clip(np.ceil((high + band - origin) / spacing), 0, grid.shape).astype(int)
+    if (first >= last).any():
+        return None
+    i, j, k = (slice(a, b) for a, b in zip(first.tolist(), last.tolist(), strict=True))
+    part = VoxelGrid(
+        shape=tuple((last - first).tolist()),
+        spacing=grid.spacing,
+        origin=tuple((origin + first * spacing).tolist()),
+    )
+    return (k, j, i), part
+
+
+def _refuse_inside_out(mesh: TriangleMesh, grid: VoxelGrid, winding: NDArray[np.int8]) -> None:
+    if int(winding.min()) >= 0:
+        return
+    k, j, i = (int(axis[0]) for axis in np.nonzero(winding < 0))
+    raise InputError(
+        f"Mesh '{mesh.name}' is inside out round {place_text(voxel_centre(grid, (i, j, k)))}: its "
+        "normals point inwards there. Flip the normals, or mend it with repair allowed."
+    )
+
+
+def _join(
     groups: list[TriangleMesh],
     grid: VoxelGrid,
+    distance: NDArray[np.int8],
+    occupancy: NDArray[np.uint8],
     monitor: Monitor,
-) -> VoxelShape:
-    """Overlapping shells, each with its cavities, one by one: walls inside vanish."""
-    distance = np.full(grid.shape[::-1], BAND_SIXTEENTHS, dtype=np.int8)
-    total = np.zeros(grid.shape[::-1], dtype=np.uint16)
-    shared = np.zeros(grid.shape[::-1], dtype=bool)
+) -> bool:
+    """Lay down shells that meet one by one, so that walls inside vanish; whether any met."""
+    occupancy[:] = 0
+    shared = np.zeros(occupancy.shape, dtype=bool)
     for number, group in enumerate(groups):
-        monitor.report("voxelising", done=number, total=len(groups))
-        occupancy, winding = _fill(group, grid)
-        np.minimum(distance, _distance(group, grid, winding), out=distance)
-        shared |= (total > 0) & (occupancy > 0)
-        total = np.minimum(total + occupancy, 255)
-    filled = total.astype(np.uint8)
-    close_seams(distance, filled, shared)
-    caution = (
-        f"Mesh '{mesh.name}' has {len(shells_of(mesh))} closed shells, of which some overlap; "
-        "they were joined into one body."
+        monitor.report("voxelising shells", done=number, total=len(groups))
+        window = _window(group, grid)
+        if window is None:
+            continue
+        at, part = window
+        more, winding = _fill(group, part)
+        distance[at] = np.minimum(distance[at], _distance(group, part, winding))
+        shared[at] |= (occupancy[at] > 0) & (more > 0)
+        occupancy[at] += np.minimum(more, 255 - occupancy[at])
+    close_seams(distance, occupancy, shared)
+    return bool(shared.any())
+
+
+def _join_caution(mesh: TriangleMesh, count: int, overlap: bool, touch: bool) -> tuple[str, ...]:
+    if not (overlap or touch):
+        return ()
+    meet = "overlap" if overlap else "touch"
+    return (
+        f"Mesh '{mesh.name}' has {count} closed shells, of which some {meet}; they were joined "
+        "into one body.",
     )
-    return _shape(grid, distance, filled, (caution,))
 
 
 def _fill(mesh: TriangleMesh, grid: VoxelGrid) -> tuple[NDArray[np.uint8], NDArray[np.int8]]:
@@ -224,6 +256,8 @@ def _distance(mesh: TriangleMesh, grid: VoxelGrid, winding: NDArray[np.int8]) ->
     edges = corners[:, 1:] - corners[:, :1]
     # A face without area adds nothing: its neighbours have its edges.
     wide = np.linalg.norm(np.cross(edges[:, 0], edges[:, 1]), axis=1) > 0
+    if not wide.any():
+        raise InputError(f"Mesh '{mesh.name}' has no face with an area. Export it again.")
     corners, edges = corners[wide], edges[wide]
     tree = disc_tree(corners)
     u, v = edges[tree.order].transpose(1, 0, 2)
