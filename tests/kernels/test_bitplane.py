@@ -91,17 +91,22 @@ def test_dilation_equals_a_plain_loop(rows, width, before, after, open_edge):
 
 def test_sites_are_shared_among_voxels_by_overlap():
     random = np.random.default_rng(2)
-    plane = noise((6, 21), 4)
-    row_at, column_at = (np.sort(random.integers(0, 3, n)).astype(np.int32) for n in plane.shape)
-    row_share, column_share = (random.random((n, 2)) for n in plane.shape)
+    plane = noise((6, 210), 4)
+    row_at = np.sort(random.integers(0, 3, 6))
+    row_share = random.random((6, 2))
+    # Voxels of 70 sites each, whose last site reaches into the next; then one whole one.
+    whole = np.array([[0, 69], [70, 139], [140, 210]])
+    straddle = np.array([69, 139, -1])
+    share = np.array([[0.7, 0.3], [0.2, 0.8], [0.0, 0.0]])
     total = np.ones((4, 4))
-    bitplane.add_to_voxels(
-        np.packbits(plane, axis=1), row_at, row_share, column_at, column_share, total
-    )
+    bitplane.add_to_voxels(pack(plane), row_at, row_share, whole, 0.5, straddle, share, total)
+    weight = np.zeros((4, 210))
+    for c, (first, last) in enumerate(whole):
+        weight[c, first:last] = 0.5
+        if straddle[c] >= 0:
+            weight[c : c + 2, straddle[c]] = share[c]
     want = np.ones((4, 4))
-    for y, x in np.argwhere(plane):
+    for y in range(6):
         for i in range(2):
-            for j in range(2):
-                share = row_share[y, i] * column_share[x, j]
-                want[row_at[y] + i, column_at[x] + j] += share
+            want[row_at[y] + i] += row_share[y, i] * (weight @ plane[y])
     assert np.allclose(total, want, rtol=1e-12)

@@ -92,15 +92,21 @@ def first_site(plane):
 
 
 @njit(cache=True, nogil=True)
-def _moved(row, w, by, edge):
-    """Word `w` of a row whose bit x is bit x + by of `row`, or of `edge` beyond its ends."""
-    n = row.shape[0]
-    q, r = by >> 6, by & 63  # floor division, so that r is never negative
-    a = row[w + q] if 0 <= w + q < n else edge
+def _or_moved(a, pad, step, b):
+    """``b = a | (a moved by step sites)`` on words [pad, -pad); the pads of both are the edge."""
+    q, r = np.uint64(abs(step) >> 6), np.uint64(abs(step) & 63)
+    rest = np.uint64(64) - r
+    one = np.uint64(1)
+    first, last = np.uint64(pad), np.uint64(a.shape[0] - pad)
     if r == 0:
-        return a
-    b = row[w + q + 1] if 0 <= w + q + 1 < n else edge
-    return (a << np.uint64(r)) | (b >> np.uint64(64 - r))
+        for w in range(first, last):
+            b[w] = a[w] | (a[w + q] if step > 0 else a[w - q])
+    elif step > 0:
+        for w in range(first, last):
+            b[w] = a[w] | (a[w + q] << r) | (a[w + q + one] >> rest)
+    else:
+        for w in range(first, last):
+            b[w] = a[w] | (a[w - q] >> r) | (a[w - q - one] << rest)
 
 
 @njit(cache=True, nogil=True)
@@ -111,18 +117,24 @@ def dilate_rows(plane, before, after, edge, out):
     then backwards, each by doubling, so the work grows with the logarithm of the reach.
     """
     words = plane.shape[1]
-    a, b = np.empty(words, np.uint64), np.empty(words, np.uint64)
+    pad = max(before, after) // 64 + 2
+    a, b = np.full(words + 2 * pad, edge), np.full(words + 2 * pad, edge)
     for y in range(plane.shape[0]):
-        a[:] = plane[y]
+        same = True
+        for w in range(words):
+            same = same and plane[y, w] == edge
+        if same:
+            out[y] = edge
+            continue
+        a[pad:-pad] = plane[y]
         for reach, sign in ((after, 1), (before, -1)):
             span = 1
             while span <= reach:
                 step = min(span, reach + 1 - span)
-                for w in range(words):
-                    b[w] = a[w] | _moved(a, w, sign * step, edge)
+                _or_moved(a, pad, sign * step, b)
                 a, b = b, a
                 span += step
-        out[y] = a
+        out[y] = a[pad:-pad]
 
 
 @njit(cache=True, nogil=True)
@@ -144,30 +156,51 @@ def dilate_columns(plane, before, after, edge, out):
 
 
 @njit(cache=True, nogil=True)
-def add_to_voxels(bits, row_at, row_share, column_at, column_share, total):
+def _ones_between(row, first, last):
+    """Set bits of a row of words from bit `first` up to, without, bit `last`."""
+    total = 0
+    w = first >> 6
+    while w << 6 < last:
+        v = row[w]
+        if v != 0:
+            low, high = first - (w << 6), last - (w << 6)
+            if low > 0:
+                v = (v << np.uint64(low)) >> np.uint64(low)
+            if high < 64:
+                v = (v >> np.uint64(64 - high)) << np.uint64(64 - high)
+            total += _ones(v)
+        w += 1
+    return total
+
+
+@njit(cache=True, nogil=True)
+def add_to_voxels(plane, row_at, row_share, whole, width, straddle, share, total):
     """Add the set sites of one plane to the design voxels that they overlap.
 
-    bits u8 [rows, stride]; row_at i32 [rows] the first voxel that a row of sites overlaps,
-    row_share f64 [rows, 2] the share of that voxel and of the next; the same for columns;
+    plane u64 [rows, words]. row_at i64 [rows] the first voxel that a row of sites overlaps,
+    row_share f64 [rows, 2] its share of that voxel and of the next. Along a row, whole i64
+    [c, 2] first and last site that lie wholly in voxel c, each of share `width`; straddle i64
+    [c] the site that also reaches into voxel c + 1, or -1, with share f64 [c, 2] in the two.
     total f64 [r, c] (added to) has an entry for every voxel named and the one after.
     """
-    line = np.zeros(total.shape[1])
-    for y in range(bits.shape[0]):
+    n = whole.shape[0]
+    line = np.empty(total.shape[1])
+    for y in range(plane.shape[0]):
+        row = plane[y]
         used = False
-        for b in range(bits.shape[1]):
-            v = bits[y, b]
-            if v == 0:
-                continue
-            used = True
-            for q in range(8):
-                if v >> (7 - q) & 1:
-                    x = b * 8 + q
-                    line[column_at[x]] += column_share[x, 0]
-                    line[column_at[x] + 1] += column_share[x, 1]
-        if used:
-            for i in range(2):
-                share = row_share[y, i]
-                if share > 0:
-                    for c in range(line.shape[0]):
-                        total[row_at[y] + i, c] += share * line[c]
-            line[:] = 0.0
+        for w in range(row.shape[0]):
+            used = used or row[w] != 0
+        if not used:
+            continue
+        line[:] = 0.0
+        for c in range(n):
+            line[c] += width * _ones_between(row, whole[c, 0], whole[c, 1])
+            x = straddle[c]
+            if x >= 0 and (row[x >> 6] >> np.uint64(63 - (x & 63))) & np.uint64(1) != 0:
+                line[c] += share[c, 0]
+                line[c + 1] += share[c, 1]
+        for i in range(2):
+            part = row_share[y, i]
+            if part > 0:
+                for c in range(line.shape[0]):
+                    total[row_at[y] + i, c] += part * line[c]
