@@ -141,24 +141,5 @@ def test_cases_with_the_same_supports_share_a_system_and_springs_do_not(cantilev
     assert physics.cg_iterations == 3
 
 
-def sheet(element):
-    """I1 and I2: half a simply supported beam, 60 x 20, one layer held in z."""
-    nz, ny, nx = 1, 20, 60
-    fixed = np.zeros((3, nz + 1, ny + 1, nx + 1), bool)
-    fixed[2] = True
-    fixed[0, :, :, 0] = True  # the symmetry plane
-    fixed[1, :, 0, nx] = True  # the roller, at the lower corner of the far end
-    force = np.zeros(fixed.shape)
-    force[1, :, ny, 0] = -0.5  # unit load at the top of the symmetry plane
-    case = Case(name="beam", weight=1.0, force=force, fixed=fixed)
-    return (nz, ny, nx), Physics((case,), (1, 1, 1), element=element, tolerance=1e-8)
-
-
-def test_solid_sheet(unknowns):
-    # I1 (reference solution, checked by two programs): nu 0, one layer of `full`, solid.
-    shape, physics = sheet("full")
-    u = unknowns(shape, [1.0], [0.0], kind="plain", penalty=1.0, radius=0.5, floor=1e-9)
-    physics.update(u.forward(np.ones(u.n)))
-    assert ComplianceResponse().value(physics)[0] == pytest.approx(125.62100, rel=1e-6)
 
 
