@@ -160,6 +160,22 @@ def test_bought_in_body_is_solved_but_not_printed():
     assert "it is bought in" in result.report[0].message
 
 
+def test_a_drawn_clearance_closes_for_the_solve_and_stays_in_the_print():
+    pin, sleeve = cylinder(4, 0, 10, 96), tube(4.3, 8, 0, 10, 96)
+    bodies = [body("pin", pin, bought_in=True, clearance_mm=0.3), body("sleeve", sleeve)]
+    rule = GapRule(first="pin", second="sleeve", width_mm=0.5, give_to="sleeve")
+    result = put(bodies, 0.4, gaps=[rule])
+    whole = cylinder(8, 0, 10, 96)
+    assert volume(result.occupancy, result.grid) == pytest.approx(whole.volume, rel=2e-3)
+    assert volume(result.print_occupancy, result.grid) == pytest.approx(sleeve.volume, rel=3e-3)
+    assert [event.kind for event in result.report] == ["gap", "cavity"]
+    # Given to the pin instead, the gap is never printed in the first place.
+    rule = GapRule(first="pin", second="sleeve", width_mm=0.5, give_to="pin")
+    result = put(bodies, 0.4, gaps=[rule])
+    assert volume(result.occupancy, result.grid) == pytest.approx(whole.volume, rel=2e-3)
+    assert volume(result.print_occupancy, result.grid) == pytest.approx(sleeve.volume, rel=3e-3)
+
+
 def test_cavity_without_clearance_is_exact():
     pin, block = cylinder(2, -5, 5, 48), box((10, 10, 10), (-5, -5, -5))
     result = put([body("pin", pin, bought_in=True), body("block", block)], 0.4)
