@@ -59,7 +59,7 @@ def test_units(tmp_path):
     assert read_pressure_map(path, unit="kPa").tolist() == [[0.01, 0.0], [0.0, 0.02]]
     with pytest.raises(InputError, match="needs its unit"):
         read_pressure_map(path)
-    with pytest.raises(InputError, match="kpa.*Did you mean 'kPa'"):
+    with pytest.raises(InputError, match=r"kpa.*Did you mean 'kPa'"):
         read_pressure_map(path, unit="kpa")
 
 

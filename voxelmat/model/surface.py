@@ -16,6 +16,9 @@ from voxelmat.model.part import DISTANCE_STEPS, Part
 
 __all__ = ["Faces", "carriers", "exposed_faces", "visible_from"]
 
+#: Cosine between normal and line of sight below which a wall is not seen; ours.
+_GRAZING = 0.1
+
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Faces:
@@ -167,6 +170,8 @@ def visible_from(part: Part, faces: Faces, axis: int, side: int) -> NDArray[np.b
     -------
     ndarray of bool, shape (n,)
         A face is seen where the empty voxel before it has nothing between it and the viewer.
+        Where the part knows its true surface, walls along the line of sight are not seen: faces
+        on other axes whose true normal is within 6 degrees of right angles to it.
     """
     solid = np.pad(carriers(part), 1)
     order = np.flip(solid, axis=axis) if side > 0 else solid
@@ -176,5 +181,8 @@ def visible_from(part: Part, faces: Faces, axis: int, side: int) -> NDArray[np.b
     before = faces.voxel + 1
     before[np.arange(len(faces)), faces.axis] += faces.side
     clear = ~hidden[tuple(before.T)]
-    away = (faces.axis == axis) & (faces.side == -side)
+    across = faces.axis != axis
+    away = ~across & (faces.side == -side)
+    if part.distance is not None or part.occupancy is not None:
+        away |= across & (side * faces.normal[:, axis] < _GRAZING)
     return np.asarray(clear & ~away)

@@ -44,6 +44,7 @@ def apply_layout(design: Design, part: Part) -> Part:
     """
     if not design.layout:
         return part
+    outline, part = part.occupancy, part.replace(occupancy=None)  # thin edges are painted too
     for i, rule in enumerate(design.layout):
         key = f"layout[{i}]"
         with at_key(design, key):
@@ -64,7 +65,7 @@ def apply_layout(design: Design, part: Part) -> Part:
                 low, high = Blend.of(rule.settings["from"]), Blend.of(rule.settings["to"])
                 blends = [mixed(low, high, s / (levels - 1)) for s in range(levels)]
             part = _painted(part, voxels, steps, blends)
-    return _compact(part)
+    return _compact(part).replace(occupancy=outline)
 
 
 def _region(name: str, design: Design, part: Part) -> Region:
