@@ -63,7 +63,7 @@ class Blend:
         total = math.fsum(items.values())
         if not total > 0:
             raise InputError(f"A blend needs at least one part above zero; got {items}.")
-        kept = sorted((n, v / total) for n, v in items.items() if v > 0)
+        kept = sorted((n, v / total) for n, v in items.items() if v / total > 0)
         return cls(tuple(kept))
 
     @property
