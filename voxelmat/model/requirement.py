@@ -157,9 +157,11 @@ def judge(
             reasons=tuple(reasons),
             margin=math.nan,
         )
-    low, high = min(low, value), max(high, value)
-    inside = [_margin(requirement, v) >= 0 for v in (low, value, high)]
-    if not all(inside) and any(inside):
+    low, high = min(low, high, value), max(low, high, value)
+    inside = all(_margin(requirement, v) >= 0 for v in (low, high))
+    above = requirement.at_most is not None and low > requirement.at_most
+    below = requirement.at_least is not None and high < requirement.at_least
+    if not (inside or above or below):
         reasons.append(
             f"the band {low:.3g} to {high:.3g} {requirement.unit} straddles the limit".replace(
                 "  ", " "
@@ -169,7 +171,7 @@ def judge(
     if reasons:
         status = "cannot be said"
     else:
-        status = "met" if inside[1] else "not met"
+        status = "met" if inside else "not met"
     return Verdict(
         requirement=requirement,
         value=value,
