@@ -1,5 +1,6 @@
 """Preflight finds each planted defect, at its place, and nothing in a sound stack."""
 
+import dataclasses
 import hashlib
 import json
 
@@ -207,6 +208,21 @@ def test_volumes_against_the_design(tmp_path):
     found = only(preflight(stack, made(other)), "volume")
     assert found.unit == "mm^3"
     assert found.value != found.limit
+
+
+def test_a_thin_zone_of_one_resin_in_another(tmp_path):
+    labels = slab()
+    labels[2:6, 4:8, 2:3] = 2  # 0.25 mm of soft in hard
+    stack = written(tmp_path, labels)
+    profile = STANDARD.replace(minimum=dataclasses.replace(STANDARD.minimum, feature=0.5))
+    found = only(preflight(stack, made(labels), profile), "thin zone")
+    near(found.place_mm, (5.6, 1.1, -0.4))
+    assert found.severity == "note"
+    assert found.value == pytest.approx(0.25)
+    labels[2:6, 4:8, 2:4] = 2
+    assert "thin zone" not in codes(preflight(written(tmp_path, labels), made(labels), profile))
+    labels[2:6, 4:8, 3:5] = 3  # goes on into a blend of two thirds soft
+    assert "thin zone" not in codes(preflight(written(tmp_path, labels), made(labels), profile))
 
 
 def test_a_printer_that_does_not_suit(tmp_path):

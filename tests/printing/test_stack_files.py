@@ -120,6 +120,22 @@ def test_a_full_disk_leaves_nothing_and_is_resumed(tmp_path, monkeypatch, whole)
     assert images(tmp_path / "s") == whole
 
 
+def test_a_disk_that_fills_up_at_the_manifest(tmp_path, monkeypatch, whole):
+    def half(folder, data):
+        (folder / "manifest.json").write_text('{"format": "voxelmat-st')
+        raise OSError(errno.ENOSPC, os.strerror(errno.ENOSPC))
+
+    with monkeypatch.context() as patch:
+        patch.setattr("voxelmat.printing.stack.write_manifest", half)
+        with pytest.raises(ResourceError, match="No space left"):
+            write_stack(part(), STANDARD, tmp_path / "s")
+    assert not (tmp_path / "s").exists()
+    progress = Progress()
+    write_stack(part(), STANDARD, tmp_path / "s", monitor=progress)
+    assert progress.first == len(whole) // 4
+    assert images(tmp_path / "s") == whole
+
+
 def test_a_layer_that_changed_in_the_partial_folder_is_written_again(tmp_path, monkeypatch, whole):
     with monkeypatch.context() as patch:
         _fails_after(patch, 83)
@@ -264,6 +280,16 @@ def test_bad_options(tmp_path):
         write_stack(
             empty.replace(labels=empty.labels * 0, occupancy=None), STANDARD, tmp_path / "s"
         )
+    for seed in (-1, 2**64, 0.5, "1"):
+        with pytest.raises(InputError, match="seed"):
+            write_stack(part(), STANDARD, tmp_path / "s", seed=seed)
+    for position in (3, (1,), ("a", "b"), (1, 2, 3)):
+        with pytest.raises(InputError, match="two lengths"):
+            write_stack(part(), STANDARD, tmp_path / "s", position=position)
+    with pytest.raises(InputError, match="list of turns"):
+        write_stack(part(), STANDARD, tmp_path / "s", orientation=90)
+    with pytest.raises(InputError, match="name a new one"):
+        write_stack(part(), STANDARD, "/")
     (tmp_path / "file").write_text("")
     with pytest.raises(ResourceError):
         write_stack(part(), STANDARD, tmp_path / "file" / "s")

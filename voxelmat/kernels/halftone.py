@@ -159,13 +159,15 @@ def _pack(words, n_channels, y, bits):
     """Eight site bytes at a time to one bit byte a channel, the first site highest."""
     ones = np.uint64(0x0101010101010101)
     high = np.uint64(0x8080808080808080)
-    gather = np.uint64(0x8040201008040201)
     for c in range(n_channels):
         wanted = np.uint64(c + 1) * ones
         for b in range(words.shape[0]):
             v = words[b] ^ wanted  # a byte is 0 where the site belongs to this channel
             v = ((high - v) & high) >> np.uint64(7)  # site numbers stay below 128: no borrow
-            bits[c, y, b] = np.uint8((v * gather) >> np.uint64(56))
+            v |= v << np.uint64(9)  # gather the eight low bits in the highest byte, reversed
+            v |= v << np.uint64(18)
+            v |= v << np.uint64(36)
+            bits[c, y, b] = np.uint8(v >> np.uint64(56))
 
 
 @njit(cache=True, nogil=True)

@@ -159,9 +159,7 @@ def _rounded(fractions: NDArray[np.float64], levels: int) -> NDArray[np.int64]:
     return np.asarray(base + (place < short[:, None]), dtype=np.int64)
 
 
-def _distinct(
-    rows: NDArray[np.int64], levels: int
-) -> tuple[NDArray[np.int64], NDArray[np.int64]]:
+def _distinct(rows: NDArray[np.int64], levels: int) -> tuple[NDArray[np.int64], NDArray[np.int64]]:
     """The distinct rows in ascending order, and which of them each row is.
 
     As ``numpy.unique(axis=0)``, but a column at a time on whole numbers, which is many times

@@ -4,14 +4,20 @@ from __future__ import annotations
 
 from collections.abc import Iterator
 
+import numpy as np
+from numpy.typing import NDArray
+
+from voxelmat.kernels.bitplane import to_words
 from voxelmat.model.finding import Finding
+from voxelmat.model.part import Part
 from voxelmat.model.profile import PrintProfile
 from voxelmat.printing.pieces import Piece
 from voxelmat.printing.readback import Stack
 from voxelmat.printing.scan import Facts
+from voxelmat.printing.thin import ThinScreen
 from voxelmat.units import quantity
 
-__all__ = ["piece_findings", "small_findings"]
+__all__ = ["piece_findings", "small_findings", "zone_findings"]
 
 _SPECK = 8  # sites; smaller pieces are counted as specks and not named one by one
 _NAMED = 3  # findings of one kind that are listed with their place; the rest is counted
@@ -117,3 +123,57 @@ def small_findings(stack: Stack, facts: Facts, profile: PrintProfile) -> Iterato
                 value=seen.sites,
                 limit=0,
             )
+
+
+def zone_findings(part: Part, profile: PrintProfile) -> Iterator[Finding]:
+    """Zones of one pure resin that are thinner than the smallest feature.
+
+    Judged on the design's voxels, where a zone that is not dithered is known as such; a zone goes
+    on into blends that hold at least half of its resin, so the end of a gradient is no thin zone.
+    Voxels as large as the minimum cannot be judged and give no finding.
+    """
+    limit = profile.minimum.feature
+    grid = part.grid
+    # The screen's layers, rows and columns are z, y and x here.
+    size = [max(1, int(limit / h + 1e-9)) for h in grid.spacing]
+    if max(size) < 2:
+        return
+    fractions = part.palette_fractions()
+    for column, resin in enumerate(part.resins):
+        pure = (fractions[:, column] == 1)[part.labels]
+        if resin.kind == "bought-in" or not pure.any():
+            continue
+        zone = (fractions[:, column] >= 0.5)[part.labels]
+        thin = pure & _thin_voxels(zone, (size[2], size[1], size[0]))
+        count = int(thin.sum())
+        if count:
+            voxel = np.argwhere(thin)[0]
+            x, y, z = (c[i] for c, i in zip(grid.centres(), voxel, strict=True))
+            yield Finding(
+                severity="note",
+                code="thin zone",
+                message=f"{quantity(count * grid.voxel_volume, 'mm^3')} of pure '{resin.name}' lie "
+                f"in zones that hold no cube of {limit:g} mm, the smallest feature of "
+                f"'{profile.name}' (judged on voxels of {min(grid.spacing):g} mm).",
+                place_mm=(float(x), float(y), float(z)),
+                remedy="Droplets of neighbouring zones blur into it; thicken it or leave it out.",
+                value=count * grid.voxel_volume,
+                limit=limit,
+                unit="mm",
+            )
+
+
+def _thin_voxels(zone: NDArray[np.bool_], size: tuple[int, int, int]) -> NDArray[np.bool_]:
+    """Voxels of a zone ``[i, j, k]`` near which no box of `size` (z, y, x) fits."""
+    width = zone.shape[0]
+    screen = ThinScreen(zone.shape[1], width, size, solid=True)
+    found = []
+    for k in range(zone.shape[2]):
+        bits = np.packbits(zone[:, :, k].T, axis=1)
+        words = np.empty((bits.shape[0], (bits.shape[1] + 7) // 8), dtype=np.uint64)
+        to_words(np.ascontiguousarray(bits), words)
+        thin = screen.push(words)
+        found += [] if thin is None else [thin]
+    found += screen.finish()
+    bytes_ = np.stack(found).astype(">u8").view(np.uint8)
+    return np.unpackbits(bytes_, axis=2, count=width).astype(np.bool_).transpose(2, 1, 0)

@@ -57,13 +57,13 @@ def _is_ours(folder: Path) -> bool:
     if all(entry.name in (_JOURNAL, _FRESH) for entry in folder.iterdir()):
         return True
     try:
-        if (folder / MANIFEST).is_file():
-            channels = {c["name"] for c in read_manifest(folder)["channels"]}
-        else:
+        if (folder / _JOURNAL).is_file():  # first, for a manifest beside it may be half-written
             first = json.loads((folder / _JOURNAL).read_text("utf-8").splitlines()[0])
             if first["format"] != FORMAT:
                 return False
             channels = set(first["channels"])
+        else:
+            channels = {c["name"] for c in read_manifest(folder)["channels"]}
     except (FileFormatError, OSError, ValueError, LookupError, TypeError):
         return False
     for entry in folder.iterdir():

@@ -26,6 +26,7 @@ __all__ = [
 FORMAT = "voxelmat-stack"
 MANIFEST = "manifest.json"
 _LARGEST = 256 << 20  # bytes; a full tray of 64 channels stays below
+_MOST_PIXELS = 1 << 32  # of one image; the largest trays have some 10^8
 
 
 def layer_name(layer: int) -> str:
@@ -71,6 +72,8 @@ def _check(data: Any, name: str) -> None:
         raise FileFormatError(f"{name}: the raster cannot be: {problem}") from None
     if data["image"] != image_entry(raster, data["image"]["polarity"]):
         raise FileFormatError(f"{name}: 'image' does not agree with 'raster'.")
+    if data["image"]["width"] * data["image"]["height"] > _MOST_PIXELS:
+        raise FileFormatError(f"{name}: no printer has images of that size: {data['image']}.")
     channels = data["channels"]
     layers = raster.image_shape[0]
     for channel in channels:

@@ -8,7 +8,7 @@ from voxelmat.model.finding import SEVERITIES, Finding
 from voxelmat.model.part import Part
 from voxelmat.model.profile import PrintProfile
 from voxelmat.monitor import SILENT, Monitor
-from voxelmat.printing.features import piece_findings, small_findings
+from voxelmat.printing.features import piece_findings, small_findings, zone_findings
 from voxelmat.printing.readback import Stack, read_stack
 from voxelmat.printing.scan import Facts, scan
 from voxelmat.printing.shifted import shifted_channel
@@ -37,7 +37,8 @@ def preflight(
     stack : Stack or path
         Read from disk whatever is passed; every file is compared with its SHA-256.
     part : Part, optional
-        The design; its volumes are taken from the manifest if left out.
+        The design; without it volumes are those in the manifest, and thin zones of one pure
+        resin are not looked for.
     profile : PrintProfile, optional
         The printer; the one in the manifest if left out.
     monitor : Monitor
@@ -61,6 +62,8 @@ def preflight(
     found += _files(stack, facts) + _claims(stack, facts)
     found += _volumes(stack, facts, part)
     found += [*piece_findings(stack, facts), *small_findings(stack, facts, printer)]
+    if part is not None:
+        found += zone_findings(part, printer)
     return sorted(found, key=lambda f: SEVERITIES.index(f.severity))
 
 

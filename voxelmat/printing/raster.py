@@ -51,6 +51,8 @@ def rotation_matrix(turns: Sequence[str] = ()) -> NDArray[np.int64]:
     if isinstance(turns, str):
         turns = [turns]
     total = np.eye(3, dtype=np.int64)
+    if not isinstance(turns, Sequence):
+        raise InputError(f"A build orientation is a list of turns; got {turns!r}.")
     for turn in turns:
         match = _TURN.match(str(turn))
         if match is None or int(match[2]) % 90:
@@ -284,11 +286,11 @@ def place(
             "at each side). Turn the part, or take a printer with a larger tray.",
             key="profile",
         )
-    corner = (
-        position
-        if position is not None
-        else [(t - s) / 2 for t, s in zip(profile.tray_size[:2], size[:2], strict=True)]
-    )
+    if position is None:
+        x, y = ((t - s) / 2 for t, s in zip(profile.tray_size[:2], size[:2], strict=True))
+        corner = (float(x), float(y))
+    else:
+        corner = _position(position)
     for axis in (0, 1):
         if not (
             margin[axis] - _EPSILON <= corner[axis]
@@ -314,6 +316,18 @@ def place(
         origin_corner=profile.origin_corner,
         row_direction=profile.row_direction,
     )
+
+
+def _position(value: object) -> tuple[float, float]:
+    """Two numbers, or an `InputError`."""
+    try:
+        x, y = (float(v) for v in value)  # type: ignore[attr-defined]
+    except (TypeError, ValueError):
+        raise InputError(
+            f"A position is two lengths in mm, along x and y of the tray; got {value!r}.",
+            key="position",
+        ) from None
+    return x, y
 
 
 def _mm(values: Sequence[float] | NDArray[np.float64]) -> str:

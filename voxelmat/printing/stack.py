@@ -104,7 +104,7 @@ def write_stack(
     Cancelled
         From the monitor; finished layers are kept.
     """
-    folder = Path(folder)
+    folder = Path(folder).absolute()
     policy = profile.support_policy if support is None else support
     if policy not in SUPPORT_POLICIES:
         raise InputError(
@@ -112,6 +112,10 @@ def write_stack(
         )
     if policy == "columns" and not profile.support_channel:
         raise InputError(f"Profile '{profile.name}' has no support channel to lay columns with.")
+    if not folder.name:
+        raise InputError(f"'{folder}' cannot be the folder of a stack; name a new one.")
+    if not isinstance(seed, int) or not 0 <= seed < 2**64:
+        raise InputError(f"A seed is a whole number of 0 to 2^64 - 1; got {seed!r}.", key="seed")
     if slab < 1 or (threads is not None and threads < 1):
         raise InputError(f"Threads and slab are at least 1; got {threads} and {slab}.")
     started = utc_now()
@@ -121,7 +125,7 @@ def write_stack(
         "outline": outline_source(part),
         "halftone": _HALFTONE,
         "mask_sha256": mask_digest(),
-        "seed": int(seed),
+        "seed": seed,
         "interfaces": INTERFACE_RULE,
         "support": policy,
         "encoder": _ENCODER,
@@ -146,7 +150,7 @@ def write_stack(
             finally:
                 journal.close()
             provenance = Provenance(
-                inputs=dict(inputs or {}), seed=int(seed), threads=_workers(threads),
+                inputs=dict(inputs or {}), seed=seed, threads=_workers(threads),
                 started_utc=started, finished_utc=utc_now(),
             )  # fmt: skip
             write_manifest(
