@@ -44,7 +44,7 @@ def test_overlap_without_priority_names_bodies_volume_and_place():
             put(pair)
         text = str(caught.value)
         assert "'left' and 'right' overlap by 200 mm^3" in text
-        assert "most at (8.25," in text
+        assert "most at (8.75, 4.75, 4.75) mm" in text
         assert "priority" in text
 
 

@@ -261,3 +261,33 @@ def test_real_mesh_of_overlapping_shells():
     every = np.max([s.occupancy for s in shells], axis=0)
     assert (whole.occupancy >= every).all()
     assert (whole.distance <= np.min([s.distance for s in shells], axis=0)).all()
+
+
+def test_one_shell_that_crosses_itself_is_told():
+    # A closed coil of two turns in one plane winds twice round its middle.
+    turn = 4 * np.pi * np.arange(32) / 32
+    ring = 10 + 2 * np.sin(turn / 2)
+    loop = np.column_stack([ring * np.cos(turn), ring * np.sin(turn)])
+    n = len(loop)
+    here, on = np.arange(n), (np.arange(n) + 1) % n
+    vertices = np.vstack(
+        [
+            np.column_stack([loop, np.zeros(n)]),
+            np.column_stack([loop, np.full(n, 4.0)]),
+            [[0, 0, 0], [0, 0, 4]],
+        ]
+    )
+    faces = np.vstack(
+        [
+            np.column_stack([here, on, on + n]),
+            np.column_stack([here, on + n, here + n]),
+            np.column_stack([on, here, np.full(n, 2 * n)]),
+            np.column_stack([here + n, on + n, np.full(n, 2 * n + 1)]),
+        ]
+    )
+    coil = TriangleMesh(vertices=vertices, faces=faces, name="coil")
+    shape = voxelise(coil, grid_for(coil, 1.0))
+    assert "'coil' crosses itself" in shape.cautions[0]
+    assert (shape.distance[shape.occupancy == 255] <= -8).all()
+    middle = shape.grid.index_of((0.1, 0.1, 2.1))
+    assert shape.occupancy[middle] == 255

@@ -3,7 +3,7 @@
 import math
 
 import numpy as np
-from numba import njit, prange
+from numba import njit
 
 
 @njit(cache=True, nogil=True)
@@ -208,9 +208,9 @@ def _wind(corner, whole, step, z, nx, ny, turns):
             turns[j, i] += -1 if twice > 0 else 1
 
 
-@njit(cache=True, parallel=True)
+@njit(cache=True, nogil=True)
 def fill_planes(corners, whole, step, start, member, occupancy, winding):
-    """Solid fraction and winding number, plane by plane; same bits on any thread count.
+    """Solid fraction and winding number, plane by plane.
 
     The fraction is exact: by the divergence theorem a voxel's solid volume is a
     sum over the pieces of surface in its row, each cut at the voxel's walls.
@@ -231,14 +231,16 @@ def fill_planes(corners, whole, step, start, member, occupancy, winding):
         Filled: turns of the surface round each voxel centre, clipped to +-127.
     """
     nz, ny, nx = occupancy.shape
-    for k in prange(nz):
-        rows = np.zeros((ny, nx + 1))
-        turns = np.zeros((ny, nx + 1), np.int32)
-        # A triangle cut by the six walls of a voxel has at most nine corners.
-        poly = np.empty((16, 3))
-        strip = np.empty((16, 3))
-        low = np.empty((16, 3))
-        high = np.empty((16, 3))
+    rows = np.empty((ny, nx + 1))
+    turns = np.empty((ny, nx + 1), np.int32)
+    # A triangle cut by the six walls of a voxel has at most nine corners.
+    poly = np.empty((16, 3))
+    strip = np.empty((16, 3))
+    low = np.empty((16, 3))
+    high = np.empty((16, 3))
+    for k in range(nz):
+        rows[:] = 0.0
+        turns[:] = 0
         for p in range(start[k], start[k + 1]):
             t = member[p]
             _cover(corners[t], k, nx, ny, rows, poly, strip, low, high)

@@ -17,7 +17,7 @@ from voxelmat.shape.gaps import find_gap
 from voxelmat.shape.overlaps import find_overlaps
 from voxelmat.shape.seams import close_seams
 from voxelmat.shape.voxelise import BAND_SIXTEENTHS, VoxelShape, voxelise
-from voxelmat.shape.words import place_text, voxel_centre
+from voxelmat.shape.words import middle_voxel, place_text, voxel_centre
 from voxelmat.units import number
 
 __all__ = ["Assembly", "assemble"]
@@ -202,8 +202,7 @@ def _close_gaps(
                 Event(kind="gap", bodies=both, volume_mm3=0.0, place=grid.origin, message=text)
             )
             continue
-        middle = len(added) // 2
-        place = voxel_centre(grid, (int(axis[middle]) for axis in gap.at))
+        place = voxel_centre(grid, middle_voxel(gap.at))
         for fields in (solve, stack) if not bodies[taker].bought_in else (solve,):
             free = 255 - fields.occupancy[gap.at] if fields is solve else added
             grown = np.minimum(free.astype(np.int16) + shapes[taker].occupancy[gap.at], 255)

@@ -10,7 +10,7 @@ from voxelmat.errors import InputError
 from voxelmat.model.grid import VoxelGrid
 from voxelmat.shape.bodies import Body, Event, strength
 from voxelmat.shape.voxelise import VoxelShape
-from voxelmat.shape.words import place_text, voxel_centre
+from voxelmat.shape.words import middle_voxel, place_text, voxel_centre
 from voxelmat.units import number
 
 __all__ = ["TOUCH", "find_overlaps"]
@@ -59,8 +59,8 @@ def find_overlaps(
             if most <= 1:
                 continue  # rounding of the two fractions
             volume = float(shared.sum(dtype=np.int64)) / 255 * grid.voxel_volume
-            peak = np.unravel_index(int(shared.argmax()), shared.shape)
-            index = [int(p) + w.start for p, w in zip(peak, window, strict=True)]
+            peak = middle_voxel(np.nonzero(shared == most))
+            index = [p + w.start for p, w in zip(peak, window, strict=True)]
             place = voxel_centre(grid, index)
             events.append(_settle(a, bodies[m], volume, place, most))
     return events

@@ -144,6 +144,12 @@ def voxelise(mesh: TriangleMesh, grid: VoxelGrid, *, monitor: Monitor = SILENT) 
         else:
             monitor.report("voxelising", done=1, total=2)
             distance[at] = _distance(mesh, part, winding)
+            if overlap:
+                close_seams(distance[at], occupancy[at], np.zeros(1, dtype=bool))
+                cautions = (
+                    f"Mesh '{mesh.name}' crosses itself; what its surface winds round at least "
+                    "once was taken as solid.",
+                )
     monitor.report("voxelising", done=2, total=2)
     for array in (distance, occupancy):
         array.setflags(write=False)
@@ -229,9 +235,8 @@ def _fill(mesh: TriangleMesh, grid: VoxelGrid) -> tuple[NDArray[np.uint8], NDArr
     shape = grid.shape[::-1]
     occupancy = np.empty(shape, dtype=np.uint8)
     winding = np.empty(shape, dtype=np.int8)
-    with computing():
-        start, member = bin_by_plane(corners, shape[0])
-        fill_planes(corners, whole, step, start, member, occupancy, winding)
+    start, member = bin_by_plane(corners, shape[0])
+    fill_planes(corners, whole, step, start, member, occupancy, winding)
     return occupancy, winding
 
 

@@ -2,11 +2,14 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable
+from collections.abc import Iterable, Sequence
+
+import numpy as np
+from numpy.typing import NDArray
 
 from voxelmat.model.grid import VoxelGrid
 
-__all__ = ["place_text", "voxel_centre"]
+__all__ = ["middle_voxel", "place_text", "voxel_centre"]
 
 
 def place_text(point: Iterable[float]) -> str:
@@ -27,3 +30,11 @@ def voxel_centre(grid: VoxelGrid, index: Iterable[int]) -> tuple[float, float, f
         o + (int(n) + 0.5) * h for o, n, h in zip(grid.origin, index, grid.spacing, strict=True)
     )
     return x, y, z
+
+
+def middle_voxel(at: Sequence[NDArray[np.intp]]) -> tuple[int, int, int]:
+    """Of voxels (three index arrays, not empty), the one nearest to the middle of all."""
+    off = sum((axis - axis.mean()) ** 2 for axis in at)
+    nearest = int(np.argmin(off))
+    i, j, k = (int(axis[nearest]) for axis in at)
+    return i, j, k
