@@ -82,6 +82,9 @@ def as_dict(
                 "as_printed_largest_displacement_mm": (
                     float(data.as_printed[name].size.max()) if name in data.as_printed else None
                 ),
+                "as_printed_energy_mJ": (
+                    data.as_printed[name].energy if name in data.as_printed else None
+                ),
             }
             for name, r in data.results.items()
         },

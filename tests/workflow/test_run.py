@@ -1,0 +1,359 @@
+"""The whole job on a small pad: shell and Python, bad input, interruption, two runs at once."""
+
+from __future__ import annotations
+
+import json
+import os
+import signal
+import subprocess
+import sys
+import time
+from pathlib import Path
+
+import numpy as np
+import pytest
+
+from voxelmat import cli
+from voxelmat.errors import Cancelled, InputError
+from voxelmat.io.mesh import write_stl
+from voxelmat.monitor import CancelFlag
+from voxelmat.printing.readback import read_stack
+from voxelmat.shape.solid import box
+from voxelmat.workflow.pipeline import run
+
+# Invented: a soft pad on a rigid plate.
+DESIGN = """
+format = 1
+name = "pad on a plate"
+invented = true
+seed = 3
+
+[grid]
+spacing_mm = [1.0, 1.0, 1.0]
+
+[materials]
+files = ["measured-soft.toml", "measured-hard.toml", "curve.toml"]
+law = "calibrated"
+
+[[body]]
+name = "plate"
+mesh = "plate.stl"
+unit = "mm"
+resin = "measured-hard"
+
+[[body]]
+name = "pad"
+mesh = "pad.stl"
+unit = "mm"
+blend = { measured-soft = 0.75, measured-hard = 0.25 }
+
+[[region]]
+name = "bottom"
+kind = "face"
+side = "z-"
+
+[[region]]
+name = "top"
+kind = "face"
+side = "z+"
+
+[[load_case]]
+name = "press"
+duration_s = 1.0
+temperature_degC = 23.0
+cycles = 1
+
+[[load_case.support]]
+region = "bottom"
+fixed = true
+
+[[load_case.load]]
+kind = "pressure"
+region = "top"
+pressure_MPa = 0.02
+
+[[requirement]]
+name = "gives way"
+measure = "displacement"
+load_case = "press"
+region = "top"
+at_least_mm = 0.0001
+
+[print]
+profile = "invented-coarse"
+"""
+
+MATERIAL = """
+format = 1
+name = "{name}"
+kind = "{kind}"
+colour = "{colour}"
+
+[E_MPa]
+value = {E}
+low = {E}
+high = {E}
+temperature_degC = 23.0
+source = "made up for this test"
+
+[nu]
+value = {nu}
+low = {nu}
+high = {nu}
+temperature_degC = 23.0
+source = "made up for this test"
+
+[density_g_cm3]
+value = 1.1
+low = 1.1
+high = 1.1
+temperature_degC = 23.0
+source = "made up for this test"
+
+[conditions]
+temperature_min_degC = 10.0
+temperature_max_degC = 40.0
+max_duration_s = 600.0
+max_cycles = 1000
+"""
+
+CURVE = """
+format = 1
+first = "measured-soft"
+second = "measured-hard"
+source = "made up for this test"
+temperature_degC = 23.0
+rate_per_s = 0.33
+fraction = [0.0, 0.25, 0.5, 0.75, 1.0]
+E_MPa = [1.0, 7.0, 45.0, 300.0, 2000.0]
+E_low_MPa = [1.0, 6.5, 43.0, 290.0, 2000.0]
+E_high_MPa = [1.0, 7.5, 47.0, 310.0, 2000.0]
+"""
+
+
+@pytest.fixture
+def design(tmp_path):
+    write_stl(box((12.0, 8.0, 2.0), name="plate"), tmp_path / "plate.stl")
+    write_stl(box((12.0, 8.0, 4.0), (0.0, 0.0, 2.0), name="pad"), tmp_path / "pad.stl")
+    for name, kind, modulus, nu, colour in (
+        ("measured-soft", "elastomer", 1.0, 0.45, "#56B4E9"),
+        ("measured-hard", "rigid", 2000.0, 0.35, "#E69F00"),
+    ):
+        text = MATERIAL.format(name=name, kind=kind, E=modulus, nu=nu, colour=colour)
+        (tmp_path / f"{name}.toml").write_text(text)
+    (tmp_path / "curve.toml").write_text(CURVE)
+    path = tmp_path / "design.toml"
+    path.write_text(DESIGN)
+    return path
+
+
+def changed(design: Path, *swaps: tuple[str, str]) -> Path:
+    text = design.read_text()
+    for old, new in swaps:
+        assert old in text
+        text = text.replace(old, new)
+    design.write_text(text)
+    return design
+
+
+def shell(capsys, *words) -> tuple[int, dict]:
+    code = cli.main([*map(str, words), "--json", "--quiet"])
+    return code, json.loads(capsys.readouterr().out)
+
+
+def test_everything_from_the_shell(design, tmp_path, capsys):
+    out = tmp_path / "out"
+    code, data = shell(capsys, "run", design, "--out", out)
+    assert code == data["exit_code"] == 0
+    assert [v["status"] for v in data["verdicts"]] == ["met"]
+    assert not [f for f in data["findings"] if f["severity"] == "stop"]
+    case = data["load_cases"]["press"]
+    # Both solves take the same grid, so what is left is the halftone of the blended pad and its
+    # edges, which a distance field of 1 mm voxels rounds by a third of a voxel.
+    assert case["as_printed_energy_mJ"] == pytest.approx(case["energy_mJ"], rel=0.04)
+    assert case["as_printed_energy_mJ"] != case["energy_mJ"]
+    assert case["force_balance"] < 1e-6
+    page = (out / "report.html").read_text()
+    assert "pad on a plate" in page
+    assert "http://" not in page.replace("http://www.w3.org", "")
+    stack = read_stack(out / "stack")
+    volumes = {c.resin: c.volume_mm3 for c in stack.channels}
+    assert volumes["measured-hard"] == pytest.approx(12 * 8 * (2 + 0.25 * 4), rel=0.02)
+    assert json.loads((out / "result.json").read_text())["design"] == "pad on a plate"
+
+    code, data = shell(capsys, "preflight", out / "stack", "--design", design, "--out", out)
+    assert code == 0
+    code, data = shell(capsys, "report", design, "--out", out)
+    assert code == 0
+
+
+def test_a_closed_form_pad(design, tmp_path):
+    # A column of pad over plate with its sides held: p t (1 + nu) (1 - 2 nu) / (E (1 - nu)) a
+    # layer, textbook formula for confined compression (J1: layers in series).
+    changed(
+        design,
+        ("blend = { measured-soft = 0.75, measured-hard = 0.25 }", 'resin = "measured-soft"'),
+        (
+            "[[load_case.load]]",
+            '[[load_case.support]]\nregion = "all"\nslide = ["z"]\n\n[[load_case.load]]',
+        ),
+        (
+            "[[load_case]]",
+            '[[region]]\nname = "all"\nkind = "box"\nlow_mm = [-9, -9, -9]\n'
+            "high_mm = [99, 99, 99]\n\n[[load_case]]",
+        ),
+    )
+    result = run(design, tmp_path / "out", stages=("solve",)).data.results["press"]
+    layers = ((4.0, 1.0, 0.45), (2.0, 2000.0, 0.35))
+    wanted = sum(0.02 * t * (1 + n) * (1 - 2 * n) / (E * (1 - n)) for t, E, n in layers)
+    assert result.displacement[..., 2].min() == pytest.approx(-wanted, rel=1e-6)
+
+
+def test_not_met_and_cannot_be_said(design, tmp_path, capsys):
+    changed(design, ("at_least_mm = 0.0001", "at_least_mm = 5.0"))
+    code, data = shell(capsys, "solve", design, "--out", tmp_path / "a")
+    assert code == 1
+    assert data["verdicts"][0]["margin"] < 0
+    changed(design, ("temperature_degC = 23.0\ncycles", "temperature_degC = 80.0\ncycles"))
+    code, data = shell(capsys, "solve", design, "--out", tmp_path / "b")
+    assert code == 2
+    assert "80" in " ".join(data["verdicts"][0]["reasons"])
+
+
+@pytest.mark.parametrize(
+    ("swap", "words"),
+    [
+        (("[grid]", "[gird]"), "grid"),
+        (('unit = "mm"', ""), "unit"),
+        (('mesh = "pad.stl"', 'mesh = "none.stl"'), "none.stl"),
+        (('side = "z+"', 'side = "up"'), "side"),
+        (("pressure_MPa = 0.02", "pressure_MPa = nan"), "pressure_MPa"),
+        (('fixed = true', 'slide = ["x", "y"]'), "not held"),
+        (('profile = "invented-coarse"', 'profile = "invented-corase"'), "invented-coarse"),
+        (("format = 1", "format = 99"), "99"),
+        (('region = "top"\npressure', 'region = "tpo"\npressure'), "top"),
+    ],
+)
+def test_bad_input_is_named_and_nothing_is_left(design, tmp_path, capsys, swap, words):
+    changed(design, swap)
+    out = tmp_path / "out"
+    code, data = shell(capsys, "run", design, "--out", out)
+    assert code == 3, data
+    assert words in data["error"]
+    assert "Traceback" not in data["error"]
+    assert not (out / "stack").exists()
+    assert not (out / "report.html").exists()
+
+
+def test_bad_materials(design, capsys, tmp_path):
+    soft = design.parent / "measured-soft.toml"
+    good = soft.read_text()
+    for old, new, words in (
+        ("value = 1.0\nlow = 1.0\nhigh = 1.0", "value = -1.0\nlow = -1.0\nhigh = -1.0", "E_MPa"),
+        ("value = 0.45\nlow = 0.45\nhigh = 0.45", "value = 0.5\nlow = 0.5\nhigh = 0.5", "nu"),
+    ):
+        assert old in good
+        soft.write_text(good.replace(old, new))
+        code, data = shell(capsys, "solve", design, "--out", tmp_path / "out")
+        assert code == 3
+        assert words in data["error"]
+        assert "measured-soft.toml" in data["error"]
+
+
+def test_words_that_are_no_command(capsys):
+    assert cli.main(["runn"]) == 3
+    assert "runn" in capsys.readouterr().err
+    assert cli.main(["run"]) == 3
+
+
+def test_a_cancelled_run_goes_on(design, tmp_path):
+    out = tmp_path / "out"
+    flag = CancelFlag()
+
+    class StopInTheStack:
+        def report(self, stage, *, done, total, **figures):
+            if stage == "writing layers" and done:
+                flag.cancel()
+            flag.report(stage, done=done, total=total, **figures)
+
+    with pytest.raises(Cancelled):
+        run(design, out, monitor=StopInTheStack())
+    assert not (out / "stack").exists()
+    again = run(design, out)
+    fresh = run(design, tmp_path / "other")
+    for one, two in zip(again.stack.channels, fresh.stack.channels, strict=True):
+        assert one.sha256 == two.sha256
+    assert again.part == fresh.part
+    np.testing.assert_array_equal(
+        again.data.results["press"].displacement, fresh.data.results["press"].displacement
+    )
+
+
+def test_ctrl_c_in_the_shell(design, tmp_path):
+    out = tmp_path / "out"
+    environment = {**os.environ, "PYTHONUNBUFFERED": "1"}
+    words = [sys.executable, "-m", "voxelmat", "run", str(design), "--out", str(out)]
+    process = subprocess.Popen(words, stderr=subprocess.PIPE, env=environment, text=True)
+    for line in process.stderr:
+        if line.startswith("finding regions"):
+            process.send_signal(signal.SIGINT)
+            break
+    _, rest = process.communicate(timeout=120)
+    assert process.returncode == 4, rest
+    assert "call the same command again" in rest
+    assert "Traceback" not in rest
+    assert not (out / "report.html").exists()
+
+
+def test_two_runs_into_one_folder(design, tmp_path, capsys):
+    out = tmp_path / "out"
+    told = []
+
+    class SecondRun:
+        def report(self, stage, *, done, total, **figures):
+            if not told:
+                told.append(subprocess.run(
+                    [sys.executable, "-m", "voxelmat", "run", str(design), "--out", str(out),
+                     "--quiet"],
+                    capture_output=True, text=True, check=False, timeout=120,
+                ))  # fmt: skip
+
+    assert run(design, out, monitor=SecondRun()).exit_code == 0
+    assert told[0].returncode == 4
+    assert "Another run" in told[0].stderr
+
+
+def test_out_is_a_file(design, tmp_path, capsys):
+    (tmp_path / "out").write_text("mine")
+    code, data = shell(capsys, "run", design, "--out", tmp_path / "out")
+    assert code == 4
+    assert "out" in data["error"]
+    assert (tmp_path / "out").read_text() == "mine"
+
+
+def test_unknown_stage(design, tmp_path):
+    with pytest.raises(InputError, match="stack"):
+        run(design, tmp_path / "out", stages=("stacks",))
+
+
+def test_importing_is_light():
+    code = (
+        "import sys, time; t = time.perf_counter(); import voxelmat; t = time.perf_counter() - t; "
+        "bad = [m for m in ('numba', 'pyvista', 'ipywidgets', 'scipy', 'numpy') "
+        "if m in sys.modules]; print(bad, t)"
+    )
+    told = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, check=True)
+    bad, seconds = told.stdout.rsplit(maxsplit=1)
+    assert bad == "[]"
+    assert float(seconds) < 0.3
+
+
+def test_public_names():
+    import voxelmat
+
+    start = time.perf_counter()
+    for name in voxelmat.__all__:
+        assert getattr(voxelmat, name) is not None
+    assert time.perf_counter() - start < 60
+    with pytest.raises(AttributeError, match="nothing"):
+        _ = voxelmat.nothing
