@@ -1,0 +1,1 @@
+"""Screens: read-only views of parts, results and stacks in a notebook."""

@@ -14,6 +14,7 @@ from voxelmat.model.surface import Faces, exposed_faces
 __all__ = ["Camera", "Shot", "draw_faces", "faces_of_cut"]
 
 _BACKGROUND = 255
+_PIXELS_A_VOXEL = 40
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -150,7 +151,7 @@ def draw_faces(
         Voxel edges, mm.
     camera : Camera, optional
     width : int
-        Columns of the picture.
+        Columns of the picture, at most.
     around : Faces, optional
         What the picture is to have room for, so that several come out at one scale.
 
@@ -160,7 +161,11 @@ def draw_faces(
     """
     camera = camera or Camera()
     axes = camera.axes()
-    left, top, pixel, rows = _picture_frame(_box_corners(around or faces, spacing), axes, width)
+    box = _box_corners(around or faces, spacing)
+    # A voxel larger than this many pixels would only cost time.
+    across = float(np.ptp(box @ axes[0])) * 1.06
+    width = max(64, min(width, round(across / max(spacing) * _PIXELS_A_VOXEL)))
+    left, top, pixel, rows = _picture_frame(box, axes, width)
     facing = axes[2][faces.axis] * faces.side > 0
     seen = faces.select(facing)
     colour = rgb[facing] * _shade(seen, axes)[:, None]

@@ -1,0 +1,273 @@
+"""What the views draw: a part, a result or a stack turned into slices, surfaces and a table."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass, field
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from voxelmat.model.html import part_table, table
+from voxelmat.model.part import Part
+from voxelmat.model.result import StaticResult
+from voxelmat.units import number, quantity
+from voxelmat.workbench.voxfaces import Quads, coarser, cut_mask, quads_of
+from voxelmat.workflow.colours import palette_rgb, resin_colours
+from voxelmat.workflow.report_fields import magnification
+
+__all__ = ["Field", "Shown", "of_part", "of_result"]
+
+AXES = "xyz"
+Rgb = NDArray[np.uint8]
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Field:
+    """Something that has a colour in every voxel.
+
+    Attributes
+    ----------
+    name : str
+        With its unit.
+    slice_rgb : callable
+        ``slice_rgb(axis, index)``: the slice as an image, shape (rows, columns, 3), the later
+        of the two other axes upwards.
+    legend : dict
+        ``items``: colour and text each; or ``ramp``: colours, low and high.
+    """
+
+    name: str
+    slice_rgb: Callable[[str, int], Rgb]
+    legend: dict[str, Any]
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Shown:
+    """What a view needs to know.
+
+    Attributes
+    ----------
+    title : str
+    html : str
+        A table with units.
+    axes : tuple of str
+        Axes that slices can be taken across.
+    counts : dict
+        Slices across each of these axes.
+    best_axis : str
+        The one whose slices show most.
+    size_mm : callable
+        ``size_mm(axis)``: width and height of a slice.
+    where : callable
+        ``where(axis, index)``: the place of a slice, in words.
+    fields : tuple of Field
+    surface : callable
+        ``surface(axis, share)``: faces and their colours, cut away below `share` along `axis`.
+    legend : dict
+        Of the surface's colours.
+    note : str
+        Written into every picture in space.
+    """
+
+    title: str
+    html: str
+    axes: tuple[str, ...]
+    counts: dict[str, int]
+    best_axis: str
+    size_mm: Callable[[str], tuple[float, float]]
+    where: Callable[[str, int], str]
+    fields: tuple[Field, ...]
+    surface: Callable[[str, float], tuple[Quads, Rgb]]
+    legend: dict[str, Any] = field(default_factory=dict)
+    note: str = ""
+
+
+def picture_of(array: NDArray[Any], axis: str, index: int) -> NDArray[Any]:
+    """A slice of an ``[i, j, k]`` array as an image with its later axis upwards."""
+    return np.asarray(np.take(array, index, axis=AXES.index(axis)).T[::-1])
+
+
+def _material_legend(part: Part) -> dict[str, Any]:
+    items = [{"colour": c, "text": n} for n, c in resin_colours(part).items()]
+    if any(len(b.fractions) > 1 for b in part.palette):
+        items.append({"colour": "transparent", "text": "blends lie between"})
+    return {"items": items}
+
+
+def _material_field(part: Part) -> Field:
+    colours = palette_rgb(part)
+
+    def slice_rgb(axis: str, index: int) -> Rgb:
+        solid = picture_of(part.solid, axis, index)
+        rgb = colours[picture_of(part.labels, axis, index)]
+        return np.asarray(np.where(solid[..., None], rgb, np.uint8(255)))
+
+    return Field(name="material", slice_rgb=slice_rgb, legend=_material_legend(part))
+
+
+def _lut(name: str) -> Rgb:
+    from matplotlib import colormaps
+
+    return np.asarray(np.rint(255 * colormaps[name](np.arange(256))[:, :3]), dtype=np.uint8)
+
+
+def _ramp(lut: Rgb, low: str, high: str) -> dict[str, Any]:
+    picked = lut[:: 255 // 15]
+    colours = ["#{:02x}{:02x}{:02x}".format(*c) for c in picked]
+    return {"ramp": {"colours": colours, "low": low, "high": high}}
+
+
+def scalar_field(
+    name: str,
+    unit: str,
+    values: NDArray[np.floating[Any]],
+    solid: NDArray[np.bool_],
+    cmap: str,
+    decades: float | None = None,
+) -> tuple[Field, Callable[[NDArray[np.floating[Any]]], Rgb]]:
+    """A field of numbers, linear from 0 or over some decades below its largest value.
+
+    Returns the field, and the function from values to colours.
+    """
+    top = max(float(np.max(values, where=solid, initial=0.0)), 1e-30)
+    lut = _lut(cmap)
+
+    def colour(v: NDArray[np.floating[Any]]) -> Rgb:
+        if decades is None:
+            share = v / top
+        else:
+            share = 1.0 + np.log10(np.maximum(v, 1e-30) / top) / decades
+        return np.asarray(lut[np.clip(255.0 * share, 0, 255).astype(np.uint8)])
+
+    def slice_rgb(axis: str, index: int) -> Rgb:
+        inside = picture_of(solid, axis, index)[..., None]
+        rgb = colour(picture_of(values, axis, index))
+        return np.asarray(np.where(inside, rgb, np.uint8(255)))
+
+    if decades is None:
+        low = quantity(0.0, unit)
+    else:
+        low = f"{quantity(top * 10**-decades, unit)} or less, logarithmic"
+    ramp = _ramp(lut, low, quantity(top, unit))
+    return Field(name=f"{name}, {unit}", slice_rgb=slice_rgb, legend=ramp), colour
+
+
+def _slices_of(part: Part) -> dict[str, Any]:
+    """What `Shown` says of the slices of anything on a part's grid."""
+    grid = part.grid
+    span = [u - o for u, o in zip(grid.upper, grid.origin, strict=True)]
+
+    def size_mm(axis: str) -> tuple[float, float]:
+        u, v = (span[a] for a in range(3) if AXES[a] != axis)
+        return u, v
+
+    def where(axis: str, index: int) -> str:
+        a = AXES.index(axis)
+        place = round(grid.centres()[a][index], 3) + 0.0
+        return f"{axis} = {place:g} mm ({index + 1} of {grid.shape[a]})"
+
+    return {
+        "axes": ("x", "y", "z"),
+        "counts": dict(zip(AXES, grid.shape, strict=True)),
+        "best_axis": AXES[int(np.argmin(span))],
+        "size_mm": size_mm,
+        "where": where,
+    }
+
+
+def of_part(part: Part) -> Shown:
+    """A part in the colours of its materials."""
+    drawn, step = coarser(part)
+    colours = palette_rgb(part)
+
+    def surface(axis: str, share: float) -> tuple[Quads, Rgb]:
+        quads = quads_of(drawn, cut_mask(drawn, AXES.index(axis), share))
+        return quads, colours[drawn.labels[tuple(quads.voxel.T)]]
+
+    return Shown(
+        title=part.name,
+        html=part_table(part),
+        fields=(_material_field(part),),
+        surface=surface,
+        legend=_material_legend(part),
+        note="" if step == 1 else f"preview: every {step}th voxel is drawn",
+        **_slices_of(part),
+    )
+
+
+def _node_to_voxel(values: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Mean over the eight corners of each voxel."""
+    for axis in range(3):
+        n = values.shape[axis] - 1
+        values = 0.5 * (
+            np.take(values, range(n), axis=axis) + np.take(values, range(1, n + 1), axis=axis)
+        )
+    return values
+
+
+def of_result(result: StaticResult) -> Shown:
+    """A solved load case: the deformed part coloured by how far it moved."""
+    part = result.part
+    moved = _node_to_voxel(result.size)
+    move, colour = scalar_field("displacement", "mm", moved, part.solid, "viridis")
+    stress, _ = scalar_field(
+        "von Mises stress", "MPa", result.von_mises, part.solid, "cividis", 4.0
+    )
+    factor = magnification(result)
+    shift = factor * result.displacement
+
+    def surface(axis: str, share: float) -> tuple[Quads, Rgb]:
+        quads = quads_of(part, cut_mask(part, AXES.index(axis), share), shift)
+        return quads, colour(moved[tuple(quads.voxel.T)])
+
+    return Shown(
+        title=f"{part.name}, load case {result.load_case.name}",
+        html=result_table(result),
+        fields=(move, stress, _material_field(part)),
+        surface=surface,
+        legend=move.legend,
+        note=f"deformed {factor:g} times as much as in truth",
+        **_slices_of(part),
+    )
+
+
+def result_table(result: StaticResult) -> str:
+    """The figures of a result, with units."""
+    size = result.size
+    at = np.unravel_index(int(size.argmax()), size.shape)
+    place = [float(n[i]) for n, i in zip(result.part.grid.nodes(), at, strict=True)]
+    strain, turn = result.largest_strain, result.largest_rotation
+    rows = [
+        ["largest displacement", quantity(float(size.max()), "mm"), _at(place)],
+        *[
+            [f"mean movement along load '{k}'", quantity(v, "mm"), ""]
+            for k, v in result.load_displacement.items()
+        ],
+        *[
+            [f"reaction of support '{k}'", ", ".join(number(f) for f in v) + " N", "along x, y, z"]
+            for k, v in result.reactions.items()
+        ],
+        ["largest strain", f"{number(100 * strain.value)} %", _at(strain.place_mm)],
+        ["largest rotation", f"{number(float(np.degrees(turn.value)))}°", _at(turn.place_mm)],
+        ["strain energy", quantity(result.energy, "mJ"), ""],
+        [
+            "solver",
+            f"{result.iterations} iterations",
+            f"residual {result.residual:.1e} of the load",
+        ],
+    ]
+    caption = f"{result.part.name}, load case '{result.load_case.name}'"
+    notes = "".join(f"<p>{_escape(c)}</p>" for c in result.cautions)
+    return table(["figure", "value", "note"], rows, caption) + notes
+
+
+def _escape(text: str) -> str:
+    from html import escape
+
+    return escape(text)
+
+
+def _at(place: Any) -> str:
+    return "at " + ", ".join(number(p + 0.0) for p in place) + " mm"

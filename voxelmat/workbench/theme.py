@@ -1,0 +1,21 @@
+"""The scripts and the style sheet of the views, read from the package's own files."""
+
+from __future__ import annotations
+
+from importlib.resources import files
+
+__all__ = ["script", "style"]
+
+
+def _text(name: str) -> str:
+    return (files("voxelmat.workbench") / "static" / name).read_text("utf-8")
+
+
+def script(name: str) -> str:
+    """One view's script, with the pieces that all share before it."""
+    return _text("helpers.js") + _text(name)
+
+
+def style() -> str:
+    """The style sheet of all views."""
+    return _text("views.css")
