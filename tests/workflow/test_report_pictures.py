@@ -11,6 +11,7 @@ from PIL import Image
 from voxelmat.model.blend import EMPTY, Blend
 from voxelmat.model.grid import VoxelGrid
 from voxelmat.model.part import Part
+from voxelmat.model.surface import carriers
 from voxelmat.workflow.colours import OKABE_ITO, palette_rgb, resin_colours
 from voxelmat.workflow.depth import Camera, draw_faces, faces_of_cut
 from voxelmat.workflow.report_fields import (
@@ -119,12 +120,13 @@ def test_the_near_side_hides_the_far_side(made_up):
 
 def test_cut_faces_close_the_hole(made_up):
     part = made_up.grip()
-    shown = part.solid.copy()
+    solid = carriers(part)
+    shown = solid.copy()
     shown[:, :6, :] = False
     faces, cut = faces_of_cut(part, shown)
     area = faces.vector_area.sum(axis=0)
     assert area == pytest.approx(np.zeros(3), abs=1e-9)  # closed surface
-    assert cut.sum() == (part.solid[:, 5, :] & shown[:, 6, :]).sum()
+    assert cut.sum() == (solid[:, 5, :] & shown[:, 6, :]).sum()
 
 
 @pytest.mark.parametrize("scale", [1e-6, 0.003, 1.0, 77.0])

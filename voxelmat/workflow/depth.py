@@ -9,7 +9,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from voxelmat.model.part import Part
-from voxelmat.model.surface import Faces, exposed_faces
+from voxelmat.model.surface import Faces, carriers, exposed_faces
 
 __all__ = ["Camera", "Shot", "draw_faces", "faces_of_cut"]
 
@@ -70,7 +70,7 @@ def faces_of_cut(part: Part, shown: NDArray[np.bool_]) -> tuple[Faces, NDArray[n
     Cut faces border material that is not shown; their normal is that of the voxel face, while
     the others keep the true normal of the whole part's surface.
     """
-    solid = part.solid
+    solid = carriers(part)
     shown = shown & solid
     outer = exposed_faces(part)
     outer = outer.select(shown[tuple(outer.voxel.T)])
