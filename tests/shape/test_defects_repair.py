@@ -14,6 +14,7 @@ from voxelmat.shape.defects import find_defects, require_sound
 from voxelmat.shape.repair import mend
 from voxelmat.shape.shells import edges_of, shells_of
 from voxelmat.shape.solid import box, cylinder, icosphere, revolve, tube
+from voxelmat.shape.voxelise import grid_for, voxelise
 
 BALL = icosphere(2, 10, name="ball")
 
@@ -163,6 +164,10 @@ def test_loose_corners_are_welded():
 def test_repeated_and_collapsed_faces_are_dropped():
     twice = remade(BALL, faces=np.vstack([BALL.faces, BALL.faces[:2], [[5, 5, 9]]]))
     assert {"duplicate", "degenerate"} <= kinds(twice)
+    collapsed = remade(BALL, faces=np.vstack([BALL.faces, [[5, 5, 9]]]))
+    assert not any(d.blocks for d in find_defects(collapsed))
+    grid = grid_for(BALL, 2.0)
+    assert (voxelise(collapsed, grid).distance == voxelise(BALL, grid).distance).all()
     fixed, told = mend(twice)
     assert len(fixed.faces) == len(BALL.faces)
     assert "3 faces" in told[0]

@@ -50,10 +50,13 @@ def edges_of(faces: NDArray[np.int32]) -> Edges:
     which = which.reshape(-1)
     up = np.bincount(which[upwards], minlength=len(key))
     uses = np.bincount(which, minlength=len(key))
+    ends = np.stack([key // span, key % span], axis=1)
+    # The side of a collapsed face from a corner to itself bounds nothing.
+    point = ends[:, 0] == ends[:, 1]
     return Edges(
-        ends=np.stack([key // span, key % span], axis=1),
-        uses=uses,
-        turn=2 * up - uses,
+        ends=ends,
+        uses=np.where(point, 2, uses),
+        turn=np.where(point, 0, 2 * up - uses),
         of_face=which.reshape(-1, 3),
         upwards=upwards.reshape(-1, 3),
     )
