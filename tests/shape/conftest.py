@@ -1,0 +1,6 @@
+"""Makes the slow twins beside this folder importable from its tests."""
+
+import sys
+from pathlib import Path
+
+sys.path.insert(0, str(Path(__file__).resolve().parents[1]))
