@@ -9,8 +9,18 @@ import pytest
 
 from voxelmat.errors import ResourceError
 from voxelmat.model.requirement import Requirement, judge
+from voxelmat.model.result import Extreme
 from voxelmat.workflow.report import STANDING_CAUTIONS, RunData, answer, render, write_report
-from voxelmat.workflow.report_tables import asked, measured, percent, resin_table, verdict_rows
+from voxelmat.workflow.report_tables import (
+    asked,
+    expectation,
+    found_table,
+    measured,
+    percent,
+    place,
+    resin_table,
+    verdict_rows,
+)
 
 VOID = {"meta", "link", "img", "br", "input", "hr"}
 
@@ -183,6 +193,21 @@ def test_percent_and_answers():
     part = object.__new__(RunData)
     object.__setattr__(part, "verdicts", (one,))
     assert answer(part) == "Of 1 requirement: 1 met."
+
+
+def test_a_large_compression_is_not_called_small(run, made_up):
+    result = made_up.made_up_result(run.part, made_up.palm_case())
+    object.__setattr__(result, "largest_strain", Extreme(value=-0.19, place_mm=(1.0, 2.0, 3.0)))
+    table = found_table(RunData(name="x", part=run.part, results={"palm": result}), "palm")
+    (row,) = [r for r in table.rows if r[0] == "largest strain"]
+    assert row[1] == "-19.0 %"
+    assert row[2].startswith("above the method's limit of 10.0 %")
+
+
+def test_small_parts_of_a_vector_are_nothing_and_expectations_are_words():
+    assert place((1.8e-9, -150.0, 4e-8)) == "0, -150, 0"
+    assert expectation(60.001, 60.0) == "as the design expects (60.0 N)"
+    assert expectation(30.0, 60.0) == "the design expects 60.0 N, so this is −50 %"
 
 
 def test_resin_table_sums_up(run):

@@ -242,11 +242,11 @@ def result_table(result: StaticResult) -> str:
     rows = [
         ["largest displacement", quantity(float(size.max()), "mm"), _at(place)],
         *[
-            [f"mean movement along load '{k}'", quantity(v, "mm"), ""]
+            [f"mean movement along {k}", quantity(v, "mm"), ""]
             for k, v in result.load_displacement.items()
         ],
         *[
-            [f"reaction of support '{k}'", ", ".join(number(f) for f in v) + " N", "along x, y, z"]
+            [f"reaction of {k}", _vector(v) + " N", "along x, y, z"]
             for k, v in result.reactions.items()
         ],
         ["largest strain", f"{number(100 * strain.value)} %", _at(strain.place_mm)],
@@ -269,5 +269,11 @@ def _escape(text: str) -> str:
     return escape(text)
 
 
+def _vector(values: Any) -> str:
+    """Components; what is nothing beside the largest is 0."""
+    top = max(abs(v) for v in values)
+    return ", ".join(number(v if abs(v) > 1e-6 * top else 0.0) for v in values)
+
+
 def _at(place: Any) -> str:
-    return "at " + ", ".join(number(p + 0.0) for p in place) + " mm"
+    return f"at {_vector(place)} mm"

@@ -70,8 +70,9 @@ def percent(share: float) -> str:
 
 
 def place(point: Sequence[float]) -> str:
-    """A place in mm."""
-    return ", ".join(number(p + 0.0) for p in point)
+    """The components of a place or a force; what is nothing beside the largest is 0."""
+    top = max(abs(p) for p in point)
+    return ", ".join(number(p if abs(p) > 1e-6 * top else 0.0) for p in point)
 
 
 def asked(requirement: Requirement) -> str:
@@ -147,7 +148,7 @@ def resin_table(part: Part) -> Table:
                 number(masses[name] * 1e6),
                 number(100.0 * volume / total),
                 number(record.E.value),
-                f"{number(low)} to {number(high)}",
+                f"{number(low)} to {number(high)}" if low < high else "as stated",
             )
         )
     rows.append(
@@ -180,7 +181,10 @@ def _held(support: Support) -> str:
 
 def expectation(force: float, expected: float) -> str:
     """How a resultant compares with what the design expects, in words."""
-    return f"the design expects {number(expected)} N, so this is {percent(force / expected - 1)}"
+    off = force / expected - 1
+    if abs(off) < 1e-3:
+        return f"as the design expects ({number(expected)} N)"
+    return f"the design expects {number(expected)} N, so this is {percent(off)}"
 
 
 def _load_words(load: Load) -> tuple[str, str, str]:
@@ -226,13 +230,13 @@ def found_table(run: RunData, name: str) -> Table:
         force = math.sqrt(sum(f * f for f in result.resultants[key]))
         rows.append(
             (
-                f"mean movement along load '{key}'",
+                f"mean movement along {key}",
                 quantity(move, "mm"),
                 f"of {quantity(force, 'N')}",
             )
         )
     for key, force3 in result.reactions.items():
-        rows.append((f"reaction of support '{key}'", f"{place(force3)} N", "along x, y, z"))
+        rows.append((f"reaction of {key}", f"{place(force3)} N", "along x, y, z"))
     safety = run.safety.get(name)
     if safety is not None and np.isfinite(safety).any():
         spot = np.unravel_index(int(np.nanargmin(safety)), safety.shape)
@@ -257,7 +261,7 @@ def found_table(run: RunData, name: str) -> Table:
 
 
 def _against(value: float, limit: float, unit: str, at: Sequence[float]) -> str:
-    side = "above" if value > limit else "below"
+    side = "above" if abs(value) > limit else "below"
     gap = "" if unit == "°" else " "
     return f"{side} the method's limit of {number(limit)}{gap}{unit}, at {place(at)} mm"
 
@@ -275,7 +279,7 @@ def compared_table(run: RunData) -> Table | None:
         designed = run.results[name]
         pairs = [("largest displacement", float(designed.size.max()), float(printed.size.max()))]
         pairs += [
-            (f"mean along load '{k}'", v, printed.load_displacement[k])
+            (f"mean along {k}", v, printed.load_displacement[k])
             for k, v in designed.load_displacement.items()
             if k in printed.load_displacement
         ]
