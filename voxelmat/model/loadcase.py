@@ -152,8 +152,10 @@ class PressureMap:
         axis, _ = parse_side(self.side, self.region.name)
         first = dict(zip([a for a in range(3) if a != axis], self.first_cell, strict=True))
         index = []
-        for direction, step in ((self.row_direction, self.cell[1]),
-                                (self.column_direction, self.cell[0])):
+        for direction, step in (
+            (self.row_direction, self.cell[1]),
+            (self.column_direction, self.cell[0]),
+        ):
             a, sense = parse_side(direction, self.region.name)
             index.append(np.floor(sense * (points[:, a] - first[a]) / step + 0.5).astype(np.intp))
         return index[0], index[1]
@@ -163,8 +165,9 @@ class PressureMap:
         row, column = self.cell_of(points)
         rows, columns = self.values.shape
         inside = (row >= 0) & (row < rows) & (column >= 0) & (column < columns)
-        return np.where(inside, self.values[np.where(inside, row, 0), np.where(inside, column, 0)],
-                        0.0)
+        return np.where(
+            inside, self.values[np.where(inside, row, 0), np.where(inside, column, 0)], 0.0
+        )
 
     @property
     def centre(self) -> tuple[float, float]:

@@ -56,9 +56,7 @@ def solid_nodes(solid: Bools) -> Bools:
     """Nodes that touch a solid voxel; shape one larger than `solid` along each axis."""
     out = np.zeros(tuple(n + 1 for n in solid.shape), dtype=bool)
     for corner in range(8):
-        at = tuple(
-            slice(corner >> a & 1, (corner >> a & 1) + solid.shape[a]) for a in range(3)
-        )
+        at = tuple(slice(corner >> a & 1, (corner >> a & 1) + solid.shape[a]) for a in range(3))
         out[at] |= solid
     return out
 
