@@ -44,7 +44,7 @@ def _owned(array: object, dtype: type, shape: tuple[int, int, int], name: str) -
             )
     if given.dtype == dtype and given.flags.f_contiguous and not given.flags.writeable:
         return given
-    out = np.array(given, dtype=dtype, order="F", copy=True)
+    out: NDArray[Any] = np.array(given, dtype=dtype, order="F", copy=True)
     out.flags.writeable = False
     return out
 
@@ -138,7 +138,7 @@ class Part:
         """Solid fraction of each voxel that is solved, 0 to 1; 0 in the others."""
         if self.occupancy is None:
             return np.asarray(self.labels > 0, dtype=np.float32)
-        return np.where(self.solid, self.occupancy, 0) / np.float32(255)
+        return np.divide(np.where(self.solid, self.occupancy, 0), 255, dtype=np.float32)
 
     @property
     def outline(self) -> str:
@@ -183,7 +183,8 @@ class Part:
 
     def palette_density(self) -> NDArray[np.float64]:
         """Density of each palette entry by volume fractions, tonne/mm^3."""
-        return self.palette_fractions() @ np.array([m.density.value for m in self.resins])
+        density = np.array([m.density.value for m in self.resins])
+        return np.asarray(self.palette_fractions() @ density)
 
     def printed_labels(self) -> NDArray[np.bool_]:
         """For each palette entry: is it laid by the printer (not empty, not bought-in)?"""
