@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import re
 from collections.abc import Mapping
+from dataclasses import replace
 from pathlib import Path
 from typing import Any, NoReturn
 
@@ -70,7 +71,7 @@ def load_design(path: str | Path) -> Design:
                 key=key,
             )
         inputs[name if not Path(name).is_absolute() else Path(name).name] = file_digest(where)
-    object.__setattr__(design, "inputs", inputs)
+    design = replace(design, inputs=inputs)
     _check_resins(design)
     return design
 

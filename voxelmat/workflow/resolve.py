@@ -217,7 +217,9 @@ def _load(design: Design, entry: LoadEntry, regions: Mapping[str, Region], part:
                 region=None if entry.region is None else region, acceleration=(x, y, z)
             )
         case "spring":
-            return GroundSpring(region=_on_material(region, part), stiffness=_three(given["stiffness_N_mm"]))
+            return GroundSpring(
+                region=_on_material(region, part), stiffness=_three(given["stiffness_N_mm"])
+            )
         case "pressure map":
             values = read_pressure_map(
                 design.file(given["file"]), unit=given.get("unit"), white_MPa=given.get("white_MPa")
