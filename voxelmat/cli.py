@@ -57,7 +57,10 @@ def _parser() -> argparse.ArgumentParser:
     def design(sub: argparse.ArgumentParser, out: str = "out") -> None:
         sub.add_argument("design", type=Path, metavar="DESIGN.toml")
         sub.add_argument(
-            "--out", type=Path, default=Path(out), metavar="FOLDER",
+            "--out",
+            type=Path,
+            default=Path(out),
+            metavar="FOLDER",
             help=f"where results go, and where an interrupted run goes on (default: {out})",
         )
 
@@ -67,14 +70,34 @@ def _parser() -> argparse.ArgumentParser:
     design(command("stack", "write the bitmap stacks, read them back and check them"))
     sub = command("preflight", "check a stack that is on disk")
     sub.add_argument("stack", type=Path, metavar="STACK")
-    sub.add_argument("--design", type=Path, metavar="DESIGN.toml",
-                     help="compare volumes with this design too")
-    sub.add_argument("--out", type=Path, default=Path("out"), metavar="FOLDER",
-                     help="where the design's run left its part (default: out)")
+    sub.add_argument(
+        "--design", type=Path, metavar="DESIGN.toml", help="compare volumes with this design too"
+    )
+    sub.add_argument(
+        "--out",
+        type=Path,
+        default=Path("out"),
+        metavar="FOLDER",
+        help="where the design's run left its part (default: out)",
+    )
     design(command("report", "write the report of what a run left in its folder"))
     sub = command("materials", "show the resin library")
-    sub.add_argument("--file", type=Path, action="append", default=[], metavar="RESIN.toml",
-                     help="add a material file of your own (may be repeated)")
+    sub.add_argument(
+        "--file",
+        type=Path,
+        action="append",
+        default=[],
+        metavar="RESIN.toml",
+        help="add a material file of your own (may be repeated)",
+    )
+    sub.add_argument(
+        "--shore-a",
+        type=float,
+        action="append",
+        default=[],
+        metavar="S",
+        help="show the modulus that a Shore A hardness stands for, as a band",
+    )
     return parser
 
 
@@ -116,7 +139,8 @@ def main(arguments: Sequence[str] | None = None) -> int:
     # Idle threads that spin cost more than they gain on the few cores of a desk machine.
     os.environ.setdefault("OMP_WAIT_POLICY", "passive")
     os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
-    code, data, text = 4, {}, ""
+    code, text = 4, ""
+    data: dict[str, Any] = {}
     try:
         code, data, text = _dispatch(options)
     except (InputError, FileFormatError) as error:

@@ -97,6 +97,4 @@ class ConsoleMonitor:
             return
         if stage not in self._tasks:
             self._tasks[stage] = self._bars.add_task(stage, total=total or None, figures=text)
-        self._bars.update(
-            self._tasks[stage], completed=done, total=total or None, figures=text
-        )
+        self._bars.update(self._tasks[stage], completed=done, total=total or None, figures=text)

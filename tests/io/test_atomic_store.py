@@ -84,9 +84,14 @@ def test_a_part_of_a_newer_format_is_refused(tmp_path):
 def test_a_full_disk_leaves_the_old_file(tmp_path):
     path = tmp_path / "a.txt"
     write_text(path, "before")
-    with pytest.raises(ResourceError, match="disk is full"), aside(path) as temporary:
-        temporary.write_text("half")
-        raise OSError(errno.ENOSPC, "no space")
+
+    def half_a_file():
+        with aside(path) as temporary:
+            temporary.write_text("half")
+            raise OSError(errno.ENOSPC, "no space")
+
+    with pytest.raises(ResourceError, match="disk is full"):
+        half_a_file()
     assert path.read_text() == "before"
     assert [p.name for p in tmp_path.iterdir()] == ["a.txt"]
 

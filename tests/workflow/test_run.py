@@ -135,6 +135,10 @@ E_high_MPa = [1.0, 7.5, 47.0, 310.0, 2000.0]
 def design(tmp_path):
     write_stl(box((12.0, 8.0, 2.0), name="plate"), tmp_path / "plate.stl")
     write_stl(box((12.0, 8.0, 4.0), (0.0, 0.0, 2.0), name="pad"), tmp_path / "pad.stl")
+    whole = (tmp_path / "pad.stl").read_bytes()
+    (tmp_path / "cut.stl").write_bytes(whole[:-30])
+    faces = int.from_bytes(whole[80:84], "little") - 1
+    (tmp_path / "open.stl").write_bytes(whole[:80] + faces.to_bytes(4, "little") + whole[84:-50])
     for name, kind, modulus, nu, colour in (
         ("measured-soft", "elastomer", 1.0, 0.45, "#56B4E9"),
         ("measured-hard", "rigid", 2000.0, 0.35, "#E69F00"),
@@ -228,10 +232,23 @@ def test_not_met_and_cannot_be_said(design, tmp_path, capsys):
         (('mesh = "pad.stl"', 'mesh = "none.stl"'), "none.stl"),
         (('side = "z+"', 'side = "up"'), "side"),
         (("pressure_MPa = 0.02", "pressure_MPa = nan"), "pressure_MPa"),
-        (('fixed = true', 'slide = ["x", "y"]'), "not held"),
+        (("fixed = true", 'slide = ["x", "y"]'), "not held"),
         (('profile = "invented-coarse"', 'profile = "invented-corase"'), "invented-coarse"),
         (("format = 1", "format = 99"), "99"),
         (('region = "top"\npressure', 'region = "tpo"\npressure'), "top"),
+        (('mesh = "pad.stl"\nunit = "mm"', 'mesh = "pad.stl"\nunit = "m"'), "Check the unit"),
+        (('mesh = "pad.stl"', 'mesh = "cut.stl"'), "cut.stl"),
+        (('mesh = "pad.stl"', 'mesh = "open.stl"'), "open"),
+        (('mesh = "plate.stl"', 'mesh = "pad.stl"'), "overlap"),
+        (("spacing_mm = [1.0, 1.0, 1.0]", "spacing_mm = [1.0, 0.0, 1.0]"), "spacing_mm"),
+        (
+            (
+                'name = "top"\nkind = "face"\nside = "z+"',
+                'name = "top"\nkind = "sphere"\ncentre_mm = [99, 0, 0]\nradius_mm = 3.0',
+            ),
+            "holds nothing",
+        ),
+        (("[print]", '[print]\norientation = ["x 45"]'), "45"),
     ],
 )
 def test_bad_input_is_named_and_nothing_is_left(design, tmp_path, capsys, swap, words):
@@ -258,6 +275,27 @@ def test_bad_materials(design, capsys, tmp_path):
         assert code == 3
         assert words in data["error"]
         assert "measured-soft.toml" in data["error"]
+
+
+def test_a_part_too_large_for_the_tray(design, tmp_path, capsys):
+    write_stl(box((140.0, 90.0, 4.0), (0.0, 0.0, 2.0), name="pad"), tmp_path / "pad.stl")
+    code, data = shell(capsys, "stack", design, "--out", tmp_path / "out")
+    assert code == 3
+    assert "tray" in data["error"]
+    assert "invented-coarse" in data["error"]
+    assert not (tmp_path / "out" / "stack").exists()
+
+
+def test_hardness_as_a_band(capsys):
+    code, data = shell(capsys, "materials", "--shore-a", "60")
+    assert code == 0
+    row = data["hardness"][0]
+    # H1, Gent 1958 (from memory): Shore A 60 stands for 3.6051 MPa.
+    assert row["E_Gent_1958_MPa"] == pytest.approx(3.6051, abs=1e-4)
+    # log10 E = 0.0235 S - 0.6403 (from memory).
+    assert row["E_log_relation_MPa"] == pytest.approx(10 ** (0.0235 * 60 - 0.6403), rel=1e-9)
+    assert row["E_low_MPa"] < row["E_Gent_1958_MPa"] < row["E_high_MPa"]
+    assert cli.main(["materials", "--shore-a", "120"]) == 3
 
 
 def test_words_that_are_no_command(capsys):

@@ -17,9 +17,7 @@ from voxelmat.workflow.report_data import RunData
 __all__ = ["as_dict", "exit_code", "joined_verdicts", "summary_lines"]
 
 
-def joined_verdicts(
-    designed: Sequence[Verdict], printed: Sequence[Verdict]
-) -> tuple[Verdict, ...]:
+def joined_verdicts(designed: Sequence[Verdict], printed: Sequence[Verdict]) -> tuple[Verdict, ...]:
     """The verdicts on the design, each checked against the same one on the stack read back.
 
     Where the two differ there is no answer: the halftone moved the value across the limit, or
@@ -35,9 +33,7 @@ def joined_verdicts(
             f"as designed {quantity(first.value, unit)} ({first.status}), as printed "
             f"{quantity(second.value, unit)} ({second.status})"
         )
-        joined.append(
-            replace(first, status="cannot be said", reasons=(*first.reasons, reason))
-        )
+        joined.append(replace(first, status="cannot be said", reasons=(*first.reasons, reason)))
     return tuple(joined)
 
 

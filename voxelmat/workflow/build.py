@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import os
 from collections.abc import Mapping
 from dataclasses import dataclass, field
 from pathlib import Path
@@ -14,7 +15,9 @@ from voxelmat.io.materials import Library, load_library
 from voxelmat.io.mesh import read_mesh
 from voxelmat.model.blend import EMPTY, Blend
 from voxelmat.model.design import BodyEntry, Design
+from voxelmat.model.grid import VoxelGrid
 from voxelmat.model.loadcase import LoadCase
+from voxelmat.model.material import Material
 from voxelmat.model.mesh import TriangleMesh
 from voxelmat.model.part import Part
 from voxelmat.model.profile import PrintProfile
@@ -96,9 +99,8 @@ def build(design: Design | str | Path, *, monitor: Monitor = SILENT) -> Built:
         name = design.printing.profile
         profile = load_profile(design.file(name) if name.endswith(".toml") else name)
     bodies, notes, cautions = _bodies(design, monitor)
-    grid = grid_for(
-        [b.mesh for b in bodies], design.spacing_mm, margin_voxels=design.margin_voxels
-    )
+    grid = grid_for([b.mesh for b in bodies], design.spacing_mm, margin_voxels=design.margin_voxels)
+    _check_size(design, grid)
     assembly = assemble(bodies, grid, gaps=_gap_rules(design), monitor=monitor)
     for event in assembly.report:
         (cautions if event.kind == "caution" else notes).append(event.message)
@@ -113,6 +115,32 @@ def build(design: Design | str | Path, *, monitor: Monitor = SILENT) -> Built:
         profile=profile,
         notes=(*notes, *library.notes, *resolved.notes),
         cautions=(*cautions, *resolved.cautions),
+    )
+
+
+#: Bytes a voxel that making a part takes at its peak, and that no machine should be asked for.
+_BYTES_A_VOXEL = 24
+_FALLBACK_BYTES = 16 * 2**30
+
+
+def _check_size(design: Design, grid: VoxelGrid) -> None:
+    """Refuse a grid that cannot be held, most often a mesh read in the wrong unit."""
+    try:
+        memory = os.sysconf("SC_PHYS_PAGES") * os.sysconf("SC_PAGE_SIZE")
+    except (AttributeError, ValueError, OSError):  # not every system tells
+        memory = _FALLBACK_BYTES
+    needed = grid.n_voxels * _BYTES_A_VOXEL
+    if needed <= memory:
+        return
+    size = [n * h for n, h in zip(grid.shape, grid.spacing, strict=True)]
+    finer = (needed / memory) ** (1 / 3)
+    raise InputError(
+        f"The bodies span {size[0]:.4g} x {size[1]:.4g} x {size[2]:.4g} mm, which makes "
+        f"{grid.n_voxels:.3g} voxels and would need {needed / 2**30:.3g} GiB; this machine has "
+        f"{memory / 2**30:.3g}. Check the unit of each mesh (body.unit), or make the voxels "
+        f"{finer:.2g} times larger.",
+        file=design.file_name,
+        key="grid.spacing_mm",
     )
 
 
@@ -179,7 +207,7 @@ def _part(design: Design, library: Library, assembly: Assembly) -> Part:
     """Labels, palette and resins of an assembly; each body starts with its own blend."""
     palette: list[Blend] = [EMPTY]
     table = np.zeros(len(assembly.bodies) + 1, dtype=np.uint16)
-    bought = []
+    bought: list[Material] = []
     for n, entry in enumerate(design.bodies):
         if entry.bought_in is not None:
             material = entry.bought_in.material(library)

@@ -10,6 +10,7 @@ from voxelmat.errors import FileFormatError, InputError
 from voxelmat.io.design import load_design
 from voxelmat.io.materials import load_library
 from voxelmat.io.store import load_part
+from voxelmat.material.hardness import VALID_SHORE_A, modulus_from_shore_a
 from voxelmat.material.table import material_rows
 from voxelmat.model.part import Part
 from voxelmat.monitor import Monitor
@@ -132,9 +133,35 @@ _COLUMNS = (
 )
 
 
-def materials(*, file: Sequence[Path], monitor: Monitor) -> Answer:
-    """The resin library as a table."""
+def _hardness(values: Sequence[float]) -> Answer:
+    """What Shore A hardnesses stand for, by both relations."""
+    rows, lines = [], []
+    for value in values:
+        band = modulus_from_shore_a(value)
+        rows.append(
+            {
+                "shore_A": value,
+                "E_low_MPa": band.low,
+                "E_high_MPa": band.high,
+                "E_Gent_1958_MPa": band.gent,
+                "E_log_relation_MPa": band.log,
+                "in_range": band.in_range,
+            }
+        )
+        low, high = VALID_SHORE_A
+        beyond = "" if band.in_range else f"; extrapolated beyond Shore A {low:g} to {high:g}"
+        lines.append(
+            f"Shore A {number(value)}: E between {number(band.low)} and {number(band.high)} MPa "
+            f"(Gent 1958: {number(band.gent)}, logarithmic relation: {number(band.log)}{beyond})"
+        )
+    return 0, {"hardness": rows}, "\n".join(lines)
+
+
+def materials(*, file: Sequence[Path], shore_a: Sequence[float], monitor: Monitor) -> Answer:
+    """The resin library as a table, or the modulus behind a hardness."""
     del monitor  # nothing takes long here
+    if shore_a:
+        return _hardness(shore_a)
     library = load_library(file)
     rows = material_rows(library)
     texts = [[head for _, head in _COLUMNS]]

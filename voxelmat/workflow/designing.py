@@ -49,9 +49,7 @@ def optimised(
     """
     spec = design_spec(built)
     try:
-        return optimise(
-            built.part, built.load_cases, spec, monitor=monitor, checkpoint=checkpoint
-        )
+        return optimise(built.part, built.load_cases, spec, monitor=monitor, checkpoint=checkpoint)
     except InputError as error:
         if error.file is not None:
             raise

@@ -188,9 +188,7 @@ class _Run:
         if "report" in self.stages:
             with self.clock.stage("report"):
                 report = write_report(data, self.folder / "report.html", monitor=self.monitor)
-        result = RunResult(
-            data=data, built=built, folder=self.folder, stack=stack, report=report
-        )
+        result = RunResult(data=data, built=built, folder=self.folder, stack=stack, report=report)
         write_json(self.folder / "result.json", result.as_dict())
         return result
 
@@ -199,9 +197,7 @@ class _Run:
         if built.design.optimise is None or "optimise" not in self.stages:
             return None
         with self.clock.stage("optimise"):
-            found = optimised(
-                built, checkpoint=self.folder / "optimise.npz", monitor=self.monitor
-            )
+            found = optimised(built, checkpoint=self.folder / "optimise.npz", monitor=self.monitor)
         if found.cancelled:
             raise Cancelled(f"Stopped by the user while optimising: {found.reason}")
         return found
