@@ -1,0 +1,227 @@
+"""JupyterLab and Chromium for this folder's tests; where they are missing, a reason to skip."""
+
+from __future__ import annotations
+
+import functools
+import http.server
+import importlib.util
+import json
+import os
+import shutil
+import signal
+import socket
+import subprocess
+import sys
+import threading
+import time
+import urllib.request
+from pathlib import Path
+
+import pytest
+
+ROOT = Path(__file__).resolve().parents[2]
+FLAGS = [
+    "--no-sandbox", "--disable-gpu", "--disable-quic", "--no-first-run",
+    "--disable-background-networking", "--disable-component-update", "--disable-sync",
+]  # fmt: skip
+
+
+def _missing(reason):
+    """Skip on a machine that lacks something; in CI, which installs it, that is a failure."""
+    if os.environ.get("VOXELMAT_CI") == "1":
+        pytest.fail(f"VOXELMAT_CI is set, so this may not be skipped: {reason}")
+    pytest.skip(reason)
+
+
+@pytest.fixture(scope="session")
+def chromium():
+    """A headless browser."""
+    if importlib.util.find_spec("playwright") is None:
+        _missing("playwright is not installed: pip install playwright")
+    path = os.environ.get("CHROMIUM") or shutil.which("chromium") or shutil.which("chrome")
+    if path is None:
+        _missing("no Chromium found: apt-get install chromium, or name it in CHROMIUM")
+    from playwright.sync_api import sync_playwright
+
+    with sync_playwright() as play:
+        browser = play.chromium.launch(executable_path=path, args=FLAGS)
+        yield browser
+        browser.close()
+
+
+@pytest.fixture(scope="session")
+def gl():
+    """A machine that can draw with OpenGL."""
+    from voxelmat.workbench.glprobe import probe_gl
+
+    if not probe_gl().works:
+        _missing(probe_gl().reason)
+
+
+@pytest.fixture(scope="session")
+def made_up():
+    """The module `tests/fabricated.py`."""
+    spec = importlib.util.spec_from_file_location("fabricated", ROOT / "tests" / "fabricated.py")
+    module = importlib.util.module_from_spec(spec)
+    spec.loader.exec_module(module)
+    return module
+
+
+def _free_port():
+    with socket.socket() as s:
+        s.bind(("127.0.0.1", 0))
+        return s.getsockname()[1]
+
+
+def _settings(folder):
+    """No news, no look for updates: the tests need no network."""
+    place = folder / "settings" / "@jupyterlab" / "apputils-extension"
+    place.mkdir(parents=True)
+    quiet = {"fetchNews": "false", "checkForUpdates": False}
+    (place / "notification.jupyterlab-settings").write_text(json.dumps(quiet))
+
+
+@pytest.fixture(scope="session")
+def lab(tmp_path_factory):
+    """A JupyterLab of our own: its address and the folder of its notebooks."""
+    if importlib.util.find_spec("jupyterlab") is None:
+        _missing("jupyterlab is not installed")
+    folder = tmp_path_factory.mktemp("lab")
+    notebooks = folder / "notebooks"
+    notebooks.mkdir()
+    _settings(folder)
+    port = _free_port()
+    env = {
+        **os.environ,
+        "HOME": str(folder),
+        "JUPYTER_CONFIG_DIR": str(folder / "config"),
+        "JUPYTER_DATA_DIR": str(folder / "data"),
+        "JUPYTER_RUNTIME_DIR": str(folder / "runtime"),
+        "IPYTHONDIR": str(folder / "ipython"),
+        "JUPYTERLAB_SETTINGS_DIR": str(folder / "settings"),
+        "JUPYTERLAB_WORKSPACES_DIR": str(folder / "workspaces"),
+        "PYTHONPATH": f"{ROOT}{os.pathsep}{ROOT / 'tests'}",
+    }
+    command = [
+        sys.executable, "-m", "jupyterlab", "--no-browser", "--allow-root", "--ip=127.0.0.1",
+        f"--port={port}", "--ServerApp.port_retries=0", "--IdentityProvider.token=t",
+        "--LabApp.expose_app_in_browser=True", "--LabApp.extension_manager=readonly",
+        f"--ServerApp.root_dir={notebooks}",
+    ]  # fmt: skip
+    log_file = folder / "lab.log"
+    with log_file.open("w") as log:
+        server = subprocess.Popen(command, env=env, stdout=log, stderr=log, start_new_session=True)
+    base = f"http://127.0.0.1:{port}"
+    try:
+        _wait_for(f"{base}/api/status?token=t", server, log_file)
+        yield base, notebooks
+    finally:
+        os.killpg(server.pid, signal.SIGTERM)  # its own group: the server and its kernels
+        try:
+            server.wait(20)
+        except subprocess.TimeoutExpired:
+            os.killpg(server.pid, signal.SIGKILL)
+            server.wait(20)
+
+
+def _wait_for(address, server, log_file):
+    for _ in range(400):
+        if server.poll() is not None:
+            pytest.fail(log_file.read_text()[-3000:])
+        try:
+            with urllib.request.urlopen(address, timeout=1):
+                return
+        except OSError:
+            time.sleep(0.25)
+    pytest.fail("JupyterLab did not answer within 100 s.\n" + log_file.read_text()[-3000:])
+
+
+class Notebook:
+    """One notebook in one browser page."""
+
+    def __init__(self, page, base, folder):
+        self.page, self._base, self._folder = page, base, folder
+
+    def open(self, name, cells):
+        """Write a notebook of code cells and open it with an idle kernel."""
+        import nbformat
+
+        book = nbformat.v4.new_notebook()
+        book.cells = [nbformat.v4.new_code_cell(c) for c in cells]
+        book.metadata["kernelspec"] = {"name": "python3", "display_name": "Python 3"}
+        nbformat.write(book, self._folder / name)
+        self.page.goto(f"{self._base}/lab/tree/{name}?token=t&reset")
+        self.page.wait_for_function(
+            "window.jupyterapp?.shell.currentWidget?.sessionContext?.session?.kernel?.status"
+            " === 'idle'",
+            timeout=90_000,
+        )
+
+    def run_all(self):
+        """Run every cell; an error in one of them fails the test."""
+        self.page.evaluate("window.jupyterapp.commands.execute('notebook:run-all-cells')")
+        bad = self.page.evaluate(
+            "window.jupyterapp.shell.currentWidget.content.model.sharedModel.cells.flatMap("
+            "c => (c.outputs || []).filter(o => o.output_type === 'error')"
+            ".map(o => o.ename + ': ' + o.evalue))"
+        )
+        assert not bad, bad
+
+    def ask(self, code):
+        """What a line of code prints in the kernel."""
+        return self.page.evaluate(
+            """async code => {
+                const kernel = window.jupyterapp.shell.currentWidget.sessionContext.session.kernel;
+                let text = '';
+                const future = kernel.requestExecute({code, store_history: false});
+                future.onIOPub = m => { if (m.content.text) text += m.content.text;
+                                        if (m.content.evalue) text += m.content.evalue; };
+                await future.done;
+                return text;
+            }""",
+            code,
+        ).strip()
+
+    def shut_down(self):
+        """End the kernel."""
+        self.page.evaluate("window.jupyterapp.shell.currentWidget.sessionContext.shutdown()")
+
+
+@pytest.fixture
+def notebook(lab, chromium, request):
+    """A notebook page; nothing may be fetched from elsewhere, no script may fail."""
+    base, folder = lab
+    context = chromium.new_context(viewport={"width": 1280, "height": 720}, reduced_motion="reduce")
+    page = context.new_page()
+    page.set_default_timeout(30_000)
+    broken, outside = [], []
+    page.on("pageerror", lambda e: broken.append(str(e)))
+    page.on(
+        "request",
+        lambda r: None if r.url.startswith((base, "data:", "blob:")) else outside.append(r.url),
+    )
+    book = Notebook(page, base, folder)
+    yield book
+    if os.environ.get("VOXELMAT_SHOTS"):
+        page.screenshot(path=Path(os.environ["VOXELMAT_SHOTS"]) / f"{request.node.name}.png")
+    book.shut_down()
+    context.close()
+    assert not broken, broken
+    assert not outside, outside
+
+
+@pytest.fixture
+def web_folder(tmp_path):
+    """A folder that is served, and its address."""
+    handler = functools.partial(_Quiet, directory=str(tmp_path))
+    with http.server.ThreadingHTTPServer(("127.0.0.1", 0), handler) as server:
+        thread = threading.Thread(target=server.serve_forever, daemon=True)
+        thread.start()
+        yield tmp_path, f"http://127.0.0.1:{server.server_address[1]}"
+        server.shutdown()
+        thread.join()
+
+
+class _Quiet(http.server.SimpleHTTPRequestHandler):
+    def log_message(self, *args):
+        """Say nothing."""
