@@ -6,6 +6,7 @@ Run: python tests/benchmarks/bench_slicing.py [width_mm]
 import io
 import json
 import sys
+import tempfile
 import time
 from pathlib import Path
 
@@ -21,8 +22,10 @@ from voxelmat.model.blend import EMPTY, Blend
 from voxelmat.model.grid import VoxelGrid
 from voxelmat.model.part import Part
 from voxelmat.printing.halftone import Slicer, used_resins
+from voxelmat.printing.place import place
+from voxelmat.printing.preflight import preflight
 from voxelmat.printing.profile import load_profile
-from voxelmat.printing.raster import place
+from voxelmat.printing.stack import write_stack
 from voxelmat.printing.support import outline_box, outline_field
 
 
@@ -54,6 +57,16 @@ def timed(call, layers):
     return time.process_time() - start, results
 
 
+def checked(part):
+    """CPU seconds to write a whole stack and to check it."""
+    with tempfile.TemporaryDirectory() as folder:
+        start = time.process_time()
+        stack = write_stack(part, load_profile("invented-standard"), Path(folder) / "s")
+        written = time.process_time()
+        findings = preflight(stack, part)
+        return written - start, time.process_time() - written, findings
+
+
 def main(width=60.0):
     part = graded_dome(width)
     raster = place(outline_box(part, outline_field(part)), load_profile("invented-standard"))
@@ -66,10 +79,9 @@ def main(width=60.0):
     list(fused.layers(0, 1))  # compile
 
     def fused_layers(first):
-        files = []
-        for bits in fused.layers(first, first + len(many)):
-            files.append([encode_bitmap(p, columns, raster.pixels_per_metre) for p in bits])
-        return files
+        ppm = raster.pixels_per_metre
+        slab = fused.layers(first, first + len(many))
+        return [[encode_bitmap(p, columns, ppm) for p in bits] for bits in slab]
 
     def numpy_layer(k):
         site = twin.sites(k)
@@ -90,6 +102,8 @@ def main(width=60.0):
     sites = rows * columns
     fused_rate = sites * len(many) / fused_s / 1e6
     twin_rate = sites * len(few) / twin_s / 1e6
+    checked(graded_dome(6.0))  # compile
+    write_s, check_s, findings = checked(part)
     print(
         json.dumps(
             {
@@ -100,6 +114,10 @@ def main(width=60.0):
                 "numpy_pillow_Msites_per_cpu_s": round(twin_rate, 2),
                 "ratio": round(fused_rate / twin_rate, 1),
                 "same_bits": True,
+                "write_stack_cpu_s": round(write_s, 2),
+                "preflight_cpu_s": round(check_s, 2),
+                "preflight_over_write": round(check_s / write_s, 2),
+                "findings": len(findings),
             }
         )
     )

@@ -8,8 +8,9 @@ import pytest
 
 from voxelmat.errors import InputError
 from voxelmat.model.grid import VoxelGrid
+from voxelmat.printing.place import place, rotation_matrix
 from voxelmat.printing.profile import load_profile, shipped_profiles
-from voxelmat.printing.raster import Raster, place, rotation_matrix
+from voxelmat.printing.raster import Raster
 
 GRID = VoxelGrid(shape=(3, 4, 5), spacing=(0.3, 0.4, 0.5), origin=(1.0, 2.0, 3.0))
 BOX = (GRID.origin, GRID.upper)

@@ -7,8 +7,8 @@ import pytest
 from print_twins import NumpySlicer, layered_part
 
 from voxelmat.printing.halftone import Slicer, used_resins
+from voxelmat.printing.place import place
 from voxelmat.printing.profile import load_profile
-from voxelmat.printing.raster import place
 from voxelmat.printing.support import outline_box, outline_field
 
 

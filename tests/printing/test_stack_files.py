@@ -182,13 +182,13 @@ SLOW_WRITER = """
 import sys, time
 sys.path[:0] = {path!r}
 from print_twins import layered_part
-from voxelmat.printing import stack
+from voxelmat.printing import stack, writer
 from voxelmat.printing.profile import load_profile
-encode = stack.encode_bitmap
+encode = writer.encode_bitmap
 def slow(*args):
     time.sleep(0.002)
     return encode(*args)
-stack.encode_bitmap = slow
+writer.encode_bitmap = slow
 stack.write_stack(layered_part("distance", shape=(8, 7, 6)), load_profile("invented-standard"),
                   sys.argv[1], threads=2, slab=4)
 """

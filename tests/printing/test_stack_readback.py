@@ -14,8 +14,8 @@ from voxelmat.model.blend import EMPTY, Blend
 from voxelmat.model.grid import VoxelGrid
 from voxelmat.model.part import Part
 from voxelmat.printing.average import average, stack_to_part
+from voxelmat.printing.place import rotation_matrix
 from voxelmat.printing.profile import load_profile, shipped_profiles
-from voxelmat.printing.raster import rotation_matrix
 from voxelmat.printing.readback import read_stack
 from voxelmat.printing.stack import write_stack
 

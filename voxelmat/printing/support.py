@@ -7,7 +7,7 @@ from numpy.typing import NDArray
 
 from voxelmat.errors import InputError
 from voxelmat.model.part import Part
-from voxelmat.printing.raster import Box
+from voxelmat.printing.place import Box
 
 __all__ = ["CLEARANCE", "column_support", "outline_box", "outline_field", "outline_source"]
 
