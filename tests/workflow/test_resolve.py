@@ -7,6 +7,7 @@ from pathlib import Path
 
 import numpy as np
 import pytest
+from PIL import Image
 
 from voxelmat.errors import InputError
 from voxelmat.io.design import parse_design
@@ -210,6 +211,17 @@ def test_a_map_is_laid_on(resolved):
     assert found.cautions == ()
 
 
+def test_a_picture_lies_as_its_table(resolved, tmp_path):
+    """The same map as grey levels, 10 kPa for full white."""
+    data = with_map(file="map.png", white_MPa=0.01)
+    del data["load_case"][0]["load"][0]["unit"]
+    grey = np.rint(PRESSURE * 25.5).astype(np.uint8)
+    Image.fromarray(grey).save(tmp_path / "map.png")
+    laid, table = resolved(data).maps["push", 0], resolved(with_map()).maps["push", 0]
+    assert laid.force == pytest.approx(table.force, rel=0.01)
+    assert laid.centre == pytest.approx(table.centre, abs=0.02)
+
+
 def test_a_map_without_a_region_presses_on_what_is_seen(resolved):
     data = with_map()
     del data["load_case"][0]["load"][0]["region"]
@@ -249,6 +261,16 @@ def test_a_mirrored_map_is_refused(resolved, how):
     with pytest.raises(InputError, match=f"lies mirrored.*{how}") as caught:
         resolved(data, values=MIRRORED[how])
     assert caught.value.key == "load_case[0].load[0]"
+
+
+def test_a_small_shift_that_a_mirror_explains_is_a_caution(resolved):
+    """Rows that are nearly alike: mirrored, the centre moves by less than a cell."""
+    values = np.array([[1.0] * 6, [1.0] * 6, [1.6] * 6, [1.6] * 6])
+    data = with_map(expected_centre_mm=[6.0, float((7 + 5 + 1.6 * 4) / 5.2)])
+    assert resolved(data, values=values).cautions == ()
+    (caution,) = resolved(data, values=values[::-1]).cautions
+    assert "may lie mirrored" in caution
+    assert "top to bottom" in caution
 
 
 def test_a_centre_that_no_mirror_explains(resolved):

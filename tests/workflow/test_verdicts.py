@@ -137,6 +137,22 @@ def test_mass_and_volume():
     assert (none.value, none.status) == (0.0, "met")
 
 
+def test_mass_says_what_is_bought_in():
+    labels = np.ones(GRID.shape, int)
+    labels[:4] = 2
+    part = Part(
+        grid=GRID,
+        resins=(resin("r", 100.0), resin("rod", 1000.0).replace(kind="bought-in")),
+        palette=(EMPTY, Blend.pure("r"), Blend.pure("rod")),
+        labels=labels,
+    )
+    mass = judged(part, Requirement(name="m", measure="mass", at_most=0.05))
+    assert mass.value == pytest.approx(0.032)
+    assert mass.reasons == ("0.0160 g of it are bought in",)
+    own = judged(part, Requirement(name="m", measure="mass", resin="r", at_most=0.05))
+    assert (own.value, own.reasons) == (pytest.approx(0.016), ())
+
+
 def test_deflection_error():
     part, nodes = bar(resin("r", 100.0)), np.zeros(GRID.node_shape, bool)
     nodes[8] = True
@@ -228,6 +244,12 @@ def test_a_given_displacement():
     )
     assert (held.value, held.low, held.high) == pytest.approx((10.0, 8.0, 12.5), rel=1e-6)
     assert held.status == "met"
+    safe = Requirement(
+        name="f", measure="safety factor", load_case="pull", region="low", at_least=1
+    )
+    text = said(judged(part, safe, case))
+    assert "displacements are given" in text
+    assert "at the support on 'low'" in text
     moved = judged(part, moves(at_most=0.3), case)
     assert moved.status == "cannot be said"
     assert "displacements are given" in moved.reasons[0]

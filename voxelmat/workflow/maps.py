@@ -26,6 +26,8 @@ Floats = NDArray[np.float64]
 _CAUTION = 0.05
 #: Beyond this the run stops, unless the design says otherwise; ours.
 _STOP = 0.20
+#: A centre that is off by less than this part of a cell is where it was expected; ours.
+_NEAR = 0.25
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -177,13 +179,17 @@ def _check_centre(
             continue
         if distance < best:
             best, words = distance, name
-    if off > cell and best < 0.5 * off:
-        raise InputError(
-            f"{_title(load)} lies mirrored: its centre of pressure is at "
+    if best < 0.5 * off and off > _NEAR * cell:
+        sure = off > cell
+        text = (
+            f"{_title(load)} {'lies' if sure else 'may lie'} mirrored: its centre of pressure is at "
             f"{_place(laid.centre, axes)}, {number(off)} mm from expected_centre_mm; mirrored "
             f"{words} it would be {number(best)} mm off. Turn columns_grow or rows_grow round and "
             "move first_cell_mm to the cell that is then the first."
         )
+        if sure:
+            raise InputError(text)
+        return [text]
     if off > 2 * cell:
         return [
             f"{_title(load)} has its centre of pressure at {_place(laid.centre, axes)}, "

@@ -16,6 +16,7 @@ from voxelmat.fea.stress import safety_field
 from voxelmat.model.part import Part
 from voxelmat.model.requirement import Requirement, Verdict, judge
 from voxelmat.model.result import StaticResult
+from voxelmat.units import quantity
 from voxelmat.workflow.doubts import (
     condition_doubts,
     data_doubts,
@@ -120,7 +121,7 @@ def _measure(
 
 
 def _mass(requirement: Requirement, part: Part) -> _Measured:
-    """Mass in g; the band follows the ranges of the densities."""
+    """Mass in g, bought-in bodies too; the band follows the ranges of the densities."""
     volumes = part.volumes()
     names = [n for n in volumes if requirement.resin in (None, n)]
     densities = {n: part.resin(n).density for n in names}
@@ -130,7 +131,11 @@ def _mass(requirement: Requirement, part: Part) -> _Measured:
     )
     weak = [n for n in names if densities[n].indicative]
     doubts = [f"the density of {', '.join(repr(n) for n in weak)} is indicative"] if weak else []
-    return _Measured(value=value, band=(low, high), doubts=tuple(doubts))
+    bought = _GRAMS * math.fsum(
+        volumes[n] * densities[n].value for n in names if part.resin(n).kind == "bought-in"
+    )
+    grounds = (f"{quantity(bought, 'g')} of it are bought in",) if 0 < bought < value else ()
+    return _Measured(value=value, band=(low, high), doubts=tuple(doubts), grounds=grounds)
 
 
 def _scaled(result: StaticResult, spread: Spread, value: float, *, power: int) -> _Measured:
@@ -257,10 +262,10 @@ def _safety(
         doubts.append(f"the strength of '{resin}' is indicative")
     if len(names) > 1:
         doubts.append("the strength of a blend is taken as that of its weakest resin")
+    if driven_by(result) != "force":
+        doubts += _unscaled(spread, value, _MOVED).doubts
     band = (value * low / spread.stress, value * high * spread.stress)
     grounds = (f"smallest in '{resin}' at {place_words(place)}",)
-    if driven_by(result) != "force":
-        return _unscaled(spread, value, _MOVED)
     return _Measured(value=value, band=band, doubts=tuple(doubts), grounds=grounds)
 
 
