@@ -148,6 +148,7 @@ def test_the_slider_of_a_script_does_what_the_one_on_screen_does(made_up):
     assert view.count == 24
     assert view.index == 12
     assert view.size_mm == [36.0, 30.0]
+    assert view.frame == "y to the right, -18.0 to 18.0 mm; z upwards, -15.0 to 15.0 mm"
     with pytest.raises(traitlets.TraitError):
         view.axis = "w"
     view.index = 999  # beyond the end: the last one

@@ -62,6 +62,8 @@ class Shown:
         ``size_mm(axis)``: width and height of a slice.
     where : callable
         ``where(axis, index)``: the place of a slice, in words.
+    frame : callable
+        ``frame(axis)``: which way is right and which is up, and how far, in words.
     fields : tuple of Field
     surface : callable
         ``surface(axis, share)``: faces and their colours, cut away below `share` along `axis`.
@@ -78,6 +80,7 @@ class Shown:
     best_axis: str
     size_mm: Callable[[str], tuple[float, float]]
     where: Callable[[str, int], str]
+    frame: Callable[[str], str]
     fields: tuple[Field, ...]
     surface: Callable[[str, float], tuple[Quads, Rgb]]
     legend: dict[str, Any] = field(default_factory=dict)
@@ -168,12 +171,21 @@ def _slices_of(part: Part) -> dict[str, Any]:
         place = round(grid.centres()[a][index], 3) + 0.0
         return f"{axis} = {place:g} mm ({index + 1} of {grid.shape[a]})"
 
+    def frame(axis: str) -> str:
+        u, v = (a for a in range(3) if AXES[a] != axis)
+        low, high = grid.origin, grid.upper
+        return (
+            f"{AXES[u]} to the right, {number(low[u])} to {number(high[u])} mm; "
+            f"{AXES[v]} upwards, {number(low[v])} to {number(high[v])} mm"
+        )
+
     return {
         "axes": ("x", "y", "z"),
         "counts": dict(zip(AXES, grid.shape, strict=True)),
         "best_axis": AXES[int(np.argmin(span))],
         "size_mm": size_mm,
         "where": where,
+        "frame": frame,
     }
 
 

@@ -119,6 +119,10 @@ def of_stack(stack: Stack) -> Shown:
         best_axis="z",
         size_mm=lambda axis: (stack.shape[0] * pitch[0], stack.shape[1] * pitch[1]),
         where=where,
+        frame=lambda axis: (
+            f"x of the tray to the right, {number(stack.shape[0] * pitch[0])} mm; "
+            f"y upwards, {number(stack.shape[1] * pitch[1])} mm"
+        ),
         fields=(Field(name="resin", slice_rgb=slice_rgb, legend={"items": items}),),
         surface=surface,
         legend={"items": items},

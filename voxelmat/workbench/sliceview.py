@@ -36,6 +36,7 @@ class SliceView(anywidget.AnyWidget):
     count = traitlets.Int(1).tag(sync=True)
     label = traitlets.Unicode("").tag(sync=True)
     where = traitlets.Unicode("").tag(sync=True)
+    frame = traitlets.Unicode("").tag(sync=True)
     legend = traitlets.Dict().tag(sync=True)
     status = traitlets.Unicode("").tag(sync=True)
     size_mm = traitlets.List(traitlets.Float(), default_value=[1.0, 1.0]).tag(sync=True)
@@ -89,6 +90,7 @@ class SliceView(anywidget.AnyWidget):
                 self.count = count
                 self.size_mm = list(self._shown.size_mm(self.axis))
                 self.where = self._shown.where(self.axis, index)
+                self.frame = self._shown.frame(self.axis)
                 self.legend = field.legend
                 self.picture = store.getvalue()
                 self.status = ""

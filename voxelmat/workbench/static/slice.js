@@ -5,18 +5,19 @@ function render({model, el}) {
   slider.setAttribute('aria-label', 'Slice');
   const axis = element('select', {}), field = element('select', {});
   const where = element('output', {}), key = element('div', {className: 'row legend'});
+  const frame = element('div', {className: 'frame'});
   const line = element('div', {className: 'status', role: 'status'});
   const row = element('div', {className: 'row'},
     element('label', {}, 'Slice ', slider), where,
     element('label', {}, 'across ', axis), element('label', {}, 'showing ', field));
-  el.append(element('div', {className: 'vm'}, row, canvas, key, line));
+  el.append(element('div', {className: 'vm'}, row, canvas, frame, key, line));
   const paint = canvas.getContext('2d');
   let waiting = false, wanted = null;
 
   function choices(select, names, chosen) {
     select.replaceChildren(...names.map(([value, text]) => element('option', {value, textContent: text})));
     select.value = chosen;
-    select.disabled = names.length < 2;
+    select.parentElement.hidden = names.length < 2;
   }
   function controls() {
     choices(axis, model.get('axes').map(a => [a, a]), model.get('axis'));
@@ -27,6 +28,7 @@ function render({model, el}) {
   async function show() {
     controls();
     where.textContent = model.get('where');
+    frame.textContent = model.get('frame');
     canvas.setAttribute('aria-label', model.get('label') + ', ' + model.get('where'));
     legend(model, key);
     const data = model.get('picture'), seq = model.get('seq');
