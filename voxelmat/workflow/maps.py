@@ -181,8 +181,9 @@ def _check_centre(
             best, words = distance, name
     if best < 0.5 * off and off > _NEAR * cell:
         sure = off > cell
+        lies = "lies" if sure else "may lie"
         text = (
-            f"{_title(load)} {'lies' if sure else 'may lie'} mirrored: its centre of pressure is at "
+            f"{_title(load)} {lies} mirrored: its centre of pressure is at "
             f"{_place(laid.centre, axes)}, {number(off)} mm from expected_centre_mm; mirrored "
             f"{words} it would be {number(best)} mm off. Turn columns_grow or rows_grow round and "
             "move first_cell_mm to the cell that is then the first."
