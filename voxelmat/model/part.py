@@ -145,6 +145,8 @@ class Part:
         """How the slicer will draw the outline of this part, in words."""
         if self.distance is not None:
             return "true signed distance of the shape"
+        if self.occupancy is not None:
+            return "solid fraction of the voxels: this part came without a signed distance"
         return "nearest voxel: this part came without a signed distance, so edges show steps"
 
     def resin(self, name: str) -> Material:
