@@ -160,13 +160,21 @@ def main(arguments: Sequence[str] | None = None) -> int:
     except MemoryError:
         text = "There is not enough memory for this grid; use larger voxels (grid.spacing_mm)."
         data = {"error": text, "kind": "failed"}
+    try:
+        _print(options, code, data, text)
+    except BrokenPipeError:  # whoever read our output has seen enough
+        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+    return code
+
+
+def _print(options: argparse.Namespace, code: int, data: dict[str, Any], text: str) -> None:
     if options.json:
         print(json.dumps({"exit_code": code, **data}, indent=2, allow_nan=False))
     elif code in (3, 4) and "error" in data:
         print(f"voxelmat {options.command}: {text}", file=sys.stderr)
     else:
         print(text)
-    return code
+    sys.stdout.flush()
 
 
 if __name__ == "__main__":
