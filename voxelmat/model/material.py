@@ -99,6 +99,10 @@ class Material:
         Elongation at break as a fraction (1.5 means 150 %).
     expansion : Constant or None
         Coefficient of thermal expansion, 1/K.
+    conductivity : Constant or None
+        Thermal conductivity, W/(m K), which is mW/(mm K) (> 0).
+    heat_capacity : Constant or None
+        Specific heat capacity, J/(kg K) (> 0); 1e6 times as much in mJ/(tonne K).
     shore_A : float or None
         Shore A hardness.
     glass_transition_degC : float or None
@@ -123,6 +127,8 @@ class Material:
     strength: Constant | None = None
     elongation: Constant | None = None
     expansion: Constant | None = None
+    conductivity: Constant | None = None
+    heat_capacity: Constant | None = None
     shore_A: float | None = None
     glass_transition_degC: float | None = None
     temperature_range_degC: tuple[float, float] = (15.0, 30.0)
@@ -157,6 +163,16 @@ class Material:
         for label, constant in (("strength", self.strength), ("elongation", self.elongation)):
             if constant is not None and not (constant.band[0] > 0):
                 raise InputError(f"Material '{self.name}': the {label} must be above 0.")
+        for label, constant, most, unit in (
+            ("conductivity", self.conductivity, 5000.0, "W/(m K)"),
+            ("heat capacity", self.heat_capacity, 20000.0, "J/(kg K)"),
+        ):
+            # The upper limits lie above every known material; beyond them a unit was mixed up.
+            if constant is not None and not (constant.band[0] > 0 and constant.band[1] < most):
+                raise InputError(
+                    f"Material '{self.name}': the {label} must lie above 0 and below {most:g} "
+                    f"{unit}; got {constant.band[0]:g} to {constant.band[1]:g}."
+                )
         if not _COLOUR.match(self.colour):
             raise InputError(
                 f"Material '{self.name}': a colour is written #rrggbb; got {self.colour!r}."
