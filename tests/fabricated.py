@@ -183,7 +183,7 @@ def made_up_stack() -> StackSummary:
         height_mm=15.015,
         codes=codes.astype(np.uint8),
         size_mm=(72.0, 30.0),
-        note="Thinned to every fifth site.",
+        note="One site in 5 is drawn, each way.",
     )
     return StackSummary(
         folder="stack",

@@ -161,6 +161,12 @@ def test_the_same_run_gives_the_same_page_and_tells_its_progress(run, text):
     assert heard[-1][1] == heard[-1][2]
 
 
+def test_invented_data_are_called_so(run, made_up):
+    bare = RunData(name="x", part=made_up.grip(6.0), invented=True)
+    assert "Invented data." in render(bare)
+    assert "Invented data." not in render(RunData(name="x", part=bare.part))
+
+
 def test_light_dark_and_paper(text):
     assert "prefers-color-scheme: dark" in text
     assert "size:A4" in text
@@ -193,6 +199,10 @@ def test_percent_and_answers():
     part = object.__new__(RunData)
     object.__setattr__(part, "verdicts", (one,))
     assert answer(part) == "Of 1 requirement: 1 met."
+    need = Requirement(name="m", measure="mass", at_most=5.0)
+    open_ones = (judge(need, 4.0, doubts=["x"]), judge(need, 6.0, doubts=["x"]))
+    object.__setattr__(part, "verdicts", open_ones)
+    assert "1 of 2 values lie within their limits" in answer(part)
 
 
 def test_a_large_compression_is_not_called_small(run, made_up):

@@ -256,6 +256,7 @@ class _Run:
         data = RunData(
             name=built.design.name,
             part=part,
+            invented=built.design.invented,
             question=built.design.note,
             results=results,
             as_printed=again,

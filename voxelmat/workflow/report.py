@@ -101,6 +101,7 @@ def _context(run: RunData, monitor: Monitor) -> dict[str, Any]:
     step(total)
     return {
         "name": run.name,
+        "invented": run.invented,
         "question": run.question.strip(),
         "answer": answer(run),
         "verdicts": tables.verdict_rows(run.verdicts),
@@ -141,7 +142,15 @@ def answer(run: RunData) -> str:
     count = Counter(v.status for v in run.verdicts)
     texts = [f"{count[s]} {s}" for s in ("met", "not met", "cannot be said") if count[s]]
     total = len(run.verdicts)
-    return f"Of {total} requirement{'s' if total != 1 else ''}: {', '.join(texts)}."
+    words = f"Of {total} requirement{'s' if total != 1 else ''}: {', '.join(texts)}."
+    unsaid = [v for v in run.verdicts if v.status == "cannot be said"]
+    if unsaid:
+        inside = sum(v.margin >= 0 for v in unsaid)
+        words += (
+            f" Of what cannot be said, {inside} of {len(unsaid)} values lie within their limits, "
+            "but the data behind them are too uncertain for a yes or a no."
+        )
+    return words
 
 
 def _grid_words(run: RunData) -> str:

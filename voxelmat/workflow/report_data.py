@@ -33,14 +33,17 @@ class LayerPicture:
         row 0 is drawn on top. May be thinned or a window of the layer.
     size_mm : tuple of float
         Width and height that `codes` covers.
+    corner_mm : tuple of float
+        Low x and y of what is drawn, from the low corner of the stack.
     note : str
-        What the reader should know of the window.
+        What the reader should know of the picture, a sentence.
     """
 
     number: int
     height_mm: float
     codes: NDArray[np.uint8]
     size_mm: tuple[float, float]
+    corner_mm: tuple[float, float] = (0.0, 0.0)
     note: str = ""
 
 
@@ -101,6 +104,8 @@ class RunData:
         Of the design.
     part : Part
         As designed.
+    invented : bool
+        The design says that its data describe no real part.
     question : str
         What the customer wants to know, in their words.
     results, as_printed : mapping of str to StaticResult
@@ -123,6 +128,7 @@ class RunData:
 
     name: str
     part: Part
+    invented: bool = False
     question: str = ""
     results: Mapping[str, StaticResult] = field(default_factory=dict)
     as_printed: Mapping[str, StaticResult] = field(default_factory=dict)

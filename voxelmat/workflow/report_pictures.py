@@ -232,12 +232,12 @@ def layer_pictures(stack: StackSummary, part: Part) -> list[Picture]:
         table = np.ones((len(stack.resins) + 1, 3))
         for row, name in enumerate(stack.resins):
             table[row + 1] = colours.get(name, (0.6, 0.6, 0.6))
-        width, height = layer.size_mm
+        (width, height), (x0, y0) = layer.size_mm, layer.corner_mm
         inches = min(9.0, 1.0 + 6.0 * width / height)
         tall = max(2.2, (inches - 0.8) * height / width + 1.2)
         fig = figure(inches, tall)
         ax = fig.add_axes((0.62 / inches, 0.8 / tall, 1 - 0.8 / inches, 1 - 1.2 / tall))
-        ax.imshow(table[layer.codes], extent=(0.0, width, 0.0, height))
+        ax.imshow(table[layer.codes], extent=(x0, x0 + width, y0, y0 + height))
         title = f"layer {layer.number}, {number(layer.height_mm)} mm over the tray"
         mm_axes(ax, 0, 1, title)
         ax.set_xlabel("raster x, mm", fontsize=8)

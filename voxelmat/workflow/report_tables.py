@@ -19,8 +19,10 @@ from voxelmat.model.loadcase import (
     Support,
 )
 from voxelmat.model.part import Part
+from voxelmat.model.region import solid_nodes
 from voxelmat.model.requirement import Requirement, Verdict
 from voxelmat.model.result import ROTATION_LIMIT, STRAIN_LIMIT, StaticResult
+from voxelmat.model.surface import carriers
 from voxelmat.units import number, quantity
 from voxelmat.workflow.colours import resin_colours
 from voxelmat.workflow.report_data import RunData, StackSummary
@@ -304,11 +306,17 @@ def compared_table(run: RunData) -> Table | None:
 
 
 def _difference(designed: StaticResult, printed: StaticResult) -> str:
-    """Root mean square of the difference over that of the displacement, percent."""
+    """Root mean square of the difference over that of the displacement, percent.
+
+    Over the nodes of the voxels at least half full in both: thinner ones are where the outlines
+    of the two are rounded to the grid differently.
+    """
     if designed.displacement.shape != printed.displacement.shape:
         return "not on the same grid"
-    size = float(np.sqrt((designed.displacement**2).mean()))
-    off = float(np.sqrt(((designed.displacement - printed.displacement) ** 2).mean()))
+    both = solid_nodes(carriers(designed.part)) & solid_nodes(carriers(printed.part))
+    before, after = designed.displacement[both], printed.displacement[both]
+    size = float(np.sqrt((before**2).mean())) if both.any() else 0.0
+    off = float(np.sqrt(((before - after) ** 2).mean())) if both.any() else 0.0
     return f"{number(100.0 * off / size, 2)} %" if size > 0 else "not known"
 
 

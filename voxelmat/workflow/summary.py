@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import numpy as np
+from numpy.typing import NDArray
 
 from voxelmat.printing.estimate import PrintEstimate
 from voxelmat.printing.readback import Stack
@@ -15,6 +16,8 @@ __all__ = ["summarise"]
 _HEIGHTS = (0.25, 0.5, 0.75)
 #: Longest side of a layer's picture, pixels: beyond it every n-th site is drawn.
 _PIXELS = 1400
+#: Width and height of the window that shows single droplets.
+_WINDOW_MM = (8.0, 4.0)
 
 _SUPPORT = {
     "columns": "columns below overhangs, laid by us through the support channel",
@@ -28,14 +31,53 @@ def _layer_picture(stack: Stack, layer: int) -> LayerPicture:
     site = stack.layer(layer)
     step = max(1, -(-max(site.shape) // _PIXELS))
     pitch = stack.pitch_mm
-    note = "" if step == 1 else f"every {step}th site is drawn"
     return LayerPicture(
         number=layer,
         height_mm=(layer + 0.5) * pitch[2],
         codes=np.ascontiguousarray(site[::step, ::step].T[::-1]),
         size_mm=(site.shape[0] * pitch[0], site.shape[1] * pitch[1]),
-        note=note,
+        note="" if step == 1 else f"One site in {step} is drawn, each way.",
     )
+
+
+def _mixture(stack: Stack, site: NDArray[np.uint8]) -> tuple[float, tuple[int, int]]:
+    """How mixed the most mixed window of a layer is (0 to 1), and its first site."""
+    size = [max(1, round(w / p)) for w, p in zip(_WINDOW_MM, stack.pitch_mm, strict=False)]
+    blocks = [n // s for n, s in zip(site.shape, size, strict=True)]
+    if min(blocks) < 1:
+        return 0.0, (0, 0)
+    cut = site[: blocks[0] * size[0], : blocks[1] * size[1]]
+    tiles = cut.reshape(blocks[0], size[0], blocks[1], size[1])
+    shares = [
+        (tiles == n + 1).mean(axis=(1, 3))
+        for n, c in enumerate(stack.channels)
+        if c.role == "model"
+    ]
+    full = np.sum(shares, axis=0)
+    mixed = np.where(full > 0.999, full - np.max(shares, axis=0), 0.0)
+    i, j = np.unravel_index(int(mixed.argmax()), mixed.shape)
+    return float(mixed[i, j]), (int(i) * size[0], int(j) * size[1])
+
+
+def _droplets(stack: Stack, layers: list[int]) -> list[LayerPicture]:
+    """The most mixed window of these layers, every droplet site drawn; none where all is pure."""
+    pitch = stack.pitch_mm
+    found = [(*_mixture(stack, stack.layer(k)), k) for k in layers]
+    mixed, (i, j), layer = max(found)
+    if not mixed > 0.02:
+        return []
+    nx, ny = (max(1, round(w / p)) for w, p in zip(_WINDOW_MM, pitch, strict=False))
+    codes = stack.layer(layer)[i : i + nx, j : j + ny]
+    return [
+        LayerPicture(
+            number=layer,
+            height_mm=(layer + 0.5) * pitch[2],
+            codes=np.ascontiguousarray(codes.T[::-1]),
+            size_mm=(codes.shape[0] * pitch[0], codes.shape[1] * pitch[1]),
+            corner_mm=(i * pitch[0], j * pitch[1]),
+            note="A window in which every droplet site is drawn.",
+        )
+    ]
 
 
 def _in_words(figures: PrintEstimate) -> dict[str, str]:
@@ -74,7 +116,7 @@ def summarise(stack: Stack, figures: PrintEstimate | None = None) -> StackSummar
         designed_mm3=tuple(c.designed_mm3 for c in stack.channels),
         support=_SUPPORT[stack.support_policy],
         orientation=", then ".join(turns) if turns else "as drawn, z up",
-        halftone=f"{method['halftone']}; seed {number(method['seed'])}",
-        layers=tuple(_layer_picture(stack, k) for k in layers),
+        halftone=f"{method['halftone']}; seed {method['seed']}",
+        layers=(*(_layer_picture(stack, k) for k in layers), *_droplets(stack, layers)),
         estimate={} if figures is None else _in_words(figures),
     )
