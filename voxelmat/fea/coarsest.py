@@ -53,21 +53,23 @@ class Coarsest:
         A[:, ~exists] = 0
         A = (A + A.T) / 2
         diagonal = np.where(exists, np.diag(A), 1.0)
-        self._scale = np.where(exists, 1 / np.sqrt(np.where(diagonal > 0, diagonal, 1.0)), 0.0)
-        A *= self._scale[:, None] * self._scale
+        scale = np.where(exists, 1 / np.sqrt(np.where(diagonal > 0, diagonal, 1.0)), 0.0)
+        A *= scale[:, None] * scale
         A[np.diag_indices_from(A)] = 1.0 + _SHIFT
         try:
-            self._inverse = scipy.linalg.inv(scipy.linalg.cholesky(A, lower=True))
+            lower = scipy.linalg.cholesky(A, lower=True, overwrite_a=True, check_finite=False)
+            root, _ = scipy.linalg.lapack.dtrtri(lower, lower=1, overwrite_c=1)
         except scipy.linalg.LinAlgError:
             values, vectors = np.linalg.eigh(A)
-            self._inverse = (vectors / np.sqrt(np.maximum(values, _SHIFT))).T
+            root = (vectors / np.sqrt(np.maximum(values, _SHIFT))).T
+        # A^-1 is root^T root: positive definite whatever rounding does to root.
+        self._root = np.ascontiguousarray(root * scale, dtype=np.float32)
 
     def solve(self, b: NDArray[np.float32], x: NDArray[np.float32]) -> None:
         """Write the solution of A x = b to x."""
-        v = self._inverse @ (b.ravel().astype(np.float64) * self._scale)
-        x[:] = ((self._inverse.T @ v) * self._scale).reshape(x.shape)
+        x[:] = (self._root.T @ (self._root @ b.ravel())).reshape(x.shape)
 
     @property
     def nbytes(self) -> int:
         """Memory held, bytes."""
-        return int(self._inverse.nbytes)
+        return int(self._root.nbytes)

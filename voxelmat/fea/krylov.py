@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass, field
 
 import numpy as np
@@ -65,6 +66,7 @@ def conjugate_gradients(
     tol: float,
     limit: int,
     monitor: Monitor,
+    too_slow: Callable[[list[float]], bool] | None = None,
 ) -> Iteration:
     """Solve K x = b on free unknowns, starting from and updating ``run``.
 
@@ -85,6 +87,8 @@ def conjugate_gradients(
         Most iterations in all, those already in `run` included.
     monitor : Monitor
         Told each iteration.
+    too_slow : callable, optional
+        Looks at the history and says whether to stop, as at the limit.
     """
     x = run.x
     r = np.empty_like(x)
@@ -111,7 +115,7 @@ def conjugate_gradients(
         if stuck or restarts > _RESTARTS:
             run.state = "stalled"
             return run
-        if run.iterations >= limit:
+        if run.iterations >= limit or (too_slow is not None and too_slow(run.history)):
             run.state = "limit"
             return run
         z = M.apply(r, 1.0 / size)

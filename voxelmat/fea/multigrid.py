@@ -31,8 +31,9 @@ Double = NDArray[np.float64]
 #: Coarse methods, cheapest first; ``jacobi`` has no coarse levels and is kept as a check.
 METHODS = ("avg2", "gal4b", "jacobi")
 
-# Unknowns below which a grid is solved directly.
-_COARSEST = 750
+# Unknowns below which a grid is solved directly. Averaged moduli smear thin members, so on
+# large grids, where a larger direct solve does not show, the cheap method stops earlier.
+_COARSEST, _COARSEST_AVERAGED, _LARGE = 750, 2500, 100_000
 # Smoothing polynomial: degree, and the range of eigenvalues that it damps, [max / ratio, max].
 _SMOOTHING = {"avg2": (2, 10.0), "gal4b": (4, 40.0)}
 
@@ -77,10 +78,11 @@ class Preconditioner(Protocol):
         """Memory held, bytes."""
 
 
-def _depths(shape: tuple[int, ...]) -> int:
+def _depths(shape: tuple[int, ...], method: str) -> int:
     """Number of coarse levels below a grid of `shape` voxels."""
     depth, dims = 0, np.array(shape)
-    while 3 * np.prod(dims + 1) > _COARSEST and dims.max() > 1:
+    limit = _COARSEST_AVERAGED if method == "avg2" and dims.prod() > _LARGE else _COARSEST
+    while 3 * np.prod(dims + 1) > limit and dims.max() > 1:
         dims = -(-dims // 2)
         depth += 1
     return depth
@@ -149,7 +151,7 @@ class Multigrid:
 
     def __init__(self, grid: Grid, method: str) -> None:
         self.method = method
-        depths = _depths(grid.lam.shape)
+        depths = _depths(grid.lam.shape, method)
         self.levels: list[Level] = [_finest(grid)]
         make = _averaged if method == "avg2" else _galerkin
         self.levels.extend(make(grid, depths))

@@ -19,8 +19,10 @@ __all__ = ["LinearSystem", "Solution", "first_method"]
 
 Double = NDArray[np.float64]
 
-# With the cheap coarse levels, go over to the exact ones after this many iterations.
-_CHEAP_LIMIT = 40
+# With the cheap coarse levels, go over to the exact ones after this many iterations, or as soon
+# as the pace between these two iterations says that it will come to that.
+_CHEAP_LIMIT = 45
+_PACE = (4, 12)
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -63,6 +65,15 @@ def _share_of_jumps(mu: Double) -> float:
         faces += int(np.count_nonzero(low))
         jumps += int(np.count_nonzero((low > 0) & (high > 100.0 * low)))
     return jumps / max(faces, 1)
+
+
+def _too_slow(history: list[float], tol: float) -> bool:
+    """Whether the cheap method will not get to `tol` within its limit, at the present pace."""
+    early, late = _PACE
+    if len(history) != late + 1:
+        return False
+    pace = np.log(history[late] / history[early]) / (late - early)
+    return bool(pace >= 0 or late + np.log(tol / history[late]) / pace > _CHEAP_LIMIT)
 
 
 def first_method(lam: Double, mu: Double, spacing: Spacing, held: NDArray[np.bool_]) -> str:
@@ -212,6 +223,8 @@ class LinearSystem:
         ConvergenceError
             With the residual history, when `tol` is out of reach.
         """
+        if not (0 < tol < 1 and maxiter >= 1):
+            raise InputError(f"tol must lie in 0 to 1 and maxiter be >= 1; got {tol}, {maxiter}.")
         if b.shape != self.shape or not np.all(np.isfinite(b)):
             raise InputError(f"The load must be finite and of shape {self.shape}; got {b.shape}.")
         with computing(), crew(b[0].size):
@@ -251,6 +264,7 @@ class LinearSystem:
                 tol=tol,
                 limit=limit,
                 monitor=self._monitor,
+                too_slow=(lambda history: _too_slow(history, tol)) if switch else None,
             )
             if run.state == "converged" or not switch or run.iterations >= maxiter:
                 return run
