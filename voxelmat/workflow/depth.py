@@ -163,8 +163,8 @@ def draw_faces(
     axes = camera.axes()
     box = _box_corners(around or faces, spacing)
     # A voxel larger than this many pixels would only cost time.
-    across = float(np.ptp(box @ axes[0])) * 1.06
-    width = max(64, min(width, round(across / max(spacing) * _PIXELS_A_VOXEL)))
+    span = float(np.ptp(box @ axes[0])) * 1.06
+    width = max(64, min(width, round(span / max(spacing) * _PIXELS_A_VOXEL)))
     left, top, pixel, rows = _picture_frame(box, axes, width)
     facing = axes[2][faces.axis] * faces.side > 0
     seen = faces.select(facing)

@@ -1,0 +1,68 @@
+"""Every notebook runs from top to bottom, coarse, and is kept without outputs."""
+
+from __future__ import annotations
+
+import json
+import os
+from pathlib import Path
+
+import pytest
+
+nbclient = pytest.importorskip("nbclient")
+import nbformat  # noqa: E402
+
+ROOT = Path(__file__).resolve().parents[2]
+FOLDER = ROOT / "notebooks"
+BOOKS = sorted(FOLDER.glob("*.ipynb"))
+
+#: What the tests set in the cell tagged "parameters": name to value.
+COARSE = {
+    "grip.ipynb": {"SPACING_MM": 3.0, "PRINTER": "invented-coarse", "SUPPORT": "machine"},
+}
+
+
+def _read(path):
+    return nbformat.reads(path.read_text(encoding="utf-8"), as_version=4)
+
+
+def test_there_are_notebooks_and_each_has_its_settings():
+    assert [b.name for b in BOOKS] == sorted(COARSE)
+
+
+@pytest.mark.parametrize("path", BOOKS, ids=lambda p: p.name)
+def test_kept_without_outputs_and_paths(path):
+    book = _read(path)
+    nbformat.validate(book)
+    for cell in book.cells:
+        if cell.cell_type == "code":
+            assert cell.outputs == []
+            assert cell.execution_count is None
+    assert "widgets" not in book.metadata
+    assert str(ROOT) not in json.dumps(book)
+    assert book.cells[1].source.startswith("# Change this first.")
+
+
+@pytest.mark.timeout(300)
+@pytest.mark.parametrize("path", BOOKS, ids=lambda p: p.name)
+def test_runs_from_top_to_bottom(path, tmp_path, monkeypatch):
+    monkeypatch.setenv("PYTHONPATH", os.pathsep.join([str(ROOT), os.environ.get("PYTHONPATH", "")]))
+    book = _read(path)
+    (cell,) = [c for c in book.cells if "parameters" in c.metadata.get("tags", [])]
+    lines = cell.source.splitlines()
+    settings = {**COARSE[path.name], "OUT": str(tmp_path / "out")}
+    for name, value in settings.items():
+        (at,) = [n for n, line in enumerate(lines) if line.startswith(f"{name} = ")]
+        lines[at] = f"{name} = {value!r}"
+    cell.source = "\n".join(lines)
+    client = nbclient.NotebookClient(
+        book, timeout=280, kernel_name="python3", resources={"metadata": {"path": str(FOLDER)}}
+    )
+    client.execute()
+    outputs = [o for c in book.cells if c.cell_type == "code" for o in c.outputs]
+    assert not [o for o in outputs if o.output_type == "error"]
+    warned = [o.text for o in outputs if o.get("name") == "stderr"]
+    assert not warned, warned
+    views = [o for o in outputs if "application/vnd.jupyter.widget-view+json" in o.get("data", {})]
+    assert len(views) == 4
+    assert all("image/jpeg" in v["data"] for v in views)  # a picture without a kernel
+    assert (tmp_path / "out" / "report.html").stat().st_size > 100_000
