@@ -13,6 +13,7 @@ from voxelmat.io.png import decode_bitmap, encode_bitmap
 from voxelmat.model.blend import EMPTY, Blend
 from voxelmat.model.grid import VoxelGrid
 from voxelmat.model.part import Part
+from voxelmat.printing import scan as scan_module
 from voxelmat.printing.preflight import preflight
 from voxelmat.printing.profile import load_profile
 from voxelmat.printing.readback import read_stack
@@ -232,3 +233,26 @@ def test_a_printer_that_does_not_suit(tmp_path):
     small = STANDARD.replace(tray_size=(200.0, 150.0, 2.0))
     found = preflight(stack, profile=small)
     assert len([f for f in found if f.code == "outside the tray"]) == 3
+
+
+def test_bands_of_rows_find_the_same(tmp_path, monkeypatch):
+    labels = slab()
+    labels[:, :, 6:] = 0
+    labels[8:9, 2:10, 6:12] = 1
+    labels[14:, 5:6, 6:12] = 2
+    labels[12:13, :, 2:6] = 0
+    stack = written(tmp_path, labels)
+    sizes = ((16, 5, 11), (13, 4, 9))
+    whole = scan_module.scan(stack, *sizes)
+    monkeypatch.setattr(scan_module, "_MEMORY", 90_000)
+    banded = scan_module.scan(stack, *sizes)
+    assert len(scan_module._bands(36, 2, sizes)) > 1
+    for kind in ("walls", "gaps"):
+        one, many = getattr(whole, kind), getattr(banded, kind)
+        assert sum(p.sites for p in one) == sum(p.sites for p in many) > 0
+        assert len(many) >= len(one)
+        for piece in many:
+            column, row, layer = piece.place
+            assert (stack.layer(layer)[column, row] == 0) == (kind == "gaps")
+    assert banded.sites == whole.sites
+    assert banded.part == whole.part

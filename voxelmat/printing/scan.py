@@ -2,17 +2,14 @@
 
 from __future__ import annotations
 
-from collections import deque
-from collections.abc import Iterator
-from concurrent.futures import Future, ThreadPoolExecutor
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 from numpy.typing import NDArray
 
-from voxelmat.errors import FileFormatError
-from voxelmat.kernels.bitplane import claims, count_planes, first_site, lone_sites, to_words
+from voxelmat.kernels.bitplane import count_planes, first_site, lone_sites
 from voxelmat.monitor import SILENT, Monitor
+from voxelmat.printing.decoded import DecodedLayer, decoded_layers
 from voxelmat.printing.pieces import Piece, Pieces
 from voxelmat.printing.readback import Stack
 from voxelmat.printing.thin import ThinScreen
@@ -20,7 +17,10 @@ from voxelmat.printing.thin import ThinScreen
 __all__ = ["Facts", "FirstSeen", "scan"]
 
 Plane = NDArray[np.uint64]
-_AHEAD = 4  # layers that are read and decoded while earlier ones are looked at
+Sites = tuple[int, int, int]
+#: Bytes for the layers that the screens for thin features keep; more rows go in bands, each of
+#: which reads the stack again.
+_MEMORY = 256 << 20
 
 
 @dataclass(slots=True)
@@ -55,42 +55,6 @@ class Facts:
     gaps: list[Piece] = field(default_factory=list)
 
 
-@dataclass(slots=True)
-class _Layer:
-    """One decoded layer as words ``[channel, row, word]``, with what was wrong with its files."""
-
-    planes: Plane
-    bad: list[tuple[int, str]]
-    changed: list[int]
-
-
-def _read(stack: Stack, layer: int) -> _Layer:
-    _, rows, width = stack.raster.image_shape
-    planes = np.zeros((len(stack.channels), rows, (width + 63) // 64), dtype=np.uint64)
-    found = _Layer(planes, [], [])
-    for channel in range(len(stack.channels)):
-        try:
-            data = stack.file_bytes(channel, layer)
-            if not stack.is_intact(channel, layer, data):
-                found.changed.append(channel)
-            to_words(stack.decode(channel, layer, data), planes[channel])
-        except FileFormatError as error:
-            found.bad.append((channel, str(error)))
-    return found
-
-
-def _layers(stack: Stack) -> Iterator[_Layer]:
-    """Decoded layers from the tray upwards, a few read ahead."""
-    with ThreadPoolExecutor(1, thread_name_prefix="voxelmat-read") as pool:
-        waiting: deque[Future[_Layer]] = deque()
-        for layer in range(stack.n_layers):
-            waiting.append(pool.submit(_read, stack, layer))
-            if len(waiting) > _AHEAD:
-                yield waiting.popleft().result()
-        while waiting:
-            yield waiting.popleft().result()
-
-
 class _Neighbours:
     """Sites that stand alone between the layers below and above."""
 
@@ -120,32 +84,96 @@ def _count(plane: Plane) -> int:
     return int(total[0])
 
 
-class _Thin:
-    """Thin sites of one kind, gathered into pieces."""
+class _Band:
+    """Thin walls and gaps in a band of rows, and the rows beside it that they depend on."""
 
-    def __init__(self, rows: int, width: int, sites: tuple[int, int, int], solid: bool) -> None:
-        self._screen = ThinScreen(rows, width, sites, solid=solid)
-        self._pieces = Pieces(rows, width)
+    def __init__(self, first: int, last: int, rows: int, width: int, kinds: tuple[Sites, Sites]):
+        reach = _reach(kinds)
+        self._first = first
+        self._rows = slice(max(0, first - reach), min(rows, last + reach))
+        self._inner = slice(first - self._rows.start, last - self._rows.start)
+        height = self._rows.stop - self._rows.start
+        self._screens = [
+            ThinScreen(height, width, sites, solid=solid)
+            for sites, solid in zip(kinds, (True, False), strict=True)
+        ]
+        self._pieces = [Pieces(last - first, width) for _ in kinds]
 
     def push(self, plane: Plane) -> None:
-        thin = self._screen.push(plane)
-        if thin is not None:
-            self._pieces.add(thin)
+        for screen, pieces in zip(self._screens, self._pieces, strict=True):
+            thin = screen.push(np.ascontiguousarray(plane[self._rows]))
+            if thin is not None:
+                pieces.add(np.ascontiguousarray(thin[self._inner]))
 
-    def found(self) -> list[Piece]:
-        for thin in self._screen.finish():
-            self._pieces.add(thin)
-        return self._pieces.found()
+    def found(self) -> list[list[Piece]]:
+        for screen, pieces in zip(self._screens, self._pieces, strict=True):
+            for thin in screen.finish():
+                pieces.add(np.ascontiguousarray(thin[self._inner]))
+        return [[self._moved(p) for p in pieces.found()] for pieces in self._pieces]
+
+    def _moved(self, piece: Piece) -> Piece:
+        column, row, layer = piece.place
+        return replace(piece, place=(column, row + self._first, layer))
 
 
-def scan(
-    stack: Stack,
-    wall: tuple[int, int, int],
-    gap: tuple[int, int, int],
-    *,
-    monitor: Monitor = SILENT,
-) -> Facts:
-    """Read every layer once and gather the facts.
+def _reach(kinds: tuple[Sites, Sites]) -> int:
+    """Rows to either side that decide whether a site is thin."""
+    return max(sites[1] // 2 - (-3 * sites[1] // 2) + 1 for sites in kinds)
+
+
+def _bands(rows: int, words: int, kinds: tuple[Sites, Sites]) -> list[tuple[int, int]]:
+    """First and last row of bands whose screens stay within `_MEMORY`."""
+    planes = 7 * sum(sites[0] for sites in kinds)
+    fit = _MEMORY // (planes * words * 8)
+    if fit >= rows:
+        return [(0, rows)]
+    size = max(fit - 2 * _reach(kinds), 16)
+    return [(a, min(a + size, rows)) for a in range(0, rows, size)]
+
+
+class _Main:
+    """Everything but thin features, layer by layer."""
+
+    def __init__(self, stack: Stack) -> None:
+        _, rows, width = stack.raster.image_shape
+        words = (width + 63) // 64
+        blank = np.zeros((rows, words), dtype=np.uint64)
+        self._valid = np.full((rows, words), np.uint64(0xFFFFFFFFFFFFFFFF))
+        self._valid[:, -1] = (2**64 - 1 << (words * 64 - width)) & (2**64 - 1)
+        self.facts = Facts(sites=[])
+        self._sites = np.zeros(len(stack.channels), dtype=np.int64)
+        self._part, self._hollows = Pieces(rows, width), Pieces(rows, width)
+        self._printed = None if stack.support_channel is None else Pieces(rows, width)
+        self._alone = _Neighbours(blank, self._valid, self.facts.specks)
+        self._holes = _Neighbours(~blank, self._valid, self.facts.holes)
+
+    def push(self, k: int, layer: DecodedLayer, part: Plane) -> None:
+        facts = self.facts
+        facts.bad_files += [(k, c, text) for c, text in layer.bad]
+        facts.changed_files += [(k, c) for c in layer.changed]
+        count_planes(layer.planes, self._sites)
+        printed, twice = layer.union(support=True)
+        facts.twice.note(k, twice, _count(twice))
+        if self._printed is not None:
+            self._printed.add(printed)
+        self._part.add(part)
+        self._hollows.add(~part & self._valid)
+        self._alone.push(part)
+        self._holes.push(~part)
+
+    def finish(self) -> Facts:
+        self._hollows.add(self._valid)  # the open space above the last layer
+        self._alone.finish()
+        self._holes.finish()
+        self.facts.sites = [int(n) for n in self._sites]
+        self.facts.part = self._part.found()
+        self.facts.printed = (self._printed or self._part).found()
+        self.facts.hollows = self._hollows.found()
+        return self.facts
+
+
+def scan(stack: Stack, wall: Sites, gap: Sites, *, monitor: Monitor = SILENT) -> Facts:
+    """Read every layer and gather the facts.
 
     Parameters
     ----------
@@ -157,46 +185,29 @@ def scan(
     Returns
     -------
     Facts
-        A file that cannot be read counts as an empty image and is listed.
+        A file that cannot be read counts as an empty image and is listed. Very large layers are
+        screened for thin features in bands of rows; a feature across two bands is then listed
+        in both.
     """
     _, rows, width = stack.raster.image_shape
-    words = (width + 63) // 64
-    blank = np.zeros((rows, words), dtype=np.uint64)
-    valid = np.full((rows, words), np.uint64(0xFFFFFFFFFFFFFFFF))
-    valid[:, -1] = (2**64 - 1 << (words * 64 - width)) & (2**64 - 1)
-    facts = Facts(sites=[0] * len(stack.channels))
-    sites = np.zeros(len(stack.channels), dtype=np.int64)
-    support = stack.support_channel
-    part_pieces, printed_pieces = Pieces(rows, width), Pieces(rows, width)
-    hollow_pieces = Pieces(rows, width)
-    thin = [_Thin(rows, width, wall, True), _Thin(rows, width, gap, False)]
-    alone = _Neighbours(blank, valid, facts.specks)
-    holes = _Neighbours(~blank, valid, facts.holes)
-    for k, layer in enumerate(_layers(stack)):
-        facts.bad_files += [(k, c, text) for c, text in layer.bad]
-        facts.changed_files += [(k, c) for c in layer.changed]
-        count_planes(layer.planes, sites)
-        printed, twice = np.empty_like(blank), np.empty_like(blank)
-        claims(layer.planes, printed, twice)
-        facts.twice.note(k, twice, _count(twice))
-        part = printed
-        if support is not None:
-            part = np.empty_like(blank)
-            claims(np.delete(layer.planes, support, axis=0), part, twice)
-            printed_pieces.add(printed)
-        part_pieces.add(part)
-        hollow_pieces.add(~part & valid)
-        alone.push(part)
-        holes.push(~part)
-        for screen in thin:
-            screen.push(part)
-        monitor.report("checking layers", done=k + 1, total=stack.n_layers)
-    hollow_pieces.add(valid)  # the open space above the last layer
-    alone.finish()
-    holes.finish()
-    facts.sites = [int(n) for n in sites]
-    facts.part = part_pieces.found()
-    facts.printed = facts.part if support is None else printed_pieces.found()
-    facts.hollows = hollow_pieces.found()
-    facts.walls, facts.gaps = (screen.found() for screen in thin)
+    kinds = (wall, gap)
+    bands = _bands(rows, (width + 63) // 64, kinds)
+    main = _Main(stack)
+    total = stack.n_layers * len(bands)
+    thin: list[list[list[Piece]]] = []
+    for number, (first, last) in enumerate(bands):
+        band = _Band(first, last, rows, width, kinds)
+        for k, layer in enumerate(decoded_layers(stack)):
+            part, _ = layer.union(support=False)
+            if number == 0:
+                main.push(k, layer, part)
+            band.push(part)
+            done = number * stack.n_layers + k + 1
+            monitor.report("checking layers", done=done, total=total)
+        thin.append(band.found())
+    facts = main.finish()
+    facts.walls, facts.gaps = (
+        sorted((p for found in thin for p in found[kind]), key=lambda p: -p.sites)
+        for kind in range(2)
+    )
     return facts

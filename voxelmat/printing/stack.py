@@ -10,6 +10,7 @@ from pathlib import Path
 from typing import Any
 
 import numpy as np
+from scipy import ndimage
 
 from voxelmat.errors import FileFormatError, InputError, ResourceError
 from voxelmat.model.part import Part
@@ -35,13 +36,20 @@ _ENCODER = "one-bit PNG, filter 0, deflate level 1"
 def designed_volumes(part: Part) -> dict[str, float]:
     """Volume of each printed resin in the design, mm^3.
 
-    A part with a signed distance but no occupancy is filled from that distance: a voxel whose
-    centre lies on the outline counts half.
+    The solid fraction of the voxels counts, except where only the signed distance knows what is
+    printed: where there is no fraction, and round bought-in bodies, whose clearance is cut out
+    of voxels that are else full. There a voxel whose centre lies on the outline counts half.
     """
-    if part.occupancy is None and part.distance is not None:
-        fill = np.clip(127.5 - 255 / 16 * part.distance.astype(np.float32), 0, 255)
-        part = part.replace(occupancy=np.where(part.labels > 0, fill, 0).astype(np.uint8))
     printed = part.printed_labels()
+    if part.distance is not None:
+        cut = np.clip(127.5 - 255 / 16 * part.distance.astype(np.float32), 0, 255)
+        fill = cut if part.occupancy is None else part.occupancy.astype(np.float32)
+        bought = ~printed[part.labels] & (part.labels > 0)
+        if bought.any():
+            near = ndimage.binary_dilation(bought, iterations=2)
+            fill = np.where(near, np.minimum(fill, cut), fill)
+        fill = np.where(part.labels > 0, np.rint(fill), 0)
+        part = part.replace(occupancy=fill.astype(np.uint8))
     amount = (part.filled() * printed) @ part.palette_fractions() * part.grid.voxel_volume
     return {m.name: float(v) for m, v in zip(part.resins, amount, strict=True)}
 
