@@ -81,13 +81,13 @@ def void_and_cluster(energy, filled, kernel, rank):
         if into == out:
             break
         swaps += 1
-    prototype, prototype_energy = filled.copy(), energy.copy()
+    initial, initial_energy = filled.copy(), energy.copy()
     for r in range(start.size - 1, -1, -1):
         out = cluster_at[np.argmax(cluster)]
         _flip(energy, filled, kernel, out, void, cluster, void_at, cluster_at)
         order[out] = r
-    filled[:] = prototype
-    energy[:] = prototype_energy
+    filled[:] = initial
+    energy[:] = initial_energy
     for b in range(n_blocks):
         _search_block(energy, filled, b, void, cluster, void_at, cluster_at)
     for r in range(start.size, order.size):

@@ -15,10 +15,11 @@ from typing import Any
 from voxelmat.errors import FileFormatError, ResourceError
 from voxelmat.printing.manifest import FORMAT, MANIFEST, layer_name, read_manifest
 
-__all__ = ["Journal", "LayerRecord", "locked", "publish", "refuse_foreign"]
+__all__ = ["JOURNAL", "Journal", "LayerRecord", "locked", "publish", "refuse_foreign", "retired"]
 
-_JOURNAL = "journal.jsonl"
-_FRESH = f"{_JOURNAL}.new"
+#: Lists the finished layers of a partial folder, one line of JSON each.
+JOURNAL = "journal.jsonl"
+_FRESH = f"{JOURNAL}.new"
 
 
 @dataclass(frozen=True, slots=True)
@@ -54,11 +55,11 @@ def locked(folder: Path) -> Iterator[None]:
 
 def _is_ours(folder: Path) -> bool:
     """True for a stack, whole or partial, that holds nothing but what we write."""
-    if all(entry.name in (_JOURNAL, _FRESH) for entry in folder.iterdir()):
+    if all(entry.name in (JOURNAL, _FRESH) for entry in folder.iterdir()):
         return True
     try:
-        if (folder / _JOURNAL).is_file():  # first, for a manifest beside it may be half-written
-            first = json.loads((folder / _JOURNAL).read_text("utf-8").splitlines()[0])
+        if (folder / JOURNAL).is_file():  # first, for a manifest beside it may be half-written
+            first = json.loads((folder / JOURNAL).read_text("utf-8").splitlines()[0])
             if first["format"] != FORMAT:
                 return False
             channels = set(first["channels"])
@@ -67,7 +68,7 @@ def _is_ours(folder: Path) -> bool:
     except (FileFormatError, OSError, ValueError, LookupError, TypeError):
         return False
     for entry in folder.iterdir():
-        if entry.name in (MANIFEST, _JOURNAL, _FRESH):
+        if entry.name in (MANIFEST, JOURNAL, _FRESH):
             continue
         if entry.name not in channels or not entry.is_dir() or entry.is_symlink():
             return False
@@ -96,15 +97,19 @@ def _remove(folder: Path) -> None:
         shutil.rmtree(folder)
 
 
+def retired(folder: Path) -> Path:
+    """Where an earlier stack lies for the moment in which the new one takes its name."""
+    return folder.with_name(f"{folder.name}.old")
+
+
 def publish(partial: Path, folder: Path) -> None:
     """Put the finished `partial` in the place of `folder`; both are ours."""
-    old = folder.with_name(f"{folder.name}.old")
-    refuse_foreign(old)
+    old = retired(folder)
     _remove(old)
     if folder.exists():
         folder.rename(old)
     partial.rename(folder)
-    (folder / _JOURNAL).unlink()
+    (folder / JOURNAL).unlink()
     _remove(old)
 
 
@@ -137,17 +142,17 @@ class Journal:
         lines = [head, *(_as_dict(r) for r in self.done.values())]
         fresh = partial / _FRESH
         fresh.write_text("".join(json.dumps(line) + "\n" for line in lines), encoding="utf-8")
-        fresh.replace(partial / _JOURNAL)
+        fresh.replace(partial / JOURNAL)
         (partial / MANIFEST).unlink(missing_ok=True)
         for channel in channels:
             (partial / channel).mkdir(exist_ok=True)
-        self._handle = (partial / _JOURNAL).open("a", encoding="utf-8")
+        self._handle = (partial / JOURNAL).open("a", encoding="utf-8")
 
     def _surviving(self, head: dict[str, Any]) -> dict[int, LayerRecord]:
         """Journalled layers of the same job whose files are on disk, unchanged."""
         found: dict[int, LayerRecord] = {}
         try:
-            lines = (self.partial / _JOURNAL).read_text("utf-8").splitlines()
+            lines = (self.partial / JOURNAL).read_text("utf-8").splitlines()
             if not lines or json.loads(lines[0]) != head:
                 return found
         except (OSError, ValueError):

@@ -9,6 +9,7 @@ from voxelmat.model.part import Part
 from voxelmat.model.profile import PrintProfile
 from voxelmat.monitor import SILENT, Monitor
 from voxelmat.printing.features import piece_findings, small_findings, zone_findings
+from voxelmat.printing.journal import JOURNAL
 from voxelmat.printing.readback import Stack, read_stack
 from voxelmat.printing.scan import Facts, scan
 from voxelmat.printing.shifted import shifted_channel
@@ -118,7 +119,7 @@ def _um(pitch: tuple[object, ...]) -> str:
 
 def _folder(stack: Stack) -> list[Finding]:
     """Files that no channel explains."""
-    known = {c.name for c in stack.channels} | {"manifest.json"}
+    known = {c.name for c in stack.channels} | {"manifest.json", JOURNAL}
     extra = sorted(p.name for p in stack.folder.iterdir() if p.name not in known)
     for channel in stack.channels:
         folder = stack.folder / channel.name

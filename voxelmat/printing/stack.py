@@ -17,7 +17,7 @@ from voxelmat.model.part import Part
 from voxelmat.model.profile import SUPPORT_POLICIES, PrintProfile
 from voxelmat.monitor import SILENT, Monitor
 from voxelmat.printing.halftone import INTERFACE_RULE, Slicer, used_resins
-from voxelmat.printing.journal import Journal, locked, publish, refuse_foreign
+from voxelmat.printing.journal import Journal, locked, publish, refuse_foreign, retired
 from voxelmat.printing.manifest import FORMAT, image_entry, write_manifest
 from voxelmat.printing.mask import mask_digest
 from voxelmat.printing.place import place
@@ -77,7 +77,8 @@ def write_stack(
     profile : PrintProfile
     folder : str or Path
         Appears only when everything is written; until then work goes to ``<folder>.partial``.
-        An earlier stack of this name is replaced then; any other content is refused.
+        An earlier stack of this name is replaced then; any other content is refused. A lock
+        file ``.<folder>.lock`` stays beside it.
     orientation : sequence of str
         Turns by multiples of 90 degrees about the tray's axes, in order: ``["x 90"]``.
     position : tuple of float, optional
@@ -118,7 +119,8 @@ def write_stack(
     job = _plan(part, profile, orientation, position, support, seed, dict(inputs or {}))
     workers = _workers(threads)
     with locked(folder):
-        refuse_foreign(folder)
+        for target in (folder, retired(folder)):
+            refuse_foreign(target)
         finished = _finished(folder, job.digest) if resume else None
         if finished is not None:
             return finished
