@@ -8,9 +8,9 @@ from voxelmat.fea.static import solve
 from voxelmat.fea.stress import stress
 from voxelmat.fea.system import LinearSystem
 from voxelmat.model.blend import EMPTY, Blend
-from voxelmat.model.loadcase import Force, LoadCase, Support
-from voxelmat.model.part import Part
-from voxelmat.model.region import FaceRegion
+from voxelmat.model.loadcase import Force, LoadCase, Pressure, Support
+from voxelmat.model.part import DISTANCE_STEPS, Part
+from voxelmat.model.region import FaceRegion, Sphere
 
 
 def lame(E, nu):
@@ -192,3 +192,71 @@ def test_work_is_twice_the_energy(grid, resin):
     assert result.balance < 1e-8
     (reaction,) = result.reactions.values()
     np.testing.assert_allclose(reaction, (-3.0, 2.0, -5.0), rtol=1e-7)
+
+
+class Bore:
+    """The faces that look to the centre of a hollow ball, without its planes of symmetry."""
+
+    name = "bore"
+    inside = Sphere(name="near", centre=(0, 0, 0), radius=1.5)
+
+    def voxels(self, part):
+        return self.inside.voxels(part)
+
+    def nodes(self, part):
+        return self.inside.nodes(part)
+
+    def faces(self, part):
+        faces = self.inside.faces(part)
+        return faces.select((faces.side == -1) & (faces.centre.min(axis=1) > 1e-9))
+
+
+def hollow_ball(n, grid, material):
+    """Octant of a ball 1 < r < 2, with the filled fraction of each voxel from 4^3 samples."""
+    h = 2.2 / n
+    g = grid(n, n, n, spacing=(h, h, h))
+    x, y, z = np.meshgrid(*g.centres(), indexing="ij")
+    fill = np.zeros(g.shape)
+    steps = ((np.arange(4) + 0.5) / 4 - 0.5) * h
+    for a in steps:
+        for b in steps:
+            for c in steps:
+                r = np.sqrt((x + a) ** 2 + (y + b) ** 2 + (z + c) ** 2)
+                fill += ((r > 1) & (r < 2)) / 64
+    r = np.sqrt(x**2 + y**2 + z**2)
+    away = np.maximum(1 - r, r - 2) / h * DISTANCE_STEPS
+    occupancy = np.rint(255 * fill).astype(np.uint8)
+    return Part(
+        grid=g,
+        resins=(material,),
+        palette=(EMPTY, Blend.pure(material.name)),
+        labels=(occupancy > 0).astype(np.uint16),
+        distance=np.clip(np.rint(away), -127, 127).astype(np.int8),
+        occupancy=occupancy,
+    )
+
+
+# Check B3: Lame, hollow ball a 1, b 2, p 1, E 1, nu .3: u(a) .8 (formula
+# u = A r + B / r^2, A = (1 - 2 nu) / 7 E, B = 8 (1 + nu) / 14 E). A pressure on the staircase's own
+# area, 1.503 times too large, would miss by half.
+def test_pressure_in_a_hollow_ball(grid, resin):
+    part = hollow_ball(22, grid, resin(E=1.0, nu=0.3))
+    supports = tuple(
+        Support(
+            region=FaceRegion(name=axis, side=f"{axis}-"),
+            displacement=tuple(0.0 if a == axis else None for a in "xyz"),
+        )
+        for axis in "xyz"
+    )
+    case = LoadCase(name="p", supports=supports, loads=(Pressure(region=Bore(), pressure=1.0),))
+    result = solve(part, case)
+    (force,) = result.resultants.values()
+    np.testing.assert_allclose(force, np.pi / 4, rtol=0.01)
+    x = np.stack(np.meshgrid(*part.grid.nodes(), indexing="ij"), axis=-1)
+    r = np.sqrt((x**2).sum(axis=-1))
+    wall = (r > 1.2) & (r < 1.8)
+    radial = (result.displacement * x).sum(axis=-1)[wall] / r[wall]
+    A, B = 0.4 / 7, 8 * 1.3 / 14
+    assert pytest.approx(0.8) == A + B
+    exact = A * r[wall] + B / r[wall] ** 2
+    assert np.mean(radial / exact) == pytest.approx(1.0, abs=0.01)
