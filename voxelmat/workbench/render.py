@@ -26,7 +26,7 @@ __all__ = ["Scene", "on_render_thread"]
 P = ParamSpec("P")
 T = TypeVar("T")
 SIZE = (840, 480)
-_MARGIN = 1.12
+_MARGIN = 1.15
 
 
 class _RenderThread:
@@ -125,6 +125,10 @@ class Scene:
         low, high = quads.points.min(axis=0), quads.points.max(axis=0)
         self._centre = 0.5 * (low + high).astype(float)
         self._radius = 0.5 * float(np.linalg.norm(high - low))
+        # Wide enough at every azimuth, high enough at the first elevation.
+        across = 0.5 * float(np.hypot(*(high - low)[:2]))
+        up = np.abs(self.eye.camera().axes()[1])
+        self._half = _MARGIN * max(across * SIZE[1] / SIZE[0], 0.5 * float((high - low) @ up))
         on_render_thread(self._build, quads, rgb)
         _open.add(self)
 
@@ -164,8 +168,7 @@ class Scene:
         camera.focal_point = tuple(self._centre)
         camera.position = tuple(self._centre + 4.0 * self._radius * axes[2])
         camera.up = tuple(axes[1])
-        half_height = self._radius * _MARGIN * min(1.0, SIZE[1] / SIZE[0] * 1.25)
-        camera.parallel_scale = half_height / self.eye.zoom
+        camera.parallel_scale = self._half / self.eye.zoom
         self._plotter.renderer.ResetCameraClippingRange()
         self._plotter.render()  # a screenshot alone would give the last picture again
         image = Image.fromarray(self._plotter.screenshot(None, return_img=True))

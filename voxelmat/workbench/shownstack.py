@@ -14,7 +14,7 @@ from voxelmat.model.grid import VoxelGrid
 from voxelmat.model.html import table
 from voxelmat.model.material import Constant, Material
 from voxelmat.model.part import Part
-from voxelmat.printing.readback import Stack
+from voxelmat.printing.readback import Channel, Stack
 from voxelmat.units import number
 from voxelmat.workbench.shown import AXES, Field, Rgb, Shown
 from voxelmat.workbench.voxfaces import Quads, cut_mask, quads_of
@@ -25,10 +25,14 @@ __all__ = ["of_stack"]
 #: Longest side of a layer's picture, pixels, and of the preview in space, sites.
 _PIXELS = 1400
 _PREVIEW = 150
+_SUPPORT = "#C4C4C4"
 
 
-def _record(name: str, number_of: int) -> Material:
+def _record(channel: Channel, number_of: int) -> Material:
     """The resin's own record, for its colour; a stand-in where the library has none."""
+    name, colour = channel.resin, OKABE_ITO[number_of % len(OKABE_ITO)]
+    if channel.role == "support":
+        colour = _SUPPORT  # like no resin: it is washed away
     try:
         return load_library()[name]
     except VoxelmatError:
@@ -38,7 +42,7 @@ def _record(name: str, number_of: int) -> Material:
             E=Constant(value=1.0, unit="MPa"),
             nu=Constant(value=0.3),
             density=Constant(value=1e-9),
-            colour=OKABE_ITO[number_of % len(OKABE_ITO)],
+            colour=colour,
         )
 
 
@@ -52,7 +56,7 @@ def _preview(stack: Stack) -> tuple[Part, int, int]:
     labels = np.stack(planes, axis=2).astype(np.uint16)
     spacing = [s * p for s, p in zip(step, pitch, strict=True)]
     origin = [o * p for o, p in zip(stack.raster.offset, pitch, strict=True)]
-    resins = tuple(_record(c.resin, n) for n, c in enumerate(stack.channels))
+    resins = tuple(_record(c, n) for n, c in enumerate(stack.channels))
     part = Part(
         grid=VoxelGrid(
             shape=(labels.shape[0], labels.shape[1], labels.shape[2]),
