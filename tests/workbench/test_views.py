@@ -220,9 +220,7 @@ def test_old_views_are_closed(made_up, blind, monkeypatch):
     assert closed == [views[0], views[1]]  # its cell ran again; it was the oldest of three
 
 
-def test_space_view_turns_cuts_and_survives_other_threads(made_up):
-    if not probe_gl().works:
-        pytest.skip(probe_gl().reason)
+def test_space_view_turns_cuts_and_survives_other_threads(made_up, gl):
     part = made_up.grip()
     view = show_module.show(made_up.made_up_result(part, made_up.palm_case()))
     seen = {view.space.jpeg()}
