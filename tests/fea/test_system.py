@@ -257,14 +257,22 @@ def test_cancel():
         system.solve(np.ones(fixed.shape))
 
 
-def test_bytes_a_voxel():
-    # Own limit: 390 bytes a voxel with the dear coarse method, vectors of the iteration included.
-    n = 32
+@pytest.mark.parametrize(("coarse", "most"), [("avg2", 270), ("gal4b", 390)])
+def test_bytes_a_voxel(coarse, most):
+    # Own limits, the four vectors of the iteration included.
+    n = 48
     lam, mu = (np.full((n, n, n), v) for v in lame(1.0, 0.3))
     fixed = clamped(lam.shape)
-    system = LinearSystem(lam, mu, (1.0, 1.0, 1.0), fixed, coarse="avg2")
+    system = LinearSystem(lam, mu, (1.0, 1.0, 1.0), fixed, coarse=coarse)
     b = np.zeros(fixed.shape)
     b[2, ..., -1] = 1.0
     system.solve(b, tol=1e-3)
-    iteration = 5 * 8 * fixed.size  # x, r, p, q, f
-    assert (system.nbytes + iteration) / lam.size < 390
+    assert (system.nbytes + 4 * 8 * fixed.size) / lam.size < most
+
+
+def test_a_tolerance_that_makes_no_sense():
+    lam, mu = (np.full((2, 2, 2), v) for v in lame(1.0, 0.3))
+    system = LinearSystem(lam, mu, (1.0, 1.0, 1.0), clamped(lam.shape))
+    for tol in (0.0, -1.0, float("nan")):
+        with pytest.raises(InputError, match="tol must lie in 0 to 1"):
+            system.solve(np.ones(system.shape), tol=tol)

@@ -194,6 +194,13 @@ class LinearSystem:
             raise InputError("A first guess or a prescribed displacement is not finite.")
         return x, given
 
+    def _size(self, b: Double, given: Double | None) -> float:
+        """Size of the load on free unknowns, less what the given displacements take."""
+        force = b * self.free
+        if given is not None:
+            force -= self.apply(given) * self.free
+        return float(np.sqrt(dot(force, force)))
+
     def solve(
         self,
         b: Double,
@@ -229,15 +236,12 @@ class LinearSystem:
             raise InputError(f"The load must be finite and of shape {self.shape}; got {b.shape}.")
         with computing(), crew(b[0].size):
             x, given = self._start(x0, prescribed)
-            force = b * self.free
-            norm = float(np.sqrt(dot(force, force)))
-            if prescribed is not None:
-                carried = self.apply(given) * self.free
-                np.subtract(force, carried, out=carried)
-                norm = float(np.sqrt(dot(carried, carried)))
+            norm = self._size(b, None if prescribed is None else given)
             if norm == 0.0:
                 return Solution(u=given, iterations=0, residual=0.0, history=(0.0,))
-            run = self._iterate(force, Iteration(x), norm, tol, maxiter)
+            run = self._iterate(
+                np.ascontiguousarray(b, dtype=np.float64), Iteration(x), norm, tol, maxiter
+            )
         if run.state != "converged":
             raise ConvergenceError(self._complaint(run, tol), run.history)
         return Solution(
