@@ -12,7 +12,7 @@ from voxelmat.errors import InputError
 from voxelmat.fea.operator import touched_nodes
 from voxelmat.model.grid import VoxelGrid
 
-__all__ = ["Piece", "check_held", "free_motions", "motion_names"]
+__all__ = ["Piece", "check_held", "find_pieces", "free_motions", "motion_names"]
 
 Double = NDArray[np.float64]
 Bools = NDArray[np.bool_]
@@ -160,6 +160,11 @@ def _pieces(
         alone = touched_nodes(mask) & (touching[at] <= 1)
         pieces.append(_piece(mask, alone, box, held[(slice(None), *at)], loaded[at], grid))
     return labels, pieces
+
+
+def find_pieces(solid: Bools, held: Bools, grid: VoxelGrid) -> list[Piece]:
+    """Pieces joined face to face with the motions left to each; arrays as for `check_held`."""
+    return _pieces(solid, held, np.zeros(held.shape[1:], dtype=bool), grid)[1]
 
 
 def check_held(
