@@ -48,7 +48,8 @@ def test_against_plain_comparisons(value, spread, limits):
     requirement = most(high, at_least=low)
     verdict = judge(requirement, value, spread)
     ends = [value, *spread]
-    tried = [min(ends) + t / 200 * (max(ends) - min(ends)) for t in range(201)]
+    # Rounding must not carry a point past the end of the band.
+    tried = [min(max(ends), min(ends) + t / 200 * (max(ends) - min(ends))) for t in range(201)]
     fits = {low <= v <= high for v in (*tried, *ends)}
     if fits == {True}:
         assert verdict.status == "met"

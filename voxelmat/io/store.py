@@ -76,7 +76,8 @@ def load_part(path: Path, law: BlendLaw) -> Part:
         another law.
     """
     try:
-        with np.load(path, allow_pickle=False) as data:
+        # Opened here, because numpy leaves a file open when it is not a whole archive.
+        with path.open("rb") as handle, np.load(handle, allow_pickle=False) as data:
             head = json.loads(str(data["head"]))
             if head.get("format") != _FORMAT:
                 raise FileFormatError(
