@@ -168,7 +168,8 @@ def _stepper(spec: DesignSpec, problem: LayoutProblem) -> Stepper:
     criteria = suits_criteria(spec, problem.unknowns)
     if spec.method == "oc" or (spec.method == "auto" and criteria):
         return OptimalityCriteria(problem.low, problem.high, move=spec.move)
-    return MovingAsymptotes(problem.low, problem.high, move=spec.move)
+    adaptive = isinstance(spec.objective, TargetDeflection)
+    return MovingAsymptotes(problem.low, problem.high, move=spec.move, adaptive=adaptive)
 
 
 def _digest(part: Part, spec: DesignSpec, cases: tuple[Case, ...], element: str) -> str:
