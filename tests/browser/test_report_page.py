@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import re
+
 import pytest
 
 from voxelmat.workflow.report import write_report
@@ -66,5 +68,10 @@ def test_it_prints_on_a4(chromium, report):
     context, page, _, _ = _opened(chromium, report)
     paper = page.pdf(prefer_css_page_size=True)
     assert paper.startswith(b"%PDF")
-    assert b"/MediaBox [0 0 594.95996 841.91998]" in paper or b"841" in paper
+    page.set_viewport_size({"width": 680, "height": 1000})  # A4 less its margins, in CSS px
+    page.emulate_media(media="print")
+    wide = page.evaluate("[...document.querySelectorAll('table, img')].map(t => t.scrollWidth)")
+    assert max(wide) <= 680
+    size = re.search(rb"/MediaBox \[0 0 ([\d.]+) ([\d.]+)\]", paper)
+    assert [float(s) for s in size.groups()] == pytest.approx([595.3, 841.9], abs=1)  # points
     context.close()

@@ -16,8 +16,11 @@ from PIL import Image
 
 from voxelmat.errors import InputError
 from voxelmat.model.surface import carriers
+from voxelmat.printing.profile import load_profile
+from voxelmat.printing.stack import write_stack
 from voxelmat.workbench import glprobe, hook
 from voxelmat.workbench import show as show_module
+from voxelmat.workbench import shown as shown_module
 from voxelmat.workbench.glprobe import Probe, probe_gl
 from voxelmat.workbench.shown import of_part, of_result, picture_of
 from voxelmat.workbench.sliceview import SliceView
@@ -96,6 +99,17 @@ def test_a_large_part_is_thinned_and_it_is_said(made_up):
     assert small.grid.spacing == (9.0, 9.0, 9.0)
     assert (small.labels == part.labels[::3, ::3, ::3]).all()
     assert coarser(part)[1] == 1
+
+
+def test_a_large_result_is_thinned_with_its_movement(made_up, monkeypatch):
+    monkeypatch.setattr(shown_module, "coarser", lambda part: coarser(part, largest=200))
+    result = made_up.made_up_result(made_up.grip(), made_up.palm_case())
+    shown = of_result(result)
+    assert "one voxel in 3 is drawn" in shown.note
+    assert "deformed" in shown.note
+    quads, rgb = shown.surface("y", 0.0)
+    assert len(quads) == len(rgb) > 20
+    assert np.isfinite(quads.points).all()
 
 
 # ---------------------------------------------------------------------- slices
@@ -243,6 +257,24 @@ def test_space_view_turns_cuts_and_survives_other_threads(made_up, gl):
     view.space._told(None, {"kind": "view", "to": "nowhere"}, [])
     assert view.space.status.startswith("Error")
     view.close()
+    view.close()
+
+
+def test_a_stack_shows_its_own_layers(made_up, blind, tmp_path):
+    profile = load_profile("invented-coarse")
+    stack = write_stack(made_up.grip(6.0), profile, tmp_path / "stack", support="machine")
+    view = show_module.show(stack)
+    assert view.slices.axes == ["z"]
+    assert view.slices.count == stack.n_layers
+    view.slices.index = 300
+    sites = stack.layer(300)
+    drawn = pixels(view.slices.picture)
+    assert drawn.shape[:2] == sites.T.shape
+    empty = sites.T[::-1] == 0
+    assert (drawn[empty] == 255).all()
+    assert (drawn[~empty] != 255).any(axis=1).all()
+    assert "layer 300 of" in view.slices.where
+    assert "laid, mm³" in view._repr_html_()
     view.close()
 
 

@@ -5,12 +5,16 @@ from __future__ import annotations
 import re
 from html.parser import HTMLParser
 
+import numpy as np
 import pytest
 
 from voxelmat.errors import ResourceError
+from voxelmat.model.blend import EMPTY, Blend
+from voxelmat.model.grid import VoxelGrid
+from voxelmat.model.part import Part
 from voxelmat.model.requirement import Requirement, judge
 from voxelmat.model.result import Extreme
-from voxelmat.workflow.report import STANDING_CAUTIONS, RunData, answer, render, write_report
+from voxelmat.workflow.report import STANDING_CAUTIONS, RunData, answer, more, render, write_report
 from voxelmat.workflow.report_tables import (
     asked,
     expectation,
@@ -144,6 +148,23 @@ def test_a_bare_part_still_gives_a_page_that_says_what_is_missing(made_up):
     assert "nothing was found" not in flat  # no check ran, so none may be claimed
 
 
+def test_a_single_voxel_and_forty_resins_are_drawn_too(made_up):
+    resins = tuple(
+        made_up.resin(f"resin-{n}", "rigid", 1e3, 0.3, "#0072B2", 9.0) for n in range(40)
+    )
+    one = Part.uniform(VoxelGrid(shape=(1, 1, 1), spacing=(1.0, 2.0, 3.0)), resins[0])
+    assert "1 hold material" in render(RunData(name="one", part=one))
+    labels = np.arange(1, 41, dtype=np.uint16).reshape(10, 4, 1)
+    many = Part(
+        grid=VoxelGrid(shape=(10, 4, 1), spacing=(1.0, 1.0, 1.0)),
+        resins=resins,
+        palette=(EMPTY, *(Blend.pure(r.name) for r in resins)),
+        labels=labels,
+    )
+    page = Page(render(RunData(name="many", part=many)))
+    assert all(r.name in page.text for r in resins)
+
+
 def test_a_clean_preflight_is_said_only_where_it_ran(run, made_up):
     clean = RunData(name="x", part=run.part, checked=True)
     assert "nothing was found" in render(clean)
@@ -202,7 +223,7 @@ def test_percent_and_answers():
     need = Requirement(name="m", measure="mass", at_most=5.0)
     open_ones = (judge(need, 4.0, doubts=["x"]), judge(need, 6.0, doubts=["x"]))
     object.__setattr__(part, "verdicts", open_ones)
-    assert "1 of 2 values lie within their limits" in answer(part)
+    assert "1 of 2 values lie within their limits" in more(part)
 
 
 def test_a_large_compression_is_not_called_small(run, made_up):

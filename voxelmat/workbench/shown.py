@@ -189,6 +189,10 @@ def _slices_of(part: Part) -> dict[str, Any]:
     }
 
 
+def _preview(step: int) -> str:
+    return "" if step == 1 else f"; preview: one voxel in {step} is drawn, each way"
+
+
 def of_part(part: Part) -> Shown:
     """A part in the colours of its materials."""
     drawn, step = coarser(part)
@@ -204,7 +208,7 @@ def of_part(part: Part) -> Shown:
         fields=(_material_field(part),),
         surface=surface,
         legend=_material_legend(part),
-        note="" if step == 1 else f"preview: every {step}th voxel is drawn",
+        note=_preview(step).removeprefix("; "),
         **_slices_of(part),
     )
 
@@ -228,11 +232,18 @@ def of_result(result: StaticResult) -> Shown:
         "von Mises stress", "MPa", result.von_mises, part.solid, "cividis", 4.0
     )
     factor = magnification(result)
-    shift = factor * result.displacement
+    drawn, step = coarser(part)
+    # Nodes of the coarser grid are every n-th of the part's; the last one may lie beyond it.
+    pick = [
+        np.minimum(np.arange(n + 1) * step, m)
+        for n, m in zip(drawn.grid.shape, part.grid.shape, strict=True)
+    ]
+    shift = factor * result.displacement[np.ix_(*pick)]
+    thin = moved[::step, ::step, ::step]
 
     def surface(axis: str, share: float) -> tuple[Quads, Rgb]:
-        quads = quads_of(part, cut_mask(part, AXES.index(axis), share), shift)
-        return quads, colour(moved[tuple(quads.voxel.T)])
+        quads = quads_of(drawn, cut_mask(drawn, AXES.index(axis), share), shift)
+        return quads, colour(thin[tuple(quads.voxel.T)])
 
     return Shown(
         title=f"{part.name}, load case {result.load_case.name}",
@@ -240,7 +251,7 @@ def of_result(result: StaticResult) -> Shown:
         fields=(move, stress, _material_field(part)),
         surface=surface,
         legend=move.legend,
-        note=f"deformed {factor:g} times as much as in truth",
+        note=f"deformed {factor:g} times as much as in truth{_preview(step)}",
         **_slices_of(part),
     )
 

@@ -104,6 +104,7 @@ def _context(run: RunData, monitor: Monitor) -> dict[str, Any]:
         "invented": run.invented,
         "question": run.question.strip(),
         "answer": answer(run),
+        "answer_more": more(run),
         "verdicts": tables.verdict_rows(run.verdicts),
         "cautions": [*run.cautions, *STANDING_CAUTIONS],
         "notes": run.notes,
@@ -142,15 +143,19 @@ def answer(run: RunData) -> str:
     count = Counter(v.status for v in run.verdicts)
     texts = [f"{count[s]} {s}" for s in ("met", "not met", "cannot be said") if count[s]]
     total = len(run.verdicts)
-    words = f"Of {total} requirement{'s' if total != 1 else ''}: {', '.join(texts)}."
+    return f"Of {total} requirement{'s' if total != 1 else ''}: {', '.join(texts)}."
+
+
+def more(run: RunData) -> str:
+    """What the numbers say where the verdict cannot."""
     unsaid = [v for v in run.verdicts if v.status == "cannot be said"]
-    if unsaid:
-        inside = sum(v.margin >= 0 for v in unsaid)
-        words += (
-            f" Of what cannot be said, {inside} of {len(unsaid)} values lie within their limits, "
-            "but the data behind them are too uncertain for a yes or a no."
-        )
-    return words
+    if not unsaid:
+        return ""
+    inside = sum(v.margin >= 0 for v in unsaid)
+    return (
+        f"Of what cannot be said, {inside} of {len(unsaid)} values lie within their limits, but "
+        "the data behind them are too uncertain for a yes or a no."
+    )
 
 
 def _grid_words(run: RunData) -> str:

@@ -26,6 +26,7 @@ __all__ = [
     "Picture",
     "colour_bar",
     "figure",
+    "legend",
     "legend_patches",
     "mm_axes",
     "plane_extent",
@@ -36,6 +37,7 @@ __all__ = [
 
 AXES = "xyz"
 _DPI = 130
+_NAMES = 8
 _GREY = "#444444"
 
 
@@ -106,6 +108,22 @@ def plane_extent(
 def short(place: float) -> str:
     """A coordinate, mm, to a hundredth, without trailing zeros."""
     return f"{round(place, 2) + 0.0:g}"
+
+
+def legend(fig: Figure, patches: list[Patch]) -> None:
+    """Names of materials below the drawing, two rows at most; the tables have them all."""
+    shown = patches if len(patches) <= _NAMES else patches[: _NAMES - 1]
+    if len(shown) < len(patches):
+        rest = f"and {len(patches) - len(shown)} more, see the table"
+        shown = [*shown, Patch(facecolor="none", edgecolor="none", label=rest)]
+    fig.legend(
+        handles=shown,
+        loc="lower left",
+        ncols=min(4, len(shown)),
+        fontsize=8,
+        frameon=False,
+        bbox_to_anchor=(0.02, 0.0),
+    )
 
 
 def legend_patches(part: Part) -> list[Patch]:

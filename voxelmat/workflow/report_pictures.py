@@ -16,6 +16,7 @@ from voxelmat.workflow.report_canvas import (
     AXES,
     Picture,
     figure,
+    legend,
     legend_patches,
     mm_axes,
     plane_extent,
@@ -84,14 +85,7 @@ def cut_picture(part: Part) -> Picture:
         mm_axes(ax, horizontal, vertical, f"cut at {AXES[axis]} = {short(where)} mm")
         places.append(f"{AXES[axis]} = {short(where)} mm")
     patches = legend_patches(part)
-    fig.legend(
-        handles=patches,
-        loc="lower left",
-        ncols=min(4, len(patches)),
-        fontsize=8,
-        frameon=False,
-        bbox_to_anchor=(0.02, 0.0),
-    )
+    legend(fig, patches)
     blended = any(len(b.fractions) > 1 for b in part.palette)
     return Picture(
         png=png(fig),
@@ -207,14 +201,7 @@ def space_picture(part: Part) -> Picture:
         ax = fig.add_axes((0.01 + 0.5 * column, 0.12, 0.48, 0.8))
         _dress(ax, shot, title)
     patches = legend_patches(part)
-    fig.legend(
-        handles=patches,
-        loc="lower left",
-        ncols=min(4, len(patches)),
-        fontsize=8,
-        frameon=False,
-        bbox_to_anchor=(0.02, 0.0),
-    )
+    legend(fig, patches)
     return Picture(
         png=png(fig),
         alt="The part in space, whole on the left, cut open along its length on the right, "
@@ -246,14 +233,7 @@ def layer_pictures(stack: StackSummary, part: Part) -> list[Picture]:
             Patch(facecolor=table[row + 1], edgecolor="#333333", linewidth=0.5, label=name)
             for row, name in enumerate(stack.resins)
         ]
-        fig.legend(
-            handles=names,
-            loc="lower left",
-            ncols=min(4, len(names)),
-            fontsize=8,
-            frameon=False,
-            bbox_to_anchor=(0.02, 0.0),
-        )
+        legend(fig, names)
         found.append(
             Picture(
                 png=png(fig),
