@@ -61,9 +61,7 @@ def test_variable_thickness_sheet(unknowns, method, element, solid, best):
         "mma": MovingAsymptotes(0 * ones, ones, move=0.5, adaptive=False),
     }
     bound = Bound(response=mean_of(shape, [1.0]), limit=0.5)
-    history = descend(
-        u, physics, ComplianceResponse(), (bound,), 0.5 * ones, 50, steppers[method]
-    )
+    history = descend(u, physics, ComplianceResponse(), (bound,), 0.5 * ones, 50, steppers[method])
     assert history[-1].objective == pytest.approx(best, rel=1e-4)
     assert history[-1].violation < 1e-6
 
@@ -106,9 +104,7 @@ def test_pad_with_a_target_deflection(unknowns, pad):
         [top.mean(), top.min(), top.max()], [-0.7251, -1.2004, -0.6167], atol=6e-5
     )
     bound = Bound(response=mean_of(shape, [0.0, 1.0]), limit=0.6)
-    history = descend(
-        u, physics, top_target(shape, -0.2901), (bound,), np.full(u.n, 0.5), 60
-    )
+    history = descend(u, physics, top_target(shape, -0.2901), (bound,), np.full(u.n, 0.5), 60)
     assert history[-1].objective <= 0.002
     assert history[-1].violation <= 0
 
@@ -122,9 +118,7 @@ def test_six_resins_whose_cost_is_not_monotone(unknowns, pad):
     u = unknowns(shape, E, nu, void=False, radius=1.8)
     physics = Physics(pad(shape, 0.05 + hump(n, 0.15, 0.18)), (1, 1, 1), tolerance=1e-5)
     bound = Bound(response=mean_of(shape, [3.0, 1.0, 2.0, 1.5, 1.0, 2.0]), limit=1.45)
-    history = descend(
-        u, physics, top_target(shape, -0.2901), (bound,), np.full(u.n, 0.5), 60
-    )
+    history = descend(u, physics, top_target(shape, -0.2901), (bound,), np.full(u.n, 0.5), 60)
     assert history[-1].objective <= 0.16
     assert history[-1].violation <= 1e-3
 

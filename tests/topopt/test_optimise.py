@@ -358,42 +358,6 @@ def test_targets_are_checked():
         TargetDeflection(nodes=nodes, target=good.target, direction=(0, 0, 0))
 
 
-@pytest.mark.parametrize(
-    ("changes", "message"),
-    [
-        ({"resins": ()}, "at least one"),
-        ({"resins": ("rigid", "rigid")}, "once"),
-        ({"void": False}, "nothing to design"),
-        ({"filter_radius": 0.0}, "filter radius"),
-        ({"filter_radius": float("nan")}, "filter radius"),
-        ({"penalty": 0.5}, "penalty"),
-        ({"void_stiffness": 0.0}, "empty voxels"),
-        ({"iterations": 0}, "at least 1 iteration"),
-        ({"symmetry": ("w",)}, "Symmetry"),
-        ({"method": "newton"}, "method"),
-        ({"void_law": "simp"}, "void law"),
-        ({"solid": np.ones(SHAPE)}, "true and false"),
-        ({"protected_depth": -1.0}, "protected"),
-        ({"limits": (VolumeLimit(fraction=0.5), VolumeLimit(fraction=0.4))}, "twice"),
-    ],
-)
-def test_specifications_are_checked(changes, message):
-    with pytest.raises(InputError, match=message):
-        spec(**changes)
-
-
-@pytest.mark.parametrize("fraction", [0.0, 1.0, -1.0, float("nan")])
-def test_limits_are_checked(fraction):
-    for make in (lambda: VolumeLimit(fraction=fraction),
-                 lambda: ResinLimit(resin="soft", fraction=fraction)):  # fmt: skip
-        with pytest.raises(InputError, match="between 0 and 1"):
-            make()
-    with pytest.raises(InputError, match="mass limit"):
-        MassLimit(mass=0.0)
-    with pytest.raises(InputError, match="rise"):
-        Projection(sharpness=(4.0, 2.0))
-
-
 def test_asymmetric_shape_is_refused_under_symmetry():
     labels = np.ones(SHAPE, np.uint16)
     labels[5, 0, 5] = 0

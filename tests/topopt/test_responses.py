@@ -40,9 +40,7 @@ RESPONSES = {
 @pytest.mark.parametrize(
     ("resins", "void"), [("one", True), ("two", True), ("three", True), ("two", False)]
 )
-def test_gradient_is_a_v_over_the_step(
-    unknowns, cantilever, dense_system, resins, void, response
-):
+def test_gradient_is_a_v_over_the_step(unknowns, cantilever, dense_system, resins, void, response):
     # I3: the error of a central difference falls with the step and rises again; minimum < 1e-6.
     u = unknowns(SHAPE, *RESINS[resins], void=void, spacing=SPACING)
     u.sharpness = 2.0
@@ -139,7 +137,3 @@ def test_cases_with_the_same_supports_share_a_system_and_springs_do_not(cantilev
         physics.displacement(case)
     assert len(made) == 2
     assert physics.cg_iterations == 3
-
-
-
-

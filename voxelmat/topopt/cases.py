@@ -60,6 +60,4 @@ def _case(part: Part, case: LoadCase) -> Case:
             f"Load case '{case.name}': {loose} voxels of the shape are joined to nothing that is "
             "held. Take them out of the shape or hold them."
         )
-    return Case(
-        name=case.name, weight=case.weight, force=a.force, fixed=a.held, springs=a.springs
-    )
+    return Case(name=case.name, weight=case.weight, force=a.force, fixed=a.held, springs=a.springs)

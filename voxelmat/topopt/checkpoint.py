@@ -95,13 +95,9 @@ def read_checkpoint(path: Path, digest: str) -> State | None:
 
 
 def _record(row: NDArray[np.float64]) -> IterationRecord:
-    values = {
-        f: int(v) if f in _COUNTS else float(v) for f, v in zip(_FIGURES, row, strict=True)
-    }
+    values = {f: int(v) if f in _COUNTS else float(v) for f, v in zip(_FIGURES, row, strict=True)}
     return IterationRecord(**values)  # type: ignore[arg-type]
 
 
-def _under(
-    arrays: dict[str, NDArray[np.float64]], prefix: str
-) -> dict[str, NDArray[np.float64]]:
+def _under(arrays: dict[str, NDArray[np.float64]], prefix: str) -> dict[str, NDArray[np.float64]]:
     return {k.removeprefix(prefix): v for k, v in arrays.items() if k.startswith(prefix)}

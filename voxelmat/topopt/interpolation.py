@@ -61,4 +61,3 @@ class VoidLaw:
         c_bulk = -c_k * k_by_resist / bulk**2
         c_shear = -c_k * k_by_resist * 0.75 * (1.0 - rho) / shear**2 + c_g * scale
         return c_rho, c_bulk, c_shear
-

@@ -212,9 +212,7 @@ def run(
     )
 
 
-def _iteration(
-    problem: Problem, optimiser: Stepper, state: State, stopping: Stopping
-) -> State:
+def _iteration(problem: Problem, optimiser: Stepper, state: State, stopping: Stopping) -> State:
     """One evaluation and one step; `state` itself stays as it was."""
     n = len(state.history)
     sharpness = problem.sharpness(n)
@@ -230,9 +228,7 @@ def _iteration(
     gap = float("nan")
     if (n + 1) % _GAP_EVERY == 0 and problem.settled(n):
         size = abs(first * scale) if stopping.gap_of_first else max(abs(F[0]), 1e-300)
-        bound = linearised_gap(
-            state.x, problem.low, problem.high, F, dF, optimiser.multipliers
-        )
+        bound = linearised_gap(state.x, problem.low, problem.high, F, dF, optimiser.multipliers)
         # Both objectives are never negative, so no design can win more than all there is.
         gap = float(min(bound, F[0]) / size)
     moved = e.weight * np.abs(new - state.x) / (problem.high - problem.low)

@@ -87,9 +87,7 @@ def quantise(fractions: Array, weight: Array, stiffness: Array, levels: int) -> 
     table[table < 1e-9] = 0.0
     table /= table.sum(1, keepdims=True)
     index = row_of[back]
-    return Quantised(
-        table=table, index=index, error=float(np.abs(table[index] - fractions).max())
-    )
+    return Quantised(table=table, index=index, error=float(np.abs(table[index] - fractions).max()))
 
 
 def _settled(features: Array, amount: Array, group: NDArray[np.intp]) -> NDArray[np.intp]:

@@ -73,9 +73,7 @@ class _Dual:
         return value, curvature
 
 
-def solve_dual(
-    model: Separable, ceiling: float, start: Array | None = None
-) -> tuple[Array, Array]:
+def solve_dual(model: Separable, ceiling: float, start: Array | None = None) -> tuple[Array, Array]:
     """Minimise the objective of `model` subject to its constraints <= 0.
 
     Newton's method on (multipliers, slacks) along a barrier that falls to 1e-9; x follows from

@@ -212,9 +212,7 @@ class Unknowns:
         if self._coordinates == 0:
             w[0][c.domain] = 1.0
             return w
-        smooth = np.array(
-            [self._smooth_blend(v)[free] for v in x.reshape(self._coordinates, -1)]
-        )
+        smooth = np.array([self._smooth_blend(v)[free] for v in x.reshape(self._coordinates, -1)])
         if self._coordinates == 1:
             second = np.clip(smooth[0], 0.0, 1.0)
             w[0][free], w[1][free] = 1.0 - second, second
