@@ -17,8 +17,9 @@ __all__ = ["Iteration", "conjugate_gradients"]
 
 Double = NDArray[np.float64]
 
-# Iterations without progress, and what counts as progress in that time, before we call it a stall.
-_PATIENCE, _PROGRESS = 40, 0.7
+# Iterations without progress, and what counts as progress in that time, before we call it a
+# stall. At high contrast the residual may rise for long while the error falls.
+_PATIENCE, _PROGRESS = 400, 0.7
 # Times that the recursive residual may be replaced by the true one before we call it a stall.
 _RESTARTS = 4
 

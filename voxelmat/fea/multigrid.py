@@ -15,6 +15,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from voxelmat.fea.coarsest import Coarsest
+from voxelmat.fea.direct import Direct
 from voxelmat.fea.element import Spacing
 from voxelmat.fea.galerkin import add_springs, galerkin_stencils, held_springs
 from voxelmat.fea.levels import Level, StencilLevel, VoxelLevel
@@ -28,8 +29,9 @@ __all__ = ["METHODS", "Grid", "Jacobi", "Multigrid", "Preconditioner", "make_pre
 Single = NDArray[np.float32]
 Double = NDArray[np.float64]
 
-#: Coarse methods, cheapest first; ``jacobi`` has no coarse levels and is kept as a check.
-METHODS = ("avg2", "gal4b", "jacobi")
+#: Coarse methods, cheapest first; ``direct`` factorises and is for small systems, ``jacobi`` has
+#: no coarse levels and is kept as a check.
+METHODS = ("avg2", "gal4b", "direct", "jacobi")
 
 # Unknowns below which a grid is solved directly. Averaged moduli smear thin members, so on
 # large grids, where a larger direct solve does not show, the cheap method stops earlier.
@@ -218,4 +220,9 @@ class Jacobi:
 
 def make_preconditioner(grid: Grid, method: str) -> Preconditioner:
     """The preconditioner called `method`, one of `METHODS`."""
-    return Jacobi(grid) if method == "jacobi" else Multigrid(grid, method)
+    if method == "jacobi":
+        return Jacobi(grid)
+    if method == "direct":
+        free = ~grid.held & grid.touched
+        return Direct(grid.lam, grid.mu, grid.spacing, grid.element, free, grid.springs)
+    return Multigrid(grid, method)

@@ -164,7 +164,7 @@ def solve(
     *,
     element: str = DEFAULT,
     tol: float = 1e-8,
-    maxiter: int = 400,
+    maxiter: int = 1000,
     monitor: Monitor = SILENT,
     warm: StaticResult | None = None,
 ) -> StaticResult:

@@ -23,6 +23,8 @@ Double = NDArray[np.float64]
 # as the pace between these two iterations says that it will come to that.
 _CHEAP_LIMIT = 45
 _PACE = (4, 12)
+# Systems up to this many unknowns are factorised after so many iterations with the exact levels.
+_DIRECT_UNKNOWNS, _DEAR_LIMIT = 30_000, 200
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -208,7 +210,7 @@ class LinearSystem:
         x0: Double | None = None,
         prescribed: Double | None = None,
         tol: float = 1e-8,
-        maxiter: int = 400,
+        maxiter: int = 1000,
     ) -> Solution:
         """Solve for one load.
 
@@ -251,28 +253,35 @@ class LinearSystem:
             history=tuple(run.history),
         )
 
+    def _next_method(self) -> str | None:
+        """What the automatic choice goes over to when the present method is too slow."""
+        if not self._automatic:
+            return None
+        small = int(self.free.sum()) <= _DIRECT_UNKNOWNS
+        return {"avg2": "gal4b", "gal4b": "direct" if small else None}.get(self._method)
+
     def _iterate(
         self, force: Double, run: Iteration, norm: float, tol: float, maxiter: int
     ) -> Iteration:
         while True:
-            switch = self._automatic and self._method == "avg2"
-            M = self._ready()
-            limit = min(maxiter, _CHEAP_LIMIT) if switch else maxiter
+            following = self._next_method()
+            cheap = following is not None and self._method == "avg2"
+            patience = run.iterations + (_CHEAP_LIMIT if cheap else _DEAR_LIMIT)
             conjugate_gradients(
                 self.operator,
-                M,
+                self._ready(),
                 force,
                 self.free,
                 run,
                 norm=norm,
                 tol=tol,
-                limit=limit,
+                limit=maxiter if following is None else min(maxiter, patience),
                 monitor=self._monitor,
-                too_slow=(lambda history: _too_slow(history, tol)) if switch else None,
+                too_slow=(lambda history: _too_slow(history, tol)) if cheap else None,
             )
-            if run.state == "converged" or not switch or run.iterations >= maxiter:
+            if run.state == "converged" or following is None or run.iterations >= maxiter:
                 return run
-            self._method = "gal4b"
+            self._method = following
 
     def _complaint(self, run: Iteration, tol: float) -> str:
         mu = self._grid.mu[self._grid.mu > 0]
