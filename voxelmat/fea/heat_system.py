@@ -51,7 +51,7 @@ class HeatSystem:
     held : ndarray of bool, shape (nz+1, ny+1, nx+1)
         Where the temperature is given.
     film : ndarray of float64, shape of `held`, optional
-        Heat a degree to the surroundings, mW/K, >= 0.
+        Heat a degree to the surroundings, mW/K, >= 0; ignored at nodes that touch no material.
     capacity : ndarray of float64, shape of `conductivity`, optional
         Heat capacity a volume over the time step, mW/(mm^3 K).
     kind : str
@@ -90,6 +90,7 @@ class HeatSystem:
             raise InputError(f"The spacing must be above 0 mm; got {spacing}.")
         self.touched = touched_nodes(conductivity > 0)
         self.held = held & self.touched
+        film = None if film is None else film * self.touched
         self.shape = nodes
         self.free = (self.touched & ~held).astype(np.uint8)[None]
         self.operator = Conduction(conductivity, capacity, spacing, kind, film)

@@ -25,8 +25,8 @@ from voxelmat.fea.scalar_levels import (
 )
 from voxelmat.kernels.scalar import prolong_add_scalar, residual_scalar, restrict_scalar
 from voxelmat.kernels.scalar_coarse import (
+    add_special,
     elements_from_elements,
-    elements_from_voxels,
     stencils_from_elements,
 )
 from voxelmat.kernels.threads import crew
@@ -99,46 +99,58 @@ def _finest(grid: ScalarGrid) -> VoxelScalarLevel:
     return VoxelScalarLevel(operator, _matrix_diagonal(grid), grid.touched & ~grid.held)
 
 
-@lru_cache(maxsize=1)
-def _pairs() -> tuple[NDArray[np.intp], Single]:
-    """How element matrices of children add to their parent's; see `elements_from_elements`."""
-    found = []
-    for P in interpolation():
-        weight = np.kron(P, P)  # from (parent a, b) to (child a, b)
-        child, parent = np.nonzero(weight)
-        found.append((parent, child, weight[child, parent]))
-    longest = max(len(f[0]) for f in found)
+def _lists(maps: list[Double]) -> tuple[NDArray[np.intp], Single]:
+    """Sparse form of the matrices from the entries of each child to those of its parent."""
+    found = [(*np.nonzero(m), m[np.nonzero(m)]) for m in maps]
+    longest = max(len(weight) for _, _, weight in found)
     entries, weights = np.zeros((8, longest, 2), np.intp), np.zeros((8, longest), np.float32)
     for t, (parent, child, weight) in enumerate(found):
-        entries[t, : len(parent), 0], entries[t, : len(parent), 1] = parent, child
+        entries[t, : len(parent)] = np.column_stack([parent, child])
         weights[t, : len(parent)] = weight
     return entries, weights
+
+
+@lru_cache(maxsize=1)
+def _from_elements() -> tuple[NDArray[np.intp], Single]:
+    """How element matrices of children add to their parent's."""
+    return _lists([np.kron(P, P).T for P in interpolation()])
+
+
+def _special(grid: ScalarGrid) -> tuple[NDArray[np.bool_], Double]:
+    """Voxels at held nodes or films, and the films shared out over the voxels round each node."""
+    shape = grid.conductivity.shape
+    odd, extra = grid.held, np.zeros(grid.held.shape)
+    if grid.diagonal is not None:
+        odd = odd | (grid.diagonal > 0)
+        extra = grid.diagonal.copy()
+        for axis, n in enumerate(shape):
+            inner = [slice(None)] * 3
+            inner[axis] = slice(1, n)
+            extra[tuple(inner)] /= 2
+    special = np.zeros(shape, dtype=bool)
+    for a in range(8):
+        x, y, z = a & 1, a >> 1 & 1, a >> 2
+        special |= odd[z : z + shape[0], y : y + shape[1], x : x + shape[2]]
+    return special, extra
 
 
 def _first_elements(grid: ScalarGrid) -> Single:
     """Element matrices of the first coarse level."""
     K, C = element_matrices(grid.spacing, grid.kind)
     P = interpolation()
-    cap = np.zeros_like(grid.conductivity) if grid.capacity is None else grid.capacity
-    shape = grid.conductivity.shape
-    odd = grid.held & grid.touched
-    extra = np.zeros(grid.held.shape)
-    if grid.diagonal is not None:
-        odd = odd | (grid.diagonal > 0)
-        sharing = [np.minimum(np.minimum(np.arange(n + 1), np.arange(n + 1)[::-1]) + 1, 2)
-                   if n > 1 else np.ones(2) for n in shape]  # fmt: skip
-        count = sharing[0][:, None, None] * sharing[1][:, None] * sharing[2]
-        extra = grid.diagonal / count
-    special = np.zeros(shape, dtype=bool)
-    for a in range(8):
-        x, y, z = a & 1, a >> 1 & 1, a >> 2
-        special |= odd[z : z + shape[0], y : y + shape[1], x : x + shape[2]]
-    size = [-(-n // 2) for n in shape]
+    special, extra = _special(grid)
+    fields, matrices = [grid.conductivity], [K]
+    if grid.capacity is not None:
+        fields.append(grid.capacity)
+        matrices.append(C)
+    coefficients = np.stack([np.where(special, 0, f) for f in fields], axis=2).astype(np.float32)
+    maps = [np.column_stack([(Q.T @ M @ Q).ravel() for M in matrices]) for Q in P]
+    size = [-(-n // 2) for n in grid.conductivity.shape]
     E = np.empty((size[0], size[1], 64, size[2]), dtype=np.float32)
-    PK, PC = ((P.transpose(0, 2, 1) @ M @ P).reshape(8, 64) for M in (K, C))
-    elements_from_voxels(
-        grid.conductivity, cap, special, grid.held, extra, K, C, P, PK, PC, E
-    )  # fmt: skip
+    elements_from_elements(coefficients, *_lists(maps), E)
+    capacity = np.zeros_like(grid.conductivity) if grid.capacity is None else grid.capacity
+    at = np.argwhere(special)
+    add_special(at, grid.conductivity, capacity, grid.held, extra, K, C, P, E)
     return E
 
 
@@ -153,7 +165,7 @@ def _coarse(grid: ScalarGrid) -> Iterator[ScalarLevel]:
                 E = _first_elements(grid)
             else:
                 fine, E = E, np.empty((shape[0], shape[1], 64, shape[2]), dtype=np.float32)
-                elements_from_elements(fine, *_pairs(), E)
+                elements_from_elements(fine, *_from_elements(), E)
             S = np.empty((shape[0] + 1, shape[1] + 1, 27, shape[2] + 1), dtype=np.float32)
             stencils_from_elements(E, S)
         yield StencilScalarLevel(S)

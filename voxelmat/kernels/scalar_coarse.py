@@ -12,81 +12,6 @@ _FAST = {"reassoc", "contract", "nsz"}
 
 
 @njit(fastmath=_FAST)
-def _plain_children(k, c, row, PK, PC, E):
-    """Add the children of one row of coarse voxels that no held node or surface touches."""
-    for ab in range(64):
-        pk, pc = PK[ab], PC[ab]
-        out = E[ab]
-        for n in range(row):
-            out[n] += pk * k[n] + pc * c[n]
-
-
-@njit(fastmath=_FAST)
-def _special_child(k, c, held, extra, K0, C0, P, A, AP, E, n):
-    """Add one child some of whose nodes are held or have an entry on the diagonal."""
-    for a in range(8):
-        for b in range(8):
-            A[a, b] = 0.0 if held[a] or held[b] else k * K0[a, b] + c * C0[a, b]
-        if not held[a]:
-            A[a, a] += extra[a]
-    for a in range(8):
-        for b in range(8):
-            s = 0.0
-            for m in range(8):
-                s += A[a, m] * P[m, b]
-            AP[a, b] = s
-    for a in range(8):
-        for b in range(8):
-            s = 0.0
-            for m in range(8):
-                s += P[m, a] * AP[m, b]
-            E[8 * a + b, n] += s
-
-
-@njit(fastmath=_FAST)
-def _from_voxels(cond, cap, special, held, extra, K0, C0, P, PK, PC, E, K, J):
-    nz, ny, nx = cond.shape
-    row = E.shape[3]
-    k, c = np.empty(row), np.empty(row)
-    A, AP = np.empty((8, 8)), np.empty((8, 8))
-    h, e = np.empty(8, np.bool_), np.empty(8)
-    acc = np.zeros((64, row))
-    for t in range(8):
-        z, y, x = 2 * K + (t >> 2), 2 * J + ((t >> 1) & 1), t & 1
-        if z >= nz or y >= ny:
-            continue
-        k[:] = 0.0
-        c[:] = 0.0
-        for n in range((nx - x + 1) // 2):
-            i = 2 * n + x
-            if special[z, y, i]:
-                for a in range(8):
-                    kk, jj, ii = z + (a >> 2), y + ((a >> 1) & 1), i + (a & 1)
-                    h[a] = held[kk, jj, ii]
-                    e[a] = extra[kk, jj, ii]
-                _special_child(cond[z, y, i], cap[z, y, i], h, e, K0, C0, P[t], A, AP, acc, n)
-            else:
-                k[n] = cond[z, y, i]
-                c[n] = cap[z, y, i]
-        _plain_children(k, c, row, PK[t], PC[t], acc)
-    E[K, J] = acc
-
-
-@njit(parallel=True, cache=True)
-def elements_from_voxels(cond, cap, special, held, extra, K0, C0, P, PK, PC, E):
-    """Set E <- element matrices of the first coarse level.
-
-    cond, cap [nz, ny, nx] multiply the element matrices K0 and C0 [8, 8]; PK, PC [8, 64] are
-    P[t]^T K0 P[t] and P[t]^T C0 P[t]. held [nz+1, ny+1, nx+1] marks nodes without an unknown,
-    extra of the same shape is a diagonal matrix divided by the voxels of the grid round each node;
-    special marks the voxels that have a held node or an extra.
-    """
-    for K in prange(E.shape[0]):
-        for J in range(E.shape[1]):
-            _from_voxels(cond, cap, special, held, extra, K0, C0, P, PK, PC, E, K, J)
-
-
-@njit(fastmath=_FAST)
 def _add_strided(out, fine, x, w):
     for n in range((fine.size - x + 1) // 2):
         out[n] += w * fine[2 * n + x]
@@ -94,10 +19,11 @@ def _add_strided(out, fine, x, w):
 
 @njit(parallel=True, cache=True)
 def elements_from_elements(F, entries, weights, E):
-    """Set E <- element matrices one level below those of F.
+    """Set E <- element matrices one level below those of F, or below the coefficients of voxels.
 
-    entries[t, n] holds (entry of E, entry of F) and weights[t, n] what the second adds to the
-    first for child t; weights of 0 end the list of a child.
+    F is [nz, ny, entries, nx]: element matrices, or conductivities and capacities. entries[t, n]
+    holds (entry of E, entry of F) and weights[t, n] how much of the second adds to the first for
+    child t; 0 where a list is shorter.
     """
     for K in prange(E.shape[0]):
         for J in range(E.shape[1]):
@@ -109,6 +35,39 @@ def elements_from_elements(F, entries, weights, E):
                         o, f = entries[t, m, 0], entries[t, m, 1]
                         if weights[t, m] != 0:
                             _add_strided(E[K, J, o], F[z, y, f], x, weights[t, m])
+
+
+@njit(cache=True, nogil=True, fastmath=_FAST)
+def add_special(at, cond, cap, held, extra, K0, C0, P, E):
+    """Add to E of the first coarse level the voxels of which some nodes are not plain unknowns.
+
+    at [n, 3] are their places (k, j, i); cond, cap [nz, ny, nx] multiply the element matrices K0
+    and C0 [8, 8]; held [nz+1, ny+1, nx+1] marks nodes without an unknown, extra of the same shape
+    is a diagonal matrix divided by the voxels of the grid round each node.
+    """
+    size = P.shape[1]  # 8; not written as a number, or the compiler unrolls every loop
+    A, AP = np.empty((size, size)), np.empty((size, size))
+    for v in range(at.shape[0]):
+        z, y, x = at[v, 0], at[v, 1], at[v, 2]
+        Q = P[(x & 1) + 2 * (y & 1) + 4 * (z & 1)]
+        for a in range(size):
+            az, ay, ax = z + (a >> 2), y + ((a >> 1) & 1), x + (a & 1)
+            for b in range(size):
+                bz, by, bx = z + (b >> 2), y + ((b >> 1) & 1), x + (b & 1)
+                A[a, b] = cond[z, y, x] * K0[a, b] + cap[z, y, x] * C0[a, b]
+                if held[az, ay, ax] or held[bz, by, bx]:
+                    A[a, b] = 0.0
+            if not held[az, ay, ax]:
+                A[a, a] += extra[az, ay, ax]
+        for a in range(size):
+            AP[a] = 0.0
+            for m in range(size):
+                for b in range(size):
+                    AP[a, b] += A[a, m] * Q[m, b]
+        for m in range(size):
+            for a in range(size):
+                for b in range(size):
+                    E[z >> 1, y >> 1, size * a + b, x >> 1] += Q[m, a] * AP[m, b]
 
 
 @njit(fastmath=_FAST)
