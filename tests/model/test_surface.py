@@ -76,7 +76,7 @@ def test_true_area_of_a_ball(spacing):
     part, r = ball(48, spacing)
     faces = exposed_faces(part)
     area = 4 * math.pi * r**2
-    assert faces.true_area.sum() == pytest.approx(area, rel=0.03)
+    assert faces.true_area.sum() == pytest.approx(area, rel=0.01)
     if spacing == (1.0, 1.0, 1.0):
         assert faces.area.sum() == pytest.approx(1.503 * area, rel=0.02)
 
