@@ -151,3 +151,23 @@ def test_running_a_cell_again_leaves_one_live_view(notebook, gl):
     live = notebook.ask("from voxelmat.workbench import show; print(len(show._live))")
     scenes = notebook.ask("from voxelmat.workbench import render; print(len(render._open))")
     assert (live, scenes) == ("1", "1")
+
+
+def test_without_opengl_the_reason_is_said_and_slices_work(notebook):
+    blind = """
+from voxelmat.workbench import show as view
+from voxelmat.workbench.glprobe import Probe
+view.probe_gl = lambda: Probe(works=False, reason="A test drawing with OpenGL failed: no libEGL.")
+"""
+    notebook.open("blind.ipynb", [START, blind, "part"])
+    notebook.run_all()
+    page = notebook.page
+    page.get_by_text("The picture above stands still").wait_for()
+    canvas = page.get_by_role("img", name=re.compile("Slice of made-up grip"))
+    before = pixels(canvas)
+    seq = seq_of(canvas)
+    page.get_by_label("Slice", exact=True).fill("1")
+    wait_for(canvas, seq)
+    assert changed(before, pixels(canvas)) > 0.01
+    loaded = notebook.ask("import sys; print('pyvista' in sys.modules)")
+    assert loaded == "False"  # VTK would have killed the kernel
