@@ -28,6 +28,7 @@ _CONSTANTS = {
     "expansion_um_per_m_K": ("expansion", 1e-6, "1/K"),
     "conductivity_W_per_m_K": ("conductivity", 1.0, "W/(m K)"),
     "heat_capacity_J_per_kg_K": ("heat_capacity", 1.0, "J/(kg K)"),
+    "loss_factor": ("loss_factor", 1.0, ""),
 }
 
 

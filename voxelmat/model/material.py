@@ -103,6 +103,8 @@ class Material:
         Thermal conductivity, W/(m K), which is mW/(mm K) (> 0).
     heat_capacity : Constant or None
         Specific heat capacity, J/(kg K) (> 0); 1e6 times as much in mJ/(tonne K).
+    loss_factor : Constant or None
+        Tangent of the loss angle: energy lost in a cycle over 2 pi times the energy stored (> 0).
     shore_A : float or None
         Shore A hardness.
     glass_transition_degC : float or None
@@ -129,6 +131,7 @@ class Material:
     expansion: Constant | None = None
     conductivity: Constant | None = None
     heat_capacity: Constant | None = None
+    loss_factor: Constant | None = None
     shore_A: float | None = None
     glass_transition_degC: float | None = None
     temperature_range_degC: tuple[float, float] = (15.0, 30.0)
@@ -166,6 +169,7 @@ class Material:
         for label, constant, most, unit in (
             ("conductivity", self.conductivity, 5000.0, "W/(m K)"),
             ("heat capacity", self.heat_capacity, 20000.0, "J/(kg K)"),
+            ("loss factor", self.loss_factor, 5.0, "(a fraction, not per cent)"),
         ):
             # The upper limits lie above every known material; beyond them a unit was mixed up.
             if constant is not None and not (constant.band[0] > 0 and constant.band[1] < most):
