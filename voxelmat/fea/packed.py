@@ -1,0 +1,103 @@
+"""Operators of one grid on the packed vector of its free unknowns, for eigenvalue solvers."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+
+import numpy as np
+from numpy.typing import NDArray
+
+from voxelmat.fea.element import Spacing
+from voxelmat.fea.multigrid import Grid, make_preconditioner
+from voxelmat.fea.operator import Stiffness, touched_nodes
+from voxelmat.fea.system import first_method
+from voxelmat.kernels.threads import crew
+from voxelmat.monitor import computing
+
+__all__ = ["Packed"]
+
+Double = NDArray[np.float64]
+Apply = Callable[[Double, Double], None]
+
+
+class Packed:
+    """Free unknowns of a grid, its stiffness and a V-cycle, on blocks of vectors (n, m).
+
+    Parameters
+    ----------
+    lam, mu : ndarray of float64, shape (nz, ny, nx)
+        Lame constants, MPa; 0 in empty voxels.
+    spacing : tuple of float
+        mm.
+    held : ndarray of bool, shape (3, nz+1, ny+1, nx+1)
+        Unknowns that stay at 0.
+    springs : ndarray of float64 or None, shape of `held`
+        To ground, N/mm.
+    element : str
+    """
+
+    def __init__(
+        self,
+        lam: Double,
+        mu: Double,
+        spacing: Spacing,
+        held: NDArray[np.bool_],
+        springs: Double | None,
+        element: str,
+    ) -> None:
+        self.shape = held.shape
+        touched = touched_nodes(mu > 0)
+        held = held & touched
+        #: Position of each free unknown in the flattened field.
+        self.index = np.flatnonzero(~held & touched)
+        self._nodes = int(touched.size)
+        self._stiffness = Stiffness(lam, mu, spacing, element, springs)
+        with computing():
+            grid = Grid(lam, mu, spacing, element, held, touched, springs)
+            self._cycle = make_preconditioner(grid, first_method(lam, mu, spacing, held))
+
+    @property
+    def size(self) -> int:
+        """Number of free unknowns."""
+        return int(self.index.size)
+
+    @property
+    def method(self) -> str:
+        """Coarse method of the preconditioner."""
+        return self._cycle.method
+
+    def field(self, x: Double) -> Double:
+        """Packed vector (n,) to a node field ``[3, nz+1, ny+1, nx+1]``, 0 elsewhere."""
+        out = np.zeros(self.shape)
+        out.ravel()[self.index] = x
+        return out
+
+    def pack(self, u: Double) -> Double:
+        """Node field to a packed vector."""
+        return np.asarray(u.reshape(-1)[self.index])
+
+    def apply(self, product: Apply, X: Double) -> Double:
+        """A product of node fields, `product(u, y)`, on each column of a block."""
+        out = np.empty(X.shape, order="F")
+        u, y = np.zeros(self.shape), np.empty(self.shape)
+        with computing(), crew(self._nodes):
+            for c in range(X.shape[1]):
+                u.ravel()[self.index] = X[:, c]
+                product(u, y)
+                out[:, c] = y.ravel()[self.index]
+        return out
+
+    def stiffness(self, X: Double) -> Double:
+        """K X, N."""
+        return self.apply(self._stiffness.apply, X)
+
+    def precondition(self, X: Double) -> Double:
+        """Nearly the inverse of K on each column, by one V-cycle."""
+        return self.apply(self._v_cycle, X)
+
+    def _v_cycle(self, r: Double, z: Double) -> None:
+        size = float(np.sqrt(np.vdot(r, r)))
+        if size == 0.0:
+            z[:] = 0.0
+            return
+        np.multiply(self._cycle.apply(r, 1.0 / size), size, out=z, dtype=np.float64)
