@@ -204,8 +204,10 @@ def notebook(lab, chromium, request):
     yield book
     if os.environ.get("VOXELMAT_SHOTS"):
         page.screenshot(path=Path(os.environ["VOXELMAT_SHOTS"]) / f"{request.node.name}.png")
+    failed = page.get_by_text("javascript error").count()
     book.shut_down()
     context.close()
+    assert not failed, "a widget could not be drawn"
     assert not broken, broken
     assert not outside, outside
 

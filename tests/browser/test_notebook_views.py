@@ -163,6 +163,7 @@ view.probe_gl = lambda: Probe(works=False, reason="A test drawing with OpenGL fa
     notebook.run_all()
     page = notebook.page
     page.get_by_text("The picture above stands still").wait_for()
+    assert is_a_picture(pixels(page.get_by_role("img", name=re.compile("Picture of made-up grip"))))
     canvas = page.get_by_role("img", name=re.compile("Slice of made-up grip"))
     before = pixels(canvas)
     seq = seq_of(canvas)

@@ -21,10 +21,11 @@ from voxelmat.workbench.glprobe import probe_gl
 from voxelmat.workbench.voxfaces import Quads
 from voxelmat.workflow.depth import Camera
 
-__all__ = ["Scene", "on_render_thread"]
+__all__ = ["SIZE", "Scene", "on_render_thread"]
 
 P = ParamSpec("P")
 T = TypeVar("T")
+#: Width and height of every picture, pixels.
 SIZE = (840, 480)
 _MARGIN = 1.15
 

@@ -2,11 +2,12 @@
 
 from __future__ import annotations
 
+import base64
 import io
+from html import escape
 from typing import Any
 
 import ipywidgets
-import numpy as np
 from PIL import Image
 
 from voxelmat.errors import InputError
@@ -14,10 +15,12 @@ from voxelmat.model.part import Part
 from voxelmat.model.result import StaticResult
 from voxelmat.workbench.glprobe import probe_gl
 from voxelmat.workbench.hook import register
+from voxelmat.workbench.render import SIZE
 from voxelmat.workbench.shown import Shown, of_part, of_result
 from voxelmat.workbench.sliceview import SliceView
 from voxelmat.workbench.spaceview import SpaceView
 from voxelmat.workbench.theme import style
+from voxelmat.workflow.depth import draw_faces
 
 __all__ = ["View", "register", "show"]
 
@@ -52,7 +55,9 @@ class View:
         else:
             self._still = _drawn_without_gl(shown)
             parts.append(_still_picture(self._still, shown.title))
-            parts.append(_words("The picture above stands still. " + probe.reason))
+            parts.append(
+                _words(f"The picture above stands still and is not deformed. {probe.reason}")
+            )
         parts.append(self.slices)
         parts.append(ipywidgets.HTML(shown.html))
         self.widget = ipywidgets.VBox(parts)
@@ -147,25 +152,20 @@ def _keep(view: View) -> None:
 
 
 def _drawn_without_gl(shown: Shown) -> bytes:
-    """A slice through the middle, as JPEG."""
-    axis = shown.best_axis
-    picture = shown.fields[0].slice_rgb(axis, shown.counts[axis] // 2)
-    wide, high = shown.size_mm(axis)
-    scale = 820 / max(wide, high)
-    image = Image.fromarray(np.ascontiguousarray(picture))
-    image = image.resize(
-        (max(1, round(wide * scale)), max(1, round(high * scale))), Image.Resampling.NEAREST
-    )
+    """The part in space, cut open, drawn by NumPy alone, as JPEG."""
+    quads, rgb = shown.surface("y", 0.5)
+    shot = draw_faces(quads.faces, rgb, quads.spacing, width=SIZE[0])
     store = io.BytesIO()
-    image.save(store, "JPEG", quality=90)
+    Image.fromarray(shot.rgb).save(store, "JPEG", quality=90)
     return store.getvalue()
 
 
 def _still_picture(jpeg: bytes, title: str) -> ipywidgets.Widget:
-    return ipywidgets.Image(value=jpeg, format="jpeg", tooltip=f"Slice of {title}")
+    data = base64.b64encode(jpeg).decode()
+    return ipywidgets.HTML(
+        f'<img src="data:image/jpeg;base64,{data}" alt="Picture of {escape(title)}, cut open">'
+    )
 
 
 def _words(text: str) -> ipywidgets.Widget:
-    from html import escape
-
     return ipywidgets.HTML(f"<style>{style()}</style><p class='vm'>{escape(text)}</p>")

@@ -28,16 +28,24 @@ class Quads:
         Corners, mm; each quadrilateral has its own four.
     normals : ndarray of float32, shape (n, 3)
         Of the true surface.
-    voxel : ndarray of intp, shape (n, 3)
-        The voxel behind each.
+    faces : Faces
+        The voxel faces that they come from, not moved.
+    spacing : tuple of float
+        Voxel edges, mm.
     """
 
     points: NDArray[np.float32]
     normals: NDArray[np.float32]
-    voxel: NDArray[np.intp]
+    faces: Faces
+    spacing: tuple[float, float, float]
 
     def __len__(self) -> int:
         return len(self.normals)
+
+    @property
+    def voxel(self) -> NDArray[np.intp]:
+        """The voxel behind each, shape (n, 3)."""
+        return self.faces.voxel
 
 
 def coarser(part: Part, largest: int = LARGEST) -> tuple[Part, int]:
@@ -106,5 +114,6 @@ def quads_of(
     return Quads(
         points=points.astype(np.float32),
         normals=faces.normal.astype(np.float32),
-        voxel=faces.voxel,
+        faces=faces,
+        spacing=part.grid.spacing,
     )
