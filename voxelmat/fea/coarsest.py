@@ -44,10 +44,17 @@ def _dense(level: Level) -> NDArray[np.float64]:
 
 
 class Coarsest:
-    """A direct solve, steady also where the coarsest grid is singular."""
+    """A direct solve, steady also where the coarsest grid is singular.
 
-    def __init__(self, level: Level) -> None:
-        A = _dense(level)
+    Parameters
+    ----------
+    level : Level
+    matrix : ndarray of float64, optional
+        The matrix behind the level, overwritten; by default it is found from products.
+    """
+
+    def __init__(self, level: Level, matrix: NDArray[np.float64] | None = None) -> None:
+        A = _dense(level) if matrix is None else matrix
         exists = (level.B[:3] > 0).ravel()
         A[~exists] = 0
         A[:, ~exists] = 0
