@@ -6,6 +6,7 @@ neither numba nor VTK nor widgets.
 
 from __future__ import annotations
 
+import sys
 from importlib import import_module
 from typing import TYPE_CHECKING, Any
 
@@ -83,3 +84,9 @@ def __getattr__(name: str) -> Any:
 
 def __dir__() -> list[str]:
     return sorted(__all__)
+
+
+if "IPython" in sys.modules:  # in a notebook, parts, results and stacks then show themselves
+    from voxelmat.workbench.hook import register
+
+    register()

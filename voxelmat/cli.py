@@ -116,7 +116,16 @@ def _dispatch(options: argparse.Namespace) -> Answer:
     }
     given = {k: v for k, v in vars(options).items() if k not in ("command", "json", "quiet")}
     with ConsoleMonitor(quiet=options.quiet) as monitor:
+        if options.command != "materials" and not _compiled():
+            monitor.say("First run here: the inner loops are compiled, once; about half a minute.")
         return calls[options.command](monitor=monitor, **given)
+
+
+def _compiled() -> bool:
+    """Whether an earlier run left compiled kernels behind."""
+    folder = os.environ.get("NUMBA_CACHE_DIR")
+    here = Path(folder) if folder else Path(__file__).parent / "kernels" / "__pycache__"
+    return any(here.rglob("*.nbi"))
 
 
 def main(arguments: Sequence[str] | None = None) -> int:

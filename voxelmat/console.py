@@ -15,6 +15,7 @@ from rich.progress import (
     TextColumn,
     TimeElapsedColumn,
 )
+from rich.table import Column
 
 from voxelmat.errors import Cancelled
 from voxelmat.monitor import Figure
@@ -42,12 +43,16 @@ class ConsoleMonitor:
     def __enter__(self) -> ConsoleMonitor:
         if not self._quiet and self._console.is_terminal:
             self._bars = Progress(
-                TextColumn("{task.description:<22}"),
-                BarColumn(bar_width=24),
-                MofNCompleteColumn(),
-                TimeElapsedColumn(),
-                TextColumn("{task.fields[figures]}"),
+                TextColumn("{task.description}", table_column=Column(no_wrap=True, min_width=22)),
+                BarColumn(bar_width=16, table_column=Column(min_width=16)),
+                MofNCompleteColumn(table_column=Column(no_wrap=True, min_width=9)),
+                TimeElapsedColumn(table_column=Column(no_wrap=True, min_width=7)),
+                TextColumn(
+                    "{task.fields[figures]}",
+                    table_column=Column(no_wrap=True, overflow="ellipsis", ratio=1),
+                ),
                 console=self._console,
+                expand=True,
             )
             self._bars.start()
         try:

@@ -1,0 +1,1 @@
+"""Every compiled loop: arrays in, arrays out, nothing of voxelmat known."""

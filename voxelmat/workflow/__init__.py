@@ -1,0 +1,1 @@
+"""The order of work: build, resolve, design, run, judge, report."""

@@ -15,6 +15,7 @@ from voxelmat.errors import Cancelled, InputError, ResourceError
 from voxelmat.fea.static import solve
 from voxelmat.io.atomic import explain_os_error, write_json
 from voxelmat.io.store import save_part
+from voxelmat.kernels.threads import threads
 from voxelmat.model.design import Design
 from voxelmat.model.design_result import DesignResult
 from voxelmat.model.finding import Finding
@@ -271,6 +272,7 @@ class _Run:
             provenance=Provenance(
                 inputs=built.design.inputs,
                 seed=built.design.seed,
+                threads=threads(),
                 started_utc=self.started,
                 finished_utc=utc_now(),
             ),
