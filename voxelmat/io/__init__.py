@@ -1,1 +1,1 @@
-"""Files in and out: meshes, designs, materials, tables, images, parts; written whole or not at all."""
+"""Files in and out: meshes, designs, materials, tables, images, parts; whole or not at all."""

@@ -8,7 +8,7 @@ import numba
 _WORTH = 16384
 
 
-def threads():
+def threads() -> int:
     """Threads of the parallel kernels called from this Python thread."""
     return numba.get_num_threads()
 

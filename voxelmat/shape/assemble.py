@@ -111,6 +111,7 @@ def assemble(
         monitor.report("voxelising bodies", done=n, total=len(bodies), body=body.name)
         shapes.append(voxelise(body.mesh, grid))
         report += _body_events(body, shapes[-1], grid)
+    monitor.report("voxelising bodies", done=len(bodies), total=len(bodies))
     report += find_overlaps(bodies, shapes, grid)
     monitor.report("joining bodies", done=len(bodies), total=len(bodies))
     order = sorted(range(len(bodies)), key=lambda n: strength(bodies[n]), reverse=True)

@@ -108,15 +108,15 @@ def resolve(design: Design, part: Part, *, monitor: Monitor = SILENT) -> Resolve
     FileFormatError
         If a map or mesh is not what it claims to be.
     """
-    steps = len(design.cases) + len(design.targets) + 1
-    monitor.report("finding regions", done=0, total=steps)
+    monitor.report("finding regions", done=0, total=1)
     regions = regions_of(design, part)
+    monitor.report("finding regions", done=1, total=1)
     maps: dict[tuple[str, int], LaidMap] = {}
     notes: list[str] = []
     cautions: list[str] = []
     cases = []
     for c, entry in enumerate(design.cases):
-        monitor.report("laying on loads", done=1 + c, total=steps, case=entry.name)
+        monitor.report("laying on loads", done=c, total=len(design.cases), case=entry.name)
         case = _case(design, c, entry, regions, part)
         for i, (load, said) in enumerate(zip(case.loads, entry.loads, strict=True)):
             if isinstance(load, PressureMap):
@@ -132,12 +132,14 @@ def resolve(design: Design, part: Part, *, monitor: Monitor = SILENT) -> Resolve
                 notes.append(note)
                 cautions += found
         cases.append(case)
+    monitor.report("laying on loads", done=len(cases), total=len(cases))
     targets = {}
     for i, target in enumerate(design.targets):
-        monitor.report("laying on targets", done=1 + len(cases) + i, total=steps)
+        monitor.report("laying on targets", done=i, total=len(design.targets))
         with at_key(design, f"target[{i}]"):
             targets[target.name] = _target(design, target, regions, part)
-    monitor.report("laying on targets", done=steps, total=steps)
+    if design.targets:
+        monitor.report("laying on targets", done=len(targets), total=len(targets))
     return Resolved(
         regions=regions,
         load_cases=tuple(cases),
