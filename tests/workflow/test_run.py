@@ -395,3 +395,15 @@ def test_public_names():
     assert time.perf_counter() - start < 60
     with pytest.raises(AttributeError, match="nothing"):
         _ = voxelmat.nothing
+
+
+def test_the_example_of_the_readme(design, tmp_path, monkeypatch, capsys):
+    text = (Path(__file__).parents[2] / "README.md").read_text()
+    code = text.split("```python\n")[1].split("```")[0]
+    assert "notebooks/grip/grip.toml" in code
+    monkeypatch.chdir(tmp_path)
+    (tmp_path / "out").mkdir()
+    space: dict = {}
+    exec(code.replace("notebooks/grip/grip.toml", str(design)), space)  # noqa: S102
+    assert space["run"].exit_code == 0
+    assert (tmp_path / "out" / "report.html").is_file()
