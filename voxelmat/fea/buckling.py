@@ -28,6 +28,8 @@ Double = NDArray[np.float64]
 
 # A residual above this means no answer; between the tolerance and this, a caution.
 _NO_ANSWER = 3e-2
+# A reverse load that needs more than this many times the factor of the load itself is left out.
+_FAR = 100.0
 # Factors at which the linear strain would pass this count as none: what lies there is the end of a
 # spectrum that piles up without bound, such as that of a pulled bar.
 _NEVER = 1.0
@@ -53,21 +55,56 @@ def _system(static: StaticResult) -> tuple[Packed, GeometricStiffness]:
     return packed, GeometricStiffness(stress, solid, spacing)
 
 
-def _problem(packed: Packed, geometric: GeometricStiffness, size: float, *, way: float) -> Problem:
-    """-Kg x = t K x, t = 1 / factor, in units of the static displacement; largest t wanted."""
-    return Problem(
-        A=lambda X: packed.apply(geometric.apply, X) * (-way / size),
-        B=lambda X: packed.stiffness(X) / size,
-        precondition=lambda X: packed.precondition(X) * size,
-        size=packed.size,
-        largest=True,
-    )
+class _Search:
+    """-Kg x = t K x, t = 1 / factor: the largest t of the load, then of the load reversed."""
 
+    def __init__(self, static: StaticResult, tol: float, maxiter: int, monitor: Monitor) -> None:
+        self.packed, self._geometric = _system(static)
+        _, mu = moduli(static.part)
+        # Makes K of order 1.
+        self._size = float(mu.max() * np.cbrt(static.part.grid.voxel_volume))
+        self._strain = abs(static.largest_strain.value)
+        self._tol, self._maxiter, self._monitor = tol, maxiter, monitor
+        self.iterations = 0
 
-def _wanted(pairs: Eigenpairs, count: int, static: StaticResult) -> int:
-    """How many of the first `count` are factors above 0 that mean something."""
-    strain = abs(static.largest_strain.value)
-    return int(np.count_nonzero(pairs.values[:count] * _NEVER > strain))
+    def _find(self, way: float, count: int, floor: float, stage: str) -> Eigenpairs:
+        packed, size = self.packed, self._size
+        problem = Problem(
+            A=lambda X: packed.apply(self._geometric.apply, X) * (-way / size),
+            B=lambda X: packed.stiffness(X) / size,
+            precondition=lambda X: packed.precondition(X) * size,
+            size=packed.size,
+            largest=True,
+            floor=floor,
+        )
+        pairs = extreme_pairs(
+            problem,
+            count,
+            guard=3 + count // 3,
+            tol=self._tol,
+            maxiter=self._maxiter,
+            monitor=self._monitor,
+            stage=stage,
+        )
+        self.iterations += pairs.iterations
+        return pairs
+
+    def both_ways(self, count: int) -> tuple[Eigenpairs, int, Eigenpairs | None]:
+        """Pairs of the load, how many of them mean something, and of the reverse load or None."""
+        floor = self._strain / _NEVER
+        found = self._find(1.0, min(count, self.packed.size), floor, "finding buckling shapes")
+        n = int(np.count_nonzero(found.values[:count] > floor))
+        if n and not found.residuals[:n].max() <= _NO_ANSWER:
+            raise ConvergenceError(
+                f"The buckling shapes were not found in {found.iterations} iterations: residual "
+                f"{found.residuals[:n].max():.2g}, where {_NO_ANSWER:g} at most is an answer. Ask "
+                f"for fewer shapes or raise maxiter.",
+                found.history,
+            )
+        floor = max(floor, float(found.values[0]) / _FAR if n else 0.0)
+        other = self._find(-1.0, 1, floor, "finding buckling of the reverse load")
+        sure = other.values[0] > floor and other.residuals[0] <= _NO_ANSWER
+        return found, n, other if sure else None
 
 
 def _shapes(packed: Packed, block: Double) -> Double:
@@ -168,41 +205,19 @@ def buckling(
         raise InputError(f"count must be at least 1; got {count}.")
     if static is None:
         static = solve(part, load_case, element=element, monitor=monitor)
-    elif static.part != part or static.load_case != load_case:
+    elif static.part != part or static.load_case is not load_case:
         raise InputError("The static result belongs to another part or load case; solve this one.")
-    packed, geometric = _system(static)
-    size = float(np.max(np.abs(moduli(part)[1])) * np.cbrt(part.grid.voxel_volume))
-    count = min(count, packed.size)
-    found = {}
-    for way, wanted in ((1.0, count), (-1.0, 1)):
-        found[way] = extreme_pairs(
-            _problem(packed, geometric, size, way=way),
-            wanted,
-            guard=3 + wanted // 3,
-            tol=tol,
-            maxiter=maxiter,
-            monitor=monitor,
-            stage="finding buckling shapes" if way > 0 else "finding buckling of the reverse load",
-        )
-    forward, backward = found[1.0], found[-1.0]
-    n = _wanted(forward, count, static)
-    if n and not forward.residuals[:n].max() <= _NO_ANSWER:
-        raise ConvergenceError(
-            f"The buckling shapes were not found in {forward.iterations} iterations: residual "
-            f"{forward.residuals[:n].max():.2g}, where {_NO_ANSWER:g} at most is an answer. Ask "
-            f"for fewer shapes or raise maxiter.",
-            forward.history,
-        )
-    sure = _wanted(backward, 1, static) and backward.residuals[0] <= _NO_ANSWER
-    reverse = float(1.0 / backward.values[0]) if sure else None
+    search = _Search(static, tol, maxiter, monitor)
+    forward, n, backward = search.both_ways(count)
+    reverse = None if backward is None else float(1.0 / backward.values[0])
     factors, residuals = 1.0 / forward.values[:n], forward.residuals[:n]
     return BucklingResult(
         static=static,
         factors=factors,
-        shapes=_shapes(packed, forward.vectors[:, :n]),
+        shapes=_shapes(search.packed, forward.vectors[:, :n]),
         residuals=residuals,
         reversed_factor=None if reverse is None else -reverse,
-        iterations=forward.iterations + backward.iterations,
+        iterations=search.iterations,
         cautions=tuple(_notes(static, factors, residuals, reverse, tol)),
         provenance=Provenance(
             inputs={"part": part.digest},

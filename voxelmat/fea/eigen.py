@@ -1,20 +1,19 @@
-"""A few extreme eigenpairs of A x = t B x from products alone, by SciPy's LOBPCG in short runs.
+"""A few extreme eigenpairs of A x = t B x from products alone, by LOBPCG.
 
-A. V. Knyazev, SIAM J. Sci. Comput. 23 (2001) 517 (from memory). Short runs, because only the
-wanted pairs have to converge and not the guard vectors that speed them up, and because each pair
-is judged by its own relative residual.
+A. V. Knyazev, SIAM J. Sci. Comput. 23 (2001) 517 (from memory). SciPy's own keeps the iterate of
+the smallest Euclidean residual, which says little where moduli lie orders apart: it then throws
+good iterates away and stands still. Here each pair is judged in the norm of energy, only the
+wanted pairs have to converge, and directions that have become dependent are dropped.
 """
 
 from __future__ import annotations
 
-import warnings
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 import scipy.linalg
 from numpy.typing import NDArray
-from scipy.sparse.linalg import lobpcg
 
 from voxelmat.errors import ConvergenceError
 from voxelmat.monitor import Monitor
@@ -26,10 +25,16 @@ Block = Callable[[Double], Double]
 
 # Problems up to this many unknowns are solved as dense matrices.
 _DENSE = 700
-# Iterations a run, and runs without any progress before giving up.
-_RUN, _PATIENCE = 8, 4
-# What SciPy is asked for: never reached, the decision is made here.
-_NEVER = 1e-250
+# Iterations without progress, and what counts as progress, before giving up.
+_PATIENCE, _PROGRESS = 40, 0.7
+# Iterations after which the largest value tells whether it will pass the floor.
+_LOOK = 20
+# Pairs this far below the tolerance are not worked on.
+_SETTLED = 0.1
+# Directions of the search space below this share of the largest count as dependent.
+_DEPENDENT = 1e-10
+# Products are updated, not made anew, so often; rounding adds up.
+_REFRESH = 25
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -48,6 +53,8 @@ class Problem:
         Which end of the spectrum.
     fixed : ndarray or None, shape (n, r)
         B-orthonormal eigenvectors that are known and left out.
+    floor : float
+        Where `largest`: stop early when no value seems to get above this.
     """
 
     A: Block
@@ -56,6 +63,7 @@ class Problem:
     size: int
     largest: bool
     fixed: Double | None = None
+    floor: float = 0.0
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -74,7 +82,7 @@ class Eigenpairs:
         to the next.
     iterations : int
     history : tuple of float
-        Largest residual of the wanted pairs after each run.
+        Largest residual of the wanted pairs, one an iteration.
     """
 
     values: Double
@@ -102,40 +110,86 @@ def _dense(problem: Problem, count: int) -> tuple[Double, Double]:
     return values, basis @ vectors
 
 
-def _residuals(problem: Problem, values: Double, X: Double) -> Double:
-    """See `Eigenpairs.residuals`; inf where the stiffness term vanishes."""
-    AX, BX = problem.A(X), problem.B(X)
-    R = AX - BX * values
-    stiffness = BX * values**2 if problem.largest else AX
-    energy = np.einsum("nm,nm->m", X, stiffness)
+class _Search:
+    """The block of approximations X, the directions P that led to it, and their products."""
+
+    def __init__(self, problem: Problem, X: Double) -> None:
+        self._problem = problem
+        self._fixed = problem.fixed
+        self._B_fixed = None if self._fixed is None else problem.B(self._fixed)
+        self.X = self._deflated(X)
+        self.P = self.AP = self.BP = np.zeros((len(X), 0))
+        self.AX, self.BX = problem.A(self.X), problem.B(self.X)
+        self.values = np.zeros(X.shape[1])
+        self.advance(np.zeros((len(X), 0)), np.zeros(0, dtype=bool))
+
+    def _deflated(self, W: Double) -> Double:
+        """Without the known eigenvectors; twice, for the last digits."""
+        if self._fixed is None or self._B_fixed is None:
+            return W
+        for _ in range(2):
+            W = W - self._fixed @ (self._B_fixed.T @ W)
+        return W
+
+    def refresh(self) -> None:
+        """Make the products of X anew."""
+        self.X = self._deflated(self.X)
+        self.AX, self.BX = self._problem.A(self.X), self._problem.B(self.X)
+
+    def residuals(self) -> tuple[Double, Double]:
+        """Preconditioned residuals (n, m) and their sizes, see `Eigenpairs.residuals`."""
+        R = self.AX - self.BX * self.values
+        W = self._problem.precondition(R)
+        energy = self.values**2 if self._problem.largest else self.values
+        error = np.abs(np.einsum("nm,nm->m", R, W))
+        sound = energy > 0
+        size = np.sqrt(error / np.where(sound, energy, 1.0))
+        return W, np.where(sound, size, np.inf)
+
+    def advance(self, W: Double, active: NDArray[np.bool_]) -> None:
+        """Rayleigh-Ritz on X, the new directions W and those P that belong to active pairs."""
+        m = self.X.shape[1]
+        W = self._deflated(W)
+        W = W - self.X @ (self.BX.T @ W)
+        P, AP, BP = self.P, self.AP, self.BP
+        if P.shape[1]:
+            P, AP, BP = P[:, active], AP[:, active], BP[:, active]
+        S = np.hstack([self.X, W, P])
+        AS = np.hstack([self.AX, self._products(self._problem.A, W), AP])
+        BS = np.hstack([self.BX, self._products(self._problem.B, W), BP])
+        C, self.values = _ritz(S, AS, BS, m, self._problem.largest)
+        D = C[m:]
+        self.P, self.AP, self.BP = S[:, m:] @ D, AS[:, m:] @ D, BS[:, m:] @ D
+        self.X, self.AX, self.BX = S @ C, AS @ C, BS @ C
+
+    def _products(self, product: Block, W: Double) -> Double:
+        return product(W) if W.shape[1] else W
+
+
+def _ritz(S: Double, AS: Double, BS: Double, m: int, largest: bool) -> tuple[Double, Double]:
+    """Coefficients (s, m) over the columns of S of the best B-orthonormal pairs, and values."""
+    G, H = S.T @ BS, S.T @ AS
+    G, H = (G + G.T) / 2, (H + H.T) / 2
+    size = np.sqrt(np.maximum(np.diag(G), 0.0))
+    scale = np.where(size > 0, 1.0 / np.where(size > 0, size, 1.0), 0.0)
+    d, V = np.linalg.eigh(scale[:, None] * G * scale)
+    keep = d > _DEPENDENT * d[-1]
+    T = scale[:, None] * V[:, keep] / np.sqrt(d[keep])
+    values, c = np.linalg.eigh(T.T @ H @ T)
+    if largest:
+        values, c = values[::-1], c[:, ::-1]
+    if len(values) < m:
+        raise np.linalg.LinAlgError(f"only {len(values)} of {m} directions are independent")
+    return np.asarray(T @ c[:, :m]), np.asarray(values[:m])
+
+
+def _direct(problem: Problem, block: int) -> Eigenpairs:
+    values, X = _dense(problem, block)
+    R = problem.A(X) - problem.B(X) * values
+    energy = values**2 if problem.largest else np.abs(values)
     error = np.abs(np.einsum("nm,nm->m", R, problem.precondition(R)))
-    out = np.full(len(values), np.inf)
-    sound = energy > 0
-    out[sound] = np.sqrt(error[sound] / energy[sound])
-    return out
-
-
-def _run(problem: Problem, X: Double) -> tuple[Double, Double]:
-    """One run of SciPy's LOBPCG; its warnings are about a tolerance that we judge ourselves."""
-    with warnings.catch_warnings():
-        warnings.simplefilter("ignore")
-        values, vectors = lobpcg(
-            problem.A,
-            X,
-            B=problem.B,
-            M=problem.precondition,
-            Y=problem.fixed,
-            tol=_NEVER,
-            maxiter=_RUN,
-            largest=problem.largest,
-        )
-    return np.asarray(values), np.asarray(vectors)
-
-
-def _start(problem: Problem, block: int) -> Double:
-    """Random vectors, smoothed by the preconditioner."""
-    rng = np.random.default_rng(0)
-    return np.asarray(problem.precondition(rng.standard_normal((problem.size, block))))
+    residuals = np.sqrt(error / np.maximum(energy, 1e-300))
+    return Eigenpairs(values=values, vectors=X, residuals=residuals, iterations=0, history=())
 
 
 def extreme_pairs(
@@ -171,41 +225,60 @@ def extreme_pairs(
     known = 0 if problem.fixed is None else problem.fixed.shape[1]
     block = min(count + guard, problem.size - known)
     if problem.size <= max(_DENSE, 6 * block + known):
-        values, X = _dense(problem, block)
-        residuals = _residuals(problem, values, X)
-        return Eigenpairs(values=values, vectors=X, residuals=residuals, iterations=0, history=())
-    X = _start(problem, block)
+        return _direct(problem, block)
     history: list[float] = []
-    done = 0
-    best: tuple[float, Double, Double, Double] | None = None
-    while done < maxiter and _improving(history):
-        try:
-            values, X = _run(problem, np.array(X))
-        except (ValueError, np.linalg.LinAlgError) as error:
-            raise ConvergenceError(
-                f"The eigenvalue iteration broke down ({error}). Check that the part hangs "
-                f"together and that no voxel is far softer than the rest, or ask for fewer modes.",
-                history,
-            ) from error
-        done += _RUN
-        residuals = _residuals(problem, values, X)
+    try:
+        return _iterate(problem, count, block, tol, maxiter, history, monitor, stage)
+    except np.linalg.LinAlgError as error:
+        raise ConvergenceError(
+            f"The eigenvalue iteration broke down ({error}). Check that the part hangs together "
+            f"and that no voxel is far softer than the rest, or ask for fewer modes.",
+            history,
+        ) from error
+
+
+def _iterate(
+    problem: Problem,
+    count: int,
+    block: int,
+    tol: float,
+    maxiter: int,
+    history: list[float],
+    monitor: Monitor,
+    stage: str,
+) -> Eigenpairs:
+    rng = np.random.default_rng(0)
+    # Random vectors, smoothed by the preconditioner.
+    search = _Search(problem, problem.precondition(rng.standard_normal((problem.size, block))))
+    best: Eigenpairs | None = None
+    while True:
+        W, residuals = search.residuals()
         worst = float(residuals[:count].max())
         history.append(worst)
-        monitor.report(stage, done=done, total=0, residual=worst)
-        if best is None or worst < best[0]:
-            best = worst, values, X, residuals
-        if worst <= tol:
-            break
-    if best is None or not np.all(np.isfinite(best[1])):
-        raise ConvergenceError("The eigenvalue iteration found nothing finite.", history)
-    _, values, X, residuals = best
-    return Eigenpairs(
-        values=values, vectors=X, residuals=residuals, iterations=done, history=tuple(history)
-    )
+        monitor.report(stage, done=len(history) - 1, total=0, residual=worst)
+        if best is None or worst < min(history[:-1]):
+            best = Eigenpairs(
+                values=search.values,
+                vectors=search.X,
+                residuals=residuals,
+                iterations=len(history) - 1,
+                history=(),
+            )
+        done = len(history) > maxiter or _stuck(history) or _hopeless(problem, search, history)
+        if worst <= tol or done:
+            return replace(best, iterations=len(history) - 1, history=tuple(history))
+        active = residuals > _SETTLED * tol
+        search.advance(W[:, active], active)
+        if len(history) % _REFRESH == 0:
+            search.refresh()
 
 
-def _improving(history: list[float]) -> bool:
-    """Whether some recent run brought the residual down by a tenth at least."""
+def _hopeless(problem: Problem, search: _Search, history: list[float]) -> bool:
+    """Whether all values stay below the floor; Ritz values only rise towards the largest one."""
+    return problem.largest and len(history) > _LOOK and search.values[0] < problem.floor
+
+
+def _stuck(history: list[float]) -> bool:
     if len(history) <= _PATIENCE:
-        return True
-    return min(history[-_PATIENCE:]) < 0.9 * min(history[:-_PATIENCE])
+        return False
+    return min(history[-_PATIENCE:]) > _PROGRESS * min(history[:-_PATIENCE])

@@ -33,7 +33,7 @@ class BucklingResult:
         over the relative gap to the next.
     reversed_factor : float or None
         Smallest factor below 0 in size: the load the other way round buckles the part at this
-        multiple. None where there is none.
+        multiple. None where there is none within 100 times the lowest of `factors`.
     iterations : int
     cautions : tuple of str
     provenance : Provenance
