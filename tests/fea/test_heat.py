@@ -1,18 +1,20 @@
 """Steady conduction: from a part and a heat case to a checked result."""
 
+import re
+
 import numpy as np
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from voxelmat.errors import InputError
-from voxelmat.fea.heat import conduct
+from voxelmat.fea.heat import conduct, conduct_over_time
 from voxelmat.model.blend import EMPTY, Blend
 from voxelmat.model.grid import VoxelGrid
 from voxelmat.model.heatcase import Convection, FixedTemperature, HeatCase, HeatFlux, HeatSource
 from voxelmat.model.material import Constant, Material
 from voxelmat.model.part import Part
-from voxelmat.model.region import Box, FaceRegion, LabelRegion
+from voxelmat.model.region import Box, FaceRegion, LabelRegion, solid_nodes
 
 LEFT, RIGHT = FaceRegion(name="left", side="x-"), FaceRegion(name="right", side="x+")
 TOP = FaceRegion(name="top", side="z+")
@@ -262,6 +264,7 @@ def test_a_piece_joined_at_a_corner_is_held_through_it():
     case = HeatCase(name="a", fixed=(FixedTemperature(region=LEFT, temperature_degC=50.0),))
     result = conduct(part_of(labels, resin()), case)
     np.testing.assert_allclose(result.temperature[2, 2, 2], 50.0)
+    assert "1 joints between pieces are edges or corners" in result.cautions[0]
 
 
 def test_bad_cases_are_refused():
@@ -284,6 +287,45 @@ def test_bad_cases_are_refused():
         conduct(part, HeatCase(name="a", fixed=(hot, clash)))
     with pytest.raises(InputError, match="no conductivity for 'bare'"):
         conduct(part_of(np.ones((2, 2, 2)), resin("bare", k=None)), between(1.0, 2.0))
+
+
+def answer_or_refusal(run, part, case):
+    try:
+        return run(part, case)
+    except InputError as error:
+        return str(error)
+
+
+@pytest.mark.parametrize("seed", range(40))
+def test_any_part_ends_in_a_balanced_answer_or_a_clear_error(seed):
+    # Feathers, islands, single voxels, flat ones, films from 1e-3 to 1e4 W/(m^2 K), 1000:1.
+    rng = np.random.default_rng(seed)
+    shape = tuple(rng.integers(1, 8, 3))
+    labels = rng.integers(0, 3, shape) * (rng.random(shape) < rng.choice([0.2, 0.6, 1.0]))
+    fill = np.where(labels > 0, rng.integers(1, 256, shape), 0).astype(np.uint8)
+    part = part_of(
+        labels, resin("a", 0.1), resin("b", 100.0), spacing=tuple(rng.uniform(0.1, 2, 3)),
+        occupancy=fill if seed % 2 else None,
+    )  # fmt: skip
+    side = FaceRegion(name="side", side=rng.choice(["x-", "y+", "z-"]))
+    film = Convection(film_W_per_m2_K=10 ** rng.uniform(-3, 4), ambient_degC=20.0)
+    case = HeatCase(
+        name="a",
+        fixed=(FixedTemperature(region=side, temperature_degC=60.0),) * int(rng.integers(2)),
+        convection=(film,) * int(rng.integers(2)),
+        flux=(HeatFlux(flux_mW_per_mm2=rng.normal()),) * int(rng.integers(2)),
+        sources=(HeatSource(total_mW=rng.normal()),) * int(rng.integers(2)),
+    )
+    for run in (conduct, lambda p, c: conduct_over_time(p, c, 50.0, steps=2).final):
+        result = answer_or_refusal(run, part, case)
+        if isinstance(result, str):
+            assert re.search("empty|No temperature is fixed|cannot leave|exposed surface", result)
+            continue
+        assert result.balance < 1e-4
+        known = np.isfinite(result.temperature)
+        assert known.any()
+        left_out = any("no heat reaches" in c for c in result.cautions)
+        assert left_out or known[solid_nodes(part.solid)].all()
 
 
 def test_cautions():

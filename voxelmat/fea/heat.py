@@ -4,9 +4,9 @@ from __future__ import annotations
 
 import numpy as np
 
-from voxelmat.fea.heat_answer import flows_at, heat_result
+from voxelmat.fea.heat_answer import balance_of, flows_at, heat_result, rounding_of
 from voxelmat.fea.heat_assemble import assemble_heat, conductivities
-from voxelmat.fea.heat_pieces import kept
+from voxelmat.fea.heat_pieces import hinges, kept
 from voxelmat.fea.heat_system import HeatSystem
 from voxelmat.fea.heat_transient import conduct_over_time
 from voxelmat.fea.operator import touched_nodes
@@ -63,21 +63,22 @@ def conduct(
     keep, cautions = kept(part, k > 0, acts)
     touched = touched_nodes(keep)
     acts = acts.within(touched)
-    # Counted from a middle temperature, so that the residual is relative to differences alone.
-    datum = 0.5 * (min(acts.levels) + max(acts.levels))
+    datum = acts.datum
     system = HeatSystem(k * keep, part.grid.spacing, acts.held, film=acts.film(), monitor=monitor)
     heat = acts.heat(datum)
     T, run = system.solve(heat, prescribed=acts.given - datum, tol=tol, maxiter=maxiter)
     surplus = system.apply(T) - heat
     T = np.where(touched, T + datum, np.nan)
+    flows = flows_at(acts, T, surplus)
     return heat_result(
         part,
         heat_case,
         T,
-        flows_at(acts, T, surplus),
+        flows,
         stored=0.0,
+        balance=balance_of(flows, 0.0, rounding_of(acts, T)),
         iterations=run.iterations,
         residual=run.residual,
-        cautions=[*acts.cautions, *cautions],
+        cautions=[*acts.cautions, *cautions, *hinges(keep)],
         started=started,
     )

@@ -15,7 +15,7 @@ from voxelmat.model.thermal import palette_conductivity
 from voxelmat.provenance import Provenance, utc_now
 from voxelmat.units import number
 
-__all__ = ["balance_of", "flows_at", "heat_result"]
+__all__ = ["balance_of", "flows_at", "heat_result", "rounding_of"]
 
 Double = NDArray[np.float64]
 
@@ -45,10 +45,16 @@ def flows_at(acts: HeatActs, T: Double, surplus: Double) -> dict[str, float]:
     return out
 
 
-def balance_of(flows: dict[str, float], stored: float) -> float:
-    """Inflow minus stored heat, over the largest of all flows."""
-    largest = max([abs(stored), *(abs(v) for v in flows.values())])
+def balance_of(flows: dict[str, float], stored: float, rounding: float) -> float:
+    """Inflow minus stored heat, over the largest of all flows, or over `rounding` if larger."""
+    largest = max([rounding, abs(stored), *(abs(v) for v in flows.values())])
     return abs(sum(flows.values()) - stored) / largest if largest > 0 else 0.0
+
+
+def rounding_of(acts: HeatActs, T: Double) -> float:
+    """Below this, mW, a flow through films counts as none: 1e-9 of what absolute 0 would draw."""
+    hottest = float(np.nanmax(np.abs(T))) + 273.15
+    return 1e-9 * hottest * sum(float(f.film.sum()) for f in acts.films)
 
 
 def _extreme(part: Part, T: Double, value: float) -> Extreme:
@@ -103,6 +109,7 @@ def heat_result(
     flows: dict[str, float],
     *,
     stored: float,
+    balance: float,
     iterations: int,
     residual: float,
     cautions: list[str],
@@ -110,7 +117,6 @@ def heat_result(
 ) -> HeatResult:
     """A result from temperatures ``[nz+1, ny+1, nx+1]``, nan where there is none."""
     field = T.T
-    balance = balance_of(flows, stored)
     notes = [*cautions, *_record_cautions(part, field)]
     if balance > _BALANCE:
         notes.append(f"In- and outflow of heat miss each other by {balance:.1e} of the largest.")
@@ -129,7 +135,7 @@ def heat_result(
         cautions=tuple(notes),
         provenance=Provenance(
             inputs={"part": part.digest},
-            threads=int(threads()),  # type: ignore[no-untyped-call]
+            threads=int(threads()),
             started_utc=started,
             finished_utc=utc_now(),
         ),

@@ -83,6 +83,22 @@ class HeatActs:
         """Temperatures that are given: held ones and those of the surroundings, degC."""
         return [*np.unique(self.given[self.held]).tolist(), *(f.ambient for f in self.films)]
 
+    @property
+    def datum(self) -> float:
+        """A temperature to count from, degC, so that rounding is relative to differences alone.
+
+        The one that most held nodes are at; where none is held, the mean over all films that the
+        heat balance demands of a steady state.
+        """
+        if self.held.any():
+            values, count = np.unique(self.given[self.held], return_counts=True)
+            return float(values[np.argmax(count)])
+        total = sum(float(f.film.sum()) for f in self.films)
+        if not total > 0:
+            return 0.0
+        drawn = sum(float(f.film.sum()) * f.ambient for f in self.films)
+        return (drawn + sum(float(q.heat.sum()) for q in self.inflows)) / total
+
     def within(self, touched: Bools) -> HeatActs:
         """The same without what acts on other nodes."""
         keep = touched.ravel()

@@ -11,7 +11,7 @@ from voxelmat.fea.heat_assemble import HeatActs
 from voxelmat.fea.operator import touched_nodes
 from voxelmat.model.part import Part
 
-__all__ = ["kept"]
+__all__ = ["hinges", "kept"]
 
 Bools = NDArray[np.bool_]
 
@@ -26,6 +26,18 @@ def _box(part: Part, slices: tuple[slice, ...], voxels: int) -> str:
         low, h = part.grid.origin[d], part.grid.spacing[d]
         words.append(f"{axis} {low + h * s.start:.4g} to {low + h * s.stop:.4g}")
     return f"{', '.join(words)} mm ({voxels} voxels)"
+
+
+def hinges(solid: Bools) -> list[str]:
+    """A caution where pieces of ``[k, j, i]`` meet along edges or at corners alone."""
+    apart = int(scipy.ndimage.label(solid)[1])
+    joined = int(scipy.ndimage.label(solid, np.ones((3, 3, 3), dtype=bool))[1])
+    if apart == joined:
+        return []
+    return [
+        f"{apart - joined} joints between pieces are edges or corners of voxels only. Heat passes "
+        f"there as through a bridge about a voxel thick, which the real part may not have."
+    ]
 
 
 def kept(part: Part, solid: Bools, acts: HeatActs) -> tuple[Bools, list[str]]:

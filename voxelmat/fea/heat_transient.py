@@ -10,8 +10,9 @@ import numpy as np
 from numpy.typing import NDArray
 
 from voxelmat.errors import Cancelled, InputError
-from voxelmat.fea.heat_answer import balance_of, flows_at, heat_result
+from voxelmat.fea.heat_answer import balance_of, flows_at, heat_result, rounding_of
 from voxelmat.fea.heat_assemble import HeatActs, assemble_heat, capacities, conductivities
+from voxelmat.fea.heat_pieces import hinges
 from voxelmat.fea.heat_system import HeatSystem
 from voxelmat.fea.operator import touched_nodes
 from voxelmat.fea.scalar_element import CAPACITIES, element_matrices
@@ -49,6 +50,7 @@ class _March:
     watched: list[list[float]] = field(default_factory=list)
     flows: list[dict[str, float]] = field(default_factory=list)
     stored: list[float] = field(default_factory=list)
+    balance: list[float] = field(default_factory=list)
     iterations: int = 0
     residual: float = 0.0
 
@@ -72,7 +74,7 @@ class _Stepper:
             monitor=monitor,
         )  # fmt: skip
         self.spatial = HeatSystem(k, h, acts.held, film=film)
-        self.heat = acts.heat(0.0)
+        self.heat = acts.heat(acts.datum)
         # Row sums of either capacity matrix: the heat of a degree at each node, mJ/K.
         share = element_matrices(h, CAPACITIES[0])[1][0, 0] * c
         self.mass = np.zeros(acts.held.shape)
@@ -83,7 +85,7 @@ class _Stepper:
 
     def _stage(self, base: Double, march: _March) -> tuple[Double, dict[str, float]]:
         """A backward Euler step from `base`: its change of temperature, and the flows then."""
-        pull = self.heat - self.spatial.apply(base)
+        pull = self.heat - self.spatial.apply(base - self.acts.datum)
         change, run = self.implicit.solve(pull, tol=self._tol, maxiter=self._maxiter)
         march.iterations += run.iterations
         march.residual = run.residual
@@ -102,6 +104,8 @@ class _Stepper:
             flows = {name: (1.0 - g) * flows[name] + g * last[name] for name in flows}
         march.stored.append(float((self.mass * (new - old)).sum()) / self.step)
         march.flows.append(flows)
+        rounding = rounding_of(self.acts, new)
+        march.balance.append(balance_of(flows, march.stored[-1], rounding))
         march.T = new
 
 
@@ -257,11 +261,12 @@ def _result(
     if march.saved_s[-1] != march.times[-1]:
         march.saved_s.append(march.times[-1])
         march.saved.append(shown.T.astype(np.float32))
-    cautions = [*acts.cautions, *_overshoot(acts, march)]
+    cautions = [*acts.cautions, *hinges(part.solid.T), *_overshoot(acts, march)]
     if done < count:
         cautions.append(f"Stopped by the user at {number(done * step)} s, after {done} steps.")
     final = heat_result(
-        part, case, shown, march.flows[-1], stored=march.stored[-1], iterations=march.iterations,
+        part, case, shown, march.flows[-1], stored=march.stored[-1],
+        balance=march.balance[-1], iterations=march.iterations,
         residual=march.residual, cautions=cautions, started=started,
     )  # fmt: skip
     return TransientHeatResult(
@@ -276,7 +281,7 @@ def _result(
         watched_degC=np.array(march.watched).reshape(done + 1, -1),
         flows={name: np.array([f[name] for f in march.flows]) for name in march.flows[0]},
         stored=np.array(march.stored),
-        balance=max(map(balance_of, march.flows, march.stored)),
+        balance=max(march.balance),
         scheme=scheme,
         capacity=capacity,
         step_s=step,

@@ -61,7 +61,7 @@ class Conduction:
 
     def apply(self, u: Floats, y: Floats) -> None:
         """Write A u to y; both C-contiguous ``[1, nk, nj, ni]`` of the float type of the fields."""
-        chunks = int(threads())  # type: ignore[no-untyped-call]
+        chunks = int(threads())
         apply_scalar(u[0], self.k, self.c, y[0], self.p, self.q, chunks)
         if self.diagonal is not None:
             add_product(rows(self.diagonal), rows(u), rows(y))

@@ -32,7 +32,7 @@ from voxelmat.kernels.scalar_coarse import (
 from voxelmat.kernels.threads import crew
 from voxelmat.kernels.vector import scaled_copy
 
-__all__ = ["ScalarGrid", "ScalarMultigrid"]
+__all__ = ["ScalarGrid", "ScalarMultigrid", "matrix_diagonal"]
 
 Single = NDArray[np.float32]
 Double = NDArray[np.float64]
@@ -73,7 +73,7 @@ class ScalarGrid(NamedTuple):
     touched: NDArray[np.bool_]
 
 
-def _matrix_diagonal(grid: ScalarGrid) -> Double:
+def matrix_diagonal(grid: ScalarGrid) -> Double:
     """Diagonal of the matrix at every node, held ones too."""
     K, C = element_matrices(grid.spacing, grid.kind)
     voxel = K[0, 0] * grid.conductivity
@@ -96,7 +96,7 @@ def _finest(grid: ScalarGrid) -> VoxelScalarLevel:
         grid.kind,
         grid.diagonal,
     )
-    return VoxelScalarLevel(operator, _matrix_diagonal(grid), grid.touched & ~grid.held)
+    return VoxelScalarLevel(operator, matrix_diagonal(grid), grid.touched & ~grid.held)
 
 
 def _lists(maps: list[Double]) -> tuple[NDArray[np.intp], Single]:
