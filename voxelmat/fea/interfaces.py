@@ -42,6 +42,11 @@ Ints = NDArray[np.intp]
 # Least share of the staircase that counts as true area; that of a plane through a cube's corners
 # is 0.577, and only a feature of single voxels has less.
 _LEAST = 0.5
+# Forces of all resins at a node that miss balance by more than this share tell of something that
+# acts there from outside.
+_BALANCE = 0.05
+# Kinds of load that strain without stress.
+_STRAINING = ("Temperature", "InitialStrain")
 # A face with less true area than this lies on a stepped interface.
 _FLAT = 0.98
 
@@ -120,7 +125,7 @@ def _at_nodes(faces: _Faces, mine: Bools, value: Double, count: int) -> Double:
 
 
 def _outside(result: StaticResult) -> Bools:
-    """Components of nodes where something from outside acts, (nodes, 3); weight is left out."""
+    """Components of nodes where a support, spring or load acts, (nodes, 3); no weight."""
     acts = assemble(result.part, result.load_case)
     marked = acts.held.reshape(3, -1).T.copy()
     if acts.springs is not None:
@@ -139,21 +144,28 @@ def _face_mean(nodal: Double, trusted: Bools, nodes: Ints, instead: Double) -> D
     return np.where(count > 0, total / np.maximum(count, 1), instead)
 
 
-def _one_side(
-    result: StaticResult, resin: NDArray[np.int16], faces: _Faces, which: int
-) -> tuple[Bools, Double, Double]:
+def _trusted(result: StaticResult, forces: dict[int, Double]) -> Bools:
+    """Components of nodes whose forces are those that cross the interface, (nodes, 3)."""
+    total = np.sum(list(forces.values()), axis=0)
+    size = np.sum([np.abs(f).max(axis=1) for f in forces.values()], axis=0)
+    in_balance = np.abs(total) <= _BALANCE * size[:, None]
+    # Forces of elements know nothing of a strain that they would take without stress.
+    strained = any(type(load).__name__ in _STRAINING for load in result.load_case.loads)
+    return np.asarray(in_balance & ~_outside(result) & (not strained))
+
+
+def _one_side(faces: _Faces, force: Double, which: int) -> tuple[Bools, Double, Double]:
     """For faces of one resin: which, force over area of its nodes, outward vector over area."""
     mine = (faces.side == which).any(axis=1)
     outward = np.zeros((len(faces.axis), 3))
     sign = np.where(faces.side[:, 0] == which, 1.0, -1.0)
     outward[np.arange(len(sign)), faces.axis] = sign * faces.area
-    count = int(np.prod(result.part.grid.node_shape))
+    count = len(force)
     area = _at_nodes(faces, mine, faces.area, count)[:, None]
     over = np.divide(1.0, area, out=np.zeros_like(area), where=area > 0)
-    # In balance, what its neighbours put on this resin is what its elements put on the nodes.
-    traction = over * _nodal_forces(result, resin, which)
     direction = over * _at_nodes(faces, mine, outward, count)
-    return mine, traction, direction[faces.node[mine]].mean(axis=1)
+    # In balance, what its neighbours put on this resin is what its elements put on the nodes.
+    return mine, over * force, direction[faces.node[mine]].mean(axis=1)
 
 
 def _tractions(
@@ -161,12 +173,15 @@ def _tractions(
 ) -> tuple[Double, Double]:
     """Traction of the upper on the lower side over the staircase, and vector over scalar area."""
     traction, direction = np.zeros((2, len(faces.axis), 3))
-    trusted = ~_outside(result)
+    forces = {int(c): _nodal_forces(result, resin, int(c)) for c in np.unique(faces.side)}
+    if not forces:
+        return traction, direction
+    trusted = _trusted(result, forces)
     own = np.eye(3)[faces.axis]
     stressed = 0.5 * _stress_tractions(result, faces.voxel, own)
     stressed += 0.5 * _stress_tractions(result, faces.voxel + own.astype(np.intp), own)
-    for which in np.unique(faces.side):
-        mine, t, v = _one_side(result, resin, faces, int(which))
+    for which, force in forces.items():
+        mine, t, v = _one_side(faces, force, which)
         sign = np.where(faces.side[mine, 0] == which, 0.5, -0.5)[:, None]
         # The mean of what both sides say: they differ by the weight of a voxel, and where a third
         # resin meets the two.

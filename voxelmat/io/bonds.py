@@ -1,8 +1,8 @@
-"""Strengths of the interfaces between resins from TOML: the shipped ones, and a design's own."""
+"""The strength of an interface between two resins from TOML."""
 
 from __future__ import annotations
 
-from collections.abc import Mapping, Sequence
+from collections.abc import Mapping
 from pathlib import Path
 from typing import Any
 
@@ -11,7 +11,7 @@ from voxelmat.io.schema import check_document, read_toml
 from voxelmat.model.interface import Bond
 from voxelmat.model.material import Constant
 
-__all__ = ["bond_from", "is_bond", "load_bond", "load_bonds"]
+__all__ = ["bond_from", "is_bond", "load_bond"]
 
 
 def is_bond(data: Mapping[str, Any]) -> bool:
@@ -65,40 +65,3 @@ def load_bond(path: str | Path) -> Bond:
     """
     path = Path(path)
     return bond_from(read_toml(path), str(path))
-
-
-def load_bonds(folder: str | Path, extra: Sequence[str | Path] = ()) -> tuple[Bond, ...]:
-    """All records of a library folder, with a design's own added or put in their place.
-
-    Parameters
-    ----------
-    folder : path
-        Its subfolder ``bonds`` is read; a library without one has no records.
-    extra : sequence of path
-        Files, or folders whose subfolder ``bonds`` is read.
-
-    Returns
-    -------
-    tuple of Bond
-        Sorted by name of the pair.
-
-    Raises
-    ------
-    InputError
-        Where the library has two records of one pair, or a file is at fault.
-    """
-    found: dict[frozenset[str], Bond] = {}
-    for path in sorted((Path(folder) / "bonds").glob("*.toml")):
-        bond = load_bond(path)
-        if bond.pair in found:
-            raise InputError(
-                f"The bond {bond.first} + {bond.second} has another record in this folder; keep "
-                f"one.",
-                file=str(path),
-            )
-        found[bond.pair] = bond
-    for given in map(Path, extra):
-        for path in sorted((given / "bonds").glob("*.toml")) if given.is_dir() else [given]:
-            bond = load_bond(path)
-            found[bond.pair] = bond
-    return tuple(sorted(found.values(), key=lambda b: sorted(b.pair)))

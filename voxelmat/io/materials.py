@@ -1,4 +1,4 @@
-"""Resins and blend curves from TOML: the shipped library, and what a design brings of its own."""
+"""Resins, blend curves and bonds from TOML: the shipped library, and what a design brings."""
 
 from __future__ import annotations
 
@@ -9,8 +9,10 @@ from pathlib import Path
 from typing import Any
 
 from voxelmat.errors import InputError, ResourceError
+from voxelmat.io.bonds import bond_from, is_bond
 from voxelmat.io.schema import check_document, read_toml
 from voxelmat.model.curve import PairCurve
+from voxelmat.model.interface import Bond
 from voxelmat.model.laws import LAWS, BlendLaw, CalibratedCurve
 from voxelmat.model.material import Constant, Material
 from voxelmat.provenance import file_digest
@@ -34,12 +36,14 @@ _CONSTANTS = {
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Library(Mapping[str, Material]):
-    """Materials by name, and the blend curves between them.
+    """Materials by name, the blend curves between them and the strength of their interfaces.
 
     Attributes
     ----------
     materials : mapping of str to Material
     curves : tuple of PairCurve
+    bonds : tuple of Bond
+        Strengths of interfaces; a pair without one has none.
     notes : tuple of str
         What was replaced, and which curves do not fit the resins that they join.
     digests : mapping of str to str
@@ -48,6 +52,7 @@ class Library(Mapping[str, Material]):
 
     materials: Mapping[str, Material]
     curves: tuple[PairCurve, ...] = ()
+    bonds: tuple[Bond, ...] = ()
     notes: tuple[str, ...] = ()
     digests: Mapping[str, str] = field(default_factory=dict)
 
@@ -226,59 +231,71 @@ def load_curve(path: str | Path) -> PairCurve:
 def _toml_files(path: Path) -> list[Path]:
     if not path.is_dir():
         return [path]
-    found = sorted(path.glob("*.toml")) + sorted((path / "curves").glob("*.toml"))
+    found = sorted(path.glob("*.toml"))
+    for below in ("curves", "bonds"):
+        found += sorted((path / below).glob("*.toml"))
     if not found:
         raise InputError("This folder holds no *.toml files.", file=str(path))
     return found
 
 
 class _Shelf:
-    """Collects materials and curves, later ones over earlier ones, with notes."""
+    """Collects materials, curves and bonds, later ones over earlier ones, with notes."""
 
     def __init__(self) -> None:
         self.materials: dict[str, Material] = {}
         self.curves: dict[frozenset[str], PairCurve] = {}
-        self.files: dict[frozenset[str] | str, str] = {}
+        self.bonds: dict[frozenset[str], Bond] = {}
+        self.files: dict[tuple[str, frozenset[str]], str] = {}
         self.notes: list[str] = []
 
     def read(self, path: Path, *, own: bool) -> None:
         data = read_toml(path)
         file = str(path)
-        if "first" in data or "second" in data:
+        if is_bond(data):
+            bond = bond_from(data, file)
+            self._note("bond", bond.pair, path, bond.pair in self.bonds, own)
+            self.bonds[bond.pair] = bond
+        elif "first" in data or "second" in data:
             curve = _curve(data, file)
-            what, key = f"blend curve {curve.first} + {curve.second}", curve.pair
-            known = curve.pair in self.curves
+            self._note("blend curve", curve.pair, path, curve.pair in self.curves, own)
             self.curves[curve.pair] = curve
-            self._note(what, key, path, known, own)
         else:
             material = _material(data, file)
-            known = material.name in self.materials
-            self.materials[material.name] = material
-            self._note(f"material {material.name}", material.name, path, known, own)
+            name = material.name
+            self._note("material", frozenset({name}), path, name in self.materials, own)
+            self.materials[name] = material
 
-    def _note(
-        self, what: str, key: frozenset[str] | str, path: Path, known: bool, own: bool
-    ) -> None:
+    def _note(self, kind: str, key: frozenset[str], path: Path, known: bool, own: bool) -> None:
+        what = f"{kind} {' + '.join(sorted(key))}"
+        before = self.files.get((kind, key))
         if known and not own:
-            raise InputError(f"The {what} is in {self.files[key]} too.", file=str(path))
+            raise InputError(f"The {what} is in {before} too.", file=str(path))
         if known:
-            self.notes.append(f"The {what} of {path.name} replaces that of {self.files[key]}.")
-        self.files[key] = path.name
+            self.notes.append(f"The {what} of {path.name} replaces that of {before}.")
+        self.files[kind, key] = path.name
 
-    def check_curves(self) -> None:
-        """Curves join known resins; a note where a resin has left the curve's end."""
+    def _known(self, name: str, kind: str, pair: frozenset[str], key: str) -> Material:
+        """The resin that a curve or a bond names."""
+        if name in self.materials:
+            return self.materials[name]
+        near = difflib.get_close_matches(name, self.materials, n=1)
+        tip = f" Did you mean '{near[0]}'?" if near else ""
+        raise InputError(
+            f"The {kind} {' + '.join(sorted(pair))} names resin '{name}', which is not known.{tip}",
+            file=self.files[kind, pair],
+            key=key,
+        )
+
+    def check_pairs(self) -> None:
+        """Curves and bonds join known resins; a note where a resin has left the curve's end."""
+        for bond in self.bonds.values():
+            for key, name in (("first", bond.first), ("second", bond.second)):
+                self._known(name, "bond", bond.pair, key)
         for curve in self.curves.values():
-            for name, modulus in ((curve.first, curve.E[0]), (curve.second, curve.E[-1])):
-                if name not in self.materials:
-                    near = difflib.get_close_matches(name, self.materials, n=1)
-                    tip = f" Did you mean '{near[0]}'?" if near else ""
-                    raise InputError(
-                        f"The blend curve {curve.first} + {curve.second} names resin '{name}', "
-                        f"which is not known.{tip}",
-                        file=self.files[curve.pair],
-                        key="first" if name == curve.first else "second",
-                    )
-                E = self.materials[name].E
+            ends = (("first", curve.first, curve.E[0]), ("second", curve.second, curve.E[-1]))
+            for key, name, modulus in ends:
+                E = self._known(name, "blend curve", curve.pair, key).E
                 if not E.band[0] <= modulus <= E.band[1]:
                     self.notes.append(
                         f"The blend curve {curve.first} + {curve.second} was taken with {name} at "
@@ -288,12 +305,12 @@ class _Shelf:
 
 
 def load_library(extra: Sequence[str | Path] = ()) -> Library:
-    """The shipped materials and blend curves, with a design's own added or put in their place.
+    """The shipped materials, curves and bonds, with a design's own added or put in their place.
 
     Parameters
     ----------
     extra : sequence of path
-        TOML files (a material or a blend curve each) or folders of such.
+        TOML files (a material, a blend curve or a bond each) or folders of such.
 
     Returns
     -------
@@ -313,10 +330,11 @@ def load_library(extra: Sequence[str | Path] = ()) -> Library:
         for path in _toml_files(Path(given)):
             shelf.read(path, own=True)
             digests[path.name] = file_digest(path)
-    shelf.check_curves()
+    shelf.check_pairs()
     return Library(
         materials=shelf.materials,
         curves=tuple(shelf.curves.values()),
+        bonds=tuple(shelf.bonds.values()),
         notes=tuple(shelf.notes),
         digests=digests,
     )
