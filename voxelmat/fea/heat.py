@@ -24,7 +24,7 @@ def conduct(
     heat_case: HeatCase,
     *,
     tol: float = 1e-9,
-    maxiter: int = 400,
+    maxiter: int = 1000,
     monitor: Monitor = SILENT,
 ) -> HeatResult:
     """Solve for the steady temperature.

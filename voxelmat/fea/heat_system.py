@@ -137,7 +137,7 @@ class HeatSystem:
         x0: Double | None = None,
         prescribed: Double | None = None,
         tol: float = 1e-9,
-        maxiter: int = 400,
+        maxiter: int = 1000,
     ) -> tuple[Double, Iteration]:
         """Solve for one right-hand side.
 

@@ -178,7 +178,7 @@ def conduct_over_time(
     capacity: str = "lumped",
     start: HeatResult | None = None,
     tol: float = 1e-8,
-    maxiter: int = 400,
+    maxiter: int = 1000,
     monitor: Monitor = SILENT,
 ) -> TransientHeatResult:
     """Follow the temperature over time, from `HeatCase.initial_degC` or an earlier result.
