@@ -62,7 +62,7 @@ def _coordinates(shape: tuple[int, ...], spacing: Spacing) -> list[Double]:
     out = []
     for d in range(3):
         n = shape[-1 - d]
-        x = spacing[d] * (np.arange(n) - 0.5 * (n - 1))
+        x = np.asarray(spacing[d] * (np.arange(n) - 0.5 * (n - 1)), dtype=np.float64)
         out.append(x.reshape([-1 if a == 2 - d else 1 for a in range(3)]))
     return out
 
@@ -141,7 +141,8 @@ def solve_cell(
     stiffest = float((system.lam + 2.0 * system.mu).max())
     scale = _SMALL * stiffest * voxel / min(spacing) * float(np.sqrt(lam.size))
     bulk3 = 3.0 * system.lam + 2.0 * system.mu
-    thermal = None if expansion is None else np.zeros(6)
+    stress = np.zeros(lam.shape) if expansion is None else bulk3 * expansion
+    thermal = np.zeros(6)
     C, means = np.zeros((6, 6)), np.zeros((6, 6))
     fields = np.zeros((6, *system.shape))
     steps: list[int] = []
@@ -164,13 +165,12 @@ def solve_cell(
             v = fields[other].copy()
             _add_affine(v, other, at)
             C[case, other] = C[other, case] = dot(v, q) / volume
-        if thermal is not None:
-            dilation = strain(w, spacing)[:3].sum(axis=0)
-            thermal[case] = float((bulk3 * expansion * dilation).sum()) / lam.size
+        if expansion is not None:
+            thermal[case] = float((stress * strain(w, spacing)[:3].sum(axis=0)).sum()) / lam.size
     largest = float(np.abs(C).max())
     return CellSolution(
         stiffness=C,
-        thermal_stress=thermal,
+        thermal_stress=None if expansion is None else thermal,
         symmetry_error=float(np.abs(means - means.T).max()) / largest if largest > 0 else 0.0,
         fields=fields,
         iterations=tuple(steps),

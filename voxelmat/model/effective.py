@@ -157,7 +157,7 @@ class EffectiveConstants:
 
     @property
     def poisson(self) -> Floats:
-        """Shape (3, 3): minus the strain along b over that along a, pulled along a; nan for a = b."""
+        """Minus the strain along b over that along a, pulled along a: [a, b]; nan for a = b."""
         S = self.compliance[:3, :3]
         out = -S / np.diag(S)[:, None]
         np.fill_diagonal(out, np.nan)

@@ -1,4 +1,4 @@
-"""The table that effective constants show of themselves in a notebook."""
+"""Tables that effective constants and computed blends show of themselves in a notebook."""
 
 from __future__ import annotations
 
@@ -9,9 +9,10 @@ from voxelmat.model.html import table
 from voxelmat.units import number
 
 if TYPE_CHECKING:
+    from voxelmat.model.blend_estimate import BlendEstimate
     from voxelmat.model.effective import EffectiveConstants
 
-__all__ = ["effective_table"]
+__all__ = ["blend_table", "effective_table"]
 
 # g/cm^3 in 1 tonne/mm^3.
 _DENSITY = 1e9
@@ -59,3 +60,32 @@ def effective_table(found: EffectiveConstants) -> str:
         rows.insert(-2, ["Zener's ratio", number(cubic.zener), ""])
     notes = "".join(f"<p>{escape(c)}</p>" for c in found.cautions)
     return table(["", *ORDER], matrix, caption) + table(["constant", "value", "unit"], rows) + notes
+
+
+def _within(held: bool) -> str:
+    return "within" if held else "outside"
+
+
+def blend_table(found: BlendEstimate) -> str:
+    """Moduli by refinement, their limit and the bounds."""
+    rows = [
+        [f"{r} elements a droplet", number(k, 4), number(g, 4), number(100 * d), _within(held)]
+        for r, k, g, d, held in zip(
+            found.refinements, found.bulk, found.shear, found.distance, found.raw_held, strict=True
+        )
+    ]
+    k, g = found.bulk_limit, found.shear_limit
+    rows.append(
+        [
+            "extrapolated",
+            f"{number(k.value, 4)} ± {number(k.uncertainty, 2)}",
+            f"{number(g.value, 4)} ± {number(g.uncertainty, 2)}",
+            "",
+            _within(found.held),
+        ]
+    )
+    for name, n in (("lower bound", 0), ("upper bound", 1)):
+        rows.append([name, number(found.bulk_range[n], 4), number(found.shear_range[n], 4), "", ""])
+    head = ["", "K, MPa", "G, MPa", "from isotropic, %", "Hashin-Shtrikman bounds"]
+    caption = f"{found.placed}: {found.sites}³ droplets, element {found.element}"
+    return table(head, rows, caption) + "".join(f"<p>{escape(c)}</p>" for c in found.cautions)
