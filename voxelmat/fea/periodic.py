@@ -146,12 +146,12 @@ class PeriodicSystem:
             u[d] -= mean[group].reshape(u[d].shape)
         return u
 
-    def _balanced(self, b: Double) -> Double:
+    def _balanced(self, b: Double, scale: float) -> Double:
         """The load on unknowns; `InputError` where it pushes a piece away."""
         folded = b.copy()
         fold(folded, self._axes)
         lost = folded * (1 - self.free)
-        size = float(np.abs(folded).sum())
+        size = max(float(np.abs(folded).sum()), scale)
         if float(np.abs(lost).sum()) > _BALANCE * size:
             raise InputError(
                 "A load acts on empty space or on an island, which reaches its copies in no "
@@ -220,7 +220,7 @@ class PeriodicSystem:
             if field is not None and not (field.shape == self.shape and np.isfinite(field).all()):
                 raise InputError(f"{name} must be finite and of shape {self.shape}.")
         with computing(), crew(b[0].size):
-            force = self._balanced(np.asarray(b, dtype=np.float64))
+            force = self._balanced(np.asarray(b, dtype=np.float64), scale)
             size = float(np.sqrt(dot(force, force)))
             if size <= _NOTHING * scale or size == 0.0:
                 return Solution(u=np.zeros(self.shape), iterations=0, residual=0.0, history=(0.0,))
