@@ -8,9 +8,11 @@ Gradients are no interface: there the droplets of both resins interlock on both 
 
 from __future__ import annotations
 
+import dataclasses
 import math
 from collections.abc import Iterable
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -227,6 +229,15 @@ class InterfaceResult:
         """Size of the shear traction, MPa."""
         along = self.traction - self.normal[:, None] * self.normal_vector
         return np.asarray(np.linalg.norm(along, axis=1))
+
+    def select(self, keep: NDArray[np.bool_]) -> InterfaceResult:
+        """Some of the faces."""
+        chosen: dict[str, Any] = {
+            f.name: value[keep] if isinstance(value, np.ndarray) else value
+            for f in dataclasses.fields(self)
+            for value in (getattr(self, f.name),)
+        }
+        return InterfaceResult(**chosen)
 
     def names(self, face: int) -> tuple[str, str]:
         """The two resins of a face, in ascending order."""

@@ -19,6 +19,7 @@ MEASURES = {
     "stiffness": "N/mm",  # resultant of a load over the mean displacement of its region
     "reaction": "N",  # a support's force along an axis
     "safety factor": "",  # smallest strength over stress in a region
+    "interface safety factor": "",  # smallest bond strength over traction between resins
     "largest strain": "",  # largest principal strain in a region
     "mass": "g",
     "volume": "mm3",  # of one resin, or of all

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import os
 from collections.abc import Mapping
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from pathlib import Path
 
 import numpy as np
@@ -106,7 +106,7 @@ def build(design: Design | str | Path, *, monitor: Monitor = SILENT) -> Built:
         (cautions if event.kind == "caution" else notes).append(event.message)
     part = _part(design, library, assembly)
     part = apply_layout(design, part)
-    resolved = resolve(design, part, monitor=monitor)
+    resolved = replace(resolve(design, part, monitor=monitor), bonds=library.bonds)
     return Built(
         design=design,
         library=library,

@@ -31,6 +31,7 @@ from voxelmat.provenance import Provenance, utc_now
 from voxelmat.workflow.answer import as_dict, exit_code, joined_verdicts
 from voxelmat.workflow.build import Built, build
 from voxelmat.workflow.designing import optimised
+from voxelmat.workflow.interfaces import interface_spots
 from voxelmat.workflow.printed import as_printed
 from voxelmat.workflow.report import write_report
 from voxelmat.workflow.report_data import RunData
@@ -263,6 +264,9 @@ class _Run:
             as_printed=again,
             verdicts=answers,
             safety={name: safety_factors(r) for name, r in results.items()},
+            interfaces={
+                name: interface_spots(r, built.resolved.bonds) for name, r in results.items()
+            },
             optimised=found,
             stack=summarise(stack, estimate(stack)) if stack is not None else None,
             findings=tuple(findings),

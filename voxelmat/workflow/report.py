@@ -17,6 +17,7 @@ from voxelmat.monitor import SILENT, Monitor
 from voxelmat.units import number
 from voxelmat.workflow import report_fields, report_pictures
 from voxelmat.workflow import report_tables as tables
+from voxelmat.workflow.interfaces import spot_rows
 from voxelmat.workflow.report_data import RunData, StackSummary
 from voxelmat.workflow.report_pressure import pressure_picture
 from voxelmat.workflow.report_tables import Table
@@ -178,11 +179,33 @@ def _case(run: RunData, name: str) -> dict[str, Any]:
         "loads": tables.load_table(result.load_case),
         "maps": [pressure_picture(result.part, load) for load in maps],
         "found": tables.found_table(run, name),
+        "interfaces": _interfaces(run, name),
         "displacement": report_fields.displacement_picture(result),
         "stress": report_fields.stress_picture(result),
         "safety": report_fields.safety_picture(result, safety) if safety is not None else None,
         "cautions": result.cautions,
     }
+
+
+def _interfaces(run: RunData, name: str) -> Table | None:
+    """The worst places where two resins meet; None where none do."""
+    spots = run.interfaces.get(name, ())
+    if not spots:
+        return None
+    return Table(
+        head=(
+            "interface",
+            "worst places, mm",
+            "normal, MPa",
+            "shear, MPa",
+            "uncertain by, MPa",
+            "strength used",
+            "remarks",
+        ),
+        rows=spot_rows(spots),
+        numbers=(2, 3, 4, 5),
+        caption="normal traction above 0 pulls the two apart; pressing does not use strength",
+    )
 
 
 def _optimised(run: RunData) -> dict[str, Any]:

@@ -10,6 +10,7 @@ from numpy.typing import NDArray
 
 from voxelmat.model.design_result import DesignResult
 from voxelmat.model.finding import Finding
+from voxelmat.model.interface import InterfaceSpot
 from voxelmat.model.part import Part
 from voxelmat.model.requirement import Verdict
 from voxelmat.model.result import StaticResult
@@ -113,6 +114,8 @@ class RunData:
     verdicts : tuple of Verdict
     safety : mapping of str to ndarray of float32, shape ``grid.shape``
         By load case, strength over stress in each voxel; nan where no strength is known.
+    interfaces : mapping of str to tuple of InterfaceSpot
+        By load case, the worst places where two resins meet.
     optimised : DesignResult or None
     stack : StackSummary or None
     findings : tuple of Finding
@@ -134,6 +137,7 @@ class RunData:
     as_printed: Mapping[str, StaticResult] = field(default_factory=dict)
     verdicts: tuple[Verdict, ...] = ()
     safety: Mapping[str, NDArray[np.float32]] = field(default_factory=dict)
+    interfaces: Mapping[str, tuple[InterfaceSpot, ...]] = field(default_factory=dict)
     optimised: DesignResult | None = None
     stack: StackSummary | None = None
     findings: tuple[Finding, ...] = ()

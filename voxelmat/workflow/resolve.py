@@ -11,6 +11,7 @@ from numpy.typing import NDArray
 from voxelmat.errors import InputError
 from voxelmat.io.tables import read_deflection_map, read_pressure_map
 from voxelmat.model.design import CaseEntry, Design, LoadEntry, SupportEntry, TargetEntry
+from voxelmat.model.interface import Bond
 from voxelmat.model.loadcase import (
     BodyForce,
     Force,
@@ -71,6 +72,8 @@ class Resolved:
     requirements : tuple of Requirement
     maps : mapping of (str, int) to LaidMap
         By load case and number of the load in it: what of each pressure map arrives.
+    bonds : tuple of Bond
+        Strengths of interfaces between resins.
     notes, cautions : tuple of str
     """
 
@@ -79,6 +82,7 @@ class Resolved:
     targets: Mapping[str, Target]
     requirements: tuple[Requirement, ...]
     maps: Mapping[tuple[str, int], LaidMap] = field(default_factory=dict)
+    bonds: tuple[Bond, ...] = ()
     notes: tuple[str, ...] = ()
     cautions: tuple[str, ...] = ()
 

@@ -24,6 +24,7 @@ from voxelmat.workflow.doubts import (
     place_words,
     size_doubts,
 )
+from voxelmat.workflow.interfaces import interface_safety
 from voxelmat.workflow.resolve import Resolved
 from voxelmat.workflow.spread import Spread, driven_by, spread_of
 
@@ -108,6 +109,7 @@ def _measure(
         "stiffness": _stiffness,
         "reaction": _reaction,
         "safety factor": _safety,
+        "interface safety factor": _interface,
         "largest strain": _strain,
         "deflection error": _deflection,
     }
@@ -267,6 +269,19 @@ def _safety(
     band = (value * low / spread.stress, value * high * spread.stress)
     grounds = (f"smallest in '{resin}' at {place_words(place)}",)
     return _Measured(value=value, band=band, doubts=tuple(doubts), grounds=grounds)
+
+
+def _interface(
+    requirement: Requirement, resolved: Resolved, result: StaticResult, spread: Spread
+) -> _Measured:
+    """Smallest bond strength over traction between resins in a region."""
+    region = resolved.regions[requirement.region] if requirement.region is not None else None
+    found = interface_safety(result, resolved.bonds, region)
+    doubts = found.doubts
+    if driven_by(result) != "force":
+        doubts += _unscaled(spread, found.value, _MOVED).doubts
+    band = (found.low / spread.stress, found.high * spread.stress)
+    return _Measured(value=found.value, band=band, doubts=doubts, grounds=found.grounds)
 
 
 def _strain(
