@@ -96,7 +96,7 @@ def _rest(grid: _Grid, force: Double, share: Double, omega: Double) -> Double:
     for shape, p in zip(grid.rigid, _projected(grid.rigid, force), strict=True):
         grid.mass.apply(np.ascontiguousarray(shape), inertia)
         force -= p * inertia
-    u = grid.system.solve(force, tol=1e-9).u
+    u = grid.system.solve(force).u
     if len(grid.rigid):
         grid.mass.apply(u, inertia)
         for shape, p in zip(grid.rigid, _projected(grid.rigid, inertia), strict=True):
