@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 import scipy.ndimage
@@ -168,7 +168,7 @@ def find_pieces(solid: Bools, held: Bools, grid: VoxelGrid) -> list[Piece]:
 
 
 def check_held(
-    solid: Bools, held: Bools, loaded: Bools, grid: VoxelGrid
+    solid: Bools, held: Bools, loaded: Bools, grid: VoxelGrid, *, everywhere: bool = False
 ) -> tuple[Bools, list[str]]:
     """Find pieces that are not held.
 
@@ -181,6 +181,9 @@ def check_held(
         Where a force or a displacement other than 0 acts.
     grid : VoxelGrid
         For places in mm.
+    everywhere : bool
+        Something acts on all voxels (weight, a temperature): the largest piece then counts as
+        loaded, and small loose ones still do not.
 
     Returns
     -------
@@ -196,6 +199,9 @@ def check_held(
     labels, pieces = _pieces(solid, held, loaded, grid)
     if not pieces:
         raise InputError("The part is empty: no voxel holds material.")
+    if everywhere:
+        largest = max(range(len(pieces)), key=lambda n: pieces[n].voxels)
+        pieces[largest] = replace(pieces[largest], loaded=True)
     unheld = [p for p in pieces if p.missing and p.loaded]
     if unheld:
         worst = max(unheld, key=lambda p: p.voxels)

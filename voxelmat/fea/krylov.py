@@ -4,16 +4,17 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from dataclasses import dataclass, field
+from typing import Protocol
 
 import numpy as np
 from numpy.typing import NDArray
 
 from voxelmat.fea.multigrid import Preconditioner
-from voxelmat.fea.operator import Stiffness, dot, planes
+from voxelmat.fea.operator import dot, planes
 from voxelmat.kernels.vector import cg_advance, cg_direction
 from voxelmat.monitor import Monitor
 
-__all__ = ["Iteration", "conjugate_gradients"]
+__all__ = ["Iteration", "Operator", "conjugate_gradients"]
 
 Double = NDArray[np.float64]
 
@@ -22,6 +23,13 @@ Double = NDArray[np.float64]
 _PATIENCE, _PROGRESS = 400, 0.7
 # Times that the recursive residual may be replaced by the true one before we call it a stall.
 _RESTARTS = 4
+
+
+class Operator(Protocol):
+    """What conjugate gradients multiply by."""
+
+    def apply(self, u: Double, y: Double) -> None:
+        """Write K u to y."""
 
 
 @dataclass
@@ -48,7 +56,7 @@ class Iteration:
     state: str = "limit"
 
 
-def _true_residual(K: Stiffness, b: Double, x: Double, free: NDArray[np.uint8], r: Double) -> float:
+def _true_residual(K: Operator, b: Double, x: Double, free: NDArray[np.uint8], r: Double) -> float:
     """Write b - K x on free unknowns to r; return its norm."""
     K.apply(x, r)
     np.subtract(b, r, out=r)
@@ -57,7 +65,7 @@ def _true_residual(K: Stiffness, b: Double, x: Double, free: NDArray[np.uint8], 
 
 
 def conjugate_gradients(
-    K: Stiffness,
+    K: Operator,
     M: Preconditioner,
     b: Double,
     free: NDArray[np.uint8],
@@ -73,7 +81,7 @@ def conjugate_gradients(
 
     Parameters
     ----------
-    K, M : Stiffness, Preconditioner
+    K, M : Operator, Preconditioner
     b : ndarray of float64
         Right-hand side.
     free : ndarray of uint8

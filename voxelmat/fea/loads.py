@@ -12,16 +12,19 @@ from voxelmat.errors import InputError
 from voxelmat.model.loadcase import (
     BodyForce,
     Force,
+    Foundation,
     GroundSpring,
+    InitialStrain,
     Load,
     Pressure,
     PressureMap,
+    Temperature,
 )
 from voxelmat.model.part import Part
 from voxelmat.model.region import Region, parse_side
 from voxelmat.model.surface import Faces, visible_from
 
-__all__ = ["NodalLoad", "describe", "nodal_load", "spread"]
+__all__ = ["NodalLoad", "corners_of_faces", "describe", "nodal_load", "shared", "spread"]
 
 Double = NDArray[np.float64]
 
@@ -70,6 +73,9 @@ def describe(load: Load, number: int) -> str:
         PressureMap: "pressure map",
         BodyForce: "body force",
         GroundSpring: "spring",
+        Foundation: "foundation",
+        Temperature: "temperature",
+        InitialStrain: "initial strain",
     }[type(load)]
     region = load.region.name if load.region is not None else "whole part"
     return f"load {number}, {kind} on '{region}'"
@@ -90,7 +96,7 @@ def _corners_of_voxels(part: Part, voxel: NDArray[np.intp]) -> NDArray[np.intp]:
     )
 
 
-def _corners_of_faces(part: Part, faces: Faces) -> NDArray[np.intp]:
+def corners_of_faces(part: Part, faces: Faces) -> NDArray[np.intp]:
     """Flat nodes of faces, shape (n, 4)."""
     rows = np.arange(len(faces))
     across = np.array([[1, 2], [0, 2], [0, 1]])[faces.axis]
@@ -104,7 +110,7 @@ def _corners_of_faces(part: Part, faces: Faces) -> NDArray[np.intp]:
     return np.stack(found, axis=1)
 
 
-def _shared(node: NDArray[np.intp], value: Double) -> tuple[NDArray[np.intp], Double]:
+def shared(node: NDArray[np.intp], value: Double) -> tuple[NDArray[np.intp], Double]:
     """Give each of m corners 1 / m of the value of its face or voxel; merge equal nodes."""
     corners = node.shape[1]
     weight = np.repeat(value, corners, axis=0) / corners
@@ -135,12 +141,12 @@ def spread(part: Part, region: Region, name: str) -> tuple[NDArray[np.intp], Dou
     faces = region.faces(part)
     if len(faces):
         area = faces.true_area
-        node, share = _shared(_corners_of_faces(part, faces), area if area.sum() else faces.area)
+        node, share = shared(corners_of_faces(part, faces), area if area.sum() else faces.area)
         return node, share / share.sum()
     voxel = np.argwhere(region.voxels(part))
     if len(voxel):
         fill = part.fill[tuple(voxel.T)].astype(np.float64)
-        node, share = _shared(_corners_of_voxels(part, voxel), fill)
+        node, share = shared(_corners_of_voxels(part, voxel), fill)
         return node, share / share.sum()
     node = np.argwhere(region.nodes(part))
     if len(node):
@@ -161,7 +167,7 @@ def _pressure(part: Part, load: Pressure, name: str) -> NodalLoad:
             f"the part, so a pressure there would be lost. Move or enlarge the region."
         )
     # Vector areas of a staircase sum like those of the true surface.
-    node, force = _shared(_corners_of_faces(part, faces), -load.pressure * faces.vector_area)
+    node, force = shared(corners_of_faces(part, faces), -load.pressure * faces.vector_area)
     return NodalLoad(name=name, node=node, force=force)
 
 
@@ -209,7 +215,7 @@ def _pressure_map(part: Part, load: PressureMap, name: str) -> NodalLoad:
             f"{name[0].upper()}{name[1:]}: nothing of region '{load.region.name}' can be seen from "
             f"{load.side}. Check the region and the side."
         )
-    node, force = _shared(_corners_of_faces(part, faces), _map_traction(part, load, faces))
+    node, force = shared(corners_of_faces(part, faces), _map_traction(part, load, faces))
     pressed = -side * float(force[:, axis].sum())
     if not np.any(force):
         raise InputError(
@@ -239,13 +245,13 @@ def _body_force(part: Part, load: BodyForce, name: str) -> NodalLoad:
     at = tuple(voxel.T)
     density = part.palette_density()[part.labels[at]]
     mass = density * part.fill[at].astype(np.float64) * part.grid.voxel_volume
-    node, share = _shared(_corners_of_voxels(part, voxel), mass)
+    node, share = shared(_corners_of_voxels(part, voxel), mass)
     force = share[:, None] * np.asarray(load.acceleration)
     return NodalLoad(name=name, node=node, force=force, follows_mass=True)
 
 
 def nodal_load(part: Part, load: Load, name: str) -> NodalLoad:
-    """Consistent nodal forces of a load (not of a spring).
+    """Consistent nodal forces of a force, a pressure, a pressure map or a body force.
 
     Raises
     ------

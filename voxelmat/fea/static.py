@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 from dataclasses import replace
-from typing import NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
@@ -13,6 +12,8 @@ from voxelmat.fea.cautions import film_caution, record_cautions, size_cautions
 from voxelmat.fea.element import DEFAULT
 from voxelmat.fea.held import check_held
 from voxelmat.fea.operator import touched_nodes
+from voxelmat.fea.plate_held import check_plates_held
+from voxelmat.fea.reactions import reactions
 from voxelmat.fea.sensitivity import stiffness_forms, strain
 from voxelmat.fea.stress import largest_principal_strain, largest_rotation, stress
 from voxelmat.fea.system import LinearSystem, Solution
@@ -26,20 +27,9 @@ from voxelmat.provenance import Provenance, utc_now
 __all__ = ["solve"]
 
 Double = NDArray[np.float64]
-Vector = tuple[float, float, float]
 
-# Applied forces and reactions that miss each other by more than this get a caution.
+# Applied forces and reactions, or their moments, that miss each other by more get a caution.
 _BALANCE = 1e-4
-
-
-class _Forces(NamedTuple):
-    reactions: dict[str, Vector]
-    applied: Vector
-    balance: float
-
-
-def _vector(v: Double) -> Vector:
-    return float(v[0]), float(v[1]), float(v[2])
 
 
 def _without_loose(acts: Assembled, touched: NDArray[np.bool_]) -> Assembled:
@@ -58,30 +48,14 @@ def _without_loose(acts: Assembled, touched: NDArray[np.bool_]) -> Assembled:
 
 
 def _loaded(acts: Assembled) -> NDArray[np.bool_]:
-    """Nodes where a load other than a body force, or a given displacement, acts."""
+    """Nodes where a load other than a body force, a plate or a given displacement acts."""
     out = np.any(acts.held & (acts.prescribed != 0), axis=0)
+    if acts.plates is not None:
+        out |= acts.plates.mask
     for load in acts.loads:
         if not load.follows_mass:
             out.ravel()[load.node[np.any(load.force != 0, axis=1)]] = True
     return np.asarray(out)
-
-
-def _reactions(system: LinearSystem, acts: Assembled, u: Double) -> _Forces:
-    """Force of each support and spring on the part, and how well all forces balance."""
-    pull = system.apply(u) - acts.force
-    found: dict[str, Vector] = {}
-    for number, name in enumerate(acts.supports):
-        mine = acts.held & (acts.owner == number)
-        found[name] = _vector(np.array([pull[d][mine[d]].sum() for d in range(3)]))
-    for name, node, stiffness in acts.ground:
-        moved = u.reshape(3, -1)[:, node].T
-        found[name] = _vector(-(stiffness * moved).sum(axis=0))
-    applied = np.sum([load.resultant for load in acts.loads] or [(0.0, 0.0, 0.0)], axis=0)
-    total = np.sum(list(found.values()) or [(0.0, 0.0, 0.0)], axis=0)
-    sizes = [np.linalg.norm(v) for v in found.values()]
-    sizes += [np.linalg.norm(load.resultant) for load in acts.loads]
-    scale = max(float(max(sizes, default=0.0)), 1e-300)
-    return _Forces(found, _vector(applied), float(np.linalg.norm(applied + total) / scale))
 
 
 def _mean_displacement(acts: Assembled, u: Double) -> dict[str, float]:
@@ -101,6 +75,18 @@ def _first_guess(warm: StaticResult | None, shape: tuple[int, ...]) -> Double | 
     return np.ascontiguousarray(warm.displacement.T)
 
 
+def _keep_pieces(
+    part: Part, case: LoadCase, acts: Assembled, mu: Double
+) -> tuple[NDArray[np.bool_], list[str]]:
+    """Voxels of the pieces that are held, and cautions; see `check_held`."""
+    anchored = acts.held if acts.springs is None else acts.held | (acts.springs > 0)
+    if acts.plates is not None:
+        check_plates_held(mu > 0, anchored, acts.plates, part.grid)
+        anchored = anchored | acts.plates.mask
+    everywhere = case.strains or any(load.follows_mass for load in acts.loads)
+    return check_held(mu > 0, anchored, _loaded(acts), part.grid, everywhere=everywhere)
+
+
 def _result(
     part: Part,
     case: LoadCase,
@@ -108,19 +94,23 @@ def _result(
     system: LinearSystem,
     acts: Assembled,
     solution: Solution,
+    force: Double,
     lam: Double,
     mu: Double,
     cautions: list[str],
     started: str,
 ) -> StaticResult:
     u, grid = solution.u, part.grid
-    forces = _reactions(system, acts, u)
+    forces = reactions(grid, case, acts, u, system.apply(u), force)
     dlam, dmu = stiffness_forms(u, u, lam, mu, grid.spacing, element)
     # Every coefficient of the element is of first degree in (lam, mu) together (Euler).
     energy = 0.5 * (lam * dlam + mu * dmu)
     fill = np.where(mu > 0, part.fill.T, 1.0).astype(np.float64)
     e = strain(u, grid.spacing) * (mu > 0)
-    s = stress(e, lam / fill, mu / fill)
+    free = acts.free
+    if free is not None:
+        energy += free.energy(u, lam, mu, grid.spacing, element)
+    s = stress(e if free is None else (e - free.mean) * (mu > 0), lam / fill, mu / fill)
     strains = e.astype(np.float32).T
     largest = largest_principal_strain(part, strains)
     rotation = largest_rotation(part, u)
@@ -129,6 +119,8 @@ def _result(
     notes += film_caution(part, lam, mu) + record_cautions(part, case)
     if forces.balance > _BALANCE:
         notes.append(f"Loads and reactions miss each other by {forces.balance:.1e} of the load.")
+    if forces.moment_balance > _BALANCE:
+        notes.append(f"Moments miss each other by {forces.moment_balance:.1e} of the largest.")
     return StaticResult(
         part=part,
         load_case=case,
@@ -139,7 +131,11 @@ def _result(
         energy_density=(energy / (fill * grid.voxel_volume)).astype(np.float32).T,
         applied=forces.applied,
         reactions=forces.reactions,
+        reaction_moments=forces.moments,
         balance=forces.balance,
+        moment_balance=forces.moment_balance,
+        plates=forces.plates,
+        free_strain=None if free is None else (free.mean * (mu > 0)).astype(np.float32).T,
         resultants={load.name: load.resultant for load in acts.loads},
         load_displacement=_mean_displacement(acts, u),
         largest_strain=largest,
@@ -193,33 +189,39 @@ def solve(
     Raises
     ------
     InputError
-        A region without material, a part or a loaded piece that is not held (the message names
-        the motions and the place), nothing that acts.
+        A region without material, a part, a plate or a loaded piece that is not held (the message
+        names the motions and the place), nothing that acts.
     ConvergenceError
         With the residual history.
     """
     started = utc_now()
     monitor.report("assembling loads", done=0, total=0)
     lam, mu = moduli(part)
-    acts = assemble(part, load_case)
-    anchored = acts.held if acts.springs is None else acts.held | (acts.springs > 0)
-    keep, cautions = check_held(mu > 0, anchored, _loaded(acts), part.grid)
+    acts = assemble(part, load_case, everything=True)
+    keep, cautions = _keep_pieces(part, load_case, acts, mu)
     lam, mu = lam * keep, mu * keep
     acts = _without_loose(acts, touched_nodes(keep))
+    force = acts.force
+    if acts.free is not None:
+        force = force + acts.free.forces(lam, mu, part.grid.spacing, element)
     system = LinearSystem(
         lam,
         mu,
         part.grid.spacing,
         acts.held,
         springs=acts.springs,
+        beds=acts.beds,
+        plates=acts.plates,
         element=element,
         monitor=monitor,
     )
     solution = system.solve(
-        acts.force,
+        force,
         x0=_first_guess(warm, system.shape),
         prescribed=acts.prescribed,
         tol=tol,
         maxiter=maxiter,
     )
-    return _result(part, load_case, element, system, acts, solution, lam, mu, cautions, started)
+    return _result(
+        part, load_case, element, system, acts, solution, force, lam, mu, cautions, started
+    )

@@ -8,10 +8,13 @@ import numpy as np
 from numpy.typing import NDArray
 
 from voxelmat.errors import ConvergenceError, InputError
+from voxelmat.fea.bed import Bed, Coupled
 from voxelmat.fea.element import DEFAULT, Spacing
-from voxelmat.fea.krylov import Iteration, conjugate_gradients
+from voxelmat.fea.krylov import Iteration, Operator, conjugate_gradients
 from voxelmat.fea.multigrid import METHODS, Grid, Preconditioner, make_preconditioner
 from voxelmat.fea.operator import Stiffness, check_moduli, dot, touched_nodes
+from voxelmat.fea.plate_solver import PlateOperator, PlatePreconditioner
+from voxelmat.fea.plates import PlateSet
 from voxelmat.kernels.threads import crew
 from voxelmat.monitor import SILENT, Monitor, computing
 
@@ -105,6 +108,10 @@ class LinearSystem:
         Where the displacement along x, y, z is given (0 unless `solve` is told otherwise).
     springs : ndarray of float64, shape of `fixed`, optional
         Springs to ground, N/mm.
+    beds : tuple of Bed
+        Foundations whose diagonals are among the springs and whose couplings act beside them.
+    plates : PlateSet, optional
+        Nodes, none of them fixed, that move rigidly.
     element : str
         See `voxelmat.fea.element`.
     coarse : str
@@ -125,6 +132,8 @@ class LinearSystem:
         fixed: NDArray[np.bool_],
         *,
         springs: Double | None = None,
+        beds: tuple[Bed, ...] = (),
+        plates: PlateSet | None = None,
         element: str = DEFAULT,
         coarse: str = "auto",
         monitor: Monitor = SILENT,
@@ -145,9 +154,16 @@ class LinearSystem:
         self._monitor = monitor
         touched = touched_nodes(mu > 0)
         held = fixed & touched
-        self._grid = Grid(lam, mu, spacing, element, held, touched, springs)
         self.free = (~held & touched).astype(np.uint8)
-        self.operator = Stiffness(lam, mu, spacing, element, springs)
+        if plates is not None:
+            if np.any(held & plates.mask) or np.any(plates.mask & ~touched):
+                raise InputError("A node of a plate is fixed too, or touches no material.")
+            held = held | plates.mask  # the preconditioner sees plates as held
+        self._plates = plates
+        self._grid = Grid(lam, mu, spacing, element, held, touched, springs)
+        stiffness = Stiffness(lam, mu, spacing, element, springs)
+        leaning = tuple(bed for bed in beds if bed.leans)
+        self.operator = Coupled(stiffness, leaning) if leaning else stiffness
         self._automatic = coarse == "auto"
         self._method = first_method(lam, mu, spacing, held) if self._automatic else coarse
         self._preconditioner: Preconditioner | None = None
@@ -177,7 +193,12 @@ class LinearSystem:
         if self._preconditioner is None or self._preconditioner.method != self._method:
             self._preconditioner = None  # let go of the old one before the new one is built
             self._monitor.report("preparing the solver", done=0, total=0, method=self._method)
-            self._preconditioner = make_preconditioner(self._grid, self._method)
+            inner = make_preconditioner(self._grid, self._method)
+            self._preconditioner = inner
+            if self._plates is not None:
+                self._preconditioner = PlatePreconditioner(
+                    inner, self.operator, self._plates, self.free, self._monitor
+                )
         return self._preconditioner
 
     def _start(self, x0: Double | None, prescribed: Double | None) -> tuple[Double, Double]:
@@ -238,12 +259,17 @@ class LinearSystem:
             raise InputError(f"The load must be finite and of shape {self.shape}; got {b.shape}.")
         with computing(), crew(b[0].size):
             x, given = self._start(x0, prescribed)
+            if self._plates is not None:
+                return self._solve_with_plates(self._plates, b, x, given, tol, maxiter)
             norm = self._size(b, None if prescribed is None else given)
             if norm == 0.0:
                 return Solution(u=given, iterations=0, residual=0.0, history=(0.0,))
             run = self._iterate(
                 np.ascontiguousarray(b, dtype=np.float64), Iteration(x), norm, tol, maxiter
             )
+        return self._finished(run, tol)
+
+    def _finished(self, run: Iteration, tol: float) -> Solution:
         if run.state != "converged":
             raise ConvergenceError(self._complaint(run, tol), run.history)
         return Solution(
@@ -253,6 +279,23 @@ class LinearSystem:
             history=tuple(run.history),
         )
 
+    def _solve_with_plates(
+        self, plates: PlateSet, b: Double, x: Double, given: Double, tol: float, maxiter: int
+    ) -> Solution:
+        """Solve for what comes on top of the given motions, in the space that plates allow."""
+        given = given + plates.given()
+        force = (b - self.apply(given)) * self.free
+        plates.project(force)
+        norm = float(np.sqrt(dot(force, force)))
+        if norm == 0.0:
+            return Solution(u=given, iterations=0, residual=0.0, history=(0.0,))
+        start = (x - given) * self.free if np.any(x) else np.zeros(self.shape)
+        plates.project(start)
+        operator = PlateOperator(self.operator, plates)
+        run = self._iterate(force, Iteration(start), norm, tol, maxiter, operator)
+        run.x += given
+        return self._finished(run, tol)
+
     def _next_method(self) -> str | None:
         """What the automatic choice goes over to when the present method is too slow."""
         if not self._automatic:
@@ -261,14 +304,20 @@ class LinearSystem:
         return {"avg2": "gal4b", "gal4b": "direct" if small else None}.get(self._method)
 
     def _iterate(
-        self, force: Double, run: Iteration, norm: float, tol: float, maxiter: int
+        self,
+        force: Double,
+        run: Iteration,
+        norm: float,
+        tol: float,
+        maxiter: int,
+        operator: Operator | None = None,
     ) -> Iteration:
         while True:
             following = self._next_method()
             cheap = following is not None and self._method == "avg2"
             patience = run.iterations + (_CHEAP_LIMIT if cheap else _DEAR_LIMIT)
             conjugate_gradients(
-                self.operator,
+                self.operator if operator is None else operator,
                 self._ready(),
                 force,
                 self.free,

@@ -10,17 +10,23 @@ import numpy as np
 from numpy.typing import NDArray
 
 from voxelmat.errors import InputError
+from voxelmat.model.freestrain import InitialStrain, Temperature
+from voxelmat.model.plate import Plate
 from voxelmat.model.region import Region, parse_side
 
 __all__ = [
     "BodyForce",
     "Force",
+    "Foundation",
     "GroundSpring",
+    "InitialStrain",
     "Load",
     "LoadCase",
+    "Plate",
     "Pressure",
     "PressureMap",
     "Support",
+    "Temperature",
 ]
 
 Vector = tuple[float, float, float]
@@ -41,16 +47,32 @@ class Support:
     displacement : tuple of (float or None)
         Along x, y, z in mm; None leaves that direction free. ``(0, 0, 0)`` is fixed,
         ``(None, None, 0)`` slides in x and y, other numbers are prescribed.
+    rotation : tuple of float
+        Small rotation vector, radians, added to the displacement in the directions held: nodes
+        at r move by ``displacement + rotation x (r - about)``.
+    about : tuple of float
+        The point that the rotation turns about, mm; the reaction moment counts about it.
     """
 
     region: Region
     displacement: tuple[float | None, float | None, float | None] = (0.0, 0.0, 0.0)
+    rotation: Vector = (0.0, 0.0, 0.0)
+    about: Vector = (0.0, 0.0, 0.0)
 
     def __post_init__(self) -> None:
         given = tuple(d for d in self.displacement if d is not None)
         if not given:
             raise InputError(f"The support on '{self.region.name}' holds no direction at all.")
         _finite(given, f"The displacement of the support on '{self.region.name}' (mm)")
+        _finite(
+            (*self.rotation, *self.about),
+            f"The rotation (rad) and its centre (mm) of the support on '{self.region.name}'",
+        )
+
+    @property
+    def moves(self) -> bool:
+        """Whether it prescribes a motion other than 0."""
+        return any(d not in (None, 0.0) for d in self.displacement) or any(self.rotation)
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -215,7 +237,45 @@ class GroundSpring:
             )
 
 
-Load = Force | Pressure | PressureMap | BodyForce | GroundSpring
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Foundation:
+    """An elastic bed under the surface of a region: what it pushes back with, a depth and an area.
+
+    Each point of the surface stands on a spring of its own, along the surface's normal or in all
+    directions, by the true area of the surface, not that of its steps (E. Winkler 1867, from
+    memory). It pulls as well as it pushes: it is no contact.
+
+    Attributes
+    ----------
+    region : Region
+    stiffness : float
+        N/mm of force by mm^2 of surface: N/mm^3 (> 0).
+    acts : str
+        ``"normal"``: along the true normal, sliding freely; ``"all"``: the same in any direction.
+    """
+
+    region: Region
+    stiffness: float
+    acts: Literal["normal", "all"] = "normal"
+
+    def __post_init__(self) -> None:
+        name = f"The foundation under '{self.region.name}'"
+        if not (math.isfinite(self.stiffness) and self.stiffness > 0):
+            raise InputError(f"{name} needs a stiffness above 0 N/mm^3; got {self.stiffness}.")
+        if self.acts not in ("normal", "all"):
+            raise InputError(f"{name} acts 'normal' or 'all'; got {self.acts!r}.")
+
+
+Load = (
+    Force
+    | Pressure
+    | PressureMap
+    | BodyForce
+    | GroundSpring
+    | Foundation
+    | Temperature
+    | InitialStrain
+)
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -227,6 +287,8 @@ class LoadCase:
     name : str
     supports : tuple of Support
     loads : tuple of Load
+    plates : tuple of Plate
+        Regions that move as one body each.
     duration_s, temperature_degC, cycles : float, float, int
         Compared with the conditions of each material's record.
     weight : float
@@ -240,11 +302,20 @@ class LoadCase:
     temperature_degC: float = 23.0
     cycles: int = 1
     weight: float = 1.0
+    plates: tuple[Plate, ...] = ()
 
     def __post_init__(self) -> None:
+        names = [p.name for p in self.plates]
+        if len(set(names)) != len(names):
+            raise InputError(f"Load case '{self.name}': plates need different names; got {names}.")
         _finite((self.duration_s, self.temperature_degC, self.weight), f"Load case '{self.name}'")
         if self.duration_s <= 0 or self.cycles < 1 or self.weight <= 0:
             raise InputError(
                 f"Load case '{self.name}' needs duration > 0 s, cycles >= 1 and weight > 0; got "
                 f"{self.duration_s} s, {self.cycles}, {self.weight}."
             )
+
+    @property
+    def strains(self) -> bool:
+        """Whether something in it would strain the part without any force."""
+        return any(isinstance(load, Temperature | InitialStrain) for load in self.loads)

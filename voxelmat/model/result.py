@@ -11,6 +11,7 @@ from numpy.typing import NDArray
 from voxelmat.errors import InputError
 from voxelmat.model.loadcase import LoadCase
 from voxelmat.model.part import Part
+from voxelmat.model.plate import PlateMotion
 from voxelmat.model.region import Region
 from voxelmat.provenance import Provenance
 
@@ -54,6 +55,15 @@ class StaticResult:
         Support number and region name to force on the part, N.
     balance : float
         Size of applied plus reactions over the size of what was applied: the check on both.
+    reaction_moments : mapping
+        Same keys as `reactions`: moment on the part, N mm; of a support about its `about`, of a
+        plate about its reference point, of springs and foundations about the origin.
+    moment_balance : float
+        As `balance`, for moments about the middle of the grid.
+    plates : mapping of str to PlateMotion
+        How each plate moved and pushes.
+    free_strain : ndarray of float32, shape (nx, ny, nz, 6), or None
+        Thermal and initial strain, which `strain` includes and `stress` does not.
     resultants : mapping
         Load number and region name to its resultant force, N.
     load_displacement : mapping
@@ -86,6 +96,10 @@ class StaticResult:
     history: tuple[float, ...] = ()
     element: str = "icmb"
     cautions: tuple[str, ...] = ()
+    reaction_moments: Mapping[str, tuple[float, float, float]] = field(default_factory=dict)
+    moment_balance: float = 0.0
+    plates: Mapping[str, PlateMotion] = field(default_factory=dict)
+    free_strain: NDArray[np.float32] | None = None
     provenance: Provenance = field(default_factory=Provenance)
 
     # ------------------------------------------------------------------ reading it out
