@@ -1,0 +1,344 @@
+"""A rigid body pressed on a part: punches and balls with formulas, and what must always hold."""
+
+import numpy as np
+import pytest
+from hypothesis import given, settings
+from hypothesis import strategies as st
+
+from voxelmat.errors import ConvergenceError, InputError
+from voxelmat.fea.active_set import Pressed
+from voxelmat.fea.contact import contact, press
+from voxelmat.fea.contact_surface import touch_surface
+from voxelmat.fea.static import solve
+from voxelmat.model.blend import EMPTY, Blend
+from voxelmat.model.grid import VoxelGrid
+from voxelmat.model.indenter import CylinderIndenter, FlatPunch, MeshIndenter, SphereIndenter
+from voxelmat.model.loadcase import BodyForce, GroundSpring, LoadCase, Support
+from voxelmat.model.mesh import TriangleMesh
+from voxelmat.model.part import Part
+from voxelmat.model.region import FaceRegion
+
+FLOOR = Support(region=FaceRegion(name="floor", side="z-"))
+
+
+def slides(*sides):
+    """Supports that hold nothing but the direction of each side."""
+    return tuple(
+        Support(
+            region=FaceRegion(name=side, side=side),
+            displacement=tuple(0.0 if a == side[0] else None for a in "xyz"),
+        )
+        for side in sides
+    )
+
+
+def quarter(resin, a, size, nu):
+    """A quarter of a block round the z axis, top at 0; `a` voxels and `size` times 1 mm wide."""
+    n, h = a * size, 1.0 / a
+    grid = VoxelGrid(shape=(n, n, n), spacing=(h, h, h), origin=(0.0, 0.0, -n * h))
+    part = Part.uniform(grid, resin(E=1.0, nu=nu))
+    supports = (FLOOR, *slides("x-", "y-", "x+", "y+"))
+    return part, LoadCase(name="press", supports=supports)
+
+
+def punch_stiffness(resin, a, size, nu):
+    """F / d over that of the half-space, for the radius that the nodes in contact have."""
+    part, case = quarter(resin, a, size, nu)
+    found = contact(part, case, FlatPunch(radius=1.0), depth_mm=0.01)
+    assert found.changes == (0,)
+    radius = np.sqrt(4 * found.contact_area / np.pi)
+    assert radius == pytest.approx(1.0, abs=0.25 / a)
+    assert found.tangent == pytest.approx(found.secant, rel=1e-6)
+    # rigid circular punch F/d = 2 a E / (1 - nu^2) (formula: 2.1978 at nu .3, 2.6667 at .5)
+    return 4 * found.force / found.depth / (2 * radius / (1 - nu**2))
+
+
+def half_space(resin, nu, coarse, fine):
+    """Extrapolated to a large block and small voxels.
+
+    The far field of any indenter is that of a point force, so a block of size L takes a share
+    ~ 1/L from the compliance; the singular pressure at the rim is seen to first order in h.
+    """
+    rough = punch_stiffness(resin, coarse, 5, nu)
+    wide = punch_stiffness(resin, coarse, 10, nu)
+    fine_one = punch_stiffness(resin, fine, 5, nu)
+    large = 1.0 / (2.0 / wide - 1.0 / rough)
+    small = (fine * fine_one - coarse * rough) / (fine - coarse)
+    return large * small / rough
+
+
+def test_rigid_punch(resin):
+    # both corrections at work are 10 % here, so a twentieth is what is left to trust
+    assert half_space(resin, 0.3, 4, 6) == pytest.approx(1.0, abs=0.05)
+
+
+@pytest.mark.slow
+@pytest.mark.parametrize("nu", [0.3, 0.4999])
+def test_rigid_punch_on_finer_grids(resin, nu):
+    assert half_space(resin, nu, 6, 10) == pytest.approx(1.0, abs=0.05)
+
+
+def test_ball_after_hertz(resin):
+    # F = 4/3 E* sqrt(R) d^1.5 (Hertz 1882, formula). A block of size L lacks the far movement
+    # c F / L of the half-space: (F / K)^(2/3) = d + c F / L, so two sizes give K and c.
+    radius, depth, nu = 10.0, 0.1, 0.3
+    hertz = 4 / 3 / (1 - nu**2) * np.sqrt(radius) * depth**1.5
+    ratio = []
+    for size in (5, 10):
+        part, case = quarter(resin, 4, size, nu)
+        found = contact(part, case, SphereIndenter(radius=radius), depth_mm=depth)
+        ratio.append(4 * found.force / hertz)
+        assert found.touch == pytest.approx(0.0, abs=1e-12)
+        # log-slope of the curve is 1.5, a little more where the block is small
+        assert 1.4 < found.tangent / found.secant < 1.8
+    rows = [[r ** (2 / 3), -r / size] for r, size in zip(ratio, (5, 10), strict=True)]
+    x, _ = np.linalg.solve(rows, [1.0, 1.0])
+    assert x**-1.5 == pytest.approx(1.0, abs=0.03)
+    # a = sqrt(R d) holds 4 voxels: their half-voxel rim counts for up to 2 * .5 / 4
+    assert 4 * found.contact_area / (np.pi * radius * depth) == pytest.approx(1.0, abs=0.25)
+    # p0 = 3 F / (2 pi a^2)
+    peak = 1.5 * 4 * found.force / (np.pi * radius * depth)
+    assert found.peak_pressure.value == pytest.approx(peak, rel=0.15)
+    assert found.peak_pressure.place_mm[2] == 0.0
+
+
+@pytest.mark.slow
+def test_ball_on_a_finer_grid(resin):
+    radius, depth, nu = 10.0, 0.1, 0.3
+    hertz = 4 / 3 / (1 - nu**2) * np.sqrt(radius) * depth**1.5
+    ratio = []
+    for size in (5, 10):
+        part, case = quarter(resin, 8, size, nu)
+        found = contact(part, case, SphereIndenter(radius=radius), depth_mm=depth)
+        ratio.append(4 * found.force / hertz)
+    rows = [[r ** (2 / 3), -r / size] for r, size in zip(ratio, (5, 10), strict=True)]
+    x, _ = np.linalg.solve(rows, [1.0, 1.0])
+    assert x**-1.5 == pytest.approx(1.0, abs=0.02)
+    assert 4 * found.contact_area / (np.pi * radius * depth) == pytest.approx(1.0, abs=0.125)
+
+
+def test_plane_on_a_confined_column_is_the_linear_answer(grid, resin):
+    part = Part.uniform(grid(3, 4, 5, spacing=(1.0, 0.5, 0.8)), resin(E=10.0, nu=0.3))
+    supports = slides("x-", "x+", "y-", "y+", "z-")
+    found = contact(part, LoadCase(name="a", supports=supports), FlatPunch(), depth_mm=0.2)
+    # E (1 - nu) / ((1 + nu) (1 - 2 nu)) A d / L (formula)
+    assert found.force == pytest.approx(10 * 0.7 / (1.3 * 0.4) * 6.0 * 0.2 / 4.0, rel=1e-7)
+    np.testing.assert_allclose(found.pressure, found.force / 6.0, rtol=1e-6)
+    assert found.contact_area == pytest.approx(6.0)
+    assert found.peak_pressure.value == pytest.approx(found.force / 6.0, rel=1e-6)
+    push = Support(region=FaceRegion(name="top", side="z+"), displacement=(None, None, -0.2))
+    linear = solve(part, LoadCase(name="b", supports=(*supports, push)), tol=1e-10)
+    np.testing.assert_allclose(found.displacement, linear.displacement, atol=1e-8)
+
+
+def two_phase(seed, resin, shape=(6, 5, 4)):
+    rng = np.random.default_rng(seed)
+    labels = rng.integers(1, 3, shape).astype(np.uint16)
+    heights = rng.integers(2, shape[2] + 1, shape[:2])
+    labels[np.arange(shape[2])[None, None] >= heights[..., None]] = 0
+    resins = resin("stiff", 200.0, 0.35), resin("soft", 2.0, 0.48, kind="elastomer")
+    palette = (EMPTY, Blend.pure("stiff"), Blend.pure("soft"))
+    return Part(grid=VoxelGrid(shape=shape, spacing=(1.0, 1.0, 1.0)), resins=resins,
+                palette=palette, labels=labels)  # fmt: skip
+
+
+@settings(deadline=None, max_examples=15)
+@given(st.integers(0, 10_000), st.sampled_from(["plane", "ball", "roller"]))
+def test_complementary_and_in_balance_on_random_parts(resin, seed, kind):
+    part = two_phase(seed, resin)
+    indenter = {
+        "plane": FlatPunch(position=(0.0, 0.0, 9.0)),
+        "ball": SphereIndenter(position=(3.2, 2.4, 9.0), radius=4.0),
+        "roller": CylinderIndenter(position=(2.9, 0.0, 9.0), radius=3.0, along="y"),
+    }[kind]
+    loads = (
+        BodyForce(acceleration=(500.0, 0.0, -9806.65)),
+        GroundSpring(region=FaceRegion(name="side", side="x-"), stiffness=(1.0, 0.0, 2.0)),
+    )
+    case = LoadCase(name="a", supports=(FLOOR,), loads=loads)
+    found = contact(part, case, indenter, depth_mm=0.3, tol=1e-10)
+    assert found.changes[-1] == 0
+    assert np.all(found.nodal_force >= 0)
+    assert np.all(found.gap >= -1e-6)
+    finite = np.isfinite(found.gap)
+    product = found.nodal_force[finite] * found.gap[finite]
+    assert np.abs(product).max() <= 1e-6 * found.force
+    assert found.balance < 1e-6
+    pushed = np.array([0.0, 0.0, -found.force])
+    total = np.sum([*found.reactions.values(), found.applied, pushed], axis=0)
+    np.testing.assert_allclose(total, 0.0, atol=1e-6 * found.force)
+
+
+def test_agrees_with_a_plain_active_set_on_the_dense_compliance(resin, assembled):
+    # An independent twin: the contact problem on the inverse of the assembled matrix, as a
+    # non-negative least-squares problem for the contact forces.
+    import scipy.optimize
+
+    from voxelmat.fea.assemble import moduli
+
+    part = two_phase(5, resin, (5, 4, 4))
+    ball = SphereIndenter(position=(2.6, 2.1, 6.0), radius=5.0)
+    found = contact(part, LoadCase(name="a", supports=(FLOOR,)), ball, depth_mm=0.4, tol=1e-11)
+    lam, mu = moduli(part)
+    K = assembled(lam, mu, part.grid.spacing, "icmb").toarray()
+    node_shape = part.grid.node_shape[::-1]
+    held = np.zeros((3, *node_shape), dtype=bool)
+    held[:, 0] = True
+    free = np.flatnonzero(~held.ravel() & (np.diag(K) > 0))
+    number = (2 * np.prod(node_shape)) + np.ravel_multi_index(found.node.T[::-1], node_shape)
+    surface = touch_surface(part, ball)
+    can = np.isfinite(surface.gap)
+    row = np.searchsorted(free, number[can])
+    compliance = np.linalg.inv(K[np.ix_(free, free)])[np.ix_(row, row)]
+    # min 1/2 p C p + (gap - depth) p over p >= 0, by the factor of C
+    root = np.linalg.cholesky(compliance)
+    p, _ = scipy.optimize.nnls(root.T, np.linalg.solve(root, 0.4 - surface.gap[can]))
+    np.testing.assert_allclose(found.nodal_force[can], p, atol=1e-6 * p.max())
+
+
+def test_symmetry_and_turned_grids(resin, grid):
+    part = Part.uniform(grid(8, 8, 4), resin(E=3.0, nu=0.4))
+    case = LoadCase(name="a", supports=(FLOOR,))
+    found = contact(part, case, SphereIndenter(position=(4.0, 4.0, 5.0), radius=6.0), depth_mm=0.6)
+    force = np.zeros(part.grid.node_shape[:2])
+    force[tuple(found.node[:, :2].T)] = found.nodal_force
+    assert np.count_nonzero(force) > 4
+    for other in (force.T, force[::-1], force[:, ::-1]):
+        np.testing.assert_allclose(force, other, atol=1e-6 * force.max())
+    assert found.peak_pressure.place_mm == (4.0, 4.0, 4.0)
+    assert found.touch == pytest.approx(1.0)
+    lying = Part.uniform(grid(4, 8, 8), resin(E=3.0, nu=0.4))
+    wall = Support(region=FaceRegion(name="wall", side="x+"))
+    ball = SphereIndenter(position=(-2.0, 4.0, 4.0), radius=6.0, push="x+")
+    turned = contact(lying, LoadCase(name="a", supports=(wall,)), ball, depth_mm=0.6)
+    assert turned.force == pytest.approx(found.force, rel=1e-6)
+    assert turned.touch == pytest.approx(2.0)
+
+
+def test_force_control_inverts_displacement_control(resin, grid):
+    part = Part.uniform(grid(8, 8, 5), resin(E=3.0, nu=0.4))
+    case = LoadCase(name="a", supports=(FLOOR,))
+    for tool in (SphereIndenter(position=(3.7, 4.2, 5.0), radius=8.0), FlatPunch(radius=20.0)):
+        for depth in (0.03, 0.5):
+            there = contact(part, case, tool, depth_mm=depth)
+            back = contact(part, case, tool, force_N=there.force)
+            assert back.depth == pytest.approx(depth, rel=1e-4)
+            assert back.force == pytest.approx(there.force, rel=1e-5)
+
+
+def test_curve(resin, grid):
+    part = Part.uniform(grid(9, 9, 5), resin(E=3.0, nu=0.4))
+    ball = SphereIndenter(position=(4.5, 4.5, 5.0), radius=8.0)
+    depths = [0.05, 0.2, 0.4, 0.8]
+    curve = press(part, (FLOOR,), ball, depths)
+    np.testing.assert_array_equal(curve.depth, depths)
+    assert np.all(np.diff(curve.force) > 0)
+    assert np.all(np.diff(curve.secant) > 0)
+    assert np.all(np.diff(curve.contact_area) >= 0)
+    assert curve.last.depth == 0.8
+    assert any("tenth of the part" in c for c in curve.last.cautions)
+    # force is convex in depth and the tangent its slope
+    step = 1e-4
+    near = press(part, (FLOOR,), ball, [0.4, 0.4 + step])
+    assert np.diff(near.force)[0] / step == pytest.approx(near.tangent[0], rel=1e-3)
+
+
+def domed(resin, radius, h=0.25, n=24, sunk=0.11, what="distance"):
+    """A block whose top falls off as a paraboloid of `radius`, a little below the grid's top."""
+    grid = VoxelGrid(shape=(n, n, 8), spacing=(h, h, h), origin=(-n * h / 2, -n * h / 2, -8 * h))
+    x, y, z = np.meshgrid(*grid.centres(), indexing="ij")
+    level = z + sunk + (x**2 + y**2) / (2 * radius)
+    labels = (level < 0).astype(np.uint16) if what != "occupancy" else None
+    distance = np.clip(np.round(16 * level / h), -127, 127).astype(np.int8)
+    fill = np.clip(np.round(255 * (0.5 - level / h)), 0, 255).astype(np.uint8)
+    more = {}
+    if what == "distance":
+        more = {"distance": distance}
+    if what == "occupancy":
+        more, labels = {"occupancy": fill}, (fill > 0).astype(np.uint16)
+    palette = (EMPTY, Blend.pure("rigid-example"))
+    return Part(grid=grid, resins=(resin(E=1.0),), palette=palette, labels=labels, **more)
+
+
+@pytest.mark.parametrize(("what", "within"), [("distance", 1 / 20), ("occupancy", 1 / 20)])
+def test_the_gap_is_that_of_the_true_surface(resin, what, within):
+    part = domed(resin, 10.0, what=what)
+    surface = touch_surface(part, FlatPunch(position=(0.0, 0.0, 1.0)))
+    x, y = (c[n] for c, n in zip(part.grid.nodes()[:2], surface.node.T[:2], strict=True))
+    inside = np.hypot(x, y) < 2.0
+    true = (x**2 + y**2) / 20.0
+    assert np.abs(surface.gap - true)[inside].max() < within * 0.25
+    assert surface.touch == pytest.approx(1.11, abs=within * 0.25)
+    # the bare staircase is off by up to a voxel
+    part = domed(resin, 10.0, what="labels")
+    bare = touch_surface(part, FlatPunch(position=(0.0, 0.0, 1.0)))
+    x, y = (c[n] for c, n in zip(part.grid.nodes()[:2], bare.node.T[:2], strict=True))
+    inside = np.hypot(x, y) < 2.0
+    assert np.abs(bare.gap - (x**2 + y**2) / 20.0)[inside].max() > 0.4 * 0.25
+
+
+def test_areas_of_a_slope(resin, grid):
+    # a plane at 26.6 degrees: true area is sqrt(1.25) times the projected one
+    g = grid(12, 6, 12)
+    x, _, z = np.meshgrid(*g.centres(), indexing="ij")
+    level = (z - 2.0 - 0.5 * x) / np.sqrt(1.25)
+    distance = np.clip(np.round(16 * level), -127, 127).astype(np.int8)
+    labels = (level < 0).astype(np.uint16)
+    palette = (EMPTY, Blend.pure("rigid-example"))
+    part = Part(grid=g, resins=(resin(),), palette=palette, labels=labels, distance=distance)
+    surface = touch_surface(part, FlatPunch(position=(0.0, 0.0, 20.0)))
+    assert surface.area.sum() == pytest.approx(72.0)
+    assert surface.true_area.sum() == pytest.approx(72.0 * np.sqrt(1.25), rel=0.01)
+    ones = surface.round_about(np.ones(len(surface.area)))
+    assert ones.max() <= 9
+
+
+def test_a_plate_as_a_mesh_is_a_rectangular_punch(resin, grid):
+    part = Part.uniform(grid(6, 6, 4), resin(E=3.0, nu=0.4))
+    corners = np.array([(x, y, 0.0) for x in (-1.0, 1.0) for y in (-1.5, 1.5)])
+    mesh = TriangleMesh(vertices=corners, faces=np.array([(0, 1, 2), (1, 3, 2)], np.int32))
+    case = LoadCase(name="a", supports=(FLOOR,))
+    at = (3.0, 3.0, 7.0)
+    plate = contact(part, case, MeshIndenter(mesh=mesh, position=at), depth_mm=0.1)
+    punch = contact(part, case, FlatPunch(size=(2.0, 3.0), position=at), depth_mm=0.1)
+    assert plate.force == pytest.approx(punch.force, rel=1e-9)
+    assert plate.touch == punch.touch == pytest.approx(3.0)
+    assert int(plate.touching.sum()) == 9
+
+
+def test_clear_errors(resin, grid, monkeypatch):
+    part = Part.uniform(grid(4, 4, 3), resin())
+    case = LoadCase(name="a", supports=(FLOOR,))
+    for given_ in ({}, {"depth_mm": 1.0, "force_N": 1.0}):
+        with pytest.raises(InputError, match="one of the two"):
+            contact(part, case, FlatPunch(), **given_)
+    for given_ in ({"depth_mm": -1.0}, {"force_N": 0.0}, {"depth_mm": float("nan")}):
+        with pytest.raises(InputError, match="must be above 0"):
+            contact(part, case, FlatPunch(), **given_)
+    with pytest.raises(InputError, match="passes by every node"):
+        contact(part, case, FlatPunch(radius=0.2, position=(2.5, 2.5, 9.0)), depth_mm=0.1)
+    with pytest.raises(InputError, match="is not held"):
+        contact(part, LoadCase(name="a", supports=slides("x-")), FlatPunch(), depth_mm=0.1)
+    with pytest.raises(InputError, match="must be above 0 mm and rise"):
+        press(part, (FLOOR,), FlatPunch(), [0.2, 0.1])
+    with pytest.raises(InputError, match="one or more depths"):
+        press(part, (FLOOR,), FlatPunch(), [])
+
+    def restless(self, active, push, gap, scale):
+        return np.arange(len(active)) == 0, np.ones(len(active))
+
+    monkeypatch.setattr(Pressed, "_judge", restless)
+    monkeypatch.setattr("voxelmat.fea.active_set._CAREFUL", 8)
+    monkeypatch.setattr("voxelmat.fea.active_set._ROUNDS", 4)
+    with pytest.raises(ConvergenceError, match="do not settle") as caught:
+        contact(part, case, FlatPunch(), depth_mm=0.1)
+    assert len(caught.value.history) == 8
+
+
+def test_cautions(resin, grid):
+    part = Part.uniform(grid(6, 6, 4), resin())
+    case = LoadCase(name="a", supports=(FLOOR,))
+    small = contact(part, case, SphereIndenter(position=(3.0, 3.0, 4.0), radius=2.0), depth_mm=0.1)
+    assert any("nodes touch" in c for c in small.cautions)
+    steep = contact(part, case, SphereIndenter(position=(3.0, 3.0, 4.0), radius=1.05), depth_mm=2.0)
+    assert any("slopes by up to" in c for c in steep.cautions)
