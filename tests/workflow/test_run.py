@@ -404,6 +404,6 @@ def test_the_example_of_the_readme(design, tmp_path, monkeypatch, capsys):
     monkeypatch.chdir(tmp_path)
     (tmp_path / "out").mkdir()
     space: dict = {}
-    exec(code.replace("notebooks/grip/grip.toml", str(design)), space)  # noqa: S102
+    exec(code.replace("notebooks/grip/grip.toml", str(design)), space)
     assert space["run"].exit_code == 0
     assert (tmp_path / "out" / "report.html").is_file()
