@@ -30,9 +30,9 @@ def problem(A, B, fixed=None, largest=False, noise=0.0, floor=0.0):
     rough = np.random.default_rng(5).standard_normal((SIZE, SIZE))
     inverse = inverse + noise * np.abs(np.diag(inverse)).mean() * rough @ rough.T / SIZE
     return Problem(
-        A=lambda X: A @ X,
-        B=lambda X: B @ X,
-        precondition=lambda X: inverse @ X,
+        A=lambda X: X @ A,
+        B=lambda X: X @ B,
+        precondition=lambda X: X @ inverse.T,
         size=SIZE,
         largest=largest,
         fixed=fixed,
@@ -49,10 +49,10 @@ def find(problem, count, **options):
 def test_lowest_pairs_without_the_known_ones(dense, monkeypatch):
     monkeypatch.setattr(eigen, "_DENSE", dense)
     A, B, vectors, values = matrices()
-    pairs = find(problem(A, B, fixed=vectors[:, :2], noise=0.02), 4)
+    pairs = find(problem(A, B, fixed=vectors[:, :2].T, noise=0.02), 4)
     np.testing.assert_allclose(pairs.values[:4], values[2:6], rtol=1e-10)
     assert (pairs.iterations > 0) == (dense == 0)
-    X = pairs.vectors
+    X = pairs.vectors.T
     np.testing.assert_allclose(X.T @ B @ X, np.eye(X.shape[1]), atol=1e-9)
     np.testing.assert_allclose(vectors[:, :2].T @ B @ X, 0.0, atol=1e-12)
     assert pairs.residuals[:4].max() <= 1e-8
@@ -74,7 +74,7 @@ def test_largest_pairs_of_an_indefinite_matrix(dense, monkeypatch):
 def test_a_triple_value_is_found_three_times(monkeypatch):
     monkeypatch.setattr(eigen, "_DENSE", 0)
     A, B, vectors, _ = matrices()
-    pairs = find(problem(A, B, fixed=vectors[:, :2]), 5)
+    pairs = find(problem(A, B, fixed=vectors[:, :2].T), 5)
     np.testing.assert_allclose(pairs.values[1:4], 3.0, rtol=1e-10)
 
 
@@ -91,7 +91,7 @@ def test_stops_early_below_the_floor(monkeypatch):
 def test_out_of_reach_comes_back_with_its_residual(monkeypatch):
     monkeypatch.setattr(eigen, "_DENSE", 0)
     A, B, vectors, _ = matrices()
-    pairs = find(problem(A, B, fixed=vectors[:, :2], noise=3.0), 4, maxiter=1)
+    pairs = find(problem(A, B, fixed=vectors[:, :2].T, noise=3.0), 4, maxiter=1)
     assert pairs.iterations <= 1
     assert pairs.residuals[:4].max() > 1e-8
     assert len(pairs.history) >= 1
@@ -112,4 +112,4 @@ def test_can_be_cancelled(monkeypatch):
     flag = CancelFlag()
     flag.cancel()
     with pytest.raises(Cancelled):
-        find(problem(A, B, fixed=vectors[:, :2]), 4, monitor=flag)
+        find(problem(A, B, fixed=vectors[:, :2].T), 4, monitor=flag)

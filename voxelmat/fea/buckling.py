@@ -108,12 +108,12 @@ class _Search:
 
 
 def _shapes(packed: Packed, block: Double) -> Double:
-    """Columns as public node fields (m, i, j, k, 3) with a largest displacement of 1 mm."""
-    out = np.empty((block.shape[1], *packed.shape))
-    for c, column in enumerate(block.T):
-        field = packed.field(column)
+    """Rows as public node fields (m, i, j, k, 3) with a largest displacement of 1 mm."""
+    out = np.empty((len(block), *packed.shape))
+    for c, row in enumerate(block):
+        field = packed.field(row)
         size = np.sqrt((field**2).sum(axis=0)).max()
-        sign = 1.0 if column[np.argmax(np.abs(column))] > 0 else -1.0
+        sign = 1.0 if row[np.argmax(np.abs(row))] > 0 else -1.0
         out[c] = field * (sign / size)
     return out.transpose(0, 4, 3, 2, 1)
 
@@ -214,14 +214,14 @@ def buckling(
     return BucklingResult(
         static=static,
         factors=factors,
-        shapes=_shapes(search.packed, forward.vectors[:, :n]),
+        shapes=_shapes(search.packed, forward.vectors[:n]),
         residuals=residuals,
         reversed_factor=None if reverse is None else -reverse,
         iterations=search.iterations,
         cautions=tuple(_notes(static, factors, residuals, reverse, tol)),
         provenance=Provenance(
             inputs={"part": part.digest},
-            threads=int(threads()),  # type: ignore[no-untyped-call]
+            threads=threads(),
             started_utc=started,
             finished_utc=utc_now(),
         ),

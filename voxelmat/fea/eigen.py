@@ -39,7 +39,7 @@ _REFRESH = 25
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Problem:
-    """A x = t B x on blocks (n, m).
+    """A x = t B x on blocks (m, n), a vector in each row.
 
     Attributes
     ----------
@@ -51,7 +51,7 @@ class Problem:
         n.
     largest : bool
         Which end of the spectrum.
-    fixed : ndarray or None, shape (n, r)
+    fixed : ndarray or None, shape (r, n)
         B-orthonormal eigenvectors that are known and left out.
     floor : float
         Where `largest`: stop early when no value seems to get above this.
@@ -74,7 +74,7 @@ class Eigenpairs:
     ----------
     values : ndarray, shape (m,)
         In order from the wanted end.
-    vectors : ndarray, shape (n, m)
+    vectors : ndarray, shape (m, n)
         B-orthonormal.
     residuals : ndarray, shape (m,)
         Size of the residual relative to the stiffness term, in the norm of the inverse
@@ -94,20 +94,18 @@ class Eigenpairs:
 
 def _dense(problem: Problem, count: int) -> tuple[Double, Double]:
     """All matrices built; the fixed vectors are projected out exactly."""
-    unit = np.eye(problem.size)
-    A, B = problem.A(unit), problem.B(unit)
+    basis = np.eye(problem.size)
+    A, B = problem.A(basis), problem.B(basis)
     A, B = (A + A.T) / 2, (B + B.T) / 2
-    if problem.fixed is not None and problem.fixed.shape[1]:
-        basis = scipy.linalg.null_space(problem.B(problem.fixed).T)
-    else:
-        basis = unit
-    A, B = basis.T @ A @ basis, basis.T @ B @ basis
+    if problem.fixed is not None and len(problem.fixed):
+        basis = scipy.linalg.null_space(problem.B(problem.fixed))
+        A, B = basis.T @ A @ basis, basis.T @ B @ basis
     n = len(A)
     ends = (max(n - count, 0), n - 1) if problem.largest else (0, min(count, n) - 1)
     values, vectors = scipy.linalg.eigh(A, B, subset_by_index=ends)
     if problem.largest:
         values, vectors = values[::-1], vectors[:, ::-1]
-    return values, basis @ vectors
+    return values, np.ascontiguousarray((basis @ vectors).T)
 
 
 class _Search:
@@ -118,17 +116,17 @@ class _Search:
         self._fixed = problem.fixed
         self._B_fixed = None if self._fixed is None else problem.B(self._fixed)
         self.X = self._deflated(X)
-        self.P = self.AP = self.BP = np.zeros((len(X), 0))
+        self.P = self.AP = self.BP = np.zeros((0, problem.size))
         self.AX, self.BX = problem.A(self.X), problem.B(self.X)
-        self.values = np.zeros(X.shape[1])
-        self.advance(np.zeros((len(X), 0)), np.zeros(0, dtype=bool))
+        self.values = np.zeros(len(X))
+        self.advance(self.P, np.zeros(0, dtype=bool))
 
     def _deflated(self, W: Double) -> Double:
         """Without the known eigenvectors; twice, for the last digits."""
         if self._fixed is None or self._B_fixed is None:
             return W
         for _ in range(2):
-            W = W - self._fixed @ (self._B_fixed.T @ W)
+            W = W - (W @ self._B_fixed.T) @ self._fixed
         return W
 
     def refresh(self) -> None:
@@ -137,38 +135,36 @@ class _Search:
         self.AX, self.BX = self._problem.A(self.X), self._problem.B(self.X)
 
     def residuals(self) -> tuple[Double, Double]:
-        """Preconditioned residuals (n, m) and their sizes, see `Eigenpairs.residuals`."""
-        R = self.AX - self.BX * self.values
+        """Preconditioned residuals (m, n) and their sizes, see `Eigenpairs.residuals`."""
+        R = self.AX - self.BX * self.values[:, None]
         W = self._problem.precondition(R)
         energy = self.values**2 if self._problem.largest else self.values
-        error = np.abs(np.einsum("nm,nm->m", R, W))
+        error = np.abs(np.einsum("mn,mn->m", R, W))
         sound = energy > 0
         size = np.sqrt(error / np.where(sound, energy, 1.0))
         return W, np.where(sound, size, np.inf)
 
     def advance(self, W: Double, active: NDArray[np.bool_]) -> None:
         """Rayleigh-Ritz on X, the new directions W and those P that belong to active pairs."""
-        m = self.X.shape[1]
+        m = len(self.X)
         W = self._deflated(W)
-        W = W - self.X @ (self.BX.T @ W)
-        P, AP, BP = self.P, self.AP, self.BP
-        if P.shape[1]:
-            P, AP, BP = P[:, active], AP[:, active], BP[:, active]
-        S = np.hstack([self.X, W, P])
-        AS = np.hstack([self.AX, self._products(self._problem.A, W), AP])
-        BS = np.hstack([self.BX, self._products(self._problem.B, W), BP])
+        W = W - (W @ self.BX.T) @ self.X
+        keep = active if len(self.P) else slice(0)
+        S = np.concatenate([self.X, W, self.P[keep]])
+        AS = np.concatenate([self.AX, self._products(self._problem.A, W), self.AP[keep]])
+        BS = np.concatenate([self.BX, self._products(self._problem.B, W), self.BP[keep]])
         C, self.values = _ritz(S, AS, BS, m, self._problem.largest)
-        D = C[m:]
-        self.P, self.AP, self.BP = S[:, m:] @ D, AS[:, m:] @ D, BS[:, m:] @ D
-        self.X, self.AX, self.BX = S @ C, AS @ C, BS @ C
+        X, D = C[:, :m], C[:, m:]
+        self.P, self.AP, self.BP = D @ S[m:], D @ AS[m:], D @ BS[m:]
+        self.X, self.AX, self.BX = (X @ S[:m] + self.P, X @ AS[:m] + self.AP, X @ BS[:m] + self.BP)
 
     def _products(self, product: Block, W: Double) -> Double:
-        return product(W) if W.shape[1] else W
+        return product(W) if len(W) else W
 
 
 def _ritz(S: Double, AS: Double, BS: Double, m: int, largest: bool) -> tuple[Double, Double]:
-    """Coefficients (s, m) over the columns of S of the best B-orthonormal pairs, and values."""
-    G, H = S.T @ BS, S.T @ AS
+    """Coefficients (m, s) over the rows of S of the best B-orthonormal pairs, and values."""
+    G, H = S @ BS.T, S @ AS.T
     G, H = (G + G.T) / 2, (H + H.T) / 2
     size = np.sqrt(np.maximum(np.diag(G), 0.0))
     scale = np.where(size > 0, 1.0 / np.where(size > 0, size, 1.0), 0.0)
@@ -180,14 +176,14 @@ def _ritz(S: Double, AS: Double, BS: Double, m: int, largest: bool) -> tuple[Dou
         values, c = values[::-1], c[:, ::-1]
     if len(values) < m:
         raise np.linalg.LinAlgError(f"only {len(values)} of {m} directions are independent")
-    return np.asarray(T @ c[:, :m]), np.asarray(values[:m])
+    return np.ascontiguousarray((T @ c[:, :m]).T), np.asarray(values[:m])
 
 
 def _direct(problem: Problem, block: int) -> Eigenpairs:
     values, X = _dense(problem, block)
-    R = problem.A(X) - problem.B(X) * values
+    R = problem.A(X) - problem.B(X) * values[:, None]
     energy = values**2 if problem.largest else np.abs(values)
-    error = np.abs(np.einsum("nm,nm->m", R, problem.precondition(R)))
+    error = np.abs(np.einsum("mn,mn->m", R, problem.precondition(R)))
     residuals = np.sqrt(error / np.maximum(energy, 1e-300))
     return Eigenpairs(values=values, vectors=X, residuals=residuals, iterations=0, history=())
 
@@ -222,7 +218,7 @@ def extreme_pairs(
     ConvergenceError
         Where the iteration breaks down altogether.
     """
-    known = 0 if problem.fixed is None else problem.fixed.shape[1]
+    known = 0 if problem.fixed is None else len(problem.fixed)
     block = min(count + guard, problem.size - known)
     if problem.size <= max(_DENSE, 6 * block + known):
         return _direct(problem, block)
@@ -249,7 +245,7 @@ def _iterate(
 ) -> Eigenpairs:
     rng = np.random.default_rng(0)
     # Random vectors, smoothed by the preconditioner.
-    search = _Search(problem, problem.precondition(rng.standard_normal((problem.size, block))))
+    search = _Search(problem, problem.precondition(rng.standard_normal((block, problem.size))))
     best: Eigenpairs | None = None
     while True:
         W, residuals = search.residuals()
@@ -268,7 +264,7 @@ def _iterate(
         if worst <= tol or done:
             return replace(best, iterations=len(history) - 1, history=tuple(history))
         active = residuals > _SETTLED * tol
-        search.advance(W[:, active], active)
+        search.advance(W[active], active)
         if len(history) % _REFRESH == 0:
             search.refresh()
 

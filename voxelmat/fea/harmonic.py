@@ -222,7 +222,7 @@ def harmonic(
         cautions=tuple(_cautions(modal.part, modal, f, loss_factor)),
         provenance=Provenance(
             inputs={"part": modal.part.digest},
-            threads=int(threads()),  # type: ignore[no-untyped-call]
+            threads=threads(),
             started_utc=started,
             finished_utc=utc_now(),
         ),

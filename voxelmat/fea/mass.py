@@ -67,7 +67,7 @@ class Mass:
             np.multiply(self._nodal, u, out=y)
             return
         none = np.zeros(8)
-        chunks = int(threads())  # type: ignore[no-untyped-call]
+        chunks = threads()
         for d in range(3):
             apply_scalar(u[d], self._density, self._density, y[d], none, self._factors, chunks)
 

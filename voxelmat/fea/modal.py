@@ -63,13 +63,13 @@ def _guard(count: int) -> int:
 
 
 def _orthonormal(packed: Packed, mass: Mass, fields: Double) -> Double:
-    """Rigid motions as an M-orthonormal block (n, r)."""
+    """Rigid motions as an M-orthonormal block (r, n)."""
     if not len(fields):
-        return np.zeros((packed.size, 0))
-    R = np.stack([packed.pack(f) for f in fields], axis=1)
+        return np.zeros((0, packed.size))
+    R = np.stack([packed.pack(f) for f in fields])
     for _ in range(2):  # twice, for orthogonality to the last digit
-        gram = R.T @ packed.apply(mass.apply, R)
-        R = np.linalg.solve(np.linalg.cholesky(gram), R.T).T
+        gram = R @ packed.apply(mass.apply, R).T
+        R = np.linalg.solve(np.linalg.cholesky(gram), R)
     return np.asarray(R)
 
 
@@ -81,7 +81,7 @@ def _scaled(packed: Packed, mass: Mass, R: Double, stiff: float, heavy: float) -
         precondition=lambda X: packed.precondition(X) * stiff,
         size=packed.size,
         largest=False,
-        fixed=R * np.sqrt(heavy) if R.shape[1] else None,
+        fixed=R * np.sqrt(heavy) if len(R) else None,
     )
 
 
@@ -111,11 +111,11 @@ def _notes(part: Part, pairs: Eigenpairs, count: int, tol: float, mass: Mass) ->
 
 
 def _shapes(packed: Packed, block: Double) -> Double:
-    """Columns as public node fields (m, i, j, k, 3), the largest entry of each positive."""
-    out = np.empty((block.shape[1], *packed.shape))
-    for c, column in enumerate(block.T):
-        sign = 1.0 if column[np.argmax(np.abs(column))] > 0 else -1.0
-        out[c] = sign * packed.field(column)
+    """Rows as public node fields (m, i, j, k, 3), the largest entry of each positive."""
+    out = np.empty((len(block), *packed.shape))
+    for c, row in enumerate(block):
+        sign = 1.0 if row[np.argmax(np.abs(row))] > 0 else -1.0
+        out[c] = sign * packed.field(row)
     return out.transpose(0, 4, 3, 2, 1)
 
 
@@ -207,7 +207,7 @@ def modes(
         stage="finding modes",
     )
     _check(pairs, count)
-    shapes = _shapes(packed, pairs.vectors[:, :count] / np.sqrt(heavy))
+    shapes = _shapes(packed, pairs.vectors[:count] / np.sqrt(heavy))
     return ModalResult(
         part=part,
         supports=tuple(supports),
@@ -225,7 +225,7 @@ def modes(
         cautions=tuple(_notes(part, pairs, count, tol, weight)),
         provenance=Provenance(
             inputs={"part": part.digest},
-            threads=int(threads()),  # type: ignore[no-untyped-call]
+            threads=threads(),
             started_utc=started,
             finished_utc=utc_now(),
         ),

@@ -21,7 +21,7 @@ Apply = Callable[[Double, Double], None]
 
 
 class Packed:
-    """Free unknowns of a grid, its stiffness and a V-cycle, on blocks of vectors (n, m).
+    """Free unknowns of a grid, its stiffness and a V-cycle, on blocks of vectors (m, n).
 
     Parameters
     ----------
@@ -77,14 +77,14 @@ class Packed:
         return np.asarray(u.reshape(-1)[self.index])
 
     def apply(self, product: Apply, X: Double) -> Double:
-        """A product of node fields, `product(u, y)`, on each column of a block."""
-        out = np.empty(X.shape, order="F")
+        """A product of node fields, `product(u, y)`, on each row of a block."""
+        out = np.empty(X.shape)
         u, y = np.zeros(self.shape), np.empty(self.shape)
         with computing(), crew(self._nodes):
-            for c in range(X.shape[1]):
-                u.ravel()[self.index] = X[:, c]
+            for x, row in zip(X, out, strict=True):
+                u.ravel()[self.index] = x
                 product(u, y)
-                out[:, c] = y.ravel()[self.index]
+                np.take(y.ravel(), self.index, out=row)
         return out
 
     def stiffness(self, X: Double) -> Double:
@@ -92,7 +92,7 @@ class Packed:
         return self.apply(self._stiffness.apply, X)
 
     def precondition(self, X: Double) -> Double:
-        """Nearly the inverse of K on each column, by one V-cycle."""
+        """Nearly the inverse of K on each row, by one V-cycle."""
         return self.apply(self._v_cycle, X)
 
     def _v_cycle(self, r: Double, z: Double) -> None:
