@@ -7,6 +7,7 @@ from voxelmat.errors import InputError
 from voxelmat.fea import eigen
 from voxelmat.fea.buckling import buckling
 from voxelmat.fea.static import solve
+from voxelmat.model.blend import Blend
 from voxelmat.model.grid import VoxelGrid
 from voxelmat.model.loadcase import Force, LoadCase, Support
 from voxelmat.model.material import Constant, Material
@@ -141,6 +142,27 @@ def test_turning_the_grid_changes_nothing():
     turned = LoadCase(name="a", supports=(root,), loads=(load,))
     b = buckling(block((2, 3, 16), (2.0, 3.0, 24.0), nu=0.3), turned, count=2)
     np.testing.assert_allclose(a.factors, b.factors, rtol=1e-6)
+
+
+@pytest.mark.parametrize("seed", range(4))
+def test_iteration_equals_dense_eigenvalues_on_random_parts(seed, monkeypatch):
+    rng = np.random.default_rng(seed)
+    part = block((8, 3, 2), (16.0, 3.0, 2.0), nu=0.3)
+    soft = part.resins[0].replace(name="soft", E=Constant(value=20.0))
+    part = part.replace(
+        resins=(*part.resins, soft),
+        palette=(*part.palette, Blend.pure("soft")),
+        labels=rng.integers(1, 3, part.grid.shape).astype(np.uint16),
+    )
+    load = case(*rng.standard_normal(3))
+    static = solve(part, load)
+    found = []
+    for dense in (0, 3000):
+        monkeypatch.setattr(eigen, "_DENSE", dense)
+        found.append(buckling(part, load, static=static, count=3, tol=1e-6))
+    np.testing.assert_allclose(found[0].factors, found[1].factors, rtol=1e-7)
+    assert found[0].iterations > found[1].iterations == 0
+    assert len(found[0].factors) > 0
 
 
 def test_a_static_result_is_used(monkeypatch):

@@ -7,7 +7,10 @@ from pathlib import Path
 
 import numpy as np
 import pytest
-import scipy.sparse.linalg
+import scipy.linalg
+import scipy.ndimage
+from hypothesis import given, settings
+from hypothesis import strategies as st
 
 from voxelmat.errors import ConvergenceError, InputError
 from voxelmat.fea import eigen
@@ -133,12 +136,11 @@ def test_slender_cantilever_and_free_beam(mass):
     assert free.residuals.max() <= 1e-5
 
 
-def matrices(part, held=None):
-    """K and M of a small part as dense matrices, on free unknowns."""
+def matrices(part):
+    """K and M of a small free part as dense matrices, on nodes that touch material."""
     lam, mu = moduli(part)
     K, M = Stiffness(lam, mu, part.grid.spacing), Mass(densities(part), part.grid.spacing, "lumped")
-    free = np.ones(K.shape, bool) if held is None else ~held
-    index = np.flatnonzero(free)
+    index = np.flatnonzero(np.broadcast_to(M.nodal > 0, K.shape))
     out = []
     for product in (K.apply, M.apply):
         A = np.empty((len(index), len(index)))
@@ -177,6 +179,32 @@ def test_equals_dense_eigenvalues(lump, dense, monkeypatch):
     values = scipy.linalg.eigh(K, M, eigvals_only=True, subset_by_index=(0, 10))
     assert np.abs(values[:6]).max() < 1e-9 * values[6]  # the rigid motions
     np.testing.assert_allclose(found.angular**2, values[6:], rtol=1e-9)
+
+
+@settings(deadline=None, max_examples=15)
+@given(st.integers(0, 10_000), st.floats(0.0, 0.5))
+def test_random_parts_equal_dense_eigenvalues_or_are_refused(lump, seed, void):
+    rng = np.random.default_rng(seed)
+    labels = lump.labels * (rng.random(lump.grid.shape) >= void)
+    part = lump.replace(labels=labels)
+    pieces = scipy.ndimage.label(labels)[1]
+    if pieces > 1:
+        with pytest.raises(InputError, match="loose"):
+            modes(part, count=3)
+        labels = np.where(largest(labels), labels, 0).astype(np.uint16)
+        part = lump.replace(labels=labels)
+    with pytest.MonkeyPatch.context() as patch:
+        patch.setattr(eigen, "_DENSE", 0)
+        found = modes(part, count=3, mass="lumped", tol=1e-6)
+    K, M = matrices(part)
+    values = scipy.linalg.eigh(K, M, eigvals_only=True, subset_by_index=(0, 8))
+    np.testing.assert_allclose(found.angular**2, values[6:], rtol=1e-8)
+
+
+def largest(labels):
+    """The largest set of voxels joined face to face."""
+    found, _ = scipy.ndimage.label(labels)
+    return found == 1 + np.argmax(np.bincount(found.ravel())[1:])
 
 
 def test_shapes_are_orthogonal_and_of_unit_mass(lump, monkeypatch):

@@ -9,6 +9,7 @@ from numpy.typing import NDArray
 
 from voxelmat.errors import ConvergenceError, InputError
 from voxelmat.fea.assemble import Assembled, assemble, moduli
+from voxelmat.fea.cautions import film_caution
 from voxelmat.fea.eigen import Eigenpairs, Problem, extreme_pairs
 from voxelmat.fea.element import DEFAULT
 from voxelmat.fea.mass import Mass, densities
@@ -222,7 +223,7 @@ def modes(
         mass_model=mass,
         element=element,
         iterations=pairs.iterations,
-        cautions=tuple(_notes(part, pairs, count, tol, weight)),
+        cautions=(*_notes(part, pairs, count, tol, weight), *film_caution(part, lam, mu)),
         provenance=Provenance(
             inputs={"part": part.digest},
             threads=threads(),
