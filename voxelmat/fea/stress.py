@@ -11,6 +11,8 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from voxelmat.errors import InputError
+from voxelmat.model.material import Constant
 from voxelmat.model.part import Part
 from voxelmat.model.result import Extreme, StaticResult
 
@@ -128,8 +130,10 @@ class Safety:
     resin : str
     factor : float
         Strength over the von Mises stress of the blend around it; below 1 it is expected to fail.
+    low, high : float
+        The factor with the lower and the upper end of the strength's range.
     strength : float
-        MPa.
+        At the temperature of the load case, MPa.
     indicative : bool
         The strength has no source.
     place_mm : tuple of float
@@ -137,29 +141,47 @@ class Safety:
 
     resin: str
     factor: float
+    low: float
+    high: float
     strength: float
     indicative: bool
     place_mm: tuple[float, float, float]
 
 
-def _palette_strength(part: Part) -> Double:
+def _end(strength: Constant, side: str) -> float:
+    if side == "value":
+        return strength.value
+    return strength.band[{"low": 0, "high": 1}[side]]
+
+
+def _palette_strength(part: Part, temperature_degC: float, side: str) -> Double:
     """Smallest strength among the resins of each palette entry, MPa; inf where none is known."""
-    known = {m.name: m.strength.value for m in part.resins if m.strength is not None}
+    found = ((m.name, m.strength_at(temperature_degC)) for m in part.resins)
+    known = {name: _end(strength, side) for name, strength in found if strength is not None}
     return np.array(
         [min((known.get(n, np.inf) for n, _ in b.fractions), default=np.inf) for b in part.palette]
     )
 
 
-def safety_field(result: StaticResult) -> NDArray[np.float32]:
+def safety_field(result: StaticResult, side: str = "value") -> NDArray[np.float32]:
     """Strength over von Mises stress, ``[i, j, k]``; inf where empty or no strength is known.
 
     A blend is judged by the weakest resin in it, at the mean stress of the blend: the droplets
-    themselves see more or less than that.
+    themselves see more or less than that. Strengths are those at the temperature of the load
+    case, where the records say how they change with it.
+
+    Parameters
+    ----------
+    result : StaticResult
+    side : str
+        ``"value"``, or ``"low"`` or ``"high"`` for an end of the strengths' ranges.
     """
+    if side not in ("value", "low", "high"):
+        raise InputError(f"The side of a range is value, low or high; got {side!r}.")
     part = result.part
-    allowed = _palette_strength(part)[part.labels]
+    table = _palette_strength(part, result.load_case.temperature_degC, side)
     load = np.maximum(result.von_mises, 1e-30)
-    return np.asarray(np.where(part.solid, allowed / load, np.inf), dtype=np.float32)
+    return np.asarray(np.where(part.solid, table[part.labels] / load, np.inf), dtype=np.float32)
 
 
 def safety(result: StaticResult) -> tuple[Safety, ...]:
@@ -170,18 +192,20 @@ def safety(result: StaticResult) -> tuple[Safety, ...]:
     fractions = part.palette_fractions()
     found = []
     for column, resin in enumerate(part.resins):
-        if resin.strength is None:
-            continue
+        strength = resin.strength_at(result.load_case.temperature_degC)
         cells = np.argwhere(inside & (fractions[:, column] > 0)[part.labels])
-        if not len(cells):
+        if strength is None or not len(cells):
             continue
         at = cells[np.argmax(load[tuple(cells.T)])]
+        low, high = strength.band
         found.append(
             Safety(
                 resin=resin.name,
-                factor=float(resin.strength.value / load[tuple(at)]),
-                strength=resin.strength.value,
-                indicative=resin.strength.indicative,
+                factor=float(strength.value / load[tuple(at)]),
+                low=float(low / load[tuple(at)]),
+                high=float(high / load[tuple(at)]),
+                strength=strength.value,
+                indicative=strength.indicative,
                 place_mm=_place(part, at),
             )
         )

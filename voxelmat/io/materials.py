@@ -14,7 +14,7 @@ from voxelmat.io.schema import check_document, read_toml
 from voxelmat.model.curve import PairCurve
 from voxelmat.model.interface import Bond
 from voxelmat.model.laws import LAWS, BlendLaw, CalibratedCurve
-from voxelmat.model.material import Constant, Material
+from voxelmat.model.material import Constant, Material, TemperatureFactor
 from voxelmat.provenance import file_digest
 from voxelmat.units import DENSITY_G_CM3, number
 
@@ -150,6 +150,20 @@ def _plain(data: Mapping[str, Any], key: str, file: str) -> float | None:
     return float(entry["value"])
 
 
+def _course(data: Mapping[str, Any], file: str) -> TemperatureFactor | None:
+    given = data.get("strength_over_temperature")
+    if given is None:
+        return None
+    try:
+        return TemperatureFactor(
+            temperature_degC=tuple(map(float, given["temperature_degC"])),
+            factor=tuple(map(float, given["factor"])),
+            source=given["source"],
+        )
+    except InputError as error:
+        raise InputError(error.message, file=file, key="strength_over_temperature") from None
+
+
 def _conditions(data: Mapping[str, Any], file: str) -> dict[str, Any]:
     given = data.get("conditions")
     if given is None:
@@ -178,6 +192,7 @@ def _material(data: Mapping[str, Any], file: str) -> Material:
             kind=data["kind"],
             shore_A=_plain(data, "shore_A", file),
             glass_transition_degC=_plain(data, "glass_transition_degC", file),
+            strength_over_temperature=_course(data, file),
             **constants,
             **rest,
             **_conditions(data, file),

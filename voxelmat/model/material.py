@@ -3,15 +3,18 @@
 from __future__ import annotations
 
 import dataclasses
+import itertools
 import math
 import re
 from dataclasses import dataclass
 from typing import Any
 
+import numpy as np
+
 from voxelmat.errors import InputError
 from voxelmat.provenance import text_digest
 
-__all__ = ["INDICATIVE", "KINDS", "Constant", "Material"]
+__all__ = ["INDICATIVE", "KINDS", "Constant", "Material", "TemperatureFactor"]
 
 #: What `Constant.source` says where nothing published or measured stands behind a value.
 INDICATIVE = "indicative"
@@ -78,6 +81,44 @@ class Constant:
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
+class TemperatureFactor:
+    """By how much a property falls or rises with temperature.
+
+    Attributes
+    ----------
+    temperature_degC : tuple of float
+        Rising, at least two.
+    factor : tuple of float
+        The property over that at any one temperature (> 0).
+    source : str
+    """
+
+    temperature_degC: tuple[float, ...]
+    factor: tuple[float, ...]
+    source: str = INDICATIVE
+
+    def __post_init__(self) -> None:
+        t, f = self.temperature_degC, self.factor
+        if len(t) < 2 or len(t) != len(f):
+            raise InputError(
+                f"A course over temperature needs two or more temperatures and as many factors; "
+                f"got {len(t)} and {len(f)}."
+            )
+        if not all(map(math.isfinite, (*t, *f))) or not all(v > 0 for v in f):
+            raise InputError(f"Temperatures must be finite and factors above 0; got {t} and {f}.")
+        if any(b <= a for a, b in itertools.pairwise(t)):
+            raise InputError(f"Temperatures must rise from one to the next; got {t} degC.")
+
+    def covers(self, temperature_degC: float) -> bool:
+        """Whether a temperature lies within the course."""
+        return self.temperature_degC[0] <= temperature_degC <= self.temperature_degC[-1]
+
+    def at(self, temperature_degC: float) -> float:
+        """The factor, straight between the temperatures, that of the end beyond them."""
+        return float(np.interp(temperature_degC, self.temperature_degC, self.factor))
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
 class Material:
     """A resin, a support or a bought-in body's material.
 
@@ -95,6 +136,8 @@ class Material:
         tonne/mm^3 (> 0); 1 g/cm^3 is 1e-9.
     strength : Constant or None
         Tensile strength, MPa.
+    strength_over_temperature : TemperatureFactor or None
+        How the strength changes with temperature; covers `temperature_range_degC`.
     elongation : Constant or None
         Elongation at break as a fraction (1.5 means 150 %).
     expansion : Constant or None
@@ -127,6 +170,7 @@ class Material:
     nu: Constant
     density: Constant
     strength: Constant | None = None
+    strength_over_temperature: TemperatureFactor | None = None
     elongation: Constant | None = None
     expansion: Constant | None = None
     conductivity: Constant | None = None
@@ -177,10 +221,49 @@ class Material:
                     f"Material '{self.name}': the {label} must lie above 0 and below {most:g} "
                     f"{unit}; got {constant.band[0]:g} to {constant.band[1]:g}."
                 )
+        self._check_course()
         if not _COLOUR.match(self.colour):
             raise InputError(
                 f"Material '{self.name}': a colour is written #rrggbb; got {self.colour!r}."
             )
+
+    def _check_course(self) -> None:
+        course = self.strength_over_temperature
+        if course is None:
+            return
+        if self.strength is None:
+            raise InputError(
+                f"Material '{self.name}': a strength over temperature needs a strength."
+            )
+        needed = (*self.temperature_range_degC, self.strength.temperature_degC)
+        if not all(map(course.covers, needed)):
+            raise InputError(
+                f"Material '{self.name}': the strength over temperature goes from "
+                f"{course.temperature_degC[0]:g} to {course.temperature_degC[-1]:g} degC; it must "
+                f"cover the conditions and the test temperature, {min(needed):g} to "
+                f"{max(needed):g} degC."
+            )
+
+    def strength_at(self, temperature_degC: float) -> Constant | None:
+        """The strength at a temperature with its range, MPa; None where the record has none.
+
+        Without a course over temperature it is that of the test, for any temperature; that the
+        record's conditions are left is said elsewhere.
+        """
+        strength, course = self.strength, self.strength_over_temperature
+        if strength is None or course is None:
+            return strength
+        ratio = course.at(temperature_degC) / course.at(strength.temperature_degC)
+        low, high = strength.band
+        unproven = course.source.strip().lower().startswith(INDICATIVE)
+        return dataclasses.replace(
+            strength,
+            value=strength.value * ratio,
+            low=low * ratio,
+            high=high * ratio,
+            temperature_degC=temperature_degC,
+            source=course.source if unproven else f"{strength.source}; {course.source}",
+        )
 
     @property
     def bulk(self) -> float:

@@ -256,7 +256,8 @@ def _safety(
     cell, place = _cell(part, int(np.nanargmin(field)))
     value = float(field[cell])
     names = [n for n, _ in part.palette[int(part.labels[cell])].fractions]
-    known = [(c, n) for n in names if (c := part.resin(n).strength) is not None]
+    warm = result.load_case.temperature_degC
+    known = [(c, n) for n in names if (c := part.resin(n).strength_at(warm)) is not None]
     strength, resin = min(known, key=lambda item: item[0].value)
     low, high = (edge / strength.value for edge in strength.band)
     doubts = list(peak_doubts(result, cell))
