@@ -14,12 +14,13 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from voxelmat.fea.recover import von_mises
 from voxelmat.fea.stress import judged
 from voxelmat.model.part import Part
 from voxelmat.model.result import StaticResult
 from voxelmat.units import number
 
-__all__ = ["Peak", "inner_voxels", "is_stepped", "peak_stresses", "staircase_cautions"]
+__all__ = ["Peak", "inner_voxels", "is_stepped", "peak_at", "peak_stresses", "staircase_cautions"]
 
 Bools = NDArray[np.bool_]
 Cell = tuple[int, int, int]
@@ -101,17 +102,28 @@ def inner_voxels(part: Part) -> Bools:
     return inner
 
 
-def _peak(result: StaticResult, load: NDArray[np.float64], inner: Bools, cell: Cell) -> Peak:
+def peak_at(result: StaticResult, cell: Cell, inner: Bools | None = None) -> Peak:
+    """The von Mises stress in one voxel, and what the voxels round it say without the surface.
+
+    Parameters
+    ----------
+    result : StaticResult
+    cell : tuple of int
+    inner : ndarray of bool, optional
+        From `inner_voxels`, where it is at hand.
+    """
     part = result.part
+    inner = inner_voxels(part) if inner is None else inner
     label = int(part.labels[cell])
     near = tuple(slice(max(0, c - 2), c + 3) for c in cell)
     keep = inner[near] & (part.labels[near] == label)
-    values = load[near][keep]
+    load = von_mises(result.stress[near].astype(np.float64))
+    values = load[keep]
     x, y, z = (float(c[n]) for c, n in zip(part.grid.centres(), cell, strict=True))
     return Peak(
         label=label,
         material=str(part.palette[label]),
-        value=float(load[cell]),
+        value=float(von_mises(result.stress[cell].astype(np.float64))),
         place_mm=(x, y, z),
         stepped=is_stepped(part, cell),
         filtered_mean=float(values.mean()) if len(values) else math.nan,
@@ -134,7 +146,7 @@ def peak_stresses(result: StaticResult) -> tuple[Peak, ...]:
             continue
         top = int(np.argmax(np.where(seen == label, load, -1.0)))
         i, j, k = (int(n) for n in np.unravel_index(top, seen.shape))
-        found.append(_peak(result, load, inner, (i, j, k)))
+        found.append(peak_at(result, (i, j, k), inner))
     return tuple(sorted(found, key=lambda p: -p.value))
 
 

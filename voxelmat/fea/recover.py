@@ -23,7 +23,15 @@ from voxelmat.fea.stress import judged
 from voxelmat.model.part import Part
 from voxelmat.model.result import StaticResult
 
-__all__ = ["QUANTITIES", "Quantity", "node_values", "quantity_named", "to_nodes", "voxel_values"]
+__all__ = [
+    "QUANTITIES",
+    "Quantity",
+    "node_values",
+    "quantity_named",
+    "to_nodes",
+    "von_mises",
+    "voxel_values",
+]
 
 Floats = NDArray[np.floating]
 Double = NDArray[np.float64]
@@ -69,9 +77,11 @@ def _principal(values: Double, shear: float) -> Double:
     return out
 
 
-def _von_mises(s: Double) -> Double:
-    axial = (s[:, 0] - s[:, 1]) ** 2 + (s[:, 1] - s[:, 2]) ** 2 + (s[:, 2] - s[:, 0]) ** 2
-    return np.asarray(np.sqrt(0.5 * axial + 3.0 * (s[:, 3:] ** 2).sum(axis=1)))
+def von_mises(s: Double) -> Double:
+    """Von Mises stress of tensors (..., 6)."""
+    xx, yy, zz = s[..., 0], s[..., 1], s[..., 2]
+    axial = (xx - yy) ** 2 + (yy - zz) ** 2 + (zz - xx) ** 2
+    return np.asarray(np.sqrt(0.5 * axial + 3.0 * (s[..., 3:] ** 2).sum(axis=-1)))
 
 
 def _stretch(e: Double) -> Double:
@@ -92,7 +102,7 @@ QUANTITIES = {
     "principal strain": Quantity(
         unit="", base="strain", components=_ONE_TWO_THREE, derive=lambda e: _principal(e, 0.5)
     ),
-    "von Mises stress": Quantity(unit="MPa", base="stress", components=(), derive=_von_mises),
+    "von Mises stress": Quantity(unit="MPa", base="stress", components=(), derive=von_mises),
     "largest principal stretch": Quantity(unit="", base="strain", components=(), derive=_stretch),
     "strain energy density": Quantity(
         unit="mJ/mm3", base="energy", components=(), derive=lambda w: w[:, 0]

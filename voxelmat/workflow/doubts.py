@@ -6,6 +6,7 @@ import itertools
 
 import numpy as np
 
+from voxelmat.fea.peaks import is_stepped
 from voxelmat.material.conditions import cautions_for
 from voxelmat.model.laws import CalibratedCurve
 from voxelmat.model.part import Part
@@ -95,16 +96,8 @@ def size_doubts(result: StaticResult) -> list[str]:
 def peak_doubts(result: StaticResult, cell: tuple[int, int, int]) -> list[str]:
     """Whether a local value in a voxel hangs on the steps of the voxels or on a support's edge."""
     part = result.part
-    at = tuple(slice(max(0, c - 1), c + 2) for c in cell)
-    fill = np.asarray(part.fill[at])
-    solid = fill > 0
-    # A block has material wherever each of its three shadows has some.
-    flat = np.ones_like(solid)
-    for axis in range(3):
-        others = tuple(a for a in range(3) if a != axis)
-        flat &= solid.any(axis=others, keepdims=True)
     found = []
-    if np.any((fill > 0) & (fill < 1)) or not np.array_equal(solid, flat):
+    if is_stepped(part, cell):
         found.append(
             "its extreme lies on a stepped or re-entrant surface, where the value of a single "
             "voxel is not reliable however fine the grid"

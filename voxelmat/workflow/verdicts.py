@@ -12,11 +12,12 @@ from numpy.typing import NDArray
 
 from voxelmat.errors import InputError
 from voxelmat.fea.loads import describe
+from voxelmat.fea.peaks import peak_at
 from voxelmat.fea.stress import safety_field
 from voxelmat.model.part import Part
 from voxelmat.model.requirement import Requirement, Verdict, judge
 from voxelmat.model.result import StaticResult
-from voxelmat.units import quantity
+from voxelmat.units import number, quantity
 from voxelmat.workflow.doubts import (
     condition_doubts,
     data_doubts,
@@ -268,8 +269,14 @@ def _safety(
     if driven_by(result) != "force":
         doubts += _unscaled(spread, value, _MOVED).doubts
     band = (value * low / spread.stress, value * high * spread.stress)
-    grounds = (f"smallest in '{resin}' at {place_words(place)}",)
-    return _Measured(value=value, band=band, doubts=tuple(doubts), grounds=grounds)
+    grounds = [f"smallest in '{resin}' at {place_words(place)}"]
+    peak = peak_at(result, cell)
+    if peak.stepped and peak.filtered_max > 0:
+        grounds.append(
+            f"without the voxels at the surface it is {number(strength.value / peak.filtered_max)} "
+            f"round there"
+        )
+    return _Measured(value=value, band=band, doubts=tuple(doubts), grounds=tuple(grounds))
 
 
 def _interface(
