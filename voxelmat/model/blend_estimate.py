@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import dataclasses
+from collections.abc import Sequence
 from dataclasses import dataclass, field
 from typing import Any, NamedTuple
 
@@ -16,11 +17,11 @@ __all__ = ["BlendEstimate", "Limit", "limit"]
 
 Floats = NDArray[np.float64]
 
-# Orders of convergence that a fit may have: corners of droplets lower it below 1, smooth
-# inclusions bring it to 2.
+# Orders of convergence that are thought possible: 2 for smooth fields, less where droplets of
+# high contrast meet along an edge. (Four such edges in a plane, as on a chessboard, go lower.)
 _ORDERS = (0.5, 2.0)
-# Share of the extrapolated step that stays uncertain whatever the fit says.
-_SHARE = 0.25
+# Relative room for rounding at bounds that meet, as they do for equal shear moduli.
+_ROUNDING = 1e-9
 
 
 class Limit(NamedTuple):
@@ -51,26 +52,30 @@ def _fitted_order(h: Floats, v: Floats) -> float:
     return 0.5 * (low + high)
 
 
-def limit(h: Floats, v: Floats) -> Limit:
-    """Extrapolate values at element sizes `h`, coarse to fine, to size 0.
+def limit(elements: Sequence[int], values: Sequence[float]) -> Limit:
+    """Extrapolate values found with rising numbers of elements a droplet to element size 0.
 
-    With three or more values the order is fitted to the last three, with two it is 1. The
-    uncertainty is the larger of the distance to the limit of first order and a quarter of the
-    step from the finest value.
+    One element a droplet lies outside any order of convergence and is left out where two others
+    are there. The order is fitted to the last three values, and is 1 where there are two. The
+    uncertainty reaches as far as the limits that the orders 0.5 and 2 would give.
 
     Raises
     ------
     InputError
-        With fewer than two values or sizes that do not fall.
+        With fewer than two values or numbers that do not rise.
     """
-    h, v = np.asarray(h, dtype=np.float64), np.asarray(v, dtype=np.float64)
-    if len(h) < 2 or len(h) != len(v) or np.any(np.diff(h) >= 0):
-        raise InputError(f"Extrapolation takes two or more falling element sizes; got {h}.")
+    if len(elements) < 2 or len(elements) != len(values) or np.any(np.diff(elements) <= 0):
+        raise InputError(f"Extrapolation takes two or more rising refinements; got {elements}.")
+    used = slice(1, None) if elements[0] == 1 and len(elements) > 2 else slice(None)
+    h, v = 1.0 / np.asarray(elements[used], dtype=np.float64), np.asarray(values[used])
     order = _fitted_order(h, v) if len(h) > 2 else 1.0
     value = _at_order(h, v, order)
-    first = _at_order(h, v, 1.0)
-    spread = _SHARE * abs(value - float(v[-1])) if len(h) > 2 else abs(value - float(v[-1]))
-    return Limit(value, max(abs(value - first), spread), order)
+    return Limit(value, max(abs(value - _at_order(h, v, p)) for p in _ORDERS), order)
+
+
+def _within(value: float, uncertainty: float, band: tuple[float, float]) -> bool:
+    room = uncertainty + _ROUNDING * abs(value)
+    return band[0] - room <= value <= band[1] + room
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -119,29 +124,25 @@ class BlendEstimate:
     @property
     def raw_held(self) -> tuple[bool, ...]:
         """For each refinement: do both moduli lie within their bounds?"""
-        (k0, k1), (g0, g1) = self.bulk_range, self.shear_range
         pairs = zip(self.bulk, self.shear, strict=True)
-        return tuple(k0 <= k <= k1 and g0 <= g <= g1 for k, g in pairs)
+        return tuple(
+            _within(k, 0.0, self.bulk_range) and _within(g, 0.0, self.shear_range) for k, g in pairs
+        )
 
     @property
     def held(self) -> bool:
         """Whether the extrapolated moduli lie within their bounds, give or take what is unsure."""
-        ok = True
-        for v, (low, high) in (
-            (self.bulk_limit, self.bulk_range),
-            (self.shear_limit, self.shear_range),
-        ):
-            ok &= low - v.uncertainty <= v.value <= high + v.uncertainty
-        return ok
+        both = ((self.bulk_limit, self.bulk_range), (self.shear_limit, self.shear_range))
+        return all(_within(v.value, v.uncertainty, band) for v, band in both)
 
     @property
-    def young(self) -> float:
-        """Young's modulus of the extrapolated moduli, MPa.
+    def moduli(self) -> tuple[float, float]:
+        """Bulk and shear modulus, MPa: the limits, moved to a bound that they pass.
 
         Raises
         ------
         InputError
-            Where the bounds did not hold.
+            Where a limit passes a bound by more than its uncertainty.
         """
         if not self.held:
             raise InputError(
@@ -149,8 +150,20 @@ class BlendEstimate:
                 f"{self.shear_limit.value:.4g} MPa) lie outside the Hashin-Shtrikman bounds, so "
                 f"they are no answer. Use finer refinements or a larger cell."
             )
-        k, g = self.bulk_limit.value, self.shear_limit.value
+        bulk = min(max(self.bulk_limit.value, self.bulk_range[0]), self.bulk_range[1])
+        return bulk, min(max(self.shear_limit.value, self.shear_range[0]), self.shear_range[1])
+
+    @property
+    def young(self) -> float:
+        """Young's modulus from `moduli`, MPa."""
+        k, g = self.moduli
         return 9.0 * k * g / (3.0 * k + g)
+
+    @property
+    def poisson(self) -> float:
+        """Poisson's ratio from `moduli`."""
+        k, g = self.moduli
+        return (3.0 * k - 2.0 * g) / (2.0 * (3.0 * k + g))
 
     def replace(self, **changes: Any) -> BlendEstimate:
         """A copy with `changes`."""

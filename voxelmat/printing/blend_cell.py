@@ -6,7 +6,6 @@ import itertools
 from collections.abc import Mapping, Sequence
 
 import numpy as np
-from numpy.typing import NDArray
 
 from voxelmat.errors import InputError
 from voxelmat.fea.element import DEFAULT
@@ -23,6 +22,8 @@ from voxelmat.printing.mask import build_mask
 
 __all__ = ["dither_cell", "homogenise_blend"]
 
+# Relative uncertainty of a modulus that gets a caution.
+_UNSURE = 0.2
 # Elements along a side of the finest mesh; a cell larger than this would take hours.
 _LARGEST = 192
 
@@ -97,6 +98,12 @@ def _cautions(estimate: BlendEstimate) -> list[str]:
             "The extrapolated moduli lie outside the bounds by more than their uncertainty: no "
             "answer. Use finer refinements or a larger cell."
         )
+    for name, v in (("bulk", estimate.bulk_limit), ("shear", estimate.shear_limit)):
+        if v.uncertainty > _UNSURE * abs(v.value):
+            out.append(
+                f"The {name} modulus is not known well ({v.value:.3g} ± {v.uncertainty:.2g} MPa): "
+                f"where droplets of high contrast meet along edges, refinement converges slowly."
+            )
     out.append(
         "Computed for sharp, perfectly joined cubes of cured resin. Printed droplets blur into "
         "each other, so measured coupons decide; another seed shows the scatter of the cell."
@@ -121,7 +128,7 @@ def homogenise_blend(
     fractions: Blend | Mapping[str, float],
     *,
     cell: int = 16,
-    refinements: Sequence[int] = (1, 2, 3),
+    refinements: Sequence[int] = (1, 2, 3, 4),
     spacing: tuple[float, float, float] = (1.0, 1.0, 1.0),
     seed: int = 1,
     element: str = DEFAULT,
@@ -139,7 +146,7 @@ def homogenise_blend(
     resins, fractions, cell, spacing, seed
         See `dither_cell`.
     refinements : sequence of int
-        Elements a droplet along each axis, rising, two at least; three fit the order.
+        Elements a droplet along each axis, rising, two at least; three above 1 fit the order.
     element : str
         See `voxelmat.fea.element`.
     tol : float
@@ -160,7 +167,6 @@ def homogenise_blend(
     for done, r in enumerate(steps):
         monitor.report("refining", done=done, total=len(steps), elements=r)
         found.append(homogenise(part, element=element, tol=tol, refine=r, monitor=monitor))
-    h: NDArray[np.float64] = 1.0 / np.array(steps, dtype=np.float64)
     near = [f.isotropic for f in found]
     bulk, shear = tuple(n.bulk for n in near), tuple(n.shear for n in near)
     bulk_range, shear_range, placed = _bounds(part)
@@ -172,8 +178,8 @@ def homogenise_blend(
         bulk=bulk,
         shear=shear,
         distance=tuple(n.distance for n in near),
-        bulk_limit=limit(h, np.array(bulk)),
-        shear_limit=limit(h, np.array(shear)),
+        bulk_limit=limit(steps, bulk),
+        shear_limit=limit(steps, shear),
         bulk_range=bulk_range,
         shear_range=shear_range,
         iterations=tuple(sum(f.iterations) for f in found),
