@@ -12,6 +12,7 @@ from voxelmat.model.grid import VoxelGrid
 from voxelmat.model.loadcase import Force, LoadCase, Support
 from voxelmat.model.material import Constant, Material
 from voxelmat.model.part import Part
+from voxelmat.model.plate import Plate
 from voxelmat.model.region import Box, FaceRegion
 
 NEAR, FAR = FaceRegion(name="near", side="x-"), FaceRegion(name="far", side="x+")
@@ -56,6 +57,35 @@ def test_euler_column(shape, dense, monkeypatch):
     tip = found.shapes[:, -1, 0, 0, 1:]
     np.testing.assert_allclose(np.abs(found.shapes).max(axis=(1, 2, 3, 4)) > 0.5, True)
     np.testing.assert_allclose((tip**2).sum(axis=1), 1.0, rtol=0.01)
+
+
+# Effective length: ends of a column by what a rigid plate on its head may do (Euler, textbook
+# formula): P = pi^2 E I / (k L)^2. Translation and rotation given (0) or free (None).
+HEADS = {
+    "clamped": ((None, 0.0, 0.0), (0.0, 0.0, 0.0), 0.5),
+    "guided": ((None, None, None), (0.0, 0.0, 0.0), 1.0),
+    "pinned": ((None, 0.0, 0.0), (0.0, None, None), 0.69916),
+    "free": ((None, None, None), (0.0, None, None), 2.0),
+}
+
+
+@pytest.mark.parametrize("dense", [0, 3000])
+@pytest.mark.parametrize("head", HEADS)
+def test_column_under_a_rigid_plate(head, dense, monkeypatch):
+    monkeypatch.setattr(eigen, "_DENSE", dense)
+    translation, rotation, k = HEADS[head]
+    L = 60.0
+    plate = Plate(
+        name="head", region=FAR, translation=translation, rotation=rotation, force=(-1.0, 0.0, 0.0)
+    )
+    load = LoadCase(name="a", supports=(CLAMP,), plates=(plate,))
+    found = buckling(block((40, 1, 1), (L, 2.0, 2.0)), load, count=2)
+    P = np.pi**2 * 1000 * (2**4 / 12) / (k * L) ** 2
+    P = P / (1 + P / (5 / 6 * 500 * 4))  # shear (Engesser, from memory)
+    np.testing.assert_allclose(found.factors, P, rtol=0.004)
+    # The head stays a plane.
+    end = found.shapes[0, -1]
+    assert np.abs(end[0, 0] + end[1, 1] - end[0, 1] - end[1, 0]).max() < 1e-6
 
 
 def test_third_factor_of_the_column():
@@ -190,7 +220,7 @@ def test_what_is_not_held_is_refused():
     labels[5, :, 3] = 0
     labels[0, :, 3] = 0
     loose = block((6, 2, 4), (6.0, 2.0, 4.0)).replace(labels=labels)
-    with pytest.raises(InputError, match="pieces of the part are not held"):
+    with pytest.raises(InputError, match="1 pieces of the part are not held, first x 3 to 5"):
         buckling(loose, case(-1.0, 0.0, 0.0))
     with pytest.raises(InputError, match="count"):
         buckling(part, case(-1.0, 0.0, 0.0), count=0)

@@ -20,7 +20,7 @@ from voxelmat.fea.modal import modes
 from voxelmat.fea.operator import Stiffness
 from voxelmat.model.blend import EMPTY, Blend
 from voxelmat.model.grid import VoxelGrid
-from voxelmat.model.loadcase import GroundSpring, Support
+from voxelmat.model.loadcase import Foundation, GroundSpring, Support
 from voxelmat.model.material import Constant, Material
 from voxelmat.model.part import Part
 from voxelmat.model.region import Box, FaceRegion
@@ -295,6 +295,17 @@ def test_on_springs_alone_a_stiff_block_bounces_as_a_point(grid, resin):
     assert found.effective_share[0, 2] == pytest.approx(1.0, rel=1e-4)
 
 
+def test_on_a_foundation_a_stiff_block_bounces_as_a_point(grid, resin):
+    # f = sqrt(k A / m) / (2 pi) (formula); it slides freely, which two motions and a turn show
+    part = Part.uniform(grid(3, 3, 3), resin(E=1e6))
+    bed = Foundation(region=FaceRegion(name="bottom", side="z-"), stiffness=0.02)
+    found = modes(part, springs=[bed], count=3)
+    assert found.rigid == ("translation along x", "translation along y", "rotation about z")
+    bounce = np.argmax(found.effective_share[:, 2])
+    expected = np.sqrt(0.02 * 9 / part.mass) / (2 * np.pi)
+    assert found.frequencies[bounce] == pytest.approx(expected, rel=1e-3)
+
+
 def test_a_cut_pair_is_said(grid, resin):
     part = Part.uniform(grid(6, 2, 2), resin())
     assert any("ask for 2 modes" in c for c in modes(part, [ROOT], count=1).cautions)
@@ -325,6 +336,8 @@ def test_bad_input(grid, resin):
     part = Part.uniform(grid(3, 2, 2), resin())
     with pytest.raises(InputError, match="hold still"):
         modes(part, [Support(region=ROOT.region, displacement=(0.0, 0.0, 0.1))])
+    with pytest.raises(InputError, match="hold still"):
+        modes(part, [Support(region=ROOT.region, rotation=(0.0, 0.0, 0.1))])
     with pytest.raises(InputError, match="count must lie in 1 to 81"):
         modes(part, [ROOT], count=82)
     with pytest.raises(InputError, match="count"):

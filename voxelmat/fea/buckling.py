@@ -35,23 +35,46 @@ _FAR = 100.0
 _NEVER = 1.0
 
 
-def _system(static: StaticResult) -> tuple[Packed, GeometricStiffness]:
-    """Stiffness on free unknowns and initial-stress matrix, without loose pieces."""
+def _check(part: Part, case: LoadCase) -> None:
+    """Refuse what has no place in linear buckling, before anything is solved."""
+    if case.strains:
+        raise InputError(
+            f"Load case '{case.name}' holds a temperature or an initial strain; buckling takes "
+            f"forces, pressures, plates and given displacements. Leave it out."
+        )
+
+
+def _system(static: StaticResult, monitor: Monitor) -> tuple[Packed, GeometricStiffness]:
+    """Stiffness on free unknowns and initial-stress matrix; refuses loose pieces."""
     part = static.part
     lam, mu = moduli(part)
-    acts = assemble(part, static.load_case)
+    acts = assemble(part, static.load_case, everything=True)
     anchored = acts.held if acts.springs is None else acts.held | (acts.springs > 0)
+    if acts.plates is not None:
+        # That the plates are held in their turn, the static solve has seen to.
+        anchored = anchored | acts.plates.mask
     solid = mu > 0
-    if any(p.missing for p in find_pieces(solid, anchored, part.grid)):
+    loose = [p for p in find_pieces(solid, anchored, part.grid) if p.missing]
+    if loose:
         raise InputError(
-            "Some pieces of the part are not held; a static solve leaves them out, but buckling "
-            "needs a part that is held altogether. Remove the loose pieces, or hold them."
+            f"{len(loose)} pieces of the part are not held, first {loose[0].place}. A static solve "
+            f"leaves them out, but buckling needs a part that is held altogether. Remove the loose "
+            f"pieces, or hold them."
         )
     spacing, element = part.grid.spacing, static.element
     u = np.ascontiguousarray(static.displacement.T)
     stress = stress_modes(u, lam, mu, spacing, element)
-    held, springs = acts.held & touched_nodes(solid), acts.springs
-    packed = Packed(lam, mu, spacing, held, springs, element)
+    packed = Packed(
+        lam,
+        mu,
+        spacing,
+        acts.held & touched_nodes(solid),
+        acts.springs,
+        element,
+        beds=acts.beds,
+        plates=acts.plates,
+        monitor=monitor,
+    )
     return packed, GeometricStiffness(stress, solid, spacing)
 
 
@@ -59,7 +82,7 @@ class _Search:
     """-Kg x = t K x, t = 1 / factor: the largest t of the load, then of the load reversed."""
 
     def __init__(self, static: StaticResult, tol: float, maxiter: int, monitor: Monitor) -> None:
-        self.packed, self._geometric = _system(static)
+        self.packed, self._geometric = _system(static, monitor)
         _, mu = moduli(static.part)
         # Makes K of order 1.
         self._size = float(mu.max() * np.cbrt(static.part.grid.voxel_volume))
@@ -75,6 +98,7 @@ class _Search:
             precondition=lambda X: packed.precondition(X) * size,
             size=packed.size,
             largest=True,
+            project=packed.project if packed.has_plates else None,
             floor=floor,
         )
         pairs = extreme_pairs(
@@ -203,6 +227,7 @@ def buckling(
     started = utc_now()
     if count < 1:
         raise InputError(f"count must be at least 1; got {count}.")
+    _check(part, load_case)
     if static is None:
         static = solve(part, load_case, element=element, monitor=monitor)
     elif static.part != part or static.load_case is not load_case:

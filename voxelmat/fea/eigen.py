@@ -53,6 +53,8 @@ class Problem:
         Which end of the spectrum.
     fixed : ndarray or None, shape (r, n)
         B-orthonormal eigenvectors that are known and left out.
+    project : callable or None
+        Onto the space that A and B act in, where it is not all of it.
     floor : float
         Where `largest`: stop early when no value seems to get above this.
     """
@@ -63,6 +65,7 @@ class Problem:
     size: int
     largest: bool
     fixed: Double | None = None
+    project: Block | None = None
     floor: float = 0.0
 
 
@@ -97,6 +100,9 @@ def _dense(problem: Problem, count: int) -> tuple[Double, Double]:
     basis = np.eye(problem.size)
     A, B = problem.A(basis), problem.B(basis)
     A, B = (A + A.T) / 2, (B + B.T) / 2
+    if problem.project is not None:
+        basis = scipy.linalg.orth(problem.project(basis), rcond=0.5)
+        A, B = basis.T @ A @ basis, basis.T @ B @ basis
     if problem.fixed is not None and len(problem.fixed):
         basis = scipy.linalg.null_space(problem.B(problem.fixed))
         A, B = basis.T @ A @ basis, basis.T @ B @ basis

@@ -17,7 +17,7 @@ from voxelmat.fea.operator import touched_nodes
 from voxelmat.fea.system import LinearSystem
 from voxelmat.kernels.threads import threads
 from voxelmat.model.harmonicresult import HarmonicResult
-from voxelmat.model.loadcase import GroundSpring, Load, LoadCase
+from voxelmat.model.loadcase import Foundation, GroundSpring, Load, LoadCase
 from voxelmat.model.modalresult import ModalResult
 from voxelmat.model.part import Part
 from voxelmat.monitor import SILENT, Monitor
@@ -70,7 +70,7 @@ def _grid(modal: ModalResult, monitor: Monitor) -> _Grid:
 def _force(modal: ModalResult, grid: _Grid, base: Vector | None, loads: Sequence[Load]) -> Double:
     """Amplitude of the nodal forces, N; for a base, of those at 1 rad/s."""
     if base is None:
-        if any(isinstance(load, GroundSpring) for load in loads):
+        if any(isinstance(load, GroundSpring | Foundation) for load in loads):
             raise InputError("A spring is no force; give it to the modal run.")
         return assemble(modal.part, LoadCase(name="a harmonic run", loads=tuple(loads))).force
     if not (modal.supports or modal.springs):

@@ -17,7 +17,7 @@ from voxelmat.fea.operator import touched_nodes
 from voxelmat.fea.packed import Packed
 from voxelmat.fea.rigid import check_one_body, rigid_fields, rigid_motions
 from voxelmat.kernels.threads import threads
-from voxelmat.model.loadcase import GroundSpring, LoadCase, Support
+from voxelmat.model.loadcase import Foundation, GroundSpring, LoadCase, Support
 from voxelmat.model.modalresult import ModalResult
 from voxelmat.model.part import Part
 from voxelmat.monitor import SILENT, Monitor
@@ -37,7 +37,7 @@ _LOST_MASS = 0.01
 
 
 def anchors(
-    part: Part, supports: Sequence[Support], springs: Sequence[GroundSpring], what: str
+    part: Part, supports: Sequence[Support], springs: Sequence[GroundSpring | Foundation], what: str
 ) -> tuple[Assembled, NDArray[np.bool_]]:
     """Supports and springs as arrays, and the unknowns ``[3, ...]`` that either acts on.
 
@@ -47,10 +47,11 @@ def anchors(
         A support that is to move, or a region without material.
     """
     for support in supports:
-        if any(d for d in support.displacement if d is not None):
+        if support.moves:
             raise InputError(
                 f"The support on '{support.region.name}' gives a displacement of "
-                f"{support.displacement} mm; the supports of {what} hold still, so give 0 or None."
+                f"{support.displacement} mm and a rotation of {support.rotation} rad; the supports "
+                f"of {what} hold still, so give 0 or None."
             )
     case = LoadCase(name=what, supports=tuple(supports), loads=tuple(springs))
     acts = assemble(part, case)
@@ -137,7 +138,7 @@ def modes(
     part: Part,
     supports: Sequence[Support] = (),
     *,
-    springs: Sequence[GroundSpring] = (),
+    springs: Sequence[GroundSpring | Foundation] = (),
     count: int = 6,
     mass: str = "consistent",
     element: str = DEFAULT,
@@ -154,8 +155,8 @@ def modes(
         six of a free part) are taken out exactly and do not count as modes.
     supports : sequence of Support
         Held at 0.
-    springs : sequence of GroundSpring
-        From regions to the ground.
+    springs : sequence of GroundSpring or Foundation
+        From regions to the ground; a foundation whose surface slopes is refused.
     count : int
         How many modes.
     mass : str

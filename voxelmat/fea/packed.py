@@ -7,12 +7,16 @@ from collections.abc import Callable
 import numpy as np
 from numpy.typing import NDArray
 
+from voxelmat.fea.bed import Bed, Coupled
 from voxelmat.fea.element import Spacing
-from voxelmat.fea.multigrid import Grid, make_preconditioner
+from voxelmat.fea.krylov import Operator
+from voxelmat.fea.multigrid import Grid, Preconditioner, make_preconditioner
 from voxelmat.fea.operator import Stiffness, touched_nodes
+from voxelmat.fea.plate_solver import PlatePreconditioner
+from voxelmat.fea.plates import PlateSet
 from voxelmat.fea.system import first_method
 from voxelmat.kernels.threads import crew
-from voxelmat.monitor import computing
+from voxelmat.monitor import SILENT, Monitor, computing
 
 __all__ = ["Packed"]
 
@@ -34,6 +38,11 @@ class Packed:
     springs : ndarray of float64 or None, shape of `held`
         To ground, N/mm.
     element : str
+    beds : tuple of Bed
+        Foundations whose diagonals are among the springs.
+    plates : PlateSet or None
+        Nodes that move rigidly; every product then ends in that space.
+    monitor : Monitor
     """
 
     def __init__(
@@ -44,6 +53,10 @@ class Packed:
         held: NDArray[np.bool_],
         springs: Double | None,
         element: str,
+        *,
+        beds: tuple[Bed, ...] = (),
+        plates: PlateSet | None = None,
+        monitor: Monitor = SILENT,
     ) -> None:
         self.shape = held.shape
         touched = touched_nodes(mu > 0)
@@ -51,15 +64,31 @@ class Packed:
         #: Position of each free unknown in the flattened field.
         self.index = np.flatnonzero(~held & touched)
         self._nodes = int(touched.size)
-        self._stiffness = Stiffness(lam, mu, spacing, element, springs)
+        K = Stiffness(lam, mu, spacing, element, springs)
+        leaning = tuple(bed for bed in beds if bed.leans)
+        self._stiffness: Operator = Coupled(K, leaning) if leaning else K
+        self._plates = plates
+        inner = held if plates is None else held | (plates.mask & touched)
         with computing():
-            grid = Grid(lam, mu, spacing, element, held, touched, springs)
-            self._cycle = make_preconditioner(grid, first_method(lam, mu, spacing, held))
+            grid = Grid(lam, mu, spacing, element, inner, touched, springs)
+            self._cycle: Preconditioner = make_preconditioner(
+                grid, first_method(lam, mu, spacing, inner)
+            )
+            if plates is not None:
+                free = (~held & touched).astype(np.uint8)
+                self._cycle = PlatePreconditioner(
+                    self._cycle, self._stiffness, plates, free, monitor
+                )
 
     @property
     def size(self) -> int:
         """Number of free unknowns."""
         return int(self.index.size)
+
+    @property
+    def has_plates(self) -> bool:
+        """Whether some nodes move rigidly."""
+        return self._plates is not None
 
     @property
     def method(self) -> str:
@@ -84,8 +113,14 @@ class Packed:
             for x, row in zip(X, out, strict=True):
                 u.ravel()[self.index] = x
                 product(u, y)
+                if self._plates is not None:
+                    self._plates.project(y)
                 np.take(y.ravel(), self.index, out=row)
         return out
+
+    def project(self, X: Double) -> Double:
+        """Each row with plates moving rigidly."""
+        return self.apply(lambda u, y: np.copyto(y, u), X)
 
     def stiffness(self, X: Double) -> Double:
         """K X, N."""

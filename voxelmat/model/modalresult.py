@@ -8,7 +8,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from voxelmat.errors import InputError
-from voxelmat.model.loadcase import GroundSpring, Support
+from voxelmat.model.loadcase import Foundation, GroundSpring, Support
 from voxelmat.model.part import Part
 from voxelmat.model.region import Region
 from voxelmat.provenance import Provenance
@@ -26,7 +26,7 @@ class ModalResult:
     ----------
     part : Part
     supports : tuple of Support
-    springs : tuple of GroundSpring
+    springs : tuple of GroundSpring or Foundation
     frequencies : ndarray of float64, shape (n,)
         Hz, ascending.
     shapes : ndarray of float64, shape (n, nx+1, ny+1, nz+1, 3)
@@ -51,7 +51,7 @@ class ModalResult:
 
     part: Part
     supports: tuple[Support, ...]
-    springs: tuple[GroundSpring, ...]
+    springs: tuple[GroundSpring | Foundation, ...]
     frequencies: Double
     shapes: Double
     residuals: Double
