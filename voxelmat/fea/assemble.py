@@ -195,7 +195,7 @@ def assemble(part: Part, case: LoadCase, *, everything: bool = False) -> Assembl
             np.add.at(force[d], nodal.node, nodal.force[:, d])
     if not everything:
         _refuse(case, tuple(beds))
-    plates = bind_plates(part, case.plates, held, names, owner)
+    plates = bind_plates(part, case.plates, held, given, names, owner)
     for p in plates.plates if plates is not None else ():
         force[:, p.node] += p.force
     return Assembled(

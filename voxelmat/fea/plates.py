@@ -20,6 +20,8 @@ Vector = tuple[float, float, float]
 
 # Nodes lie on one line where the rotation about it moves them by less than this share.
 _LINE = 1e-6
+# Plate and support say the same where they differ by less, mm or unit motions.
+_SAME = 1e-12
 
 
 def _vector(v: Double) -> Vector:
@@ -165,8 +167,25 @@ def _bind(part: Part, plate: Plate) -> BoundPlate:
     )
 
 
+def _take_over(new: BoundPlate, held: Bools, given: Double) -> Bools:
+    """Let a plate hold what a support holds to the same value; what remains held, (3, n)."""
+    flat, value = held.reshape(3, -1), given.reshape(3, -1)
+    on = flat[:, new.node]
+    loose = np.abs(new.free).sum(axis=2) > _SAME
+    off = np.abs(new.given - value[:, new.node])
+    agree = on & ~loose & (off <= _SAME * max(1.0, float(np.abs(given).max())))
+    flat[:, new.node] = on & ~agree
+    value[:, new.node] = np.where(agree, 0.0, value[:, new.node])
+    return np.asarray(on & ~agree)
+
+
 def bind_plates(
-    part: Part, plates: Sequence[Plate], held: Bools, names: Sequence[str], owner: NDArray[np.int16]
+    part: Part,
+    plates: Sequence[Plate],
+    held: Bools,
+    given: Double,
+    names: Sequence[str],
+    owner: NDArray[np.int16],
 ) -> PlateSet | None:
     """Lay plates on a part; None where there are none.
 
@@ -174,8 +193,9 @@ def bind_plates(
     ----------
     part : Part
     plates : sequence of Plate
-    held : ndarray of bool, shape (3, nz+1, ny+1, nx+1)
-        What supports hold; a node belongs to one of both.
+    held, given : ndarray, shape (3, nz+1, ny+1, nx+1)
+        What supports hold, and where, mm. Where a plate's given motion says the same, as at the
+        edge of a symmetry plane, the plate takes over: changed in place.
     names, owner
         Of the supports, for messages.
 
@@ -183,11 +203,11 @@ def bind_plates(
     ------
     InputError
         A region without nodes or with nodes on a line; a node of two plates, or of a plate and a
-        support.
+        support that says otherwise.
     """
     if not plates:
         return None
-    bound = []
+    bound: list[BoundPlate] = []
     mask = np.zeros(held.shape[1:], dtype=bool)
     for plate in plates:
         new = _bind(part, plate)
@@ -198,14 +218,15 @@ def bind_plates(
                 f"Plates '{other}' and '{plate.name}' share {int(clash.sum())} nodes; two bodies "
                 f"cannot own one node. Keep the regions a voxel apart, or make them one plate."
             )
-        on = held.reshape(3, -1)[:, new.node]
+        on = _take_over(new, held, given)
         if on.any():
             d, n = (int(v) for v in np.argwhere(on)[0])
             support = names[int(owner.reshape(3, -1)[d, new.node[n]])]
             raise InputError(
-                f"Plate '{plate.name}' shares {int(on.any(axis=0).sum())} nodes with {support}. "
-                f"Hold the plate itself by giving its translation or rotation, or keep the two "
-                f"regions a voxel apart."
+                f"Plate '{plate.name}' shares {int(on.any(axis=0).sum())} nodes with {support}, "
+                f"which holds them along {'xyz'[d]}; the plate's given motion does not. Give the "
+                f"plate the same translation along {'xyz'[d]} and no rotation out of it, or keep "
+                f"the two regions a voxel apart."
             )
         mask.ravel()[new.node] = True
         bound.append(new)

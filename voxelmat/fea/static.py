@@ -147,7 +147,7 @@ def _result(
         cautions=tuple(notes),
         provenance=Provenance(
             inputs={"part": part.digest},
-            threads=int(threads()),  # type: ignore[no-untyped-call]
+            threads=int(threads()),
             started_utc=started,
             finished_utc=utc_now(),
         ),
