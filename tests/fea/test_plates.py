@@ -39,7 +39,9 @@ def twin(part, case, assembled):
     for plate in case.plates:
         nodes = np.flatnonzero(plate.region.nodes(part).ravel(order="F"))
         plate_of[nodes] = True
-        about = np.array(plate.point) if plate.point else np.array([c[nodes].mean() for c in (x, y, z)])
+        about = (
+            np.array(plate.point) if plate.point else np.array([c[nodes].mean() for c in (x, y, z)])
+        )
         r = np.stack([x, y, z], axis=1)[nodes] - about
         for d, value in enumerate(plate.given):
             u = np.zeros((3, size))
