@@ -8,14 +8,23 @@ from hypothesis import strategies as st
 from voxelmat.errors import ConvergenceError, InputError
 from voxelmat.fea.active_set import Pressed
 from voxelmat.fea.contact import contact, press
+from voxelmat.fea.contact_static import static_result
 from voxelmat.fea.contact_surface import touch_surface
 from voxelmat.fea.static import solve
 from voxelmat.model.blend import EMPTY, Blend
 from voxelmat.model.grid import VoxelGrid
 from voxelmat.model.indenter import CylinderIndenter, FlatPunch, MeshIndenter, SphereIndenter
-from voxelmat.model.loadcase import BodyForce, GroundSpring, LoadCase, Support
+from voxelmat.model.loadcase import (
+    BodyForce,
+    Foundation,
+    GroundSpring,
+    InitialStrain,
+    LoadCase,
+    Support,
+)
 from voxelmat.model.mesh import TriangleMesh
 from voxelmat.model.part import Part
+from voxelmat.model.plate import Plate
 from voxelmat.model.region import FaceRegion
 
 FLOOR = Support(region=FaceRegion(name="floor", side="z-"))
@@ -129,6 +138,29 @@ def test_plane_on_a_confined_column_is_the_linear_answer(grid, resin):
     push = Support(region=FaceRegion(name="top", side="z+"), displacement=(None, None, -0.2))
     linear = solve(part, LoadCase(name="b", supports=(*supports, push)), tol=1e-10)
     np.testing.assert_allclose(found.displacement, linear.displacement, atol=1e-8)
+    static = static_result(found)
+    np.testing.assert_allclose(static.stress, linear.stress, atol=1e-5)
+    assert static.energy == pytest.approx(linear.energy, rel=1e-6)
+    # all the work is the indenter's
+    assert static.energy == pytest.approx(0.5 * found.force * 0.2, rel=1e-6)
+    assert static.resultants == {"indenter 'indenter'": (0.0, 0.0, -found.force)}
+
+
+def test_a_column_on_a_bed_that_grows_warm(grid, resin):
+    part = Part.uniform(grid(3, 3, 4), resin(E=10.0, nu=0.3))
+    supports = slides("x-", "x+", "y-", "y+")
+    # k = p / d of the bed in series with the confined column (formula)
+    bed = Foundation(region=FaceRegion(name="floor", side="z-"), stiffness=0.5)
+    swell = InitialStrain(strain=(0.01, 0.01, 0.01, 0.0, 0.0, 0.0))
+    case = LoadCase(name="a", supports=supports, loads=(bed, swell))
+    found = contact(part, case, FlatPunch(), depth_mm=0.2)
+    M = 10 * 0.7 / (1.3 * 0.4)
+    # stress 0 in all directions at strain .01; held across, so it grows by (1 + nu)/(1 - nu) .01
+    grows = 0.01 * 1.3 / 0.7 * 4.0
+    assert found.force == pytest.approx(9 * (0.2 + grows) / (4.0 / M + 1 / 0.5), rel=1e-6)
+    assert found.balance < 1e-6
+    static = static_result(found)
+    np.testing.assert_allclose(static.stress[..., 2], -found.force / 9.0, rtol=1e-5)
 
 
 def two_phase(seed, resin, shape=(6, 5, 4)):
@@ -166,6 +198,7 @@ def test_complementary_and_in_balance_on_random_parts(resin, seed, kind):
     assert found.balance < 1e-6
     pushed = np.array([0.0, 0.0, -found.force])
     total = np.sum([*found.reactions.values(), found.applied, pushed], axis=0)
+    assert found.force > 0
     np.testing.assert_allclose(total, 0.0, atol=1e-6 * found.force)
 
 
@@ -277,6 +310,24 @@ def test_the_gap_is_that_of_the_true_surface(resin, what, within):
     assert np.abs(bare.gap - (x**2 + y**2) / 20.0)[inside].max() > 0.4 * 0.25
 
 
+@pytest.mark.parametrize("known", [True, False])
+def test_a_step_is_no_slope(resin, grid, known):
+    # a ledge one voxel high: only what stands proud is touched, up to its rim
+    labels = np.ones((6, 4, 4), dtype=np.uint16)
+    labels[3:, :, 3] = 0
+    g = grid(6, 4, 4)
+    x, _, z = np.meshgrid(*g.centres(), indexing="ij")
+    level = np.where(x < 3, np.maximum(z - 4, -99), z - 3)
+    distance = np.round(16 * level).astype(np.int8) if known else None
+    palette = (EMPTY, Blend.pure("rigid-example"))
+    part = Part(grid=g, resins=(resin(),), palette=palette, labels=labels, distance=distance)
+    surface = touch_surface(part, FlatPunch(position=(0.0, 0.0, 5.0)))
+    high = surface.node[:, 2] == 4
+    np.testing.assert_allclose(surface.gap, np.where(high, 0.0, 1.0), atol=1e-12)
+    assert surface.touch == pytest.approx(1.0)
+    np.testing.assert_allclose(surface.true_area, surface.area)
+
+
 def test_areas_of_a_slope(resin, grid):
     # a plane at 26.6 degrees: true area is sqrt(1.25) times the projected one
     g = grid(12, 6, 12)
@@ -319,6 +370,10 @@ def test_clear_errors(resin, grid, monkeypatch):
         contact(part, case, FlatPunch(radius=0.2, position=(2.5, 2.5, 9.0)), depth_mm=0.1)
     with pytest.raises(InputError, match="is not held"):
         contact(part, LoadCase(name="a", supports=slides("x-")), FlatPunch(), depth_mm=0.1)
+    plate = Plate(name="lid", region=FaceRegion(name="lid", side="z+"))
+    lid = LoadCase(name="a", supports=(FLOOR,), plates=(plate,))
+    with pytest.raises(InputError, match="rigid plates"):
+        contact(part, lid, FlatPunch(), depth_mm=0.1)
     with pytest.raises(InputError, match="must be above 0 mm and rise"):
         press(part, (FLOOR,), FlatPunch(), [0.2, 0.1])
     with pytest.raises(InputError, match="one or more depths"):

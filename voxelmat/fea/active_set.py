@@ -14,6 +14,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from voxelmat.errors import ConvergenceError
+from voxelmat.fea.bed import Bed
 from voxelmat.fea.contact_surface import TouchSurface
 from voxelmat.fea.element import Spacing
 from voxelmat.fea.system import LinearSystem
@@ -51,6 +52,8 @@ class Contact:
         N/mm.
     changes : tuple of int
     iterations : int
+    residual : float
+        Of the last linear solve.
     """
 
     depth: float
@@ -63,6 +66,7 @@ class Contact:
     tangent: float
     changes: tuple[int, ...]
     iterations: int
+    residual: float
 
     @property
     def force(self) -> float:
@@ -83,6 +87,8 @@ class Pressed:
         mm at held unknowns, N at the others.
     springs : ndarray or None
         N/mm.
+    beds : tuple of Bed
+        Elastic foundations.
     surface : TouchSurface
     element : str
     tol : float
@@ -99,6 +105,7 @@ class Pressed:
         prescribed: Double,
         force: Double,
         springs: Double | None,
+        beds: tuple[Bed, ...],
         surface: TouchSurface,
         *,
         element: str,
@@ -108,6 +115,7 @@ class Pressed:
         self.surface = surface
         self._material = lam, mu, spacing
         self._held, self._given, self._force, self._springs = held, prescribed, force, springs
+        self._beds = beds
         self._element, self._tol, self._monitor = element, tol, monitor
         # A node that a support holds along the push stays where the support has it.
         self._can = np.isfinite(surface.gap) & ~held[surface.axis].ravel()[surface.flat]
@@ -127,6 +135,7 @@ class Pressed:
                 spacing,
                 held,
                 springs=self._springs,
+                beds=self._beds,
                 element=self._element,
                 monitor=self._monitor,
             )
@@ -212,6 +221,7 @@ class Pressed:
             tangent=tangent,
             changes=tuple(changes),
             iterations=iterations + more,
+            residual=solution.residual,
         )
 
     def _slope(

@@ -7,6 +7,7 @@ from dataclasses import replace
 import numpy as np
 from numpy.typing import NDArray
 
+from voxelmat.errors import InputError
 from voxelmat.fea.active_set import Contact, Pressed
 from voxelmat.fea.assemble import Assembled, assemble, moduli
 from voxelmat.fea.cautions import record_cautions
@@ -57,7 +58,12 @@ class ContactJob:
         self.part, self.case, self.indenter, self.element = part, case, indenter, element
         surface = touch_surface(part, indenter)
         lam, mu = moduli(part)
-        acts = assemble(part, case)
+        acts = assemble(part, case, everything=True)
+        if acts.plates is not None:
+            raise InputError(
+                f"Load case '{case.name}' has rigid plates, which contact cannot take into account "
+                f"yet. Leave them out, or use the indenter in place of the plate."
+            )
         anchored = acts.held if acts.springs is None else acts.held | (acts.springs > 0)
         loaded = np.any(acts.force != 0, axis=0)
         loaded.ravel()[surface.flat[np.isfinite(surface.gap)]] = True
@@ -65,14 +71,19 @@ class ContactJob:
         touched = touched_nodes(keep)
         self.acts: Assembled = replace(acts, force=acts.force * touched, held=acts.held & touched)
         springs = None if acts.springs is None else acts.springs * touched
+        lam, mu = lam * keep, mu * keep
+        force = self.acts.force
+        if acts.free is not None:
+            force = force + acts.free.forces(lam, mu, part.grid.spacing, element)
         self.pressed = Pressed(
-            lam * keep,
-            mu * keep,
+            lam,
+            mu,
             part.grid.spacing,
             self.acts.held,
             acts.prescribed,
-            self.acts.force,
+            force,
             springs,
+            acts.beds,
             surface,
             element=element,
             tol=tol,
@@ -113,6 +124,7 @@ class ContactJob:
             balance=balance,
             changes=found.changes,
             iterations=found.iterations,
+            residual=found.residual,
             element=self.element,
             cautions=(*self.cautions, *self._notes(found)),
             provenance=Provenance(
@@ -132,6 +144,8 @@ class ContactJob:
         for name, node, stiffness in self.acts.ground:
             moved = found.u.reshape(3, -1)[:, node].T
             out[name] = _vector(-(stiffness * moved).sum(axis=0))
+        for bed in self.acts.beds:
+            out[bed.name] = _vector(bed.push(found.u).sum(axis=0))
         applied = self.acts.force.reshape(3, -1).sum(axis=1)
         pushed = np.zeros(3)
         pushed[self.surface.axis] = self.surface.sign * found.force

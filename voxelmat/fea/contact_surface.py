@@ -10,11 +10,12 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
+import scipy.ndimage
 from numpy.typing import NDArray
 
 from voxelmat.errors import InputError
 from voxelmat.model.indenter import Indenter, across
-from voxelmat.model.part import Part
+from voxelmat.model.part import DISTANCE_STEPS, Part
 from voxelmat.model.region import parse_side
 from voxelmat.model.surface import Faces, exposed_faces, visible_from
 
@@ -23,8 +24,9 @@ __all__ = ["TouchSurface", "touch_surface"]
 Double = NDArray[np.float64]
 Ints = NDArray[np.intp]
 
-# Columns whose heights differ by more voxels than this are two surfaces with a step between.
-_STEP = 1.5
+# Neighbouring columns are of one surface up to this many voxels of rise where the slope goes on,
+# and up to the smaller number anywhere; ours.
+_STEP, _FLAT = 1.5, 0.25
 # Weights of four values in a row for the one in their middle, exact for a cubic.
 _MIDDLE = np.array([-1.0, 9.0, 9.0, -1.0]) / 16.0
 
@@ -76,18 +78,21 @@ def _face_heights(part: Part, faces: Faces, axis: int, outward: int) -> Double:
     h = part.grid.spacing[axis]
     base = faces.centre[:, axis]
     inner = tuple(faces.voxel.T)
-    beyond = faces.voxel.copy()
+    top = part.grid.shape[axis] - 1
+    beyond, before = faces.voxel.copy(), faces.voxel.copy()
     beyond[:, axis] += outward
-    inside = (beyond[:, axis] >= 0) & (beyond[:, axis] < part.grid.shape[axis])
-    outer = tuple(np.clip(beyond, 0, np.array(part.grid.shape) - 1).T)
+    before[:, axis] = np.clip(before[:, axis] - outward, 0, top)
+    inside = (beyond[:, axis] >= 0) & (beyond[:, axis] <= top)
+    beyond[:, axis] = np.clip(beyond[:, axis], 0, top)
+    outer = tuple(beyond.T)
     if part.distance is not None:
-        near = part.distance[inner].astype(np.float64)
-        far = part.distance[outer].astype(np.float64)
-        crosses = inside & (near < 0) & (far > 0)
-        share = np.divide(near, near - far, out=np.full(len(near), 0.5), where=crosses)
-        # Beyond the grid, or where the voxel's centre is outside the shape, the slope helps out.
-        step = 16.0 * h / min(part.grid.spacing) * np.maximum(outward * faces.normal[:, axis], 0.5)
-        offset = np.where(crosses, share - 0.5, -near / step - 0.5)
+        level = part.distance
+        near = level[inner].astype(np.float64)
+        # Change over one voxel outwards; at the edge of the grid the change over the last one.
+        rate = np.where(inside, level[outer] - near, near - level[tuple(before.T)])
+        full = DISTANCE_STEPS * h / min(part.grid.spacing)
+        # Beside a corner the nearest surface may be another one: then as if the face were flat.
+        offset = -near / np.where(rate >= 0.5 * full, rate, full) - 0.5
     elif part.occupancy is not None:
         fill = part.occupancy / 255.0
         offset = fill[inner] - 1.0 + np.where(inside, fill[outer], 0.0)
@@ -96,29 +101,42 @@ def _face_heights(part: Part, faces: Faces, axis: int, outward: int) -> Double:
     return np.asarray(base + outward * h * np.clip(offset, -1.0, 1.0))
 
 
-def _slope(height: Double, axis: int, h: float, step: float) -> Double:
-    """Slope of a height map, from the neighbours that belong to the same surface."""
-    padded = np.pad(height, 1, constant_values=np.nan)
-    ahead = np.roll(padded, -1, axis)[1:-1, 1:-1] - height
-    behind = height - np.roll(padded, 1, axis)[1:-1, 1:-1]
-    both = np.stack([ahead, behind])
-    good = np.abs(both) <= step  # False where nan
-    count = good.sum(axis=0)
-    return np.asarray(np.where(good, both, 0.0).sum(axis=0) / np.maximum(count, 1) / h)
+def _joined(height: Double, axis: int, h: float) -> NDArray[np.bool_]:
+    """Whether neighbouring columns along an axis of the map belong to one smooth surface.
+
+    A slope goes on beyond a pair of columns, on one side at least; a step does not.
+    """
+    jump = np.abs(np.diff(height, axis=axis))
+    known = np.isfinite(jump)
+    wide = [(0, 0), (0, 0)]
+    wide[axis] = (1, 1)
+    padded = np.moveaxis(np.pad(np.where(known, jump, 0.0), wide), axis, 0)
+    beside = np.moveaxis(np.maximum(padded[:-2], padded[2:]), 0, axis)
+    limit = np.minimum(_FLAT * h + 2.0 * beside, _STEP * h)
+    return np.asarray(known & (np.where(known, jump, np.inf) <= limit))
 
 
-def _node_heights(height: Double, at: Ints, own: Double, step: float) -> Double:
-    """Height of nodes ``at`` (m, 2) of the map, whose own faces have the mean height `own`."""
-    padded = np.pad(height, 2, constant_values=np.nan)
+def _slope(height: Double, axis: int, joined: NDArray[np.bool_], h: float) -> Double:
+    """Slope of a height map at each column, from the neighbours that it is joined to."""
+    rise = np.moveaxis(np.where(joined, np.diff(height, axis=axis), 0.0), axis, 0)
+    here = np.moveaxis(joined, axis, 0).astype(float)
+    edge = [(1, 1), (0, 0)]
+    rise, here = np.pad(rise, edge), np.pad(here, edge)
+    total, count = rise[1:] + rise[:-1], here[1:] + here[:-1]
+    return np.asarray(np.moveaxis(total / np.maximum(count, 1.0) / h, 0, axis))
+
+
+def _node_heights(height: Double, at: Ints, own: Double, joined: list[NDArray[np.bool_]]) -> Double:
+    """Height of nodes ``at`` (m, 2) of the map; `own` (m,), that of their faces, at a step."""
     u, v = at.T
+    along_u, along_v = (np.pad(j, 1) for j in joined)
+    smooth = along_u[:, :-1] & along_u[:, 1:] & along_v[:-1] & along_v[1:]
+    finer = scipy.ndimage.binary_erosion(smooth, np.ones((3, 3), dtype=bool))[u, v]
+    padded = np.pad(height, 2, constant_values=np.nan)
     patch = np.stack([[padded[u + a, v + b] for b in range(4)] for a in range(4)])
-    four = patch[1:3, 1:3].reshape(4, -1)
-    good = np.abs(four - own) <= step
-    mean = np.where(good, four, 0.0).sum(axis=0) / np.maximum(good.sum(axis=0), 1)
-    mean = np.where(good.any(axis=0), mean, own)
-    smooth = np.all(np.abs(patch - own) <= 2 * step, axis=(0, 1)) & good.all(axis=0)
-    fine = np.einsum("a,b,abm->m", _MIDDLE, _MIDDLE, np.where(smooth, patch, 0.0))
-    return np.asarray(np.where(smooth, fine, mean))
+    out = np.where(smooth[u, v], patch[1:3, 1:3].mean(axis=(0, 1)), own)
+    fine = np.einsum("a,b,abm->m", _MIDDLE, _MIDDLE, np.where(finer, patch, 0.0))
+    return np.asarray(np.where(finer, fine, out))
 
 
 def touch_surface(part: Part, indenter: Indenter) -> TouchSurface:
@@ -142,9 +160,10 @@ def touch_surface(part: Part, indenter: Indenter) -> TouchSurface:
     crossing = _face_heights(part, faces, axis, -sign)
     height = np.full((grid.shape[a], grid.shape[b]), np.nan)
     height[tuple(columns.T)] = crossing
-    step = _STEP * grid.spacing[axis]
-    tilt = [_slope(height, n, grid.spacing[d], step) for n, d in enumerate((a, b))]
-    stretch = np.sqrt(1.0 + tilt[0] ** 2 + tilt[1] ** 2)[tuple(columns.T)]
+    known = part.distance is not None or part.occupancy is not None
+    joined = [_joined(height, n, grid.spacing[axis]) for n in (0, 1)]
+    tilt = [_slope(height, n, joined[n], grid.spacing[d]) for n, d in enumerate((a, b))]
+    stretch = np.sqrt(1.0 + tilt[0] ** 2 + tilt[1] ** 2)[tuple(columns.T)] if known else 1.0
 
     nodes = np.repeat(faces.voxel[:, None], 4, axis=1)
     nodes[:, :, axis] += -sign > 0
@@ -159,7 +178,9 @@ def touch_surface(part: Part, indenter: Indenter) -> TouchSurface:
 
     own = gathered(crossing) / gathered(np.ones(len(faces)))
     points = np.column_stack([c[n] for c, n in zip(grid.nodes(), node.T, strict=True)])
-    points[:, axis] = _node_heights(height, node[:, [a, b]], own, step)
+    points[:, axis] = own
+    if known:
+        points[:, axis] = _node_heights(height, node[:, [a, b]], own, joined)
     gap, normal = indenter.gap(points)
     middles = faces.centre.copy()
     middles[:, axis] = crossing

@@ -67,6 +67,8 @@ class ContactResult:
         Nodes that came into or out of contact in each round; the last is 0.
     iterations : int
         Of the linear solver, all rounds together.
+    residual : float
+        Of the last linear solve, relative to its load.
     element : str
     cautions : tuple of str
     provenance : Provenance
@@ -92,6 +94,7 @@ class ContactResult:
     balance: float
     changes: tuple[int, ...]
     iterations: int
+    residual: float
     element: str = "icmb"
     cautions: tuple[str, ...] = ()
     provenance: Provenance = field(default_factory=Provenance)
