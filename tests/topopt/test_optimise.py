@@ -346,6 +346,10 @@ def test_targets_are_checked():
     s = DesignSpec(resins=("soft", "rigid"), void=False, filter_radius=1.5, objective=good)
     with pytest.raises(InputError, match="names load case 'pres'"):
         optimise(part, [case], s)
+    labels = part.labels.copy()
+    labels[0, 0] = 0
+    with pytest.raises(InputError, match="1 of 25 nodes of the target deflection touch no"):
+        optimise(part.replace(labels=labels), [case], s)
     with pytest.raises(InputError, match="no node"):
         TargetDeflection(nodes=nodes & False, target=good.target)
     with pytest.raises(InputError, match="no number"):
@@ -356,6 +360,11 @@ def test_targets_are_checked():
         TargetDeflection(nodes=nodes, target=good.target[:-1])
     with pytest.raises(InputError, match="direction"):
         TargetDeflection(nodes=nodes, target=good.target, direction=(0, 0, 0))
+
+
+def test_a_filter_that_does_nothing_is_said():
+    result = optimise(block(), [tip()], spec(filter_radius=0.9, iterations=1))
+    assert any("nothing is smoothed" in n for n in result.notes)
 
 
 def test_asymmetric_shape_is_refused_under_symmetry():

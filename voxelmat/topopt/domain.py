@@ -11,6 +11,7 @@ from voxelmat.errors import InputError
 from voxelmat.fea.assemble import moduli
 from voxelmat.model.design_spec import DesignSpec, ResinLimit, TargetDeflection
 from voxelmat.model.part import DISTANCE_STEPS, Part
+from voxelmat.model.region import solid_nodes
 from voxelmat.topopt.outline import staircase_distance
 from voxelmat.topopt.physics import Case
 from voxelmat.topopt.unknowns import Choice
@@ -139,11 +140,21 @@ def _check_shapes(part: Part, spec: DesignSpec) -> None:
             )
         if mask is not None and not (mask & part.solid).any():
             raise InputError(f"The region '{name}' holds no voxel of the shape.")
-    target = spec.objective
-    if isinstance(target, TargetDeflection) and target.nodes.shape != part.grid.node_shape:
+    if isinstance(spec.objective, TargetDeflection):
+        _check_target(part, spec.objective)
+
+
+def _check_target(part: Part, target: TargetDeflection) -> None:
+    if target.nodes.shape != part.grid.node_shape:
         raise InputError(
             f"The target deflection has nodes of shape {target.nodes.shape}; the grid has "
             f"{part.grid.node_shape}."
+        )
+    off = int((target.nodes & ~solid_nodes(part.solid)).sum())
+    if off:
+        raise InputError(
+            f"{off} of {int(target.nodes.sum())} nodes of the target deflection touch no material; "
+            "choose nodes of the part's surface."
         )
 
 

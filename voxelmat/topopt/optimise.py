@@ -38,6 +38,8 @@ __all__ = ["optimise"]
 #: Linear solver tolerance while a design is still changing, and for the figures at the end.
 _RUNNING = {"compliance": 1e-3, "target": 1e-5}
 _FINAL = 1e-6
+#: A target's objective goes to zero, so its gap is held against the first value.
+_FOR_TARGET = Stopping(gap=1e-7, gap_of_first=True, change=2e-5)
 _KEEP_EVERY = 5
 
 
@@ -103,7 +105,7 @@ def optimise(
         _stepper(spec, problem),
         state or State(x=start, whole=start),
         iterations=spec.iterations,
-        stopping=Stopping(gap=1e-7 if is_target else 1e-3, gap_of_first=is_target),
+        stopping=_FOR_TARGET if is_target else Stopping(),
         monitor=progress,
         keep=None if checkpoint is None else lambda s: write_checkpoint(checkpoint, s, digest),
         keep_every=_KEEP_EVERY,
@@ -220,7 +222,16 @@ def _result(
         constraints=constraints,
         density=np.where(unknowns.choice.kept_mu > 0, 1.0, fields.rho).T.astype(np.float32),
         fractions=np.ascontiguousarray(fields.w, dtype=np.float32).transpose(0, 3, 2, 1),
-        notes=(*notes, *_law_notes(fields)),
+        notes=(*notes, *_radius_note(part, spec), *_law_notes(fields)),
+    )
+
+
+def _radius_note(part: Part, spec: DesignSpec) -> tuple[str, ...]:
+    if spec.filter_radius > min(part.grid.spacing):
+        return ()
+    return (
+        f"The filter radius of {spec.filter_radius:g} mm is not above the smallest spacing, so "
+        "nothing is smoothed: designs may show single voxels and depend on the grid.",
     )
 
 

@@ -16,7 +16,7 @@ __all__ = ["Separable", "solve_dual"]
 Array = NDArray[np.float64]
 
 _BLOCKS = 8  # partial sums, added in order: the same bits on any number of threads
-_BARRIER_END = 1e-9
+_BARRIER_START, _BARRIER_END = 0.1, 1e-9
 _NEWTON_STEPS = 60
 _HALVINGS = 20
 
@@ -65,19 +65,31 @@ class _Dual:
                 multipliers, s.p, s.q, s.lower, s.upper, s.low, s.high, self.x,
                 self._value, self._curvature,
             )  # fmt: skip
-        # The elastic variable y of each constraint costs ceiling * y + y^2 / 2, so beyond the
-        # ceiling a multiplier buys violation instead of growing without end.
-        elastic = np.maximum(0.0, multipliers - self._ceiling)
-        value = s.r[1:] + self._value.sum(0) - elastic
-        curvature = self._curvature.sum(0) + np.diag((multipliers > self._ceiling).astype(float))
+        value: Array = s.r[1:] + self._value.sum(0)
+        curvature: Array = self._curvature.sum(0)
         return value, curvature
+
+    def gradient(self, multipliers: Array, barrier: float) -> tuple[Array, Array]:
+        """Of the concave dual plus ``barrier * sum log multipliers``; and minus its Hessian.
+
+        The elastic variable y of each constraint costs ceiling * y + y^2 / 2, so beyond the
+        ceiling a multiplier buys violation instead of growing without end; the barrier on y
+        rounds the kink.
+        """
+        value, curvature = self(multipliers)
+        over = multipliers - self._ceiling
+        root = np.sqrt(over**2 + 4.0 * barrier)
+        y = np.where(over > 0, 0.5 * (over + root), 2.0 * barrier / (root - np.minimum(over, 0.0)))
+        slope = value - y + barrier / multipliers
+        bend = curvature + np.diag(y / root + barrier / multipliers**2)
+        return slope, bend
 
 
 def solve_dual(model: Separable, ceiling: float, start: Array | None = None) -> tuple[Array, Array]:
     """Minimise the objective of `model` subject to its constraints <= 0.
 
-    Newton's method on (multipliers, slacks) along a barrier that falls to 1e-9; x follows from
-    the multipliers in closed form, so only m x m systems are solved.
+    Newton's method on the multipliers along a barrier that falls to 1e-9; x follows from them in
+    closed form, so only m x m systems are solved.
 
     Parameters
     ----------
@@ -102,16 +114,14 @@ def solve_dual(model: Separable, ceiling: float, start: Array | None = None) -> 
         dual(np.empty(0))
         return dual.x, np.empty(0)
     lam = np.ones(dual.m) if start is None else np.clip(start, 1e-3, ceiling)
-    barrier = 0.1
-    value, curvature = dual(lam)
-    if not np.all(np.isfinite(value)):
+    if not np.all(np.isfinite(dual(lam)[0])):
         raise ConvergenceError(
             "The subproblem of the optimiser has values that are not finite; the response or "
             "its gradient overflowed."
         )
-    slack = np.maximum(barrier / lam, -value)
+    barrier = _BARRIER_START
     while True:
-        lam, slack, value, curvature = _centre(dual, lam, slack, value, curvature, barrier)
+        lam = _climb(dual, lam, barrier)
         if barrier <= _BARRIER_END:
             break
         barrier = max(0.1 * barrier, _BARRIER_END)
@@ -119,33 +129,23 @@ def solve_dual(model: Separable, ceiling: float, start: Array | None = None) -> 
     return dual.x, lam
 
 
-def _centre(
-    dual: _Dual, lam: Array, slack: Array, value: Array, curvature: Array, barrier: float
-) -> tuple[Array, Array, Array, Array]:
-    """Newton steps until constraint + slack = 0 and multiplier * slack = barrier."""
+def _climb(dual: _Dual, lam: Array, barrier: float) -> Array:
+    """Newton's method to the top of the concave dual with its barrier."""
+    slope, bend = dual.gradient(lam, barrier)
     for _ in range(_NEWTON_STEPS):
-        size = max(float(np.abs(value + slack).max()), float(np.abs(lam * slack - barrier).max()))
-        if size < 0.5 * barrier:
+        if float(np.abs(slope).max()) < 0.5 * barrier:
             break
-        system = curvature + np.diag(slack / lam)
-        d_lam = np.linalg.solve(system, value + barrier / lam)
-        d_slack = barrier / lam - slack - slack * d_lam / lam
-        longest = max(
-            1.0,
-            float((-d_lam / lam).max()) / 0.95,
-            float((-d_slack / slack).max()) / 0.95,
-            float((d_lam / lam).max()) / 20.0,
-        )
-        length = 1.0 / longest
+        # With fewer free unknowns than active constraints the curvature alone is singular.
+        bend += 1e-13 * float(bend.diagonal().max()) * np.eye(dual.m)
+        step = np.linalg.solve(bend, slope)
+        length = 1.0 / max(1.0, float((-step / lam).max()) / 0.95, float((step / lam).max()) / 20.0)
+        rise = float(slope @ step)
         for _ in range(_HALVINGS):
-            new_lam, new_slack = lam + length * d_lam, slack + length * d_slack
-            value, curvature = dual(new_lam)
-            new_size = max(
-                float(np.abs(value + new_slack).max()),
-                float(np.abs(new_lam * new_slack - barrier).max()),
-            )
-            if new_size < size * (1 - 1e-3 * length):
+            new = lam + length * step
+            slope, bend = dual.gradient(new, barrier)
+            # Along the step the slope only falls; far below zero means far beyond the top.
+            if float(slope @ step) > -0.5 * rise:
                 break
             length *= 0.5
-        lam, slack = new_lam, new_slack
-    return lam, slack, value, curvature
+        lam = new
+    return lam
