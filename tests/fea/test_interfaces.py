@@ -10,7 +10,7 @@ from voxelmat.fea.static import solve
 from voxelmat.fea.worst_interfaces import worst_interfaces
 from voxelmat.model.blend import EMPTY, Blend
 from voxelmat.model.interface import Bond
-from voxelmat.model.loadcase import Force, LoadCase, Support
+from voxelmat.model.loadcase import Force, LoadCase, Support, Temperature
 from voxelmat.model.material import Constant
 from voxelmat.model.part import Part
 from voxelmat.model.region import Box, FaceRegion
@@ -196,6 +196,44 @@ def test_what_is_enclosed_is_in_balance(grid, resin, seed):
     np.testing.assert_allclose(
         interface_tractions(result).force("soft", "hard"), force, rtol=1e-6, atol=1e-6
     )
+
+
+def test_heat_between_rigid_planes(grid, resin):
+    """Layers that may not grow press on each other: s = -dT sum(a t) / sum(t / E) (Hooke's law).
+    Layers that may, do not, if they want the same."""
+    for hold, second, exact in (
+        (True, 5e-5, -10 * (2e-4 * 2 + 5e-5 * 3) / (2 / 2.0 + 3 / 2000.0)),
+        (False, 2e-4, 0.0),
+    ):
+        part = two(grid, resin, layers(2, 3))
+        grown = tuple(
+            m.replace(expansion=Constant(value=a))
+            for m, a in zip(part.resins, (2e-4, second), strict=True)
+        )
+        supports = [Support(region=FaceRegion(name="low", side="z-"), displacement=(None, None, 0))]
+        if hold:
+            supports.append(
+                Support(region=FaceRegion(name="top", side="z+"), displacement=(None, None, 0))
+            )
+            supports.append(Support(region=EVERYWHERE, displacement=(0.0, 0.0, None)))
+        for axis in "xy":
+            move = tuple(0.0 if axis == b else None for b in "xyz")
+            supports.append(
+                Support(region=FaceRegion(name=axis, side=f"{axis}-"), displacement=move)
+            )
+        case = LoadCase(
+            name="warm",
+            supports=tuple(supports),
+            loads=(Temperature(temperature=33.0, stress_free=23.0),),
+        )
+        result = solve(part.replace(resins=grown), case, tol=1e-12)
+        found = interface_tractions(result)
+        if exact:
+            np.testing.assert_allclose(found.normal, exact, rtol=1e-6)
+            force = result.reactions[next(n for n in result.reactions if "top" in n)][2]
+            assert found.force("soft", "hard")[2] == pytest.approx(force, rel=1e-5)
+        else:
+            np.testing.assert_allclose(found.traction, 0.0, atol=1e-9)
 
 
 def test_a_quarter_turn_changes_nothing(grid, resin):

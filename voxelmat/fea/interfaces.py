@@ -19,7 +19,7 @@ from typing import NamedTuple
 import numpy as np
 from numpy.typing import NDArray
 
-from voxelmat.fea.assemble import assemble, moduli
+from voxelmat.fea.assemble import Assembled, assemble, moduli
 from voxelmat.fea.operator import Stiffness
 from voxelmat.model.interface import (
     STEP,
@@ -45,8 +45,6 @@ _LEAST = 0.5
 # Forces of all resins at a node that miss balance by more than this share tell of something that
 # acts there from outside.
 _BALANCE = 0.05
-# Kinds of load that strain without stress.
-_STRAINING = ("Temperature", "InitialStrain")
 # A face with less true area than this lies on a stepped interface.
 _FLAT = 0.98
 
@@ -104,15 +102,20 @@ def _boundaries(part: Part, resin: NDArray[np.int16]) -> _Faces:
     return _Faces(*(np.concatenate(column) for column in zip(*found, strict=True)))
 
 
-def _nodal_forces(result: StaticResult, resin: NDArray[np.int16], which: int) -> Double:
+def _nodal_forces(
+    result: StaticResult, acts: Assembled, resin: NDArray[np.int16], which: int
+) -> Double:
     """Force on each node by the elements of one resin, (nodes, 3), N."""
-    lam, mu = moduli(result.part)
+    spacing, element = result.part.grid.spacing, result.element
     mine = np.ascontiguousarray((resin == which).T)
-    work = Stiffness(lam * mine, mu * mine, result.part.grid.spacing, result.element)
+    lam, mu = (m * mine for m in moduli(result.part))
+    work = Stiffness(lam, mu, spacing, element)
     u = np.ascontiguousarray(result.displacement.T)
     out = np.empty_like(u)
     with computing():
         work.apply(u, out)
+    if acts.free is not None:
+        out -= acts.free.forces(lam, mu, spacing, element)
     return out.reshape(3, -1).T
 
 
@@ -124,12 +127,13 @@ def _at_nodes(faces: _Faces, mine: Bools, value: Double, count: int) -> Double:
     return out
 
 
-def _outside(result: StaticResult) -> Bools:
-    """Components of nodes where a support, spring or load acts, (nodes, 3); no weight."""
-    acts = assemble(result.part, result.load_case)
+def _outside(acts: Assembled) -> Bools:
+    """Components of nodes where a support, spring, plate or load acts, (nodes, 3); no weight."""
     marked = acts.held.reshape(3, -1).T.copy()
     if acts.springs is not None:
         marked |= acts.springs.reshape(3, -1).T > 0
+    if acts.plates is not None:
+        marked |= acts.plates.mask.ravel()[:, None]
     for load in acts.loads:
         if not load.follows_mass:
             marked[load.node] |= load.force != 0
@@ -144,14 +148,11 @@ def _face_mean(nodal: Double, trusted: Bools, nodes: Ints, instead: Double) -> D
     return np.where(count > 0, total / np.maximum(count, 1), instead)
 
 
-def _trusted(result: StaticResult, forces: dict[int, Double]) -> Bools:
+def _trusted(outside: Bools, forces: dict[int, Double]) -> Bools:
     """Components of nodes whose forces are those that cross the interface, (nodes, 3)."""
     total = np.sum(list(forces.values()), axis=0)
     size = np.sum([np.abs(f).max(axis=1) for f in forces.values()], axis=0)
-    in_balance = np.abs(total) <= _BALANCE * size[:, None]
-    # Forces of elements know nothing of a strain that they would take without stress.
-    strained = any(type(load).__name__ in _STRAINING for load in result.load_case.loads)
-    return np.asarray(in_balance & ~_outside(result) & (not strained))
+    return np.asarray((np.abs(total) <= _BALANCE * size[:, None]) & ~outside)
 
 
 def _one_side(faces: _Faces, force: Double, which: int) -> tuple[Bools, Double, Double]:
@@ -169,14 +170,14 @@ def _one_side(faces: _Faces, force: Double, which: int) -> tuple[Bools, Double, 
 
 
 def _tractions(
-    result: StaticResult, resin: NDArray[np.int16], faces: _Faces
+    result: StaticResult, acts: Assembled, resin: NDArray[np.int16], faces: _Faces
 ) -> tuple[Double, Double]:
     """Traction of the upper on the lower side over the staircase, and vector over scalar area."""
     traction, direction = np.zeros((2, len(faces.axis), 3))
-    forces = {int(c): _nodal_forces(result, resin, int(c)) for c in np.unique(faces.side)}
+    forces = {int(c): _nodal_forces(result, acts, resin, int(c)) for c in np.unique(faces.side)}
     if not forces:
         return traction, direction
-    trusted = _trusted(result, forces)
+    trusted = _trusted(_outside(acts), forces)
     own = np.eye(3)[faces.axis]
     stressed = 0.5 * _stress_tractions(result, faces.voxel, own)
     stressed += 0.5 * _stress_tractions(result, faces.voxel + own.astype(np.intp), own)
@@ -198,12 +199,11 @@ def _stress_tractions(result: StaticResult, voxel: Ints, normal: Double) -> Doub
     return np.stack([(s[:, row] * normal).sum(axis=1) for row in rows], axis=1)
 
 
-def _edges(result: StaticResult, faces: _Faces) -> Bools:
+def _edges(part: Part, acts: Assembled, faces: _Faces) -> Bools:
     """Faces with a node on the open surface, or where a support or a surface load acts."""
-    part = result.part
     padded = np.pad(~part.solid, 1, constant_values=True)
     marked = solid_nodes(padded)[1:-1, 1:-1, 1:-1].ravel(order="F")
-    marked = marked | _outside(result).any(axis=1)
+    marked = marked | _outside(acts).any(axis=1)
     return np.asarray(marked[faces.node].any(axis=1))
 
 
@@ -246,7 +246,8 @@ def interface_tractions(result: StaticResult, bonds: Iterable[Bond] = ()) -> Int
     part = result.part
     resin = np.where(part.solid, dominant_resins(part)[part.labels], np.int16(-1))
     faces = _boundaries(part, resin)
-    traction, direction = _tractions(result, resin, faces)
+    acts = assemble(part, result.load_case, everything=True)
+    traction, direction = _tractions(result, acts, resin, faces)
     sharp = faces.step >= STEP - 1e-9
     faces = faces.select(sharp)
     length = np.linalg.norm(direction[sharp], axis=1)
@@ -276,7 +277,7 @@ def interface_tractions(result: StaticResult, bonds: Iterable[Bond] = ()) -> Int
         jump=0.5 * np.linalg.norm(lower - upper, axis=1),
         solid_sides=(fill[tuple(faces.voxel.T)] >= 0.5) & (fill[tuple(beyond.T)] >= 0.5),
         stepped=length < _FLAT,
-        at_edge=_edges(result, faces),
+        at_edge=_edges(part, acts, faces),
         utilisation=use[0],
         utilisation_low=use[1],
         utilisation_high=use[2],
