@@ -16,18 +16,25 @@ from numpy.typing import NDArray
 from voxelmat.fea.element import Spacing, basis_matrices, coefficients, corner_blocks
 from voxelmat.kernels.stencil import scatter_slab
 
-__all__ = ["add_springs", "galerkin_stencils", "held_springs"]
+__all__ = [
+    "PENALTY",
+    "add_springs",
+    "children",
+    "galerkin_stencils",
+    "held_springs",
+    "slabs_from_elements",
+]
 
 Single = NDArray[np.float32]
 
 # Levels that are taken straight from the voxels; beyond, the products have too many columns.
 _DIRECT = 3
-# Supports on coarse levels are springs of this many times the diagonal.
-_PENALTY = 100.0
+#: Supports on coarse levels are springs of this many times the diagonal.
+PENALTY = 100.0
 
 
 @lru_cache(maxsize=1)
-def _children() -> NDArray[np.float64]:
+def children() -> NDArray[np.float64]:
     """Interpolation from the corners of a coarse voxel to those of its 8 children, (8, 24, 24)."""
     out = np.zeros((8, 24, 24))
     for child in range(8):
@@ -50,7 +57,7 @@ def _from_voxels(spacing: Spacing, element: str, depth: int) -> Single:
     for z, y, x in np.ndindex(n, n, n):
         P = np.eye(24)
         for level in range(depth - 1, -1, -1):
-            P = _children()[(x >> level & 1) + 2 * (y >> level & 1) + 4 * (z >> level & 1)] @ P
+            P = children()[(x >> level & 1) + 2 * (y >> level & 1) + 4 * (z >> level & 1)] @ P
         out[z, y, x] = P.T @ basis @ P
     return np.ascontiguousarray(out.reshape(-1, 576).T)
 
@@ -59,7 +66,7 @@ def _from_voxels(spacing: Spacing, element: str, depth: int) -> Single:
 def _from_elements() -> Single:
     """Matrix (576, 8 * 576) from the element matrices of the children to the coarse one."""
     return np.ascontiguousarray(
-        np.concatenate([np.kron(P, P) for P in _children()]).T, dtype=np.float32
+        np.concatenate([np.kron(P, P) for P in children()]).T, dtype=np.float32
     )
 
 
@@ -80,7 +87,8 @@ def _slabs_from_voxels(
         yield (G @ C.reshape(n**3 * 4, NY * NX)).reshape(24, 24, NY, NX)
 
 
-def _slabs_from_elements(E: Single) -> Iterator[Single]:
+def slabs_from_elements(E: Single) -> Iterator[Single]:
+    """Element matrices of the next level, slab by slab, from those [nz, 24, 24, ny, nx] of one."""
     nz, _, _, ny, nx = E.shape
     NZ, NY, NX = (-(-m // 2) for m in (nz, ny, nx))
     for K in range(NZ):
@@ -108,7 +116,7 @@ def galerkin_stencils(
         if depth <= _DIRECT:
             slabs = _slabs_from_voxels(values, spacing, element, depth)
         elif elements is not None:
-            slabs = _slabs_from_elements(elements)
+            slabs = slabs_from_elements(elements)
         kept = []
         for k, E in enumerate(slabs):
             scatter_slab(S, E, k)
@@ -140,7 +148,7 @@ def held_springs(
         at = tuple(cell[inside].T)
         for q in range(4):
             diagonal[inside] += blocks[a, where[inside, 0], q] * values[q][at]
-    return where, _PENALTY * diagonal
+    return where, PENALTY * diagonal
 
 
 def add_springs(

@@ -24,7 +24,15 @@ from voxelmat.kernels.threads import crew
 from voxelmat.kernels.transfer import prolong_add, restrict
 from voxelmat.kernels.vector import residual, scaled_copy, smooth_first
 
-__all__ = ["METHODS", "Grid", "Jacobi", "Multigrid", "Preconditioner", "make_preconditioner"]
+__all__ = [
+    "METHODS",
+    "Grid",
+    "Jacobi",
+    "Multigrid",
+    "Preconditioner",
+    "level_count",
+    "make_preconditioner",
+]
 
 Single = NDArray[np.float32]
 Double = NDArray[np.float64]
@@ -80,7 +88,7 @@ class Preconditioner(Protocol):
         """Memory held, bytes."""
 
 
-def _depths(shape: tuple[int, ...], method: str) -> int:
+def level_count(shape: tuple[int, ...], method: str) -> int:
     """Number of coarse levels below a grid of `shape` voxels."""
     depth, dims = 0, np.array(shape)
     limit = _COARSEST_AVERAGED if method == "avg2" and dims.prod() > _LARGE else _COARSEST
@@ -152,11 +160,14 @@ class Multigrid:
     """
 
     def __init__(self, grid: Grid, method: str) -> None:
-        self.method = method
-        depths = _depths(grid.lam.shape, method)
-        self.levels: list[Level] = [_finest(grid)]
+        depths = level_count(grid.lam.shape, method)
         make = _averaged if method == "avg2" else _galerkin
-        self.levels.extend(make(grid, depths))
+        self._prepare([_finest(grid), *make(grid, depths)], method)
+
+    def _prepare(self, levels: list[Level], method: str) -> None:
+        """Make the smoothers and the coarsest solve."""
+        self.method = method
+        self.levels = levels
         degree, ratio = _SMOOTHING[method]
         for level in self.levels:
             level.allocate()

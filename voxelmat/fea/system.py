@@ -189,11 +189,14 @@ class LinearSystem:
             self.operator.apply(u, out)
         return out
 
+    def _make(self, method: str) -> Preconditioner:
+        return make_preconditioner(self._grid, method)
+
     def _ready(self) -> Preconditioner:
         if self._preconditioner is None or self._preconditioner.method != self._method:
             self._preconditioner = None  # let go of the old one before the new one is built
             self._monitor.report("preparing the solver", done=0, total=0, method=self._method)
-            inner = make_preconditioner(self._grid, self._method)
+            inner = self._make(self._method)
             self._preconditioner = inner
             if self._plates is not None:
                 self._preconditioner = PlatePreconditioner(
