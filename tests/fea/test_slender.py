@@ -4,8 +4,11 @@ import numpy as np
 import pytest
 
 from voxelmat.fea.slender import hinge_caution, hinges, thin_caution, thin_voxels
+from voxelmat.fea.static import solve
 from voxelmat.model.blend import EMPTY, Blend
+from voxelmat.model.loadcase import Force, LoadCase, Support
 from voxelmat.model.part import Part
+from voxelmat.model.region import FaceRegion
 
 
 def part_of(solid, grid, resin):
@@ -58,7 +61,16 @@ def test_an_edge_hinge_is_found_along_any_axis(grid, resin, axis):
     assert [len(e) for e in edges] == [3 if a == axis else 0 for a in range(3)]
     np.testing.assert_array_equal(np.delete(edges[axis][0], axis), (1, 1))
     assert len(corners) == 0
-    assert "3 edges and 0 corners" in hinge_caution(part_of(solid, grid, resin))[0]
+    assert hinge_caution(part_of(solid, grid, resin)) == []  # two pieces: said where pieces are
+    ring = np.ones((5, 5, 4), bool)
+    ring[1:3, 1:3, :] = False
+    ring[3, 3, :] = False
+    ring = np.moveaxis(np.moveaxis(ring, 2, 0), 0, axis)
+    count = 4
+    edges, _ = hinges(ring)
+    assert [len(e) for e in edges] == [count if a == axis else 0 for a in range(3)]
+    text = hinge_caution(part_of(ring, grid, resin))[0]
+    assert f"{count} edges and 0 corners" in text
 
 
 def test_a_diagonal_step_that_the_next_layer_joins_is_none():
@@ -78,4 +90,23 @@ def test_a_corner_hinge(grid, resin):
     edges, corners = hinges(solid)
     assert sum(map(len, edges)) == 0
     np.testing.assert_array_equal(corners, [[1, 1, 1]])
-    assert "(11, 2, 4)" in hinge_caution(part_of(solid, grid, resin))[0]
+    assert hinge_caution(part_of(solid, grid, resin)) == []
+    solid[3, 3, :] = solid[3, :, 3] = solid[:, 3, 3] = True  # joined elsewhere too
+    solid[:, 3, 0:1] = solid[3, :, 3:] = True
+    found = hinge_caution(part_of(solid, grid, resin))
+    assert "1 corners, first near (11, 2, 4)" in found[0]
+
+
+def test_a_solve_carries_the_cautions(grid, resin):
+    solid = np.ones((9, 4, 4), bool)
+    solid[3:6, :, 2:] = False  # a notch, with a fin in it
+    solid[4, :, 2:] = True
+    part = part_of(solid, grid, resin)
+    case = LoadCase(
+        name="pull",
+        supports=(Support(region=FaceRegion(name="low", side="x-")),),
+        loads=(Force(region=FaceRegion(name="high", side="x+"), vector=(1.0, 0.0, 0.0)),),
+    )
+    cautions = " ".join(solve(part, case).cautions)
+    assert "one voxel thin" in cautions
+    assert "stands on a stepped surface" in cautions

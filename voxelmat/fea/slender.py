@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import numpy as np
+import scipy.ndimage
 from numpy.typing import NDArray
 
 from voxelmat.model.part import Part
@@ -87,9 +88,32 @@ def hinges(solid: Bools) -> tuple[list[NDArray[np.intp]], NDArray[np.intp]]:
     return edges, np.argwhere(_corner_hinges(solid))
 
 
+def _within_a_piece(
+    pieces: NDArray[np.integer], at: NDArray[np.intp], axes: tuple[int, ...]
+) -> NDArray[np.intp]:
+    """Hinges whose two voxels hang together elsewhere; others join pieces, which is said apart."""
+    if not len(at):
+        return at
+    round_it = []
+    for n in range(2 ** len(axes)):
+        voxel = at.copy()
+        for bit, axis in enumerate(axes):
+            voxel[:, axis] += n >> bit & 1
+        round_it.append(pieces[tuple(voxel.T)])
+    piece = np.stack(round_it)
+    least = np.where(piece > 0, piece, piece.max() + 1).min(axis=0)
+    return np.asarray(at[least == piece.max(axis=0)])
+
+
 def hinge_caution(part: Part) -> list[str]:
-    """Voxels joined by an edge or a corner only: a hinge that the shape may not have."""
+    """Voxels of one piece joined by an edge or a corner only: a hinge the shape may not have."""
     edges, corners = hinges(part.solid)
+    pieces, _ = scipy.ndimage.label(part.solid)
+    edges = [
+        _within_a_piece(pieces, at, tuple(a for a in range(3) if a != axis))
+        for axis, at in enumerate(edges)
+    ]
+    corners = _within_a_piece(pieces, corners, (0, 1, 2))
     count = sum(map(len, edges))
     if not count + len(corners):
         return []

@@ -12,9 +12,11 @@ from voxelmat.fea.cautions import film_caution, record_cautions, size_cautions
 from voxelmat.fea.element import DEFAULT
 from voxelmat.fea.held import check_held
 from voxelmat.fea.operator import touched_nodes
+from voxelmat.fea.peaks import staircase_cautions
 from voxelmat.fea.plate_held import check_plates_held
 from voxelmat.fea.reactions import reactions
 from voxelmat.fea.sensitivity import stiffness_forms, strain
+from voxelmat.fea.slender import hinge_caution, thin_caution
 from voxelmat.fea.stress import largest_principal_strain, largest_rotation, stress
 from voxelmat.fea.system import LinearSystem, Solution
 from voxelmat.kernels.threads import threads
@@ -116,12 +118,13 @@ def _result(
     rotation = largest_rotation(part, u)
     notes = [*cautions, *(c for load in acts.loads for c in load.cautions)]
     notes += size_cautions(largest, rotation)
-    notes += film_caution(part, lam, mu) + record_cautions(part, case)
+    notes += film_caution(part, lam, mu) + thin_caution(part) + hinge_caution(part)
+    notes += record_cautions(part, case)
     if forces.balance > _BALANCE:
         notes.append(f"Loads and reactions miss each other by {forces.balance:.1e} of the load.")
     if forces.moment_balance > _BALANCE:
         notes.append(f"Moments miss each other by {forces.moment_balance:.1e} of the largest.")
-    return StaticResult(
+    result = StaticResult(
         part=part,
         load_case=case,
         displacement=u.T,
@@ -152,6 +155,7 @@ def _result(
             finished_utc=utc_now(),
         ),
     )
+    return replace(result, cautions=(*notes, *staircase_cautions(result)))
 
 
 def solve(
