@@ -64,6 +64,68 @@ def test_agrees_with_a_dense_solver(assembled, data):
     assert found.u.ravel() @ b.ravel() == pytest.approx(x @ force, rel=1e-7)
 
 
+@settings(max_examples=20, deadline=None)
+@given(data=st.data())
+def test_supports_agree_with_a_dense_solver(assembled, data):
+    """Held unknowns, on copies too, with given displacements."""
+    shape = data.draw(st.tuples(*[st.integers(1, 6)] * 3), label="shape")
+    flags = st.tuples(*[st.booleans()] * 3).filter(any)
+    periodic = data.draw(flags, label="periodic")
+    rng = np.random.default_rng(data.draw(st.integers(0, 99), label="seed"))
+    E = 10.0 ** rng.uniform(0, 2, shape)
+    fixed = np.zeros((3, *(n + 1 for n in shape)), dtype=bool)
+    for _ in range(4):
+        k, j, i = (rng.integers(0, n + 1) for n in shape)
+        fixed[:, k, j, i] = True
+    system = PeriodicSystem(*lame(E, 0.3), (1.0, 0.5, 1.5), periodic=periodic, fixed=fixed)
+    T = folding(system.shape[1:], periodic)
+    A = T.T @ (assembled(system.lam, system.mu, (1.0, 0.5, 1.5), "icmb") @ T)
+    unique = np.argmax(T, axis=0)  # an open place of each unknown
+    held = (T.T @ fixed.ravel()) > 0
+    value = np.where(held, rng.standard_normal(held.size), 0.0)
+    prescribed = (T @ value).reshape(system.shape)
+    b = rng.standard_normal(system.shape)
+    force = T.T @ b.ravel()
+    found = system.solve(b, prescribed=prescribed, tol=1e-10).u.ravel()[unique]
+    free = ~held
+    x = value.copy()
+    x[free] = np.linalg.solve(
+        A[np.ix_(free, free)], force[free] - A[np.ix_(free, held)] @ value[held]
+    )
+    assert np.abs(found - x).max() < 1e-6 * np.abs(x).max()
+
+
+def test_core_between_plates():
+    """Pressed along z, free to drift along x and y: layers in uniaxial strain, in series."""
+    E = np.repeat([1.0, 100.0, 3.0], 2)[:, None, None] * np.ones((6, 4, 5))
+    lam, mu = lame(E, 0.3)
+    fixed = np.zeros((3, 7, 5, 6), dtype=bool)
+    fixed[2, [0, -1]] = True
+    prescribed = np.zeros(fixed.shape)
+    prescribed[2, -1] = -0.1
+    system = PeriodicSystem(lam, mu, CUBE, periodic=(True, True, False), fixed=fixed)
+    u = system.solve(np.zeros(fixed.shape), prescribed=prescribed).u
+    stress = -0.1 / (1 / (lam + 2 * mu)[:, 0, 0]).sum()
+    assert system.apply_open(u)[2, -1].sum() == pytest.approx(stress * 20, rel=1e-7)
+    assert np.abs(u[:2]).max() < 1e-8
+
+
+def test_held_islands_stay():
+    """A post on a held face, in the middle of a cell that repeats along x and y."""
+    E = np.zeros((6, 5, 5))
+    E[:, 2, 2] = 10.0
+    fixed = np.zeros((3, 7, 6, 6), dtype=bool)
+    fixed[:, 0] = True
+    b = np.zeros(fixed.shape)
+    b[2, -1, 2:4, 2:4] = 0.25
+    loose = PeriodicSystem(*lame(E, 0.0), CUBE, periodic=(True, True, False))
+    assert (loose.empty, loose.loose) == (True, 1)
+    post = PeriodicSystem(*lame(E, 0.0), CUBE, periodic=(True, True, False), fixed=fixed)
+    assert post.loose == 0
+    # A bar: P L / (E A).
+    assert post.solve(b).u[2, -1, 2, 2] == pytest.approx(1.0 * 6 / 10, rel=1e-8)
+
+
 @pytest.mark.parametrize("shape", [(4, 5, 6), (3, 7, 1), (5, 2, 3)])
 @pytest.mark.parametrize("periodic", [ALL, (True, False, True), (False, True, False)])
 def test_coarse_operators_are_exact(assembled, shape, periodic):
@@ -78,7 +140,7 @@ def test_coarse_operators_are_exact(assembled, shape, periodic):
         P = np.kron(np.eye(3), np.kron(along[0], np.kron(along[1], along[2])))
         total = total @ P
         dims = tuple(-(-n // 2) for n in dims)
-    S, _ = coarse_levels(lam, mu, (1.0, 0.5, 2.0), "icmb", periodic, 2)
+    S = coarse_levels(lam, mu, (1.0, 0.5, 2.0), "icmb", periodic, 2)
     wanted = total.T @ K @ total
     found = stencil_matrix(S[1])
     # In single precision.
@@ -239,6 +301,7 @@ def test_loads_that_nothing_carries_are_refused():
         ({"periodic": (False, False, False)}, "one at least"),
         ({"spacing": (1.0, 0.0, 1.0)}, "above 0"),
         ({"element": "best"}, "no element"),
+        ({"fixed": np.zeros((3, 2, 2, 2), dtype=bool)}, "fixed must be bool"),
         ({"mu": -np.ones((2, 2, 2))}, "impossible"),
     ],
 )

@@ -7,11 +7,11 @@ from numpy.typing import NDArray
 
 from voxelmat.errors import ConvergenceError, InputError
 from voxelmat.fea.element import DEFAULT, Spacing
-from voxelmat.fea.fold import Periodic, PeriodicStiffness, array_axes, fold, is_image, wrap
+from voxelmat.fea.fold import Periodic, PeriodicStiffness, array_axes, fold, wrap
 from voxelmat.fea.krylov import Iteration, conjugate_gradients
 from voxelmat.fea.operator import check_moduli, dot
 from voxelmat.fea.periodic_multigrid import PeriodicMultigrid
-from voxelmat.fea.periodic_pieces import periodic_pieces
+from voxelmat.fea.periodic_pieces import node_groups, periodic_pieces, voxels_at
 from voxelmat.fea.system import Solution
 from voxelmat.kernels.threads import crew
 from voxelmat.monitor import SILENT, Monitor, computing
@@ -29,8 +29,9 @@ _NOTHING = 1e-13
 class PeriodicSystem:
     """K u = b on a grid of voxels that repeats itself.
 
-    Nothing is held: each piece may drift, and the answer is the one whose mean is 0 over every
-    piece. Islands, which reach their own copies in no direction, carry no load and are left out.
+    A piece that nothing holds may drift, and the answer is the one whose mean is 0 over the
+    piece. Islands, which reach their own copies in no direction and are held nowhere, carry no
+    load and are left out.
 
     Parameters
     ----------
@@ -40,6 +41,8 @@ class PeriodicSystem:
         Voxel edge along x, y, z, mm.
     periodic : tuple of bool
         Which of x, y, z are periodic; at least one.
+    fixed : ndarray of bool, shape (3, nz+1, ny+1, nx+1), optional
+        Where the displacement along x, y, z is given (0 unless `solve` is told otherwise).
     element : str
         See `voxelmat.fea.element`.
     monitor : Monitor
@@ -68,6 +71,7 @@ class PeriodicSystem:
         spacing: Spacing,
         *,
         periodic: Periodic = (True, True, True),
+        fixed: NDArray[np.bool_] | None = None,
         element: str = DEFAULT,
         monitor: Monitor = SILENT,
     ) -> None:
@@ -81,33 +85,33 @@ class PeriodicSystem:
         self.shape = (3, *(n + 1 for n in lam.shape))
         self.spacing, self.element, self.periodic = spacing, element, periodic
         self._axes, self._monitor = array_axes(periodic), monitor
+        held = self._folded(fixed)
         pieces, ranks = periodic_pieces(mu > 0, periodic)
+        anchored = np.unique(pieces[voxels_at(np.any(held, axis=0), periodic)])
+        ranks[anchored] = np.maximum(ranks[anchored], 1)
         island = (pieces > 0) & (ranks[pieces] == 0)
         self.loose, self.loose_voxels = int((ranks[1:] == 0).sum()), int(island.sum())
         self.lam, self.mu = np.where(island, 0.0, lam), np.where(island, 0.0, mu)
-        self._group = self._groups()
-        self.free = np.ascontiguousarray(
-            np.broadcast_to(self._group > 0, self.shape), dtype=np.uint8
-        )
+        self._group = node_groups(self.mu > 0, periodic)
+        self._held = held & (self._group > 0)
+        self.free = np.ascontiguousarray((self._group > 0) & ~self._held, dtype=np.uint8)
+        # By direction and group: does nothing hold it?
+        self._drifts = np.ones((3, int(self._group.max()) + 1), dtype=bool)
+        self._drifts[:, 0] = False
+        for d in range(3):
+            self._drifts[d, self._group[self._held[d]]] = False
         self.operator = PeriodicStiffness(self.lam, self.mu, spacing, element, axes=self._axes)
         self._preconditioner: PeriodicMultigrid | None = None
 
-    def _groups(self) -> NDArray[np.int32]:
-        """Number of the piece that each node belongs to, ``[k, j, i]``; 0 where none, on copies."""
-        labels, _ = periodic_pieces(self.mu > 0, self.periodic, by_nodes=True)
-        out = np.zeros(self.shape[1:], dtype=np.int32)
-        nz, ny, nx = labels.shape
-        for a in range(8):
-            at = tuple(
-                slice(o, o + n)
-                for o, n in zip((a >> 2, a >> 1 & 1, a & 1), (nz, ny, nx), strict=True)
-            )
-            np.maximum(out[at], labels, out=out[at])
-        for axis in self._axes:
-            ends = np.moveaxis(out, axis, 0)
-            np.maximum(ends[0], ends[-1], out=ends[0])
-        out[is_image(out.shape, self._axes)] = 0
-        return out
+    def _folded(self, fixed: NDArray[np.bool_] | None) -> NDArray[np.bool_]:
+        """Held unknowns with those of copies moved to their originals."""
+        if fixed is None:
+            return np.zeros(self.shape, dtype=bool)
+        if fixed.shape != self.shape or fixed.dtype != bool:
+            raise InputError(f"fixed must be bool of shape {self.shape}; got {fixed.shape}.")
+        held = fixed.copy()
+        fold(held, self._axes)
+        return held
 
     @property
     def empty(self) -> bool:
@@ -142,7 +146,7 @@ class PeriodicSystem:
         count = np.maximum(np.bincount(group), 1)
         for d in range(3):
             mean = np.bincount(group, weights=u[d].ravel()) / count
-            mean[0] = 0.0
+            mean[~self._drifts[d]] = 0.0
             u[d] -= mean[group].reshape(u[d].shape)
         return u
 
@@ -150,7 +154,7 @@ class PeriodicSystem:
         """The load on unknowns; `InputError` where it pushes a piece away."""
         folded = b.copy()
         fold(folded, self._axes)
-        lost = folded * (1 - self.free)
+        lost = folded * (self._group == 0)
         size = max(float(np.abs(folded).sum()), scale)
         if float(np.abs(lost).sum()) > _BALANCE * size:
             raise InputError(
@@ -160,7 +164,7 @@ class PeriodicSystem:
         folded *= self.free
         group = self._group.ravel()
         for d in range(3):
-            pull = np.bincount(group, weights=folded[d].ravel())[1:]
+            pull = np.bincount(group, weights=folded[d].ravel())[self._drifts[d]]
             if np.any(np.abs(pull) > _BALANCE * size):
                 raise InputError(
                     f"The load on a piece does not add up to 0 along {'xyz'[d]} (sum "
@@ -172,7 +176,13 @@ class PeriodicSystem:
         if self._preconditioner is None:
             self._monitor.report("preparing the solver", done=0, total=0, method="periodic")
             self._preconditioner = PeriodicMultigrid(
-                self.lam, self.mu, self.spacing, self.element, self.free, self.periodic
+                self.lam,
+                self.mu,
+                self.spacing,
+                self.element,
+                self.free,
+                self._held,
+                self.periodic,
             )
         return self._preconditioner
 
@@ -181,6 +191,7 @@ class PeriodicSystem:
         b: Double,
         *,
         x0: Double | None = None,
+        prescribed: Double | None = None,
         tol: float = 1e-8,
         maxiter: int = 400,
         scale: float = 0.0,
@@ -193,6 +204,8 @@ class PeriodicSystem:
             Nodal forces, N. Forces on a last plane are added to the first.
         x0 : ndarray, optional
             First guess, mm.
+        prescribed : ndarray, optional
+            Displacement at held unknowns, mm; other entries are ignored.
         tol : float
             Residual to reach, relative to the size of the load or to `scale`, if that is larger.
         maxiter : int
@@ -204,7 +217,8 @@ class PeriodicSystem:
         Returns
         -------
         Solution
-            Periodic, with mean 0 over the nodes of each piece; 0 where nothing is.
+            Periodic; with mean 0 over each piece in directions in which nothing holds it; 0 where
+            nothing is.
 
         Raises
         ------
@@ -216,15 +230,23 @@ class PeriodicSystem:
         """
         if not (0 < tol < 1 and maxiter >= 1):
             raise InputError(f"tol must lie in 0 to 1 and maxiter be >= 1; got {tol}, {maxiter}.")
-        for name, field in (("The load", b), ("x0", x0)):
+        for name, field in (("The load", b), ("x0", x0), ("prescribed", prescribed)):
             if field is not None and not (field.shape == self.shape and np.isfinite(field).all()):
                 raise InputError(f"{name} must be finite and of shape {self.shape}.")
         with computing(), crew(b[0].size):
             force = self._balanced(np.asarray(b, dtype=np.float64), scale)
-            size = float(np.sqrt(dot(force, force)))
+            given = np.zeros(self.shape)
+            net = force
+            if prescribed is not None:
+                np.copyto(given, prescribed, where=self._held)
+                net = np.empty(self.shape)
+                self.operator.apply(given, net)
+                net = (force - net) * self.free
+            size = float(np.sqrt(dot(net, net)))
             if size <= _NOTHING * scale or size == 0.0:
-                return Solution(u=np.zeros(self.shape), iterations=0, residual=0.0, history=(0.0,))
-            x = np.zeros(self.shape) if x0 is None else np.array(x0 * self.free)
+                wrap(given, self._axes)
+                return Solution(u=given, iterations=0, residual=0.0, history=(0.0,))
+            x = given * self._held + (0.0 if x0 is None else x0 * self.free)
             run = conjugate_gradients(
                 self.operator,
                 self._ready(),
@@ -243,7 +265,7 @@ class PeriodicSystem:
                 f"larger tolerance.",
                 run.history,
             )
-        u = self._without_mean(run.x * self.free)
+        u = self._without_mean(run.x * (self._group > 0))
         wrap(u, self._axes)
         return Solution(
             u=u, iterations=run.iterations, residual=run.residual, history=tuple(run.history)

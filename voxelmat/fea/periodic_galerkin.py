@@ -91,6 +91,13 @@ def _scattered(slabs: Iterable[Single], S: Single) -> Iterator[Single]:
         yield E
 
 
+def _stencils(shape: tuple[int, ...], stencils: list[Single]) -> Single:
+    """Empty stencils of a grid of `shape` voxels, appended to `stencils`."""
+    nz, ny, nx = shape
+    stencils.append(np.zeros((nz + 1, ny + 1, 243, nx + 1), dtype=np.float32))
+    return stencils[-1]
+
+
 def coarse_levels(
     lam: Double,
     mu: Double,
@@ -98,25 +105,26 @@ def coarse_levels(
     element: str,
     periodic: Periodic,
     depths: int,
-) -> tuple[list[Single], Single]:
-    """Stencils of the levels 1 to `depths`, and element matrices of the last level.
+) -> list[Single]:
+    """Stencils of the levels 1 to `depths`, or of the voxels themselves where that is 0.
 
     The stencils ``[nk, nj, 243, ni]`` are those of the open grid: last planes of nodes are not
-    folded. The matrices have shape (nz, 24, 24, ny, nx); with no level they are those of the
-    voxels.
+    folded.
     """
     values = np.stack(coefficients(lam, mu, element))
-    if depths == 0:
-        voxels = np.einsum("qab,qkji->kabji", basis_matrices(spacing, element), values)
-        return [], voxels.astype(np.float32)
     stencils: list[Single] = []
     shape = lam.shape
-    slabs: Iterable[Single] = _from_voxels(values, spacing, element, periodic)
+    slabs: Iterable[Single]
+    if depths == 0:
+        basis = basis_matrices(spacing, element)
+        slabs = _scattered(np.einsum("qab,qkji->kabji", basis, values), _stencils(shape, stencils))
+    else:
+        slabs = _from_voxels(values, spacing, element, periodic)
     for depth in range(depths):
         if depth:
             slabs = _from_elements(slabs, shape, periodic)
         shape = tuple(-(-n // 2) for n in shape)
-        S = np.zeros((shape[0] + 1, shape[1] + 1, 243, shape[2] + 1), dtype=np.float32)
-        stencils.append(S)
-        slabs = _scattered(slabs, S)
-    return stencils, np.array(list(slabs))
+        slabs = _scattered(slabs, _stencils(shape, stencils))
+    for _ in slabs:
+        pass
+    return stencils

@@ -10,6 +10,7 @@ from numpy.typing import NDArray
 from voxelmat.fea.coarsest import Coarsest
 from voxelmat.fea.element import Spacing, corner_blocks, kernel_constants
 from voxelmat.fea.fold import Periodic, PeriodicStiffness, array_axes, fold, is_image, wrap
+from voxelmat.fea.galerkin import add_springs, held_springs
 from voxelmat.fea.levels import Level
 from voxelmat.fea.operator import planes
 from voxelmat.fea.periodic_galerkin import coarse_levels
@@ -108,22 +109,24 @@ class _Coarse(Level):
         return super().nbytes + self.S.nbytes
 
 
-def _dense(E: Single, axes: tuple[int, ...]) -> Double:
-    """Assemble element matrices (nz, 24, 24, ny, nx) over the nodes of the open grid."""
-    nz, _, _, ny, nx = E.shape
-    shape = (nz + 1, ny + 1, nx + 1)
-    nodes = np.arange(np.prod(shape)).reshape(shape)
+def _dense(S: Single, axes: tuple[int, ...]) -> Double:
+    """Assemble stencils over the nodes of the open grid, copies counted to their originals."""
+    nk, nj, _, ni = S.shape
+    nodes = np.arange(nk * nj * ni).reshape(nk, nj, ni)
     wrap(nodes, axes)
-    corners = np.stack(
-        [
-            nodes[a >> 2 : nz + (a >> 2), a >> 1 & 1 : ny + (a >> 1 & 1), a & 1 : nx + (a & 1)]
-            for a in range(8)
-        ]
-    )
-    unknowns = (corners[:, None] + nodes.size * np.arange(3)[:, None, None, None]).reshape(24, -1)
     A = np.zeros((3 * nodes.size, 3 * nodes.size))
-    matrices = E.transpose(1, 2, 0, 3, 4).reshape(24, 24, -1)
-    np.add.at(A, (unknowns[:, None], unknowns[None]), matrices)
+    for o, step in enumerate(np.ndindex(3, 3, 3)):
+        here = tuple(
+            slice(max(1 - s, 0), n + min(1 - s, 0)) for s, n in zip(step, nodes.shape, strict=True)
+        )
+        there = tuple(
+            slice(max(s - 1, 0), n + min(s - 1, 0)) for s, n in zip(step, nodes.shape, strict=True)
+        )
+        for c in range(3):
+            for d in range(3):
+                part = S[here[0], here[1], 9 * o + 3 * c + d, here[2]]
+                at = (c * nodes.size + nodes[here], d * nodes.size + nodes[there])
+                np.add.at(A, at, part)
     return A
 
 
@@ -139,6 +142,8 @@ class PeriodicMultigrid:
     element : str
     free : ndarray of uint8, shape (3, nz+1, ny+1, nx+1)
         1 where an unknown exists; 0 on last planes of periodic axes.
+    held : ndarray of bool, shape of `free`
+        Where the displacement of touched nodes is given.
     periodic : tuple of bool
         Along x, y, z.
     """
@@ -152,20 +157,24 @@ class PeriodicMultigrid:
         spacing: Spacing,
         element: str,
         free: NDArray[np.uint8],
+        held: NDArray[np.bool_],
         periodic: Periodic,
     ) -> None:
         self._axes = array_axes(periodic)
         depths = _depths(lam.shape, periodic)
-        stencils, elements = coarse_levels(lam, mu, spacing, element, periodic, depths)
+        stencils = coarse_levels(lam, mu, spacing, element, periodic, depths)
+        where, stiffness = held_springs(lam, mu, spacing, element, held)
+        for depth, S in enumerate(stencils[:depths], start=1):
+            add_springs(S, where, stiffness, depth)
         self.levels: list[Level] = [_Finest(lam, mu, spacing, element, free, periodic)]
-        self.levels.extend(_Coarse(S, periodic) for S in stencils)
+        self.levels.extend(_Coarse(S, periodic) for S in stencils[:depths])
         for level in self.levels:
             level.B[:, is_image(level.shape[1:], self._axes)] = 0
             level.allocate()
         for level in self.levels[:-1]:
             with crew(level.nodes):
                 level.choose_steps(_DEGREE, _RATIO)
-        self.coarsest = Coarsest(self.levels[-1], _dense(elements, self._axes))
+        self.coarsest = Coarsest(self.levels[-1], _dense(stencils[-1], self._axes))
 
     def _cycle(self, n: int) -> None:
         level = self.levels[n]

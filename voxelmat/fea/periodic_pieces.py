@@ -8,9 +8,9 @@ import numpy as np
 import scipy.ndimage
 from numpy.typing import NDArray
 
-from voxelmat.fea.fold import Periodic
+from voxelmat.fea.fold import Periodic, array_axes, is_image, wrap
 
-__all__ = ["periodic_pieces"]
+__all__ = ["node_groups", "periodic_pieces", "voxels_at"]
 
 Bools = NDArray[np.bool_]
 Labels = NDArray[np.integer]
@@ -94,3 +94,37 @@ def periodic_pieces(
                     todo.append(b)
         ranks.append(int(np.linalg.matrix_rank(np.array(loops))))
     return merged[labels], np.array(ranks)
+
+
+def _corners(shape: tuple[int, ...]) -> list[tuple[slice, ...]]:
+    """Where the nodes at each of the 8 corners of all voxels lie among the nodes."""
+    offsets = ((a >> 2, a >> 1 & 1, a & 1) for a in range(8))
+    return [tuple(slice(o, o + n) for o, n in zip(at, shape, strict=True)) for at in offsets]
+
+
+def node_groups(solid: Bools, periodic: Periodic) -> NDArray[np.int32]:
+    """Number of the piece, joined by nodes, that each node belongs to.
+
+    Returns
+    -------
+    ndarray of int32, shape (nz+1, ny+1, nx+1)
+        0 where no solid voxel touches, and on last planes that are copies.
+    """
+    labels, _ = periodic_pieces(solid, periodic, by_nodes=True)
+    out = np.zeros(tuple(n + 1 for n in solid.shape), dtype=np.int32)
+    for at in _corners(solid.shape):
+        np.maximum(out[at], labels, out=out[at])
+    axes = array_axes(periodic)
+    for axis in axes:
+        ends = np.moveaxis(out, axis, 0)
+        np.maximum(ends[0], ends[-1], out=ends[0])
+    out[is_image(out.shape, axes)] = 0
+    return out
+
+
+def voxels_at(nodes: Bools, periodic: Periodic) -> Bools:
+    """Voxels ``[k, j, i]`` that touch one of these nodes; copies follow their originals."""
+    nodes = nodes.copy()
+    wrap(nodes, array_axes(periodic))
+    shape = tuple(n - 1 for n in nodes.shape)
+    return np.asarray(np.any([nodes[at] for at in _corners(shape)], axis=0))
