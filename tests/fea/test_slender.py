@@ -6,7 +6,7 @@ import pytest
 from voxelmat.fea.slender import hinge_caution, hinges, thin_caution, thin_voxels
 from voxelmat.fea.static import solve
 from voxelmat.model.blend import EMPTY, Blend
-from voxelmat.model.loadcase import Force, LoadCase, Support
+from voxelmat.model.loadcase import LoadCase, Support
 from voxelmat.model.part import Part
 from voxelmat.model.region import FaceRegion
 
@@ -102,11 +102,15 @@ def test_a_solve_carries_the_cautions(grid, resin):
     solid[3:6, :, 2:] = False  # a notch, with a fin in it
     solid[4, :, 2:] = True
     part = part_of(solid, grid, resin)
-    case = LoadCase(
-        name="pull",
-        supports=(Support(region=FaceRegion(name="low", side="x-")),),
-        loads=(Force(region=FaceRegion(name="high", side="x+"), vector=(1.0, 0.0, 0.0)),),
+    sides = [(a, f"{a}-", 0.0) for a in "xyz"] + [("x", "x+", 0.01)]
+    supports = tuple(
+        Support(
+            region=FaceRegion(name=side, side=side),
+            displacement=tuple(move if axis == b else None for b in "xyz"),
+        )
+        for axis, side, move in sides
     )
+    case = LoadCase(name="pull", supports=supports)
     cautions = " ".join(solve(part, case).cautions)
     assert "one voxel thin" in cautions
     assert "stands on a stepped surface" in cautions
