@@ -9,7 +9,7 @@ from numpy.typing import NDArray
 
 from voxelmat.errors import InputError
 from voxelmat.fea.loads import corners_of_faces, shared
-from voxelmat.fea.operator import Stiffness
+from voxelmat.fea.operator import Product
 from voxelmat.model.loadcase import Foundation
 from voxelmat.model.part import Part
 
@@ -76,7 +76,7 @@ def bed_of(part: Part, load: Foundation, name: str) -> Bed:
 class Coupled:
     """A stiffness, and the couplings between directions of the beds under it."""
 
-    def __init__(self, inner: Stiffness, beds: tuple[Bed, ...]) -> None:
+    def __init__(self, inner: Product, beds: tuple[Bed, ...]) -> None:
         self._inner, self._beds = inner, beds
 
     def apply(self, u: Double, y: Double) -> None:

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from typing import Any
+from typing import Any, Protocol
 
 import numpy as np
 from numpy.typing import NDArray
@@ -13,7 +13,7 @@ from voxelmat.kernels.operator import apply_stiffness
 from voxelmat.kernels.threads import threads
 from voxelmat.kernels.vector import add_product, plane_dots
 
-__all__ = ["Stiffness", "check_moduli", "dot", "planes", "touched_nodes"]
+__all__ = ["Product", "Stiffness", "check_moduli", "dot", "planes", "touched_nodes"]
 
 Floats = NDArray[Any]
 
@@ -60,6 +60,17 @@ def touched_nodes(voxels: NDArray[np.bool_]) -> NDArray[np.bool_]:
         x, y, z = a & 1, a >> 1 & 1, a >> 2
         out[z : z + nz, y : y + ny, x : x + nx] |= voxels
     return out
+
+
+class Product(Protocol):
+    """A stiffness as a product, whatever it is made of."""
+
+    def apply(self, u: Floats, y: Floats) -> None:
+        """Write K u to y."""
+
+    @property
+    def nbytes(self) -> int:
+        """Memory held, bytes."""
 
 
 class Stiffness:

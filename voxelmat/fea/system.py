@@ -12,7 +12,7 @@ from voxelmat.fea.bed import Bed, Coupled
 from voxelmat.fea.element import DEFAULT, Spacing
 from voxelmat.fea.krylov import Iteration, Operator, conjugate_gradients
 from voxelmat.fea.multigrid import METHODS, Grid, Preconditioner, make_preconditioner
-from voxelmat.fea.operator import Stiffness, check_moduli, dot, touched_nodes
+from voxelmat.fea.operator import Product, Stiffness, check_moduli, dot, touched_nodes
 from voxelmat.fea.plate_solver import PlateOperator, PlatePreconditioner
 from voxelmat.fea.plates import PlateSet
 from voxelmat.kernels.threads import crew
@@ -163,7 +163,7 @@ class LinearSystem:
         self._grid = Grid(lam, mu, spacing, element, held, touched, springs)
         stiffness = Stiffness(lam, mu, spacing, element, springs)
         leaning = tuple(bed for bed in beds if bed.leans)
-        self.operator = Coupled(stiffness, leaning) if leaning else stiffness
+        self.operator: Product = Coupled(stiffness, leaning) if leaning else stiffness
         self._automatic = coarse == "auto"
         self._method = first_method(lam, mu, spacing, held) if self._automatic else coarse
         self._preconditioner: Preconditioner | None = None
