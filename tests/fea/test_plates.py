@@ -218,7 +218,10 @@ def test_bonded_disc(grid, resin, element, factor, nu, expected):
 
 
 # ------------------------------------------------------------------ errors
-def plated(*plates, supports=(Support(region=LOW),)):
+FOOT = (Support(region=LOW),)
+
+
+def plated(*plates, supports=FOOT):
     return LoadCase(name="c", supports=supports, plates=plates)
 
 
@@ -257,8 +260,9 @@ def test_a_plate_joins_two_pieces(grid, resin):
     part = Part(grid=grid(5, 2, 3), resins=(resin(),), labels=labels,
                 palette=(EMPTY, Blend.pure("rigid-example")))  # fmt: skip
     foot = Box(name="foot", low=(-0.1, -1, -0.1), high=(2.1, 9, 0.1))
-    case = LoadCase(name="c", supports=(Support(region=foot),), plates=(
-        Plate(name="top", region=HIGH),), loads=(BodyForce(acceleration=(0, 0, -9806.65)),))  # fmt: skip
+    gravity = BodyForce(acceleration=(0, 0, -9806.65))
+    plate = Plate(name="top", region=HIGH)
+    case = LoadCase(name="c", supports=(Support(region=foot),), plates=(plate,), loads=(gravity,))
     result = solve(part, case, tol=1e-10)
     weight = 24 * 1.1e-9 * 9806.65
     assert result.reactions["support 1 on 'foot'"][2] == pytest.approx(weight, rel=1e-7)

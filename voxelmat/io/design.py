@@ -22,6 +22,7 @@ from voxelmat.model.design import (
     LimitEntry,
     LoadEntry,
     OptimiseEntry,
+    PlateEntry,
     PrintEntry,
     RegionEntry,
     RequirementEntry,
@@ -157,23 +158,55 @@ def _body(table: Table) -> BodyEntry:
 
 
 def _support(table: Table, key: str) -> SupportEntry:
-    given = [k for k in ("fixed", "slide", "displacement_mm") if k in table]
+    given = [k for k in ("fixed", "slide", "displacement_mm", "symmetry") if k in table]
     if len(given) != 1 or table.get("displacement_mm") == {}:
         raise InputError(
-            "A support takes exactly one of fixed = true, slide = [directions left free] and "
-            f"displacement_mm = {{ x = .. }}; got {', '.join(given) or 'none'}.",
+            "A support takes exactly one of fixed = true, slide = [directions left free], "
+            "displacement_mm = { x = .. } and symmetry = a side; got "
+            f"{', '.join(given) or 'none'}.",
             key=key,
         )
+    mirrored = given == ["symmetry"]
+    for name in ("region", "rotation_deg", "about_mm", "at_mm"):
+        if name in table and mirrored != (name == "at_mm"):
+            raise InputError(
+                f"{name} does not go with {given[0]}.",
+                key=f"{key}.{name}",
+            )
+    if mirrored:
+        return SupportEntry(region=None, symmetry=table["symmetry"], at_mm=table.get("at_mm"))
+    if "region" not in table:
+        raise InputError("This key is missing.", key=f"{key}.region")
     free: list[str] = table.get("slide", [])
     held = table.get("displacement_mm", {a: 0.0 for a in "xyz" if a not in free})
-    x, y, z = (float(held[a]) if a in held else None for a in "xyz")
-    return SupportEntry(region=table["region"], displacement_mm=(x, y, z))
+    return SupportEntry(
+        region=table["region"],
+        displacement_mm=_maybe(held),
+        **{k: _floats(table[k]) for k in ("rotation_deg", "about_mm") if k in table},
+    )
+
+
+def _maybe(given: Table) -> tuple[float | None, float | None, float | None]:
+    """A table over x, y, z; None for what it leaves out."""
+    x, y, z = (float(given[a]) if a in given else None for a in "xyz")
+    return x, y, z
+
+
+def _plate(table: Table) -> PlateEntry:
+    vectors = {k: _floats(table[k]) for k in ("point_mm", "force_N", "moment_N_mm") if k in table}
+    return PlateEntry(
+        name=table["name"],
+        region=table["region"],
+        translation_mm=_maybe(table.get("translation_mm", {})),
+        rotation_deg=_maybe(table.get("rotation_deg", {})),
+        **vectors,
+    )
 
 
 def _case(table: Table, index: int) -> CaseEntry:
     key = f"load_case[{index}]"
     return CaseEntry(
-        **_rest(table, "support", "load"),
+        **_rest(table, "support", "load", "plate"),
         supports=tuple(
             _support(s, f"{key}.support[{i}]") for i, s in enumerate(table.get("support", ()))
         ),
@@ -185,6 +218,7 @@ def _case(table: Table, index: int) -> CaseEntry:
             )
             for load in table.get("load", ())
         ),
+        plates=tuple(_plate(p) for p in table.get("plate", ())),
     )
 
 

@@ -48,6 +48,7 @@ def check_design(design: Design) -> None:
                 key=f"layout[{i}].range_mm",
             )
     for c, case in enumerate(design.cases):
+        _distinct(f"load_case[{c}].plate", [p.name for p in case.plates])
         for i, load in enumerate(case.loads):
             if load.kind == "pressure map":
                 _check_map(load, f"load_case[{c}].load[{i}]")
@@ -175,7 +176,10 @@ def _region_uses(design: Design) -> Iterable[tuple[str, str]]:
             yield rule.settings["from_region"], f"layout[{i}].from_region"
     for c, case in enumerate(design.cases):
         for i, support in enumerate(case.supports):
-            yield support.region, f"load_case[{c}].support[{i}].region"
+            if support.region is not None:
+                yield support.region, f"load_case[{c}].support[{i}].region"
+        for i, plate in enumerate(case.plates):
+            yield plate.region, f"load_case[{c}].plate[{i}].region"
         for i, load in enumerate(case.loads):
             if load.region is not None:
                 yield load.region, f"load_case[{c}].load[{i}].region"

@@ -25,6 +25,7 @@ __all__ = [
     "LimitEntry",
     "LoadEntry",
     "OptimiseEntry",
+    "PlateEntry",
     "PrintEntry",
     "RegionEntry",
     "RequirementEntry",
@@ -141,10 +142,31 @@ class LayoutEntry:
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class SupportEntry:
-    """Displacement along x, y, z in mm on a region; None leaves that direction free."""
+    """Displacement along x, y, z in mm on a region; None leaves that direction free.
 
+    `rotation_deg` about `about_mm` comes on top. With `symmetry`, a side of the part, it is the
+    mirror plane on that side (at `at_mm`, where that is given), and `region` is None.
+    """
+
+    region: str | None
+    displacement_mm: tuple[float | None, float | None, float | None] = (None, None, None)
+    rotation_deg: Triple = (0.0, 0.0, 0.0)
+    about_mm: Triple = (0.0, 0.0, 0.0)
+    symmetry: str | None = None
+    at_mm: float | None = None
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class PlateEntry:
+    """A region that moves as one body; None leaves a motion free or the point to the region."""
+
+    name: str
     region: str
-    displacement_mm: tuple[float | None, float | None, float | None]
+    point_mm: Triple | None = None
+    translation_mm: tuple[float | None, float | None, float | None] = (None, None, None)
+    rotation_deg: tuple[float | None, float | None, float | None] = (None, None, None)
+    force_N: Triple = (0.0, 0.0, 0.0)
+    moment_N_mm: Triple = (0.0, 0.0, 0.0)
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -167,6 +189,7 @@ class CaseEntry:
     temperature_degC: float
     cycles: int
     weight: float = 1.0
+    plates: tuple[PlateEntry, ...] = ()
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

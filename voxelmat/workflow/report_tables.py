@@ -8,16 +8,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from voxelmat.model.loadcase import (
-    BodyForce,
-    Force,
-    GroundSpring,
-    Load,
-    LoadCase,
-    Pressure,
-    PressureMap,
-    Support,
-)
+from voxelmat.model.loadcase import LoadCase
 from voxelmat.model.part import Part
 from voxelmat.model.region import solid_nodes
 from voxelmat.model.requirement import Requirement, Verdict
@@ -26,6 +17,14 @@ from voxelmat.model.surface import carriers
 from voxelmat.units import number, quantity
 from voxelmat.workflow.colours import resin_colours
 from voxelmat.workflow.report_data import RunData, StackSummary
+from voxelmat.workflow.report_words import (
+    expectation,
+    held_words,
+    load_words,
+    percent,
+    place,
+    plate_words,
+)
 
 __all__ = [
     "Table",
@@ -35,6 +34,8 @@ __all__ = [
     "found_table",
     "load_table",
     "measured",
+    "percent",
+    "place",
     "resin_table",
     "stack_table",
     "verdict_rows",
@@ -61,20 +62,6 @@ class Table:
     caption: str = ""
     numbers: tuple[int, ...] = ()
     swatches: tuple[str, ...] = ()
-
-
-def percent(share: float) -> str:
-    """A signed share in percent, with a true minus sign."""
-    if not math.isfinite(share):
-        return "not known"
-    text = number(abs(100.0 * share), 2)
-    return f"{'−' if share < 0 else '+'}{text} %"
-
-
-def place(point: Sequence[float]) -> str:
-    """The components of a place or a force; what is nothing beside the largest is 0."""
-    top = max(abs(p) for p in point)
-    return ", ".join(number(p if abs(p) > 1e-6 * top else 0.0) for p in point)
 
 
 def asked(requirement: Requirement) -> str:
@@ -173,45 +160,11 @@ def resin_table(part: Part) -> Table:
     )
 
 
-def _held(support: Support) -> str:
-    texts = []
-    for axis, move in zip("xyz", support.displacement, strict=True):
-        if move is not None:
-            texts.append(f"{axis} held" if move == 0 else f"{axis} moved {number(move)} mm")
-    return ", ".join(texts)
-
-
-def expectation(force: float, expected: float) -> str:
-    """How a resultant compares with what the design expects, in words."""
-    off = force / expected - 1
-    if abs(off) < 1e-3:
-        return f"as the design expects ({number(expected)} N)"
-    return f"the design expects {number(expected)} N, so this is {percent(off)}"
-
-
-def _load_words(load: Load) -> tuple[str, str, str]:
-    """Kind, where, and how much."""
-    if isinstance(load, Force):
-        return "force", load.region.name, f"{place(load.vector)} N along x, y, z"
-    if isinstance(load, Pressure):
-        return "pressure", load.region.name, f"{number(1e3 * load.pressure)} kPa"
-    if isinstance(load, PressureMap):
-        words = f"{number(load.resultant)} N from {load.side}, acting {load.acts}"
-        if load.expected_force is not None:
-            words += f"; {expectation(load.resultant, load.expected_force)}"
-        return f"pressure map {load.source_file}", load.region.name, words
-    if isinstance(load, BodyForce):
-        where = load.region.name if load.region is not None else "everywhere"
-        return "body force", where, f"{place(load.acceleration)} mm/s² along x, y, z"
-    if isinstance(load, GroundSpring):
-        return "spring to ground", load.region.name, f"{place(load.stiffness)} N/mm along x, y, z"
-    raise TypeError(f"No words for a load of type {type(load).__name__}.")
-
-
 def load_table(case: LoadCase) -> Table:
     """Supports and loads of a case."""
-    rows = [("support", s.region.name, _held(s)) for s in case.supports]
-    rows += [_load_words(load) for load in case.loads]
+    rows = [("support", s.region.name, held_words(s)) for s in case.supports]
+    rows += [(f"plate {p.name}", p.region.name, plate_words(p)) for p in case.plates]
+    rows += [load_words(load) for load in case.loads]
     return Table(
         head=("what", "where", "how much"),
         rows=tuple(rows),
@@ -239,6 +192,15 @@ def found_table(run: RunData, name: str) -> Table:
         )
     for key, force3 in result.reactions.items():
         rows.append((f"reaction of {key}", f"{place(force3)} N", "along x, y, z"))
+    for key, plate in result.plates.items():
+        degrees = place([math.degrees(r) for r in plate.rotation])
+        rows.append(
+            (
+                f"plate {key} at {place(plate.point)} mm",
+                f"moves {place(plate.translation)} mm, turns {degrees}°",
+                f"pushes the part with {place(plate.force)} N, {place(plate.moment)} N mm",
+            )
+        )
     safety = run.safety.get(name)
     if safety is not None and np.isfinite(safety).any():
         spot = np.unravel_index(int(np.nanargmin(safety)), safety.shape)
@@ -258,7 +220,18 @@ def found_table(run: RunData, name: str) -> Table:
             _against(math.degrees(turn.value), math.degrees(ROTATION_LIMIT), "°", turn.place_mm),
         ),
         ("loads against reactions", number(result.balance), "difference over load; 0 is exact"),
+        ("residual of the solver", number(result.residual, 2), "over the load; 0 is exact"),
     ]
+    error = run.energy_error.get(name)
+    if error is not None:
+        rows.append(
+            (
+                "estimated error by voxel size",
+                f"{number(100 * error.share, 2)} %",
+                f"of the strain energy, without the steps of the outline; most at "
+                f"{place(error.place_mm)} mm",
+            )
+        )
     return Table(head=("figure", "value", "note"), rows=tuple(rows), numbers=(1,))
 
 

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Mapping
 from dataclasses import dataclass, field
 
@@ -10,21 +11,33 @@ from numpy.typing import NDArray
 
 from voxelmat.errors import InputError
 from voxelmat.io.tables import read_deflection_map, read_pressure_map
-from voxelmat.model.design import CaseEntry, Design, LoadEntry, SupportEntry, TargetEntry
+from voxelmat.model.design import (
+    CaseEntry,
+    Design,
+    LoadEntry,
+    PlateEntry,
+    SupportEntry,
+    TargetEntry,
+)
 from voxelmat.model.interface import Bond
 from voxelmat.model.loadcase import (
     BodyForce,
     Force,
+    Foundation,
     GroundSpring,
+    InitialStrain,
     Load,
     LoadCase,
+    Plate,
     Pressure,
     PressureMap,
     Support,
+    Temperature,
 )
 from voxelmat.model.part import Part
 from voxelmat.model.region import Region
 from voxelmat.model.requirement import Requirement
+from voxelmat.model.symmetry import symmetry_support
 from voxelmat.monitor import SILENT, Monitor
 from voxelmat.workflow.maps import LaidMap, check_laid, sample
 from voxelmat.workflow.regions import at_key, box_words, regions_of, whole_part
@@ -170,11 +183,16 @@ def _case(
 ) -> LoadCase:
     supports, loads = [], []
     for i, support in enumerate(entry.supports):
-        with at_key(design, f"load_case[{number}].support[{i}].region"):
+        last = "region" if support.symmetry is None else "symmetry"
+        with at_key(design, f"load_case[{number}].support[{i}].{last}"):
             supports.append(_support(support, regions, part))
     for i, load in enumerate(entry.loads):
         with at_key(design, f"load_case[{number}].load[{i}]"):
-            loads.append(_load(design, load, regions, part))
+            loads.append(_load(design, entry, load, regions, part))
+    plates = []
+    for i, plate in enumerate(entry.plates):
+        with at_key(design, f"load_case[{number}].plate[{i}]"):
+            plates.append(_plate(plate, regions, part))
     with at_key(design, f"load_case[{number}]"):
         return LoadCase(
             name=entry.name,
@@ -184,12 +202,39 @@ def _case(
             temperature_degC=entry.temperature_degC,
             cycles=entry.cycles,
             weight=entry.weight,
+            plates=tuple(plates),
         )
 
 
 def _support(entry: SupportEntry, regions: Mapping[str, Region], part: Part) -> Support:
-    region = _on_material(regions[entry.region], part)
-    return Support(region=region, displacement=entry.displacement_mm)
+    if entry.symmetry is not None:
+        support = symmetry_support(entry.symmetry, entry.at_mm)
+        _on_material(support.region, part)  # refuses a plane that misses the part
+        return support
+    return Support(
+        region=_on_material(regions[entry.region or ""], part),
+        displacement=entry.displacement_mm,
+        rotation=_radians(entry.rotation_deg),
+        about=entry.about_mm,
+    )
+
+
+def _radians(degrees: tuple[float, float, float]) -> tuple[float, float, float]:
+    x, y, z = degrees
+    return math.radians(x), math.radians(y), math.radians(z)
+
+
+def _plate(entry: PlateEntry, regions: Mapping[str, Region], part: Part) -> Plate:
+    x, y, z = (None if v is None else math.radians(v) for v in entry.rotation_deg)
+    return Plate(
+        name=entry.name,
+        region=_on_material(regions[entry.region], part),
+        point=entry.point_mm,
+        translation=entry.translation_mm,
+        rotation=(x, y, z),
+        force=entry.force_N,
+        moment=entry.moment_N_mm,
+    )
 
 
 def _on_material(region: Region, part: Part) -> Region:
@@ -209,7 +254,9 @@ def _on_surface(region: Region, part: Part) -> Region:
     return region
 
 
-def _load(design: Design, entry: LoadEntry, regions: Mapping[str, Region], part: Part) -> Load:
+def _load(
+    design: Design, case: CaseEntry, entry: LoadEntry, regions: Mapping[str, Region], part: Part
+) -> Load:
     region = whole_part() if entry.region is None else regions[entry.region]
     given = entry.settings
     match entry.kind:
@@ -225,6 +272,23 @@ def _load(design: Design, entry: LoadEntry, regions: Mapping[str, Region], part:
         case "spring":
             return GroundSpring(
                 region=_on_material(region, part), stiffness=_three(given["stiffness_N_mm"])
+            )
+        case "foundation":
+            return Foundation(
+                region=_on_surface(region, part),
+                stiffness=given["stiffness_N_mm3"],
+                acts=given.get("acts", "normal"),
+            )
+        case "temperature":
+            return Temperature(
+                region=None if entry.region is None else _on_material(region, part),
+                temperature=given.get("temperature_degC", case.temperature_degC),
+                stress_free=given["stress_free_degC"],
+            )
+        case "initial strain":
+            return InitialStrain(
+                region=None if entry.region is None else _on_material(region, part),
+                strain=np.asarray(given["strain"], dtype=np.float64),
             )
         case "pressure map":
             values = read_pressure_map(

@@ -10,7 +10,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from voxelmat.model.laws import CalibratedCurve
-from voxelmat.model.loadcase import GroundSpring
+from voxelmat.model.loadcase import Foundation, GroundSpring
 from voxelmat.model.part import Part
 from voxelmat.model.result import StaticResult
 
@@ -93,12 +93,16 @@ def _energy(result: StaticResult) -> Floats:
 
 def _spring_energy(result: StaticResult) -> float:
     """Energy in springs to the ground, mJ: what the loads did and the part did not keep."""
-    if not any(isinstance(load, GroundSpring) for load in result.load_case.loads):
+    if not any(isinstance(load, GroundSpring | Foundation) for load in result.load_case.loads):
         return 0.0
     work = sum(
         along * float(np.linalg.norm(result.resultants[name]))
         for name, along in result.load_displacement.items()
     )
+    for plate in result.load_case.plates:
+        motion = result.plates[plate.name]
+        work += float(np.dot(plate.force, motion.translation))
+        work += float(np.dot(plate.moment, motion.rotation))
     return max(0.0, 0.5 * work - result.energy)
 
 
@@ -137,10 +141,16 @@ def spread_of(result: StaticResult) -> Spread:
 
 
 def driven_by(result: StaticResult) -> str:
-    """What moves the part: ``"force"``, ``"displacement"`` or ``"both"``."""
+    """What moves the part: ``"force"``, ``"displacement"`` or ``"both"``.
+
+    A strain that the material takes of itself, by temperature, counts as a displacement: stiffer
+    material does not move less for it.
+    """
     case = result.load_case
-    moved = any(d not in (None, 0.0) for s in case.supports for d in s.displacement)
+    moved = case.strains or any(s.moves for s in case.supports)
+    moved |= any(p.moves for p in case.plates)
     forced = any(np.any(np.asarray(f) != 0) for f in result.resultants.values())
+    forced |= any(any(p.force) or any(p.moment) for p in case.plates)
     if moved:
         return "both" if forced else "displacement"
     return "force"
