@@ -169,6 +169,23 @@ def test_a_free_part_moves_as_a_rigid_body_at_low_frequency():
     assert abs(moved[1]) < 1e-6 * abs(moved[0])
 
 
+def test_rest_of_a_free_part_is_its_relaxed_shape():
+    # One mode and the rest against all modes of the part, far below the first.
+    part = bar(0.1, 0.1)
+    corner = Force(
+        region=Box(name="corner", low=(-1, -1, -1), high=(0.1, 0.1, 0.1)), vector=(1.0, 2.0, -3.0)
+    )
+    few, every = (modes(part, count=n, tol=1e-8) for n in (1, 3 * 8 * 3 * 4 - 6))
+    f = few.frequencies[0] * 0.01
+    a, b = (harmonic(m, [f], loads=[corner]) for m in (few, every))
+    elastic = [
+        h.field(0) - np.tensordot(h.rigid_coordinates[0], h.modal.rigid_shapes, 1) for h in (a, b)
+    ]
+    size = np.abs(elastic[1]).max()
+    np.testing.assert_allclose(elastic[0], elastic[1], atol=2e-4 * size)
+    assert np.abs(b.rest).max() < 1e-6 * size
+
+
 @pytest.mark.parametrize("free", [False, True])
 def test_few_modes_with_the_rest_equal_many_modes(free):
     part = bar(0.1, 0.1)
@@ -177,6 +194,18 @@ def test_few_modes_with_the_rest_equal_many_modes(free):
     f = few.frequencies[0] * np.array([0.1, 0.5, 0.9])
     a, b = (harmonic(m, f, loads=[PUSH]).over(FAR) for m in (few, many))
     np.testing.assert_allclose(a, b, atol=0.01 * np.abs(b).max())
+
+
+@pytest.mark.parametrize("stiffness", [1e-4, 1e-2])
+def test_a_soft_spring_does_not_drown_the_rest(stiffness):
+    # The bounce on the spring moves thousands of times further than the bar is stretched.
+    part = bar(0.1, 0.1)
+    spring = GroundSpring(region=NEAR, stiffness=(stiffness, 0.0, 0.0))
+    few, many = (modes(part, springs=[spring], count=n, tol=1e-8) for n in (3, 80))
+    stretch = Force(region=FAR, vector=(1.0, 0.0, 0.0))
+    a, b = (harmonic(m, [few.frequencies[1] * 0.05], loads=[stretch]) for m in (few, many))
+    own = [h.over(FAR)[0, 0] - h.over(NEAR)[0, 0] for h in (a, b)]
+    assert own[0] == pytest.approx(own[1], rel=5e-3)
 
 
 def test_loss_factor_of_a_mode_lies_between_those_of_its_materials():

@@ -6,6 +6,7 @@ from collections.abc import Sequence
 from typing import NamedTuple
 
 import numpy as np
+import scipy.linalg
 from numpy.typing import ArrayLike, NDArray
 
 from voxelmat.errors import InputError
@@ -35,6 +36,8 @@ DAMPINGS = ("structural", "viscous")
 
 # Above this share of the highest mode found, the modes beyond it begin to swing too; ours.
 _REACH = 2.0 / 3.0
+# Residual of the static solve over the force; and a force that small counts as none.
+_TOL, _NOTHING = 1e-8, 1e-7
 
 
 class _Grid(NamedTuple):
@@ -54,17 +57,28 @@ def _grid(modal: ModalResult, monitor: Monitor) -> _Grid:
     lam, mu = moduli(part)
     acts, _ = anchors(part, modal.supports, modal.springs, "a harmonic run")
     spacing = part.grid.spacing
+    rigid = modal.rigid_shapes.transpose(0, 4, 3, 2, 1)
+    held = acts.held | _pins(rigid)
     return _Grid(
         lam=lam,
         mu=mu,
         mass=Mass(densities(part), spacing, modal.mass_model),
         system=LinearSystem(
-            lam, mu, spacing, acts.held, springs=acts.springs, element=element, monitor=monitor
+            lam, mu, spacing, held, springs=acts.springs, element=element, monitor=monitor
         ),
         springs=acts.springs,
         shapes=modal.shapes.transpose(0, 4, 3, 2, 1),
-        rigid=modal.rigid_shapes.transpose(0, 4, 3, 2, 1),
+        rigid=rigid,
     )
+
+
+def _pins(rigid: Double) -> NDArray[np.bool_]:
+    """As few unknowns as stop the rigid motions, far apart; balanced forces do not load them."""
+    out = np.zeros(rigid.shape[1:], dtype=bool)
+    if len(rigid):
+        _, order = scipy.linalg.qr(rigid.reshape(len(rigid), -1), mode="r", pivoting=True)
+        out.ravel()[order[: len(rigid)]] = True
+    return out
 
 
 def _force(modal: ModalResult, grid: _Grid, base: Vector | None, loads: Sequence[Load]) -> Double:
@@ -89,20 +103,25 @@ def _projected(shapes: Double, force: Double) -> Double:
     return np.array([float((s * force).sum()) for s in shapes])
 
 
-def _rest(grid: _Grid, force: Double, share: Double, omega: Double) -> Double:
-    """Static answer less that of the modes found, without the part that rigid motions have."""
-    force = force.copy()
-    inertia = np.empty_like(force)
-    for shape, p in zip(grid.rigid, _projected(grid.rigid, force), strict=True):
+def _rest(grid: _Grid, force: Double) -> Double:
+    """Static answer of everything but the motions and modes that are known.
+
+    Their share is taken out of the force first: what soft modes would move is far larger than
+    the rest, and rounding of it would drown the rest.
+    """
+    known = np.concatenate([grid.rigid, grid.shapes])
+    left, inertia = force.copy(), np.empty_like(force)
+    full = float(np.linalg.norm(left * grid.system.free))
+    for shape, p in zip(known, _projected(known, force), strict=True):
         grid.mass.apply(np.ascontiguousarray(shape), inertia)
-        force -= p * inertia
-    u = grid.system.solve(force).u
-    if len(grid.rigid):
-        grid.mass.apply(u, inertia)
-        for shape, p in zip(grid.rigid, _projected(grid.rigid, inertia), strict=True):
-            u -= p * shape
-    for shape, p, w in zip(grid.shapes, share, omega, strict=True):
-        u -= (p / w**2) * shape
+        left -= p * inertia
+    size = float(np.linalg.norm(left * grid.system.free))
+    if not size > _NOTHING * full:
+        return np.zeros_like(force)
+    u = grid.system.solve(left, tol=_TOL * max(1.0, full / size)).u
+    grid.mass.apply(u, inertia)
+    for shape, p in zip(known, _projected(known, inertia), strict=True):
+        u -= p * shape
     return u
 
 
@@ -202,7 +221,7 @@ def harmonic(
     grid = _grid(modal, monitor)
     force = _force(modal, grid, base, loads)
     share, rigid_share = _projected(grid.shapes, force), _projected(grid.rigid, force)
-    rest = _rest(grid, force, share, modal.angular)
+    rest = _rest(grid, force)
     loss, rest_loss = _losses(modal, grid, rest, loss_factor)
     omega = 2.0 * np.pi * f
     # What the base does grows with the square of the frequency.
