@@ -1,0 +1,237 @@
+"""What a static solve takes, before it is begun: bytes and seconds, and whether it fits.
+
+The figures a voxel were measured on whole solves of full blocks of 48^3 to 128^3 voxels, results
+included. They count the voxels of the grid's box, empty ones too.
+"""
+
+from __future__ import annotations
+
+import math
+import os
+import sys
+import time
+from dataclasses import dataclass
+from pathlib import Path
+
+import numpy as np
+
+from voxelmat.errors import ResourceError
+from voxelmat.fea.assemble import assemble, moduli
+from voxelmat.fea.element import DEFAULT
+from voxelmat.fea.operator import Stiffness
+from voxelmat.fea.system import first_method
+from voxelmat.kernels.threads import crew
+from voxelmat.model.grid import VoxelGrid
+from voxelmat.model.loadcase import LoadCase
+from voxelmat.model.part import Part
+from voxelmat.monitor import computing
+
+__all__ = ["SolveEstimate", "available_bytes", "check_fits", "estimate_solve", "peak_bytes"]
+
+# Peak bytes a voxel of the box, and what the dense coarsest level adds whatever the size.
+_BYTES = {"avg2": 470, "gal4b": 620}
+_STRAIN_BYTES = 100  # free strains: their own field, forces and energy
+_FIXED_BYTES = 160_000_000
+# Seconds as multiples of one product with the stiffness: an iteration; all else; and iterations,
+# few and many. Many is where the automatic choice goes over to another method.
+_ITERATION = {"avg2": 10.0, "gal4b": 30.0}
+_REST = {"avg2": 150.0, "gal4b": 230.0}
+_ITERATIONS = {"avg2": (8, 45), "gal4b": (12, 200)}
+_FIXED_S = 1.0
+# The product is timed on a block of up to so many voxels an axis: large enough to leave caches.
+_TRIAL = 64
+# Where Linux keeps the limit and the use of a group of processes, both generations.
+_GROUPS = (
+    ("memory.max", "memory.current"),
+    ("memory/memory.limit_in_bytes", "memory/memory.usage_in_bytes"),
+)
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class SolveEstimate:
+    """What one load case will take, about.
+
+    Attributes
+    ----------
+    method : str
+        Coarse method that the solver begins with.
+    voxels, unknowns : int
+        Of the box; unknowns of its nodes, those without material too.
+    bytes : int
+        At the peak, beside what the process holds already.
+    bytes_a_voxel : float
+    seconds : tuple of float
+        Few and many iterations, compiling left out, with the machine as busy as it is now.
+    available : int or None
+        Bytes that can be had now; None where the system does not tell.
+    """
+
+    method: str
+    voxels: int
+    unknowns: int
+    bytes: int
+    bytes_a_voxel: float
+    seconds: tuple[float, float]
+    available: int | None
+
+    @property
+    def fits(self) -> bool:
+        """False where it would not fit; True where that is not known."""
+        return self.available is None or self.bytes <= self.available
+
+
+def _number(path: str) -> int | None:
+    """The number in a file of the system, None where there is none."""
+    try:
+        return int(Path(path).read_text(encoding="ascii").strip())
+    except (OSError, ValueError):
+        return None
+
+
+def available_bytes() -> int | None:
+    """Memory that can be had now, bytes; None where the system does not tell.
+
+    The least of what the machine has free and what a limit on the process's group leaves. Where
+    only the size of the machine is known, all of it.
+    """
+    found = []
+    try:
+        lines = Path("/proc/meminfo").read_text(encoding="ascii").splitlines()
+        found += [1024 * int(s.split()[1]) for s in lines if s.startswith("MemAvailable:")]
+    except (OSError, ValueError, IndexError):
+        pass
+    for limit, used in _GROUPS:
+        most, now = _number(f"/sys/fs/cgroup/{limit}"), _number(f"/sys/fs/cgroup/{used}")
+        if most is not None and now is not None:
+            found.append(max(most - now, 0))
+    if found:
+        return min(found)
+    try:
+        return os.sysconf("SC_PHYS_PAGES") * os.sysconf("SC_PAGE_SIZE")
+    except (AttributeError, ValueError, OSError):
+        return None
+
+
+def peak_bytes() -> int | None:
+    """Most memory that this process has held so far, bytes; None where the system does not tell."""
+    try:
+        import resource
+    except ImportError:
+        return None
+    most = resource.getrusage(resource.RUSAGE_SELF).ru_maxrss
+    return int(most) * (1 if sys.platform == "darwin" else 1024)
+
+
+def _bytes(voxels: int, method: str, strains: bool) -> int:
+    return voxels * (_BYTES[method] + strains * _STRAIN_BYTES) + _FIXED_BYTES
+
+
+def _product_seconds(part: Part, element: str) -> float:
+    """Seconds of one product with the stiffness of the part, timed on a piece of its size."""
+    shape = tuple(min(n, _TRIAL) for n in part.grid.shape[::-1])
+    ones = np.ones(shape)
+    K = Stiffness(ones, ones, part.grid.spacing, element)
+    u, y = np.ones(K.shape), np.empty(K.shape)
+    best = math.inf
+    with computing(), crew(u[0].size):
+        K.apply(u, y)  # compiled, or read from the cache
+        for _ in range(3):
+            start = time.perf_counter()
+            K.apply(u, y)
+            best = min(best, time.perf_counter() - start)
+    return best * part.grid.n_voxels / ones.size
+
+
+def estimate_solve(
+    part: Part, load_case: LoadCase | None = None, *, element: str = DEFAULT
+) -> SolveEstimate:
+    """What a static solve will take, before it is begun; takes well under a second itself.
+
+    Parameters
+    ----------
+    part : Part
+    load_case : LoadCase, optional
+        Supports on few points call for the dearer coarse method.
+    element : str
+
+    Returns
+    -------
+    SolveEstimate
+        Memory is meant to be right within a third, seconds within a few times.
+    """
+    method, strains = _method(part, load_case)
+    voxels = part.grid.n_voxels
+    product = _product_seconds(part, element)
+    few, many = (product * (_REST[method] + n * _ITERATION[method]) for n in _ITERATIONS[method])
+    needed = _bytes(voxels, method, strains)
+    return SolveEstimate(
+        method=method,
+        voxels=voxels,
+        unknowns=3 * math.prod(part.grid.node_shape),
+        bytes=needed,
+        bytes_a_voxel=needed / voxels,
+        seconds=(few, many + _FIXED_S),
+        available=available_bytes(),
+    )
+
+
+def _method(part: Part, load_case: LoadCase | None) -> tuple[str, bool]:
+    """Coarse method to begin with, and whether there are free strains."""
+    lam, mu = moduli(part)
+    if load_case is None:
+        held, strains = np.zeros((3, *(n + 1 for n in lam.shape)), dtype=bool), False
+    else:
+        acts = assemble(part, load_case, everything=True)
+        held, strains = acts.held, acts.free is not None
+    return first_method(lam, mu, part.grid.spacing, held), strains
+
+
+def _coarser(grid: VoxelGrid, needed: int, available: int) -> str:
+    """The spacing that would fit, in words."""
+    room = available - _FIXED_BYTES
+    if room <= 0:
+        return "no voxel size would: even the smallest solve takes more"
+    # Two hundredths more: a part never fills whole voxels exactly.
+    factor = 1.02 * ((needed - _FIXED_BYTES) / room) ** (1.0 / 3.0)
+    size = " x ".join(f"{math.ceil(1000 * h * factor) / 1000:g}" for h in grid.spacing)
+    return f"voxels of {size} mm would"
+
+
+def check_fits(
+    part: Part, load_case: LoadCase | None = None, *, available: int | None = None
+) -> int:
+    """Refuse a static solve that would not fit into memory.
+
+    Parameters
+    ----------
+    part : Part
+    load_case : LoadCase, optional
+    available : int, optional
+        Bytes that may be used; what `available_bytes` tells if left out.
+
+    Returns
+    -------
+    int
+        Bytes that the solve will take.
+
+    Raises
+    ------
+    ResourceError
+        Names the voxel size that would fit.
+    """
+    if available is None:
+        available = available_bytes()
+    # With the cheapest method already too large: say so before more memory is touched.
+    least = _bytes(part.grid.n_voxels, "avg2", False)
+    needed = least
+    if available is not None and least <= available:
+        needed = _bytes(part.grid.n_voxels, *_method(part, load_case))
+    if available is not None and needed > available:
+        n, h = part.grid.shape, part.grid.spacing
+        raise ResourceError(
+            f"A solve of {n[0]} x {n[1]} x {n[2]} voxels of {h[0]:g} x {h[1]:g} x {h[2]:g} mm "
+            f"takes about {needed / 2**30:.3g} GiB of memory and {available / 2**30:.3g} GiB can "
+            f"be had now: it does not fit; {_coarser(part.grid, needed, available)}. Use larger "
+            f"voxels (grid.spacing_mm) or close other programs."
+        )
+    return needed
