@@ -263,11 +263,18 @@ sys.path.insert(0, sys.argv[1])
 import voxelmat.kernels.threads as threads
 threads._WORTH = 1
 from test_modal import block, ROOT, eigen, modes
+from voxelmat.fea.buckling import buckling
+from voxelmat.model.loadcase import Force, LoadCase
+from voxelmat.model.region import FaceRegion
 eigen._DENSE = 0
+part = block((7, 4, 9), (7.0, 4.0, 9.0))
+push = Force(region=FaceRegion(name="far", side="x+"), vector=(-1.0, 0.1, 0.0))
+case = LoadCase(name="a", supports=(ROOT,), loads=(push,))
 for count in (1, 2):
     threads.set_threads(count)
-    found = modes(block((7, 4, 9), (7.0, 4.0, 9.0)), [ROOT], count=3)
-    code = hashlib.sha256(found.shapes.tobytes() + found.frequencies.tobytes()).hexdigest()
+    found, bent = modes(part, [ROOT], count=3), buckling(part, case, count=2)
+    arrays = (found.shapes, found.frequencies, bent.shapes, bent.factors)
+    code = hashlib.sha256(b"".join(a.tobytes() for a in arrays)).hexdigest()
     print(threads.threads(), code)
 """
 
