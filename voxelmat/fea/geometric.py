@@ -93,6 +93,7 @@ class GeometricStiffness:
     """
 
     def __init__(self, stress: Double, full: NDArray[np.bool_], spacing: Spacing) -> None:
+        # The kernel's modes are plain sums over the 8 corners; these make gradients of them.
         g = [0.25 / h for h in spacing]
         volume = float(np.prod(spacing))
         pairs = list(_CONSTANT)
@@ -100,7 +101,6 @@ class GeometricStiffness:
             a, b = (d for d in range(3) if d != v)
             pairs += [(a, a), (b, b), (a, b)]
         factor = np.array([volume * g[a] * g[b] for a, b in pairs])
-        # The mean square of a sum of corners over 8 is what the kernel's modes stand for.
         self._stress = np.ascontiguousarray(stress * factor[:, None, None, None])
         self._full = np.ascontiguousarray(full)
 
