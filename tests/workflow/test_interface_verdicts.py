@@ -7,6 +7,7 @@ import dataclasses
 import numpy as np
 import pytest
 
+from voxelmat.fea.energy_error import energy_error
 from voxelmat.fea.static import solve
 from voxelmat.model.blend import EMPTY, Blend
 from voxelmat.model.grid import VoxelGrid
@@ -130,6 +131,8 @@ def test_the_report_lists_the_worst_places(made_up):
     assert "worst places" not in render(run)
     _, result = judged()
     spots = interface_spots(result, (bond(),))
-    page = render(dataclasses.replace(run, interfaces={"palm": spots}))
+    errors = {"palm": energy_error(result)}
+    page = render(dataclasses.replace(run, interfaces={"palm": spots}, energy_error=errors))
+    assert page.count("estimated error by voxel size") == 1
     assert page.count("worst places, mm") == 1
     assert "hard + soft" in page

@@ -75,6 +75,9 @@ def as_dict(
                 "force_balance": r.balance,
                 "iterations": r.iterations,
                 "residual": r.residual,
+                "estimated_energy_error": (
+                    data.energy_error[name].share if name in data.energy_error else None
+                ),
                 "as_printed_largest_displacement_mm": (
                     float(data.as_printed[name].size.max()) if name in data.as_printed else None
                 ),

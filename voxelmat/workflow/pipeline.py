@@ -12,6 +12,7 @@ from typing import Any
 from filelock import FileLock, Timeout
 
 from voxelmat.errors import Cancelled, InputError, ResourceError
+from voxelmat.fea.energy_error import energy_error
 from voxelmat.fea.static import solve
 from voxelmat.io.atomic import explain_os_error, write_json
 from voxelmat.io.store import save_part
@@ -264,6 +265,7 @@ class _Run:
             as_printed=again,
             verdicts=answers,
             safety={name: safety_factors(r) for name, r in results.items()},
+            energy_error={name: energy_error(r) for name, r in results.items()},
             interfaces={
                 name: interface_spots(r, built.resolved.bonds) for name, r in results.items()
             },

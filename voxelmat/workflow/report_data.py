@@ -8,6 +8,7 @@ from dataclasses import dataclass, field
 import numpy as np
 from numpy.typing import NDArray
 
+from voxelmat.fea.energy_error import EnergyError
 from voxelmat.model.design_result import DesignResult
 from voxelmat.model.finding import Finding
 from voxelmat.model.interface import InterfaceSpot
@@ -116,6 +117,8 @@ class RunData:
         By load case, strength over stress in each voxel; nan where no strength is known.
     interfaces : mapping of str to tuple of InterfaceSpot
         By load case, the worst places where two resins meet.
+    energy_error : mapping of str to EnergyError
+        By load case, the estimated error by the voxel size.
     optimised : DesignResult or None
     stack : StackSummary or None
     findings : tuple of Finding
@@ -138,6 +141,7 @@ class RunData:
     verdicts: tuple[Verdict, ...] = ()
     safety: Mapping[str, NDArray[np.float32]] = field(default_factory=dict)
     interfaces: Mapping[str, tuple[InterfaceSpot, ...]] = field(default_factory=dict)
+    energy_error: Mapping[str, EnergyError] = field(default_factory=dict)
     optimised: DesignResult | None = None
     stack: StackSummary | None = None
     findings: tuple[Finding, ...] = ()
