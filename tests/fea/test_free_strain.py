@@ -7,9 +7,11 @@ from hypothesis import strategies as st
 
 from voxelmat.errors import InputError
 from voxelmat.fea.free_strain import FreeStrain
+from voxelmat.fea.heat import conduct
 from voxelmat.fea.sensitivity import stiffness_forms
 from voxelmat.fea.static import solve
 from voxelmat.model.blend import EMPTY, Blend
+from voxelmat.model.heatcase import FixedTemperature, HeatCase
 from voxelmat.model.loadcase import Force, InitialStrain, LoadCase, Plate, Support, Temperature
 from voxelmat.model.material import Constant
 from voxelmat.model.part import Part
@@ -215,6 +217,38 @@ def test_only_a_region_expands(grid, resin):
     # two halves in series, one of which expands: -E a dT / 2 on the mean (formula)
     mean = result.reactions["support 2 on 'symmetry plane x+'"][0]
     assert mean == pytest.approx(-2000 * 5e-3 / 2, rel=1e-9)
+
+
+# Levin 1967: a* = a1 + (a2 - a1) (1/K* - 1/K1) / (1/K2 - 1/K1) with the law's own K*; a clamped
+# block of the blend then has stress -3 K* a* dT (formula).
+def test_clamped_blend(grid, resin):
+    one, two = expanding(resin, "one", 1.0, 0.45, 1e-4), expanding(resin, "two", 10.0, 0.3, 2e-5)
+    part = Part(grid=grid(2, 2, 2), resins=(one, two), labels=np.ones((2, 2, 2), dtype=np.uint16),
+                palette=(EMPTY, Blend.of({"one": 2, "two": 1})))  # fmt: skip
+    K = part.palette_moduli()[0][1]
+    share = (1 / K - 1 / one.bulk) / (1 / two.bulk - 1 / one.bulk)
+    alpha = 1e-4 + (2e-5 - 1e-4) * share
+    result = solve(part, warm(*SIX))
+    np.testing.assert_allclose(result.stress[..., :3], -3 * K * alpha * 50.0, rtol=1e-6)
+    assert 2e-5 < alpha < 1e-4
+
+
+def test_from_heat_conduction_to_warp(grid, resin):
+    """A plate warm below and cold above bends to curvature a (T1 - T2) / h without stress."""
+    metal = expanding(resin).replace(
+        conductivity=Constant(value=0.2), temperature_range_degC=(15.0, 60.0)
+    )
+    part = Part.uniform(grid(6, 2, 2), metal)
+    faces = (("z-", 63.0), ("z+", 23.0))
+    fixed = tuple(
+        FixedTemperature(region=FaceRegion(name=s, side=s), temperature_degC=t) for s, t in faces
+    )
+    heat = conduct(part, HeatCase(name="h", fixed=fixed))
+    result = solve(part, warm(*three_points(6.0, 2.0), temperature=heat.temperature), tol=1e-12)
+    assert np.abs(result.stress).max() < 1e-5
+    w = result.displacement[:, 0, 0, 2]
+    assert 2 * np.polyfit(part.grid.nodes()[0], w, 2)[0] == pytest.approx(1e-4 * 40 / 2, rel=1e-6)
+    assert any("23 to 63 degC (record: 15 to 60)" in c for c in result.cautions)
 
 
 def test_errors(grid, resin):

@@ -47,7 +47,8 @@ DATA = {
         ],
         "load": [
             {"kind": "temperature", "stress_free_degC": 20.0},
-            {"kind": "temperature", "region": "head", "temperature_degC": 30, "stress_free_degC": 30},
+            {"kind": "temperature", "region": "head", "temperature_degC": 30,
+             "stress_free_degC": 30},
             {"kind": "initial strain", "strain": [0, 0, 0.001, 0, 0, 0]},
             {"kind": "foundation", "region": "head", "stiffness_N_mm3": 0.5, "acts": "all"},
         ],
