@@ -9,7 +9,7 @@ from numpy.typing import NDArray
 
 from voxelmat.fea.assemble import Assembled, assemble, moduli
 from voxelmat.fea.cautions import film_caution, record_cautions, size_cautions
-from voxelmat.fea.element import DEFAULT
+from voxelmat.fea.element import DEFAULT, Spacing
 from voxelmat.fea.held import check_held
 from voxelmat.fea.operator import touched_nodes
 from voxelmat.fea.peaks import staircase_cautions
@@ -89,6 +89,27 @@ def _keep_pieces(
     return check_held(mu > 0, anchored, _loaded(acts), part.grid, everywhere=everywhere)
 
 
+def _energy_and_stress(
+    acts: Assembled,
+    u: Double,
+    e: Double,
+    lam: Double,
+    mu: Double,
+    fill: Double,
+    spacing: Spacing,
+    element: str,
+) -> tuple[Double, Double]:
+    """Strain energy of each voxel, mJ, and stress in its material, MPa."""
+    dlam, dmu = stiffness_forms(u, u, lam, mu, spacing, element)
+    # Every coefficient of the element is of first degree in (lam, mu) together (Euler).
+    energy = 0.5 * (lam * dlam + mu * dmu)
+    free = acts.free
+    if free is not None:
+        energy += free.energy(u, lam, mu, spacing, element)
+    acting = e if free is None else (e - free.mean) * (mu > 0)
+    return energy, stress(acting, lam / fill, mu / fill)
+
+
 def _result(
     part: Part,
     case: LoadCase,
@@ -101,18 +122,17 @@ def _result(
     mu: Double,
     cautions: list[str],
     started: str,
+    fields: tuple[Double, Double] | None = None,
 ) -> StaticResult:
+    """Read a solution out; `fields` are energy and stress a voxel, by default isotropic ones."""
     u, grid = solution.u, part.grid
     forces = reactions(grid, case, acts, u, system.apply(u), force)
-    dlam, dmu = stiffness_forms(u, u, lam, mu, grid.spacing, element)
-    # Every coefficient of the element is of first degree in (lam, mu) together (Euler).
-    energy = 0.5 * (lam * dlam + mu * dmu)
     fill = np.where(mu > 0, part.fill.T, 1.0).astype(np.float64)
     e = strain(u, grid.spacing) * (mu > 0)
     free = acts.free
-    if free is not None:
-        energy += free.energy(u, lam, mu, grid.spacing, element)
-    s = stress(e if free is None else (e - free.mean) * (mu > 0), lam / fill, mu / fill)
+    if fields is None:
+        fields = _energy_and_stress(acts, u, e, lam, mu, fill, grid.spacing, element)
+    energy, s = fields
     strains = e.astype(np.float32).T
     largest = largest_principal_strain(part, strains)
     rotation = largest_rotation(part, u)
