@@ -30,6 +30,7 @@ __all__ = [
     "Jacobi",
     "Multigrid",
     "Preconditioner",
+    "coarse_held",
     "level_count",
     "make_preconditioner",
 ]
@@ -98,19 +99,47 @@ def level_count(shape: tuple[int, ...], method: str) -> int:
     return depth
 
 
-def _halved(a: NDArray[np.float64]) -> NDArray[np.float64]:
-    """Mean over 2x2x2 voxels; what lies beyond an odd end counts as empty."""
+def _clamped(held: NDArray[np.bool_], axis: int) -> NDArray[np.bool_]:
+    """Voxels of the last layer along `axis` whose outer face is held in all directions."""
+    end = np.asarray(held.take(-1, axis=axis + 1).all(axis=0))
+    return np.asarray(end[1:, 1:] & end[1:, :-1] & end[:-1, 1:] & end[:-1, :-1])
+
+
+def _halved(a: Double, held: NDArray[np.bool_]) -> Double:
+    """Mean over 2x2x2 voxels; beyond an odd end comes nothing, or the same again where it is held.
+
+    A coarse voxel that reaches beyond a clamp would otherwise be too soft a tie to it.
+    """
+    more = []
+    for axis, n in enumerate(a.shape):
+        last = a.take(-1, axis=axis) * _clamped(held, axis) if n % 2 else None
+        more.append(last)
     padded = np.pad(a, [(0, n % 2) for n in a.shape])
+    for axis, last in enumerate(more):
+        if last is not None:
+            end = np.moveaxis(padded, axis, 0)[-1]
+            end[: last.shape[0], : last.shape[1]] = last
     nz, ny, nx = (n // 2 for n in padded.shape)
     return np.asarray(padded.reshape(nz, 2, ny, 2, nx, 2).mean(axis=(1, 3, 5)))
 
 
-def _injected(held: NDArray[np.bool_], shape: tuple[int, ...]) -> NDArray[np.bool_]:
-    """Coarse unknowns that sit on a fine one that is held."""
-    out = np.zeros(shape, dtype=bool)
-    sub = held[:, ::2, ::2, ::2]
-    out[:, : sub.shape[1], : sub.shape[2], : sub.shape[3]] = sub
-    return out
+def coarse_held(held: NDArray[np.bool_], depth: int) -> NDArray[np.bool_]:
+    """Coarse unknowns that stand for fine ones that are held.
+
+    A coarse node takes what is held at its place. One beyond an odd end takes what is held at the
+    end, and the last one inside takes it too where it lies nearer to the end than the one beyond:
+    otherwise the coarse grid is free there, which doubles the iterations.
+    """
+    step = 2**depth
+    for axis in (1, 2, 3):
+        n = held.shape[axis] - 1
+        place = np.arange(-(-n // step) + 1) * step
+        out = held.take(np.minimum(place, n), axis=axis)
+        if place[-1] > n and 2 * (n - place[-2]) < step:
+            ends = np.moveaxis(out, axis, 0)
+            ends[-2] |= ends[-1]
+        held = out
+    return held
 
 
 def _finest(grid: Grid) -> VoxelLevel:
@@ -120,19 +149,18 @@ def _finest(grid: Grid) -> VoxelLevel:
 
 def _averaged(grid: Grid, depths: int) -> Iterator[Level]:
     """Coarse levels of ``avg2``."""
-    lam, mu, held = grid.lam, grid.mu, grid.held
-    h = grid.spacing
-    springs = grid.springs
-    for _ in range(depths):
-        lam, mu = _halved(lam), _halved(mu)
+    lam, mu, h, springs = grid.lam, grid.mu, grid.spacing, grid.springs
+    held = grid.held
+    for depth in range(1, depths + 1):
+        lam, mu = _halved(lam, held), _halved(mu, held)
         h = (2 * h[0], 2 * h[1], 2 * h[2])
         shape = (3, *(n + 1 for n in lam.shape))
-        held = _injected(held, shape)
         if springs is not None:
             # P^T of the diagonal: the lumped springs.
             coarse = np.zeros(shape, dtype=np.float32)
             restrict(springs.astype(np.float32), coarse)
             springs = coarse.astype(np.float64)
+        held = coarse_held(grid.held, depth)
         yield VoxelLevel(lam, mu, h, grid.element, (~held).astype(np.uint8), springs)
 
 

@@ -11,7 +11,13 @@ from voxelmat.errors import ConvergenceError, InputError
 from voxelmat.fea.bed import Bed, Coupled
 from voxelmat.fea.element import DEFAULT, Spacing
 from voxelmat.fea.krylov import Iteration, Operator, conjugate_gradients
-from voxelmat.fea.multigrid import METHODS, Grid, Preconditioner, make_preconditioner
+from voxelmat.fea.multigrid import (
+    METHODS,
+    Grid,
+    Preconditioner,
+    coarse_held,
+    make_preconditioner,
+)
 from voxelmat.fea.operator import Product, Stiffness, check_moduli, dot, touched_nodes
 from voxelmat.fea.plate_solver import PlateOperator, PlatePreconditioner
 from voxelmat.fea.plates import PlateSet
@@ -54,11 +60,8 @@ class Solution:
 
 def _lost_supports(held: NDArray[np.bool_]) -> bool:
     """Whether halving the grid would lose most held unknowns of some direction."""
-    for d in range(3):
-        count = int(held[d].sum())
-        if count and int(held[d, ::2, ::2, ::2].sum()) * 16 < count:
-            return True
-    return False
+    kept = coarse_held(held, 1)
+    return any(int(kept[d].sum()) * 16 < int(held[d].sum()) for d in range(3))
 
 
 def _share_of_jumps(mu: Double) -> float:
