@@ -65,7 +65,13 @@ def _parser() -> argparse.ArgumentParser:
         )
 
     design(command("run", "do everything: part, optimise, solve, stack, check, report"))
-    design(command("solve", "solve the load cases and judge the requirements"))
+    sub = command("solve", "solve the load cases and judge the requirements")
+    design(sub)
+    sub.add_argument(
+        "--vti",
+        action="store_true",
+        help="also write each result as a VTK image file (.vti) into the folder",
+    )
     design(command("optimise", "choose blends and where material goes"))
     design(command("stack", "write the bitmap stacks, read them back and check them"))
     sub = command("preflight", "check a stack that is on disk")

@@ -213,6 +213,13 @@ def test_a_closed_form_pad(design, tmp_path):
     assert result.displacement[..., 2].min() == pytest.approx(-wanted, rel=1e-6)
 
 
+def test_fields_as_vti(design, tmp_path, capsys):
+    code, data = shell(capsys, "solve", design, "--out", tmp_path / "out", "--vti")
+    assert code == 0
+    assert [Path(p).name for p in data["vti"]] == ["1-press.vti"]
+    assert b"vtkZLibDataCompressor" in Path(data["vti"][0]).read_bytes()[:400]
+
+
 def test_not_met_and_cannot_be_said(design, tmp_path, capsys):
     changed(design, ("at_least_mm = 0.0001", "at_least_mm = 5.0"))
     code, data = shell(capsys, "solve", design, "--out", tmp_path / "a")

@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+import re
+from collections.abc import Mapping, Sequence
 from pathlib import Path
 from typing import Any
 
@@ -13,6 +14,7 @@ from voxelmat.io.store import load_part
 from voxelmat.material.hardness import VALID_SHORE_A, modulus_from_shore_a
 from voxelmat.material.table import material_rows
 from voxelmat.model.part import Part
+from voxelmat.model.result import StaticResult
 from voxelmat.monitor import Monitor
 from voxelmat.units import number
 
@@ -23,7 +25,14 @@ Answer = tuple[int, dict[str, Any], str]
 # The stages load the compiled solver and slicer; a command that needs neither starts without.
 
 
-def _stages(design: Path, out: Path, stages: Sequence[str] | None, monitor: Monitor) -> Answer:
+def _stages(
+    design: Path,
+    out: Path,
+    stages: Sequence[str] | None,
+    monitor: Monitor,
+    *,
+    vti: bool = False,
+) -> Answer:
     from voxelmat.workflow.answer import summary_lines
     from voxelmat.workflow.pipeline import STAGES
     from voxelmat.workflow.pipeline import run as run_stages
@@ -32,7 +41,22 @@ def _stages(design: Path, out: Path, stages: Sequence[str] | None, monitor: Moni
     lines = summary_lines(
         result.data, stack=result.stack, report=result.report, folder=result.folder
     )
-    return result.exit_code, result.as_dict(), "\n".join(lines)
+    data = result.as_dict()
+    if vti:
+        data["vti"] = [str(path) for path in _write_vti(result.data.results, out)]
+        lines += [f"  fields: {path}" for path in data["vti"]]
+    return result.exit_code, data, "\n".join(lines)
+
+
+def _write_vti(results: Mapping[str, StaticResult], out: Path) -> list[Path]:
+    """One VTK image file a load case, named after it."""
+    from voxelmat.io.vti import write_vti
+
+    made = []
+    for number_of, (name, result) in enumerate(results.items(), start=1):
+        slug = re.sub(r"[^A-Za-z0-9]+", "-", name).strip("-") or "case"
+        made.append(write_vti(result, out / f"{number_of}-{slug}.vti"))
+    return made
 
 
 def run(*, design: Path, out: Path, monitor: Monitor) -> Answer:
@@ -40,9 +64,9 @@ def run(*, design: Path, out: Path, monitor: Monitor) -> Answer:
     return _stages(design, out, None, monitor)
 
 
-def solve(*, design: Path, out: Path, monitor: Monitor) -> Answer:
+def solve(*, design: Path, out: Path, vti: bool, monitor: Monitor) -> Answer:
     """The load cases on the part as it is laid out (and optimised, if the design asks)."""
-    return _stages(design, out, ("optimise", "solve"), monitor)
+    return _stages(design, out, ("optimise", "solve"), monitor, vti=vti)
 
 
 def optimise(*, design: Path, out: Path, monitor: Monitor) -> Answer:
