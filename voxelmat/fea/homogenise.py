@@ -45,17 +45,17 @@ def _cautions(found: CellSolution, mu: Double, refine: int, estimated: bool) -> 
     if found.loose:
         share = 100.0 * found.loose_voxels / mu.size
         out.append(
-            f"{found.loose} islands ({share / refine**3:.3g} % of the cell) reach their copies in "
-            f"no direction and carry no load; pieces that meet along an edge or at a corner only "
-            f"do not count as joined."
+            f"Islands that reach their own copies in no direction ({found.loose}, "
+            f"{share / refine**3:.3g} % of the cell) carry no load and were left out; pieces that "
+            f"meet along an edge or at a corner only do not count as joined."
         )
     if not found.stiffness.any():
         out.append("No material reaches through the cell: its stiffness is 0.")
     if refine < 3 and _is_dithered(mu):
         out.append(
-            f"Materials change from voxel to voxel and each is {refine} elements wide, which is "
-            f"too stiff: at contrast 1000 one element a droplet can pass the upper bound. "
-            f"Compare refine = 2 and 3, or use homogenise_blend, which extrapolates."
+            f"Materials change from voxel to voxel, and with refine = {refine} the cell comes out "
+            f"too stiff: at contrast 1000 one element a droplet can pass the upper bound. Compare "
+            f"refine = 2, 3 and 4, or use homogenise_blend, which extrapolates."
         )
     if estimated:
         out.append("The expansion of blends of three and more resins is an estimate.")

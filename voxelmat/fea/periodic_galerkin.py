@@ -116,8 +116,9 @@ def coarse_levels(
     shape = lam.shape
     slabs: Iterable[Single]
     if depths == 0:
-        basis = basis_matrices(spacing, element)
-        slabs = _scattered(np.einsum("qab,qkji->kabji", basis, values), _stencils(shape, stencils))
+        voxels = np.einsum("qab,qkji->kabji", basis_matrices(spacing, element), values)
+        single = np.ascontiguousarray(voxels, dtype=np.float32)
+        slabs = _scattered(single, _stencils(shape, stencils))
     else:
         slabs = _from_voxels(values, spacing, element, periodic)
     for depth in range(depths):

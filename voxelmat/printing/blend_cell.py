@@ -90,8 +90,8 @@ def _cautions(estimate: BlendEstimate) -> list[str]:
     out = []
     if over:
         out.append(
-            f"With {', '.join(over)} elements a droplet the moduli lie outside the "
-            f"Hashin-Shtrikman bounds: too few elements a droplet are too stiff."
+            f"At refinement {', '.join(over)} the moduli lie outside the Hashin-Shtrikman bounds: "
+            f"so few elements a droplet are too stiff."
         )
     if not estimate.held:
         out.append(
