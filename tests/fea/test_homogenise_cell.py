@@ -8,6 +8,8 @@ from hypothesis import strategies as st
 from voxelmat.errors import Cancelled, InputError
 from voxelmat.fea.cell import solve_cell
 from voxelmat.fea.element import ELEMENTS
+from voxelmat.fea.periodic import PeriodicSystem
+from voxelmat.fea.sensitivity import strain, strain_adjoint
 from voxelmat.model.bounds import hashin_shtrikman
 from voxelmat.monitor import CancelFlag
 
@@ -85,6 +87,26 @@ def test_levin(element, expansion):
     assert np.abs(a[3:]).max() < 1e-9
     if expansion is not None:
         assert a[0] == pytest.approx(expansion, abs=1e-9)
+
+
+@pytest.mark.parametrize("element", ["icmb", "full"])
+def test_expansion_by_a_seventh_solution(element):
+    """Reciprocity against a cell that is warmed and held in size."""
+    lam, mu = random_cell(8)
+    alpha = np.random.default_rng(0).uniform(0.1, 1.0, lam.shape)
+    h = (1.0, 0.6, 1.4)
+    found = solve_cell(lam, mu, h, expansion=alpha, element=element, tol=1e-11)
+    stress = np.zeros((6, *lam.shape))
+    stress[:3] = (3 * lam + 2 * mu) * alpha
+    force = strain_adjoint(stress, h) * np.prod(h)
+    system = PeriodicSystem(lam, mu, h, element=element)
+    u = system.solve(force, tol=1e-11).u
+    e = strain(u, h)
+    taken = 2 * mu * e
+    taken[:3] += lam * e[:3].sum(axis=0)
+    taken[3:] /= 2
+    held = (stress - taken).mean(axis=(1, 2, 3))
+    assert found.thermal_stress == pytest.approx(held, abs=1e-9 * held[0])
 
 
 def hill_cube(n, element="icmb"):
