@@ -21,6 +21,7 @@ from voxelmat.fea.multigrid import (
 from voxelmat.fea.operator import Product, Stiffness, check_moduli, dot, touched_nodes
 from voxelmat.fea.plate_solver import PlateOperator, PlatePreconditioner
 from voxelmat.fea.plates import PlateSet
+from voxelmat.fea.window import Window
 from voxelmat.kernels.threads import crew
 from voxelmat.monitor import SILENT, Monitor, computing
 
@@ -104,7 +105,7 @@ class LinearSystem:
     ----------
     lam, mu : ndarray of float64, shape (nz, ny, nx)
         Lame constants of each voxel, MPa; both exactly 0 where the voxel is empty. Nodes that
-        touch no material are no unknowns.
+        touch no material are no unknowns, and all work is done in the bounding box of the others.
     spacing : tuple of float
         Voxel edge along x, y, z, mm.
     fixed : ndarray of bool, shape (3, nz+1, ny+1, nx+1)
@@ -155,9 +156,12 @@ class LinearSystem:
             raise InputError(f"coarse is one of auto, {', '.join(METHODS)}; got {coarse!r}.")
         self.shape = shape
         self._monitor = monitor
+        self._window = self._frame(mu, springs, whole=bool(beds) or plates is not None)
+        lam, mu = self._window.voxels(lam), self._window.voxels(mu)
+        springs = None if springs is None else self._window.nodes(springs)
         touched = touched_nodes(mu > 0)
-        held = fixed & touched
-        self.free = (~held & touched).astype(np.uint8)
+        held = self._window.nodes(fixed) & touched
+        self._free = (~held & touched).astype(np.uint8)
         if plates is not None:
             if np.any(held & plates.mask) or np.any(plates.mask & ~touched):
                 raise InputError("A node of a plate is fixed too, or touches no material.")
@@ -171,6 +175,19 @@ class LinearSystem:
         self._method = first_method(lam, mu, spacing, held) if self._automatic else coarse
         self._preconditioner: Preconditioner | None = None
 
+    @staticmethod
+    def _frame(mu: Double, springs: Double | None, *, whole: bool) -> Window:
+        """What the work is cut to; beds and plates count their nodes on the whole grid."""
+        window = Window(mu > 0)
+        if whole or (springs is not None and not window.holds(springs)):
+            return Window(np.ones(mu.shape, dtype=bool))
+        return window
+
+    @property
+    def free(self) -> NDArray[np.uint8]:
+        """1 where an unknown exists, 0 elsewhere; shape (3, nz+1, ny+1, nx+1)."""
+        return self._window.whole(self._free)
+
     @property
     def method(self) -> str:
         """The coarse method in use."""
@@ -180,13 +197,17 @@ class LinearSystem:
     def nbytes(self) -> int:
         """Memory held between solves, bytes."""
         extra = 0 if self._preconditioner is None else self._preconditioner.nbytes
-        return self.operator.nbytes + int(self.free.nbytes) + extra
+        return self.operator.nbytes + int(self._free.nbytes) + extra
 
     def apply(self, u: Double) -> Double:
         """K u (springs included), N, on all nodes, held ones too."""
         u = np.ascontiguousarray(u, dtype=np.float64)
         if u.shape != self.shape:
             raise InputError(f"u must have shape {self.shape}; got {u.shape}.")
+        return self._window.whole(self._product(self._window.nodes(u)))
+
+    def _product(self, u: Double) -> Double:
+        """K u on the window."""
         out = np.empty_like(u)
         with computing(), crew(u[0].size):
             self.operator.apply(u, out)
@@ -203,31 +224,31 @@ class LinearSystem:
             self._preconditioner = inner
             if self._plates is not None:
                 self._preconditioner = PlatePreconditioner(
-                    inner, self.operator, self._plates, self.free, self._monitor
+                    inner, self.operator, self._plates, self._free, self._monitor
                 )
         return self._preconditioner
 
     def _start(self, x0: Double | None, prescribed: Double | None) -> tuple[Double, Double]:
-        """First guess and the given displacements, both on all nodes."""
-        given = np.zeros(self.shape)
+        """First guess and the given displacements, both on the window."""
+        given = np.zeros(self._free.shape)
         if prescribed is not None:
             if prescribed.shape != self.shape:
                 raise InputError(f"prescribed must have shape {self.shape}.")
-            given[self._grid.held] = prescribed[self._grid.held]
+            given[self._grid.held] = self._window.nodes(prescribed)[self._grid.held]
         x = given.copy()
         if x0 is not None:
             if x0.shape != self.shape:
                 raise InputError(f"x0 must have shape {self.shape}; got {x0.shape}.")
-            x += x0 * self.free
+            x += self._window.nodes(x0) * self._free
         if not (np.all(np.isfinite(x))):
             raise InputError("A first guess or a prescribed displacement is not finite.")
         return x, given
 
     def _size(self, b: Double, given: Double | None) -> float:
         """Size of the load on free unknowns, less what the given displacements take."""
-        force = b * self.free
+        force = b * self._free
         if given is not None:
-            force -= self.apply(given) * self.free
+            force -= self._product(given) * self._free
         return float(np.sqrt(dot(force, force)))
 
     def solve(
@@ -263,23 +284,23 @@ class LinearSystem:
             raise InputError(f"tol must lie in 0 to 1 and maxiter be >= 1; got {tol}, {maxiter}.")
         if b.shape != self.shape or not np.all(np.isfinite(b)):
             raise InputError(f"The load must be finite and of shape {self.shape}; got {b.shape}.")
+        b = self._window.nodes(np.asarray(b, dtype=np.float64))
         with computing(), crew(b[0].size):
             x, given = self._start(x0, prescribed)
             if self._plates is not None:
                 return self._solve_with_plates(self._plates, b, x, given, tol, maxiter)
             norm = self._size(b, None if prescribed is None else given)
             if norm == 0.0:
-                return Solution(u=given, iterations=0, residual=0.0, history=(0.0,))
-            run = self._iterate(
-                np.ascontiguousarray(b, dtype=np.float64), Iteration(x), norm, tol, maxiter
-            )
+                return self._finished(Iteration(given, 0, 0.0, [0.0], "converged"), tol)
+            del given
+            run = self._iterate(b, Iteration(x), norm, tol, maxiter)
         return self._finished(run, tol)
 
     def _finished(self, run: Iteration, tol: float) -> Solution:
         if run.state != "converged":
             raise ConvergenceError(self._complaint(run, tol), run.history)
         return Solution(
-            u=run.x,
+            u=self._window.whole(run.x),
             iterations=run.iterations,
             residual=run.residual,
             history=tuple(run.history),
@@ -290,12 +311,12 @@ class LinearSystem:
     ) -> Solution:
         """Solve for what comes on top of the given motions, in the space that plates allow."""
         given = given + plates.given()
-        force = (b - self.apply(given)) * self.free
+        force = (b - self._product(given)) * self._free
         plates.project(force)
         norm = float(np.sqrt(dot(force, force)))
         if norm == 0.0:
             return Solution(u=given, iterations=0, residual=0.0, history=(0.0,))
-        start = (x - given) * self.free if np.any(x) else np.zeros(self.shape)
+        start = (x - given) * self._free if np.any(x) else np.zeros(self.shape)
         plates.project(start)
         operator = PlateOperator(self.operator, plates)
         run = self._iterate(force, Iteration(start), norm, tol, maxiter, operator)
@@ -306,7 +327,7 @@ class LinearSystem:
         """What the automatic choice goes over to when the present method is too slow."""
         if not self._automatic:
             return None
-        small = int(self.free.sum()) <= _DIRECT_UNKNOWNS
+        small = int(self._free.sum()) <= _DIRECT_UNKNOWNS
         return {"avg2": "gal4b", "gal4b": "direct" if small else None}.get(self._method)
 
     def _iterate(
@@ -326,7 +347,7 @@ class LinearSystem:
                 self.operator if operator is None else operator,
                 self._ready(),
                 force,
-                self.free,
+                self._free,
                 run,
                 norm=norm,
                 tol=tol,
