@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import time
-from collections.abc import Iterator, Sequence
+from collections.abc import Iterator, Mapping, Sequence
 from contextlib import contextmanager
 from dataclasses import dataclass, field, replace
 from pathlib import Path
@@ -12,8 +12,8 @@ from typing import Any
 from filelock import FileLock, Timeout
 
 from voxelmat.errors import Cancelled, InputError, ResourceError
+from voxelmat.fea.cases import solve_cases
 from voxelmat.fea.energy_error import energy_error
-from voxelmat.fea.static import solve
 from voxelmat.io.atomic import explain_os_error, write_json
 from voxelmat.io.store import save_part
 from voxelmat.kernels.threads import threads
@@ -184,7 +184,7 @@ class _Run:
         if stack is not None and "as printed" in self.stages:
             with self.clock.stage("as printed"):
                 printed = as_printed(stack, part, monitor=self.monitor)
-                again = self._solved(built, printed, "as printed")
+                again = self._solved(built, printed, "as printed", results)
         with self.clock.stage("verdicts"):
             data = self._data(built, part, found, results, again, stack, findings)
         report = None
@@ -205,16 +205,22 @@ class _Run:
             raise Cancelled(f"Stopped by the user while optimising: {found.reason}")
         return found
 
-    def _solved(self, built: Built, part: Part, stage: str) -> dict[str, StaticResult]:
+    def _solved(
+        self,
+        built: Built,
+        part: Part,
+        stage: str,
+        warm: Mapping[str, StaticResult] | None = None,
+    ) -> dict[str, StaticResult]:
         if stage not in self.stages:
             return {}
-        cases = built.load_cases
-        results = {}
-        for n, case in enumerate(cases):
-            self.monitor.report(f"load cases, {stage}", done=n, total=len(cases), case=case.name)
-            results[case.name] = solve(part, case, monitor=self.monitor)
-        self.monitor.report(f"load cases, {stage}", done=len(cases), total=len(cases))
-        return results
+        return solve_cases(
+            part,
+            built.load_cases,
+            monitor=self.monitor,
+            warm=warm,
+            stage=f"load cases, {stage}",
+        )
 
     def _stacked(self, built: Built, part: Part) -> tuple[Stack | None, list[Finding]]:
         printing = built.design.printing
