@@ -19,6 +19,7 @@ from voxelmat.model.part import Part
 from voxelmat.workflow.report_words import held_words, load_words, plate_words
 from voxelmat.workflow.resolve import resolve
 from voxelmat.workflow.spread import driven_by, spread_of
+from voxelmat.workflow.verdicts import verdicts
 
 RESIN = Material(
     name="hard",
@@ -158,3 +159,30 @@ def test_words_of_the_report():
     said = plate_words(case.plates[0])
     assert said.startswith("x held, no turn about x, turned 0.100° about y")
     assert "0, 0, -5.00 N" in said
+
+
+def test_stiffness_under_a_plate():
+    """Force over how far the plate goes; its reaction where the way is given."""
+    foot = [{"region": "foot", "fixed": True}]
+    level = {"name": "press", "region": "head", "rotation_deg": {"x": 0, "y": 0, "z": 0}}
+    push = {**level, "force_N": [0, 0, -5]}
+    data = deepcopy(DATA)
+    data["load_case"][0].update(support=foot, load=[], plate=[push])
+    data["requirement"] = [
+        {"name": "firm", "measure": "stiffness", "load_case": "warm", "region": "head",
+         "at_least_N_mm": 1.0},
+    ]  # fmt: skip
+    resolved = resolve(parse_design(data), block())
+    result = solve(block(), resolved.load_cases[0])
+    (verdict,) = verdicts(resolved, result.part, {"warm": result})
+    stiff = -5.0 / result.plates["press"].translation[2]
+    assert verdict.value == pytest.approx(stiff, rel=1e-9)
+    data["load_case"][0]["plate"] = [{**level, "translation_mm": {"x": 0, "y": 0, "z": -0.01}}]
+    data["requirement"] = [
+        {"name": "firm", "measure": "reaction", "load_case": "warm", "region": "head",
+         "component": "z", "at_most_N": -0.01},
+    ]  # fmt: skip
+    resolved = resolve(parse_design(data), block())
+    result = solve(block(), resolved.load_cases[0])
+    (verdict,) = verdicts(resolved, result.part, {"warm": result})
+    assert verdict.value == pytest.approx(-0.01 * stiff, rel=1e-3)

@@ -44,6 +44,7 @@ class Assembled:
     springs : ndarray of float64 or None
         To ground, N/mm.
     loads : tuple of NodalLoad
+        The forces on plates last; their moments are in `force` alone.
     supports : tuple of str
         Name of each support.
     ground : tuple of (str, ndarray, ndarray)
@@ -198,6 +199,9 @@ def assemble(part: Part, case: LoadCase, *, everything: bool = False) -> Assembl
     plates = bind_plates(part, case.plates, held, given, names, owner)
     for p in plates.plates if plates is not None else ():
         force[:, p.node] += p.force
+        if any(p.plate.force):
+            share = p.spread(p.plate.force, (0.0, 0.0, 0.0)).T
+            loads.append(NodalLoad(name=p.name, node=p.node, force=share))
     return Assembled(
         force=force.reshape(held.shape),
         held=held,

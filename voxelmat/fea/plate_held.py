@@ -9,7 +9,7 @@ from numpy.typing import NDArray
 from voxelmat.errors import InputError
 from voxelmat.fea.held import motion_names
 from voxelmat.fea.operator import touched_nodes
-from voxelmat.fea.plates import PlateSet
+from voxelmat.fea.plates import PlateSet, point_motions
 from voxelmat.model.grid import VoxelGrid
 
 __all__ = ["check_plates_held"]
@@ -23,12 +23,7 @@ _RANK = 1e-10
 
 def _rows(r: Double) -> Double:
     """Displacement of points r (n, 3) by six rigid motions, (n, 3, 6)."""
-    out = np.zeros((len(r), 3, 6))
-    for d in range(3):
-        e, f = (d + 1) % 3, (d + 2) % 3
-        out[:, d, d] = 1.0
-        out[:, e, 3 + d], out[:, f, 3 + d] = -r[:, f], r[:, e]
-    return out
+    return point_motions(r).transpose(1, 0, 2)
 
 
 class _Places:

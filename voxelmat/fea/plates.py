@@ -12,7 +12,7 @@ from voxelmat.errors import InputError
 from voxelmat.model.part import Part
 from voxelmat.model.plate import Plate, PlateMotion
 
-__all__ = ["BoundPlate", "PlateSet", "bind_plates"]
+__all__ = ["BoundPlate", "PlateSet", "bind_plates", "point_motions"]
 
 Double = NDArray[np.float64]
 Bools = NDArray[np.bool_]
@@ -28,8 +28,8 @@ def _vector(v: Double) -> Vector:
     return float(v[0]), float(v[1]), float(v[2])
 
 
-def _rigid(r: Double) -> Double:
-    """Translations and rotations of nodes at r (n, 3) from the reference, as (3, n, 6)."""
+def point_motions(r: Double) -> Double:
+    """Displacement of points r (n, 3) by unit translations and rotations, (3, n, 6)."""
     out = np.zeros((3, len(r), 6))
     for d in range(3):
         e, f = (d + 1) % 3, (d + 2) % 3
@@ -68,9 +68,18 @@ class BoundPlate:
         return np.asarray(self.rigid @ motion)
 
     @property
+    def name(self) -> str:
+        """What it goes by in results."""
+        return f"plate '{self.plate.name}' on '{self.plate.region.name}'"
+
+    @property
     def force(self) -> Double:
-        """The plate's force and moment as the smallest nodal forces that have them, (3, n), N."""
-        acts = np.array([*self.plate.force, *self.plate.moment])
+        """The plate's force and moment as nodal forces, (3, n), N."""
+        return self.spread(self.plate.force, self.plate.moment)
+
+    def spread(self, force: Vector, moment: Vector) -> Double:
+        """The smallest nodal forces that have a force and a moment, (3, n), N."""
+        acts = np.array([*force, *moment])
         gram = np.einsum("dna,dnb->ab", self.rigid, self.rigid)
         # Scaled to a unit diagonal: moments count in N mm beside forces in N.
         s = 1.0 / np.sqrt(np.diag(gram))
@@ -153,7 +162,7 @@ def _bind(part: Part, plate: Plate) -> BoundPlate:
             f"line, so they cannot turn a plate about it. Enlarge the region."
         )
     point = _vector(place.mean(axis=0)) if plate.point is None else plate.point
-    rigid = _rigid(place - np.asarray(point))
+    rigid = point_motions(place - np.asarray(point))
     nx, ny, _ = part.grid.node_shape
     node = (k * ny + j) * nx + i
     order = np.argsort(node)

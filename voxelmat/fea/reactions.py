@@ -118,11 +118,9 @@ def reactions(
     plates: dict[str, PlateMotion] = {}
     for bound in acts.plates.plates if acts.plates is not None else ():
         plates[bound.plate.name], hold = _plate(bound, u, pull)
-        name = f"plate '{bound.plate.name}' on '{bound.plate.region.name}'"
         if any(v is not None for v in bound.plate.given):
-            note(name, bound.node, hold, bound.point)
-        total.add(bound.node, bound.force.T)
-        acting += bound.plate.force
+            note(bound.name, bound.node, hold, bound.point)
+        total.add(bound.node, bound.spread((0.0, 0.0, 0.0), bound.plate.moment).T)
     return Forces(
         reactions=found,
         moments=moments,

@@ -8,6 +8,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from voxelmat.fea.assemble import Assembled, assemble, moduli
+from voxelmat.fea.bed_held import bed_caution
 from voxelmat.fea.cautions import film_caution, record_cautions, size_cautions
 from voxelmat.fea.element import DEFAULT, Spacing
 from voxelmat.fea.held import check_held
@@ -139,7 +140,7 @@ def _result(
     notes = [*cautions, *(c for load in acts.loads for c in load.cautions)]
     notes += size_cautions(largest, rotation)
     notes += film_caution(part, lam, mu) + thin_caution(part) + hinge_caution(part)
-    notes += record_cautions(part, case)
+    notes += record_cautions(part, case) + bed_caution(acts, grid)
     if forces.balance > _BALANCE:
         notes.append(f"Loads and reactions miss each other by {forces.balance:.1e} of the load.")
     if forces.moment_balance > _BALANCE:

@@ -65,7 +65,7 @@ class StaticResult:
     free_strain : ndarray of float32, shape (nx, ny, nz, 6), or None
         Thermal and initial strain, which `strain` includes and `stress` does not.
     resultants : mapping
-        Load number and region name to its resultant force, N.
+        Load number and region name to its resultant force, N; a plate's force under its name.
     load_displacement : mapping
         Same keys: mean displacement along the load's resultant, weighted like the load, mm.
     largest_strain, largest_rotation : Extreme

@@ -100,9 +100,7 @@ def _spring_energy(result: StaticResult) -> float:
         for name, along in result.load_displacement.items()
     )
     for plate in result.load_case.plates:
-        motion = result.plates[plate.name]
-        work += float(np.dot(plate.force, motion.translation))
-        work += float(np.dot(plate.moment, motion.rotation))
+        work += float(np.dot(plate.moment, result.plates[plate.name].rotation))
     return max(0.0, 0.5 * work - result.energy)
 
 
@@ -150,7 +148,7 @@ def driven_by(result: StaticResult) -> str:
     moved = case.strains or any(s.moves for s in case.supports)
     moved |= any(p.moves for p in case.plates)
     forced = any(np.any(np.asarray(f) != 0) for f in result.resultants.values())
-    forced |= any(any(p.force) or any(p.moment) for p in case.plates)
+    forced |= any(any(p.moment) for p in case.plates)
     if moved:
         return "both" if forced else "displacement"
     return "force"

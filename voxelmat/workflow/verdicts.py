@@ -182,6 +182,11 @@ def _stiffness(
         for n, load in enumerate(result.load_case.loads, start=1)
         if load.region is not None and load.region.name == requirement.region
     ]
+    names += [
+        f"plate '{p.name}' on '{p.region.name}'"
+        for p in result.load_case.plates
+        if p.region.name == requirement.region
+    ]
     names = [n for n in names if n in result.load_displacement]
     if len(names) != 1:
         raise InputError(
