@@ -114,13 +114,17 @@ class OrthotropicSystem(LinearSystem):
             self._method = coarse
         elif self._automatic and (spread > _NEAR or self._method != "avg2"):
             self._method = "exact"
-        self.stiffness = OrthotropicStiffness(
+        # The base class may have cut the grid to the box of the material.
+        labels = self._window.voxels(labels)
+        fill = None if fill is None else self._window.voxels(fill)
+        springs = self._grid.springs
+        stiffness = OrthotropicStiffness(
             labels, constants, spacing, element, fill=fill, springs=springs
         )
         leaning = tuple(bed for bed in beds if bed.leans)
-        self.operator = Coupled(self.stiffness, leaning) if leaning else self.stiffness
+        self.operator = Coupled(stiffness, leaning) if leaning else stiffness
         self._own = OrthotropicGrid(
-            labels, fill, constants, spacing, element, self._grid.held, self.free, springs
+            labels, fill, constants, spacing, element, self._grid.held, self._free, springs
         )
 
     def _next_method(self) -> str | None:

@@ -191,9 +191,13 @@ class OrthotropicStiffness:
 
     def energy(self, u: Double) -> Double:
         """Strain energy of each voxel, mJ, (nz, ny, nx); for a stiffness in double precision."""
+        if u.shape != self.shape or u.dtype != self.table.dtype:
+            raise InputError(f"u must have shape {self.shape}; got {u.shape} of {u.dtype}.")
         out = np.empty(self.labels.shape)
         with computing():
-            orthotropic_energy(u, self.labels, self.fill, self.table, self.constants, out)
+            orthotropic_energy(
+                np.ascontiguousarray(u), self.labels, self.fill, self.table, self.constants, out
+            )
         return 0.5 * out
 
     @property

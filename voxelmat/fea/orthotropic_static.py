@@ -14,7 +14,7 @@ from voxelmat.fea.element import DEFAULT, Spacing
 from voxelmat.fea.operator import touched_nodes
 from voxelmat.fea.orthotropic import OrthotropicSystem
 from voxelmat.fea.orthotropic_element import isotropic_constants
-from voxelmat.fea.orthotropic_operator import comparison, orthotropic_stress
+from voxelmat.fea.orthotropic_operator import OrthotropicStiffness, comparison, orthotropic_stress
 from voxelmat.fea.sensitivity import strain, strain_adjoint
 from voxelmat.fea.static import _first_guess, _keep_pieces, _result, _without_loose
 from voxelmat.model.loadcase import LoadCase
@@ -177,7 +177,7 @@ def solve_orthotropic(
         maxiter=maxiter,
     )
     e = strain(found.u, spacing) * (labels > 0)
-    energy = system.stiffness.energy(found.u)
+    energy = OrthotropicStiffness(labels, constants, spacing, element, fill=fill).energy(found.u)
     if free is not None:
         energy += free.energy(e, spacing)
     s = orthotropic_stress(e if free is None else e - free.mean, labels, constants)
