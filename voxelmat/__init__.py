@@ -32,6 +32,7 @@ if TYPE_CHECKING:
     from voxelmat.model.material import Material
     from voxelmat.model.part import Part
     from voxelmat.model.profile import PrintProfile
+    from voxelmat.printing.blend_cell import homogenise_blend
     from voxelmat.printing.preflight import preflight
     from voxelmat.printing.profile import load_profile
     from voxelmat.printing.readback import read_stack
@@ -59,6 +60,7 @@ _HOMES = {
     "error_estimate": "voxelmat.fea.refine",
     "harmonic": "voxelmat.fea.harmonic",
     "homogenise": "voxelmat.fea.homogenise",
+    "homogenise_blend": "voxelmat.printing.blend_cell",
     "interface_tractions": "voxelmat.fea.interfaces",
     "load_design": "voxelmat.io.design",
     "load_library": "voxelmat.io.materials",
@@ -94,6 +96,7 @@ __all__ = [
     "error_estimate",
     "harmonic",
     "homogenise",
+    "homogenise_blend",
     "interface_tractions",
     "load_design",
     "load_library",

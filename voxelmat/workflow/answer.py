@@ -78,6 +78,11 @@ def as_dict(
                 "estimated_energy_error": (
                     data.energy_error[name].share if name in data.energy_error else None
                 ),
+                "estimated_displacement_error": (
+                    _plain(data.grid_error[name].displacement_error)
+                    if name in data.grid_error
+                    else None
+                ),
                 "as_printed_largest_displacement_mm": (
                     float(data.as_printed[name].size.max()) if name in data.as_printed else None
                 ),

@@ -66,7 +66,7 @@ def run(*, design: Path, out: Path, monitor: Monitor) -> Answer:
 
 def solve(*, design: Path, out: Path, vti: bool, monitor: Monitor) -> Answer:
     """The load cases on the part as it is laid out (and optimised, if the design asks)."""
-    return _stages(design, out, ("optimise", "solve"), monitor, vti=vti)
+    return _stages(design, out, ("optimise", "solve", "grid error"), monitor, vti=vti)
 
 
 def optimise(*, design: Path, out: Path, monitor: Monitor) -> Answer:

@@ -14,6 +14,7 @@ from filelock import FileLock, Timeout
 from voxelmat.errors import Cancelled, InputError, ResourceError
 from voxelmat.fea.cases import solve_cases
 from voxelmat.fea.energy_error import energy_error
+from voxelmat.fea.refine import ErrorEstimate, error_estimate
 from voxelmat.io.atomic import explain_os_error, write_json
 from voxelmat.io.store import save_part
 from voxelmat.kernels.threads import threads
@@ -42,7 +43,7 @@ from voxelmat.workflow.verdicts import safety_factors, verdicts
 __all__ = ["STAGES", "RunResult", "run"]
 
 #: The stages of a run, in order. "as printed" needs "stack", "report" needs none.
-STAGES = ("optimise", "solve", "stack", "as printed", "report")
+STAGES = ("optimise", "solve", "grid error", "stack", "as printed", "report")
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -179,6 +180,8 @@ class _Run:
         save_part(part, self.folder / "part.npz")
         with self.clock.stage("solve"):
             results = self._solved(built, part, "solve")
+        with self.clock.stage("grid error"):
+            coarser = self._coarser(results)
         stack, findings = self._stacked(built, part)
         again: dict[str, StaticResult] = {}
         if stack is not None and "as printed" in self.stages:
@@ -187,6 +190,7 @@ class _Run:
                 again = self._solved(built, printed, "as printed", results)
         with self.clock.stage("verdicts"):
             data = self._data(built, part, found, results, again, stack, findings)
+            data = replace(data, grid_error=coarser)
         report = None
         if "report" in self.stages:
             with self.clock.stage("report"):
@@ -221,6 +225,12 @@ class _Run:
             warm=warm,
             stage=f"load cases, {stage}",
         )
+
+    def _coarser(self, results: Mapping[str, StaticResult]) -> dict[str, ErrorEstimate]:
+        """How far each answer is off by the voxel size, from solving at half resolution."""
+        if "grid error" not in self.stages:
+            return {}
+        return {name: error_estimate(r, monitor=self.monitor) for name, r in results.items()}
 
     def _stacked(self, built: Built, part: Part) -> tuple[Stack | None, list[Finding]]:
         printing = built.design.printing

@@ -9,6 +9,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from voxelmat.fea.energy_error import EnergyError
+from voxelmat.fea.refine import ErrorEstimate
 from voxelmat.model.design_result import DesignResult
 from voxelmat.model.finding import Finding
 from voxelmat.model.interface import InterfaceSpot
@@ -118,7 +119,9 @@ class RunData:
     interfaces : mapping of str to tuple of InterfaceSpot
         By load case, the worst places where two resins meet.
     energy_error : mapping of str to EnergyError
-        By load case, the estimated error by the voxel size.
+        By load case, the estimated error by the voxel size, from the result itself.
+    grid_error : mapping of str to ErrorEstimate
+        By load case, the same from solving again at half resolution.
     optimised : DesignResult or None
     stack : StackSummary or None
     findings : tuple of Finding
@@ -142,6 +145,7 @@ class RunData:
     safety: Mapping[str, NDArray[np.float32]] = field(default_factory=dict)
     interfaces: Mapping[str, tuple[InterfaceSpot, ...]] = field(default_factory=dict)
     energy_error: Mapping[str, EnergyError] = field(default_factory=dict)
+    grid_error: Mapping[str, ErrorEstimate] = field(default_factory=dict)
     optimised: DesignResult | None = None
     stack: StackSummary | None = None
     findings: tuple[Finding, ...] = ()

@@ -232,6 +232,17 @@ def found_table(run: RunData, name: str) -> Table:
                 f"{place(error.place_mm)} mm",
             )
         )
+    coarser = run.grid_error.get(name)
+    if coarser is not None:
+        off = coarser.displacement_error
+        told = f"{number(100 * abs(off), 2)} %" if math.isfinite(off) else "not known"
+        rows.append(
+            (
+                "largest displacement, error by voxel size",
+                told,
+                " ".join((coarser.words, *(coarser.notes if math.isfinite(off) else ()))),
+            )
+        )
     return Table(head=("figure", "value", "note"), rows=tuple(rows), numbers=(1,))
 
 
