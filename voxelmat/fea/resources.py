@@ -1,7 +1,8 @@
 """What a static solve takes, before it is begun: bytes and seconds, and whether it fits.
 
-The figures a voxel were measured on whole solves of full blocks of 48^3 to 128^3 voxels, results
-included. They count the voxels of the grid's box, empty ones too.
+The figures were measured on whole solves, results included, in grids of 48^3 to 128^3 voxels that
+were full or nearly empty. Results cover the whole grid; the solver works in the bounding box of
+the material.
 """
 
 from __future__ import annotations
@@ -24,14 +25,16 @@ from voxelmat.kernels.threads import crew
 from voxelmat.model.grid import VoxelGrid
 from voxelmat.model.loadcase import LoadCase
 from voxelmat.model.part import Part
+from voxelmat.model.region import solid_nodes
 from voxelmat.monitor import computing
 
 __all__ = ["SolveEstimate", "available_bytes", "check_fits", "estimate_solve", "peak_bytes"]
 
-# Peak bytes a voxel of the box, and what the dense coarsest level adds whatever the size.
-_BYTES = {"avg2": 470, "gal4b": 620}
-_STRAIN_BYTES = 100  # free strains: their own field, forces and energy
-_FIXED_BYTES = 160_000_000
+# Peak bytes a voxel of the grid; those that free strains add (their field, forces and energy);
+# those a voxel of the material's box; what the dense coarsest level adds whatever the size.
+_GRID_BYTES, _STRAIN_BYTES = 310, 100
+_BOX_BYTES = {"avg2": 160, "gal4b": 310}
+_FIXED_BYTES = 100_000_000
 # Seconds as multiples of one product with the stiffness: an iteration; all else; and iterations,
 # few and many. Many is where the automatic choice goes over to another method.
 _ITERATION = {"avg2": 10.0, "gal4b": 30.0}
@@ -56,10 +59,11 @@ class SolveEstimate:
     method : str
         Coarse method that the solver begins with.
     voxels, unknowns : int
-        Of the box; unknowns of its nodes, those without material too.
+        Voxels of the material's bounding box; unknowns of its nodes, held ones too.
     bytes : int
         At the peak, beside what the process holds already.
     bytes_a_voxel : float
+        Of the grid.
     seconds : tuple of float
         Few and many iterations, compiling left out, with the machine as busy as it is now.
     available : int or None
@@ -122,8 +126,20 @@ def peak_bytes() -> int | None:
     return int(most) * (1 if sys.platform == "darwin" else 1024)
 
 
-def _bytes(voxels: int, method: str, strains: bool) -> int:
-    return voxels * (_BYTES[method] + strains * _STRAIN_BYTES) + _FIXED_BYTES
+def _box(part: Part) -> int:
+    """Voxels of the bounding box of the material."""
+    size = 1
+    for axis in range(3):
+        others = tuple(a for a in range(3) if a != axis)
+        layers = np.flatnonzero(part.solid.any(axis=others))
+        size *= int(layers[-1] - layers[0]) + 1 if len(layers) else 0
+    return size
+
+
+def _bytes(part: Part, method: str, strains: bool) -> int:
+    """At the peak of a whole solve."""
+    grid = part.grid.n_voxels * (_GRID_BYTES + strains * _STRAIN_BYTES)
+    return grid + _box(part) * _BOX_BYTES[method] + _FIXED_BYTES
 
 
 def _product_seconds(part: Part, element: str) -> float:
@@ -139,7 +155,7 @@ def _product_seconds(part: Part, element: str) -> float:
             start = time.perf_counter()
             K.apply(u, y)
             best = min(best, time.perf_counter() - start)
-    return best * part.grid.n_voxels / ones.size
+    return best * _box(part) / ones.size
 
 
 def estimate_solve(
@@ -160,16 +176,16 @@ def estimate_solve(
         Memory is meant to be right within a third, seconds within a few times.
     """
     method, strains = _method(part, load_case)
-    voxels = part.grid.n_voxels
+    box = _box(part)
     product = _product_seconds(part, element)
     few, many = (product * (_REST[method] + n * _ITERATION[method]) for n in _ITERATIONS[method])
-    needed = _bytes(voxels, method, strains)
+    needed = _bytes(part, method, strains)
     return SolveEstimate(
         method=method,
-        voxels=voxels,
-        unknowns=3 * math.prod(part.grid.node_shape),
+        voxels=box,
+        unknowns=3 * int(solid_nodes(part.solid).sum()),
         bytes=needed,
-        bytes_a_voxel=needed / voxels,
+        bytes_a_voxel=needed / part.grid.n_voxels,
         seconds=(few, many + _FIXED_S),
         available=available_bytes(),
     )
@@ -221,11 +237,10 @@ def check_fits(
     """
     if available is None:
         available = available_bytes()
-    # With the cheapest method already too large: say so before more memory is touched.
-    least = _bytes(part.grid.n_voxels, "avg2", False)
-    needed = least
-    if available is not None and least <= available:
-        needed = _bytes(part.grid.n_voxels, *_method(part, load_case))
+    needed = part.grid.n_voxels * _GRID_BYTES + _FIXED_BYTES
+    # Where the results alone are too large, say so before more memory is touched.
+    if available is None or needed <= available:
+        needed = _bytes(part, *_method(part, load_case))
     if available is not None and needed > available:
         n, h = part.grid.shape, part.grid.spacing
         raise ResourceError(
