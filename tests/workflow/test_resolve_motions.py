@@ -186,3 +186,46 @@ def test_stiffness_under_a_plate():
     result = solve(block(), resolved.load_cases[0])
     (verdict,) = verdicts(resolved, result.part, {"warm": result})
     assert verdict.value == pytest.approx(-0.01 * stiff, rel=1e-3)
+
+
+def test_doubts_about_expansion_and_symmetry():
+    """Data without a source, a range, a temperature beyond the record; no edge at a mirror."""
+    data = deepcopy(DATA)
+    data["load_case"][0]["support"][2] = {"symmetry": "z-"}
+    data["load_case"][0]["load"] = [
+        {"kind": "temperature", "temperature_degC": 90, "stress_free_degC": 20},
+    ]
+    data["requirement"] = [
+        {"name": "still", "measure": "largest strain", "load_case": "warm", "at_most": 1.0},
+    ]
+    resolved = resolve(parse_design(data), block())
+
+    def doubts(part):
+        result = solve(part, resolved.load_cases[0])
+        return " | ".join(verdicts(resolved, part, {"warm": result})[0].reasons)
+
+    said = doubts(block())
+    assert "the thermal expansion of 'hard' is indicative" in said
+    assert "90" in said
+    assert "symmetry plane" not in said
+    wide = RESIN.replace(expansion=Constant(value=1e-4, low=8e-5, high=1e-4, source="made up"))
+    said = doubts(block().replace(resins=(wide,)))
+    assert "the range of the thermal expansion of 'hard' is not carried to this value" in said
+    assert "expansion of 'hard' is indicative" not in said
+
+
+def test_a_peak_beside_a_plate_is_doubted():
+    data = deepcopy(DATA)
+    data["load_case"][0].update(
+        support=[{"region": "foot", "slide": ["x", "y"]}, {"symmetry": "x-"}, {"symmetry": "y-"}],
+        load=[],
+        plate=[{"name": "grip", "region": "head", "translation_mm": {"x": 0, "y": 0, "z": -0.01},
+                "rotation_deg": {"x": 0, "y": 0, "z": 0}}],
+    )  # fmt: skip
+    data["requirement"] = [
+        {"name": "holds", "measure": "largest strain", "load_case": "warm", "at_most": 1.0},
+    ]
+    resolved = resolve(parse_design(data), block())
+    result = solve(block(), resolved.load_cases[0])
+    (verdict,) = verdicts(resolved, result.part, {"warm": result})
+    assert "at the plate on 'head'" in " | ".join(verdict.reasons)

@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 from numpy.typing import NDArray
 
-from voxelmat.model.loadcase import LoadCase, Temperature
+from voxelmat.model.loadcase import LoadCase
 from voxelmat.model.part import Part
 from voxelmat.model.result import ROTATION_LIMIT, STRAIN_LIMIT, Extreme
 from voxelmat.units import number
@@ -18,20 +18,10 @@ Double = NDArray[np.float64]
 _STIFFER = 50.0
 
 
-def _temperatures(case: LoadCase) -> tuple[float, float]:
-    """Lowest and highest temperature that a load case names, degC."""
-    found = [case.temperature_degC]
-    for load in case.loads:
-        if isinstance(load, Temperature):
-            field = np.asarray(load.temperature)
-            found += [float(np.nanmin(field)), float(np.nanmax(field))]
-    return min(found), max(found)
-
-
 def record_cautions(part: Part, case: LoadCase) -> list[str]:
     """Materials used outside the conditions that their records are meant for."""
     used = set(part.volumes())
-    coldest, warmest = _temperatures(case)
+    coldest, warmest = case.temperature_ends
     out = []
     for m in part.resins:
         if m.name not in used:

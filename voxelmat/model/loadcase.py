@@ -319,3 +319,13 @@ class LoadCase:
     def strains(self) -> bool:
         """Whether something in it would strain the part without any force."""
         return any(isinstance(load, Temperature | InitialStrain) for load in self.loads)
+
+    @property
+    def temperature_ends(self) -> tuple[float, float]:
+        """Lowest and highest temperature that it names, fields of temperature included, degC."""
+        found = [self.temperature_degC]
+        for load in self.loads:
+            if isinstance(load, Temperature):
+                field = np.asarray(load.temperature)
+                found += [float(np.nanmin(field)), float(np.nanmax(field))]
+        return min(found), max(found)

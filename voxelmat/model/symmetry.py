@@ -13,14 +13,14 @@ from voxelmat.model.loadcase import Support
 from voxelmat.model.part import Part
 from voxelmat.model.region import FaceRegion, parse_side
 
-__all__ = ["symmetry_support"]
+__all__ = ["SymmetryPlane", "symmetry_support"]
 
 # How far, in voxels, the plane may lie from the part's outermost nodes.
 _OFF = 1e-3
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
-class _PlaneNodes(FaceRegion):
+class SymmetryPlane(FaceRegion):
     """The outermost nodes on one side, checked to lie in the plane each time they are asked for."""
 
     at: float | None = None
@@ -63,5 +63,5 @@ def symmetry_support(side: str, at: float | None = None) -> Support:
     if at is not None and not math.isfinite(at):
         raise InputError(f"The place of a symmetry plane must be finite; got {at}.")
     x, y, z = (0.0 if a == axis else None for a in range(3))
-    region = _PlaneNodes(name=f"symmetry plane {side}", side=side, at=at)
+    region = SymmetryPlane(name=f"symmetry plane {side}", side=side, at=at)
     return Support(region=region, displacement=(x, y, z))

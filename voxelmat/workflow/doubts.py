@@ -9,13 +9,22 @@ import numpy as np
 from voxelmat.fea.peaks import is_stepped
 from voxelmat.material.conditions import cautions_for
 from voxelmat.model.laws import CalibratedCurve
+from voxelmat.model.loadcase import Temperature
 from voxelmat.model.part import Part
 from voxelmat.model.region import solid_nodes
 from voxelmat.model.result import ROTATION_LIMIT, STRAIN_LIMIT, StaticResult
+from voxelmat.model.symmetry import SymmetryPlane
 from voxelmat.units import number
 from voxelmat.workflow.spread import Spread
 
-__all__ = ["condition_doubts", "data_doubts", "peak_doubts", "place_words", "size_doubts"]
+__all__ = [
+    "condition_doubts",
+    "data_doubts",
+    "expansion_doubts",
+    "peak_doubts",
+    "place_words",
+    "size_doubts",
+]
 
 #: Materials that carry less of the strain energy than this do not decide a displacement; ours.
 MATTERS = 0.01
@@ -64,17 +73,41 @@ def _listed(names: list[str]) -> str:
 def condition_doubts(result: StaticResult, spread: Spread) -> list[str]:
     """Materials that carry load outside the conditions of their record."""
     case = result.load_case
-    return [
+    used = result.part.volumes()
+    found = [
         caution.rstrip(".")
         for m in result.part.resins
-        if spread.shares.get(m.name, 0.0) > MATTERS
+        # One that is free to expand stores no energy and yet decides the value.
+        if spread.shares.get(m.name, 0.0) > MATTERS or (case.strains and m.name in used)
+        for temperature in dict.fromkeys((case.temperature_degC, *case.temperature_ends))
         for caution in cautions_for(
             m,
-            temperature_degC=case.temperature_degC,
+            temperature_degC=temperature,
             duration_s=case.duration_s,
             cycles=case.cycles,
         )
     ]
+    return list(dict.fromkeys(found))
+
+
+def expansion_doubts(result: StaticResult) -> list[str]:
+    """Thermal expansion without a source, or with a range that no band carries."""
+    part = result.part
+    if not any(isinstance(load, Temperature) for load in result.load_case.loads):
+        return []
+    used = part.volumes()
+    known = {m.name: m.expansion for m in part.resins if m.name in used and m.expansion}
+    weak = [n for n, c in known.items() if c.indicative]
+    wide = [n for n, c in known.items() if c.band[0] < c.band[1]]
+    found = []
+    if weak:
+        found.append(f"the thermal expansion of {', '.join(map(repr, weak))} is indicative")
+    if wide:
+        found.append(
+            f"the range of the thermal expansion of {', '.join(map(repr, wide))} is not carried "
+            "to this value"
+        )
+    return found
 
 
 def size_doubts(result: StaticResult) -> list[str]:
@@ -105,11 +138,16 @@ def peak_doubts(result: StaticResult, cell: tuple[int, int, int]) -> list[str]:
     alone = np.zeros(part.grid.shape, dtype=bool)
     alone[cell] = True
     corners = solid_nodes(alone)
-    for support in result.load_case.supports:
-        if (support.region.nodes(part) & corners).any():
+    case = result.load_case
+    # A mirrored part has no edge where its symmetry plane is.
+    holders = [("support", s.region) for s in case.supports]
+    holders = [h for h in holders if not isinstance(h[1], SymmetryPlane)]
+    holders += [("plate", p.region) for p in case.plates]
+    for what, region in holders:
+        if (region.nodes(part) & corners).any():
             found.append(
-                f"its extreme lies at the support on '{support.region.name}', where the value "
-                "grows with every refinement of the grid"
+                f"its extreme lies at the {what} on '{region.name}', where the value grows with "
+                "every refinement of the grid"
             )
             break
     return found

@@ -21,6 +21,7 @@ from voxelmat.units import number, quantity
 from voxelmat.workflow.doubts import (
     condition_doubts,
     data_doubts,
+    expansion_doubts,
     peak_doubts,
     place_words,
     size_doubts,
@@ -119,6 +120,7 @@ def _measure(
         *data_doubts(result.part, spread),
         *size_doubts(result),
         *condition_doubts(result, spread),
+        *expansion_doubts(result),
     )
     return dataclasses.replace(found, doubts=(*common, *found.doubts))
 
