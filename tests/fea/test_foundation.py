@@ -8,6 +8,7 @@ from voxelmat.fea.static import solve
 from voxelmat.model.averages import mean_motion, mean_strain, mean_stress
 from voxelmat.model.blend import EMPTY, Blend
 from voxelmat.model.loadcase import (
+    BodyForce,
     Force,
     Foundation,
     GroundSpring,
@@ -227,3 +228,11 @@ def test_averages_weigh_by_material_and_refuse_empty_regions(grid, resin):
     for ask in (mean_motion, mean_strain, mean_stress):
         with pytest.raises(InputError, match="'nowhere' holds no"):
             ask(result, nowhere)
+
+
+def test_weight_alone_is_a_load(grid, resin):
+    part = Part.uniform(grid(2, 2, 3), resin())
+    gravity = BodyForce(acceleration=(0, 0, -9806.65))
+    result = solve(part, LoadCase(name="c", supports=(Support(region=LOW),), loads=(gravity,)))
+    weight = 12 * 1.1e-9 * 9806.65
+    assert result.reactions["support 1 on 'low'"][2] == pytest.approx(weight, rel=1e-7)
