@@ -17,6 +17,7 @@ from numpy.typing import NDArray
 
 from voxelmat.errors import InputError
 from voxelmat.fea.element import DEFAULT, Spacing, coefficients
+from voxelmat.fea.sensitivity import strain, strain_adjoint
 from voxelmat.fea.stress import stress
 from voxelmat.model.expansion import palette_expansion
 from voxelmat.model.freestrain import InitialStrain, Temperature
@@ -58,15 +59,11 @@ class FreeStrain:
         _, m, linear, _ = coefficients(lam, mu, element)
         return np.asarray((self._multiple(element) * linear + 2.0 * m) * self.slope)
 
-    def _corner_forces(
-        self, lam: Double, mu: Double, spacing: Spacing, element: str
+    def _slope_forces(
+        self, linear: Double, spacing: Spacing
     ) -> Iterator[tuple[int, tuple[slice, slice, slice], Double]]:
-        """Component, place of the corner's nodes, and force of each voxel there."""
-        s = stress(self.mean, lam, mu)
-        linear = self._slope_stress(lam, mu, element)
-        volume = float(np.prod(spacing))
-        shear = {(0, 1): 3, (0, 2): 4, (1, 2): 5}
-        shape = lam.shape
+        """Component, place of the corner's nodes, and force of each voxel by its linear modes."""
+        volume, shape = float(np.prod(spacing)), linear.shape[1:]
         for corner in range(8):
             bit = [corner >> d & 1 for d in range(3)]
             sign = [2.0 * b - 1.0 for b in bit]
@@ -76,36 +73,34 @@ class FreeStrain:
                 slice(bit[0], bit[0] + shape[2]),
             )
             for a in range(3):
-                force = np.zeros(shape)
-                for b in range(3):
-                    c = a if a == b else shear[min(a, b), max(a, b)]
-                    force += (sign[b] / (4.0 * spacing[b])) * s[c]
-                    if linear is not None and b != a:
-                        force += (sign[a] * sign[b] / (12.0 * spacing[a])) * linear[b]
-                force *= volume
-                yield a, at, force
+                b, c = (d for d in range(3) if d != a)
+                # Strain of component a that changes sign along b, and along c.
+                mixed = sign[b] * linear[b] + sign[c] * linear[c]
+                yield a, at, (volume * sign[a] / (12.0 * spacing[a])) * mixed
 
     def forces(self, lam: Double, mu: Double, spacing: Spacing, element: str = DEFAULT) -> Double:
         """Nodal forces that would give the free strain, (3, nz+1, ny+1, nx+1), N."""
-        out = np.zeros((3, *(n + 1 for n in lam.shape)))
-        for a, at, force in self._corner_forces(lam, mu, spacing, element):
-            out[(a, *at)] += force
+        out = strain_adjoint(float(np.prod(spacing)) * stress(self.mean, lam, mu), spacing)
+        linear = self._slope_stress(lam, mu, element)
+        if linear is not None:
+            for a, at, force in self._slope_forces(linear, spacing):
+                out[(a, *at)] += force
         return out
 
     def energy(
         self, u: Double, lam: Double, mu: Double, spacing: Spacing, element: str = DEFAULT
     ) -> Double:
         """What to add to u . K u / 2 of each voxel for its strain energy, mJ, (nz, ny, nx)."""
-        s = stress(self.mean, lam, mu)
         volume = float(np.prod(spacing))
-        out = 0.5 * volume * np.einsum("ckji,ckji->kji", s, self.mean)
+        s, e = stress(self.mean, lam, mu), strain(u, spacing)
+        out = volume * np.einsum("ckji,ckji->kji", s, 0.5 * self.mean - e)
         linear = self._slope_stress(lam, mu, element)
         if linear is not None and self.slope is not None:
             # An isotropic strain in n directions stores n times s e / 2; a linear mode a third.
             share = volume * self._multiple(element) / 6.0
             out += share * np.einsum("ckji,ckji->kji", linear, self.slope)
-        for a, at, force in self._corner_forces(lam, mu, spacing, element):
-            out -= force * u[(a, *at)]
+            for a, at, force in self._slope_forces(linear, spacing):
+                out -= force * u[(a, *at)]
         return np.asarray(out)
 
 
