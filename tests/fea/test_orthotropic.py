@@ -1,7 +1,10 @@
 """Orthotropic voxels: against assembly, exact fields, laminates, beams, turned axes."""
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
+import scipy.sparse.linalg
 import skfem
 from hypothesis import given, settings
 from hypothesis import strategies as st
@@ -16,10 +19,12 @@ from voxelmat.fea.orthotropic_static import solve_orthotropic
 from voxelmat.fea.static import solve
 from voxelmat.fea.system import LinearSystem
 from voxelmat.model.blend import EMPTY, Blend
-from voxelmat.model.loadcase import Force, InitialStrain, LoadCase, Support
+from voxelmat.model.loadcase import Force, Foundation, InitialStrain, LoadCase, Support, Temperature
+from voxelmat.model.material import Constant
 from voxelmat.model.orthotropic import Orthotropic
 from voxelmat.model.part import Part
-from voxelmat.model.region import FaceRegion
+from voxelmat.model.plate import Plate
+from voxelmat.model.region import Box, FaceRegion
 
 ROOT = Support(region=FaceRegion(name="root", side="x-"))
 # Invented, with three different moduli each way.
@@ -103,6 +108,28 @@ def test_full_equals_an_assembled_matrix(shape, seed):
     u = rng.standard_normal(fixed.shape)
     expected = (assembled(labels, table, spacing) @ u.ravel()).reshape(u.shape)
     assert np.abs(system.apply(u) - expected).max() <= 1e-12 * np.abs(expected).max()
+
+
+@settings(deadline=None, max_examples=10)
+@given(st.tuples(*[st.integers(1, 4)] * 3), st.integers(0, 10_000))
+def test_random_parts_agree_with_a_sparse_direct_solve(shape, seed):
+    rng = np.random.default_rng(seed)
+    spacing = tuple(rng.uniform(0.5, 2.0, 3))
+    # Columns of random height on a full base plane, so that every voxel is joined by faces.
+    height = rng.integers(1, shape[2] + 1, shape[:2])
+    labels = rng.integers(1, 4, shape).astype(np.uint16)
+    labels[np.arange(shape[2]) >= height[..., None]] = 0
+    table = random_table(rng, 4)
+    table[2] *= 1e-3
+    fixed = clamped(shape)
+    load = rng.standard_normal(fixed.shape)
+    system = OrthotropicSystem(labels, table, spacing, fixed, element="full")
+    found = system.solve(load, tol=1e-10, maxiter=3000).u
+    free = np.flatnonzero(system.free)
+    K = assembled(labels, table, spacing)[free][:, free]
+    expected = np.zeros(fixed.shape)
+    expected.ravel()[free] = scipy.sparse.linalg.spsolve(K.tocsc(), load.ravel()[free])
+    np.testing.assert_allclose(found, expected, atol=1e-6 * np.abs(expected).max())
 
 
 # ------------------------------------------------------------------ exact fields
@@ -274,24 +301,30 @@ def test_turned_axes_permute_the_answer(axes, element):
 
 
 # ------------------------------------------------------------------ beams and laminates
-@pytest.mark.parametrize("layers", [1, 2])
-def test_cantilever_bends_as_timoshenko_with_its_own_shear_modulus(grid, resin, layers):
-    # w = F L^3 / (3 E_x I) + F L / (5/6 G_xz A) (Timoshenko 1921, from memory; shear factor 5/6)
+@pytest.mark.parametrize(
+    ("layers", "factor", "near"), [(1, 1.0, 1e-3), (2, 1.0, 1e-3), (8, 5 / 6, 1e-2)]
+)
+def test_cantilever_bends_as_timoshenko_with_its_own_shear_modulus(
+    grid, resin, layers, factor, near
+):
+    # w = F L^3 / (3 E_x I) + F L / (k G_xz A) (Timoshenko 1921, from memory). The shear stress is
+    # constant over each layer of voxels: with one or two layers k is 1, with many it nears 5/6.
+    # The held root cannot warp, as Timoshenko's beam does: 8 layers measure 0.6 % under it.
     length, depth, width = 40, 4.0, 4.0
     fibre = Orthotropic(
         E=(2000.0, 50.0, 50.0), nu_xy=0.3, nu_xz=0.3, nu_yz=0.3, G=(20.0, 20.0, 15.0)
     )
-    h = (1.0, width / layers, depth / layers)
-    part = block(grid, resin, length, layers, layers, spacing=h)
+    h = (1.0, width / min(layers, 2), depth / layers)
+    part = block(grid, resin, length, min(layers, 2), layers, spacing=h)
     load = Force(region=FaceRegion(name="tip", side="x+"), vector=(0.0, 0.0, -0.05))
     case = LoadCase(name="bend", supports=(ROOT,), loads=(load,))
     result = solve_orthotropic(part, case, {1: fibre})
     moment = width * depth**3 / 12
     bending = 0.05 * length**3 / (3 * 2000.0 * moment)
-    shear = 0.05 * length / (5 / 6 * 20.0 * width * depth)
-    assert shear > 0.25 * bending  # or the test would not see G
+    shear = 0.05 * length / (factor * 20.0 * width * depth)
+    assert shear > 0.2 * bending  # or the test would not see G
     found = result.load_displacement["load 1, force on 'tip'"]
-    assert found == pytest.approx(bending + shear, rel=0.04)
+    assert found == pytest.approx(bending + shear, rel=near)
 
 
 def test_homogenised_laminate_stands_for_its_layers(grid, resin):
@@ -324,7 +357,30 @@ def test_homogenised_laminate_stands_for_its_layers(grid, resin):
         resolved = solve(layers, case).load_displacement["load 1, force on 'top'"]
         alike = solve_orthotropic(one, case, {1: made})
         found = alike.load_displacement["load 1, force on 'top'"]
-        assert found == pytest.approx(resolved, rel=0.05)
+        # 16 layers: measured 0.2 % pressed and 0.5 % sheared, less with finer layers
+        assert found == pytest.approx(resolved, rel=0.01)
+
+
+def test_plates_foundations_and_loose_pieces_work_with_orthotropic_labels(grid, resin):
+    labels = np.ones((6, 4, 5), dtype=np.uint16)
+    labels[:, :, 3] = 0  # the layer above hangs in the air
+    labels[0, :, 4] = 0
+    part = block(grid, resin, 6, 4, 5, labels=labels)
+    top = FaceRegion(name="top", side="z+")
+    bottom = FaceRegion(name="bottom", side="z-")
+    bed = Foundation(region=bottom, stiffness=5.0, acts="all")
+    pressed = Box(name="end", low=(5.0, -1.0, -1.0), high=(7.0, 5.0, 3.0))
+    plate = Plate(name="cap", region=pressed, point=(6.0, 2.0, 1.5), force=(0.0, 0.0, -3.0))
+    case = LoadCase(name="a", supports=(ROOT,), loads=(bed,), plates=(plate,))
+    result = solve_orthotropic(part, case, {1: WOOD}, tol=1e-9)
+    assert result.balance < 1e-6
+    assert result.moment_balance < 1e-6
+    assert result.displacement[6, 2, 2, 2] < 0
+    assert not result.displacement[:, :, 4:].any()
+    assert any("loose" in c or "not held" in c or "pieces" in c for c in result.cautions)
+    hanging = Force(region=top, vector=(0.0, 0.0, -1.0))
+    with pytest.raises(InputError):
+        solve_orthotropic(part, replace(case, loads=(hanging,), plates=()), {1: WOOD})
 
 
 # ------------------------------------------------------------------ what is refused
@@ -351,6 +407,12 @@ def test_impossible_input_is_refused(grid, resin):
         supports=(ROOT,),
         loads=(Force(region=FaceRegion(name="t", side="x+"), vector=(1.0, 0.0, 0.0)),),
     )
+    warm = Temperature(temperature=np.linspace(20.0, 30.0, 27).reshape(3, 3, 3), stress_free=20.0)
+    expanding = part.resins[0].replace(expansion=Constant(value=8e-5, unit="1/K"))
+    with pytest.raises(InputError, match="at voxel centres"):
+        solve_orthotropic(
+            part.replace(resins=(expanding,)), replace(case, loads=(warm,)), {1: WOOD}
+        )
     with pytest.raises(InputError, match="palette of part 'part' has labels 1 to 1"):
         solve_orthotropic(part, case, {2: WOOD})
 
