@@ -209,6 +209,56 @@ def test_isotropic_labels_give_the_isotropic_result(grid, resin):
     assert result.balance < 1e-8
 
 
+@pytest.mark.parametrize("element", FORMS)
+def test_free_strain_of_isotropic_labels_is_that_of_the_isotropic_solver(grid, resin, element):
+    rng = np.random.default_rng(9)
+    part = block(grid, resin, 4, 3, 2, spacing=(1.0, 0.7, 1.2))
+    warm = part.resins[0].replace(expansion=Constant(value=8e-5, unit="1/K"))
+    part = part.replace(
+        resins=(warm,), occupancy=rng.integers(60, 256, part.grid.shape).astype(np.uint8)
+    )
+    hot = Temperature(temperature=rng.uniform(20, 60, (5, 4, 3)), stress_free=20.0)
+    own = InitialStrain(strain=rng.uniform(-1e-3, 1e-3, 6))
+    case = LoadCase(name="a", supports=(ROOT,), loads=(hot, own))
+    same = Orthotropic.isotropic(2000.0, 0.3)
+    result = solve_orthotropic(part, case, {1: same}, element=element, tol=1e-11)
+    expected = solve(part, case, element=element, tol=1e-11)
+    size = np.abs(expected.displacement).max()
+    np.testing.assert_allclose(result.displacement, expected.displacement, atol=1e-8 * size)
+    largest = np.abs(expected.stress).max()
+    np.testing.assert_allclose(result.stress, expected.stress, atol=1e-5 * largest)
+    np.testing.assert_allclose(
+        result.energy_density, expected.energy_density, atol=1e-5 * expected.energy_density.max()
+    )
+    assert result.energy == pytest.approx(expected.energy, rel=1e-8)
+
+
+def test_orthotropic_plate_bends_freely_with_a_temperature_through_it(grid, resin):
+    """Linear in z: curvature alpha dT / t and no stress, whatever the stiffness (formula)."""
+    part = block(grid, resin, 6, 4, 1, spacing=(1.0, 1.0, 0.5))
+    warm = part.resins[0].replace(expansion=Constant(value=8e-5, unit="1/K"))
+    part = part.replace(resins=(warm,))
+    field = np.zeros((7, 5, 2)) + np.array([-10.0, 10.0])
+    hot = Temperature(temperature=field, stress_free=0.0)
+    corner = [
+        Support(region=Box(name=f"c{n}", low=low, high=high), displacement=held)
+        for n, (low, high, held) in enumerate((
+            ((-0.1, -0.1, -0.1), (0.1, 0.1, 0.1), (0.0, 0.0, 0.0)),
+            ((5.9, -0.1, -0.1), (6.1, 0.1, 0.1), (None, 0.0, 0.0)),
+            ((-0.1, 3.9, -0.1), (0.1, 4.1, 0.1), (None, None, 0.0)),
+        ))
+    ]  # fmt: skip
+    case = LoadCase(name="a", supports=tuple(corner), loads=(hot,))
+    result = solve_orthotropic(part, case, {1: WOOD}, tol=1e-11)
+    curvature = 8e-5 * 20.0 / 0.5
+    w = result.displacement[:, 0, 0, 2]
+    x = np.arange(7.0)
+    # Hotter above: it bends away from the heat, between its two held ends.
+    np.testing.assert_allclose(w, 0.5 * curvature * x * (6.0 - x), atol=1e-8)
+    assert abs(result.energy) < 1e-9 * curvature**2 * 1000.0
+    assert any("expand with heat" in c for c in result.cautions)
+
+
 def test_every_method_gives_the_same_answer():
     rng = np.random.default_rng(5)
     shape = (4, 5, 7)
@@ -407,12 +457,6 @@ def test_impossible_input_is_refused(grid, resin):
         supports=(ROOT,),
         loads=(Force(region=FaceRegion(name="t", side="x+"), vector=(1.0, 0.0, 0.0)),),
     )
-    warm = Temperature(temperature=np.linspace(20.0, 30.0, 27).reshape(3, 3, 3), stress_free=20.0)
-    expanding = part.resins[0].replace(expansion=Constant(value=8e-5, unit="1/K"))
-    with pytest.raises(InputError, match="at voxel centres"):
-        solve_orthotropic(
-            part.replace(resins=(expanding,)), replace(case, loads=(warm,)), {1: WOOD}
-        )
     with pytest.raises(InputError, match="palette of part 'part' has labels 1 to 1"):
         solve_orthotropic(part, case, {2: WOOD})
 

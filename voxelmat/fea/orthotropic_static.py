@@ -9,13 +9,14 @@ import numpy as np
 from numpy.typing import NDArray
 
 from voxelmat.errors import InputError
-from voxelmat.fea.assemble import Assembled, assemble
-from voxelmat.fea.element import DEFAULT, Spacing
+from voxelmat.fea.assemble import assemble
+from voxelmat.fea.element import DEFAULT
 from voxelmat.fea.operator import touched_nodes
 from voxelmat.fea.orthotropic import OrthotropicSystem
 from voxelmat.fea.orthotropic_element import isotropic_constants
 from voxelmat.fea.orthotropic_operator import OrthotropicStiffness, comparison, orthotropic_stress
-from voxelmat.fea.sensitivity import strain, strain_adjoint
+from voxelmat.fea.orthotropic_strain import OrthotropicFreeStrain
+from voxelmat.fea.sensitivity import strain
 from voxelmat.fea.static import _first_guess, _keep_pieces, _result, _without_loose
 from voxelmat.model.loadcase import LoadCase
 from voxelmat.model.orthotropic import Orthotropic
@@ -53,36 +54,6 @@ def label_constants(part: Part, stiffness: Mapping[int, Orthotropic]) -> Double:
     return out
 
 
-class _FreeStrain:
-    """Free strain (6, nz, ny, nx) with the stress that would undo it, counted with the fill."""
-
-    def __init__(self, mean: Double, labels: NDArray[np.uint16], constants: Double, fill: Double):
-        self.mean = mean * (labels > 0)
-        self._stress = fill * orthotropic_stress(self.mean, labels, constants)
-
-    def forces(self, spacing: Spacing) -> Double:
-        """Nodal forces that would give the free strain, N."""
-        return strain_adjoint(self._stress * float(np.prod(spacing)), spacing)
-
-    def energy(self, e: Double, spacing: Spacing) -> Double:
-        """What to add to the energy of the displacement, mJ, at total strain e."""
-        missing = np.einsum("ckji,ckji->kji", self._stress, 0.5 * self.mean - e)
-        return np.asarray(float(np.prod(spacing)) * missing)
-
-
-def _free_strain(
-    acts: Assembled, labels: NDArray[np.uint16], constants: Double, fill: Double
-) -> _FreeStrain | None:
-    if acts.free is None:
-        return None
-    if acts.free.slope is not None and np.any(acts.free.slope):
-        raise InputError(
-            "A temperature at nodes bends each voxel, which orthotropic voxels do not take into "
-            "account. Give the temperature at voxel centres (HeatResult.at_voxels)."
-        )
-    return _FreeStrain(acts.free.mean, labels, constants, fill)
-
-
 def _cautions(part: Part, stiffness: Mapping[int, Orthotropic], thermal: bool) -> list[str]:
     labels = ", ".join(str(n) for n in sorted(stiffness))
     out = [
@@ -99,7 +70,9 @@ def _cautions(part: Part, stiffness: Mapping[int, Orthotropic], thermal: bool) -
         if stiffness[n].off_axis > _NOTED
     ]
     if thermal:
-        out.append("Orthotropic labels expand alike in every direction here.")
+        out.append(
+            "Orthotropic labels expand with heat alike in every direction, as their resins do."
+        )
     return out
 
 
@@ -137,7 +110,7 @@ def solve_orthotropic(
     Raises
     ------
     InputError
-        As `voxelmat.fea.static.solve`; a label that does not exist; a temperature at nodes.
+        As `voxelmat.fea.static.solve`; a label that does not exist.
     ConvergenceError
         With the residual history.
     """
@@ -154,9 +127,11 @@ def solve_orthotropic(
     if part.occupancy is not None:
         fill = np.ascontiguousarray(np.where(labels > 0, part.occupancy.T, 0), dtype=np.uint8)
     share = np.ones(labels.shape) if fill is None else fill / 255.0
-    free = _free_strain(acts, labels, constants, share)
     spacing = part.grid.spacing
-    force = acts.force if free is None else acts.force + free.forces(spacing)
+    free = None
+    if acts.free is not None:
+        free = OrthotropicFreeStrain(acts.free, labels, constants, share, spacing, element)
+    force = acts.force if free is None else acts.force + free.forces()
     system = OrthotropicSystem(
         labels,
         constants,
@@ -179,7 +154,7 @@ def solve_orthotropic(
     e = strain(found.u, spacing) * (labels > 0)
     energy = OrthotropicStiffness(labels, constants, spacing, element, fill=fill).energy(found.u)
     if free is not None:
-        energy += free.energy(e, spacing)
+        energy += free.energy(found.u)
     s = orthotropic_stress(e if free is None else e - free.mean, labels, constants)
     medium = comparison(constants)
     lam, mu = medium.lam[labels] * share, medium.mu[labels] * share
