@@ -357,6 +357,22 @@ def test_a_plate_as_a_mesh_is_a_rectangular_punch(resin, grid):
     assert int(plate.touching.sum()) == 9
 
 
+def test_crumbs_out_of_reach_do_not_matter(resin, grid):
+    labels = np.ones((6, 4, 4), dtype=np.uint16)
+    labels[4:] = 0
+    labels[5, 2, 1] = 1  # hangs in the air, two voxels below the top
+    palette = (EMPTY, Blend.pure("rigid-example"))
+    part = Part(grid=grid(6, 4, 4), resins=(resin(),), palette=palette, labels=labels)
+    case = LoadCase(name="a", supports=(FLOOR,))
+    plane = FlatPunch(position=(0.0, 0.0, 4.0))
+    found = contact(part, case, plane, depth_mm=0.1)
+    assert any("loose pieces" in c for c in found.cautions)
+    bare = part.replace(labels=np.where(np.arange(6)[:, None, None] < 4, labels, 0))
+    assert found.force == pytest.approx(contact(bare, case, plane, depth_mm=0.1).force, rel=1e-7)
+    with pytest.raises(InputError, match="is not held"):
+        contact(part, case, plane, depth_mm=2.5)
+
+
 def test_clear_errors(resin, grid, monkeypatch):
     part = Part.uniform(grid(4, 4, 3), resin())
     case = LoadCase(name="a", supports=(FLOOR,))
@@ -369,7 +385,7 @@ def test_clear_errors(resin, grid, monkeypatch):
     with pytest.raises(InputError, match="passes by every node"):
         contact(part, case, FlatPunch(radius=0.2, position=(2.5, 2.5, 9.0)), depth_mm=0.1)
     with pytest.raises(InputError, match="is not held"):
-        contact(part, LoadCase(name="a", supports=slides("x-")), FlatPunch(), depth_mm=0.1)
+        contact(part, LoadCase(name="a", supports=slides("x-")), FlatPunch(), force_N=1.0)
     plate = Plate(name="lid", region=FaceRegion(name="lid", side="z+"))
     lid = LoadCase(name="a", supports=(FLOOR,), plates=(plate,))
     with pytest.raises(InputError, match="rigid plates"):

@@ -111,7 +111,8 @@ def contact(
     aim = depth_mm if depth_mm is not None else force_N
     if aim is None or not (np.isfinite(aim) and aim > 0):
         raise InputError(f"A depth (mm) or force (N) must be above 0; got {aim}.")
-    job = ContactJob(part, load_case, indenter, element, tol, monitor)
+    reach = np.finfo(float).max if depth_mm is None else depth_mm
+    job = ContactJob(part, load_case, indenter, reach, element, tol, monitor)
     if depth_mm is not None:
         return job.answer(job.pressed.at(depth_mm))
     first = 0.1 * min(part.grid.spacing)
@@ -156,7 +157,7 @@ def press(
     if depths[0] <= 0 or np.any(np.diff(depths) <= 0):
         raise InputError(f"Depths must be above 0 mm and rise; got {list(depths_mm)}.")
     case = LoadCase(name=f"press with {indenter.name}", supports=tuple(supports))
-    job = ContactJob(part, case, indenter, element, tol, monitor)
+    job = ContactJob(part, case, indenter, float(depths[-1]), element, tol, monitor)
     found: Contact | None = None
     figures = np.empty((4, len(depths)))
     for n, depth in enumerate(depths):

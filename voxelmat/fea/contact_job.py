@@ -37,6 +37,13 @@ _FEW = 12
 class ContactJob:
     """A part, a load case and an indenter made ready.
 
+    Parameters
+    ----------
+    part, case, indenter, element, tol, monitor
+        As for `voxelmat.fea.contact.contact`.
+    reach : float
+        Largest depth that will be asked for, mm; what lies within must be held.
+
     Attributes
     ----------
     pressed : Pressed
@@ -49,6 +56,7 @@ class ContactJob:
         part: Part,
         case: LoadCase,
         indenter: Indenter,
+        reach: float,
         element: str,
         tol: float,
         monitor: Monitor,
@@ -66,7 +74,8 @@ class ContactJob:
             )
         anchored = acts.held if acts.springs is None else acts.held | (acts.springs > 0)
         loaded = np.any(acts.force != 0, axis=0)
-        loaded.ravel()[surface.flat[np.isfinite(surface.gap)]] = True
+        # A loose piece that the indenter does not reach is none of its business.
+        loaded.ravel()[surface.flat[surface.gap <= reach]] = True
         keep, self.cautions = check_held(mu > 0, anchored, loaded, part.grid)
         touched = touched_nodes(keep)
         self.acts: Assembled = replace(acts, force=acts.force * touched, held=acts.held & touched)
