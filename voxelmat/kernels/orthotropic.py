@@ -28,8 +28,10 @@ from voxelmat.kernels.operator import (
 
 _FAST = {"reassoc", "contract", "arcp", "nsz"}
 
-# Row of the temporary that holds the filled fraction, after those of the sums and forces.
-_FILL = 36
+# Rows of the temporary after those of the sums and forces: the filled fraction, and (37 to 57) the
+# constants of the voxels of a row. They are looked up in a loop of their own, since a look-up among
+# the sums and differences would keep those from vector code (2 to 3 times slower).
+_FILL, _TABLE, _ROWS = 36, 37, 58
 
 
 @njit(inline="always", fastmath=_FAST)
@@ -109,7 +111,18 @@ def _material(qx, qy, qz, p, c, w):
 
 
 @njit(inline="always", fastmath=_FAST)
-def _row_of_voxels(T, u, labels, fill, t, c, k, j, x0, w):
+def _look_up(T, last, label, table):
+    """Set the rows of constants where a label is not that of the row before."""
+    for i in range(label.size):
+        n = label[i]
+        if n != last[i]:
+            last[i] = n
+            for q in range(21):
+                T[_TABLE + q, i] = table[n, q]
+
+
+@njit(inline="always", fastmath=_FAST)
+def _row_of_voxels(T, u, c, k, j, x0, w):
     """Displacements to forces for one row of voxels."""
     a0 = u[0, k, j + 1][x0 : x0 + w + 1]
     b0 = u[0, k + 1, j + 1][x0 : x0 + w + 1]
@@ -117,20 +130,17 @@ def _row_of_voxels(T, u, labels, fill, t, c, k, j, x0, w):
     b1 = u[1, k + 1, j + 1][x0 : x0 + w + 1]
     a2 = u[2, k, j + 1][x0 : x0 + w + 1]
     b2 = u[2, k + 1, j + 1][x0 : x0 + w + 1]
-    label = labels[k, j][x0 : x0 + w]
-    if fill.size > 0:
-        share = fill[k, j][x0 : x0 + w]
-        for i in range(w):
-            T[_FILL, i] = share[i] * c[6]
     for i in range(w):
-        n = label[i]
         p = (
-            (t[0][n], t[1][n], t[2][n], t[3][n], t[4][n], t[5][n], t[6][n], t[7][n], t[8][n]),
             (
-                t[9][n], t[10][n], t[11][n], t[12][n], t[13][n], t[14][n], t[15][n], t[16][n],
-                t[17][n],
+                T[37, i], T[38, i], T[39, i], T[40, i], T[41, i], T[42, i], T[43, i], T[44, i],
+                T[45, i],
             ),
-            (t[18][n], t[19][n], t[20][n]),
+            (
+                T[46, i], T[47, i], T[48, i], T[49, i], T[50, i], T[51, i], T[52, i], T[53, i],
+                T[54, i],
+            ),
+            (T[55, i], T[56, i], T[57, i]),
         )  # fmt: skip
         qx = _modes(T, 0, i, a0[i], a0[i + 1], b0[i], b0[i + 1])
         qy = _modes(T, 4, i, a1[i], a1[i + 1], b1[i], b1[i + 1])
@@ -147,13 +157,13 @@ def _planes(u, labels, fill, table, y, c, lo, hi):
     nz, ny, nx = labels.shape
     # Scalars, because a load from an array inside the loops would keep them from vector code.
     s = (c[0], c[1], c[2], c[3], c[4], c[5], c[6])
-    t = (
-        table[0], table[1], table[2], table[3], table[4], table[5], table[6], table[7], table[8],
-        table[9], table[10], table[11], table[12], table[13], table[14], table[15], table[16],
-        table[17], table[18], table[19], table[20],
-    )  # fmt: skip
-    T = np.empty((37, WIDTH), u.dtype)
+    T = np.empty((_ROWS, WIDTH), u.dtype)
     T[_FILL] = 1
+    columns = table.T.copy()
+    last = np.empty(WIDTH, np.uint16)
+    last[:] = labels[0, 0, 0]
+    for r in range(_TABLE, _ROWS):
+        T[r] = table[r - _TABLE, labels[0, 0, 0]]
     for r in range(OUT, _FILL):
         T[r, 0] = 0
     for k in range(max(lo - 1, 0), min(hi, nz)):
@@ -162,7 +172,12 @@ def _planes(u, labels, fill, table, y, c, lo, hi):
             _start_row(T, u, k, x0, w)
             for j in range(ny + 1):
                 if j < ny:
-                    _row_of_voxels(T, u, labels, fill, t, s, k, j, x0, w)
+                    _look_up(T, last, labels[k, j][x0 : x0 + w], columns)
+                    if fill.size > 0:
+                        share = fill[k, j][x0 : x0 + w]
+                        for i in range(w):
+                            T[_FILL, i] = share[i] * s[6]
+                    _row_of_voxels(T, u, s, k, j, x0, w)
                 else:
                     _last_row(T, w)
                 if k >= lo:
