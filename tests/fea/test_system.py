@@ -104,6 +104,28 @@ def test_springs_and_prescribed_displacements(assembled):
         )  # fmt: skip
 
 
+def test_a_part_that_is_carried_along_keeps_its_accuracy(assembled):
+    # the motion of the support alone would ask for a force 1e9 times the load
+    shape, spacing = (5, 7, 5), (1.2, 0.8, 1.0)
+    lam, mu = two_phase(shape, 3, contrast=6e4)
+    fixed = clamped(shape)
+    z, y, _ = (c * h for c, h in zip(np.indices(fixed.shape[1:]), spacing[::-1], strict=True))
+    given = np.stack([3.0 + 0.1 * z - 0.2 * y, 5.0 + 0 * y, -1.0 + 0 * z])
+    b = 1e-3 * np.random.default_rng(1).standard_normal(fixed.shape)
+    system = LinearSystem(lam, mu, spacing, fixed)
+    moved = system.solve(b, prescribed=given)
+    still = direct(assembled, lam, mu, spacing, fixed, b)
+    # turning about y by .1 and about z by .2 adds a known motion at every node
+    x = np.indices(fixed.shape[1:])[2] * spacing[0]
+    carried = given + np.stack([0 * x, 0.2 * x, -0.1 * x])
+    touched = touched_nodes(mu > 0)
+    off = (moved.u - carried) * touched - still
+    assert np.abs(off).max() <= 1e-6 * np.abs(still).max()
+    assert np.array_equal(moved.u[fixed & touched], given[fixed & touched])
+    # without any load there is nothing left to solve
+    assert system.solve(0 * b, prescribed=given).iterations == 0
+
+
 def test_bodies_parted_by_exact_void_do_not_feel_each_other(assembled):
     # two clamped bars in one grid, only one of them loaded
     shape = (3, 7, 10)

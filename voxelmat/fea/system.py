@@ -11,6 +11,7 @@ from voxelmat.errors import ConvergenceError, InputError
 from voxelmat.fea.bed import Bed, Coupled
 from voxelmat.fea.element import DEFAULT, Spacing
 from voxelmat.fea.krylov import Iteration, Operator, conjugate_gradients
+from voxelmat.fea.lift import rigid_lift
 from voxelmat.fea.multigrid import (
     METHODS,
     Grid,
@@ -33,6 +34,8 @@ Double = NDArray[np.float64]
 # as the pace between these two iterations says that it will come to that.
 _CHEAP_LIMIT = 45
 _PACE = (4, 12)
+# Rounding of products, as a share of the force that moves the supports alone.
+_NOISE = 1e-14
 # Systems up to this many unknowns are factorised after so many iterations with the exact levels.
 _DIRECT_UNKNOWNS, _DEAR_LIMIT = 30_000, 200
 
@@ -244,12 +247,19 @@ class LinearSystem:
             raise InputError("A first guess or a prescribed displacement is not finite.")
         return x, given
 
-    def _size(self, b: Double, given: Double | None) -> float:
-        """Size of the load on free unknowns, less what the given displacements take."""
-        force = b * self._free
-        if given is not None:
-            force -= self._product(given) * self._free
-        return float(np.sqrt(dot(force, force)))
+    def _size(self, force: Double) -> float:
+        """Size of a force on free unknowns."""
+        on = force * self._free
+        return float(np.sqrt(dot(on, on)))
+
+    def _from(
+        self, b: Double, x: Double, given: Double, noise: float, tol: float, maxiter: int
+    ) -> Iteration:
+        """Iterate from x, which holds the given displacements; a load below `noise` is none."""
+        norm = self._size(b - self._product(given) if given.any() else b)
+        if norm <= noise:
+            return Iteration(given, 0, 0.0, [0.0], "converged")
+        return self._iterate(b, Iteration(x), norm, tol, maxiter)
 
     def solve(
         self,
@@ -289,11 +299,18 @@ class LinearSystem:
             x, given = self._start(x0, prescribed)
             if self._plates is not None:
                 return self._solve_with_plates(self._plates, b, x, given, tol, maxiter)
-            norm = self._size(b, None if prescribed is None else given)
-            if norm == 0.0:
-                return self._finished(Iteration(given, 0, 0.0, [0.0], "converged"), tol)
-            del given
-            run = self._iterate(b, Iteration(x), norm, tol, maxiter)
+            if not given.any():
+                return self._finished(self._from(b, x, given, 0.0, tol, maxiter), tol)
+            # What is carried along rigidly is no part of the problem, nor of its residual.
+            held = self._grid.held
+            fixed = given[held]
+            noise = _NOISE * self._size(self._product(given))
+            lift = rigid_lift(given, held, self._grid.spacing) * self._grid.touched
+            given -= lift * held
+            x = x - lift if x0 is not None else given.copy()
+            run = self._from(b - self._product(lift), x, given, noise, tol, maxiter)
+            run.x += lift
+            run.x[held] = fixed
         return self._finished(run, tol)
 
     def _finished(self, run: Iteration, tol: float) -> Solution:
