@@ -70,7 +70,8 @@ class TouchSurface:
         """Sum of a nodal value over the nodes of the faces round each node, shape (m,)."""
         near = np.concatenate([self.corners[:, [a, b]] for a in range(4) for b in range(4)])
         near = np.unique(near, axis=0)
-        return np.bincount(near[:, 0], weights=value[near[:, 1]], minlength=len(value))
+        total = np.bincount(near[:, 0], weights=value[near[:, 1]], minlength=len(value))
+        return np.asarray(total, dtype=np.float64)
 
 
 def _face_heights(part: Part, faces: Faces, axis: int, outward: int) -> Double:

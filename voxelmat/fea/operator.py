@@ -105,7 +105,7 @@ class Stiffness:
 
     def apply(self, u: Floats, y: Floats) -> None:
         """Write K u to y; both C-contiguous, of the same float type as the moduli."""
-        chunks = int(threads())  # type: ignore[no-untyped-call]
+        chunks = threads()
         apply_stiffness(u, self.lam, self.mu, y, self.constants, chunks)
         if self.springs is not None:
             add_product(planes(self.springs), planes(u), planes(y))
