@@ -122,6 +122,26 @@ def test_pieces_that_touch_at_an_edge_are_not_joined():
     assert "1 loose pieces" in cautions[0]
 
 
+def test_a_load_where_only_loose_pieces_meet_is_not_lost():
+    # a checkerboard beside a held wall: every node of the loose voxels belongs to several
+    solid, held, loaded, grid = arrays((5, 5, 6))
+    k, j, i = np.indices(solid.shape)
+    solid[:] = (i == 0) | ((i + j + k) % 2 == 0)
+    held[..., 0] = True
+    loaded[2, 2, 4] = True
+    with pytest.raises(InputError, match="A loaded piece of the part is not held"):
+        check_held(solid, held, loaded, grid)
+
+
+def test_a_load_on_the_edge_of_two_held_pieces_acts():
+    solid, held, loaded, grid = arrays((1, 2, 2))
+    solid[0, 0, 1] = solid[0, 1, 0] = False
+    held[..., 0] = held[..., -1] = True
+    loaded[0, 1, 1] = True
+    keep, _ = check_held(solid, held, loaded, grid)
+    assert keep.sum() == 2
+
+
 def test_nothing_acts_and_nothing_there():
     solid, held, loaded, grid = arrays((2, 2, 2))
     held[..., 0] = True

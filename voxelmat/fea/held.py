@@ -167,6 +167,23 @@ def find_pieces(solid: Bools, held: Bools, grid: VoxelGrid) -> list[Piece]:
     return _pieces(solid, held, np.zeros(held.shape[1:], dtype=bool), grid)[1]
 
 
+def _reaches(mask: Bools, nodes: Bools) -> bool:
+    return bool(np.any(touched_nodes(mask) & nodes))
+
+
+def _refuse(unheld: list[Piece], count: int) -> None:
+    """Raise for loaded pieces, of `count` in all, that can move."""
+    if not unheld:
+        return
+    worst = max(unheld, key=lambda p: p.voxels)
+    kind = "The part" if count == 1 else "A loaded piece of the part"
+    more = f" {len(unheld) - 1} more loaded pieces are not held either." if len(unheld) > 1 else ""
+    raise InputError(
+        f"{kind} is not held: {', '.join(worst.missing)}. It spans {worst.place}. "
+        f"Add or enlarge a support or a spring, or join it to a piece that is held.{more}"
+    )
+
+
 def check_held(
     solid: Bools, held: Bools, loaded: Bools, grid: VoxelGrid, *, everywhere: bool = False
 ) -> tuple[Bools, list[str]]:
@@ -202,23 +219,18 @@ def check_held(
     if everywhere:
         largest = max(range(len(pieces)), key=lambda n: pieces[n].voxels)
         pieces[largest] = replace(pieces[largest], loaded=True)
-    unheld = [p for p in pieces if p.missing and p.loaded]
-    if unheld:
-        worst = max(unheld, key=lambda p: p.voxels)
-        kind = "The part" if len(pieces) == 1 else "A loaded piece of the part"
-        more = (
-            f" {len(unheld) - 1} more loaded pieces are not held either." if len(unheld) > 1 else ""
-        )
-        raise InputError(
-            f"{kind} is not held: {', '.join(worst.missing)}. It spans {worst.place}. "
-            f"Add or enlarge a support or a spring, or join it to a piece that is held.{more}"
-        )
-    if not any(p.loaded for p in pieces):
+    _refuse([p for p in pieces if p.missing and p.loaded], len(pieces))
+    touched = touched_nodes(solid)
+    if not any(p.loaded for p in pieces) and not np.any(loaded & touched):
         raise InputError(
             "Nothing acts on the part: no force, no displacement other than 0 mm on material."
         )
     loose = [n for n, p in enumerate(pieces) if p.missing]
     keep = solid if not loose else solid & ~np.isin(labels, np.array(loose) + 1)
+    # A load where loose pieces meet at an edge belongs to none of them alone, and yet is lost.
+    lost = loaded & touched & ~touched_nodes(keep)
+    if lost.any():
+        _refuse([pieces[n] for n in loose if _reaches(labels == n + 1, lost)], len(pieces))
     cautions = []
     if loose:
         gone = sorted((pieces[n] for n in loose), key=lambda p: -p.voxels)
