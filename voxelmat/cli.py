@@ -87,6 +87,7 @@ def _parser() -> argparse.ArgumentParser:
         help="where the design's run left its part (default: out)",
     )
     design(command("report", "write the report of what a run left in its folder"))
+    command("warm", "compile all inner loops ahead, so that the first run need not")
     sub = command("materials", "show the resin library")
     sub.add_argument(
         "--file",
@@ -119,10 +120,11 @@ def _dispatch(options: argparse.Namespace) -> Answer:
         "preflight": commands.preflight,
         "report": commands.report,
         "materials": commands.materials,
+        "warm": commands.warm,
     }
     given = {k: v for k, v in vars(options).items() if k not in ("command", "json", "quiet")}
     with ConsoleMonitor(quiet=options.quiet) as monitor:
-        if options.command != "materials" and not _compiled():
+        if options.command not in ("materials", "warm") and not _compiled():
             monitor.say("First run here: the inner loops are compiled, once; about half a minute.")
         return calls[options.command](monitor=monitor, **given)
 

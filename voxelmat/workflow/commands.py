@@ -18,7 +18,7 @@ from voxelmat.model.result import StaticResult
 from voxelmat.monitor import Monitor
 from voxelmat.units import number
 
-__all__ = ["materials", "optimise", "preflight", "report", "run", "solve", "stack"]
+__all__ = ["materials", "optimise", "preflight", "report", "run", "solve", "stack", "warm"]
 
 Answer = tuple[int, dict[str, Any], str]
 
@@ -140,6 +140,16 @@ def preflight(*, stack: Path, design: Path | None, out: Path, monitor: Monitor) 
         lines.append("  nothing found")
     bad = any(f.severity == "stop" for f in findings)
     return (1 if bad else 0), data, "\n".join(lines)
+
+
+def warm(*, monitor: Monitor) -> Answer:
+    """Compile everything ahead and say what took how long."""
+    from voxelmat.workflow.warm import warm as compile_all
+    from voxelmat.workflow.warm import warm_lines
+
+    done = compile_all(monitor)
+    groups = [{"group": g.group, "seconds": g.seconds, "kernels_s": g.kernels} for g in done]
+    return 0, {"groups": groups}, "\n".join(warm_lines(done))
 
 
 _COLUMNS = (

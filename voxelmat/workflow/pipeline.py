@@ -15,6 +15,7 @@ from voxelmat.errors import Cancelled, InputError, ResourceError
 from voxelmat.fea.cases import solve_cases
 from voxelmat.fea.energy_error import energy_error
 from voxelmat.fea.refine import ErrorEstimate, error_estimate
+from voxelmat.fea.resources import check_fits, peak_bytes
 from voxelmat.io.atomic import explain_os_error, write_json
 from voxelmat.io.store import save_part
 from voxelmat.kernels.threads import threads
@@ -30,6 +31,7 @@ from voxelmat.printing.preflight import preflight
 from voxelmat.printing.readback import Stack, read_stack
 from voxelmat.printing.stack import write_stack
 from voxelmat.provenance import Provenance, utc_now
+from voxelmat.units import number
 from voxelmat.workflow.answer import as_dict, exit_code, joined_verdicts
 from voxelmat.workflow.build import Built, build
 from voxelmat.workflow.designing import optimised
@@ -171,6 +173,7 @@ class _Run:
         self.monitor = monitor
         self.clock = _Clock()
         self.started = utc_now()
+        self.expected = 0  # bytes of the largest solve, foretold
 
     def all(self, design: Design | Built | str | Path) -> RunResult:
         with self.clock.stage("part"):
@@ -218,6 +221,9 @@ class _Run:
     ) -> dict[str, StaticResult]:
         if stage not in self.stages:
             return {}
+        if built.load_cases:
+            needed = check_fits(part, built.load_cases[0])
+            self.expected = max(self.expected, needed)
         return solve_cases(
             part,
             built.load_cases,
@@ -272,6 +278,12 @@ class _Run:
                 answers = joined_verdicts(answers, verdicts(built.resolved, printed, again))
         cautions = [*built.cautions, *(c for r in results.values() for c in r.cautions)]
         notes = [*built.notes, *(found.notes if found is not None else ())]
+        peak = peak_bytes()
+        if self.expected and peak is not None:
+            notes.append(
+                f"A solve was expected to take {number(self.expected / 2**30)} GiB of memory; the "
+                f"peak of the whole run was {number(peak / 2**30)} GiB."
+            )
         data = RunData(
             name=built.design.name,
             part=part,
