@@ -2,6 +2,7 @@
 
 import io
 import struct
+import threading
 import zlib
 from fractions import Fraction
 
@@ -105,3 +106,30 @@ def test_every_changed_byte_is_noticed_or_harmless():
             assert np.array_equal(decode_bitmap(spoilt).bits, want)
         except FileFormatError:
             continue
+
+
+def test_threads_and_processes_write_the_same_bytes():
+    """The digest of a layer must not depend on who wrote it."""
+    rng = np.random.default_rng(1)
+    images = []
+    for _ in range(60):
+        bits = np.zeros((17, 5), dtype=np.uint8)
+        low, high = np.sort(rng.integers(0, 17, 2))
+        bits[low:high] = 255
+        bits[:, rng.integers(0, 5)] ^= np.uint8(rng.integers(0, 256))
+        images.append(bits)
+    wanted = [encode_bitmap(b, 40, (23622, 11811)) for b in images]
+    differ = []
+
+    def again():
+        for _ in range(30):
+            for bits, data in zip(images, wanted, strict=True):
+                if encode_bitmap(bits, 40, (23622, 11811)) != data:
+                    differ.append(bits)
+
+    crew = [threading.Thread(target=again) for _ in range(4)]
+    for worker in crew:
+        worker.start()
+    for worker in crew:
+        worker.join()
+    assert not differ

@@ -46,6 +46,17 @@ def _chunk(kind: bytes, data: bytes) -> bytes:
     return struct.pack(">I", len(data)) + kind + data + struct.pack(">I", code)
 
 
+def _deflate(raw: NDArray[np.uint8]) -> bytes:
+    """Compress; the same input gives the same bytes in any thread and process.
+
+    The one-shot ``isal_zlib.compress`` does not: it starts from memory that nobody has cleared,
+    so that its choice of matches, and with it the file's digest, changes from thread to thread.
+    """
+    packer = isal_zlib.compressobj(1)
+    packed: bytes = packer.compress(raw.data) + packer.flush()
+    return packed
+
+
 def encode_bitmap(bits: NDArray[np.uint8], width: int, pixels_per_metre: tuple[int, int]) -> bytes:
     """Encode packed rows as a one-bit greyscale PNG.
 
@@ -79,7 +90,7 @@ def encode_bitmap(bits: NDArray[np.uint8], width: int, pixels_per_metre: tuple[i
             _SIGNATURE,
             _chunk(b"IHDR", header),
             _chunk(b"pHYs", struct.pack(">IIB", *pixels_per_metre, 1)),
-            _chunk(b"IDAT", isal_zlib.compress(raw.data, 1)),
+            _chunk(b"IDAT", _deflate(raw)),
             _chunk(b"IEND", b""),
         )
     )
