@@ -278,7 +278,7 @@ def large() -> Rows:
 
 def arguments() -> argparse.Namespace:
     parser = argparse.ArgumentParser(description=__doc__.splitlines()[0])
-    parser.add_argument("--size", type=int, default=48, help="edge of the cube beside SciPy, pyamg")
+    parser.add_argument("--size", type=int, default=64, help="edge of the cube beside SciPy, pyamg")
     parser.add_argument("--hard", type=int, default=64, help="edge of the hard cases")
     parser.add_argument("--quick", action="store_true", help="small and rough; gates may miss")
     parser.add_argument("--large", action="store_true", help="also 64^3 to 256^3")
