@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from abc import ABC, abstractmethod
+
 import numpy as np
 from numpy.typing import NDArray
 
@@ -18,7 +20,7 @@ Single = NDArray[np.float32]
 _LANCZOS_STEPS, _LANCZOS_MARGIN = 14, 1.05
 
 
-class Level:
+class Level(ABC):
     """One grid: a product, its inverse nodal blocks and the vectors of the cycle."""
 
     def __init__(self, shape: tuple[int, ...]) -> None:
@@ -35,9 +37,9 @@ class Level:
         """Make the work vectors."""
         self.x, self.b, self.d, self.y = (np.zeros(self.shape, np.float32) for _ in range(4))
 
+    @abstractmethod
     def product(self, x: Single, y: Single) -> None:
         """Write A x to y."""
-        raise NotImplementedError
 
     @property
     def nbytes(self) -> int:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from abc import ABC, abstractmethod
 from typing import Any
 
 import numpy as np
@@ -74,7 +75,7 @@ class Conduction:
         return int(self.k.nbytes + more)
 
 
-class ScalarLevel:
+class ScalarLevel(ABC):
     """One grid: a product, its inverse diagonal and the vectors of the cycle.
 
     Fields are ``[1, nk, nj, ni]``, so that they fit the conjugate gradients of displacements.
@@ -93,9 +94,9 @@ class ScalarLevel:
         """Nodes of the grid."""
         return int(self.B.size)
 
+    @abstractmethod
     def product(self, x: Single, y: Single) -> None:
         """Write A x to y."""
-        raise NotImplementedError
 
     @property
     def nbytes(self) -> int:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from abc import ABC, abstractmethod
 from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import ClassVar
@@ -91,7 +92,7 @@ class LawValue:
 
 
 @dataclass(frozen=True, slots=True)
-class BlendLaw:
+class BlendLaw(ABC):
     """From volume fractions to moduli; subclasses say how.
 
     A law's value depends on nothing but what the blend holds: more resins with fraction 0, or
@@ -174,9 +175,9 @@ class BlendLaw:
         """Does the final value lie within the bounds?"""
         return True
 
+    @abstractmethod
     def _logs(self, mix: _Mixture) -> tuple[Logs, Mask]:
         """The law itself, and where it was not calibrated."""
-        raise NotImplementedError
 
 
 def _checked(
