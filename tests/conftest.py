@@ -5,8 +5,15 @@ from __future__ import annotations
 import os
 
 import pytest
+from hypothesis import settings
 
 STRICT = bool(os.environ.get("VOXELMAT_CI"))
+
+# The same examples each time, so that a run that passed passes again. To look for new ones:
+# pytest --hypothesis-profile=explore
+settings.register_profile("steady", derandomize=True)
+settings.register_profile("explore", derandomize=False)
+settings.load_profile("steady")
 
 
 def _harden(report) -> None:

@@ -353,8 +353,9 @@ class PatchRegion:
         corner = np.asarray(self.outline, dtype=float)
         for (u0, v0), (u1, v1) in zip(corner, np.roll(corner, -1, axis=0), strict=True):
             crosses = (v0 > v) != (v1 > v)
-            if v1 != v0:
-                odd ^= crosses & (u < u0 + (v - v0) * (u1 - u0) / (v1 - v0))
+            # Left of the edge, without a division that a nearly level edge would overflow.
+            side = (u - u0) * (v1 - v0) - (v - v0) * (u1 - u0)
+            odd ^= crosses & ((side < 0) if v1 > v0 else (side > 0))
         return odd
 
     def faces(self, part: Part) -> Faces:
