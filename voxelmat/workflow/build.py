@@ -118,7 +118,7 @@ def build(design: Design | str | Path, *, monitor: Monitor = SILENT) -> Built:
     )
 
 
-#: Bytes a voxel that making a part takes at its peak, and that no machine should be asked for.
+#: Bytes a voxel of the grid below which no part can be made; a rough floor of ours.
 _BYTES_A_VOXEL = 24
 _FALLBACK_BYTES = 16 * 2**30
 

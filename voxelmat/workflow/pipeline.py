@@ -15,7 +15,7 @@ from voxelmat.errors import Cancelled, InputError, ResourceError
 from voxelmat.fea.cases import solve_cases
 from voxelmat.fea.energy_error import energy_error
 from voxelmat.fea.refine import ErrorEstimate, error_estimate
-from voxelmat.fea.resources import check_fits, peak_bytes
+from voxelmat.fea.resources import check_fits, estimate_solve, peak_bytes
 from voxelmat.io.atomic import explain_os_error, write_json
 from voxelmat.io.store import save_part
 from voxelmat.kernels.threads import threads
@@ -222,8 +222,16 @@ class _Run:
         if stage not in self.stages:
             return {}
         if built.load_cases:
-            needed = check_fits(part, built.load_cases[0])
-            self.expected = max(self.expected, needed)
+            self.expected = max(self.expected, check_fits(part, built.load_cases[0]))
+            foretold = estimate_solve(part, built.load_cases[0])
+            few, many = foretold.seconds
+            self.monitor.report(
+                f"estimating, {stage}",
+                done=1,
+                total=1,
+                memory_GiB=foretold.bytes / 2**30,
+                seconds_a_case=f"{number(few, 2)} to {number(many, 2)}",
+            )
         return solve_cases(
             part,
             built.load_cases,
