@@ -29,6 +29,10 @@ class Finding:
         What to do.
     value, limit : float or None
     unit : str
+    part : str
+        Which part of a tray; empty where there is one part, or where no part is meant.
+    fix : str
+        Name of the repair that may be safe (`voxelmat.printing.fixes`); empty where none is.
     """
 
     severity: Severity
@@ -39,3 +43,5 @@ class Finding:
     value: float | None = None
     limit: float | None = None
     unit: str = ""
+    part: str = ""
+    fix: str = ""
