@@ -9,32 +9,32 @@ from numba import njit
 
 
 @njit(cache=True, nogil=True)
-def extend_labels(labels, keep, out):
-    """Copy labels; give a voxel whose label is not kept that of its nearest kept neighbour.
+def extend_plane(labels, at, keep, out):
+    """Copy one plane of labels; a label that is not kept becomes that of its nearest neighbour.
 
-    labels u16 [l, r, c], keep bool [palette], out u16 like labels. Looks at the 26 neighbours,
-    faces before edges before corners, low before high, so the result is unique; 0 where none.
+    labels u16 [l, r, c] the plane `at` and the planes next to it, keep bool [palette], out u16
+    [r, c]. Looks at the 26 neighbours, faces before edges before corners, low before high, so
+    the result is unique; 0 where none is kept.
     """
     nl, nr, nc = labels.shape
-    for i in range(nl):
-        for j in range(nr):
-            for k in range(nc):
-                if keep[labels[i, j, k]]:
-                    out[i, j, k] = labels[i, j, k]
-                    continue
-                found = 0
-                best = 4
-                for di in range(-1, 2):
-                    for dj in range(-1, 2):
-                        for dk in range(-1, 2):
-                            far = abs(di) + abs(dj) + abs(dk)
-                            a, b, c = i + di, j + dj, k + dk
-                            if far >= best or min(a, b, c) < 0 or a >= nl or b >= nr or c >= nc:
-                                continue
-                            if keep[labels[a, b, c]]:
-                                best = far
-                                found = labels[a, b, c]
-                out[i, j, k] = found
+    for j in range(nr):
+        for k in range(nc):
+            if keep[labels[at, j, k]]:
+                out[j, k] = labels[at, j, k]
+                continue
+            found = 0
+            best = 4
+            for di in range(-1, 2):
+                for dj in range(-1, 2):
+                    for dk in range(-1, 2):
+                        far = abs(di) + abs(dj) + abs(dk)
+                        a, b, c = at + di, j + dj, k + dk
+                        if far >= best or min(a, b, c) < 0 or a >= nl or b >= nr or c >= nc:
+                            continue
+                        if keep[labels[a, b, c]]:
+                            best = far
+                            found = labels[a, b, c]
+            out[j, k] = found
 
 
 @njit(cache=True, nogil=True)

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 from collections.abc import Iterator
-from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -11,14 +10,14 @@ from numpy.typing import NDArray
 from voxelmat.errors import InputError
 from voxelmat.kernels.halftone import (
     blend_planes,
-    extend_labels,
     halftone_layer,
     mark_interfaces,
 )
 from voxelmat.model.part import Part
 from voxelmat.printing.mask import SIDE, SKEW, mask_phase, thresholds
+from voxelmat.printing.planes import DesignPlanes, PlaneCursor
 from voxelmat.printing.raster import Raster
-from voxelmat.printing.support import column_support, outline_field
+from voxelmat.printing.support import fill_columns
 
 __all__ = ["INTERFACE_RULE", "INTERFACE_STEP", "Slicer", "used_resins"]
 
@@ -57,14 +56,6 @@ def _rounded(weight: NDArray[np.float32]) -> NDArray[np.float32]:
     return (weight >= np.float32(0.5)).astype(np.float32)
 
 
-def _at_least_two(array: NDArray[Any]) -> NDArray[Any]:
-    """Repeat an axis of one voxel, so that every site lies between two."""
-    for axis, size in enumerate(array.shape):
-        if size == 1:
-            array = np.repeat(array, 2, axis=axis)
-    return np.ascontiguousarray(array)
-
-
 class Slicer:
     """Everything that the layers of one part on one raster share; safe to use from threads.
 
@@ -99,15 +90,11 @@ class Slicer:
         self._start = np.add(mask_phase(seed), raster.image_offset)
 
     def _lay_out(self, part: Part, support: bool) -> None:
-        """Bring labels and outlines into image order and find the sites between voxels."""
+        """Say where the planes come from and find the sites between voxels."""
         raster = self.raster
-        outline = raster.to_image(outline_field(part))
-        outlines = [outline, column_support(outline)] if support else [outline]
-        labels = _at_least_two(raster.to_image(part.labels))
-        self._labels = np.empty_like(labels)
-        extend_labels(labels, part.printed_labels(), self._labels)
-        self._outlines = [_at_least_two(o) for o in outlines]
-        axes = [_axis(raster.image_index(part.grid, m), outline.shape[m]) for m in range(3)]
+        self.planes = DesignPlanes(part, raster, support=fill_columns if support else None)
+        true_shape = [part.grid.shape[a] for a, _ in raster.part_axes()]
+        axes = [_axis(raster.image_index(part.grid, m), true_shape[m]) for m in range(3)]
         (self._layer_at, self._layer_w, self._layers_on_grid) = axes[0]
         (self._row_at, self._row_w, rows) = axes[1]
         (self._column_at, self._column_w, columns) = axes[2]
@@ -116,10 +103,13 @@ class Slicer:
         weights = (self._layer_w, self._row_w, self._column_w)
         self._outline_w = tuple(_rounded(w) if stepped else w for w in weights)
 
-    def _plane(self, k: int) -> tuple[NDArray[np.float32], NDArray[np.float32]]:
-        """Outline fields and cumulative fractions of one design plane."""
-        outlines = np.stack([o[k] for o in self._outlines]).astype(np.float32)
-        return outlines, np.ascontiguousarray(self._cumulative[:, self._labels[k]])
+    def _plane(
+        self, cursor: PlaneCursor, k: int
+    ) -> tuple[NDArray[np.uint16], NDArray[np.float32], NDArray[np.float32]]:
+        """Labels, outline fields and cumulative fractions of one design plane."""
+        plane = cursor.plane(k)
+        smooth = np.ascontiguousarray(self._cumulative[:, plane.labels])
+        return plane.labels, plane.outlines.astype(np.float32), smooth
 
     def layers(self, first: int, last: int) -> Iterator[NDArray[np.uint8]]:
         """The packed bits of layers ``first`` to ``last - 1``.
@@ -130,11 +120,12 @@ class Slicer:
             A fresh array a layer; the first pixel of a row in the highest bit.
         """
         _, n_rows, n_columns = self.raster.image_shape
-        shape = self._labels.shape
-        outline = np.empty((len(self._outlines), *shape[1:]), dtype=np.float32)
+        shape = self.planes.shape
+        outline = np.empty((self.planes.n_fields, *shape[1:]), dtype=np.float32)
         smooth = np.empty((len(self._cumulative), *shape[1:]), dtype=np.float32)
         hard = np.empty((shape[1] - 1, shape[2] - 1), dtype=np.uint8)
-        at = -1
+        at, upper = -1, None
+        cursor = self.planes.cursor(*self._plane_range(first, last))
         for layer in range(first, last):
             bits = np.zeros((self.n_channels, n_rows, (n_columns + 7) // 8), dtype=np.uint8)
             if not self._layers_on_grid[0] <= layer < self._layers_on_grid[1]:
@@ -142,19 +133,20 @@ class Slicer:
                 continue
             k, w = int(self._layer_at[layer]), self._layer_w[layer]
             if k != at:
+                below = upper if k == at + 1 else None
                 at = k
-                lower, upper = self._plane(k), self._plane(k + 1)
+                lower, upper = below or self._plane(cursor, k), self._plane(cursor, k + 1)
                 mark_interfaces(
-                    self._labels[k],
-                    self._labels[k + 1],
+                    lower[0],
+                    upper[0],
                     self._fractions,
                     self._pure,
                     np.float32(INTERFACE_STEP),
                     hard,
                 )
-            blend_planes(lower[0], upper[0], self._outline_w[0][layer], outline)
-            blend_planes(lower[1], upper[1], w, smooth)
-            near = upper[1] if w >= np.float32(0.5) else lower[1]
+            blend_planes(lower[1], upper[1], self._outline_w[0][layer], outline)
+            blend_planes(lower[2], upper[2], w, smooth)
+            near = upper[2] if w >= np.float32(0.5) else lower[2]
             start = (self._start + np.array([layer, 0, 0])).astype(np.int64)
             halftone_layer(
                 outline, smooth, near, hard,
@@ -163,6 +155,12 @@ class Slicer:
                 self._window, self._mask, start, SKEW[0], SKEW[1], bits,
             )  # fmt: skip
             yield bits
+
+    def _plane_range(self, first: int, last: int) -> tuple[int, int]:
+        """First and last design plane that some layers lie between."""
+        if last <= first:
+            return (0, 0)
+        return (int(self._layer_at[first]), int(self._layer_at[last - 1]) + 2)
 
     def slabs(self, size: int = SIDE) -> list[tuple[int, int]]:
         """First and last layer of slabs of at most `size` layers."""

@@ -2,6 +2,9 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
+from typing import Protocol
+
 import numpy as np
 from numpy.typing import NDArray
 
@@ -9,12 +12,42 @@ from voxelmat.errors import InputError
 from voxelmat.model.part import Part
 from voxelmat.printing.place import Box
 
-__all__ = ["CLEARANCE", "column_support", "outline_box", "outline_field", "outline_source"]
+__all__ = [
+    "CLEARANCE",
+    "PlaneRow",
+    "SupportFill",
+    "column_support",
+    "fill_columns",
+    "outline_box",
+    "outline_field",
+    "outline_source",
+    "outline_values",
+]
 
 #: Support stays so far inside the overhang's outline, in 1/16 of the smallest voxel edge, so
 #: that the rounding of the distance draws no skin of support along upright walls.
 CLEARANCE = 2
 _HALF_VOXEL = 8  # in the same steps
+
+
+class PlaneRow(Protocol):
+    """Planes by number: an array ``[layer, row, column]`` or a `PlaneFile`."""
+
+    @property
+    def shape(self) -> tuple[int, ...]:
+        """Layers, rows, columns."""
+
+    def __getitem__(self, k: int) -> NDArray[np.int8]:
+        """Plane `k`."""
+
+    def __setitem__(self, k: int, plane: NDArray[np.int8]) -> None:
+        """Replace plane `k`."""
+
+
+#: Fills a support field from the outline: ``fill(outline, field)``. ``outline(k)`` gives int8
+#: plane k of the part (negative inside), with layers going up; the field is negative inside
+#: part or support. Planes may be asked for and set in any order; whole arrays may not.
+SupportFill = Callable[[Callable[[int], NDArray[np.int8]], PlaneRow], None]
 
 
 def outline_source(part: Part) -> str:
@@ -31,14 +64,22 @@ def outline_field(part: Part) -> NDArray[np.int8]:
 
     A voxel without a printed resin (empty, or owned by a bought-in body) never counts as inside.
     """
-    printed = part.printed_labels()[part.labels]
-    if part.distance is not None:
-        outside = np.maximum(part.distance, np.int8(_HALF_VOXEL))
-        return np.where(printed, part.distance, outside)
-    if part.occupancy is not None:
-        fill = np.where(printed, part.occupancy, 0).astype(np.int16)
-        return (127 - fill).astype(np.int8)
-    return np.where(printed, np.int8(-_HALF_VOXEL), np.int8(_HALF_VOXEL))
+    return outline_values(part.printed_labels(), part.labels, part.distance, part.occupancy)
+
+
+def outline_values(
+    printed: NDArray[np.bool_],
+    labels: NDArray[np.uint16],
+    distance: NDArray[np.int8] | None,
+    occupancy: NDArray[np.uint8] | None,
+) -> NDArray[np.int8]:
+    """`outline_field` on any block of voxels; `printed` tells it for each palette entry."""
+    laid = printed[labels]
+    if distance is not None:
+        return np.where(laid, distance, np.maximum(distance, np.int8(_HALF_VOXEL)))
+    if occupancy is not None:
+        return (127 - np.where(laid, occupancy, 0).astype(np.int16)).astype(np.int8)
+    return np.where(laid, np.int8(-_HALF_VOXEL), np.int8(_HALF_VOXEL))
 
 
 def outline_box(part: Part, field: NDArray[np.int8]) -> Box:
@@ -95,5 +136,23 @@ def column_support(outline: NDArray[np.int8]) -> NDArray[np.int8]:
     ndarray of int8, same shape
         Negative inside part or support.
     """
-    above = np.minimum.accumulate(outline[::-1], axis=0)[::-1].astype(np.int16)
-    return np.minimum(outline, np.minimum(above + CLEARANCE, 127)).astype(np.int8)
+    field = np.empty_like(outline)
+    fill_columns(outline.__getitem__, field)
+    return field
+
+
+def fill_columns(outline: Callable[[int], NDArray[np.int8]], field: PlaneRow) -> None:
+    """`column_support` plane by plane from the top, for designs of any size.
+
+    Parameters
+    ----------
+    outline : callable
+        Gives one plane of the part's outline field by its number, layers going up.
+    field : PlaneRow
+        Takes the planes of the field of part and support.
+    """
+    above: NDArray[np.int16] | None = None
+    for k in reversed(range(field.shape[0])):
+        own = outline(k).astype(np.int16)
+        above = own if above is None else np.minimum(above, own)
+        field[k] = np.minimum(own, np.minimum(above + CLEARANCE, 127)).astype(np.int8)
