@@ -56,6 +56,10 @@ def _rounded(weight: NDArray[np.float32]) -> NDArray[np.float32]:
     return (weight >= np.float32(0.5)).astype(np.float32)
 
 
+#: Of one design plane: labels, outline fields, cumulative fractions.
+_Fields = tuple[NDArray[np.uint16], NDArray[np.float32], NDArray[np.float32]]
+
+
 class Slicer:
     """Everything that the layers of one part on one raster share; safe to use from threads.
 
@@ -103,9 +107,7 @@ class Slicer:
         weights = (self._layer_w, self._row_w, self._column_w)
         self._outline_w = tuple(_rounded(w) if stepped else w for w in weights)
 
-    def _plane(
-        self, cursor: PlaneCursor, k: int
-    ) -> tuple[NDArray[np.uint16], NDArray[np.float32], NDArray[np.float32]]:
+    def _plane(self, cursor: PlaneCursor, k: int) -> _Fields:
         """Labels, outline fields and cumulative fractions of one design plane."""
         plane = cursor.plane(k)
         smooth = np.ascontiguousarray(self._cumulative[:, plane.labels])
@@ -124,7 +126,7 @@ class Slicer:
         outline = np.empty((self.planes.n_fields, *shape[1:]), dtype=np.float32)
         smooth = np.empty((len(self._cumulative), *shape[1:]), dtype=np.float32)
         hard = np.empty((shape[1] - 1, shape[2] - 1), dtype=np.uint8)
-        at, upper = -1, None
+        at, ready = -1, dict[int, _Fields]()
         cursor = self.planes.cursor(*self._plane_range(first, last))
         for layer in range(first, last):
             bits = np.zeros((self.n_channels, n_rows, (n_columns + 7) // 8), dtype=np.uint8)
@@ -133,9 +135,9 @@ class Slicer:
                 continue
             k, w = int(self._layer_at[layer]), self._layer_w[layer]
             if k != at:
-                below = upper if k == at + 1 else None
                 at = k
-                lower, upper = below or self._plane(cursor, k), self._plane(cursor, k + 1)
+                ready = {m: ready.get(m) or self._plane(cursor, m) for m in (k, k + 1)}
+                lower, upper = ready[k], ready[k + 1]
                 mark_interfaces(
                     lower[0],
                     upper[0],

@@ -2,7 +2,9 @@
 
 from __future__ import annotations
 
+import shutil
 import tempfile
+import weakref
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
@@ -168,8 +170,9 @@ class DesignPlanes:
             field = np.empty((n, rows, columns), np.int8)
         else:
             if path is None:
-                self._folder = tempfile.TemporaryDirectory(prefix="voxelmat-")
-                path = Path(self._folder.name) / "support.raw"
+                folder = tempfile.mkdtemp(prefix="voxelmat-")
+                weakref.finalize(self, shutil.rmtree, folder, ignore_errors=True)
+                path = Path(folder) / "support.raw"
             elif path.exists():
                 return PlaneFile(path, (n, rows, columns))
             field = PlaneFile(path, (n, rows, columns))
