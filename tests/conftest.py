@@ -1,8 +1,10 @@
-"""On the CI machine (VOXELMAT_CI=1) everything is installed, so a skip there is a failure."""
+"""The small design for all folders; on the CI machine (VOXELMAT_CI=1) a skip is a failure."""
 
 from __future__ import annotations
 
+import importlib.util
 import os
+from pathlib import Path
 
 import pytest
 from hypothesis import settings
@@ -14,6 +16,16 @@ STRICT = bool(os.environ.get("VOXELMAT_CI"))
 settings.register_profile("steady", derandomize=True)
 settings.register_profile("explore", derandomize=False)
 settings.load_profile("steady")
+
+
+@pytest.fixture
+def small_design(tmp_path):
+    """Path of the small design of `tests/small_design.py`."""
+    source = Path(__file__).with_name("small_design.py")
+    spec = importlib.util.spec_from_file_location("small_design", source)
+    module = importlib.util.module_from_spec(spec)
+    spec.loader.exec_module(module)
+    return module.write_small_design(tmp_path)
 
 
 def _harden(report) -> None:

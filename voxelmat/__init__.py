@@ -38,6 +38,7 @@ if TYPE_CHECKING:
     from voxelmat.printing.readback import read_stack
     from voxelmat.printing.stack import write_stack
     from voxelmat.topopt.optimise import optimise
+    from voxelmat.workbench.app import open_workbench
     from voxelmat.workflow.build import build
     from voxelmat.workflow.pipeline import run
     from voxelmat.workflow.report import write_report
@@ -66,6 +67,7 @@ _HOMES = {
     "load_library": "voxelmat.io.materials",
     "load_profile": "voxelmat.printing.profile",
     "modes": "voxelmat.fea.modal",
+    "open_workbench": "voxelmat.workbench.app",
     "optimise": "voxelmat.topopt.optimise",
     "preflight": "voxelmat.printing.preflight",
     "press": "voxelmat.fea.contact",
@@ -102,6 +104,7 @@ __all__ = [
     "load_library",
     "load_profile",
     "modes",
+    "open_workbench",
     "optimise",
     "preflight",
     "press",

@@ -32,7 +32,7 @@ from voxelmat.model.design import (
 from voxelmat.model.region import parse_side
 from voxelmat.provenance import file_digest
 
-__all__ = ["load_design", "parse_design"]
+__all__ = ["complete_design", "load_design", "parse_design"]
 
 Table = Mapping[str, Any]
 
@@ -59,9 +59,26 @@ def load_design(path: str | Path) -> Design:
         If the file is not TOML, or cannot be read.
     """
     file = Path(path)
-    data = read_toml(file)
+    return complete_design(read_toml(file), file)
+
+
+def complete_design(data: Table, file: Path) -> Design:
+    """Check the tables of a design and note the digest of every file that they name.
+
+    Parameters
+    ----------
+    data : mapping
+        As `tomllib` gives it.
+    file : Path
+        Where they came from or will be saved; files are looked for beside it.
+
+    Raises
+    ------
+    InputError
+        As `load_design`.
+    """
     design = parse_design(data, path=file)
-    inputs = {file.name: file_digest(file)}
+    inputs = {file.name: file_digest(file)} if file.is_file() else {}
     for name, key in _files(design):
         where = design.file(name)
         if not where.is_file():

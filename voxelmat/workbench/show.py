@@ -19,7 +19,7 @@ from voxelmat.workbench.render import SIZE
 from voxelmat.workbench.shown import Shown, of_part, of_result
 from voxelmat.workbench.sliceview import SliceView
 from voxelmat.workbench.spaceview import SpaceView
-from voxelmat.workbench.theme import style
+from voxelmat.workbench.theme import notice
 from voxelmat.workflow.depth import draw_faces
 
 __all__ = ["View", "register", "show"]
@@ -56,7 +56,7 @@ class View:
             self._still = _drawn_without_gl(shown)
             parts.append(_still_picture(self._still, shown.title))
             parts.append(
-                _words(f"The picture above stands still and is not deformed. {probe.reason}")
+                notice(f"The picture above stands still and is not deformed. {probe.reason}")
             )
         parts.append(self.slices)
         parts.append(ipywidgets.HTML(shown.html))
@@ -165,7 +165,3 @@ def _still_picture(jpeg: bytes, title: str) -> ipywidgets.Widget:
     return ipywidgets.HTML(
         f'<img src="data:image/jpeg;base64,{data}" alt="Picture of {escape(title)}, cut open">'
     )
-
-
-def _words(text: str) -> ipywidgets.Widget:
-    return ipywidgets.HTML(f"<style>{style()}</style><p class='vm'>{escape(text)}</p>")

@@ -61,6 +61,22 @@ class SliceView(anywidget.AnyWidget):
         self.observe(self._changed, ["axis", "index", "field"])
         self._push()
 
+    def show(self, shown: Shown) -> None:
+        """Draw something else from now on, at the same place where it has one."""
+        with self._lock:
+            self._shown = shown
+            self._ready = False
+            names = [f.name for f in shown.fields]
+            with self.hold_sync():
+                self.axes, self.fields = list(shown.axes), names
+                self.label = f"Slice of {shown.title}"
+                if self.axis not in shown.axes:
+                    self.axis = shown.best_axis
+                if self.field not in names:
+                    self.field = names[0]
+            self._ready = True
+            self._push()
+
     @traitlets.validate("axis")  # type: ignore[untyped-decorator]
     def _known_axis(self, proposal: dict[str, Any]) -> str:
         if proposal["value"] not in self._shown.axes:
@@ -71,7 +87,9 @@ class SliceView(anywidget.AnyWidget):
         # Callbacks come beside cells and on other threads; what goes wrong in one is lost
         # unless it is put on the screen.
         try:
-            if change["name"] == "axis" and self._ready:
+            if not self._ready:
+                return
+            if change["name"] == "axis":
                 with self.hold_trait_notifications():
                     self.index = self._shown.counts[self.axis] // 2
             self._push()

@@ -57,6 +57,14 @@ class SpaceView(anywidget.AnyWidget):
             self._scene.swap(*self._shown.surface(axis, self.cut))
             self._push()
 
+    def show(self, shown: Shown) -> None:
+        """Draw something else from now on, cut and seen as before."""
+        with self._lock:
+            self._shown = shown
+            self._scene.note = shown.note
+            self.label, self.legend = f"3-D view of {shown.title}", shown.legend
+            self.cut_away(self.cut, self.cut_axis)
+
     def look_from(self, azimuth: float, elevation: float) -> None:
         """Stand at an azimuth round z from x+ and an elevation, degrees."""
         with self._lock:

@@ -2,9 +2,12 @@
 
 from __future__ import annotations
 
+from html import escape
 from importlib.resources import files
 
-__all__ = ["script", "style"]
+import ipywidgets
+
+__all__ = ["notice", "script", "style"]
 
 
 def _text(name: str) -> str:
@@ -19,3 +22,8 @@ def script(name: str) -> str:
 def style() -> str:
     """The style sheet of all views."""
     return _text("views.css")
+
+
+def notice(text: str) -> ipywidgets.Widget:
+    """A paragraph in the look of the views."""
+    return ipywidgets.HTML(f"<style>{style()}</style><p class='vm'>{escape(text)}</p>")

@@ -1,0 +1,18 @@
+"""The sections of the workbench, in the order of their tabs."""
+
+from __future__ import annotations
+
+from typing import TYPE_CHECKING
+
+from voxelmat.workbench.design_section import DesignSection
+from voxelmat.workbench.section import Section
+
+if TYPE_CHECKING:
+    from voxelmat.workbench.bench import Workbench
+
+__all__ = ["sections_of"]
+
+
+def sections_of(bench: Workbench) -> list[Section]:
+    """One of each."""
+    return [DesignSection(bench)]
