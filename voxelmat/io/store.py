@@ -14,10 +14,10 @@ from voxelmat.io.atomic import aside
 from voxelmat.model.blend import Blend
 from voxelmat.model.grid import VoxelGrid
 from voxelmat.model.laws import BlendLaw
-from voxelmat.model.material import Constant, Material
+from voxelmat.model.material import Constant, Material, TemperatureFactor
 from voxelmat.model.part import Part
 
-__all__ = ["load_part", "save_part"]
+__all__ = ["load_part", "material_of", "save_part"]
 
 _FORMAT = 1
 
@@ -50,7 +50,8 @@ def save_part(part: Part, path: Path) -> None:
         np.savez_compressed(handle, head=np.array(json.dumps(head)), **arrays)
 
 
-def _material(record: dict[str, Any]) -> Material:
+def material_of(record: dict[str, Any]) -> Material:
+    """A resin from its plain data."""
     fields = dict(record)
     for key, value in record.items():
         if isinstance(value, dict):
@@ -97,7 +98,7 @@ def load_part(path: Path, law: BlendLaw) -> Part:
             }
             part = Part(
                 grid=grid,
-                resins=tuple(_material(m) for m in head["resins"]),
+                resins=tuple(material_of(m) for m in head["resins"]),
                 palette=tuple(Blend(tuple((n, f) for n, f in b)) for b in head["palette"]),
                 labels=data["labels"],
                 distance=data.get("distance"),
