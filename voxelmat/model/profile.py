@@ -12,6 +12,7 @@ from fractions import Fraction
 from typing import Any, NoReturn
 
 from voxelmat.errors import InputError
+from voxelmat.model.support_figures import DRAWN_SUPPORT, SUPPORT_POLICIES, SupportFigures
 
 __all__ = [
     "ORIGIN_CORNERS",
@@ -28,8 +29,6 @@ ORIGIN_CORNERS = ("front left", "front right", "back left", "back right")
 #: The tray axis that the pixels of one image row follow, away from the origin corner.
 ROW_DIRECTIONS = ("x", "y")
 POLARITIES = ("white is material", "black is material")
-#: "columns" is drawn by us; "machine" leaves it to the printer; "none" prints none.
-SUPPORT_POLICIES = ("columns", "machine", "none")
 
 _NAME = re.compile(r"^[A-Za-z0-9][A-Za-z0-9_-]{0,31}$")
 _INCH_UM = Fraction(25400)
@@ -84,6 +83,8 @@ class PrintProfile:
         The channel of `channels` that lays support; ``""`` where there is none.
     support_policy : str
         Default of `SUPPORT_POLICIES`.
+    support_sizes : SupportFigures
+        Sizes of the support that we draw.
     origin_corner, row_direction, polarity : str
         How images lie on the tray; see `ORIGIN_CORNERS`, `ROW_DIRECTIONS`, `POLARITIES`.
     minimum : MinimumSizes
@@ -107,6 +108,7 @@ class PrintProfile:
     edge_margin: float = 5.0
     support_channel: str = ""
     support_policy: str = "none"
+    support_sizes: SupportFigures = field(default_factory=SupportFigures)
     origin_corner: str = "front left"
     row_direction: str = "x"
     polarity: str = "white is material"
@@ -155,8 +157,9 @@ class PrintProfile:
             _refuse(
                 "support.channel", f"one of {list(self.channels)}; got {self.support_channel!r}"
             )
-        if self.support_policy == "columns" and not self.support_channel:
-            _refuse("support.channel", "a channel, because the policy 'columns' lays support")
+        if self.support_policy in DRAWN_SUPPORT and not self.support_channel:
+            wanted = f"a channel, because the policy '{self.support_policy}' lays support"
+            _refuse("support.channel", wanted)
 
     def _check_figures(self) -> None:
         for key, value in dataclasses.asdict(self.minimum).items():
@@ -240,7 +243,11 @@ class PrintProfile:
                 "polarity": self.polarity,
             },
             "channels": dict(self.channels),
-            "support": {"channel": self.support_channel, "policy": self.support_policy},
+            "support": {
+                "channel": self.support_channel,
+                "policy": self.support_policy,
+                **self.support_sizes.as_dict(),
+            },
             "minimum_mm": dataclasses.asdict(self.minimum),
             "process": {
                 "droplet_pl": self.process.droplet_pl,
@@ -327,7 +334,7 @@ def _parsed(data: Mapping[str, Any]) -> dict[str, Any]:
     tray = _table(data, "tray", ("size_mm", "edge_margin_mm", *layout))
     if "size_mm" not in tray:
         raise InputError("This key is missing.", key="tray.size_mm")
-    support = _table(data, "support", ("channel", "policy"))
+    support = _table(data, "support", ("channel", "policy", *SupportFigures.keys()))
     sizes = _table(data, "minimum_mm", [f.name for f in dataclasses.fields(MinimumSizes)])
     process = _table(data, "process", [f.name for f in dataclasses.fields(ProcessFigures)])
     for key in ("swath_s", "layer_s"):
@@ -347,7 +354,8 @@ def _parsed(data: Mapping[str, Any]) -> dict[str, Any]:
         "layer": _pitch(pitch, "layer"),
         **{renamed.get(k, k): v for k, v in tray.items()},
         "channels": dict(channels),
-        **{f"support_{k}": str(v) for k, v in support.items()},
+        **{f"support_{k}": str(v) for k, v in support.items() if k in ("channel", "policy")},
+        "support_sizes": SupportFigures.from_dict(support),
         "minimum": MinimumSizes(**{k: float(v) for k, v in sizes.items()}),
         "process": ProcessFigures(**process),
     }
