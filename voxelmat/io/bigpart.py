@@ -48,6 +48,9 @@ FORMAT = "voxelmat-part-store"
 KINDS = ("zarr", "maps")
 #: Arrays of a part and their types.
 ARRAYS: Mapping[str, type] = {"labels": np.uint16, "distance": np.int8, "occupancy": np.uint8}
+_WRONG_HEAD = (
+    VoxelmatError, LookupError, TypeError, ValueError, ArithmeticError, AttributeError
+)  # fmt: skip
 _LARGEST_HEAD = 64 << 20  # bytes
 
 

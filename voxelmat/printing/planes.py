@@ -14,8 +14,8 @@ from numpy.typing import NDArray
 
 from voxelmat.errors import InputError
 from voxelmat.io.atomic import explain_os_error
+from voxelmat.io.bigpart import AnyPart
 from voxelmat.kernels.halftone import extend_plane
-from voxelmat.model.part import Part
 from voxelmat.printing.raster import Raster
 from voxelmat.printing.support import PlaneRow, SupportFill, outline_values
 
@@ -100,7 +100,7 @@ class DesignPlanes:
 
     Parameters
     ----------
-    part : Part
+    part : Part or StoredPart
         Its arrays are read plane by plane or block by block, never copied whole.
     raster : Raster
     support : SupportFill, optional
@@ -118,7 +118,7 @@ class DesignPlanes:
 
     def __init__(
         self,
-        part: Part,
+        part: AnyPart,
         raster: Raster,
         *,
         support: SupportFill | None = None,

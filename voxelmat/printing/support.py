@@ -9,6 +9,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from voxelmat.errors import InputError
+from voxelmat.io.bigpart import AnyPart, z_slabs
 from voxelmat.model.part import Part
 from voxelmat.printing.place import Box
 
@@ -50,7 +51,7 @@ class PlaneRow(Protocol):
 SupportFill = Callable[[Callable[[int], NDArray[np.int8]], PlaneRow], None]
 
 
-def outline_source(part: Part) -> str:
+def outline_source(part: AnyPart) -> str:
     """What the outline is drawn from, in words for the manifest."""
     if part.distance is not None:
         return "signed distance, trilinear"
@@ -82,11 +83,17 @@ def outline_values(
     return np.where(laid, np.int8(-_HALF_VOXEL), np.int8(_HALF_VOXEL))
 
 
-def outline_box(part: Part, field: NDArray[np.int8]) -> Box:
+def outline_box(part: AnyPart, field: NDArray[np.int8] | None = None) -> Box:
     """Low and high corner of the outline, part coordinates, mm.
 
     Exact for the outline as it is drawn: along one axis a linear interpolant takes its
     extremes in the columns of voxel centres.
+
+    Parameters
+    ----------
+    part : Part or StoredPart
+    field : ndarray of int8, optional
+        Its outline field; read from the part slab by slab if left out.
 
     Raises
     ------
@@ -94,27 +101,51 @@ def outline_box(part: Part, field: NDArray[np.int8]) -> Box:
         If nothing of the part would be printed.
     """
     stepped = part.distance is None and part.occupancy is None
+    inside = [np.zeros(n, np.bool_) for n in part.grid.shape]
+    for a, b in z_slabs(part):
+        negative = _outline_block(part, field, (slice(None), slice(None), slice(a, b))) < 0
+        inside[0] |= negative.any(axis=(1, 2))
+        inside[1] |= negative.any(axis=(0, 2))
+        inside[2][a:b] = negative.any(axis=(0, 1))
+    if not inside[0].any():
+        raise InputError(
+            f"Part '{part.name}' has nothing to print: no voxel with a printed resin lies "
+            "inside its outline."
+        )
     low, high = [], []
-    for axis in range(3):
-        lines = np.moveaxis(field, axis, 0)
-        inside = np.asarray((lines < 0).any(axis=(1, 2)))
-        if not inside.any():
-            raise InputError(
-                f"Part '{part.name}' has nothing to print: no voxel with a printed resin lies "
-                "inside its outline."
-            )
-        first, last = int(inside.argmax()), len(inside) - 1 - int(inside[::-1].argmax())
+    for axis, rows in enumerate(inside):
+        first, last = int(rows.argmax()), len(rows) - 1 - int(rows[::-1].argmax())
         origin, spacing = part.grid.origin[axis], part.grid.spacing[axis]
-        start = first - 0.5 if stepped or first == 0 else first - _reach(lines, first, -1)
-        end = last + 0.5 if stepped or last == len(inside) - 1 else last + _reach(lines, last, 1)
+        start, end = first - 0.5, last + 0.5
+        if not stepped and first > 0:
+            start = first - _reach(part, field, axis, first, -1)
+        if not stepped and last < len(rows) - 1:
+            end = last + _reach(part, field, axis, last, 1)
         low.append(origin + (start + 0.5) * spacing)
         high.append(origin + (end + 0.5) * spacing)
     return ((low[0], low[1], low[2]), (high[0], high[1], high[2]))
 
 
-def _reach(lines: NDArray[np.int8], at: int, step: int) -> float:
-    """How far, in voxels, the outline reaches past the centres of plane `at`."""
-    inner, outer = lines[at].astype(np.float64), lines[at + step].astype(np.float64)
+def _outline_block(
+    part: AnyPart, field: NDArray[np.int8] | None, index: tuple[slice, slice, slice]
+) -> NDArray[np.int8]:
+    """A block of the outline field, from `field` or else from the part's arrays."""
+    if field is not None:
+        return field[index]
+    distance = None if part.distance is None else part.distance[index]
+    occupancy = None if part.occupancy is None else part.occupancy[index]
+    return outline_values(part.printed_labels(), part.labels[index], distance, occupancy)
+
+
+def _reach(part: AnyPart, field: NDArray[np.int8] | None, axis: int, at: int, step: int) -> float:
+    """How far, in voxels, the outline reaches past the centres of plane `at` of an axis."""
+    values = []
+    for k in (at, at + step):
+        index = [slice(None)] * 3
+        index[axis] = slice(k, k + 1)
+        block = _outline_block(part, field, (index[0], index[1], index[2]))
+        values.append(block.astype(np.float64).ravel())
+    inner, outer = values
     inner, outer = inner[inner < 0], outer[inner < 0]
     return float((inner / (inner - outer)).max())
 
