@@ -54,7 +54,10 @@ def material_of(record: dict[str, Any]) -> Material:
     """A resin from its plain data."""
     fields = dict(record)
     for key, value in record.items():
-        if isinstance(value, dict):
+        if isinstance(value, dict) and "factor" in value:
+            course = {k: tuple(v) if isinstance(v, list) else v for k, v in value.items()}
+            fields[key] = TemperatureFactor(**course)
+        elif isinstance(value, dict):
             fields[key] = Constant(**value)
         elif isinstance(value, list):
             fields[key] = tuple(value)
