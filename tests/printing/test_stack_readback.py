@@ -61,7 +61,7 @@ def raster(**values):
         channel(role="both"),
         lambda m: m["channels"][0]["sha256"].pop(),
         lambda m: m["channels"].clear(),
-        lambda m: m.update(format_number=2),
+        lambda m: m.update(format_number=3),
         lambda m: m.update(surprise=1),
         lambda m: m.pop("profile"),
         raster(pitch_mm=["0", "1", "1"]),

@@ -6,14 +6,14 @@ import hashlib
 import json
 import shutil
 import threading
-from collections.abc import Iterator, Sequence
+from collections.abc import Callable, Iterator, Sequence
 from contextlib import contextmanager
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
 from voxelmat.errors import FileFormatError, ResourceError
-from voxelmat.printing.manifest import FORMAT, MANIFEST, layer_name, read_manifest
+from voxelmat.printing.manifest import FORMAT, MANIFEST, read_manifest
 
 __all__ = ["JOURNAL", "Journal", "LayerRecord", "locked", "publish", "refuse_foreign", "retired"]
 
@@ -24,7 +24,7 @@ _FRESH = f"{JOURNAL}.new"
 
 @dataclass(frozen=True, slots=True)
 class LayerRecord:
-    """One finished layer: SHA-256 and set sites of each channel's file."""
+    """One finished layer: SHA-256 of each file, set sites of each channel."""
 
     layer: int
     sha256: tuple[str, ...]
@@ -62,15 +62,15 @@ def _is_ours(folder: Path) -> bool:
             first = json.loads((folder / JOURNAL).read_text("utf-8").splitlines()[0])
             if first["format"] != FORMAT:
                 return False
-            channels = set(first["channels"])
+            folders = set(first["folders"])
         else:
-            channels = {c["name"] for c in read_manifest(folder)["channels"]}
+            folders = {c["name"] for c in read_manifest(folder)["channels"]}
     except (FileFormatError, OSError, ValueError, LookupError, TypeError):
         return False
     for entry in folder.iterdir():
         if entry.name in (MANIFEST, JOURNAL, _FRESH):
             continue
-        if entry.name not in channels or not entry.is_dir() or entry.is_symlink():
+        if entry.name not in folders or not entry.is_dir() or entry.is_symlink():
             return False
         if any(not (f.suffix == ".png" and f.stem.isdigit()) for f in entry.iterdir()):
             return False
@@ -122,18 +122,29 @@ class Journal:
         Created where it is missing; emptied where it belongs to another job.
     job : str
         Digest of everything that decides the bits.
-    channels : sequence of str
+    folders : sequence of str
+        Folders that hold the files.
+    names : callable
+        Files of a layer, as paths inside the folder.
     resume : bool
         Keep the layers of an earlier run of the same job whose files still have their digest.
     """
 
-    def __init__(self, partial: Path, job: str, channels: Sequence[str], *, resume: bool) -> None:
+    def __init__(
+        self,
+        partial: Path,
+        job: str,
+        folders: Sequence[str],
+        names: Callable[[int], Sequence[str]],
+        *,
+        resume: bool,
+    ) -> None:
         refuse_foreign(partial)
         self.partial = partial
-        self._channels = tuple(channels)
+        self._names = names
         self._lock = threading.Lock()
         self.done: dict[int, LayerRecord] = {}
-        head = {"format": FORMAT, "job": job, "channels": list(channels)}
+        head = {"format": FORMAT, "job": job, "folders": list(folders)}
         if resume:
             self.done = self._surviving(head)
         if not self.done:
@@ -144,8 +155,8 @@ class Journal:
         fresh.write_text("".join(json.dumps(line) + "\n" for line in lines), encoding="utf-8")
         fresh.replace(partial / JOURNAL)
         (partial / MANIFEST).unlink(missing_ok=True)
-        for channel in channels:
-            (partial / channel).mkdir(exist_ok=True)
+        for name in folders:
+            (partial / name).mkdir(exist_ok=True)
         self._handle = (partial / JOURNAL).open("a", encoding="utf-8")
 
     def _surviving(self, head: dict[str, Any]) -> dict[int, LayerRecord]:
@@ -168,11 +179,12 @@ class Journal:
         return found
 
     def _intact(self, record: LayerRecord) -> bool:
-        if not len(record.sha256) == len(record.sites) == len(self._channels):
+        names = self._names(record.layer)
+        if len(record.sha256) != len(names):
             return False
-        for channel, wanted in zip(self._channels, record.sha256, strict=True):
+        for name, wanted in zip(names, record.sha256, strict=True):
             try:
-                data = (self.partial / channel / layer_name(record.layer)).read_bytes()
+                data = (self.partial / name).read_bytes()
             except OSError:
                 return False
             if hashlib.sha256(data).hexdigest() != wanted:

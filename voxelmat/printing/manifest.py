@@ -15,6 +15,7 @@ from voxelmat.printing.raster import Raster
 
 __all__ = [
     "FORMAT",
+    "FORMAT_NUMBER",
     "MANIFEST",
     "image_entry",
     "layer_name",
@@ -24,6 +25,7 @@ __all__ = [
 ]
 
 FORMAT = "voxelmat-stack"
+FORMAT_NUMBER = 2
 MANIFEST = "manifest.json"
 _LARGEST = 256 << 20  # bytes; a full tray of 64 channels stays below
 _MOST_PIXELS = 1 << 32  # of one image; the largest trays have some 10^8
@@ -60,6 +62,9 @@ def _check(data: Any, name: str) -> None:
     """Against the schema, then what a schema cannot say."""
     import jsonschema
 
+    if isinstance(data, dict) and data.get("format_number") == 1:
+        _upgrade(data, name)
+
     validator = jsonschema.Draft202012Validator(manifest_schema())
     error = next(iter(validator.iter_errors(data)), None)
     if error is not None:
@@ -72,6 +77,13 @@ def _check(data: Any, name: str) -> None:
         raise FileFormatError(f"{name}: the raster cannot be: {problem}") from None
     if data["image"] != image_entry(raster, data["image"]["polarity"]):
         raise FileFormatError(f"{name}: 'image' does not agree with 'raster'.")
+    for part in data["parts"]:
+        if not raster.holds(_part_raster(part, name)):
+            raise FileFormatError(
+                f"{name}: part '{part['name']}' does not lie inside the images' window."
+            )
+    if len({p["name"] for p in data["parts"]}) != len(data["parts"]):
+        raise FileFormatError(f"{name}: two parts share one name.")
     if data["image"]["width"] * data["image"]["height"] > _MOST_PIXELS:
         raise FileFormatError(f"{name}: no printer has images of that size: {data['image']}.")
     channels = data["channels"]
@@ -86,6 +98,25 @@ def _check(data: Any, name: str) -> None:
         raise FileFormatError(f"{name}: two channels share one folder.")
     if sum(c["role"] == "support" for c in channels) > 1:
         raise FileFormatError(f"{name}: more than one channel lays support.")
+
+
+def _part_raster(part: dict[str, Any], name: str) -> Raster:
+    try:
+        return Raster.from_dict(part["raster"])
+    except (InputError, ValueError, TypeError) as problem:
+        raise FileFormatError(
+            f"{name}: the raster of part '{part['name']}' cannot be: {problem}"
+        ) from None
+
+
+def _upgrade(data: dict[str, Any], name: str) -> None:
+    """Turn a manifest of format 1, which knew one part, into the present one, in place."""
+    part = data.pop("part", None)
+    if not isinstance(part, dict) or "parts" in data:
+        raise FileFormatError(f"{name} is not a stack manifest: it has no 'part'.")
+    data["parts"] = [{**part, "kind": "part", "raster": data.get("raster")}]
+    data["notes"] = {}
+    data["format_number"] = FORMAT_NUMBER
 
 
 def read_manifest(folder: Path) -> dict[str, Any]:

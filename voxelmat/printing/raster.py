@@ -94,6 +94,20 @@ class Raster:
         (_, _), (row, _), (column, _) = self.image_axes
         return (round(1000 / self.pitch[column]), round(1000 / self.pitch[row]))
 
+    def holds(self, other: Raster) -> bool:
+        """True where `other` is a window of the same raster that lies inside this one."""
+        return (
+            (self.pitch, self.tray_sites) == (other.pitch, other.tray_sites)
+            and self.origin_corner == other.origin_corner
+            and self.row_direction == other.row_direction
+            and all(
+                a <= b and b + m <= a + n
+                for a, n, b, m in zip(
+                    self.offset, self.shape, other.offset, other.shape, strict=True
+                )
+            )
+        )
+
     def from_image(self, image: NDArray[Any]) -> NDArray[Any]:
         """One layer ``[row, column]`` as a view ``[ix, iy]`` along tray x and y."""
         _, (_, row_sign), (_, column_sign) = self.image_axes
@@ -158,6 +172,14 @@ class Raster:
         for (axis, sign), at in zip(self.image_axes, (layer, row, column), strict=True):
             site[axis] = at if sign > 0 else self.shape[axis] - 1 - at
         return self.site_to_part((site[0], site[1], site[2]))
+
+    def pixel_to_tray(self, layer: int, row: int, column: int) -> tuple[float, float, float]:
+        """The centre of a pixel of the images, in tray coordinates, mm."""
+        place = [0.0, 0.0, 0.0]
+        for (axis, sign), at in zip(self.image_axes, (layer, row, column), strict=True):
+            site = at if sign > 0 else self.shape[axis] - 1 - at
+            place[axis] = (site + self.offset[axis] + 0.5) * float(self.pitch[axis])
+        return (place[0], place[1], place[2])
 
     @property
     def site_volume(self) -> Fraction:

@@ -18,7 +18,7 @@ from voxelmat.model.profile import PrintProfile
 from voxelmat.printing.manifest import layer_name, read_manifest
 from voxelmat.printing.raster import Raster
 
-__all__ = ["Channel", "Stack", "read_stack"]
+__all__ = ["Channel", "Stack", "StackPart", "read_stack"]
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -51,6 +51,49 @@ class Channel:
     sha256: tuple[str, ...]
 
 
+@dataclass(frozen=True, slots=True, kw_only=True)
+class StackPart:
+    """One part of a stack.
+
+    Attributes
+    ----------
+    name, kind, digest : str
+    grid : VoxelGrid
+        The design grid that it was made from.
+    raster : Raster
+        Its own window on the tray, and the transform into it.
+    crop : tuple of slice
+        Layers, rows and columns of the stack's images that hold it.
+    """
+
+    name: str
+    kind: str
+    digest: str
+    grid: VoxelGrid
+    raster: Raster
+    crop: tuple[slice, slice, slice]
+
+
+def _stack_part(entry: dict[str, Any], window: Raster) -> StackPart:
+    g = entry["grid"]
+    raster = Raster.from_dict(entry["raster"])
+    start = [a - b for a, b in zip(raster.image_offset, window.image_offset, strict=True)]
+    layers, rows, columns = (
+        slice(a, a + n) for a, n in zip(start, raster.image_shape, strict=True)
+    )
+    grid = VoxelGrid(
+        shape=tuple(g["shape"]), spacing=tuple(g["spacing_mm"]), origin=tuple(g["origin_mm"])
+    )
+    return StackPart(
+        name=entry["name"],
+        kind=entry["kind"],
+        digest=entry["digest"],
+        grid=grid,
+        raster=raster,
+        crop=(layers, rows, columns),
+    )
+
+
 class Stack:
     """A stack of one-bit images on disk; layers are read when asked for.
 
@@ -69,6 +112,8 @@ class Stack:
             Channel(**{**c, "sha256": tuple(c["sha256"])}) for c in manifest["channels"]
         )
         self._inverted = manifest["image"]["polarity"] == "black is material"
+
+        self.parts = tuple(_stack_part(p, self.raster) for p in manifest["parts"])
 
     # ------------------------------------------------------------------ what it is
     @property
@@ -104,16 +149,62 @@ class Stack:
 
     @property
     def grid(self) -> VoxelGrid:
-        """The design grid that it was made from."""
-        g = self.manifest["part"]["grid"]
-        return VoxelGrid(
-            shape=tuple(g["shape"]), spacing=tuple(g["spacing_mm"]), origin=tuple(g["origin_mm"])
-        )
+        """The design grid that its first part was made from."""
+        return self.parts[0].grid
 
     @property
     def volumes_mm3(self) -> dict[str, float]:
-        """Volume of each resin, support included, mm^3."""
-        return {c.resin: c.volume_mm3 for c in self.channels}
+        """Volume of each resin over all its channels, support included, mm^3."""
+        total: dict[str, float] = {}
+        for channel in self.channels:
+            total[channel.resin] = total.get(channel.resin, 0.0) + channel.volume_mm3
+        return total
+
+    @property
+    def designed_mm3(self) -> dict[str, float]:
+        """Volume of each resin in the designs, over all parts, mm^3; support is not in it."""
+        total: dict[str, float] = {}
+        for channel in self.channels:
+            if channel.designed_mm3 is not None:
+                total[channel.resin] = total.get(channel.resin, 0.0) + channel.designed_mm3
+        return total
+
+    # ------------------------------------------------------------------ parts
+    def part(self, which: int | str) -> StackPart:
+        """A part by its number or name.
+
+        Raises
+        ------
+        InputError
+            If there is none.
+        """
+        for number, part in enumerate(self.parts):
+            if which in (number, part.name):
+                return part
+        names = ", ".join(repr(p.name) for p in self.parts)
+        raise InputError(f"The stack holds no part {which!r}; it holds {names}.", key="part")
+
+    def crop(self, which: int | str) -> tuple[slice, slice, slice]:
+        """Layers, rows and columns of the images that hold a part."""
+        return self.part(which).crop
+
+    def locate(self, layer: int, row: int, column: int) -> tuple[str, tuple[float, float, float]]:
+        """The part at a pixel, and where in it.
+
+        Returns
+        -------
+        str
+            Name of the part in whose window the pixel lies; ``""`` where there is none.
+        tuple of float
+            The centre of the site in the coordinates of that part, mm; in those of the tray
+            where there is none.
+        """
+        at = (layer, row, column)
+        for part in self.parts:
+            if all(s.start <= v < s.stop for s, v in zip(part.crop, at, strict=True)):
+                own = [v - s.start for s, v in zip(part.crop, at, strict=True)]
+                return part.name, part.raster.pixel_to_part(own[0], own[1], own[2])
+        return "", self.raster.pixel_to_tray(layer, row, column)
 
     def __repr__(self) -> str:
         names = ", ".join(f"{c.name} = {c.resin}" for c in self.channels)
@@ -195,6 +286,10 @@ class Stack:
                 )
             planes.append(self.decode(channel, layer, data))
         return np.stack(planes)
+
+    def solid(self, layer: int) -> NDArray[np.uint8]:
+        """Packed bits of one layer where any channel, support included, lays a droplet."""
+        return np.asarray(np.bitwise_or.reduce(self.bits(layer), axis=0), dtype=np.uint8)
 
     def layer(self, k: int) -> NDArray[np.uint8]:
         """The channel of every site of layer `k`, counted from the tray.

@@ -3,9 +3,9 @@
 from __future__ import annotations
 
 import os
+from collections import Counter
 from collections.abc import Iterator, Mapping, Sequence
 from contextlib import contextmanager
-from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
@@ -13,24 +13,20 @@ import numpy as np
 from scipy import ndimage
 
 from voxelmat.errors import FileFormatError, InputError, ResourceError
+from voxelmat.model.halftone import Halftone
 from voxelmat.model.part import Part
-from voxelmat.model.profile import SUPPORT_POLICIES, PrintProfile
+from voxelmat.model.profile import PrintProfile
 from voxelmat.monitor import SILENT, Monitor
-from voxelmat.printing.halftone import INTERFACE_RULE, Slicer, used_resins
+from voxelmat.printing.imagefiles import ImageFiles
+from voxelmat.printing.job import PrintJob, one_part_job
 from voxelmat.printing.journal import Journal, locked, publish, refuse_foreign, retired
-from voxelmat.printing.manifest import FORMAT, image_entry, write_manifest
-from voxelmat.printing.mask import mask_digest
-from voxelmat.printing.place import place
-from voxelmat.printing.raster import Raster
+from voxelmat.printing.manifest import FORMAT, FORMAT_NUMBER, image_entry, write_manifest
 from voxelmat.printing.readback import Stack, read_stack
-from voxelmat.printing.support import outline_box, outline_field, outline_source
+from voxelmat.printing.source import Dealer, source_of
 from voxelmat.printing.writer import LayerWriter, write_layers
-from voxelmat.provenance import Provenance, text_digest, utc_now, versions
+from voxelmat.provenance import Provenance, utc_now
 
-__all__ = ["designed_volumes", "write_stack"]
-
-_HALFTONE = "3-D blue noise by void-and-cluster, 64^3 sites, 16 bit, skewed tiles"
-_ENCODER = "one-bit PNG, filter 0, deflate level 1"
+__all__ = ["designed_volumes", "write_job", "write_stack"]
 
 
 def designed_volumes(part: Part) -> dict[str, float]:
@@ -63,30 +59,81 @@ def write_stack(
     position: tuple[float, float] | None = None,
     support: str | None = None,
     seed: int = 0,
+    halftone: Halftone | None = None,
+    notes: Mapping[str, Any] | None = None,
     monitor: Monitor = SILENT,
     resume: bool = True,
     inputs: Mapping[str, str] | None = None,
     threads: int | None = None,
     slab: int = 16,
 ) -> Stack:
-    """Slice and halftone a part into one folder of one-bit PNG images a material channel.
+    """Slice and halftone one part into a folder of images; `write_job` for a whole tray.
 
     Parameters
     ----------
     part : Part
     profile : PrintProfile
     folder : str or Path
-        Appears only when everything is written; until then work goes to ``<folder>.partial``.
-        An earlier stack of this name is replaced then; any other content is refused. A lock
-        file ``.<folder>.lock`` stays beside it.
+        As for `write_job`.
     orientation : sequence of str
         Turns by multiples of 90 degrees about the tray's axes, in order: ``["x 90"]``.
     position : tuple of float, optional
         Low x and y corner of the part on the tray, mm; the middle of the tray if left out.
-    support : {"columns", "machine", "none"}, optional
-        The profile's policy if left out.
+    support : str, optional
+        One of `voxelmat.model.profile.SUPPORT_POLICIES`; the profile's if left out.
     seed : int
         Moves the start of the blue-noise mask.
+    halftone : Halftone, optional
+    notes : mapping, optional
+        Plain data for the manifest.
+    monitor, resume, inputs, threads, slab
+        As for `write_job`.
+
+    Returns
+    -------
+    Stack
+
+    Raises
+    ------
+    InputError
+        If the part does not fit the tray or the channels, or an option is not known.
+    ResourceError, Cancelled
+        As `write_job`.
+    """
+    job = one_part_job(
+        part,
+        profile,
+        orientation=orientation,
+        position=position,
+        support=support,
+        seed=seed,
+        halftone=halftone,
+        notes=notes,
+    )
+    return write_job(
+        job, folder, monitor=monitor, resume=resume, inputs=inputs, threads=threads, slab=slab
+    )
+
+
+def write_job(
+    job: PrintJob,
+    folder: str | Path,
+    *,
+    monitor: Monitor = SILENT,
+    resume: bool = True,
+    inputs: Mapping[str, str] | None = None,
+    threads: int | None = None,
+    slab: int = 16,
+) -> Stack:
+    """Slice and halftone a tray into one folder of images.
+
+    Parameters
+    ----------
+    job : PrintJob
+    folder : str or Path
+        Appears only when everything is written; until then work goes to ``<folder>.partial``.
+        An earlier stack of this name is replaced then; any other content is refused. A lock
+        file ``.<folder>.lock`` stays beside it.
     monitor : Monitor
     resume : bool
         Keep the layers that an interrupted run of the same job has finished; a finished stack
@@ -103,7 +150,7 @@ def write_stack(
     Raises
     ------
     InputError
-        If the part does not fit the tray or the channels, or an option is not known.
+        If the job cannot be sliced, or an option is not known.
     ResourceError
         If the disk is full, another run writes to the folder, or it holds other files. Finished
         layers are kept for the next run; nothing appears under `folder`.
@@ -116,112 +163,35 @@ def write_stack(
     if slab < 1 or (threads is not None and threads < 1):
         raise InputError(f"Threads and slab are at least 1; got {threads} and {slab}.")
     started = utc_now()
-    job = _plan(part, profile, orientation, position, support, seed, dict(inputs or {}))
+    inputs = dict(inputs or {})
+    digest = job.digest(inputs)
     workers = _workers(threads)
     with locked(folder):
         for target in (folder, retired(folder)):
             refuse_foreign(target)
-        finished = _finished(folder, job.digest) if resume else None
+        finished = _finished(folder, digest) if resume else None
         if finished is not None:
             return finished
-        slicer = Slicer(
-            part, job.raster, tuple(job.channels.values()), support=job.draws_support, seed=seed
-        )
+        source = source_of(job)
         partial = folder.with_name(f"{folder.name}.partial")
         with _disk_errors(partial):
-            journal = Journal(partial, job.digest, job.folders, resume=resume)
+            images = ImageFiles(job.window, job.channel_names, job.profile.polarity)
+            journal = Journal(partial, digest, images.folders, images.names, resume=resume)
             try:
-                inverted = profile.polarity == "black is material"
-                writer = LayerWriter(slicer, journal, job.folders, inverted)
+                writer = LayerWriter(source, Dealer(job), images, journal)
                 write_layers(writer, monitor, workers, slab)
             finally:
                 journal.close()
             provenance = Provenance(
-                inputs=job.inputs,
-                seed=seed,
+                inputs=inputs,
+                seed=job.seed,
                 threads=workers,
                 started_utc=started,
                 finished_utc=utc_now(),
             )
-            write_manifest(partial, _manifest(job, journal, provenance))
+            write_manifest(partial, _manifest(job, digest, journal, provenance))
             publish(partial, folder)
         return read_stack(folder)
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class _Job:
-    """Everything that decides the images, checked before anything is written."""
-
-    part: Part
-    profile: PrintProfile
-    raster: Raster
-    channels: dict[str, str]
-    method: dict[str, Any]
-    inputs: dict[str, str]
-
-    @property
-    def draws_support(self) -> bool:
-        return bool(self.method["support"] == "columns")
-
-    @property
-    def folders(self) -> list[str]:
-        """Channel names in the order of the slicer's materials, support last."""
-        return [*self.channels, *([self.profile.support_channel] if self.draws_support else [])]
-
-    @property
-    def digest(self) -> str:
-        """SHA-256 over all of it and over the versions that the bytes depend on."""
-        return text_digest(
-            {
-                "part": self.part.digest,
-                "profile": self.profile.as_dict(),
-                "raster": self.raster.as_dict(),
-                "channels": list(self.channels.items()),
-                "method": self.method,
-                "inputs": self.inputs,
-                "versions": {k: v for k, v in versions().items() if k in ("voxelmat", "isal")},
-            }
-        )
-
-
-def _plan(
-    part: Part,
-    profile: PrintProfile,
-    orientation: Sequence[str],
-    position: tuple[float, float] | None,
-    support: str | None,
-    seed: int,
-    inputs: dict[str, str],
-) -> _Job:
-    """Place the part, assign the channels, and note the method; refuse what cannot be."""
-    policy = profile.support_policy if support is None else support
-    if policy not in SUPPORT_POLICIES:
-        raise InputError(
-            f"The support policy is one of {', '.join(SUPPORT_POLICIES)}; got {policy!r}.",
-            key="support",
-        )
-    if policy == "columns" and not profile.support_channel:
-        raise InputError(
-            f"Profile '{profile.name}' has no support channel to lay columns with.", key="support"
-        )
-    if not isinstance(seed, int) or not 0 <= seed < 2**64:
-        raise InputError(f"A seed is a whole number of 0 to 2^64 - 1; got {seed!r}.", key="seed")
-    return _Job(
-        part=part,
-        profile=profile,
-        raster=place(outline_box(part, outline_field(part)), profile, orientation, position),
-        channels=profile.assign(used_resins(part)),
-        method={
-            "outline": outline_source(part),
-            "halftone": _HALFTONE,
-            "mask_sha256": mask_digest(),
-            "seed": seed,
-            "interfaces": INTERFACE_RULE,
-            "support": policy,
-            "encoder": _ENCODER,
-        },
-        inputs=inputs,
-    )
 
 
 def _workers(threads: int | None) -> int:
@@ -260,31 +230,47 @@ def _disk_errors(partial: Path) -> Iterator[None]:
         ) from error
 
 
-def _manifest(job: _Job, journal: Journal, provenance: Provenance) -> dict[str, Any]:
+def _manifest(
+    job: PrintJob, digest: str, journal: Journal, provenance: Provenance
+) -> dict[str, Any]:
     """The whole manifest of a stack whose layers are all written."""
-    part = job.part
     return {
         "format": FORMAT,
-        "format_number": 1,
-        "job": job.digest,
-        "part": {"name": part.name, "digest": part.digest, "grid": part.grid.as_dict()},
+        "format_number": FORMAT_NUMBER,
+        "job": digest,
+        "parts": [
+            {
+                "name": p.name,
+                "kind": p.kind,
+                "digest": p.part.digest,
+                "grid": p.part.grid.as_dict(),
+                "raster": p.raster.as_dict(),
+            }
+            for p in job.parts
+        ],
+        "notes": job.notes,
         "profile": job.profile.as_dict(),
-        "raster": job.raster.as_dict(),
-        "image": image_entry(job.raster, job.profile.polarity),
+        "raster": job.window.as_dict(),
+        "image": image_entry(job.window, job.profile.polarity),
         "method": job.method,
         "channels": _channel_entries(job, journal),
-        "inputs": job.inputs,
+        "inputs": dict(provenance.inputs),
         "provenance": provenance.as_dict(),
     }
 
 
-def _channel_entries(job: _Job, journal: Journal) -> list[dict[str, Any]]:
-    """The manifest's ``channels`` entries."""
-    designed = designed_volumes(job.part)
-    density = {r.name: r.density.value for r in job.part.resins}
-    records = [journal.done[k] for k in range(job.raster.image_shape[0])]
+def _channel_entries(job: PrintJob, journal: Journal) -> list[dict[str, Any]]:
+    """The manifest's ``channels`` entries; a resin's design volume is shared by its channels."""
+    designed: dict[str, float] = {}
+    density: dict[str, float | None] = {}
+    for item in job.parts:
+        for resin, volume in designed_volumes(item.part).items():
+            designed[resin] = designed.get(resin, 0.0) + volume
+        density.update({r.name: r.density.value for r in item.part.resins})
+    sharing = Counter(job.channels.values())
+    records = [journal.done[k] for k in range(job.window.image_shape[0])]
     entries = []
-    for m, name in enumerate(job.folders):
+    for m, name in enumerate(job.channel_names):
         is_support = name not in job.channels
         resin = job.channels.get(name, job.profile.channels[name] or "support")
         sites = sum(r.sites[m] for r in records)
@@ -294,8 +280,8 @@ def _channel_entries(job: _Job, journal: Journal) -> list[dict[str, Any]]:
                 "resin": resin,
                 "role": "support" if is_support else "model",
                 "sites": sites,
-                "volume_mm3": float(sites * job.raster.site_volume),
-                "designed_mm3": None if is_support else designed[resin],
+                "volume_mm3": float(sites * job.window.site_volume),
+                "designed_mm3": None if is_support else designed[resin] / sharing[resin],
                 "density_t_mm3": density.get(resin),
                 "sha256": [r.sha256[m] for r in records],
             }

@@ -2,78 +2,57 @@
 
 from __future__ import annotations
 
-import hashlib
 import threading
-from collections.abc import Sequence
 from concurrent.futures import FIRST_COMPLETED, Future, ThreadPoolExecutor, wait
 
-import numpy as np
-from numpy.typing import NDArray
-
 from voxelmat.errors import Cancelled
-from voxelmat.io.png import encode_bitmap
-from voxelmat.kernels.bitplane import count_planes, to_words
 from voxelmat.monitor import Monitor
-from voxelmat.printing.halftone import Slicer
-from voxelmat.printing.journal import Journal, LayerRecord
-from voxelmat.printing.manifest import layer_name
+from voxelmat.printing.imagefiles import ImageFiles
+from voxelmat.printing.journal import Journal
+from voxelmat.printing.source import Dealer, LayerSource
 
 __all__ = ["LayerWriter", "write_layers"]
 
 
 class LayerWriter:
-    """Slices, encodes, writes and journals slabs of layers; one object serves all threads.
+    """Makes, encodes, writes and journals slabs of layers; one object serves all threads.
 
     Parameters
     ----------
-    slicer : Slicer
+    source : LayerSource
+    dealer : Dealer
+        From materials to channels.
+    images : ImageFiles
     journal : Journal
-    names : sequence of str
-        Folder of each channel.
-    inverted : bool
-        True where black is material.
     """
 
     def __init__(
-        self, slicer: Slicer, journal: Journal, names: Sequence[str], inverted: bool
+        self, source: LayerSource, dealer: Dealer, images: ImageFiles, journal: Journal
     ) -> None:
-        self.slicer = slicer
+        self.source = source
         self.journal = journal
         self.stop = threading.Event()
-        self._folders = [journal.partial / n for n in names]
-        self._inverted = inverted
-        self._width = slicer.raster.image_shape[2]
-        self._ppm = slicer.raster.pixels_per_metre
+        self._dealer = dealer
+        self._images = images
+
+    @property
+    def n_layers(self) -> int:
+        """Layers of the whole stack."""
+        return self._images.n_layers
 
     def slab(self, first: int, last: int) -> None:
         """Write the layers ``first`` to ``last - 1``."""
-        for layer, bits in enumerate(self.slicer.layers(first, last), start=first):
+        for layer, bits in enumerate(self.source.layers(first, last), start=first):
             if self.stop.is_set():
                 return
-            sites = _count(bits)
-            image = ~bits if self._inverted else bits
-            digests = []
-            for plane, folder in zip(image, self._folders, strict=True):
-                data = encode_bitmap(plane, self._width, self._ppm)
-                (folder / layer_name(layer)).write_bytes(data)
-                digests.append(hashlib.sha256(data).hexdigest())
-            self.journal.add(LayerRecord(layer, tuple(digests), tuple(sites)))
-
-
-def _count(bits: NDArray[np.uint8]) -> list[int]:
-    """Set bits of each channel."""
-    count = np.zeros(len(bits), dtype=np.int64)
-    words = np.empty((bits.shape[1], (bits.shape[2] + 7) // 8), dtype=np.uint64)
-    for channel, plane in enumerate(bits):
-        to_words(plane, words)
-        count_planes(words[None], count[channel : channel + 1])
-    return [int(c) for c in count]
+            dealt = self._dealer.channels(bits, layer)
+            self.journal.add(self._images.write(self.journal.partial, layer, dealt))
 
 
 def _missing_slabs(writer: LayerWriter, size: int) -> list[tuple[int, int]]:
     """Runs of layers that are still to be written, cut to `size`."""
     slabs: list[tuple[int, int]] = []
-    for layer in range(writer.slicer.raster.image_shape[0]):
+    for layer in range(writer.n_layers):
         if layer in writer.journal.done:
             continue
         if slabs and slabs[-1][1] == layer and layer - slabs[-1][0] < size:
@@ -85,7 +64,7 @@ def _missing_slabs(writer: LayerWriter, size: int) -> list[tuple[int, int]]:
 
 def write_layers(writer: LayerWriter, monitor: Monitor, threads: int, size: int) -> None:
     """Write all missing layers; on any error or cancel, stop at whole layers and pass it on."""
-    total = writer.slicer.raster.image_shape[0]
+    total = writer.n_layers
     stage = "writing layers"
     monitor.report(stage, done=len(writer.journal.done), total=total)
     pool = ThreadPoolExecutor(threads, thread_name_prefix="voxelmat-slice")

@@ -99,9 +99,20 @@ def _in_words(figures: PrintEstimate) -> dict[str, str]:
     return rows
 
 
+def _turned(stack: Stack) -> str:
+    """How the first part stands on the tray, in words."""
+    turn = stack.parts[0].raster.rotation
+    if all(turn[a][a] == 1 for a in range(3)):
+        return "as drawn, z up"
+    along = [next(t for t in range(3) if turn[t][p]) for p in range(3)]
+    return "; ".join(
+        f"{'xyz'[p]} of the part along {'-' if turn[t][p] < 0 else '+'}{'xyz'[t]} of the tray"
+        for p, t in enumerate(along)
+    )
+
+
 def summarise(stack: Stack, figures: PrintEstimate | None = None) -> StackSummary:
     """Gather what a reader wants to know of a stack."""
-    turns = stack.manifest["part"].get("orientation") or []
     method = stack.manifest["method"]
     size = [n * p for n, p in zip(stack.shape, stack.pitch_mm, strict=True)]
     layers = sorted({int(share * (stack.n_layers - 1)) for share in _HEIGHTS})
@@ -115,7 +126,7 @@ def summarise(stack: Stack, figures: PrintEstimate | None = None) -> StackSummar
         volumes_mm3=tuple(c.volume_mm3 for c in stack.channels),
         designed_mm3=tuple(c.designed_mm3 for c in stack.channels),
         support=_SUPPORT[stack.support_policy],
-        orientation=", then ".join(turns) if turns else "as drawn, z up",
+        orientation=_turned(stack),
         halftone=f"{method['halftone']}; seed {method['seed']}",
         layers=(*(_layer_picture(stack, k) for k in layers), *_droplets(stack, layers)),
         estimate={} if figures is None else _in_words(figures),

@@ -1,0 +1,110 @@
+"""Where the layers of a job come from: packed bits of materials, then dealt to channels."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator, Sequence
+from typing import Protocol
+
+import numpy as np
+from numpy.typing import NDArray
+
+from voxelmat.errors import InputError
+from voxelmat.printing.halftone import Slicer
+from voxelmat.printing.job import PlacedPart, PrintJob
+
+__all__ = ["Dealer", "LayerSource", "deal", "slicer_of", "source_of"]
+
+
+class LayerSource(Protocol):
+    """Gives the packed bits of any run of layers; the same bits for any split into runs."""
+
+    @property
+    def image_shape(self) -> tuple[int, int, int]:
+        """Layers, rows, columns."""
+
+    @property
+    def n_channels(self) -> int:
+        """Materials: the resins of the job in order, support last."""
+
+    def layers(self, first: int, last: int) -> Iterator[NDArray[np.uint8]]:
+        """Layers ``first`` to ``last - 1``, each uint8 (materials, rows, ceil(columns / 8))."""
+
+
+def slicer_of(job: PrintJob, item: PlacedPart) -> Slicer:
+    """The slicer of one placed part of a job."""
+    return Slicer(item.part, item.raster, job.resins, support=job.draws_support, seed=job.seed)
+
+
+def source_of(job: PrintJob) -> LayerSource:
+    """The source of all layers of a job.
+
+    Raises
+    ------
+    InputError
+        If the job has several parts.
+    """
+    if len(job.parts) > 1 or job.window != job.parts[0].raster:
+        raise InputError(f"Only one part can be sliced at once; the job has {len(job.parts)}.")
+    return slicer_of(job, job.parts[0])
+
+
+def deal(bits: NDArray[np.uint8], layer: int, row0: int, column0: int, n: int) -> NDArray[np.uint8]:
+    """Deal the sites of one material among `n` channels.
+
+    Site (layer, row, column) of the tray's image goes to channel ``(layer + row + column) mod
+    n``, so what a site gets depends on nothing but its place.
+
+    Parameters
+    ----------
+    bits : ndarray of uint8, shape (rows, stride)
+        Packed, the first pixel of a row in the highest bit.
+    layer, row0, column0 : int
+        Layer, first row and first column in the image of the whole tray.
+    n : int
+
+    Returns
+    -------
+    ndarray of uint8, shape (n, rows, stride)
+        Disjoint; their union is `bits`.
+    """
+    rows, stride = bits.shape
+    columns = np.arange(stride * 8)
+    combs = np.packbits(np.stack([columns % n == c for c in range(n)]), axis=1)
+    phase = (layer + row0 + column0 + np.arange(rows)) % n
+    return np.stack([bits & combs[(channel - phase) % n] for channel in range(n)])
+
+
+class Dealer:
+    """Turns the materials of a layer into the channels of a job."""
+
+    def __init__(self, job: PrintJob) -> None:
+        self._start = job.window.image_offset
+        self._channels = _by_material(job.material_of)
+        self._plain = all(len(c) == 1 for c in self._channels)
+
+    def channels(self, bits: NDArray[np.uint8], layer: int) -> NDArray[np.uint8]:
+        """From (materials, rows, stride) to (channels, rows, stride).
+
+        Parameters
+        ----------
+        bits : ndarray of uint8
+        layer : int
+            Counted from the first layer of the window.
+        """
+        if self._plain:
+            return bits
+        out = np.empty((sum(map(len, self._channels)), *bits.shape[1:]), dtype=np.uint8)
+        z, y, x = self._start
+        for material, places in enumerate(self._channels):
+            dealt = deal(bits[material], z + layer, y, x, len(places))
+            for place, plane in zip(places, dealt, strict=True):
+                out[place] = plane
+        return out
+
+
+def _by_material(material_of: Sequence[int]) -> list[list[int]]:
+    """Channel numbers of each material."""
+    return [
+        [c for c, m in enumerate(material_of) if m == material]
+        for material in range(max(material_of) + 1)
+    ]
