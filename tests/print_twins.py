@@ -81,7 +81,9 @@ class NumpySlicer:
 
     def __init__(self, part, raster, resins, *, support, seed):
         names = [m.name for m in part.resins]
-        self.table = part.palette_fractions()[:, [names.index(r) for r in resins]]
+        order = sorted(resins, key=lambda r: -part.resin(r).E.value)  # the stiffest first
+        self.numbers = [resins.index(r) + 1 for r in order]
+        self.table = part.palette_fractions()[:, [names.index(r) for r in order]]
         total = np.cumsum(self.table, axis=1)[:, :-1]
         total[total > 1 - 1e-6] = 1.0
         self.total = total.astype(np.float32)
@@ -152,11 +154,11 @@ class NumpySlicer:
         nearest = [np.where(v[2] >= 0.5, v[1], v[0]) for v in self.axes[1:]]
         near = self.labels[high if w >= 0.5 else low][np.ix_(*nearest)]
         threshold = self.threshold(layer)
-        site = np.ones((rows, columns), np.uint8)
+        site = np.full((rows, columns), self.numbers[0], np.uint8)
         for m in range(n_resins - 1):
             a, b = self.total[self.labels[low], m], self.total[self.labels[high], m]
             value = np.where(hard, self.total[near, m], self.along_plane(a + w * (b - a), False))
-            site += threshold >= value
+            site[threshold >= value] = self.numbers[m + 1]
         out = np.where(inside[0], site, 0)
         if self.support:
             out = np.where(inside[1] & ~inside[0], n_resins + 1, out)

@@ -1,4 +1,4 @@
-"""From two design planes to packed droplet bits: interpolate, threshold, pack, one row at a time.
+"""From two design planes to the sites of a layer: interpolate and threshold, one row at a time.
 
 All arrays are in image order: C-contiguous ``[layer, row, column]``. A printer row ``y`` lies
 between design rows ``row_at[y]`` and ``row_at[y] + 1``, at weight ``row_w[y]`` from the first.
@@ -6,6 +6,8 @@ between design rows ``row_at[y]`` and ``row_at[y] + 1``, at weight ``row_w[y]`` 
 
 import numpy as np
 from numba import njit
+
+from voxelmat.kernels.sites import hash_row
 
 
 @njit(cache=True, nogil=True)
@@ -129,53 +131,96 @@ def _column_weights(hard, column_at, column_w, out):
 
 
 @njit(cache=True, nogil=True)
-def _choose_resin(smooth, near, hard, i, w, column_at, wx, threshold, base, slope, out):
-    """The resin number (from 1) of every site of a row, by its threshold.
+def _row_pair(lower, upper, w, cumulative, i, at, rows):
+    """Cumulative fractions of design rows `i` and ``i + 1``, in ``rows[i & 1]`` and the other.
 
-    Where a cell is flagged `hard` the nearest plane's and row's values replace the interpolated
-    ones; `wx` then picks the nearest column.
+    lower, upper u16 [r, c], `w` from the first to the second, cumulative f32 [resins - 1,
+    palette], rows f32 [2, resins - 1, c]; `at` is the i of the call before (-2: none), whose
+    rows are kept where they serve.
     """
-    i_near = i + 1 if w >= np.float32(0.5) else i
-    n_columns = smooth.shape[2]
-    out[:] = 1
-    for f in range(smooth.shape[0]):
-        for k in range(n_columns):
-            a = smooth[f, i, k]
-            base[k] = a + w * (smooth[f, i + 1, k] - a)
-        for k in range(n_columns - 1):
-            slope[k] = base[k + 1] - base[k]
-        for k in range(n_columns - 1):
-            if hard[i, k]:
-                a = near[f, i_near, k]
-                base[k] = a
-                slope[k] = near[f, i_near, k + 1] - a
-        for x in range(column_at.shape[0]):
-            j = column_at[x]
-            out[x] += np.uint8(1) if threshold[x] >= base[j] + wx[x] * slope[j] else np.uint8(0)
+    for r in range(i, i + 2):
+        if at <= r <= at + 1:
+            continue
+        for f in range(cumulative.shape[0]):
+            for k in range(lower.shape[1]):
+                a = cumulative[f, lower[r, k]]
+                rows[r & 1, f, k] = a + w * (cumulative[f, upper[r, k]] - a)
 
 
 @njit(cache=True, nogil=True)
-def _pack(words, n_channels, y, bits):
-    """Eight site bytes at a time to one bit byte a channel, the first site highest."""
-    ones = np.uint64(0x0101010101010101)
-    high = np.uint64(0x8080808080808080)
-    for c in range(n_channels):
-        wanted = np.uint64(c + 1) * ones
-        for b in range(words.shape[0]):
-            v = words[b] ^ wanted  # a byte is 0 where the site belongs to this channel
-            v = ((high - v) & high) >> np.uint64(7)  # site numbers stay below 128: no borrow
-            v |= v << np.uint64(9)  # gather the eight low bits in the highest byte, reversed
-            v |= v << np.uint64(18)
-            v |= v << np.uint64(36)
-            bits[c, y, b] = np.uint8(v >> np.uint64(56))
+def _row_line(rows, near, cumulative, hard, i, w, f, base, slope):
+    """One cumulative fraction along a printer row: value at each voxel, and the step to the next.
+
+    Where a cell is flagged `hard` the values of the nearest plane and row stand.
+    """
+    n_columns = base.shape[0]
+    i_near = i + 1 if w >= np.float32(0.5) else i
+    for k in range(n_columns):
+        a = rows[i & 1, f, k]
+        base[k] = a + w * (rows[(i + 1) & 1, f, k] - a)
+    for k in range(n_columns - 1):
+        slope[k] = base[k + 1] - base[k]
+    for k in range(n_columns - 1):
+        if hard[i, k]:
+            a = cumulative[f, near[i_near, k]]
+            base[k] = a
+            slope[k] = cumulative[f, near[i_near, k + 1]] - a
+
+
+@njit(cache=True, nogil=True)
+def _ramp_line(ramp, hard, i, w, base):
+    """The ramp of dithered interfaces along a printer row; tells whether the row has any."""
+    found = False
+    for k in range(hard.shape[1]):
+        found = found or hard[i, k] > 1
+    if found:
+        for k in range(base.shape[0]):
+            a = ramp[i, k]
+            base[k] = a + w * (ramp[i + 1, k] - a)
+    return found
+
+
+@njit(cache=True, nogil=True)
+def _choose(threshold, column_at, wx, base, slope, number, out):
+    """Give the sites of a row whose threshold reaches a cumulative fraction the next resin."""
+    for x in range(column_at.shape[0]):
+        j = column_at[x]
+        out[x] = number if threshold[x] >= base[j] + wx[x] * slope[j] else out[x]
+
+
+@njit(cache=True, nogil=True)
+def _choose_on_ramp(threshold, column_at, column_w, base, hard, ends, out):
+    """Choose between the two resins of a dithered interface, ends u8 [pairs + 2, 2]."""
+    for x in range(column_at.shape[0]):
+        j = column_at[x]
+        pair = hard[j]
+        if pair > 1:
+            first = np.float32(0.5) + (base[j] + column_w[x] * (base[j + 1] - base[j]))
+            out[x] = ends[pair, 0] if threshold[x] < first else ends[pair, 1]
+
+
+@njit(cache=True, nogil=True)
+def _support_row(outlines, i, w, part, both):
+    """Interpolate the field of part or support; tells whether there is support in the row."""
+    found = False
+    if outlines.shape[0] > 1 and _outline_row(outlines[1], i, w, both):
+        for k in range(part.shape[0]):  # without support the two fields are the same
+            found = found or both[k] != part[k]
+    return found
 
 
 @njit(cache=True, nogil=True)
 def halftone_layer(
     outlines,
-    smooth,
+    lower,
+    upper,
     near,
+    layer_w,
+    cumulative,
+    numbers,
     hard,
+    ramp,
+    ends,
     row_at,
     row_w,
     row_ow,
@@ -187,49 +232,57 @@ def halftone_layer(
     start,
     skew_x,
     skew_y,
-    bits,
+    key,
+    sites,
 ):
-    """Halftone one printer layer.
+    """Halftone one printer layer by thresholds.
 
     Parameters: outlines f32 [1 or 2, r, c] (part, then part or support; negative inside),
-    smooth and near f32 [resins - 1, r, c] cumulative fractions interpolated along layers and
-    of the nearest plane, hard u8 [r - 1, c - 1], row_at u32 and row_w, row_ow f32 [rows]
-    (weights for blends and for outlines), the same for columns, window i64 [4] first and last
-    row and column that lie on the grid, mask f32 [n, n, n], start i64 [3] layer, row and
-    column of the first pixel in the mask, bits u8 [channels, rows, stride] (out).
+    lower, upper and near u16 [r, c] the label planes below, above and nearest, layer_w f32 from
+    the first to the second, cumulative f32 [resins - 1, palette] fractions summed in the order
+    of laying, numbers u8 [resins + 1] what a site of each resin holds (in that order, then
+    support), hard u8 [r - 1, c - 1] (0 interpolate, 1 nearest, 1 + p the ramp of pair p), ramp
+    f32 [r, c] distance from the interface over its width (positive towards the pair's first
+    resin), ends u8 [pairs + 2, 2] what the sites of a pair hold, row_at u32 and row_w, row_ow
+    f32 [rows] (weights for blends and for outlines), the same for columns, window i64 [4] first
+    and last row and column that lie on the grid, mask f32 [n, n, n] (n = 0: white noise of
+    `key` u64), start i64 [3] layer, row and column of the first pixel in the mask or on the
+    tray, sites u8 [rows, columns or more] (out).
     """
     n_columns = column_at.shape[0]
-    n_channels = bits.shape[0]
-    n_resins = smooth.shape[0] + 1
-    part = np.empty(outlines.shape[2], np.float32)
-    both = np.empty(outlines.shape[2], np.float32)
-    base = np.empty(outlines.shape[2], np.float32)
-    slope = np.empty(outlines.shape[2], np.float32)
+    n_cells = outlines.shape[2]
+    part = np.empty(n_cells, np.float32)
+    both = np.empty(n_cells, np.float32)
+    base = np.empty(n_cells, np.float32)
+    slope = np.empty(n_cells, np.float32)
+    rows = np.empty((2, cumulative.shape[0], n_cells), np.float32)
     threshold = np.empty(n_columns, np.float32)
     wx = np.empty(n_columns, np.float32)
     resin = np.empty(n_columns, np.uint8)
-    support = np.full(n_columns, n_resins + 1, np.uint8)
-    site = np.zeros(bits.shape[2] * 8, np.uint8)
-    words = site.view(np.uint64)
+    support = np.full(n_columns, numbers[cumulative.shape[0] + 1], np.uint8)
+    at = -2
     for y in range(row_at.shape[0]):
-        i = row_at[y]
-        on_grid = window[0] <= y < window[1]
-        has_part = on_grid and _outline_row(outlines[0], i, row_ow[y], part)
-        has_support = False
-        if on_grid and outlines.shape[0] > 1 and _outline_row(outlines[1], i, row_ow[y], both):
-            for k in range(part.shape[0]):  # without support the two fields are the same
-                has_support = has_support or both[k] != part[k]
-        if not (has_part or has_support):
-            bits[:, y, :] = 0
-            continue
+        i = np.int64(row_at[y])
+        site = sites[y]
         site[:] = 0
-        if has_support:
+        if not window[0] <= y < window[1]:
+            continue
+        has_part = _outline_row(outlines[0], i, row_ow[y], part)
+        if _support_row(outlines, i, row_ow[y], part, both):
             _stamp(both, column_at, column_ow, window[2], window[3], support, site)
-        if has_part:
+        if not has_part:
+            continue
+        if mask.shape[0] == 0:
+            hash_row(start[0], start[1] + y, start[2], key, threshold)
+        else:
             _row_thresholds(mask, start[0], start[1] + y, start[2], skew_x, skew_y, threshold)
-            _column_weights(hard[i], column_at, column_w, wx)
-            _choose_resin(
-                smooth, near, hard, i, row_w[y], column_at, wx, threshold, base, slope, resin
-            )
-            _stamp(part, column_at, column_ow, window[2], window[3], resin, site)
-        _pack(words, n_channels, y, bits)
+        _row_pair(lower, upper, layer_w, cumulative, i, at, rows)
+        at = i
+        _column_weights(hard[i], column_at, column_w, wx)
+        resin[:] = numbers[0]
+        for f in range(cumulative.shape[0]):
+            _row_line(rows, near, cumulative, hard, i, row_w[y], f, base, slope)
+            _choose(threshold, column_at, wx, base, slope, numbers[f + 1], resin)
+        if ramp.shape[0] > 0 and _ramp_line(ramp, hard, i, row_w[y], base):
+            _choose_on_ramp(threshold, column_at, column_w, base, hard[i], ends, resin)
+        _stamp(part, column_at, column_ow, window[2], window[3], resin, site)

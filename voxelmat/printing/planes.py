@@ -155,6 +155,18 @@ class DesignPlanes:
         view = np.asarray(array[tuple(index)]).transpose([a for a, _ in self._axes])
         return view[tuple(slice(None, None, s) for _, s in self._axes)]
 
+    @property
+    def n_planes(self) -> int:
+        """Planes of the design, an axis of one voxel not doubled."""
+        return int(self._true_shape[0])
+
+    def raw_labels(self, first: int, last: int) -> NDArray[np.uint16]:
+        """Labels of planes ``first`` to ``last - 1`` as they are in the part."""
+        labels = self._block("labels", first, last)
+        if labels is None:
+            raise InputError(f"Part '{self._part.name}' has no labels.")
+        return np.ascontiguousarray(labels)
+
     def read(self, first: int, last: int) -> tuple[NDArray[np.uint16], NDArray[np.int8]]:
         """Raw labels and the outline field of planes ``first`` to ``last - 1``."""
         labels = self._block("labels", first, last)
