@@ -54,18 +54,19 @@ def _fraction_row(
 
 
 @njit(cache=True, nogil=True)
-def _owed(fraction, here, below, first, value):
-    """What a site owes of each resin; returns how many resins its blend has.
+def _owed(fraction, line, carry, x, first, value):
+    """What site `x` owes of each resin; returns how many resins its blend has.
 
-    fraction, here (from the layer), below (from the layer below) f32 [resins], `first` the head
-    start of a site that has no dithered site below it, value f32 [resins] (out). What is owed
-    of resins that the blend does not have is shared out among those that it has.
+    fraction f32 [columns, resins], line f32 [columns + 2, resins] from within the layer, carry
+    f32 [columns, resins] from the layer below, `first` the head start of a site that has no
+    dithered site below it, value f32 [resins] (out). What is owed of resins that the blend does
+    not have is shared out among those that it has.
     """
     n = 0
     stray = np.float32(0.0)
-    for q in range(fraction.shape[0]):
-        value[q] = here[q] + below[q]
-        if fraction[q] > _LEAST:
+    for q in range(value.shape[0]):
+        value[q] = line[x + 1, q] + carry[x, q]
+        if fraction[x, q] > _LEAST:
             n += 1
         else:
             stray += value[q]
@@ -73,21 +74,21 @@ def _owed(fraction, here, below, first, value):
     if n > 1:
         share = np.float32(1.0) / np.float32(n)
         stray *= share
-        for q in range(fraction.shape[0]):
-            if fraction[q] > _LEAST:
-                value[q] += fraction[q] + stray + first * (share - fraction[q])
+        for q in range(value.shape[0]):
+            f = fraction[x, q]
+            if f > _LEAST:
+                value[q] += f + stray + first * (share - f)
     return n
 
 
 @njit(cache=True, nogil=True)
-def _most(fraction, value, word, noise):
-    """The resin of the blend that is owed most, with noise on what each is owed."""
+def _most(fraction, x, value, word, noise):
+    """The resin of the blend of site `x` that is owed most, with noise on what each is owed."""
     chosen = -1
     best = np.float32(0.0)
-    for q in range(fraction.shape[0]):
-        if fraction[q] > _LEAST:
-            random = _unit(_mixed(word + np.uint64(q)))
-            v = value[q] + noise * (random - np.float32(0.5))
+    for q in range(value.shape[0]):
+        if fraction[x, q] > _LEAST:
+            v = value[q] + noise * (_unit(_mixed(word + np.uint64(q))) - np.float32(0.5))
             if chosen < 0 or v > best:
                 chosen = q
                 best = v
@@ -95,7 +96,7 @@ def _most(fraction, value, word, noise):
 
 
 @njit(cache=True, nogil=True)
-def _pass_on(value, chosen, x, step, weights, line, following, before, below, after):
+def _pass_on(value, chosen, x, step, weights, line, following, before, above, after):
     """Spread what stays owed over the neighbours; arrays f32 [columns + 2, resins]."""
     for q in range(value.shape[0]):
         e = value[q] - (np.float32(1.0) if q == chosen else np.float32(0.0))
@@ -103,12 +104,40 @@ def _pass_on(value, chosen, x, step, weights, line, following, before, below, af
         following[x + 1 - step, q] += e * weights[1]
         following[x + 1, q] += e * weights[2]
         following[x + 1 + step, q] += e * weights[3]
-        below[x + 1, q] += e * weights[4]
+        above[x + 1, q] += e * weights[4]
         side = e * weights[5]
         before[x + 1, q] += side
         after[x + 1, q] += side
-        below[x, q] += side
-        below[x + 2, q] += side
+        above[x, q] += side
+        above[x + 2, q] += side
+
+
+@njit(cache=True, nogil=True)
+def _sweep(
+    inside, fraction, numbers, layer, row, column, key, weights, noise, head_start, carry,
+    dithered, line, following, before, above, after, value, site,
+):  # fmt: skip
+    """Lay the sites of one row, alternately from the left and from the right."""
+    n_columns = inside.shape[0]
+    step = 1 if (layer + row) & 1 == 0 else -1
+    x = 0 if step == 1 else n_columns - 1
+    for _ in range(n_columns):
+        if inside[x]:
+            first = head_start if dithered[x] == 0 else np.float32(0.0)
+            n = _owed(fraction, line, carry, x, first, value)
+            dithered[x] = 1 if n > 1 else 0
+            if n > 1:
+                word = _site_word(layer, row, column + x, key)
+                chosen = _most(fraction, x, value, word, noise)
+                _pass_on(value, chosen, x, step, weights, line, following, before, above, after)
+            else:
+                chosen = 0
+                for q in range(1, value.shape[0]):
+                    chosen = q if fraction[x, q] > fraction[x, chosen] else chosen
+            site[x] = numbers[chosen]
+        else:
+            dithered[x] = 0
+        x += step
 
 
 @njit(cache=True, nogil=True)
@@ -184,26 +213,11 @@ def diffuse_layer(
             inside[:] = 0
             resin[:] = 1
             _stamp(part, column_at, column_ow, window[2], window[3], resin, inside)
-            step = 1 if (start[0] + start[1] + y) & 1 == 0 else -1
-            x = 0 if step == 1 else n_columns - 1
-            for _ in range(n_columns):
-                if inside[x]:
-                    first = head_start if dithered[y, x] == 0 else np.float32(0.0)
-                    n = _owed(fraction[x], line[y & 1, x + 1], carry[y, x], first, value)
-                    if n > 1:
-                        word = _site_word(start[0], start[1] + y, start[2] + x, key)
-                        chosen = _most(fraction[x], value, word, noise)
-                        _pass_on(
-                            value, chosen, x, step, weights, line[y & 1], line[(y + 1) & 1],
-                            above[(y + 2) % 3], above[y % 3], above[(y + 1) % 3],
-                        )  # fmt: skip
-                    else:
-                        chosen = np.argmax(fraction[x])
-                    site[x] = numbers[chosen]
-                    dithered[y, x] = 1 if n > 1 else 0
-                else:
-                    dithered[y, x] = 0
-                x += step
+            _sweep(
+                inside, fraction, numbers, start[0], start[1] + y, start[2], key, weights, noise,
+                head_start, carry[y], dithered[y], line[y & 1], line[(y + 1) & 1],
+                above[(y + 2) % 3], above[y % 3], above[(y + 1) % 3], value, site,
+            )  # fmt: skip
         else:
             dithered[y] = 0
         line[y & 1] = 0

@@ -185,7 +185,8 @@ def _choose(threshold, column_at, wx, base, slope, number, out):
     """Give the sites of a row whose threshold reaches a cumulative fraction the next resin."""
     for x in range(column_at.shape[0]):
         j = column_at[x]
-        out[x] = number if threshold[x] >= base[j] + wx[x] * slope[j] else out[x]
+        kept = out[x]  # read in any case, so that the loop has no branch and becomes vector code
+        out[x] = number if threshold[x] >= base[j] + wx[x] * slope[j] else kept
 
 
 @njit(cache=True, nogil=True)

@@ -62,20 +62,30 @@ class Halftone:
 
     def width_between(self, one: str, other: str) -> float:
         """Width over which two resins are dithered into each other, mm; 0 for a hard interface."""
-        if isinstance(self.interface_width_mm, float):
-            return self.interface_width_mm
-        return dict(self.interface_width_mm).get(_sorted(one, other), 0.0)
+        widths = self._widths
+        return widths if isinstance(widths, float) else dict(widths).get(_sorted(one, other), 0.0)
+
+    @property
+    def _widths(self) -> float | Widths:
+        """As checked when the object was made."""
+        return self.interface_width_mm  # type: ignore[return-value]
 
     @property
     def has_widths(self) -> bool:
         """True where some interface may be dithered."""
-        if isinstance(self.interface_width_mm, float):
-            return self.interface_width_mm > 0
-        return any(w > 0 for _, w in self.interface_width_mm)
+        widths = self._widths
+        return widths > 0 if isinstance(widths, float) else any(w > 0 for _, w in widths)
+
+    @property
+    def width_names(self) -> tuple[str, ...]:
+        """Resins that a width is given for by name."""
+        widths = self._widths
+        pairs = () if isinstance(widths, float) else widths
+        return tuple(sorted({name for pair, _ in pairs for name in pair}))
 
     def as_dict(self) -> dict[str, Any]:
         """Plain data; pairs as ``"a | b"``."""
-        widths: Any = self.interface_width_mm
+        widths: Any = self._widths
         if not isinstance(widths, float):
             widths = {" | ".join(pair): width for pair, width in widths}
         order = self.order if isinstance(self.order, str) else list(self.order)

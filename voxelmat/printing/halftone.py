@@ -23,7 +23,7 @@ from voxelmat.printing.ramp import InterfaceRamps, RampPlane
 from voxelmat.printing.raster import Raster
 from voxelmat.printing.support import fill_columns
 
-__all__ = ["INTERFACE_RULE", "INTERFACE_STEP", "MOST_RESINS", "Slicer", "used_resins"]
+__all__ = ["INTERFACE_RULE", "INTERFACE_STEP", "MOST_RESINS", "Slicer"]
 
 #: A site is a byte: 0 for nothing, the resins, and support.
 MOST_RESINS = 254
@@ -35,16 +35,6 @@ _NOISE = 0.5
 #: Error diffusion: a site over an undithered one starts with what a site in the midst of a blend
 #: holds on average, so that the lowest layers are not short of rare droplets (measured).
 _HEAD_START = 0.23
-
-
-def used_resins(part: Part) -> tuple[str, ...]:
-    """Names of the resins that the printer lays, in the order of ``part.resins``."""
-    count = np.bincount(part.labels.ravel(order="F"), minlength=len(part.palette))
-    used = part.printed_labels() & (count > 0)
-    table = part.palette_fractions()[used]
-    return tuple(
-        m.name for m, column in zip(part.resins, table.T, strict=True) if (column > 0).any()
-    )
 
 
 def _axis(

@@ -117,11 +117,8 @@ class InterfaceRamps:
 
     @staticmethod
     def _check_names(part: Part, halftone: Halftone) -> None:
-        if isinstance(halftone.interface_width_mm, float):
-            return
-        for pair, _ in halftone.interface_width_mm:
-            for name in pair:
-                part.resin(name)
+        for name in halftone.width_names:
+            part.resin(name)
 
     def plane(self, planes: DesignPlanes, k: int, extended: NDArray[np.uint16]) -> RampPlane:
         """The distances of one design plane.
