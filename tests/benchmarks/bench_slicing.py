@@ -21,7 +21,8 @@ from voxelmat.io.png import encode_bitmap
 from voxelmat.model.blend import EMPTY, Blend
 from voxelmat.model.grid import VoxelGrid
 from voxelmat.model.part import Part
-from voxelmat.printing.halftone import Slicer, used_resins
+from voxelmat.printing.designed import used_resins
+from voxelmat.printing.halftone import Slicer
 from voxelmat.printing.place import place
 from voxelmat.printing.preflight import preflight
 from voxelmat.printing.profile import load_profile

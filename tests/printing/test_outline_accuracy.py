@@ -7,8 +7,9 @@ from print_twins import HARD, SOFT, sphere_distance
 from voxelmat.model.blend import EMPTY, Blend
 from voxelmat.model.grid import VoxelGrid
 from voxelmat.model.part import Part
+from voxelmat.printing.designed import designed_volumes
 from voxelmat.printing.profile import load_profile
-from voxelmat.printing.stack import designed_volumes, write_stack
+from voxelmat.printing.stack import write_stack
 
 RADIUS, SPACING = 2.5, 0.3
 THIRD = Blend.of({"hard": 1, "soft": 2})

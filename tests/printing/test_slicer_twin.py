@@ -6,7 +6,8 @@ import numpy as np
 import pytest
 from print_twins import NumpySlicer, layered_part
 
-from voxelmat.printing.halftone import Slicer, used_resins
+from voxelmat.printing.designed import used_resins
+from voxelmat.printing.halftone import Slicer
 from voxelmat.printing.place import place
 from voxelmat.printing.profile import load_profile
 from voxelmat.printing.support import outline_box, outline_field

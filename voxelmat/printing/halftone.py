@@ -10,12 +10,12 @@ import numpy as np
 from numpy.typing import NDArray
 
 from voxelmat.errors import InputError
+from voxelmat.io.bigpart import AnyPart
 from voxelmat.kernels.diffusion import diffuse_layer
 from voxelmat.kernels.halftone import blend_planes, halftone_layer, mark_interfaces
 from voxelmat.kernels.ramp import mark_ramps
 from voxelmat.kernels.sites import pack_sites
 from voxelmat.model.halftone import Halftone
-from voxelmat.model.part import Part
 from voxelmat.printing.mask import SIDE, SKEW, mask_phase, thresholds
 from voxelmat.printing.order import INTERFACE_RULE, INTERFACE_STEP, laying_order
 from voxelmat.printing.planes import DesignPlanes, PlaneCursor
@@ -66,7 +66,7 @@ class Slicer:
 
     Parameters
     ----------
-    part : Part
+    part : Part or StoredPart
     raster : Raster
     resins : tuple of str
         Each once; material number m is ``resins[m - 1]``.
@@ -90,7 +90,7 @@ class Slicer:
 
     def __init__(
         self,
-        part: Part,
+        part: AnyPart,
         raster: Raster,
         resins: tuple[str, ...],
         *,
@@ -119,7 +119,7 @@ class Slicer:
         self._set_up_noise(seed)
         self._set_up_ramps(part)
 
-    def _lay_out(self, part: Part, support: bool) -> None:
+    def _lay_out(self, part: AnyPart, support: bool) -> None:
         """Say where the planes come from and find the sites between voxels."""
         raster = self.raster
         self.planes = DesignPlanes(part, raster, support=fill_columns if support else None)
@@ -143,7 +143,7 @@ class Slicer:
             0, 2**64, dtype=np.uint64
         )
 
-    def _set_up_ramps(self, part: Part) -> None:
+    def _set_up_ramps(self, part: AnyPart) -> None:
         self._ramps: InterfaceRamps | None = None
         pairs: list[tuple[int, int]] = []
         if self.halftone.has_widths:

@@ -8,15 +8,16 @@ from dataclasses import dataclass, field
 from typing import Any
 
 from voxelmat.errors import InputError
+from voxelmat.io.bigpart import AnyPart
 from voxelmat.model.halftone import Halftone
-from voxelmat.model.part import Part
 from voxelmat.model.profile import PrintProfile
 from voxelmat.model.support_figures import DRAWN_SUPPORT, SUPPORT_POLICIES
-from voxelmat.printing.halftone import INTERFACE_RULE, used_resins
+from voxelmat.printing.designed import used_resins
+from voxelmat.printing.halftone import INTERFACE_RULE
 from voxelmat.printing.mask import mask_digest
 from voxelmat.printing.place import place
 from voxelmat.printing.raster import Raster
-from voxelmat.printing.support import outline_box, outline_field, outline_source
+from voxelmat.printing.support import outline_box, outline_source
 from voxelmat.provenance import text_digest, versions
 
 __all__ = ["PART_KINDS", "PlacedPart", "PrintJob", "one_part_job", "placed"]
@@ -33,7 +34,7 @@ class PlacedPart:
 
     Attributes
     ----------
-    part : Part
+    part : Part or StoredPart
         As it is sliced. `placed` makes one from a design.
     raster : Raster
         Its own window on the tray, and the transform into it.
@@ -43,7 +44,7 @@ class PlacedPart:
         One of `PART_KINDS`.
     """
 
-    part: Part
+    part: AnyPart
     raster: Raster
     name: str
     kind: str = "part"
@@ -217,7 +218,7 @@ class PrintJob:
 
 
 def placed(
-    part: Part,
+    part: AnyPart,
     profile: PrintProfile,
     orientation: Sequence[str] = (),
     position: tuple[float, float] | None = None,
@@ -229,7 +230,7 @@ def placed(
 
     Parameters
     ----------
-    part : Part
+    part : Part or StoredPart
         The design.
     profile : PrintProfile
     orientation : sequence of str
@@ -246,12 +247,12 @@ def placed(
     InputError
         If there is nothing to print, or if the part does not fit the tray.
     """
-    raster = place(outline_box(part, outline_field(part)), profile, orientation, position)
+    raster = place(outline_box(part), profile, orientation, position)
     return PlacedPart(part=part, raster=raster, name=name or part.name, kind=kind)
 
 
 def one_part_job(
-    part: Part,
+    part: AnyPart,
     profile: PrintProfile,
     *,
     orientation: Sequence[str] = (),

@@ -8,12 +8,12 @@ from voxelmat.model.finding import SEVERITIES, Finding
 from voxelmat.model.part import Part
 from voxelmat.model.profile import PrintProfile
 from voxelmat.monitor import SILENT, Monitor
+from voxelmat.printing.designed import designed_volumes
 from voxelmat.printing.features import piece_findings, small_findings, zone_findings
 from voxelmat.printing.journal import JOURNAL
 from voxelmat.printing.readback import Stack, read_stack
 from voxelmat.printing.scan import Facts, scan
 from voxelmat.printing.shifted import shifted_channel
-from voxelmat.printing.stack import designed_volumes
 from voxelmat.units import quantity
 
 __all__ = ["VOLUME_TOLERANCE", "preflight"]

@@ -9,14 +9,12 @@ from contextlib import contextmanager
 from pathlib import Path
 from typing import Any
 
-import numpy as np
-from scipy import ndimage
-
 from voxelmat.errors import FileFormatError, InputError, ResourceError
+from voxelmat.io.bigpart import AnyPart
 from voxelmat.model.halftone import Halftone
-from voxelmat.model.part import Part
 from voxelmat.model.profile import PrintProfile
 from voxelmat.monitor import SILENT, Monitor
+from voxelmat.printing.designed import designed_volumes
 from voxelmat.printing.imagefiles import ImageFiles
 from voxelmat.printing.job import PrintJob, one_part_job
 from voxelmat.printing.journal import Journal, locked, publish, refuse_foreign, retired
@@ -26,32 +24,11 @@ from voxelmat.printing.source import Dealer, source_of
 from voxelmat.printing.writer import LayerWriter, write_layers
 from voxelmat.provenance import Provenance, utc_now
 
-__all__ = ["designed_volumes", "write_job", "write_stack"]
-
-
-def designed_volumes(part: Part) -> dict[str, float]:
-    """Volume of each printed resin in the design, mm^3.
-
-    The solid fraction of the voxels counts, except where only the signed distance knows what is
-    printed: where there is no fraction, and round bought-in bodies, whose clearance is cut out
-    of voxels that are else full. There a voxel whose centre lies on the outline counts half.
-    """
-    printed = part.printed_labels()
-    if part.distance is not None:
-        cut = np.clip(127.5 - 255 / 16 * part.distance.astype(np.float32), 0, 255)
-        fill = cut if part.occupancy is None else part.occupancy.astype(np.float32)
-        bought = ~printed[part.labels] & (part.labels > 0)
-        if bought.any():
-            near = ndimage.binary_dilation(bought, iterations=2)
-            fill = np.where(near, np.minimum(fill, cut), fill)
-        fill = np.where(part.labels > 0, np.rint(fill), 0)
-        part = part.replace(occupancy=fill.astype(np.uint8))
-    amount = (part.filled() * printed) @ part.palette_fractions() * part.grid.voxel_volume
-    return {m.name: float(v) for m, v in zip(part.resins, amount, strict=True)}
+__all__ = ["write_job", "write_stack"]
 
 
 def write_stack(
-    part: Part,
+    part: AnyPart,
     profile: PrintProfile,
     folder: str | Path,
     *,
@@ -71,7 +48,7 @@ def write_stack(
 
     Parameters
     ----------
-    part : Part
+    part : Part or StoredPart
     profile : PrintProfile
     folder : str or Path
         As for `write_job`.
