@@ -7,7 +7,7 @@ from typing import Any
 
 from voxelmat.errors import InputError
 from voxelmat.model.halftone import Halftone
-from voxelmat.model.part import Part
+from voxelmat.model.material import Material
 from voxelmat.printing.mask import mask_digest
 
 __all__ = ["INTERFACE_RULE", "INTERFACE_STEP", "halftone_method", "laying_order"]
@@ -38,13 +38,16 @@ _WHY = {
 }
 
 
-def laying_order(part: Part, resins: Sequence[str], halftone: Halftone) -> tuple[str, ...]:
+def laying_order(
+    materials: Sequence[Material], resins: Sequence[str], halftone: Halftone
+) -> tuple[str, ...]:
     """The resins in the order in which the thresholds lay them.
 
     Parameters
     ----------
-    part : Part
-        Knows the moduli.
+    materials : sequence of Material
+        Of the part, or of all parts of a job: they know the moduli. A resin that is not among
+        them is laid last; the part has none of it.
     resins : sequence of str
         Each once, in the order of their channels.
     halftone : Halftone
@@ -64,7 +67,8 @@ def laying_order(part: Part, resins: Sequence[str], halftone: Halftone) -> tuple
     if halftone.order == "channels":
         return tuple(resins)
     if halftone.order == "stiffness":
-        return tuple(sorted(resins, key=lambda n: -part.resin(n).E.value))
+        modulus = {m.name: m.E.value for m in materials}
+        return tuple(sorted(resins, key=lambda n: -modulus.get(n, 0.0)))
     if sorted(halftone.order) != sorted(resins):
         raise InputError(
             f"The order of laying names each printed resin once ({', '.join(sorted(resins))}); "
@@ -74,20 +78,21 @@ def laying_order(part: Part, resins: Sequence[str], halftone: Halftone) -> tuple
     return tuple(halftone.order)
 
 
-def halftone_method(part: Part, resins: Sequence[str], halftone: Halftone) -> dict[str, Any]:
+def halftone_method(
+    materials: Sequence[Material], resins: Sequence[str], halftone: Halftone
+) -> dict[str, Any]:
     """What the manifest's ``method`` entry says of the halftone; it decides the bytes.
 
     Parameters
     ----------
-    part, resins, halftone
-        As for `laying_order`; a resin of several channels may stand there several times.
+    materials, resins, halftone
+        As for `laying_order`.
     """
-    resins = tuple(dict.fromkeys(resins))
-    order = laying_order(part, resins, halftone)
+    order = laying_order(materials, resins, halftone)
     stated = isinstance(halftone.order, tuple)
     entry: dict[str, Any] = {
         "halftone": _TEXT[halftone.method],
-        "halftone_settings": halftone.as_dict(),
+        "settings": halftone.as_dict(),
         "interfaces": INTERFACE_RULE + (_RAMP_RULE if halftone.has_widths else ""),
     }
     if halftone.method != "error diffusion":

@@ -11,9 +11,9 @@ import numpy as np
 from numpy.typing import NDArray
 
 from voxelmat.errors import InputError
+from voxelmat.io.bigpart import AnyPart
 from voxelmat.kernels.ramp import interface_distance
 from voxelmat.model.halftone import Halftone
-from voxelmat.model.part import Part
 from voxelmat.printing.planes import DesignPlanes
 from voxelmat.printing.raster import Raster
 
@@ -44,7 +44,7 @@ class InterfaceRamps:
 
     Parameters
     ----------
-    part : Part
+    part : Part or StoredPart
     raster : Raster
     order : sequence of str
         Resins in the order of laying.
@@ -71,7 +71,7 @@ class InterfaceRamps:
     """
 
     def __init__(
-        self, part: Part, raster: Raster, order: Sequence[str], halftone: Halftone
+        self, part: AnyPart, raster: Raster, order: Sequence[str], halftone: Halftone
     ) -> None:
         self._check_names(part, halftone)
         axes = [a for a, _ in raster.part_axes()]
@@ -116,7 +116,7 @@ class InterfaceRamps:
             self._pair_of[a + 1, b + 1] = self._pair_of[b + 1, a + 1] = number
 
     @staticmethod
-    def _check_names(part: Part, halftone: Halftone) -> None:
+    def _check_names(part: AnyPart, halftone: Halftone) -> None:
         for name in halftone.width_names:
             part.resin(name)
 
