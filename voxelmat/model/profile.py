@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import dataclasses
-import difflib
 import math
 import re
 from collections.abc import Iterable, Mapping
@@ -12,6 +11,10 @@ from fractions import Fraction
 from typing import Any, NoReturn
 
 from voxelmat.errors import InputError
+from voxelmat.model.image import ImageLayout
+from voxelmat.model.minimum_sizes import MinimumSizes
+from voxelmat.model.process import ProcessFigures
+from voxelmat.model.profile_dict import profile_arguments, profile_data
 from voxelmat.model.support_figures import DRAWN_SUPPORT, SUPPORT_POLICIES, SupportFigures
 
 __all__ = [
@@ -31,37 +34,7 @@ ROW_DIRECTIONS = ("x", "y")
 POLARITIES = ("white is material", "black is material")
 
 _NAME = re.compile(r"^[A-Za-z0-9][A-Za-z0-9_-]{0,31}$")
-_INCH_UM = Fraction(25400)
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class MinimumSizes:
-    """Smallest sizes that the printer makes reliably, mm."""
-
-    wall: float = 0.4
-    gap: float = 0.4
-    strut: float = 0.5
-    feature: float = 0.3
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class ProcessFigures:
-    """What the time and droplet estimates need.
-
-    Attributes
-    ----------
-    droplet_pl : float
-        Volume of one droplet, picolitres (1 pl = 1e-6 mm^3).
-    swath_mm : float
-        Width along y that one pass of the heads covers, mm.
-    swath_s, layer_s : tuple of float
-        Lowest and highest seconds for one pass, and for what is done once a layer.
-    """
-
-    droplet_pl: float = 30.0
-    swath_mm: float = 60.0
-    swath_s: tuple[float, float] = (4.0, 6.0)
-    layer_s: tuple[float, float] = (3.0, 5.0)
+_MOST_CHANNELS = 255
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -78,7 +51,8 @@ class PrintProfile:
     edge_margin : float
         Strip along each side edge of the tray that must stay empty, mm.
     channels : mapping
-        Channel name to the resin loaded in it; ``""`` where any resin may be loaded.
+        Channel name to the resin loaded in it; ``""`` where any resin may be loaded. A resin of
+        the part may stand in several: its droplets are then dealt among them.
     support_channel : str
         The channel of `channels` that lays support; ``""`` where there is none.
     support_policy : str
@@ -89,6 +63,11 @@ class PrintProfile:
         How images lie on the tray; see `ORIGIN_CORNERS`, `ROW_DIRECTIONS`, `POLARITIES`.
     minimum : MinimumSizes
     process : ProcessFigures
+    image : ImageLayout
+        What the image files are like.
+    bias : tuple of float
+        By how much the printer puts each outline too far outwards along x, y and z, mm a side;
+        negative where parts come out small. The slicer moves outlines against it.
     invented : bool
         True for a profile that describes no real printer.
     note : str
@@ -114,6 +93,8 @@ class PrintProfile:
     polarity: str = "white is material"
     minimum: MinimumSizes = field(default_factory=MinimumSizes)
     process: ProcessFigures = field(default_factory=ProcessFigures)
+    image: ImageLayout = field(default_factory=ImageLayout)
+    bias: tuple[float, float, float] = (0.0, 0.0, 0.0)
     invented: bool = False
     note: str = ""
 
@@ -143,16 +124,16 @@ class PrintProfile:
         self._check_figures()
 
     def _check_channels(self) -> None:
-        if not 1 <= len(self.channels) <= 64:
-            _refuse("channels", f"1 to 64 channels; got {len(self.channels)}")
+        if not 1 <= len(self.channels) <= _MOST_CHANNELS:
+            _refuse("channels", f"1 to {_MOST_CHANNELS} channels; got {len(self.channels)}")
         for channel in self.channels:
             if not _NAME.match(channel):
                 _refuse("channels", f"names of letters, digits, '-' and '_'; got {channel!r}")
         if len({c.lower() for c in self.channels}) != len(self.channels):
             _refuse("channels", "names that differ by more than capitals (they become folders)")
-        loaded = [r for r in self.channels.values() if r]
-        if len(set(loaded)) != len(loaded):
-            _refuse("channels", f"each resin in one channel only; got {loaded}")
+        support = self.channels.get(self.support_channel, "")
+        if support and list(self.channels.values()).count(support) > 1:
+            _refuse("channels", f"the support resin in one channel only; got {self.channels}")
         if self.support_channel and self.support_channel not in self.channels:
             _refuse(
                 "support.channel", f"one of {list(self.channels)}; got {self.support_channel!r}"
@@ -162,15 +143,15 @@ class PrintProfile:
             _refuse("support.channel", wanted)
 
     def _check_figures(self) -> None:
-        for key, value in dataclasses.asdict(self.minimum).items():
-            if not 0 < value <= 100:
-                _refuse(f"minimum_mm.{key}", f"above 0 and at most 100 mm; got {value}")
-        p = self.process
-        if not (0 < p.droplet_pl <= 1e6 and 0 < p.swath_mm <= 1e4):
-            _refuse("process", f"a droplet and a swath above 0; got {p}")
-        for low, high in (p.swath_s, p.layer_s):
-            if not 0 <= low <= high < math.inf:
-                _refuse("process", f"times as [lowest, highest] in s; got {p}")
+        try:
+            bias = tuple(float(b) for b in self.bias)
+        except (TypeError, ValueError):
+            bias = ()
+        if len(bias) != 3 or not all(math.isfinite(b) and abs(b) <= 10 for b in bias):
+            _refuse("bias_mm", f"three lengths of -10 to 10 mm along x, y, z; got {self.bias}")
+        object.__setattr__(self, "bias", bias)
+        if self.image.kind == "png index" and self.polarity != POLARITIES[0]:
+            _refuse("polarity", "'white is material', for an indexed image has no black and white")
 
     # ------------------------------------------------------------------ derived
     @property
@@ -187,7 +168,7 @@ class PrintProfile:
         return (x, y, z)
 
     def assign(self, resins: Iterable[str]) -> dict[str, str]:
-        """Which channel lays which resin: channels loaded with it first, then free ones in order.
+        """Which channels lay which resin: all loaded with it, else the next one that is free.
 
         Parameters
         ----------
@@ -206,7 +187,10 @@ class PrintProfile:
         """
         names = list(dict.fromkeys(resins))
         model = {c: r for c, r in self.channels.items() if c != self.support_channel}
-        found = {r: c for c, r in model.items() if r in names}
+        found: dict[str, list[str]] = {}
+        for channel, resin in model.items():
+            if resin in names:
+                found.setdefault(resin, []).append(channel)
         free = [c for c, r in model.items() if not r]
         for name in names:
             if name not in found:
@@ -217,8 +201,8 @@ class PrintProfile:
                         "Load it in the profile's channels, or use fewer resins.",
                         key="channels",
                     )
-                found[name] = free.pop(0)
-        by_channel = {c: r for r, c in found.items()}
+                found[name] = [free.pop(0)]
+        by_channel = {c: r for r, channels in found.items() for c in channels}
         return {c: by_channel[c] for c in model if c in by_channel}
 
     def replace(self, **changes: Any) -> PrintProfile:
@@ -228,34 +212,7 @@ class PrintProfile:
     # ------------------------------------------------------------------ plain data
     def as_dict(self) -> dict[str, Any]:
         """Plain data that `from_dict` reads back to an equal profile."""
-        um = {k: str(v * 1000) for k, v in zip(("x", "y", "layer"), self.pitch, strict=True)}
-        return {
-            "format": 1,
-            "name": self.name,
-            "invented": self.invented,
-            "note": self.note,
-            "pitch": {f"{k}_um": v for k, v in um.items()},
-            "tray": {
-                "size_mm": list(self.tray_size),
-                "edge_margin_mm": self.edge_margin,
-                "origin_corner": self.origin_corner,
-                "row_direction": self.row_direction,
-                "polarity": self.polarity,
-            },
-            "channels": dict(self.channels),
-            "support": {
-                "channel": self.support_channel,
-                "policy": self.support_policy,
-                **self.support_sizes.as_dict(),
-            },
-            "minimum_mm": dataclasses.asdict(self.minimum),
-            "process": {
-                "droplet_pl": self.process.droplet_pl,
-                "swath_mm": self.process.swath_mm,
-                "swath_s": list(self.process.swath_s),
-                "layer_s": list(self.process.layer_s),
-            },
-        }
+        return profile_data(self)
 
     @classmethod
     def from_dict(cls, data: Mapping[str, Any], *, file: str | None = None) -> PrintProfile:
@@ -264,9 +221,9 @@ class PrintProfile:
         Parameters
         ----------
         data : mapping
-            The tables ``pitch``, ``tray``, ``channels``, ``support``, ``minimum_mm``,
-            ``process``. A pitch is given as ``x_dpi`` or ``x_um`` (``y_``, ``layer_`` alike); a
-            um value may be a text such as ``"127/3"`` to be exact.
+            The tables ``pitch``, ``tray``, ``image``, ``channels``, ``support``,
+            ``minimum_mm``, ``process``. A pitch is given as ``x_dpi`` or ``x_um`` (``y_``,
+            ``layer_`` alike); a um value may be a text such as ``"127/3"`` to be exact.
         file : str, optional
             Named in errors.
 
@@ -276,7 +233,7 @@ class PrintProfile:
             For an unknown or missing key, or a value out of range, naming file and key.
         """
         try:
-            return cls(**_parsed(data))
+            return cls(**profile_arguments(data))
         except InputError as error:
             raise InputError(error.message, file=file, key=error.key) from None
         except (TypeError, ValueError) as error:
@@ -289,73 +246,3 @@ def _refuse(key: str, wanted: str) -> NoReturn:
 
 def _channel_list(channels: Mapping[str, str]) -> str:
     return ", ".join(f"{c} holds '{r}'" if r else f"{c} is free" for c, r in channels.items())
-
-
-def _table(data: Mapping[str, Any], key: str, known: Iterable[str]) -> dict[str, Any]:
-    """The sub-table `key` ("" for the top), with unknown keys refused."""
-    table = data.get(key, {}) if key else data
-    if not isinstance(table, Mapping):
-        _refuse(key, f"a table; got {table!r}")
-    names = list(known)
-    for name in table:
-        if name not in names:
-            near = difflib.get_close_matches(str(name), names, n=1)
-            hint = f" Did you mean '{near[0]}'?" if near else f" Known: {', '.join(names)}."
-            raise InputError(f"Unknown key '{name}'.{hint}", key=f"{key}.{name}".strip("."))
-    return dict(table)
-
-
-def _pitch(table: Mapping[str, Any], axis: str) -> Fraction:
-    given = [u for u in ("dpi", "um") if f"{axis}_{u}" in table]
-    if len(given) != 1:
-        _refuse(f"pitch.{axis}_um", f"exactly one of {axis}_dpi and {axis}_um")
-    key = f"{axis}_{given[0]}"
-    try:
-        value = Fraction(str(table[key]))
-    except (ValueError, ZeroDivisionError):
-        _refuse(f"pitch.{key}", f"a number or a fraction such as '127/3'; got {table[key]!r}")
-    if not value > 0:
-        _refuse(f"pitch.{key}", f"a number above 0; got {table[key]!r}")
-    return (_INCH_UM / value if given[0] == "dpi" else value) / 1000
-
-
-def _parsed(data: Mapping[str, Any]) -> dict[str, Any]:
-    """Constructor arguments from plain data."""
-    tables = ("pitch", "tray", "channels", "support", "minimum_mm", "process")
-    top = _table(data, "", ("format", "name", "invented", "note", *tables))
-    if top.get("format") != 1:
-        _refuse("format", f"1, the format number this version reads; got {top.get('format')!r}")
-    missing = [k for k in ("name", "pitch", "tray", "channels") if k not in top]
-    if missing:
-        raise InputError("This key is missing.", key=missing[0])
-    axes = ("x", "y", "layer")
-    pitch = _table(data, "pitch", [f"{a}_{u}" for a in axes for u in ("dpi", "um")])
-    layout = ("origin_corner", "row_direction", "polarity")
-    tray = _table(data, "tray", ("size_mm", "edge_margin_mm", *layout))
-    if "size_mm" not in tray:
-        raise InputError("This key is missing.", key="tray.size_mm")
-    support = _table(data, "support", ("channel", "policy", *SupportFigures.keys()))
-    sizes = _table(data, "minimum_mm", [f.name for f in dataclasses.fields(MinimumSizes)])
-    process = _table(data, "process", [f.name for f in dataclasses.fields(ProcessFigures)])
-    for key in ("swath_s", "layer_s"):
-        if key in process:
-            low, high = process[key]
-            process[key] = (float(low), float(high))
-    channels = top["channels"]
-    if not isinstance(channels, Mapping) or not all(isinstance(r, str) for r in channels.values()):
-        _refuse("channels", "a table of channel = 'resin name' (or '' for any)")
-    renamed = {"edge_margin_mm": "edge_margin", "size_mm": "tray_size"}
-    return {
-        "name": str(top["name"]),
-        "invented": bool(top.get("invented", False)),
-        "note": str(top.get("note", "")),
-        "pitch_x": _pitch(pitch, "x"),
-        "pitch_y": _pitch(pitch, "y"),
-        "layer": _pitch(pitch, "layer"),
-        **{renamed.get(k, k): v for k, v in tray.items()},
-        "channels": dict(channels),
-        **{f"support_{k}": str(v) for k, v in support.items() if k in ("channel", "policy")},
-        "support_sizes": SupportFigures.from_dict(support),
-        "minimum": MinimumSizes(**{k: float(v) for k, v in sizes.items()}),
-        "process": ProcessFigures(**process),
-    }
