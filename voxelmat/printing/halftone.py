@@ -37,6 +37,17 @@ _NOISE = 0.5
 _HEAD_START = 0.23
 
 
+def _fractions(part: AnyPart, resins: tuple[str, ...]) -> NDArray[np.float64]:
+    """Volume fractions, shape (palette, resins); zero for a resin that the part has none of."""
+    given = part.palette_fractions()
+    column = {m.name: c for c, m in enumerate(part.resins)}
+    out = np.zeros((len(given), len(resins)))
+    for q, name in enumerate(resins):
+        if name in column:
+            out[:, q] = given[:, column[name]]
+    return out
+
+
 def _axis(
     index: NDArray[np.float64], count: int
 ) -> tuple[NDArray[np.uint32], NDArray[np.float32], tuple[int, int]]:
@@ -69,7 +80,7 @@ class Slicer:
     part : Part or StoredPart
     raster : Raster
     resins : tuple of str
-        Each once; material number m is ``resins[m - 1]``.
+        Each once; material number m is ``resins[m - 1]``. The part need not have all of them.
     support : bool
         Draw support columns, as material ``len(resins) + 1``.
     seed : int
@@ -105,9 +116,8 @@ class Slicer:
         self.raster = raster
         self.n_channels = len(resins) + int(support)
         self.halftone = Halftone() if halftone is None else halftone
-        self.order = laying_order(part, resins, self.halftone)
-        column = {m.name: c for c, m in enumerate(part.resins)}
-        table = part.palette_fractions()[:, [column[r] for r in self.order]]
+        self.order = laying_order(part.resins, resins, self.halftone)
+        table = _fractions(part, self.order)
         self._fractions = table.astype(np.float32)
         self._pure = table.max(axis=1) == 1.0
         total = np.cumsum(table, axis=1)[:, :-1]

@@ -13,8 +13,7 @@ from voxelmat.model.halftone import Halftone
 from voxelmat.model.profile import PrintProfile
 from voxelmat.model.support_figures import DRAWN_SUPPORT, SUPPORT_POLICIES
 from voxelmat.printing.designed import used_resins
-from voxelmat.printing.halftone import INTERFACE_RULE
-from voxelmat.printing.mask import mask_digest
+from voxelmat.printing.order import halftone_method
 from voxelmat.printing.place import place
 from voxelmat.printing.raster import Raster
 from voxelmat.printing.support import outline_box, outline_source
@@ -24,7 +23,6 @@ __all__ = ["PART_KINDS", "PlacedPart", "PrintJob", "one_part_job", "placed"]
 
 #: What stands on a tray: a part of the design, a mark for identification, a witness coupon.
 PART_KINDS = ("part", "mark", "coupon")
-_HALFTONE = "3-D blue noise by void-and-cluster, 64^3 sites, 16 bit, skewed tiles"
 _ENCODER = "one-bit PNG, filter 0, deflate level 1"
 
 
@@ -180,11 +178,10 @@ class PrintJob:
         """The manifest's ``method`` entry."""
         return {
             "outline": "; ".join(dict.fromkeys(outline_source(p.part) for p in self.parts)),
-            "halftone": _HALFTONE,
-            "settings": dataclasses.asdict(self.halftone),
-            "mask_sha256": mask_digest(),
+            **halftone_method(
+                [m for p in self.parts for m in p.part.resins], self.resins, self.halftone
+            ),
             "seed": self.seed,
-            "interfaces": INTERFACE_RULE,
             "support": self.support,
             "encoder": _ENCODER,
         }

@@ -73,7 +73,7 @@ class InterfaceRamps:
     def __init__(
         self, part: AnyPart, raster: Raster, order: Sequence[str], halftone: Halftone
     ) -> None:
-        self._check_names(part, halftone)
+        self._check_names(order, halftone)
         axes = [a for a, _ in raster.part_axes()]
         self._spacing = np.array([part.grid.spacing[a] for a in axes])
         rank = {name: q + 1 for q, name in enumerate(order)}
@@ -116,9 +116,14 @@ class InterfaceRamps:
             self._pair_of[a + 1, b + 1] = self._pair_of[b + 1, a + 1] = number
 
     @staticmethod
-    def _check_names(part: AnyPart, halftone: Halftone) -> None:
+    def _check_names(order: Sequence[str], halftone: Halftone) -> None:
         for name in halftone.width_names:
-            part.resin(name)
+            if name not in order:
+                raise InputError(
+                    f"An interface width names resin '{name}', which is not printed; the printed "
+                    f"resins are {', '.join(sorted(order))}.",
+                    key="interface_width_mm",
+                )
 
     def plane(self, planes: DesignPlanes, k: int, extended: NDArray[np.uint16]) -> RampPlane:
         """The distances of one design plane.

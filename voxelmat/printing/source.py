@@ -32,7 +32,14 @@ class LayerSource(Protocol):
 
 def slicer_of(job: PrintJob, item: PlacedPart) -> Slicer:
     """The slicer of one placed part of a job."""
-    return Slicer(item.part, item.raster, job.resins, support=job.draws_support, seed=job.seed)
+    return Slicer(
+        item.part,
+        item.raster,
+        job.resins,
+        support=job.draws_support,
+        seed=job.seed,
+        halftone=job.halftone,
+    )
 
 
 def source_of(job: PrintJob) -> LayerSource:
@@ -51,8 +58,10 @@ def source_of(job: PrintJob) -> LayerSource:
 def deal(bits: NDArray[np.uint8], layer: int, row0: int, column0: int, n: int) -> NDArray[np.uint8]:
     """Deal the sites of one material among `n` channels.
 
-    Site (layer, row, column) of the tray's image goes to channel ``(layer + row + column) mod
-    n``, so what a site gets depends on nothing but its place.
+    Site (layer, row, column) of the tray's image goes to channel ``(layer // 2 + row // 2 +
+    column // 2) mod n``, so what a site gets depends on nothing but its place. Blocks of 2 x 2
+    x 2 sites, because single sites would fall in step with the checkerboard that an even
+    halftone is, and one channel would get it all.
 
     Parameters
     ----------
@@ -68,9 +77,9 @@ def deal(bits: NDArray[np.uint8], layer: int, row0: int, column0: int, n: int) -
         Disjoint; their union is `bits`.
     """
     rows, stride = bits.shape
-    columns = np.arange(stride * 8)
+    columns = (column0 + np.arange(stride * 8)) // 2
     combs = np.packbits(np.stack([columns % n == c for c in range(n)]), axis=1)
-    phase = (layer + row0 + column0 + np.arange(rows)) % n
+    phase = (layer // 2 + (row0 + np.arange(rows)) // 2) % n
     return np.stack([bits & combs[(channel - phase) % n] for channel in range(n)])
 
 
