@@ -235,3 +235,23 @@ def test_face_of_an_empty_part():
     empty = part.replace(labels=np.zeros((2, 2, 2), int))
     with pytest.raises(InputError, match="empty"):
         FaceRegion(name="f", side="z+").nodes(empty)
+
+
+@pytest.mark.parametrize("side", ["z+", "z-"])
+def test_a_side_whose_last_layer_is_thin_still_carries_a_load(side):
+    """The shape ends 0.3 of a voxel beyond the last full layer, as it mostly does."""
+    occupancy = np.full((4, 4, 5), 255, dtype=np.uint8)
+    thin = 4 if side == "z+" else 0
+    occupancy[:, :, thin] = 76
+    part = Part(
+        grid=VoxelGrid(shape=(4, 4, 5), spacing=(1.0, 1.0, 1.0)),
+        resins=(RESIN,),
+        palette=(EMPTY, Blend.pure(RESIN.name)),
+        labels=np.ones((4, 4, 5), dtype=np.uint16),
+        occupancy=occupancy,
+    )
+    region = FaceRegion(name="side", side=side)
+    faces = region.faces(part)
+    assert len(faces) == 16
+    assert set(faces.centre[:, 2]) == {4.0 if side == "z+" else 1.0}
+    assert region.nodes(part)[:, :, -1 if side == "z+" else 0].all()

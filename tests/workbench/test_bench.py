@@ -27,7 +27,7 @@ def test_a_line_of_the_script_does_it_again(bench, small_design):
     bench.sections["whole"].act("spacing", [2, 2.0, 2])
     (line,) = bench.script
     bench.undo()
-    exec(line, {"bench": bench})  # noqa: S102 (the very line that the screen shows)
+    exec(line, {"bench": bench})
     assert bench.design.spacing_mm == (2.0, 2.0, 2.0)
 
 

@@ -21,8 +21,10 @@ from voxelmat.printing.stack import write_stack
 from voxelmat.workbench import glprobe, hook
 from voxelmat.workbench import show as show_module
 from voxelmat.workbench import shown as shown_module
+from voxelmat.workbench import shownresult as result_module
 from voxelmat.workbench.glprobe import Probe, probe_gl
-from voxelmat.workbench.shown import of_part, of_result, picture_of
+from voxelmat.workbench.shown import of_part, picture_of
+from voxelmat.workbench.shownresult import of_result
 from voxelmat.workbench.sliceview import SliceView
 from voxelmat.workbench.voxfaces import coarser, cut_mask, quads_of
 from voxelmat.workflow.colours import palette_rgb
@@ -102,7 +104,7 @@ def test_a_large_part_is_thinned_and_it_is_said(made_up):
 
 
 def test_a_large_result_is_thinned_with_its_movement(made_up, monkeypatch):
-    monkeypatch.setattr(shown_module, "coarser", lambda part: coarser(part, largest=200))
+    monkeypatch.setattr(result_module, "coarser", lambda part: coarser(part, largest=200))
     result = made_up.made_up_result(made_up.grip(), made_up.palm_case())
     shown = of_result(result)
     assert "one voxel in 3 is drawn" in shown.note

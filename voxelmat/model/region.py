@@ -13,7 +13,7 @@ from numpy.typing import NDArray
 
 from voxelmat.errors import InputError
 from voxelmat.model.part import Part
-from voxelmat.model.surface import Faces, exposed_faces, visible_from
+from voxelmat.model.surface import Faces, carriers, exposed_faces, visible_from
 
 __all__ = [
     "BodyRegion",
@@ -283,7 +283,8 @@ class FaceRegion:
         """Axis, side, and the coordinate (mm) that the region ends at."""
         axis, side = parse_side(self.side, self.name)
         others = tuple(a for a in range(3) if a != axis)
-        layers = np.flatnonzero(part.solid.any(axis=others))
+        # Where a load can act; a thinner layer outside it belongs to the region too.
+        layers = np.flatnonzero(carriers(part).any(axis=others))
         if not len(layers):
             raise InputError(f"Region '{self.name}': the part is empty.")
         plane = int(layers[-1]) + 1 if side > 0 else int(layers[0])

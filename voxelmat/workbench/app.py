@@ -34,6 +34,8 @@ class Screen(Workbench):
         right.add_class("vm-right")
         self.widget = ipywidgets.Box([left, right])
         self.widget.add_class("vm-bench")
+        for section in self.sections.values():
+            section.opened()
 
     def close(self) -> None:
         """Stop all work and free the pictures; the draft stays beside the design file."""

@@ -17,6 +17,7 @@ from voxelmat.workbench.sections import sections_of
 from voxelmat.workflow.build import Built, build
 from voxelmat.workflow.draft import Draft
 from voxelmat.workflow.draft_keys import add_at, key_words, remove_at, set_at
+from voxelmat.workflow.shapecache import ShapeCache
 
 __all__ = ["Workbench"]
 
@@ -43,6 +44,7 @@ class Workbench:
 
     def __init__(self, design: str | Path) -> None:
         self.draft = Draft(design)
+        self.shapes = ShapeCache()
         self.jobs = Jobs(self._job_changed)
         self.script: list[str] = []
         self.message, self.message_is_bad = " ".join(self.draft.notices), False
@@ -105,7 +107,7 @@ class Workbench:
             design = self.design
             key = design.digest, design.name
             if self._built is None or self._built[0] != key:
-                self._built = (key, build(design, monitor=monitor))
+                self._built = (key, build(design, monitor=monitor, shapes=self.shapes))
             return self._built[1]
 
     @property

@@ -188,7 +188,7 @@ class Jobs:
                     target=self._serve, name="voxelmat-work", daemon=True
                 )
                 self._thread.start()
-            self._ready.notify()
+            self._ready.notify_all()
         return job
 
     def _serve(self) -> None:
@@ -202,6 +202,19 @@ class Jobs:
             job._run()
             with self._ready:
                 self.current = None
+                self._ready.notify_all()
+
+    def settle(self, timeout: float = 600.0) -> None:
+        """Wait until nothing waits or runs any more; how the work ended does not matter.
+
+        Raises
+        ------
+        TimeoutError
+            After `timeout` seconds.
+        """
+        with self._ready:
+            if not self._ready.wait_for(lambda: not self._queue and self.current is None, timeout):
+                raise TimeoutError(f"There is still work to do after {timeout:g} s.")
 
     def cancel_all(self) -> None:
         """Ask everything that waits or runs to stop."""
@@ -214,4 +227,4 @@ class Jobs:
         self.cancel_all()
         with self._ready:
             self._closed = True
-            self._ready.notify()
+            self._ready.notify_all()

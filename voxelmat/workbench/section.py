@@ -45,6 +45,9 @@ class Section(ABC):
     def design_changed(self) -> None:  # noqa: B027 (most sections keep nothing)
         """The design is another one now; drop what no longer holds. Called under no lock."""
 
+    def opened(self) -> None:  # noqa: B027 (most sections do nothing)
+        """The screen is up; start what is to run from the beginning."""
+
     def call(self, verb: str, **values: Any) -> Any:
         """Call one of the section's own verbs and note its line of code."""
         return self.bench.noted(

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from typing import TYPE_CHECKING
 
+from voxelmat.workbench.answers_section import AnswersSection
 from voxelmat.workbench.design_section import DesignSection
 from voxelmat.workbench.section import Section
 
@@ -15,4 +16,4 @@ __all__ = ["sections_of"]
 
 def sections_of(bench: Workbench) -> list[Section]:
     """One of each."""
-    return [DesignSection(bench)]
+    return [AnswersSection(bench), DesignSection(bench)]

@@ -16,7 +16,8 @@ from voxelmat.model.result import StaticResult
 from voxelmat.workbench.glprobe import probe_gl
 from voxelmat.workbench.hook import register
 from voxelmat.workbench.render import SIZE
-from voxelmat.workbench.shown import Shown, of_part, of_result
+from voxelmat.workbench.shown import Shown, of_part
+from voxelmat.workbench.shownresult import of_result
 from voxelmat.workbench.sliceview import SliceView
 from voxelmat.workbench.spaceview import SpaceView
 from voxelmat.workbench.theme import notice

@@ -9,15 +9,22 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from voxelmat.model.html import part_table, table
+from voxelmat.model.html import part_table
 from voxelmat.model.part import Part
-from voxelmat.model.result import StaticResult
 from voxelmat.units import number, quantity
 from voxelmat.workbench.voxfaces import Quads, coarser, cut_mask, quads_of
 from voxelmat.workflow.colours import palette_rgb, resin_colours
-from voxelmat.workflow.report_fields import magnification
 
-__all__ = ["Field", "Shown", "of_part", "of_result"]
+__all__ = [
+    "Field",
+    "Shown",
+    "material_field",
+    "of_part",
+    "picture_of",
+    "preview_words",
+    "scalar_field",
+    "slices_of",
+]
 
 AXES = "xyz"
 Rgb = NDArray[np.uint8]
@@ -99,7 +106,8 @@ def _material_legend(part: Part) -> dict[str, Any]:
     return {"items": items}
 
 
-def _material_field(part: Part) -> Field:
+def material_field(part: Part) -> Field:
+    """The materials of a part in their colours."""
     colours = palette_rgb(part)
 
     def slice_rgb(axis: str, index: int) -> Rgb:
@@ -157,7 +165,7 @@ def scalar_field(
     return Field(name=f"{name}, {unit}", slice_rgb=slice_rgb, legend=ramp), colour
 
 
-def _slices_of(part: Part) -> dict[str, Any]:
+def slices_of(part: Part) -> dict[str, Any]:
     """What `Shown` says of the slices of anything on a part's grid."""
     grid = part.grid
     span = [u - o for u, o in zip(grid.upper, grid.origin, strict=True)]
@@ -189,7 +197,8 @@ def _slices_of(part: Part) -> dict[str, Any]:
     }
 
 
-def _preview(step: int) -> str:
+def preview_words(step: int) -> str:
+    """What a picture says where only every n-th voxel is drawn."""
     return "" if step == 1 else f"; preview: one voxel in {step} is drawn, each way"
 
 
@@ -205,98 +214,9 @@ def of_part(part: Part) -> Shown:
     return Shown(
         title=part.name,
         html=part_table(part),
-        fields=(_material_field(part),),
+        fields=(material_field(part),),
         surface=surface,
         legend=_material_legend(part),
-        note=_preview(step).removeprefix("; "),
-        **_slices_of(part),
+        note=preview_words(step).removeprefix("; "),
+        **slices_of(part),
     )
-
-
-def _node_to_voxel(values: NDArray[np.float64]) -> NDArray[np.float64]:
-    """Mean over the eight corners of each voxel."""
-    for axis in range(3):
-        n = values.shape[axis] - 1
-        values = 0.5 * (
-            np.take(values, range(n), axis=axis) + np.take(values, range(1, n + 1), axis=axis)
-        )
-    return values
-
-
-def of_result(result: StaticResult) -> Shown:
-    """A solved load case: the deformed part coloured by how far it moved."""
-    part = result.part
-    moved = _node_to_voxel(result.size)
-    move, colour = scalar_field("displacement", "mm", moved, part.solid, "viridis")
-    stress, _ = scalar_field(
-        "von Mises stress", "MPa", result.von_mises, part.solid, "cividis", 4.0
-    )
-    factor = magnification(result)
-    drawn, step = coarser(part)
-    # Nodes of the coarser grid are every n-th of the part's; the last one may lie beyond it.
-    pick = [
-        np.minimum(np.arange(n + 1) * step, m)
-        for n, m in zip(drawn.grid.shape, part.grid.shape, strict=True)
-    ]
-    shift = factor * result.displacement[np.ix_(*pick)]
-    thin = moved[::step, ::step, ::step]
-
-    def surface(axis: str, share: float) -> tuple[Quads, Rgb]:
-        quads = quads_of(drawn, cut_mask(drawn, AXES.index(axis), share), shift)
-        return quads, colour(thin[tuple(quads.voxel.T)])
-
-    return Shown(
-        title=f"{part.name}, load case {result.load_case.name}",
-        html=result_table(result),
-        fields=(move, stress, _material_field(part)),
-        surface=surface,
-        legend=move.legend,
-        note=f"deformed {factor:g} times as much as in truth{_preview(step)}",
-        **_slices_of(part),
-    )
-
-
-def result_table(result: StaticResult) -> str:
-    """The figures of a result, with units."""
-    size = result.size
-    at = np.unravel_index(int(size.argmax()), size.shape)
-    place = [float(n[i]) for n, i in zip(result.part.grid.nodes(), at, strict=True)]
-    strain, turn = result.largest_strain, result.largest_rotation
-    rows = [
-        ["largest displacement", quantity(float(size.max()), "mm"), _at(place)],
-        *[
-            [f"mean movement along {k}", quantity(v, "mm"), ""]
-            for k, v in result.load_displacement.items()
-        ],
-        *[
-            [f"reaction of {k}", _vector(v) + " N", "along x, y, z"]
-            for k, v in result.reactions.items()
-        ],
-        ["largest strain", f"{number(100 * strain.value)} %", _at(strain.place_mm)],
-        ["largest rotation", f"{number(float(np.degrees(turn.value)))}°", _at(turn.place_mm)],
-        ["strain energy", quantity(result.energy, "mJ"), ""],
-        [
-            "solver",
-            f"{result.iterations} iterations",
-            f"residual {result.residual:.1e} of the load",
-        ],
-    ]
-    caption = f"{result.part.name}, load case '{result.load_case.name}'"
-    notes = "".join(f"<p>{_escape(c)}</p>" for c in result.cautions)
-    return table(["figure", "value", "note"], rows, caption) + notes
-
-
-def _escape(text: str) -> str:
-    from html import escape
-
-    return escape(text)
-
-
-def _vector(values: Any) -> str:
-    """Components; what is nothing beside the largest is 0."""
-    top = max(abs(v) for v in values)
-    return ", ".join(number(v if abs(v) > 1e-6 * top else 0.0) for v in values)
-
-
-def _at(place: Any) -> str:
-    return f"at {_vector(place)} mm"

@@ -30,6 +30,7 @@ from voxelmat.shape.repair import mend
 from voxelmat.shape.voxelise import grid_for
 from voxelmat.workflow.layout import apply_layout
 from voxelmat.workflow.resolve import Resolved, resolve
+from voxelmat.workflow.shapecache import ShapeCache, Shaped
 
 __all__ = ["Built", "build"]
 
@@ -73,7 +74,9 @@ class Built:
         return self.resolved.regions
 
 
-def build(design: Design | str | Path, *, monitor: Monitor = SILENT) -> Built:
+def build(
+    design: Design | str | Path, *, monitor: Monitor = SILENT, shapes: ShapeCache | None = None
+) -> Built:
     """Make a part from a design.
 
     Parameters
@@ -81,6 +84,9 @@ def build(design: Design | str | Path, *, monitor: Monitor = SILENT) -> Built:
     design : Design or path
         A design, or the design file.
     monitor : Monitor
+    shapes : ShapeCache, optional
+        Where voxelised shapes are kept between calls; a design whose bodies and voxels are those
+        of an earlier call is not voxelised again.
 
     Returns
     -------
@@ -98,12 +104,8 @@ def build(design: Design | str | Path, *, monitor: Monitor = SILENT) -> Built:
     if design.printing is not None:
         name = design.printing.profile
         profile = load_profile(design.file(name) if name.endswith(".toml") else name)
-    bodies, notes, cautions = _bodies(design, monitor)
-    grid = grid_for([b.mesh for b in bodies], design.spacing_mm, margin_voxels=design.margin_voxels)
-    _check_size(design, grid)
-    assembly = assemble(bodies, grid, gaps=_gap_rules(design), monitor=monitor)
-    for event in assembly.report:
-        (cautions if event.kind == "caution" else notes).append(event.message)
+    shaped = (shapes or ShapeCache()).get(design, lambda: _shaped(design, monitor))
+    assembly, notes, cautions = shaped
     part = _part(design, library, assembly)
     part = apply_layout(design, part)
     resolved = replace(resolve(design, part, monitor=monitor), bonds=library.bonds)
@@ -116,6 +118,17 @@ def build(design: Design | str | Path, *, monitor: Monitor = SILENT) -> Built:
         notes=(*notes, *library.notes, *resolved.notes),
         cautions=(*cautions, *resolved.cautions),
     )
+
+
+def _shaped(design: Design, monitor: Monitor) -> Shaped:
+    """The bodies on a grid, with what was found and mended."""
+    bodies, notes, cautions = _bodies(design, monitor)
+    grid = grid_for([b.mesh for b in bodies], design.spacing_mm, margin_voxels=design.margin_voxels)
+    _check_size(design, grid)
+    assembly = assemble(bodies, grid, gaps=_gap_rules(design), monitor=monitor)
+    for event in assembly.report:
+        (cautions if event.kind == "caution" else notes).append(event.message)
+    return Shaped(assembly, tuple(notes), tuple(cautions))
 
 
 #: Bytes a voxel of the grid below which no part can be made; a rough floor of ours.

@@ -126,7 +126,7 @@ function render({model, el}) {
     },
     group: s => element('div', {className: 'row group'}, ...s.controls.map(make)),
     table: s => {
-      const table = element('table', {className: 'data'},
+      const table = element('table', {className: s.stale ? 'data stale' : 'data'},
         element('caption', {textContent: s.caption}));
       const head = element('tr', {}, ...s.head.map(h => {
         const cell = element('th', {textContent: h}); cell.scope = 'col'; return cell; }));

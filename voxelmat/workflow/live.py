@@ -1,0 +1,131 @@
+"""Answers while a design is edited: coarse at first, in full when asked for."""
+
+from __future__ import annotations
+
+import time
+from collections.abc import Mapping
+from dataclasses import dataclass, field, replace
+
+from voxelmat.errors import InputError
+from voxelmat.fea.cases import solve_cases
+from voxelmat.fea.refine import ErrorEstimate, error_estimate
+from voxelmat.fea.resources import check_fits
+from voxelmat.model.design import Design
+from voxelmat.model.interface import InterfaceSpot
+from voxelmat.model.requirement import Verdict
+from voxelmat.model.result import StaticResult
+from voxelmat.monitor import SILENT, Monitor
+from voxelmat.workflow.build import Built, build
+from voxelmat.workflow.interfaces import interface_spots
+from voxelmat.workflow.shapecache import ShapeCache
+from voxelmat.workflow.verdicts import verdicts
+
+__all__ = ["LIVE_VOXELS", "Answers", "answer", "coarse_design", "live_answer"]
+
+#: Voxels of the grid that a live answer is computed on: 48^3.
+LIVE_VOXELS = 48**3
+_LIVE_TOLERANCE = 1e-5  # of the coarse solve; its grid is off by far more
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class Answers:
+    """What the load cases gave, and the requirements with it.
+
+    Attributes
+    ----------
+    built : Built
+    results : mapping of str to StaticResult
+        By load case.
+    verdicts : tuple of Verdict
+    interfaces : mapping of str to tuple
+        Worst places of each pair of resins, by load case.
+    errors : mapping of str to ErrorEstimate
+        By the voxel size; empty where not asked for.
+    coarsening : float
+        Voxel edges over those of the design; 1 where it is the design's own grid.
+    seconds : float
+    """
+
+    built: Built
+    results: Mapping[str, StaticResult]
+    verdicts: tuple[Verdict, ...]
+    interfaces: Mapping[str, tuple[InterfaceSpot, ...]]
+    coarsening: float
+    seconds: float
+    errors: Mapping[str, ErrorEstimate] = field(default_factory=dict)
+
+
+def coarse_design(design: Design, voxels: int, most: int = LIVE_VOXELS) -> tuple[Design, float]:
+    """The design on larger voxels, so that its grid has about `most` of them.
+
+    Parameters
+    ----------
+    design : Design
+    voxels : int
+        Of its own grid.
+    most : int
+
+    Returns
+    -------
+    tuple
+        The design, and how many times longer its voxels' edges are; 1 where it is small enough.
+    """
+    if voxels <= most:
+        return design, 1.0
+    factor = (voxels / most) ** (1 / 3)
+    x, y, z = (factor * s for s in design.spacing_mm)
+    data = {**design.data, "grid": {**design.data["grid"], "spacing_mm": [x, y, z]}}
+    return replace(design, spacing_mm=(x, y, z), data=data), factor
+
+
+def answer(
+    built: Built,
+    *,
+    coarsening: float = 1.0,
+    tol: float = 1e-8,
+    with_error: bool = False,
+    monitor: Monitor = SILENT,
+) -> Answers:
+    """Solve every load case of a built design and judge its requirements.
+
+    Raises
+    ------
+    InputError
+        If there is no load case, one has no support, or a region is empty.
+    ResourceError
+        If it would not fit into memory.
+    """
+    if not built.load_cases:
+        raise InputError(
+            "The design has no load case, so there is nothing to solve. Add one under Loads: "
+            "where it is held, and what acts on it."
+        )
+    started = time.perf_counter()
+    check_fits(built.part)
+    results = solve_cases(built.part, built.load_cases, tol=tol, monitor=monitor)
+    errors = {}
+    if with_error:
+        errors = {name: error_estimate(r, monitor=monitor) for name, r in results.items()}
+    return Answers(
+        built=built,
+        results=results,
+        verdicts=tuple(verdicts(built.resolved, built.part, results)),
+        interfaces={n: interface_spots(r, built.resolved.bonds) for n, r in results.items()},
+        coarsening=coarsening,
+        seconds=time.perf_counter() - started,
+        errors=errors,
+    )
+
+
+def live_answer(
+    design: Design,
+    voxels: int,
+    *,
+    shapes: ShapeCache | None = None,
+    most: int = LIVE_VOXELS,
+    monitor: Monitor = SILENT,
+) -> Answers:
+    """A quick answer on about `most` voxels; see `coarse_design` and `answer`."""
+    coarse, factor = coarse_design(design, voxels, most)
+    built = build(coarse, monitor=monitor, shapes=shapes)
+    return answer(built, coarsening=factor, tol=_LIVE_TOLERANCE, monitor=monitor)
