@@ -49,7 +49,7 @@ def test_no_load_case_and_no_support_are_said(bench):
     saved = bench.draft.data["load_case"][0]
     bench.set("load_case", [{k: v for k, v in saved.items() if k != "support"}])
     bench.jobs.settle(120)
-    with pytest.raises(InputError, match="support|held"):
+    with pytest.raises(InputError, match=r"support|held"):
         bench.answers.solve().wait(120)
     bench.answers.follow().wait(120)
     assert any("bad" in c.get("tone", "") for c in bench.answers.controls())

@@ -20,7 +20,6 @@ from voxelmat.printing.profile import load_profile
 from voxelmat.printing.stack import write_stack
 from voxelmat.workbench import glprobe, hook
 from voxelmat.workbench import show as show_module
-from voxelmat.workbench import shown as shown_module
 from voxelmat.workbench import shownresult as result_module
 from voxelmat.workbench.glprobe import Probe, probe_gl
 from voxelmat.workbench.shown import of_part, picture_of
