@@ -5,14 +5,19 @@ The table also keeps the grid in full double precision, for formats that hold le
 
 from __future__ import annotations
 
+import hashlib
 import json
-from collections.abc import Sequence
-from dataclasses import dataclass, field
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass, field, replace
 from pathlib import Path
 from typing import Any
 
+import numpy as np
+from numpy.typing import NDArray
+
 from voxelmat.errors import FileFormatError, InputError
 from voxelmat.io.atomic import write_json
+from voxelmat.io.axes import Straight
 from voxelmat.io.store import material_of
 from voxelmat.model.blend import Blend
 from voxelmat.model.grid import VoxelGrid
@@ -20,7 +25,8 @@ from voxelmat.model.material import Material
 from voxelmat.model.volume import Volume
 
 __all__ = [
-    "KEY", "LabelTable", "parse_table", "read_beside", "sidecar", "table_of", "write_beside",
+    "KEY", "LabelTable", "labelled", "parse_table", "read_beside", "sidecar", "table_of",
+    "write_beside",
 ]  # fmt: skip
 
 #: Name of the table inside a format's own metadata.
@@ -39,6 +45,7 @@ class LabelTable:
     resins: tuple[Material, ...] = ()
     grid: VoxelGrid | None = None
     name: str = "volume"
+    digest: str = ""
 
     def exact(
         self, shape: Sequence[int], spacing: Sequence[float], origin: Sequence[float]
@@ -82,7 +89,48 @@ def table_of(volume: Volume) -> dict[str, Any]:
         "grid": volume.grid.as_dict(),
         "labels": rows,
         "resins": [m.as_dict() for m in volume.resins],
+        "values_sha256": _digest(volume.values),
     }
+
+
+def _digest(values: NDArray[Any]) -> str:
+    """SHA-256 of the values, x fastest, little-endian."""
+    code = hashlib.sha256()
+    for k in range(values.shape[2]):
+        plane = np.ascontiguousarray(values[:, :, k].T)
+        code.update(plane.astype(plane.dtype.newbyteorder("<"), copy=False).data)
+    return code.hexdigest()
+
+
+def labelled(
+    path: Path,
+    turned: Straight,
+    table: LabelTable,
+    *,
+    names: Mapping[int, str] | None = None,
+    occupancy: NDArray[np.uint8] | None = None,
+    distance: NDArray[np.int8] | None = None,
+) -> Volume:
+    """Join what a format holds and what the table says.
+
+    Where the values are not those that the table was written with, its occupancy and distance no
+    longer belong to them; they are left out and a note says so.
+    """
+    volume = Volume(
+        grid=table.exact(turned.values.shape, turned.spacing, turned.origin),
+        values=turned.values,
+        names={**(names or {}), **table.names},
+        blends=table.blends,
+        resins=table.resins,
+        name=table.name if table.grid else path.name.split(".")[0],
+        source=path.name,
+    )
+    if not table.digest or table.digest == _digest(volume.values):
+        return replace(volume, occupancy=occupancy, distance=distance)
+    note = "The values were changed, or some are lost, since voxelmat wrote the file"
+    if occupancy is not None or distance is not None:
+        note += "; the partly full voxels and the signed distance were left out"
+    return replace(volume, notes=(note + ".",))
 
 
 def parse_table(text: str, file: str) -> LabelTable:
@@ -115,6 +163,7 @@ def parse_table(text: str, file: str) -> LabelTable:
                 origin=tuple(grid["origin_mm"]),
             ),
             name=str(data["name"]),
+            digest=str(data.get("values_sha256", "")),
         )
     except FileFormatError:
         raise

@@ -1,4 +1,4 @@
-"""Writes parts and results as VTI: the open XML image-data format that viewers of fields read.
+"""Writes parts, volumes and results as VTI: the open XML image-data format that viewers of fields read.
 
 One file holds a regular grid with arrays on its voxels (cell data) and on its corners (point
 data), each packed with zlib in blocks and appended as raw bytes after the XML head.
@@ -6,6 +6,7 @@ data), each packed with zlib in blocks and appended as raw bytes after the XML h
 
 from __future__ import annotations
 
+import json
 import zlib
 from collections.abc import Mapping
 from pathlib import Path
@@ -17,9 +18,11 @@ from numpy.typing import NDArray
 
 from voxelmat.errors import InputError
 from voxelmat.io.atomic import aside
+from voxelmat.io.label_table import KEY, table_of
 from voxelmat.model.grid import VoxelGrid
-from voxelmat.model.part import Part
+from voxelmat.model.part import DISTANCE_STEPS, Part
 from voxelmat.model.result import StaticResult
+from voxelmat.model.volume import Volume
 
 __all__ = ["write_vti"]
 
@@ -78,18 +81,36 @@ def _field(name: str, values: Array) -> _Field:
     return _Field(name, kind, names, _pack(np.ascontiguousarray(values, dtype=little)))
 
 
-def _part_fields(part: Part) -> dict[str, Array]:
-    fields: dict[str, Array] = {"label": part.labels}
-    if part.occupancy is not None:
-        fields["occupancy_of_255"] = part.occupancy
-    table = part.palette_fractions().astype(np.float32)
-    for column, resin in enumerate(part.resins):
-        if table[:, column].any():
-            fields[f"fraction_{resin.name}"] = table[:, column][part.labels]
-    if part.distance is not None:
-        step = min(part.grid.spacing) / 16.0
-        fields["distance_mm"] = part.distance.astype(np.float32) * np.float32(step)
+def _volume_fields(volume: Volume) -> dict[str, Array]:
+    if not volume.is_labels:
+        return {"value": volume.values}
+    labels = volume.values
+    fields: dict[str, Array] = {"label": labels}
+    if volume.occupancy is not None:
+        fields["occupancy_of_255"] = volume.occupancy
+    size = 1 + max(volume.blends, default=0)
+    for resin in volume.resins:
+        share = np.zeros(max(size, int(labels.max(initial=0)) + 1), dtype=np.float32)
+        for label, blend in volume.blends.items():
+            share[label] = blend.fraction(resin.name)
+        if share.any():
+            fields[f"fraction_{resin.name}"] = share[labels]
+    if volume.distance is not None:
+        step = min(volume.grid.spacing) / DISTANCE_STEPS
+        fields["distance_mm"] = volume.distance.astype(np.float32) * np.float32(step)
     return fields
+
+
+def _field_data(volume: Volume) -> list[str]:
+    """The label table as a text array of the whole data set: codes of characters, then 0."""
+    codes = " ".join(map(str, json.dumps(table_of(volume)).encode()))
+    return [
+        "    <FieldData>",
+        f'      <Array type="String" Name="{KEY}" NumberOfTuples="1" format="ascii">',
+        f"        {codes} 0",
+        "      </Array>",
+        "    </FieldData>",
+    ]
 
 
 def _result_fields(result: StaticResult) -> dict[str, Array]:
@@ -133,7 +154,8 @@ def _section(tag: str, fields: list[_Field], offset: int) -> tuple[list[str], in
     return [*lines, f"      </{tag}>"], offset
 
 
-def _head(grid: VoxelGrid, points: list[_Field], cells: list[_Field]) -> str:
+def _head(volume: Volume, points: list[_Field], cells: list[_Field]) -> str:
+    grid = volume.grid
     extent = " ".join(f"0 {n}" for n in grid.shape)
     origin, spacing = (" ".join(map(repr, v)) for v in (grid.origin, grid.spacing))
     on_points, offset = _section("PointData", points, 0)
@@ -144,6 +166,7 @@ def _head(grid: VoxelGrid, points: list[_Field], cells: list[_Field]) -> str:
             '<VTKFile type="ImageData" version="1.0" byte_order="LittleEndian" '
             'header_type="UInt64" compressor="vtkZLibDataCompressor">',
             f'  <ImageData WholeExtent="{extent}" Origin="{origin}" Spacing="{spacing}">',
+            *_field_data(volume),
             f'    <Piece Extent="{extent}">',
             *on_points,
             *on_cells,
@@ -156,13 +179,16 @@ def _head(grid: VoxelGrid, points: list[_Field], cells: list[_Field]) -> str:
 
 
 def write_vti(
-    source: Part | StaticResult, path: str | Path, *, extra: Mapping[str, Array] | None = None
+    source: Part | Volume | StaticResult,
+    path: str | Path,
+    *,
+    extra: Mapping[str, Array] | None = None,
 ) -> Path:
-    """Write a part or a result; the file is whole or not there.
+    """Write a part, a volume or a result; the file is whole or not there.
 
     Parameters
     ----------
-    source : Part or StaticResult
+    source : Part, Volume or StaticResult
         A part gives labels, occupancy, resin fractions and signed distance; a result also the
         displacement on the corners and stress, strain, von Mises stress and energy density on the
         voxels. Names carry the unit; lengths of the grid are mm.
@@ -186,13 +212,16 @@ def write_vti(
     path = Path(path)
     if path.suffix.lower() != ".vti":
         raise InputError("The name of a VTI file ends in .vti.", file=str(path))
-    part = source if isinstance(source, Part) else source.part
-    fields = _part_fields(part)
+    if isinstance(source, Volume):
+        volume = source
+    else:
+        volume = Volume.from_part(source if isinstance(source, Part) else source.part)
+    fields = _volume_fields(volume)
     if isinstance(source, StaticResult):
         fields |= _result_fields(source)
-    points, cells = _sorted_out(part.grid, fields | dict(extra or {}))
+    points, cells = _sorted_out(volume.grid, fields | dict(extra or {}))
     with aside(path) as temporary, temporary.open("wb") as handle:
-        handle.write(_head(part.grid, points, cells).encode())
+        handle.write(_head(volume, points, cells).encode())
         for field in (*points, *cells):
             handle.writelines(field.packed)
         handle.write(b"\n  </AppendedData>\n</VTKFile>\n")
