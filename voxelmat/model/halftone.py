@@ -83,6 +83,11 @@ class Halftone:
         pairs = () if isinstance(widths, float) else widths
         return tuple(sorted({name for pair, _ in pairs for name in pair}))
 
+    @property
+    def is_serial(self) -> bool:
+        """True where a layer needs those below it, so that the work cannot be shared out."""
+        return self.method == "error diffusion"
+
     def as_dict(self) -> dict[str, Any]:
         """Plain data; pairs as ``"a | b"``."""
         widths: Any = self._widths

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Iterator
 from dataclasses import dataclass
+from pathlib import Path
 from typing import Any
 
 import numpy as np
@@ -87,6 +88,8 @@ class Slicer:
         Moves the start of the blue-noise mask; the key of noise.
     halftone : Halftone, optional
         Blue noise and hard interfaces if left out.
+    support_file : Path, optional
+        Keeps the support field; see `DesignPlanes`.
 
     Attributes
     ----------
@@ -108,6 +111,7 @@ class Slicer:
         support: bool,
         seed: int,
         halftone: Halftone | None = None,
+        support_file: Path | None = None,
     ) -> None:
         if len(resins) > MOST_RESINS:
             raise InputError(
@@ -125,14 +129,15 @@ class Slicer:
         self._cumulative = np.ascontiguousarray(total.T.astype(np.float32))
         numbers = [resins.index(r) + 1 for r in self.order]
         self._numbers = np.array([*numbers, len(resins) + 1], dtype=np.uint8)
-        self._lay_out(part, support)
+        self._lay_out(part, support, support_file)
         self._set_up_noise(seed)
         self._set_up_ramps(part)
 
-    def _lay_out(self, part: AnyPart, support: bool) -> None:
+    def _lay_out(self, part: AnyPart, support: bool, support_file: Path | None) -> None:
         """Say where the planes come from and find the sites between voxels."""
         raster = self.raster
-        self.planes = DesignPlanes(part, raster, support=fill_columns if support else None)
+        fill = fill_columns if support else None
+        self.planes = DesignPlanes(part, raster, support=fill, support_file=support_file)
         true_shape = [part.grid.shape[a] for a, _ in raster.part_axes()]
         axes = [_axis(raster.image_index(part.grid, m), true_shape[m]) for m in range(3)]
         (self._layer_at, self._layer_w, self._layers_on_grid) = axes[0]

@@ -6,7 +6,7 @@ import hashlib
 import json
 import shutil
 import threading
-from collections.abc import Callable, Iterator, Sequence
+from collections.abc import Callable, Iterator, Mapping, Sequence
 from contextlib import contextmanager
 from dataclasses import dataclass
 from pathlib import Path
@@ -29,6 +29,15 @@ class LayerRecord:
     layer: int
     sha256: tuple[str, ...]
     sites: tuple[int, ...]
+
+    def as_dict(self) -> dict[str, Any]:
+        """Plain data."""
+        return {"layer": self.layer, "sha256": list(self.sha256), "sites": list(self.sites)}
+
+    @classmethod
+    def from_dict(cls, data: Mapping[str, Any]) -> LayerRecord:
+        """The inverse of `as_dict`; `LookupError` or `TypeError` for anything else."""
+        return cls(data["layer"], tuple(data["sha256"]), tuple(data["sites"]))
 
 
 @contextmanager
@@ -150,7 +159,7 @@ class Journal:
         if not self.done:
             _remove(partial)
         partial.mkdir(exist_ok=True)
-        lines = [head, *(_as_dict(r) for r in self.done.values())]
+        lines = [head, *(r.as_dict() for r in self.done.values())]
         fresh = partial / _FRESH
         fresh.write_text("".join(json.dumps(line) + "\n" for line in lines), encoding="utf-8")
         fresh.replace(partial / JOURNAL)
@@ -170,8 +179,7 @@ class Journal:
             return found
         for line in lines[1:]:
             try:
-                entry = json.loads(line)
-                record = LayerRecord(entry["layer"], tuple(entry["sha256"]), tuple(entry["sites"]))
+                record = LayerRecord.from_dict(json.loads(line))
             except (ValueError, KeyError, TypeError):
                 continue  # the line that was being written when the run was stopped
             if self._intact(record):
@@ -194,14 +202,10 @@ class Journal:
     def add(self, record: LayerRecord) -> None:
         """Note a layer whose files are written."""
         with self._lock:
-            self._handle.write(json.dumps(_as_dict(record)) + "\n")
+            self._handle.write(json.dumps(record.as_dict()) + "\n")
             self._handle.flush()
             self.done[record.layer] = record
 
     def close(self) -> None:
         """Close the journal's file; the folder stays for a later run."""
         self._handle.close()
-
-
-def _as_dict(record: LayerRecord) -> dict[str, Any]:
-    return {"layer": record.layer, "sha256": list(record.sha256), "sites": list(record.sites)}

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterator, Sequence
+from pathlib import Path
 from typing import Protocol
 
 import numpy as np
@@ -30,8 +31,9 @@ class LayerSource(Protocol):
         """Layers ``first`` to ``last - 1``, each uint8 (materials, rows, ceil(columns / 8))."""
 
 
-def slicer_of(job: PrintJob, item: PlacedPart) -> Slicer:
-    """The slicer of one placed part of a job."""
+def slicer_of(job: PrintJob, item: PlacedPart, scratch: Path | None = None) -> Slicer:
+    """The slicer of one placed part of a job; its support field goes to `scratch`, if given."""
+    number = job.parts.index(item)
     return Slicer(
         item.part,
         item.raster,
@@ -39,11 +41,19 @@ def slicer_of(job: PrintJob, item: PlacedPart) -> Slicer:
         support=job.draws_support,
         seed=job.seed,
         halftone=job.halftone,
+        support_file=None if scratch is None else scratch / f"support-{number}.raw",
     )
 
 
-def source_of(job: PrintJob) -> LayerSource:
+def source_of(job: PrintJob, scratch: Path | None = None) -> LayerSource:
     """The source of all layers of a job.
+
+    Parameters
+    ----------
+    job : PrintJob
+    scratch : Path, optional
+        Folder that keeps the support fields, to be shared by several processes; fields that
+        are there are taken as they are.
 
     Raises
     ------
@@ -52,7 +62,7 @@ def source_of(job: PrintJob) -> LayerSource:
     """
     if len(job.parts) > 1 or job.window != job.parts[0].raster:
         raise InputError(f"Only one part can be sliced at once; the job has {len(job.parts)}.")
-    return slicer_of(job, job.parts[0])
+    return slicer_of(job, job.parts[0], scratch)
 
 
 def deal(bits: NDArray[np.uint8], layer: int, row0: int, column0: int, n: int) -> NDArray[np.uint8]:
@@ -60,8 +70,8 @@ def deal(bits: NDArray[np.uint8], layer: int, row0: int, column0: int, n: int) -
 
     Site (layer, row, column) of the tray's image goes to channel ``(layer // 2 + row // 2 +
     column // 2) mod n``, so what a site gets depends on nothing but its place. Blocks of 2 x 2
-    x 2 sites, because single sites would fall in step with the checkerboard that an even
-    halftone is, and one channel would get it all.
+    x 2 sites, because single sites fall in step with the checkerboard that an even halftone
+    nearly is, and share up to twice as unevenly.
 
     Parameters
     ----------

@@ -15,13 +15,13 @@ from voxelmat.model.halftone import Halftone
 from voxelmat.model.profile import PrintProfile
 from voxelmat.monitor import SILENT, Monitor
 from voxelmat.printing.designed import designed_volumes
-from voxelmat.printing.imagefiles import ImageFiles
 from voxelmat.printing.job import PrintJob, one_part_job
 from voxelmat.printing.journal import Journal, locked, publish, refuse_foreign, retired
 from voxelmat.printing.manifest import FORMAT, FORMAT_NUMBER, image_entry, write_manifest
 from voxelmat.printing.readback import Stack, read_stack
 from voxelmat.printing.source import Dealer, source_of
-from voxelmat.printing.writer import LayerWriter, write_layers
+from voxelmat.printing.workers import write_apart
+from voxelmat.printing.writer import LayerWriter, image_files, write_layers
 from voxelmat.provenance import Provenance, utc_now
 
 __all__ = ["write_job", "write_stack"]
@@ -41,7 +41,9 @@ def write_stack(
     monitor: Monitor = SILENT,
     resume: bool = True,
     inputs: Mapping[str, str] | None = None,
+    workers: int = 1,
     threads: int | None = None,
+    scheduler: str | None = None,
     slab: int = 16,
 ) -> Stack:
     """Slice and halftone one part into a folder of images; `write_job` for a whole tray.
@@ -63,7 +65,7 @@ def write_stack(
     halftone : Halftone, optional
     notes : mapping, optional
         Plain data for the manifest.
-    monitor, resume, inputs, threads, slab
+    monitor, resume, inputs, workers, threads, scheduler, slab
         As for `write_job`.
 
     Returns
@@ -88,7 +90,15 @@ def write_stack(
         notes=notes,
     )
     return write_job(
-        job, folder, monitor=monitor, resume=resume, inputs=inputs, threads=threads, slab=slab
+        job,
+        folder,
+        monitor=monitor,
+        resume=resume,
+        inputs=inputs,
+        workers=workers,
+        threads=threads,
+        scheduler=scheduler,
+        slab=slab,
     )
 
 
@@ -99,7 +109,9 @@ def write_job(
     monitor: Monitor = SILENT,
     resume: bool = True,
     inputs: Mapping[str, str] | None = None,
+    workers: int = 1,
     threads: int | None = None,
+    scheduler: str | None = None,
     slab: int = 16,
 ) -> Stack:
     """Slice and halftone a tray into one folder of images.
@@ -117,8 +129,16 @@ def write_job(
         of the same job is checked and returned as it is.
     inputs : mapping, optional
         Names of input files and their SHA-256, for the manifest.
-    threads, slab : int
-        Workers (all cores if left out) and layers a unit of work. Neither changes a bit.
+    workers : int
+        Processes; more than one are started anew and have one thread each, so that memory is
+        bounded a worker. A script that asks for them needs ``if __name__ == "__main__"``.
+    threads : int, optional
+        Threads of a single process; all cores if left out.
+    scheduler : str, optional
+        Address of a dask.distributed scheduler, ``tcp://host:port``, whose workers write the
+        layers instead. They need the same versions and see the folders under the same paths.
+    slab : int
+        Layers a unit of work. Neither it nor the workers change a bit.
 
     Returns
     -------
@@ -137,32 +157,35 @@ def write_job(
     folder = Path(folder).absolute()
     if not folder.name:
         raise InputError(f"'{folder}' cannot be the folder of a stack; name a new one.")
-    if slab < 1 or (threads is not None and threads < 1):
-        raise InputError(f"Threads and slab are at least 1; got {threads} and {slab}.")
+    _check_counts(workers, threads, slab)
     started = utc_now()
     inputs = dict(inputs or {})
     digest = job.digest(inputs)
-    workers = _workers(threads)
+    apart = workers > 1 or scheduler is not None
+    threads = workers if apart else _cores(threads)
     with locked(folder):
         for target in (folder, retired(folder)):
             refuse_foreign(target)
         finished = _finished(folder, digest) if resume else None
         if finished is not None:
             return finished
-        source = source_of(job)
         partial = folder.with_name(f"{folder.name}.partial")
         with _disk_errors(partial):
-            images = ImageFiles(job.window, job.channel_names, job.profile.polarity)
+            images = image_files(job)
             journal = Journal(partial, digest, images.folders, images.names, resume=resume)
             try:
-                writer = LayerWriter(source, Dealer(job), images, journal)
-                write_layers(writer, monitor, workers, slab)
+                size = images.n_layers if job.halftone.is_serial else slab
+                if apart:
+                    write_apart(job, folder, journal, monitor, workers, scheduler, size)
+                else:
+                    writer = LayerWriter(source_of(job), Dealer(job), images, journal)
+                    write_layers(writer, monitor, threads, size)
             finally:
                 journal.close()
             provenance = Provenance(
                 inputs=inputs,
                 seed=job.seed,
-                threads=workers,
+                threads=threads,
                 started_utc=started,
                 finished_utc=utc_now(),
             )
@@ -171,7 +194,18 @@ def write_job(
         return read_stack(folder)
 
 
-def _workers(threads: int | None) -> int:
+def _check_counts(workers: int, threads: int | None, slab: int) -> None:
+    if min(slab, workers, 1 if threads is None else threads) < 1:
+        raise InputError(
+            f"Workers, threads and slab are at least 1; got {workers}, {threads} and {slab}."
+        )
+    if workers > 1 and threads not in (None, 1):
+        raise InputError(
+            f"Each of several workers has one thread; got {workers} workers and {threads} threads."
+        )
+
+
+def _cores(threads: int | None) -> int:
     if threads is not None:
         return threads
     return len(os.sched_getaffinity(0)) if hasattr(os, "sched_getaffinity") else os.cpu_count() or 1

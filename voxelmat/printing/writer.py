@@ -8,10 +8,11 @@ from concurrent.futures import FIRST_COMPLETED, Future, ThreadPoolExecutor, wait
 from voxelmat.errors import Cancelled
 from voxelmat.monitor import Monitor
 from voxelmat.printing.imagefiles import ImageFiles
+from voxelmat.printing.job import PrintJob
 from voxelmat.printing.journal import Journal
 from voxelmat.printing.source import Dealer, LayerSource
 
-__all__ = ["LayerWriter", "write_layers"]
+__all__ = ["LayerWriter", "image_files", "missing_slabs", "write_layers"]
 
 
 class LayerWriter:
@@ -49,11 +50,16 @@ class LayerWriter:
             self.journal.add(self._images.write(self.journal.partial, layer, dealt))
 
 
-def _missing_slabs(writer: LayerWriter, size: int) -> list[tuple[int, int]]:
+def image_files(job: PrintJob) -> ImageFiles:
+    """The files that a job's layers go to."""
+    return ImageFiles(job.window, job.channel_names, job.profile.polarity)
+
+
+def missing_slabs(journal: Journal, n_layers: int, size: int) -> list[tuple[int, int]]:
     """Runs of layers that are still to be written, cut to `size`."""
     slabs: list[tuple[int, int]] = []
-    for layer in range(writer.n_layers):
-        if layer in writer.journal.done:
+    for layer in range(n_layers):
+        if layer in journal.done:
             continue
         if slabs and slabs[-1][1] == layer and layer - slabs[-1][0] < size:
             slabs[-1] = (slabs[-1][0], layer + 1)
@@ -70,7 +76,7 @@ def write_layers(writer: LayerWriter, monitor: Monitor, threads: int, size: int)
     pool = ThreadPoolExecutor(threads, thread_name_prefix="voxelmat-slice")
     try:
         open_: set[Future[None]] = {
-            pool.submit(writer.slab, a, b) for a, b in _missing_slabs(writer, size)
+            pool.submit(writer.slab, a, b) for a, b in missing_slabs(writer.journal, total, size)
         }
         while open_:
             finished, open_ = wait(open_, timeout=0.25, return_when=FIRST_COMPLETED)
