@@ -136,32 +136,44 @@ class NumpySlicer:
         spread = np.where(known, f, -1).max(axis=0) - np.where(known, f, 2).min(axis=0)
         return ~same & (self.pure[corner].any(axis=0) | (spread >= np.float32(0.5)).any(axis=-1))
 
-    def sites(self, layer):
-        """Material number of every pixel of one layer."""
-        rows, columns = self.raster.image_shape[1:]
-        n_resins = self.table.shape[1]
-        if not self.on_grid[0][layer]:
-            return np.zeros((rows, columns), np.uint8)
+    def cumulative(self, layer):
+        """Summed fractions at every pixel of one layer, all resins but the last."""
         low, high, w = (v[layer] for v in self.axes[0])
-        wo = np.float32(w >= 0.5) if self.stepped else w
-        inside = []
-        for field in self.fields:
-            a, b = field[low].astype(np.float32), field[high].astype(np.float32)
-            level = self.along_plane(a + wo * (b - a), self.stepped)
-            inside.append((level < 0) & self.on_grid[1][:, None] & self.on_grid[2])
         hard = self.hard_cells(self.labels[low], self.labels[high])
         hard = hard[np.ix_(self.axes[1][0], self.axes[2][0])]
         nearest = [np.where(v[2] >= 0.5, v[1], v[0]) for v in self.axes[1:]]
         near = self.labels[high if w >= 0.5 else low][np.ix_(*nearest)]
-        threshold = self.threshold(layer)
-        site = np.full((rows, columns), self.numbers[0], np.uint8)
-        for m in range(n_resins - 1):
+        for m in range(self.table.shape[1] - 1):
             a, b = self.total[self.labels[low], m], self.total[self.labels[high], m]
-            value = np.where(hard, self.total[near, m], self.along_plane(a + w * (b - a), False))
+            yield np.where(hard, self.total[near, m], self.along_plane(a + w * (b - a), False))
+
+    def inside(self, layer):
+        """Pixels of one layer inside the part, and inside part or support."""
+        low, high, w = (v[layer] for v in self.axes[0])
+        wo = np.float32(w >= 0.5) if self.stepped else w
+        out = []
+        for field in self.fields:
+            a, b = field[low].astype(np.float32), field[high].astype(np.float32)
+            level = self.along_plane(a + wo * (b - a), self.stepped)
+            out.append((level < 0) & self.on_grid[1][:, None] & self.on_grid[2])
+        return out
+
+    def chosen(self, layer, inside):
+        """The resin of every pixel of one layer, as its material number."""
+        threshold = self.threshold(layer)
+        site = np.full(threshold.shape, self.numbers[0], np.uint8)
+        for m, value in enumerate(self.cumulative(layer)):
             site[threshold >= value] = self.numbers[m + 1]
-        out = np.where(inside[0], site, 0)
+        return site
+
+    def sites(self, layer):
+        """Material number of every pixel of one layer."""
+        if not self.on_grid[0][layer]:
+            return np.zeros(self.raster.image_shape[1:], np.uint8)
+        inside = self.inside(layer)
+        out = np.where(inside[0], self.chosen(layer, inside[0]), 0)
         if self.support:
-            out = np.where(inside[1] & ~inside[0], n_resins + 1, out)
+            out = np.where(inside[1] & ~inside[0], self.table.shape[1] + 1, out)
         return out.astype(np.uint8)
 
     def bits(self, layer):

@@ -42,8 +42,8 @@ def deal_sites(sites, start, count, table):
 
     sites u8 [rows, columns], start i64 [3] layer, row and column of the first site on the tray,
     count u8 [256] channels of each number (1 leaves it), table u8 [256, most] the channels.
-    Blocks of 2 x 2 x 2 sites take the channels in turn along x, y and z: single sites would fall
-    in step with the checkerboard that an even halftone is, and one channel would get it all.
+    Blocks of 2 x 2 x 2 sites take the channels in turn along x, y and z: single sites fall in step
+    with the checkerboard that an even halftone nearly is, and share up to twice as unevenly.
     """
     for y in range(sites.shape[0]):
         phase = (start[0] >> 1) + ((start[1] + y) >> 1)
