@@ -64,7 +64,23 @@ def _parser() -> argparse.ArgumentParser:
             help=f"where results go, and where an interrupted run goes on (default: {out})",
         )
 
-    design(command("run", "do everything: part, optimise, solve, stack, check, report"))
+    def writes(sub: argparse.ArgumentParser) -> None:
+        sub.add_argument(
+            "--workers",
+            type=int,
+            default=1,
+            metavar="N",
+            help="processes that write layers (default: 1, with a thread a core)",
+        )
+        sub.add_argument(
+            "--scheduler",
+            metavar="ADDRESS",
+            help="a dask.distributed scheduler, tcp://host:port, whose workers write layers",
+        )
+
+    sub = command("run", "do everything: part, optimise, solve, stack, check, report")
+    design(sub)
+    writes(sub)
     sub = command("solve", "solve the load cases and judge the requirements")
     design(sub)
     sub.add_argument(
@@ -73,7 +89,9 @@ def _parser() -> argparse.ArgumentParser:
         help="also write each result as a VTK image file (.vti) into the folder",
     )
     design(command("optimise", "choose blends and where material goes"))
-    design(command("stack", "write the bitmap stacks, read them back and check them"))
+    sub = command("stack", "write the bitmap stacks, read them back and check them")
+    design(sub)
+    writes(sub)
     sub = command("preflight", "check a stack that is on disk")
     sub.add_argument("stack", type=Path, metavar="STACK")
     sub.add_argument(

@@ -32,12 +32,21 @@ def _stages(
     monitor: Monitor,
     *,
     vti: bool = False,
+    workers: int = 1,
+    scheduler: str | None = None,
 ) -> Answer:
     from voxelmat.workflow.answer import summary_lines
     from voxelmat.workflow.pipeline import STAGES
     from voxelmat.workflow.pipeline import run as run_stages
 
-    result = run_stages(design, out, stages=STAGES if stages is None else stages, monitor=monitor)
+    result = run_stages(
+        design,
+        out,
+        stages=STAGES if stages is None else stages,
+        monitor=monitor,
+        workers=workers,
+        scheduler=scheduler,
+    )
     lines = summary_lines(
         result.data, stack=result.stack, report=result.report, folder=result.folder
     )
@@ -59,9 +68,11 @@ def _write_vti(results: Mapping[str, StaticResult], out: Path) -> list[Path]:
     return made
 
 
-def run(*, design: Path, out: Path, monitor: Monitor) -> Answer:
+def run(
+    *, design: Path, out: Path, workers: int, scheduler: str | None, monitor: Monitor
+) -> Answer:
     """Everything."""
-    return _stages(design, out, None, monitor)
+    return _stages(design, out, None, monitor, workers=workers, scheduler=scheduler)
 
 
 def solve(*, design: Path, out: Path, vti: bool, monitor: Monitor) -> Answer:
@@ -80,7 +91,9 @@ def optimise(*, design: Path, out: Path, monitor: Monitor) -> Answer:
     return _stages(design, out, ("optimise", "solve"), monitor)
 
 
-def stack(*, design: Path, out: Path, monitor: Monitor) -> Answer:
+def stack(
+    *, design: Path, out: Path, workers: int, scheduler: str | None, monitor: Monitor
+) -> Answer:
     """The stacks, written, read back and checked."""
     if load_design(design).printing is None:
         raise InputError(
@@ -88,7 +101,8 @@ def stack(*, design: Path, out: Path, monitor: Monitor) -> Answer:
             file=str(design),
             key="print",
         )
-    return _stages(design, out, ("optimise", "stack"), monitor)
+    stages = ("optimise", "stack")
+    return _stages(design, out, stages, monitor, workers=workers, scheduler=scheduler)
 
 
 def report(*, design: Path, out: Path, monitor: Monitor) -> Answer:

@@ -128,6 +128,8 @@ def run(
     *,
     stages: Sequence[str] = STAGES,
     monitor: Monitor = SILENT,
+    workers: int = 1,
+    scheduler: str | None = None,
 ) -> RunResult:
     """Do the whole job, or some of its stages.
 
@@ -140,6 +142,8 @@ def run(
     stages : sequence of str
         Some of `STAGES`; the order does not matter.
     monitor : Monitor
+    workers, scheduler
+        Who writes the layers; see `voxelmat.printing.stack.write_job`.
 
     Returns
     -------
@@ -159,16 +163,27 @@ def run(
     unknown = [s for s in stages if s not in STAGES]
     if unknown:
         raise InputError(f"There is no stage {unknown[0]!r}; use some of {', '.join(STAGES)}.")
+    if workers < 1:
+        raise InputError(f"At least one worker writes the layers; got {workers}.", key="workers")
     folder = Path(folder)
     with _held(folder):
-        return _Run(folder, frozenset(stages), monitor).all(design)
+        return _Run(folder, frozenset(stages), monitor, workers, scheduler).all(design)
 
 
 class _Run:
     """One run: carries the folder, the monitor and the clock from stage to stage."""
 
-    def __init__(self, folder: Path, stages: frozenset[str], monitor: Monitor) -> None:
+    def __init__(
+        self,
+        folder: Path,
+        stages: frozenset[str],
+        monitor: Monitor,
+        workers: int,
+        scheduler: str | None,
+    ) -> None:
         self.folder = folder
+        self.workers = workers
+        self.scheduler = scheduler
         self.stages = stages
         self.monitor = monitor
         self.clock = _Clock()
@@ -204,7 +219,8 @@ class _Run:
 
     def _designed(self, built: Built) -> DesignResult | None:
         """The optimised design, taken up from its checkpoint where there is one."""
-        if built.design.optimise is None or "optimise" not in self.stages:
+        asked = built.design.optimise
+        if asked is None or asked.skip or "optimise" not in self.stages:
             return None
         with self.clock.stage("optimise"):
             found = optimised(built, checkpoint=self.folder / "optimise.npz", monitor=self.monitor)
@@ -262,6 +278,8 @@ class _Run:
                 seed=built.design.seed,
                 monitor=self.monitor,
                 inputs=built.design.inputs,
+                workers=self.workers,
+                scheduler=self.scheduler,
             )
             stack = read_stack(folder)
         with self.clock.stage("preflight"):
