@@ -105,6 +105,7 @@ def _parser() -> argparse.ArgumentParser:
         help="where the design's run left its part (default: out)",
     )
     design(command("report", "write the report of what a run left in its folder"))
+    _add_convert(command("convert", "turn a part or a volume file into another open format"))
     command("warm", "compile all inner loops ahead, so that the first run need not")
     sub = command("materials", "show the resin library")
     sub.add_argument(
@@ -126,9 +127,29 @@ def _parser() -> argparse.ArgumentParser:
     return parser
 
 
+def _add_convert(sub: argparse.ArgumentParser) -> None:
+    sub.add_argument(
+        "source", type=Path, metavar="IN", help="part.npz, the folder of a run, or a volume file"
+    )
+    sub.add_argument(
+        "target",
+        type=Path,
+        metavar="OUT",
+        help="ends in .3mf, .vti, .nrrd, .nii, .nii.gz, .ome.zarr, or .stl (a surface a label)",
+    )
+    sub.add_argument("--unit", metavar="UNIT", help="unit of length of IN, where it does not say")
+    sub.add_argument("--field", metavar="NAME", help="which array, property or labels of IN")
+    sub.add_argument(
+        "--smooth", type=int, default=0, metavar="N", help="rounds of smoothing of STL surfaces"
+    )
+    sub.add_argument(
+        "--design", type=Path, metavar="DESIGN.toml", help="where IN was made with its own curves"
+    )
+
+
 def _dispatch(options: argparse.Namespace) -> Answer:
     from voxelmat.console import ConsoleMonitor
-    from voxelmat.workflow import commands
+    from voxelmat.workflow import commands, convert_commands
 
     calls: dict[str, Callable[..., Answer]] = {
         "run": commands.run,
@@ -139,10 +160,11 @@ def _dispatch(options: argparse.Namespace) -> Answer:
         "report": commands.report,
         "materials": commands.materials,
         "warm": commands.warm,
+        "convert": convert_commands.convert,
     }
     given = {k: v for k, v in vars(options).items() if k not in ("command", "json", "quiet")}
     with ConsoleMonitor(quiet=options.quiet) as monitor:
-        if options.command not in ("materials", "warm") and not _compiled():
+        if options.command not in ("materials", "warm", "convert") and not _compiled():
             monitor.say("First run here: the inner loops are compiled, once; about half a minute.")
         return calls[options.command](monitor=monitor, **given)
 

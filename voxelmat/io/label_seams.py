@@ -56,7 +56,7 @@ def octants(padded: Labels, nodes: NDArray[np.int64]) -> Labels:
     """The eight labels round each node, (n, 2, 2, 2); low side first."""
     out = np.zeros((len(nodes), 2, 2, 2), dtype=np.uint16)
     for a, b, c in np.ndindex(2, 2, 2):
-        out[:, a, b, c] = padded[tuple((nodes + (a, b, c)).T)]
+        out[:, a, b, c] = padded[tuple((nodes + np.array([a, b, c])).T)]
     return out
 
 

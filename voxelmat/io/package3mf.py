@@ -125,8 +125,10 @@ def _root_unit(file: Path, model: bytes) -> str:
         )
     for prefix in root.get(b"requiredextensions", b"").split():
         space = root.get(b"xmlns:" + prefix, prefix).decode(errors="replace")
-        # Materials only colour a mesh; production only spreads it over several parts.
-        if "material" not in space.lower() and "production" not in space.lower():
+        # Materials only colour a mesh, production only spreads it over several parts, and what is
+        # inside a mesh (volumetric, with implicit functions) leaves its outline as it is.
+        known = ("material", "production", "/volumetric/", "/implicit/")
+        if not any(word in space.lower() for word in known):
             raise FileFormatError(
                 f"{file.name} needs the 3MF extension '{space}', which is not read. Export the "
                 "part as a plain mesh."

@@ -1,4 +1,4 @@
-"""Writes parts, volumes and results as VTI: the open XML image-data format that viewers of fields read.
+"""Writes parts, volumes and results as VTI: the open XML image data that viewers read.
 
 One file holds a regular grid with arrays on its voxels (cell data) and on its corners (point
 data), each packed with zlib in blocks and appended as raw bytes after the XML head.

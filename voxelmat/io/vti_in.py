@@ -189,8 +189,9 @@ def _choose(image: Any, wanted: str | None, name: str) -> tuple[str, Any, dict[s
     if wanted is None and len(names) == 1:
         kind = next(k for k, nodes in found.items() if nodes)
         return kind, found[kind][names[0]], found[kind]
+    held = ", ".join(names) or "none with one value a voxel"
     raise InputError(
-        f"Say which array is to be read; the file holds {', '.join(names) or 'none with one value'}.",
+        f"Say which array is to be read; the file holds {held}.",
         file=name,
         key="field",
     )
