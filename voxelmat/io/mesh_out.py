@@ -26,7 +26,8 @@ def _slug(volume: Volume, label: int) -> str:
 def _notes(volume: Volume, surfaces: LabelSurfaces, smooth: int, worst: float) -> list[str]:
     notes = [
         "STL holds single precision and no unit: the numbers are mm.",
-        f"The volume of a surface differs by at most {number(worst)} mm3 from that of its voxels.",
+        f"The volume of a surface differs by at most {number(100 * worst)} % from that of its "
+        "voxels.",
     ]
     if not smooth:
         notes.append("Surfaces follow the voxels' faces, so slopes show steps.")
@@ -88,7 +89,7 @@ def write_label_stl(
             slug = _slug(volume, label)
             mesh = surfaces.of(label, volume.names.get(label, f"label {label}"))
             voxels = float(counts[label]) * volume.grid.voxel_volume
-            worst = max(worst, abs(mesh.volume - voxels))
+            worst = max(worst, abs(mesh.volume / voxels - 1.0))
             made.append(path.with_name(f"{path.stem}.{label}-{slug}.stl"))
             write_stl(mesh, stack.enter_context(aside(made[-1])))
     return tuple(made), tuple(_notes(volume, surfaces, smooth, worst))

@@ -153,7 +153,7 @@ class _Head:
         self.dtype = np.dtype(_KIND[word])
         if self.dtype.itemsize > 1:
             endian = self._need("endian").strip().lower()
-            self.dtype = self.dtype.newbyteorder({"little": "<", "big": ">"}.get(endian, "="))
+            self.dtype = self.dtype.newbyteorder(">" if endian == "big" else "<")
         self.encoding = self._need("encoding").strip().lower()
         if self.encoding not in ("raw", "gzip", "gz"):
             raise InputError(

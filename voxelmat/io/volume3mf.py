@@ -46,7 +46,7 @@ TABLE = "vm:LabelTable"
 _TEXTURE = "http://schemas.microsoft.com/3dmanufacturing/2013/01/3dtexture"
 _MODEL = "http://schemas.microsoft.com/3dmanufacturing/2013/01/3dmodel"
 _RELATIONS = "http://schemas.openxmlformats.org/package/2006/relationships"
-_TYPES = f"""<?xml version="1.0" encoding="UTF-8"?>
+_TYPES = """<?xml version="1.0" encoding="UTF-8"?>
 <Types xmlns="http://schemas.openxmlformats.org/package/2006/content-types">
  <Default Extension="rels" ContentType="application/vnd.openxmlformats-package.relationships+xml"/>
  <Default Extension="model" ContentType="application/vnd.ms-package.3dmanufacturing-3dmodel+xml"/>
@@ -80,11 +80,11 @@ def _stacks(volume: Volume) -> list[_Stack]:
     """Labels, colour, then one a resin."""
     size = max(int(volume.values.max(initial=0)), *volume.blends, *volume.names, 0) + 1
     small = size <= 256
-    labels = np.arange(size, dtype=np.uint8 if small else np.uint16)
+    labels = np.arange(size).astype(np.uint8 if small else np.uint16)
     colour = np.full((size, 3), 255, dtype=np.uint8)
     # Without blends: tones far apart for neighbouring labels.
     colour[1:] = (np.arange(1, size)[:, None] * np.array([67, 139, 211])) % 200 + 28
-    fractions = []
+    fractions: list[_Stack] = []
     light = np.zeros((size, 3))
     for resin in volume.resins:
         share = np.zeros(size)

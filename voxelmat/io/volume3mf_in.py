@@ -15,7 +15,6 @@ from pathlib import Path
 from typing import Any
 
 import numpy as np
-from lxml import etree
 from numpy.typing import NDArray
 from PIL import Image
 
@@ -24,7 +23,7 @@ from voxelmat.io.axes import straighten
 from voxelmat.io.label_table import LabelTable, labelled, parse_table
 from voxelmat.io.package3mf import check_package
 from voxelmat.io.volume3mf import CORE, TABLE, VOLUMETRIC
-from voxelmat.io.volume_limits import check_size
+from voxelmat.io.volume_limits import check_size, parse_xml
 from voxelmat.model.blend import Blend
 from voxelmat.model.volume import Volume
 from voxelmat.units import length_factor
@@ -157,13 +156,7 @@ def _field(package: _Package, node: Any) -> _Field:
 
 def _open(path: Path, archive: zipfile.ZipFile) -> _Package:
     member = next(m for m in archive.infolist() if m.filename.lower().endswith("3d/3dmodel.model"))
-    parser = etree.XMLParser(
-        resolve_entities=False, no_network=True, load_dtd=False, huge_tree=True
-    )
-    try:
-        root = etree.fromstring(archive.read(member), parser)
-    except etree.XMLSyntaxError as error:
-        raise FileFormatError(f"{path.name}: the model is damaged ({error}).") from error
+    root = parse_xml(archive.read(member), path.name)
     resources = root.find(_C + "resources")
     found = {} if resources is None else {n.get("id", ""): n for n in resources}
     return _Package(path.name, archive, root, found)
@@ -206,7 +199,8 @@ def _mixtures(package: _Package, node: Any) -> tuple[_Field, dict[int, Blend]]:
     rows, index = np.unique(np.rint(shares * 65535).astype(np.int64), axis=0, return_inverse=True)
     if len(rows) > 65535:
         raise InputError("The composite holds more than 65535 mixtures; thin it out.", file=name)
-    label, blends = np.zeros(len(rows)), {}
+    label = np.zeros(len(rows))
+    blends: dict[int, Blend] = {}
     for n, row in enumerate(rows):
         if row.sum() > 0:
             label[n] = len(blends) + 1

@@ -4,14 +4,16 @@ from __future__ import annotations
 
 import importlib
 import math
+import re
 import zlib
 from collections.abc import Sequence
 from pathlib import Path
 from typing import Any, BinaryIO
+from xml.etree import ElementTree
 
 from voxelmat.errors import FileFormatError, InputError
 
-__all__ = ["MAX_BYTES", "bounded_inflate", "check_size", "check_whole", "needed"]
+__all__ = ["MAX_BYTES", "bounded_inflate", "check_size", "check_whole", "needed", "parse_xml"]
 
 #: Most bytes that the values of a volume file may take in memory.
 MAX_BYTES = 1 << 32
@@ -28,6 +30,24 @@ def needed(module: str, package: str) -> Any:
             f"This format needs the package '{package}', which is not installed. Install it with: "
             'pip install "voxelmat[formats]"'
         ) from error
+
+
+def parse_xml(text: bytes, file: str) -> ElementTree.Element:
+    """The root of an XML text; entities, which can grow without bound, are refused.
+
+    Raises
+    ------
+    FileFormatError
+        Where it is no whole XML text in UTF-8, or defines a document type or entities.
+    """
+    if text[:2] in (b"\xff\xfe", b"\xfe\xff") or b"\0" in text[:64]:
+        raise FileFormatError(f"{file} is not UTF-8 text.")
+    if re.search(rb"<!(DOCTYPE|ENTITY)", text):
+        raise FileFormatError(f"{file} defines XML entities, which the format does not need.")
+    try:
+        return ElementTree.fromstring(text)
+    except (ElementTree.ParseError, ValueError, LookupError) as error:
+        raise FileFormatError(f"{file} is damaged or cut short ({error}).") from error
 
 
 def check_size(file: str, shape: Sequence[int], itemsize: int) -> int:

@@ -66,9 +66,9 @@ def _format(path: Path, given: str | None) -> str:
 def export(
     source: Part | Volume,
     path: str | Path,
-    format: str | None = None,
+    format: str | None = None,  # noqa: A002
     *,
-    smooth: int = 0,  # noqa: A002
+    smooth: int = 0,
 ) -> Exported:
     """Write a part or a volume in an open format, in mm.
 

@@ -16,13 +16,12 @@ from pathlib import Path
 from typing import Any
 
 import numpy as np
-from lxml import etree
 from numpy.typing import NDArray
 
 from voxelmat.errors import FileFormatError, InputError, ResourceError
 from voxelmat.io.axes import millimetres, straighten
 from voxelmat.io.label_table import KEY, LabelTable, labelled, parse_table, read_beside
-from voxelmat.io.volume_limits import MAX_BYTES, check_size
+from voxelmat.io.volume_limits import MAX_BYTES, check_size, parse_xml
 from voxelmat.model.part import DISTANCE_STEPS
 from voxelmat.model.volume import Volume
 
@@ -144,13 +143,7 @@ def _open(path: Path) -> _File:
         appended = data[found.end() : end if end > 0 else None]
         if encoded:
             appended = appended.strip()
-    parser = etree.XMLParser(
-        resolve_entities=False, no_network=True, load_dtd=False, huge_tree=True
-    )
-    try:
-        root = etree.fromstring(head, parser)
-    except etree.XMLSyntaxError as error:
-        raise FileFormatError(f"{name} is no whole VTI file ({error}).") from error
+    root = parse_xml(head, name)
     if root.tag != "VTKFile" or root.get("type") != "ImageData":
         raise FileFormatError(f"{name} is no VTI file: it holds {root.tag} {root.get('type', '')}.")
     packer = root.get("compressor")

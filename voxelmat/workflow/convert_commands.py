@@ -6,6 +6,7 @@ from pathlib import Path
 from typing import Any
 
 from voxelmat.errors import FileFormatError, InputError
+from voxelmat.io.bigpart import HEAD, open_big_part
 from voxelmat.io.design import load_design
 from voxelmat.io.materials import load_library
 from voxelmat.io.store import load_part
@@ -35,6 +36,8 @@ def part_from(path: Path, design: Path | None = None) -> Part:
     InputError, FileFormatError
         No part there, a damaged store, or a law that neither the design nor the library has.
     """
+    if (path / HEAD).is_file():
+        return open_big_part(path).load()
     file = path / "part.npz" if path.is_dir() else path
     if not file.is_file():
         raise InputError(
@@ -62,7 +65,7 @@ def part_from(path: Path, design: Path | None = None) -> Part:
 
 def _is_store(path: Path) -> bool:
     if path.is_dir():
-        return (path / "part.npz").is_file()
+        return (path / "part.npz").is_file() or (path / HEAD).is_file()
     return path.suffix.lower() == ".npz"
 
 
