@@ -21,6 +21,7 @@ import json
 import zipfile
 from collections.abc import Iterator
 from pathlib import Path
+from typing import Any
 from xml.sax.saxutils import escape, quoteattr
 
 import numpy as np
@@ -61,7 +62,7 @@ _DATE = (1980, 1, 1, 0, 0, 0)
 class _Stack:
     """One image stack: a table from labels to pixel values, and how it is named."""
 
-    def __init__(self, name: str, table: NDArray[np.uint8] | NDArray[np.uint16]) -> None:
+    def __init__(self, name: str, table: NDArray[Any]) -> None:
         self.name = name
         self.table = table
 

@@ -197,7 +197,7 @@ def import_volume(
         from voxelmat.io.nifti import read_nifti
 
         return read_nifti(path, unit)
-    from voxelmat.io.omezarr import read_omezarr
+    from voxelmat.io.omezarr_in import read_omezarr
 
     return read_omezarr(path, unit, field=field, channel=channel)
 
