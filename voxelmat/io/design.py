@@ -295,6 +295,9 @@ def _files(design: Design) -> list[tuple[str, str]]:
         for i, load in enumerate(case.loads):
             if "file" in load.settings:
                 found.append((load.settings["file"], f"load_case[{c}].load[{i}].file"))
+    for i, rule in enumerate(design.layout):
+        if "file" in rule.settings:
+            found.append((rule.settings["file"], f"layout[{i}].file"))
     found += [(t.file, f"target[{i}].file") for i, t in enumerate(design.targets) if t.file]
     if design.printing is not None and design.printing.profile.endswith(".toml"):
         found.append((design.printing.profile, "print.profile"))

@@ -76,6 +76,8 @@ def resin_uses(design: Design) -> Iterable[tuple[str, str]]:
         for end in ("blend", "from", "to"):
             for name in rule.settings.get(end, ()):
                 yield name, f"layout[{i}].{end}"
+        for name in rule.settings.get("resins", ()):
+            yield name, f"layout[{i}].resins"
     for i, region in enumerate(design.regions):
         for name in region.settings.get("blend", ()):
             yield name, f"region[{i}].blend"

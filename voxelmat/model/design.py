@@ -133,7 +133,7 @@ class RegionEntry:
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class LayoutEntry:
-    """A material rule: ``"blend"``, ``"axis gradient"`` or ``"distance gradient"``."""
+    """A material rule: ``"blend"``, ``"axis gradient"``, ``"distance gradient"``, ``"stored"``."""
 
     region: str
     kind: str
@@ -238,7 +238,7 @@ class LimitEntry:
 class OptimiseEntry:
     """What the optimiser is asked for; None leaves a setting to the optimiser's own default.
 
-    `design_in` names the regions that are designed (empty: the whole part), `keep`, `solid`,
+    With `skip` a run takes the layout as it is. `design_in` names the regions that are designed (empty: the whole part), `keep`, `solid`,
     `empty` and `protected` name regions, `fixed` pairs a region with the resin it must be.
     """
 
@@ -264,6 +264,7 @@ class OptimiseEntry:
     void_law: str | None = None
     sharpness: tuple[float, ...] | None = None
     sharpness_every: int | None = None
+    skip: bool = False
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

@@ -160,6 +160,7 @@ def run(
     monitor: Monitor = SILENT,
     keep: Callable[[State], None] | None = None,
     keep_every: int = 5,
+    seen: Callable[[State], None] | None = None,
 ) -> Outcome:
     """Iterate from `state` until converged, `iterations` in all are done, or cancelled.
 
@@ -177,6 +178,8 @@ def run(
     keep : callable, optional
         Called with the state every `keep_every` iterations and at the end.
     keep_every : int
+    seen : callable, optional
+        Called with the state after each iteration.
 
     Returns
     -------
@@ -191,6 +194,8 @@ def run(
     while not reason and len(state.history) < iterations:
         try:
             state = _iteration(problem, optimiser, state, stopping)
+            if seen is not None:
+                seen(state)
             _tell(monitor, state.history[-1], iterations)
         except Cancelled:
             done = len(state.history)

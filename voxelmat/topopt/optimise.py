@@ -4,10 +4,11 @@ from __future__ import annotations
 
 import dataclasses
 import hashlib
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from pathlib import Path
 
 import numpy as np
+from numpy.typing import NDArray
 
 from voxelmat.model.design_result import ConstraintValue, DesignResult
 from voxelmat.model.design_spec import DesignSpec, TargetDeflection
@@ -21,6 +22,7 @@ from voxelmat.topopt.checkpoint import read_checkpoint, write_checkpoint
 from voxelmat.topopt.criteria import OptimalityCriteria
 from voxelmat.topopt.domain import build_choice, resin_numbers
 from voxelmat.topopt.interpolation import VoidLaw
+from voxelmat.topopt.iterate import Iterate
 from voxelmat.topopt.loop import Outcome, State, Stepper, Stopping, run
 from voxelmat.topopt.mma import MovingAsymptotes
 from voxelmat.topopt.physics import Case, Physics
@@ -51,6 +53,7 @@ def optimise(
     monitor: Monitor = SILENT,
     checkpoint: Path | None = None,
     element: str = "icmb",
+    watch: Callable[[Iterate], None] | None = None,
 ) -> DesignResult:
     """Find where which resin goes and what stays empty.
 
@@ -70,6 +73,9 @@ def optimise(
         problem, the run goes on from it, to the same bits as one that was never interrupted.
     element : str
         Finite element, see `voxelmat.fea`.
+    watch : callable, optional
+        Given the `Iterate` of each iteration, on the optimiser's thread; it can be kept and made
+        into a part later.
 
     Returns
     -------
@@ -109,6 +115,7 @@ def optimise(
         monitor=progress,
         keep=None if checkpoint is None else lambda s: write_checkpoint(checkpoint, s, digest),
         keep_every=_KEEP_EVERY,
+        seen=None if watch is None else _watcher(part, spec, choice, watch),
     )
     physics.quiet()
     result = _result(part, spec, problem, outcome, notes)
@@ -119,6 +126,19 @@ def optimise(
         finished_utc=utc_now(),
     )
     return dataclasses.replace(result, provenance=provenance)
+
+
+def _watcher(
+    part: Part, spec: DesignSpec, choice: Choice, watch: Callable[[Iterate], None]
+) -> Callable[[State], None]:
+    """Hands on each design; parts are made by unknowns of its own, which the run does not use."""
+    own = _unknowns(part, spec, choice)
+
+    def make(x: NDArray[np.float64], sharpness: float) -> Part:
+        own.sharpness = sharpness
+        return assemble(part, own, own.forward(x), spec.levels)[0]
+
+    return lambda state: watch(Iterate(state.history[-1], state.whole, make))
 
 
 class _Progress:

@@ -6,6 +6,7 @@ from typing import TYPE_CHECKING
 
 from voxelmat.workbench.answers_section import AnswersSection
 from voxelmat.workbench.design_section import DesignSection
+from voxelmat.workbench.optimise_section import OptimiseSection
 from voxelmat.workbench.section import Section
 
 if TYPE_CHECKING:
@@ -16,4 +17,4 @@ __all__ = ["sections_of"]
 
 def sections_of(bench: Workbench) -> list[Section]:
     """One of each."""
-    return [AnswersSection(bench), DesignSection(bench)]
+    return [AnswersSection(bench), OptimiseSection(bench), DesignSection(bench)]

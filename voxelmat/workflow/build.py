@@ -253,6 +253,7 @@ def _resin_names(design: Design) -> list[str]:
     for rule in design.layout:
         for key in ("blend", "from", "to"):
             names.update(dict.fromkeys(rule.settings.get(key, {})))
+        names.update(dict.fromkeys(rule.settings.get("resins", ())))
     if design.optimise is not None:
         names.update(dict.fromkeys(design.optimise.resins))
         names.update(dict.fromkeys(resin for _, resin in design.optimise.fixed))

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from pathlib import Path
 
 import numpy as np
@@ -22,6 +23,7 @@ from voxelmat.model.design_spec import (
     VolumeLimit,
 )
 from voxelmat.monitor import SILENT, Monitor
+from voxelmat.topopt.iterate import Iterate
 from voxelmat.topopt.optimise import optimise
 from voxelmat.workflow.build import Built
 
@@ -31,7 +33,11 @@ Bools = NDArray[np.bool_]
 
 
 def optimised(
-    built: Built, *, checkpoint: Path | None = None, monitor: Monitor = SILENT
+    built: Built,
+    *,
+    checkpoint: Path | None = None,
+    monitor: Monitor = SILENT,
+    watch: Callable[[Iterate], None] | None = None,
 ) -> DesignResult:
     """Run the optimisation that the design asks for.
 
@@ -41,6 +47,8 @@ def optimised(
     checkpoint : Path, optional
         Where the run keeps its state, and goes on from it.
     monitor : Monitor
+    watch : callable, optional
+        Given each `voxelmat.topopt.iterate.Iterate`.
 
     Raises
     ------
@@ -49,7 +57,14 @@ def optimised(
     """
     spec = design_spec(built)
     try:
-        return optimise(built.part, built.load_cases, spec, monitor=monitor, checkpoint=checkpoint)
+        return optimise(
+            built.part,
+            built.load_cases,
+            spec,
+            monitor=monitor,
+            checkpoint=checkpoint,
+            watch=watch,
+        )
     except InputError as error:
         if error.file is not None:
             raise

@@ -1,4 +1,4 @@
-"""Material rules of a design applied to a part: one blend, or a gradient between two."""
+"""Material rules of a design applied to a part: a blend, a gradient, or a part that was kept."""
 
 from __future__ import annotations
 
@@ -9,16 +9,16 @@ import numpy as np
 from numpy.typing import NDArray
 
 from voxelmat.errors import InputError
+from voxelmat.io.store import load_part
 from voxelmat.model.blend import Blend
 from voxelmat.model.design import Design
 from voxelmat.model.part import Part
 from voxelmat.model.region import BodyRegion, Region
+from voxelmat.workflow.painting import laid_from, painted
 from voxelmat.workflow.regions import at_key, box_words, region_for
 
 __all__ = ["apply_layout", "distance_outside", "mixed"]
 
-#: A blend this close to one of the palette takes its label.
-_SAME = 1e-6
 #: Steps of a gradient whose rule does not say.
 _LEVELS = 32
 
@@ -44,17 +44,19 @@ def apply_layout(design: Design, part: Part) -> Part:
     """
     if not design.layout:
         return part
-    outline, part = part.occupancy, part.replace(occupancy=None)  # thin edges are painted too
     for i, rule in enumerate(design.layout):
-        key = f"layout[{i}]"
-        with at_key(design, key):
+        with at_key(design, f"layout[{i}]"):
             region = _region(rule.region, design, part)
-            voxels = region.voxels(part) & part.printed_labels()[part.labels]
+            voxels = _printed(region, part)
             if not voxels.any():
                 raise InputError(
                     f"Region '{rule.region}' holds no printed voxel, so this rule does nothing: "
                     f"{box_words(part)}."
                 )
+            if rule.kind == "stored":
+                kept = load_part(design.file(rule.settings["file"]), part.law)
+                part = laid_from(part, voxels, kept)
+                continue
             if rule.kind == "blend":
                 steps = np.zeros(int(voxels.sum()), dtype=np.intp)
                 blends = [Blend.of(rule.settings["blend"])]
@@ -64,8 +66,14 @@ def apply_layout(design: Design, part: Part) -> Part:
                 steps = np.rint(share * (levels - 1)).astype(np.intp)
                 low, high = Blend.of(rule.settings["from"]), Blend.of(rule.settings["to"])
                 blends = [mixed(low, high, s / (levels - 1)) for s in range(levels)]
-            part = _painted(part, voxels, steps, blends)
-    return _compact(part).replace(occupancy=outline)
+            part = painted(part, voxels, steps, blends)
+    return _compact(part)
+
+
+def _printed(region: Region, part: Part) -> NDArray[np.bool_]:
+    """Printed voxels of a region; thin edges, which take no part in a solve, are among them."""
+    whole = part.replace(occupancy=None)
+    return region.voxels(whole) & part.printed_labels()[part.labels]
 
 
 def _region(name: str, design: Design, part: Part) -> Region:
@@ -142,36 +150,6 @@ def distance_outside(
     # Along the way the set's voxel reaches half a voxel in the axis that has most steps.
     most = step.max(axis=0)
     return np.asarray(between * (1.0 - 0.5 / np.maximum(most, 1)) * (most > 0))
-
-
-def _painted(
-    part: Part, voxels: NDArray[np.bool_], steps: NDArray[np.intp], blends: list[Blend]
-) -> Part:
-    """Give the voxels, in index order, the blend of their step."""
-    palette = list(part.palette)
-    table = np.zeros(len(blends), dtype=np.int64)
-    for step in np.unique(steps):
-        table[step] = _label(palette, blends[step])
-    if len(palette) > 65536:
-        raise InputError(
-            f"The rules ask for {len(palette)} blends; a palette holds 65536. Use fewer levels."
-        )
-    labels = part.labels.copy(order="F")
-    labels[voxels] = table[steps].astype(np.uint16)
-    return part.replace(palette=tuple(palette), labels=labels)
-
-
-def _label(palette: list[Blend], blend: Blend) -> int:
-    """The label of a blend, added to the palette if nothing there is the same."""
-    wanted = dict(blend.fractions)
-    for i, known in enumerate(palette):
-        have = dict(known.fractions)
-        if have.keys() == wanted.keys() and all(
-            abs(have[n] - f) <= _SAME for n, f in wanted.items()
-        ):
-            return i
-    palette.append(blend)
-    return len(palette) - 1
 
 
 def _compact(part: Part) -> Part:
