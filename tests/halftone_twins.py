@@ -124,6 +124,29 @@ class DiffusionSlicer(HashSlicer):
                 self.carry[y + dy, x + dx] += e * np.float32(w)
 
 
+class RampSlicer(NumpySlicer):
+    """Two resins, hard and soft, dithered into each other over a width."""
+
+    def __init__(self, part, raster, resins, width, *, support, seed):
+        super().__init__(part, raster, resins, support=support, seed=seed)
+        spacing = [part.grid.spacing[a] for a, _ in raster.part_axes()]
+        keep = width / 2 + np.linalg.norm(spacing)
+        raw = raster.to_image(part.labels)
+        place = interface_place(raw, self.labels, (1, 2), width, spacing, keep)
+        self.place = place.astype(np.float32)
+
+    def chosen(self, layer, inside):
+        site = super().chosen(layer, inside)
+        low, high, w = (v[layer] for v in self.axes[0])
+        a, b = self.place[low], self.place[high]
+        known = np.isfinite(a) & np.isfinite(b)
+        cell = known[:-1, :-1] & known[1:, :-1] & known[:-1, 1:] & known[1:, 1:]
+        cell = cell[np.ix_(self.axes[1][0], self.axes[2][0])]
+        first = np.float32(0.5) + self.along_plane(a + w * (b - a), False)
+        pair = np.where(self.threshold(layer) < first, self.numbers[0], self.numbers[1])
+        return np.where(cell, pair, site).astype(np.uint8)
+
+
 def interface_place(labels, zone_of, ends, width, spacing, keep):
     """Distance of each voxel from the interface of two zones over its width; NaN beyond `keep`.
 

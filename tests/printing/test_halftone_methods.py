@@ -41,7 +41,8 @@ def test_bits_equal_the_slow_twin(method, outline, turns):
     for layer, bits in enumerate(slicer.layers(0, slicer.image_shape[0])):
         assert np.array_equal(bits, twin.bits(layer)), layer
         counts[: len(bits)] += np.unpackbits(bits, axis=2).sum(axis=(1, 2), dtype=int)
-    assert (counts[:3] > 0).all() and (counts[3] > 0) == (outline == "distance")
+    assert (counts[:3] > 0).all()
+    assert (counts[3] > 0) == (outline == "distance")
 
 
 @pytest.mark.parametrize("method", METHODS)
@@ -93,7 +94,8 @@ def test_two_hundred_and_fifty_four_resins(method):
         count = np.bincount(sites.ravel(), minlength=256)
         assert np.array_equal(count[1:255], np.unpackbits(bits, axis=2).sum(axis=(1, 2), dtype=int))
         seen += count
-    assert (seen[1:255] > 0).all() and seen[255] == 0
+    assert (seen[1:255] > 0).all()
+    assert seen[255] == 0
     assert seen[1] / seen[1:].sum() == pytest.approx(1 / 3, abs=0.02)
 
 
