@@ -9,7 +9,7 @@ from typing import Protocol
 import numpy as np
 from numpy.typing import NDArray
 
-from voxelmat.errors import InputError
+from voxelmat.printing.compose import TraySource
 from voxelmat.printing.halftone import Slicer
 from voxelmat.printing.job import PlacedPart, PrintJob
 
@@ -58,11 +58,12 @@ def source_of(job: PrintJob, scratch: Path | None = None) -> LayerSource:
     Raises
     ------
     InputError
-        If the job has several parts.
+        If a window of several does not start at a whole byte of the images.
     """
-    if len(job.parts) > 1 or job.window != job.parts[0].raster:
-        raise InputError(f"Only one part can be sliced at once; the job has {len(job.parts)}.")
-    return slicer_of(job, job.parts[0], scratch)
+    slicers = [slicer_of(job, item, scratch) for item in job.parts]
+    if len(slicers) == 1 and job.window == job.parts[0].raster:
+        return slicers[0]
+    return TraySource(job.parts, slicers, job.window)
 
 
 def deal(bits: NDArray[np.uint8], layer: int, row0: int, column0: int, n: int) -> NDArray[np.uint8]:

@@ -1,0 +1,126 @@
+"""Several parts in one image: the layers of a tray, byte by byte from those of its parts."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator, Sequence
+from dataclasses import replace
+
+import numpy as np
+from numpy.typing import NDArray
+
+from voxelmat.errors import InputError
+from voxelmat.model.profile import PrintProfile
+from voxelmat.printing.halftone import Slicer
+from voxelmat.printing.job import PlacedPart
+from voxelmat.printing.raster import Raster
+
+__all__ = ["TraySource", "on_whole_bytes", "tray_window"]
+
+_BYTE = 8
+
+
+def on_whole_bytes(raster: Raster) -> Raster:
+    """The same place with up to 7 empty columns more, so that it starts on a byte of the tray.
+
+    The part does not move by a site; only its window grows, towards the first column.
+    """
+    tray_axis, sign = raster.image_axes[2]
+    spare = raster.image_offset[2] % _BYTE
+    shape, offset = list(raster.shape), list(raster.offset)
+    shape[tray_axis] += spare
+    if sign > 0:
+        offset[tray_axis] -= spare
+    return replace(
+        raster,
+        shape=(shape[0], shape[1], shape[2]),
+        offset=(offset[0], offset[1], offset[2]),
+    )
+
+
+def tray_window(rasters: Sequence[Raster], profile: PrintProfile) -> Raster:
+    """The least window without turn and translation that holds all of `rasters`."""
+    low = [min(r.offset[a] for r in rasters) for a in range(3)]
+    high = [max(r.offset[a] + r.shape[a] for r in rasters) for a in range(3)]
+    sites = profile.tray_sites
+    return Raster(
+        pitch=profile.pitch,
+        shape=(high[0] - low[0], high[1] - low[1], high[2] - low[2]),
+        offset=(low[0], low[1], 0),
+        rotation=((1, 0, 0), (0, 1, 0), (0, 0, 1)),
+        translation=(0.0, 0.0, 0.0),
+        tray_sites=(sites[0], sites[1]),
+        origin_corner=profile.origin_corner,
+        row_direction=profile.row_direction,
+    )
+
+
+class TraySource:
+    """Layers of a whole tray; each part is sliced in its own window and laid over the others.
+
+    Windows may overlap as boxes; that their droplets do not is checked when a tray is laid out
+    (`voxelmat.printing.clearance`) and again by the preflight on what was written.
+
+    Parameters
+    ----------
+    parts : sequence of PlacedPart
+    slicers : sequence of Slicer
+        One a part, of the same materials.
+    window : Raster
+
+    Raises
+    ------
+    InputError
+        If a part does not start at a whole byte of the image.
+    """
+
+    def __init__(
+        self, parts: Sequence[PlacedPart], slicers: Sequence[Slicer], window: Raster
+    ) -> None:
+        self.window = window
+        self._slicers = tuple(slicers)
+        self._starts = []
+        for item in parts:
+            start = [
+                a - b for a, b in zip(item.raster.image_offset, window.image_offset, strict=True)
+            ]
+            if start[2] % _BYTE:
+                raise InputError(
+                    f"'{item.name}' starts at column {start[2]} of the tray's images; windows of "
+                    "several parts start at a multiple of 8 (`on_whole_bytes`).",
+                    key="parts",
+                )
+            self._starts.append((start[1], start[2] // _BYTE))
+
+    @property
+    def image_shape(self) -> tuple[int, int, int]:
+        """Layers, rows, columns."""
+        return self.window.image_shape
+
+    @property
+    def n_channels(self) -> int:
+        """Materials: the resins of the job in order, support last."""
+        return self._slicers[0].n_channels
+
+    def layers(self, first: int, last: int) -> Iterator[NDArray[np.uint8]]:
+        """The packed bits of layers ``first`` to ``last - 1``.
+
+        Yields
+        ------
+        ndarray of uint8, shape (materials, rows, ceil(columns / 8))
+            A fresh array a layer.
+        """
+        _, rows, columns = self.image_shape
+        running: list[Iterator[NDArray[np.uint8]]] = [
+            s.layers(min(first, s.image_shape[0]), min(last, s.image_shape[0]))
+            for s in self._slicers
+        ]
+        for layer in range(first, last):
+            out = np.zeros((self.n_channels, rows, (columns + 7) // _BYTE), dtype=np.uint8)
+            for slicer, bits, (row, byte) in zip(
+                self._slicers, running, self._starts, strict=True
+            ):
+                if layer >= slicer.image_shape[0]:
+                    continue
+                own = next(bits)
+                out[:, row : row + own.shape[1], byte : byte + own.shape[2]] |= own
+            yield out
