@@ -10,7 +10,6 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from voxelmat.errors import FileFormatError
 from voxelmat.kernels.bitplane import claims, to_words
 from voxelmat.printing.readback import Stack
 
@@ -54,16 +53,10 @@ class DecodedLayer:
 def _read(stack: Stack, layer: int) -> DecodedLayer:
     _, rows, width = stack.raster.image_shape
     planes = np.zeros((len(stack.channels), rows, (width + 63) // 64), dtype=np.uint64)
-    found = DecodedLayer(planes, stack.support_channel, [], [])
-    for channel in range(len(stack.channels)):
-        try:
-            data = stack.file_bytes(channel, layer)
-            if not stack.is_intact(channel, layer, data):
-                found.changed.append(channel)
-            to_words(stack.decode(channel, layer, data), planes[channel])
-        except FileFormatError as error:
-            found.bad.append((channel, str(error)))
-    return found
+    read = stack.files.examine(layer)
+    for bits, plane in zip(read.bits, planes, strict=True):
+        to_words(bits, plane)
+    return DecodedLayer(planes, stack.support_channel, read.bad, read.changed)
 
 
 def decoded_layers(stack: Stack) -> Iterator[DecodedLayer]:

@@ -14,12 +14,25 @@ from typing import Any
 
 from voxelmat.errors import FileFormatError, ResourceError
 from voxelmat.printing.manifest import FORMAT, MANIFEST, read_manifest
+from voxelmat.printing.sums import OWN_FILES
 
-__all__ = ["JOURNAL", "Journal", "LayerRecord", "locked", "publish", "refuse_foreign", "retired"]
+__all__ = [
+    "INDEX_FOLDER",
+    "JOURNAL",
+    "Journal",
+    "LayerRecord",
+    "locked",
+    "publish",
+    "refuse_foreign",
+    "retired",
+]
 
 #: Lists the finished layers of a partial folder, one line of JSON each.
 JOURNAL = "journal.jsonl"
 _FRESH = f"{JOURNAL}.new"
+#: Folder of images that hold all channels.
+INDEX_FOLDER = "layers"
+_IMAGES = (".png", ".page")
 
 
 @dataclass(frozen=True, slots=True)
@@ -73,15 +86,19 @@ def _is_ours(folder: Path) -> bool:
                 return False
             folders = set(first["folders"])
         else:
-            folders = {c["name"] for c in read_manifest(folder)["channels"]}
+            folders = {INDEX_FOLDER, *(c["name"] for c in read_manifest(folder)["channels"])}
     except (FileFormatError, OSError, ValueError, LookupError, TypeError):
         return False
     for entry in folder.iterdir():
-        if entry.name in (MANIFEST, JOURNAL, _FRESH):
+        if entry.name in (MANIFEST, JOURNAL, _FRESH, *OWN_FILES):
             continue
-        if entry.name not in folders or not entry.is_dir() or entry.is_symlink():
+        if entry.is_symlink():
             return False
-        if any(not (f.suffix == ".png" and f.stem.isdigit()) for f in entry.iterdir()):
+        if entry.is_file() and entry.suffix == ".tif" and entry.stem in folders:
+            continue
+        if entry.name not in folders or not entry.is_dir():
+            return False
+        if any(not (f.suffix in _IMAGES and f.stem.isdigit()) for f in entry.iterdir()):
             return False
     return True
 
@@ -103,6 +120,8 @@ def _remove(folder: Path) -> None:
         for entry in folder.iterdir():
             if entry.is_dir():
                 shutil.rmtree(entry)
+            elif entry.suffix == ".tif":
+                entry.unlink()
         shutil.rmtree(folder)
 
 

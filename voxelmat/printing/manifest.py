@@ -11,6 +11,9 @@ from pathlib import Path
 from typing import Any
 
 from voxelmat.errors import FileFormatError, InputError
+from voxelmat.model.image import ImageLayout
+from voxelmat.model.profile import PrintProfile
+from voxelmat.printing.imageorder import ImageOrder, swath_sites
 from voxelmat.printing.raster import Raster
 
 __all__ = [
@@ -18,7 +21,6 @@ __all__ = [
     "FORMAT_NUMBER",
     "MANIFEST",
     "image_entry",
-    "layer_name",
     "manifest_schema",
     "read_manifest",
     "write_manifest",
@@ -27,13 +29,14 @@ __all__ = [
 FORMAT = "voxelmat-stack"
 FORMAT_NUMBER = 2
 MANIFEST = "manifest.json"
+_V1_LAYERS = "layer 0 lies on the tray"
+_FILE_NAMES = {
+    "png bitmap": "channel/number.png, number with five digits",
+    "png index": "layers/number.png, number with five digits; 0 is empty, m is channel m",
+    "tiff pages": "channel.tif, a page a layer",
+}
 _LARGEST = 256 << 20  # bytes; a full tray of 64 channels stays below
 _MOST_PIXELS = 1 << 32  # of one image; the largest trays have some 10^8
-
-
-def layer_name(layer: int) -> str:
-    """File name of one layer inside the folder of its channel."""
-    return f"{layer:05d}.png"
 
 
 @cache
@@ -44,17 +47,23 @@ def manifest_schema() -> dict[str, Any]:
     return schema
 
 
-def image_entry(raster: Raster, polarity: str) -> dict[str, Any]:
+def image_entry(window: Raster, profile: PrintProfile) -> dict[str, Any]:
     """The manifest's ``image`` entry."""
-    layers, height, width = raster.image_shape
+    order = ImageOrder(window, profile)
+    layout = profile.image
     return {
-        "layers": layers,
-        "width": width,
-        "height": height,
-        "polarity": polarity,
-        "layer_order": "layer 0 lies on the tray",
-        "file_name": "channel/layer.png, layer with five digits",
-        "pixels_per_metre": list(raster.pixels_per_metre),
+        "kind": layout.kind,
+        "layers": window.image_shape[0],
+        "width": order.width,
+        "height": order.height,
+        "polarity": profile.polarity,
+        "compression": layout.compression,
+        "bit_order": layout.bit_order,
+        "row_order": layout.row_order,
+        "layer_order": layout.layer_order,
+        "mirrored_swath_sites": swath_sites(window, profile),
+        "file_name": _FILE_NAMES[layout.kind],
+        "pixels_per_metre": list(window.pixels_per_metre),
     }
 
 
@@ -75,8 +84,14 @@ def _check(data: Any, name: str) -> None:
         raster = Raster.from_dict(data["raster"])
     except (InputError, ValueError, TypeError) as problem:
         raise FileFormatError(f"{name}: the raster cannot be: {problem}") from None
-    if data["image"] != image_entry(raster, data["image"]["polarity"]):
-        raise FileFormatError(f"{name}: 'image' does not agree with 'raster'.")
+    try:
+        profile = PrintProfile.from_dict(data["profile"], file=MANIFEST)
+    except InputError as problem:
+        raise FileFormatError(f"{name}: the profile cannot be: {problem}") from None
+    if profile.pitch != raster.pitch:
+        raise FileFormatError(f"{name} states one pitch in its profile, another in 'raster'.")
+    if data["image"] != image_entry(raster, profile):
+        raise FileFormatError(f"{name}: 'image' does not agree with 'raster' and 'profile'.")
     for part in data["parts"]:
         if not raster.holds(_part_raster(part, name)):
             raise FileFormatError(
@@ -87,13 +102,14 @@ def _check(data: Any, name: str) -> None:
     if data["image"]["width"] * data["image"]["height"] > _MOST_PIXELS:
         raise FileFormatError(f"{name}: no printer has images of that size: {data['image']}.")
     channels = data["channels"]
-    layers = raster.image_shape[0]
-    for channel in channels:
-        if len(channel["sha256"]) != layers:
-            raise FileFormatError(
-                f"{name}: channel '{channel['name']}' lists {len(channel['sha256'])} layers; the "
-                f"raster has {layers}."
-            )
+    indexed = profile.image.kind == "png index"
+    lists = {f"channel '{c['name']}'": len(c["sha256"]) for c in channels}
+    if indexed or "layer_sha256" in data:
+        lists["'layer_sha256'"] = len(data.get("layer_sha256", ()))
+    for which, count in lists.items():
+        wanted = raster.image_shape[0] if indexed == (which == "'layer_sha256'") else 0
+        if count != wanted:
+            raise FileFormatError(f"{name}: {which} lists {count} files; it should list {wanted}.")
     if len({c["name"].lower() for c in channels}) != len(channels):
         raise FileFormatError(f"{name}: two channels share one folder.")
     if sum(c["role"] == "support" for c in channels) > 1:
@@ -116,6 +132,12 @@ def _upgrade(data: dict[str, Any], name: str) -> None:
         raise FileFormatError(f"{name} is not a stack manifest: it has no 'part'.")
     data["parts"] = [{**part, "kind": "part", "raster": data.get("raster")}]
     data["notes"] = {}
+    image = data.get("image")
+    if not isinstance(image, dict) or image.pop("layer_order", None) != _V1_LAYERS:
+        raise FileFormatError(f"{name} is not a stack manifest: 'image' is not of format 1.")
+    image["file_name"] = _FILE_NAMES["png bitmap"]
+    data["image"] = {**image, **ImageLayout().as_dict(), "mirrored_swath_sites": None}
+    del data["image"]["pad_to"], data["image"]["mirrored_passes"]
     data["format_number"] = FORMAT_NUMBER
 
 

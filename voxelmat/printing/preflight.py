@@ -119,15 +119,13 @@ def _um(pitch: tuple[object, ...]) -> str:
 
 def _folder(stack: Stack) -> list[Finding]:
     """Files that no channel explains."""
-    known = {c.name for c in stack.channels} | {"manifest.json", JOURNAL}
-    extra = sorted(p.name for p in stack.folder.iterdir() if p.name not in known)
-    for channel in stack.channels:
-        folder = stack.folder / channel.name
-        wanted = {stack.path(0, k).name for k in range(stack.n_layers)}
-        if folder.is_dir():
-            extra += sorted(
-                f"{channel.name}/{p.name}" for p in folder.iterdir() if p.name not in wanted
-            )
+    known = {*stack.files.names(), "manifest.json", JOURNAL}
+    folders = {name.partition("/")[0] for name in known if "/" in name}
+    extra = sorted(p.name for p in stack.folder.iterdir() if p.name not in {*known, *folders})
+    for name in sorted(folders):
+        if (stack.folder / name).is_dir():
+            files = (f"{name}/{p.name}" for p in (stack.folder / name).iterdir())
+            extra += sorted(f for f in files if f not in known)
     if not extra:
         return []
     return [

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import hashlib
 from dataclasses import dataclass
 from functools import cached_property
 from pathlib import Path
@@ -12,11 +11,12 @@ import numpy as np
 from numpy.typing import NDArray
 
 from voxelmat.errors import FileFormatError, InputError
-from voxelmat.io.png import decode_bitmap
 from voxelmat.model.grid import VoxelGrid
 from voxelmat.model.profile import PrintProfile
-from voxelmat.printing.manifest import layer_name, read_manifest
+from voxelmat.printing.imagefiles import ImageFiles
+from voxelmat.printing.manifest import read_manifest
 from voxelmat.printing.raster import Raster
+from voxelmat.printing.stackfiles import StackFiles
 
 __all__ = ["Channel", "Stack", "StackPart", "read_stack"]
 
@@ -38,7 +38,7 @@ class Channel:
     density_t_mm3 : float or None
         tonne/mm^3, where known.
     sha256 : tuple of str
-        Of each layer's file.
+        Of each layer's file or page, from the tray upwards; empty for indexed images.
     """
 
     name: str
@@ -95,13 +95,21 @@ def _stack_part(entry: dict[str, Any], window: Raster) -> StackPart:
 
 
 class Stack:
-    """A stack of one-bit images on disk; layers are read when asked for.
+    """A stack of images on disk; layers are read when asked for.
 
     Parameters
     ----------
     folder : Path
     manifest : dict
         As `voxelmat.printing.manifest.read_manifest` returns it.
+
+    Attributes
+    ----------
+    raster : Raster
+        The window that the images show; with one part it is the part's own.
+    parts : tuple of StackPart
+    channels : tuple of Channel
+    files : StackFiles
     """
 
     def __init__(self, folder: Path, manifest: dict[str, Any]) -> None:
@@ -111,7 +119,12 @@ class Stack:
         self.channels = tuple(
             Channel(**{**c, "sha256": tuple(c["sha256"])}) for c in manifest["channels"]
         )
-        self._inverted = manifest["image"]["polarity"] == "black is material"
+        images = ImageFiles(self.raster, [c.name for c in self.channels], self.profile)
+        indexed = manifest.get("layer_sha256")
+        digests = [c.sha256 for c in self.channels] if indexed is None else [indexed]
+        _, rows, columns = self.raster.image_shape
+        shape = (len(self.channels), rows, (columns + 7) // 8)
+        self.files = StackFiles(folder, images, digests, shape)
 
         self.parts = tuple(_stack_part(p, self.raster) for p in manifest["parts"])
 
@@ -131,6 +144,11 @@ class Stack:
         """Distance between sites along tray x, y, z, mm, rounded to a float."""
         x, y, z = (float(p) for p in self.raster.pitch)
         return (x, y, z)
+
+    @property
+    def is_indexed(self) -> bool:
+        """True where one image holds all channels of a layer."""
+        return "layer_sha256" in self.manifest
 
     @property
     def support_channel(self) -> int | None:
@@ -213,57 +231,11 @@ class Stack:
 
     # ------------------------------------------------------------------ layers
     def path(self, channel: int, layer: int) -> Path:
-        """File of one channel's layer."""
-        return self.folder / self.channels[channel].name / layer_name(layer)
-
-    def file_bytes(self, channel: int, layer: int) -> bytes:
-        """One file as it is on disk.
-
-        Raises
-        ------
-        FileFormatError
-            If it is missing, cannot be read, or lies outside the stack's folder.
-        """
-        path = self.path(channel, layer)
-        if not path.resolve().is_relative_to(self.folder.resolve()):
-            raise FileFormatError(f"{self._label(channel, layer)} lies outside the stack.")
-        try:
-            return path.read_bytes()
-        except OSError as error:
-            reason = error.strerror or str(error)
-            raise FileFormatError(f"{self._label(channel, layer)} is missing: {reason}.") from None
-
-    def _label(self, channel: int, layer: int) -> str:
-        return f"{self.channels[channel].name}/{layer_name(layer)}"
-
-    def is_intact(self, channel: int, layer: int, data: bytes) -> bool:
-        """True where `data` has the digest that the manifest states."""
-        return hashlib.sha256(data).hexdigest() == self.channels[channel].sha256[layer]
-
-    def decode(self, channel: int, layer: int, data: bytes) -> NDArray[np.uint8]:
-        """Bits of one file, 1 for material, checked for size, depth and pitch."""
-        label = self._label(channel, layer)
-        bitmap = decode_bitmap(data, label)
-        _, height, width = self.raster.image_shape
-        if (bitmap.bits.shape[0], bitmap.width) != (height, width):
-            raise FileFormatError(
-                f"{label} is {bitmap.width} x {bitmap.bits.shape[0]} pixels; the manifest states "
-                f"{width} x {height}."
-            )
-        if bitmap.pixels_per_metre != self.raster.pixels_per_metre:
-            raise FileFormatError(
-                f"{label} states {bitmap.pixels_per_metre} pixels a metre; the manifest "
-                f"{self.raster.pixels_per_metre}."
-            )
-        if not self._inverted:
-            return bitmap.bits
-        bits: NDArray[np.uint8] = ~bitmap.bits
-        if width % 8:
-            bits[:, -1] &= np.uint8((0xFF00 >> (width % 8)) & 0xFF)
-        return bits
+        """File that holds one channel's layer."""
+        return self.files.path(channel, layer)
 
     def bits(self, layer: int) -> NDArray[np.uint8]:
-        """Packed bits of one layer in image order.
+        """Packed bits of one layer in image order, whatever the kind of image.
 
         Returns
         -------
@@ -276,16 +248,16 @@ class Stack:
         """
         if not 0 <= layer < self.n_layers:
             raise InputError(f"Layer {layer} is not one of 0 to {self.n_layers - 1}.")
-        planes = []
-        for channel in range(len(self.channels)):
-            data = self.file_bytes(channel, layer)
-            if not self.is_intact(channel, layer, data):
-                raise FileFormatError(
-                    f"{self._label(channel, layer)} is not the file that was written: its SHA-256 "
-                    "differs from the manifest's. Write the stack again."
-                )
-            planes.append(self.decode(channel, layer, data))
-        return np.stack(planes)
+        found = self.files.examine(layer)
+        if found.changed:
+            label = self.files.label(found.changed[0], layer)
+            raise FileFormatError(
+                f"{label} is not the file that was written: its SHA-256 differs from the "
+                "manifest's. Write the stack again."
+            )
+        if found.bad:
+            raise FileFormatError(found.bad[0][1])
+        return found.bits
 
     def solid(self, layer: int) -> NDArray[np.uint8]:
         """Packed bits of one layer where any channel, support included, lays a droplet."""
@@ -329,11 +301,4 @@ def read_stack(folder: str | Path) -> Stack:
     path = Path(folder)
     if not path.is_dir():
         raise FileFormatError(f"There is no folder '{path.name}' to read a stack from.")
-    stack = Stack(path, read_manifest(path))
-    try:
-        differs = stack.profile.pitch != stack.raster.pitch
-    except InputError as error:
-        raise FileFormatError(f"The profile in manifest.json cannot be: {error}") from None
-    if differs:
-        raise FileFormatError("manifest.json states one pitch in its profile, another in 'raster'.")
-    return stack
+    return Stack(path, read_manifest(path))

@@ -6,7 +6,6 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy import ndimage
 
-from voxelmat.errors import FileFormatError
 from voxelmat.printing.readback import Stack
 
 __all__ = ["shifted_channel"]
@@ -42,13 +41,12 @@ def shifted_channel(stack: Stack, place: tuple[int, int, int]) -> tuple[str, int
     width = stack.raster.image_shape[2]
     rows = slice(max(0, row - _CROP), row + _CROP)
     columns = slice(max(0, column - _CROP), column + _CROP)
-    planes = []
-    for channel in range(len(stack.channels)):
-        try:
-            bits = stack.decode(channel, layer, stack.file_bytes(channel, layer))
-        except FileFormatError:
-            return None
-        planes.append(np.unpackbits(bits, axis=1, count=width)[rows, columns].astype(bool))
+    read = stack.files.examine(layer)
+    if read.bad:
+        return None
+    planes = [
+        np.unpackbits(bits, axis=1, count=width)[rows, columns].astype(bool) for bits in read.bits
+    ]
     margin = 2 * _REACH + 1
     padded = [np.pad(p, margin).astype(np.int64) for p in planes]
     everything = np.sum(padded, axis=0)

@@ -15,12 +15,14 @@ from voxelmat.model.halftone import Halftone
 from voxelmat.model.profile import PrintProfile
 from voxelmat.monitor import SILENT, Monitor
 from voxelmat.printing.designed import designed_volumes
+from voxelmat.printing.imagefiles import ImageFiles
 from voxelmat.printing.job import PrintJob, one_part_job
-from voxelmat.printing.journal import Journal, locked, publish, refuse_foreign, retired
+from voxelmat.printing.journal import Journal, LayerRecord, locked, publish, refuse_foreign, retired
 from voxelmat.printing.manifest import FORMAT, FORMAT_NUMBER, image_entry, write_manifest
 from voxelmat.printing.readback import Stack, read_stack
 from voxelmat.printing.source import Dealer, source_of
 from voxelmat.printing.workers import write_apart
+from voxelmat.printing.sums import add_sums
 from voxelmat.printing.writer import LayerWriter, image_files, write_layers
 from voxelmat.provenance import Provenance, utc_now
 
@@ -189,9 +191,23 @@ def write_job(
                 started_utc=started,
                 finished_utc=utc_now(),
             )
+            images.assemble(partial, monitor)
             write_manifest(partial, _manifest(job, digest, journal, provenance))
+            images.tidy(partial)
+            add_sums(partial, _known_sums(images, journal))
             publish(partial, folder)
         return read_stack(folder)
+
+
+def _known_sums(images: ImageFiles, journal: Journal) -> dict[str, str]:
+    """Path to SHA-256 of the image files, where these are not joined from pages."""
+    if images.kind == "tiff pages":
+        return {}
+    return {
+        name: sha256
+        for record in journal.done.values()
+        for name, sha256 in zip(images.names(record.layer), record.sha256, strict=True)
+    }
 
 
 def _check_counts(workers: int, threads: int | None, slab: int) -> None:
@@ -219,9 +235,10 @@ def _finished(folder: Path, job: str) -> Stack | None:
         stack = read_stack(folder)
         if stack.manifest["job"] != job:
             return None
-        for channel in range(len(stack.channels)):
+        files = stack.files
+        for channel in range(1 if stack.is_indexed else len(stack.channels)):
             for layer in range(stack.n_layers):
-                if not stack.is_intact(channel, layer, stack.file_bytes(channel, layer)):
+                if not files.is_intact(channel, layer, files.file_bytes(channel, layer)):
                     return None
     except FileFormatError:
         return None
@@ -262,15 +279,28 @@ def _manifest(
         "notes": job.notes,
         "profile": job.profile.as_dict(),
         "raster": job.window.as_dict(),
-        "image": image_entry(job.window, job.profile.polarity),
+        "image": image_entry(job.window, job.profile),
         "method": job.method,
-        "channels": _channel_entries(job, journal),
+        **_images(job, journal),
         "inputs": dict(provenance.inputs),
         "provenance": provenance.as_dict(),
     }
 
 
-def _channel_entries(job: PrintJob, journal: Journal) -> list[dict[str, Any]]:
+def _images(job: PrintJob, journal: Journal) -> dict[str, Any]:
+    """The manifest's ``channels``, and ``layer_sha256`` where files hold all channels."""
+    records = [journal.done[k] for k in range(job.window.image_shape[0])]
+    if job.profile.image.kind != "png index":
+        return {"channels": _channel_entries(job, records, digests=True)}
+    return {
+        "channels": _channel_entries(job, records, digests=False),
+        "layer_sha256": [r.sha256[0] for r in records],
+    }
+
+
+def _channel_entries(
+    job: PrintJob, records: Sequence[LayerRecord], *, digests: bool
+) -> list[dict[str, Any]]:
     """The manifest's ``channels`` entries; a resin's design volume is shared by its channels."""
     designed: dict[str, float] = {}
     density: dict[str, float | None] = {}
@@ -279,7 +309,6 @@ def _channel_entries(job: PrintJob, journal: Journal) -> list[dict[str, Any]]:
             designed[resin] = designed.get(resin, 0.0) + volume
         density.update({r.name: r.density.value for r in item.part.resins})
     sharing = Counter(job.channels.values())
-    records = [journal.done[k] for k in range(job.window.image_shape[0])]
     entries = []
     for m, name in enumerate(job.channel_names):
         is_support = name not in job.channels
@@ -294,7 +323,7 @@ def _channel_entries(job: PrintJob, journal: Journal) -> list[dict[str, Any]]:
                 "volume_mm3": float(sites * job.window.site_volume),
                 "designed_mm3": None if is_support else designed[resin] / sharing[resin],
                 "density_t_mm3": density.get(resin),
-                "sha256": [r.sha256[m] for r in records],
+                "sha256": [r.sha256[m] for r in records] if digests else [],
             }
         )
     return entries

@@ -52,7 +52,7 @@ class LayerWriter:
 
 def image_files(job: PrintJob) -> ImageFiles:
     """The files that a job's layers go to."""
-    return ImageFiles(job.window, job.channel_names, job.profile.polarity)
+    return ImageFiles(job.window, job.channel_names, job.profile)
 
 
 def missing_slabs(journal: Journal, n_layers: int, size: int) -> list[tuple[int, int]]:
