@@ -6,6 +6,7 @@ from typing import TYPE_CHECKING
 
 from voxelmat.workbench.answers_section import AnswersSection
 from voxelmat.workbench.design_section import DesignSection
+from voxelmat.workbench.material_section import MaterialSection
 from voxelmat.workbench.optimise_section import OptimiseSection
 from voxelmat.workbench.section import Section
 
@@ -17,4 +18,9 @@ __all__ = ["sections_of"]
 
 def sections_of(bench: Workbench) -> list[Section]:
     """One of each."""
-    return [AnswersSection(bench), OptimiseSection(bench), DesignSection(bench)]
+    return [
+        MaterialSection(bench),
+        AnswersSection(bench),
+        OptimiseSection(bench),
+        DesignSection(bench),
+    ]
