@@ -192,10 +192,12 @@ class StoredPart:
 AnyPart = Part | StoredPart
 
 
-def z_slabs(part: AnyPart, most_bytes: int = 32 << 20) -> Iterator[tuple[int, int]]:
-    """First and last plane of slabs along z whose labels, as int64, stay below `most_bytes`."""
+def z_slabs(part: AnyPart, most_voxels: int = 4 << 20) -> Iterator[tuple[int, int]]:
+    """First and last plane of slabs along z of at most so many voxels, or as they are stored."""
     nx, ny, nz = part.grid.shape
-    step = max(1, most_bytes // (8 * nx * ny))
+    step = max(1, most_voxels // (nx * ny))
+    if isinstance(part, StoredPart):
+        step = max(step // part.slab, 1) * part.slab
     for first in range(0, nz, step):
         yield first, min(first + step, nz)
 

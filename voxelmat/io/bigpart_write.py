@@ -33,9 +33,9 @@ from voxelmat.monitor import SILENT, Monitor
 __all__ = ["SLAB", "SlabMaker", "fill_big_part", "save_big_part"]
 
 #: Planes along z that are made, hashed and stored together.
-SLAB = 8
-_CHUNK = 64  # voxels of a chunk along x and y
-_SHARD = 16  # chunks of a shard along x and y
+SLAB = 4
+_CHUNK = 128  # voxels of a chunk along x and y
+_SHARD = 8  # chunks of a shard along x and y
 _JOURNAL = "journal.jsonl"
 
 #: ``make(first, last)`` gives the planes ``first`` to ``last - 1`` along z of each array by its

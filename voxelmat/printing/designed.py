@@ -17,8 +17,8 @@ def used_resins(part: AnyPart) -> tuple[str, ...]:
     """Names of the resins that the printer lays, in the order of ``part.resins``."""
     count = np.zeros(len(part.palette), np.int64)
     for first, last in z_slabs(part):
-        labels = part.labels[:, :, first:last].ravel(order="F")
-        count += np.bincount(labels, minlength=len(count))
+        for plane in part.labels[:, :, first:last].T:
+            count += np.bincount(plane.ravel(), minlength=len(count))
     used = part.printed_labels() & (count > 0)
     table = part.palette_fractions()[used]
     return tuple(

@@ -14,7 +14,7 @@ from numpy.typing import NDArray
 
 from voxelmat.errors import InputError
 from voxelmat.io.atomic import explain_os_error
-from voxelmat.io.bigpart import AnyPart
+from voxelmat.io.bigpart import AnyPart, StoredPart
 from voxelmat.kernels.halftone import extend_plane
 from voxelmat.printing.raster import Raster
 from voxelmat.printing.support import PlaneRow, SupportFill, outline_values
@@ -30,7 +30,8 @@ __all__ = [
 
 #: A support field up to this size, bytes, is kept in memory; a larger one in a file.
 SUPPORT_IN_MEMORY = 256 << 20
-#: A cursor reads so many bytes of an array at a time, or one plane where a plane is larger.
+#: A cursor reads planes of so many bytes in all at a time, or one plane where it is larger, or
+#: a few that a store keeps together.
 BLOCK_BYTES = 16 << 20
 
 
@@ -167,6 +168,21 @@ class DesignPlanes:
             raise InputError(f"Part '{self._part.name}' has no labels.")
         return np.ascontiguousarray(labels)
 
+    @property
+    def together(self) -> int:
+        """Planes that the part's store keeps together, where layers lie along z; else 1."""
+        along_z = self._axes[0][0] == 2
+        return self._part.slab if along_z and isinstance(self._part, StoredPart) else 1
+
+    def aligned(self, k: int, step: int) -> tuple[int, int]:
+        """First and last plane of the block of `step` planes that holds `k`."""
+        n, sign = self._true_shape[0], self._axes[0][1]
+        if sign > 0:
+            first = k // step * step
+            return first, min(first + step, n)
+        last = (n - 1 - k) // step * step  # the store counts from the other end
+        return max(n - last - step, 0), n - last
+
     def read(self, first: int, last: int) -> tuple[NDArray[np.uint16], NDArray[np.int8]]:
         """Raw labels and the outline field of planes ``first`` to ``last - 1``."""
         labels = self._block("labels", first, last)
@@ -202,16 +218,18 @@ class PlaneCursor:
         self._planes = planes
         n, rows, columns = planes._true_shape
         self._low, self._high = max(first - 1, 0), min(last + 1, n)
-        self._step = max(1, BLOCK_BYTES // (4 * rows * columns))
+        step = max(1, BLOCK_BYTES // (4 * rows * columns))
+        self._step = max(1, step // planes.together) * planes.together
         self._known: dict[int, tuple[NDArray[np.uint16], NDArray[np.int8]]] = {}
         self._made: dict[int, DesignPlane] = {}
 
     def _raw(self, k: int) -> tuple[NDArray[np.uint16], NDArray[np.int8]]:
         if k not in self._known:
-            down = bool(self._known) and k < min(self._known)
-            first = max(k - self._step + 1, self._low) if down else k
-            last = k + 1 if down else max(min(k + self._step, self._high), k + 1)
-            near = {m: v for m, v in self._known.items() if abs(m - k) <= 2}
+            # Steps are counted from where the store's are, for a block may be costly to read.
+            first, last = self._planes.aligned(k, self._step)
+            first, last = max(first, min(self._low, k)), min(last, max(self._high, k + 1))
+            # Copies, for a view would keep all of the last block in memory.
+            near = {m: (a.copy(), b.copy()) for m, (a, b) in self._known.items() if abs(m - k) <= 2}
             labels, outline = self._planes.read(first, last)
             new = {first + m: (labels[m], outline[m]) for m in range(last - first)}
             self._known = {**near, **new}
