@@ -99,7 +99,9 @@ def _columns(
     return whole, straddle, share
 
 
-def average(stack: Stack, grid: VoxelGrid, *, monitor: Monitor = SILENT) -> AveragedStack:
+def average(
+    stack: Stack, grid: VoxelGrid, *, part: int | str = 0, monitor: Monitor = SILENT
+) -> AveragedStack:
     """Average a stack back to a design grid, the print transform undone.
 
     Every site counts for the voxels that it overlaps by the share of the overlap, so volumes
@@ -109,7 +111,9 @@ def average(stack: Stack, grid: VoxelGrid, *, monitor: Monitor = SILENT) -> Aver
     ----------
     stack : Stack
     grid : VoxelGrid
-        Usually ``stack.grid``; its voxels must not be smaller than the pitch.
+        Usually that of the part; its voxels must not be smaller than the pitch.
+    part : int or str
+        Number or name of the part whose window is averaged.
     monitor : Monitor
 
     Raises
@@ -119,32 +123,37 @@ def average(stack: Stack, grid: VoxelGrid, *, monitor: Monitor = SILENT) -> Aver
     FileFormatError
         If a layer is missing or not the one that was written.
     """
-    raster = stack.raster
-    model = [m for m, c in enumerate(stack.channels) if c.role == "model"]
+    raster = stack.part(part).raster
+    resins = tuple(dict.fromkeys(c.resin for c in stack.channels if c.role == "model"))
+    sharing = [
+        [m for m, c in enumerate(stack.channels) if c.role == "model" and c.resin == resin]
+        for resin in resins
+    ]
     (layer_at, layer_w), (row_at, row_w), (column_at, column_w) = (
         _shares(raster, grid, axis) for axis in range(3)
     )
     shape = [grid.shape[a] for a, _ in raster.part_axes()]
     # Four spare entries: a margin on the low side, two on the high side and one for the carry.
-    total = np.zeros((len(model), shape[0] + 3, shape[1] + 3, shape[2] + 3), dtype=np.float32)
+    total = np.zeros((len(resins), shape[0] + 3, shape[1] + 3, shape[2] + 3), dtype=np.float32)
     plane = np.zeros(total.shape[2:])
     whole, straddle, share = _columns(column_at, column_w, shape[2] + 2)
     width = float(column_w.sum(axis=1)[0])
     words = np.zeros((raster.image_shape[1], (raster.image_shape[2] + 63) // 64), dtype=np.uint64)
-    for layer in range(stack.n_layers):
-        bits = stack.bits(layer)
-        for m, channel in enumerate(model):
+    n_layers = raster.image_shape[0]
+    for layer in range(n_layers):
+        bits = stack.part_bits(part, layer)
+        for m, channels in enumerate(sharing):
             plane[:] = 0.0
-            to_words(bits[channel], words)
+            to_words(np.bitwise_or.reduce(bits[channels], axis=0), words)
             add_to_voxels(words, row_at, row_w, whole, width, straddle, share, plane)
             for side in range(2):
                 if layer_w[layer, side] > 0:
                     total[m, layer_at[layer] + side] += layer_w[layer, side] * plane
-        monitor.report("averaging layers", done=layer + 1, total=stack.n_layers)
+        monitor.report("averaging layers", done=layer + 1, total=n_layers)
     inner = total[:, 1 : shape[0] + 1, 1 : shape[1] + 1, 1 : shape[2] + 1]
     return AveragedStack(
         grid=grid,
-        resins=tuple(stack.channels[m].resin for m in model),
+        resins=resins,
         filled=tuple(raster.to_part(f) for f in inner),
     )
 

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass
 from functools import cached_property
 from pathlib import Path
@@ -62,8 +63,8 @@ class StackPart:
         The design grid that it was made from.
     raster : Raster
         Its own window on the tray, and the transform into it.
-    crop : tuple of slice
-        Layers, rows and columns of the stack's images that hold it.
+    layers, rows, columns : slice
+        Of the stack's images that hold it.
     """
 
     name: str
@@ -71,7 +72,19 @@ class StackPart:
     digest: str
     grid: VoxelGrid
     raster: Raster
-    crop: tuple[slice, slice, slice]
+    layers: slice
+    rows: slice
+    columns: slice
+
+    @property
+    def start(self) -> tuple[int, int, int]:
+        """Layer, row and column of its first pixel in the stack's images."""
+        return (self.layers.start, self.rows.start, self.columns.start)
+
+    def holds(self, layer: int, row: int, column: int) -> bool:
+        """True where a pixel of the stack's images lies in its window."""
+        ranges = (self.layers, self.rows, self.columns)
+        return all(s.start <= v < s.stop for s, v in zip(ranges, (layer, row, column), strict=True))
 
 
 def _stack_part(entry: dict[str, Any], window: Raster) -> StackPart:
@@ -90,7 +103,9 @@ def _stack_part(entry: dict[str, Any], window: Raster) -> StackPart:
         digest=entry["digest"],
         grid=grid,
         raster=raster,
-        crop=(layers, rows, columns),
+        layers=layers,
+        rows=rows,
+        columns=columns,
     )
 
 
@@ -203,8 +218,9 @@ class Stack:
         raise InputError(f"The stack holds no part {which!r}; it holds {names}.", key="part")
 
     def crop(self, which: int | str) -> tuple[slice, slice, slice]:
-        """Layers, rows and columns of the images that hold a part."""
-        return self.part(which).crop
+        """Rows, columns and layers of the images that hold a part."""
+        part = self.part(which)
+        return part.rows, part.columns, part.layers
 
     def locate(self, layer: int, row: int, column: int) -> tuple[str, tuple[float, float, float]]:
         """The part at a pixel, and where in it.
@@ -212,17 +228,18 @@ class Stack:
         Returns
         -------
         str
-            Name of the part in whose window the pixel lies; ``""`` where there is none.
+            Name of the part in whose window the pixel lies, the smallest window where several
+            overlap as boxes; ``""`` where there is none.
         tuple of float
             The centre of the site in the coordinates of that part, mm; in those of the tray
             where there is none.
         """
-        at = (layer, row, column)
-        for part in self.parts:
-            if all(s.start <= v < s.stop for s, v in zip(part.crop, at, strict=True)):
-                own = [v - s.start for s, v in zip(part.crop, at, strict=True)]
-                return part.name, part.raster.pixel_to_part(own[0], own[1], own[2])
-        return "", self.raster.pixel_to_tray(layer, row, column)
+        near = [p for p in self.parts if p.holds(layer, row, column)]
+        if not near:
+            return "", self.raster.pixel_to_tray(layer, row, column)
+        part = min(near, key=lambda p: math.prod(p.raster.shape))
+        z, y, x = part.start
+        return part.name, part.raster.pixel_to_part(layer - z, row - y, column - x)
 
     def __repr__(self) -> str:
         names = ", ".join(f"{c.name} = {c.resin}" for c in self.channels)
@@ -258,6 +275,19 @@ class Stack:
         if found.bad:
             raise FileFormatError(found.bad[0][1])
         return found.bits
+
+    def part_bits(self, which: int | str, layer: int) -> NDArray[np.uint8]:
+        """As `bits`, only the window of one part; `layer` counts from the part's first."""
+        part = self.part(which)
+        bits = self.bits(layer + part.layers.start)[:, part.rows]
+        first, width = part.columns.start, part.columns.stop - part.columns.start
+        if first % 8:
+            pixels = np.unpackbits(bits, axis=2, count=self.raster.image_shape[2])
+            return np.packbits(pixels[:, :, part.columns], axis=2)
+        own = bits[:, :, first // 8 : (part.columns.stop + 7) // 8].copy()
+        if width % 8:
+            own[:, :, -1] &= np.uint8((0xFF00 >> (width % 8)) & 0xFF)
+        return own
 
     def solid(self, layer: int) -> NDArray[np.uint8]:
         """Packed bits of one layer where any channel, support included, lays a droplet."""
