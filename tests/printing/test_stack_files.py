@@ -48,7 +48,7 @@ def test_same_bytes_for_any_split_and_thread_count(tmp_path, whole, threads, sla
 def test_what_is_in_the_folder(tmp_path, whole):
     stack = write_stack(part(), STANDARD, tmp_path / "s", inputs={"a.stl": "0" * 64})
     assert {p.name for p in (tmp_path / "s").iterdir()} == {
-        "manifest.json", "m1", "m2", "m3", "support"
+        "SHA256SUMS", "check_stack.py", "manifest.json", "m1", "m2", "m3", "support"
     }  # fmt: skip
     assert {p.name for p in tmp_path.iterdir()} == {"s", ".s.lock"}
     manifest = json.loads((tmp_path / "s" / "manifest.json").read_text())

@@ -14,6 +14,7 @@ from voxelmat.printing.journal import JOURNAL
 from voxelmat.printing.readback import Stack, read_stack
 from voxelmat.printing.scan import Facts, scan
 from voxelmat.printing.shifted import shifted_channel
+from voxelmat.printing.sums import OWN_FILES
 from voxelmat.units import quantity
 
 __all__ = ["VOLUME_TOLERANCE", "preflight"]
@@ -119,7 +120,7 @@ def _um(pitch: tuple[object, ...]) -> str:
 
 def _folder(stack: Stack) -> list[Finding]:
     """Files that no channel explains."""
-    known = {*stack.files.names(), "manifest.json", JOURNAL}
+    known = {*stack.files.names(), "manifest.json", JOURNAL, *OWN_FILES}
     folders = {name.partition("/")[0] for name in known if "/" in name}
     extra = sorted(p.name for p in stack.folder.iterdir() if p.name not in {*known, *folders})
     for name in sorted(folders):

@@ -21,8 +21,8 @@ from voxelmat.printing.journal import Journal, LayerRecord, locked, publish, ref
 from voxelmat.printing.manifest import FORMAT, FORMAT_NUMBER, image_entry, write_manifest
 from voxelmat.printing.readback import Stack, read_stack
 from voxelmat.printing.source import Dealer, source_of
-from voxelmat.printing.workers import write_apart
 from voxelmat.printing.sums import add_sums
+from voxelmat.printing.workers import write_apart
 from voxelmat.printing.writer import LayerWriter, image_files, write_layers
 from voxelmat.provenance import Provenance, utc_now
 
