@@ -143,7 +143,7 @@ def _design(data: Table, path: Path | None) -> Design:
         bodies=tuple(_body(b) for b in data["body"]),
         gaps=Gaps(**data["gaps"]) if "gaps" in data else None,
         layout=tuple(
-            LayoutEntry(region=r["region"], kind=r["kind"], settings=_rest(r, "region", "kind"))
+            LayoutEntry(region=r.get("region"), kind=r["kind"], settings=_rest(r, "region", "kind"))
             for r in data.get("layout", ())
         ),
         regions=tuple(

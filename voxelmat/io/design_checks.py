@@ -41,6 +41,8 @@ def check_design(design: Design) -> None:
         _known(name, places, "region or body", key)
     cases = [c.name for c in design.cases]
     for i, rule in enumerate(design.layout):
+        if rule.kind == "stroke":
+            _check_stroke(rule.settings, f"layout[{i}]")
         ends = rule.settings.get("range_mm", (0.0, 1.0))
         if ends[0] == ends[1]:
             raise InputError(
@@ -67,13 +69,29 @@ def check_design(design: Design) -> None:
     _check_print(design)
 
 
+def _check_stroke(settings: Mapping[str, Any], key: str) -> None:
+    """A brush has the sizes that it needs, and one blend or two."""
+    needs = {"sphere": {"radius_mm"}, "disc": {"radius_mm", "axis", "depth_mm"}, "box": {"size_mm"}}
+    sizes = {"radius_mm", "axis", "depth_mm", "size_mm"} & settings.keys()
+    wanted = needs[settings["brush"]]
+    if sizes != wanted:
+        raise InputError(
+            f"A stroke of a {settings['brush']} takes {', '.join(sorted(wanted))}; got "
+            f"{', '.join(sorted(sizes)) or 'none of them'}.",
+            key=key,
+        )
+    ends = {"blend", "from", "to"} & settings.keys()
+    if ends not in ({"blend"}, {"from", "to"}):
+        raise InputError("A stroke takes a blend, or two: from and to.", key=key)
+
+
 def resin_uses(design: Design) -> Iterable[tuple[str, str]]:
     """Every place where a resin is named, with its key."""
     for i, body in enumerate(design.bodies):
         for name in body.blend:
             yield name, f"body[{i}]"
     for i, rule in enumerate(design.layout):
-        for end in ("blend", "from", "to"):
+        for end in ("blend", "from", "to", "old"):
             for name in rule.settings.get(end, ()):
                 yield name, f"layout[{i}].{end}"
         for name in rule.settings.get("resins", ()):
@@ -173,7 +191,8 @@ def _check_region(design: Design, index: int, bodies: list[str]) -> None:
 def _region_uses(design: Design) -> Iterable[tuple[str, str]]:
     """Every place where a region or a body is named, with its key."""
     for i, rule in enumerate(design.layout):
-        yield rule.region, f"layout[{i}].region"
+        if rule.region is not None:
+            yield rule.region, f"layout[{i}].region"
         if "from_region" in rule.settings:
             yield rule.settings["from_region"], f"layout[{i}].from_region"
     for c, case in enumerate(design.cases):

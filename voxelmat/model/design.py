@@ -133,9 +133,13 @@ class RegionEntry:
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class LayoutEntry:
-    """A material rule: ``"blend"``, ``"axis gradient"``, ``"distance gradient"``, ``"stored"``."""
+    """A material rule by kind; `region` None stands for the whole part.
 
-    region: str
+    Kinds: ``"blend"``, ``"axis gradient"``, ``"distance gradient"``, ``"stroke"`` of a brush,
+    ``"fill"`` of what hangs together, ``"replace"`` of one blend, ``"stored"`` in a file.
+    """
+
+    region: str | None
     kind: str
     settings: Mapping[str, Any] = field(default_factory=dict)
 

@@ -264,7 +264,7 @@ class MaterialSection(Section):
 
     def _rules(self) -> list[c.Control]:
         rules = self.bench.draft.data.get("layout", [])
-        rows = [[r["region"], r["kind"], _rule_words(r)] for r in rules]
+        rows = [[r.get("region", "whole part"), r["kind"], _rule_words(r)] for r in rules]
         return [
             c.table(
                 ["on", "rule", "what"],
@@ -323,7 +323,7 @@ def _rule_words(rule: dict[str, Any]) -> str:
         return str(Blend.of(rule["blend"]))
     if "from" in rule:
         return f"{Blend.of(rule['from'])} to {Blend.of(rule['to'])}"
-    return str(rule.get("file", rule.get("shape", "")))
+    return str(rule.get("file", ""))
 
 
 @lru_cache(maxsize=64)

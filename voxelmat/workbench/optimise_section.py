@@ -224,26 +224,14 @@ class OptimiseSection(Section):
         path = next(p for n in range(1, 10_000) if not (p := folder / f"{stem}-{n}.npz").exists())
         save_part(part, path)
         resins = sorted({n for b in part.palette for n, _ in b.fractions if _is_printed(part, n)})
-        rule = {
-            "region": self._whole(),
-            "kind": "stored",
-            "file": path.name,
-            "resins": resins,
-        }
+        rule = {"kind": "stored", "file": path.name, "resins": resins}
 
         def edit(data: dict[str, Any]) -> None:
-            if rule["region"] == WHOLE and all(r["name"] != WHOLE for r in data.get("region", [])):
-                add_at(data, "region", everywhere(self.bench.part))
             add_at(data, "layout", rule)
             set_at(data, "optimise.skip", True)
 
         self.bench.draft.change(f"take run {found.number}", edit)
         return path
-
-    def _whole(self) -> str:
-        """The one body, or a region that holds all of them."""
-        bodies = self.bench.draft.data["body"]
-        return str(bodies[0]["name"]) if len(bodies) == 1 else WHOLE
 
     # ------------------------------------------------------------------ the screen
     def controls(self) -> list[c.Control]:
@@ -317,17 +305,6 @@ class OptimiseSection(Section):
             self.bench.say(f"Taken; kept in {path.name}. Undo takes it back.")
         else:
             asked_changed(self, name, value)
-
-
-#: Name of the region that a design of several bodies is laid in.
-WHOLE = "all bodies"
-
-
-def everywhere(part: Part) -> dict[str, Any]:
-    """A region that holds the whole part, as a table of the design."""
-    low = [o - h for o, h in zip(part.grid.origin, part.grid.spacing, strict=True)]
-    high = [u + h for u, h in zip(part.grid.upper, part.grid.spacing, strict=True)]
-    return {"name": WHOLE, "kind": "box", "low_mm": low, "high_mm": high}
 
 
 def _is_printed(part: Part, name: str) -> bool:

@@ -251,7 +251,7 @@ def _resin_names(design: Design) -> list[str]:
     for body in design.bodies:
         names.update(dict.fromkeys(body.blend))
     for rule in design.layout:
-        for key in ("blend", "from", "to"):
+        for key in ("blend", "from", "to", "old"):
             names.update(dict.fromkeys(rule.settings.get(key, {})))
         names.update(dict.fromkeys(rule.settings.get("resins", ())))
     if design.optimise is not None:

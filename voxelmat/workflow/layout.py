@@ -1,4 +1,4 @@
-"""Material rules of a design applied to a part: a blend, a gradient, or a part that was kept."""
+"""Material rules of a design applied to a part: blends, gradients, strokes, kept parts."""
 
 from __future__ import annotations
 
@@ -11,11 +11,12 @@ from numpy.typing import NDArray
 from voxelmat.errors import InputError
 from voxelmat.io.store import load_part
 from voxelmat.model.blend import Blend
-from voxelmat.model.design import Design
+from voxelmat.model.design import Design, LayoutEntry
 from voxelmat.model.part import Part
 from voxelmat.model.region import BodyRegion, Region
 from voxelmat.workflow.painting import laid_from, painted
-from voxelmat.workflow.regions import at_key, box_words, region_for
+from voxelmat.workflow.regions import at_key, box_words, region_for, whole_part
+from voxelmat.workflow.strokes import connected, holding, stroked
 
 __all__ = ["apply_layout", "distance_outside", "mixed"]
 
@@ -46,28 +47,38 @@ def apply_layout(design: Design, part: Part) -> Part:
         return part
     for i, rule in enumerate(design.layout):
         with at_key(design, f"layout[{i}]"):
-            region = _region(rule.region, design, part)
+            region = whole_part() if rule.region is None else _region(rule.region, design, part)
             voxels = _printed(region, part)
             if not voxels.any():
                 raise InputError(
-                    f"Region '{rule.region}' holds no printed voxel, so this rule does nothing: "
+                    f"Region '{region.name}' holds no printed voxel, so this rule does nothing: "
                     f"{box_words(part)}."
                 )
-            if rule.kind == "stored":
-                kept = load_part(design.file(rule.settings["file"]), part.law)
-                part = laid_from(part, voxels, kept)
-                continue
-            if rule.kind == "blend":
-                steps = np.zeros(int(voxels.sum()), dtype=np.intp)
-                blends = [Blend.of(rule.settings["blend"])]
-            else:
-                share = _share(rule.kind, rule.settings, design, part, voxels)
-                levels = rule.settings.get("levels", _LEVELS)
-                steps = np.rint(share * (levels - 1)).astype(np.intp)
-                low, high = Blend.of(rule.settings["from"]), Blend.of(rule.settings["to"])
-                blends = [mixed(low, high, s / (levels - 1)) for s in range(levels)]
-            part = painted(part, voxels, steps, blends)
+            part = _ruled(rule, design, part, voxels)
     return _compact(part)
+
+
+def _ruled(rule: LayoutEntry, design: Design, part: Part, voxels: NDArray[np.bool_]) -> Part:
+    """The part after one rule."""
+    settings = rule.settings
+    if rule.kind == "stored":
+        return laid_from(part, voxels, load_part(design.file(settings["file"]), part.law))
+    share: NDArray[np.float64] | None = None
+    if rule.kind == "stroke":
+        voxels, share = stroked(part.grid, settings, voxels)
+    elif rule.kind == "fill":
+        voxels = connected(part, settings["at_mm"], settings.get("axis"), voxels)
+    elif rule.kind == "replace":
+        voxels = voxels & holding(part, Blend.of(settings["old"]))
+    elif rule.kind != "blend":
+        share = _share(rule.kind, settings, design, part, voxels)
+    if share is None or "blend" in settings:
+        steps = np.zeros(int(voxels.sum()), dtype=np.intp)
+        return painted(part, voxels, steps, [Blend.of(settings["blend"])])
+    levels = settings.get("levels", _LEVELS)
+    low, high = Blend.of(settings["from"]), Blend.of(settings["to"])
+    blends = [mixed(low, high, s / (levels - 1)) for s in range(levels)]
+    return painted(part, voxels, np.rint(share * (levels - 1)).astype(np.intp), blends)
 
 
 def _printed(region: Region, part: Part) -> NDArray[np.bool_]:
