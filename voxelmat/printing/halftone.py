@@ -22,7 +22,7 @@ from voxelmat.printing.order import INTERFACE_RULE, INTERFACE_STEP, laying_order
 from voxelmat.printing.planes import DesignPlanes, PlaneCursor
 from voxelmat.printing.ramp import InterfaceRamps, RampPlane
 from voxelmat.printing.raster import Raster
-from voxelmat.printing.support import fill_columns
+from voxelmat.printing.support import SupportFill, fill_columns
 
 __all__ = ["INTERFACE_RULE", "INTERFACE_STEP", "MOST_RESINS", "Slicer"]
 
@@ -35,7 +35,7 @@ _WEIGHTS = np.array([7, 3, 5, 1, 0, 0]) * 0.6 / 16 + np.array([0, 0, 0, 0, 0.16,
 _NOISE = 0.5
 #: Error diffusion: a site over an undithered one starts with what a site in the midst of a blend
 #: holds on average, so that the lowest layers are not short of rare droplets (measured).
-_HEAD_START = 0.23
+_HEAD_START = 0.21
 
 
 def _fractions(part: AnyPart, resins: tuple[str, ...]) -> NDArray[np.float64]:
@@ -82,8 +82,8 @@ class Slicer:
     raster : Raster
     resins : tuple of str
         Each once; material number m is ``resins[m - 1]``. The part need not have all of them.
-    support : bool
-        Draw support columns, as material ``len(resins) + 1``.
+    support : bool or SupportFill
+        Draw support as material ``len(resins) + 1``: columns where True, else as it fills.
     seed : int
         Moves the start of the blue-noise mask; the key of noise.
     halftone : Halftone, optional
@@ -108,7 +108,7 @@ class Slicer:
         raster: Raster,
         resins: tuple[str, ...],
         *,
-        support: bool,
+        support: bool | SupportFill,
         seed: int,
         halftone: Halftone | None = None,
         support_file: Path | None = None,
@@ -118,7 +118,7 @@ class Slicer:
                 f"At most {MOST_RESINS} resins can be sliced at once; got {len(resins)}."
             )
         self.raster = raster
-        self.n_channels = len(resins) + int(support)
+        self.n_channels = len(resins) + int(support is not False)
         self.halftone = Halftone() if halftone is None else halftone
         self.order = laying_order(part.resins, resins, self.halftone)
         table = _fractions(part, self.order)
@@ -133,10 +133,13 @@ class Slicer:
         self._set_up_noise(seed)
         self._set_up_ramps(part)
 
-    def _lay_out(self, part: AnyPart, support: bool, support_file: Path | None) -> None:
+    def _lay_out(
+        self, part: AnyPart, support: bool | SupportFill, support_file: Path | None
+    ) -> None:
         """Say where the planes come from and find the sites between voxels."""
         raster = self.raster
-        fill = fill_columns if support else None
+        columns = fill_columns if support else None
+        fill = columns if isinstance(support, bool) else support
         self.planes = DesignPlanes(part, raster, support=fill, support_file=support_file)
         true_shape = [part.grid.shape[a] for a, _ in raster.part_axes()]
         axes = [_axis(raster.image_index(part.grid, m), true_shape[m]) for m in range(3)]

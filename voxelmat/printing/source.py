@@ -12,6 +12,7 @@ from numpy.typing import NDArray
 from voxelmat.printing.compose import TraySource
 from voxelmat.printing.halftone import Slicer
 from voxelmat.printing.job import PlacedPart, PrintJob
+from voxelmat.printing.support_policies import support_fill
 
 __all__ = ["Dealer", "LayerSource", "deal", "slicer_of", "source_of"]
 
@@ -34,11 +35,12 @@ class LayerSource(Protocol):
 def slicer_of(job: PrintJob, item: PlacedPart, scratch: Path | None = None) -> Slicer:
     """The slicer of one placed part of a job; its support field goes to `scratch`, if given."""
     number = job.parts.index(item)
+    fill = support_fill(job.support, job.profile.support_sizes, item.part, item.raster)
     return Slicer(
         item.part,
         item.raster,
         job.resins,
-        support=job.draws_support,
+        support=fill or False,
         seed=job.seed,
         halftone=job.halftone,
         support_file=None if scratch is None else scratch / f"support-{number}.raw",
