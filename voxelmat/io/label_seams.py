@@ -26,15 +26,15 @@ class Seams:
         Nodes where a mended edge ends.
     knots : ndarray of uint16
         The label of the small cube at each dirty node, in the order of ``argwhere(dirty)``.
-    count, failed : int
-        Mended edges; knots at which no label gives two faces at every edge.
+    touching, mended : int
+        Edges along which a label touches only itself; edges given away in all.
     """
 
     edges: tuple[Labels, Labels, Labels]
     dirty: NDArray[np.bool_]
     knots: Labels
-    count: int
-    failed: int
+    touching: int
+    mended: int
 
     def arms(self, nodes: NDArray[np.int64]) -> Labels:
         """Labels of the mended edges at nodes, (n, axis, low or high side); 0 for none."""
@@ -76,41 +76,65 @@ def find_seams(padded: Labels) -> Seams:
     padded : ndarray of uint16
         Labels with one empty voxel round them.
     """
-    nodes = tuple(n - 1 for n in padded.shape)
-    edges = []
-    dirty = np.zeros(nodes, dtype=bool)
-    for axis in range(3):
-        u, v = (axis + 1) % 3, (axis + 2) % 3
+    edges = (_touched(padded, 0), _touched(padded, 1), _touched(padded, 2))
+    touching = sum(int((e > 0).sum()) for e in edges)
+    while True:
+        dirty = _ends(edges)
+        where = np.argwhere(dirty)
+        knots = np.zeros(len(where), dtype=np.uint16)
+        bad = np.zeros(len(where), dtype=bool)
+        for first in range(0, len(where), _BATCH):
+            some = slice(first, first + _BATCH)
+            knots[some], bad[some] = _knots(padded, edges, where[some])
+        if not bad.any():
+            mended = sum(int((e > 0).sum()) for e in edges)
+            return Seams(edges, dirty, knots, touching, mended)
+        # With all edges at a node given to one label, its cube of that label always does. Labels
+        # of edges only rise, so this comes to an end.
+        for node in where[bad]:
+            _give_all(edges, node)
 
-        def cell(a: int, b: int, axis: int = axis, u: int = u, v: int = v) -> Labels:
-            where: list[slice] = [slice(None)] * 3
-            where[axis] = slice(1, -1)
-            where[u] = slice(a, padded.shape[u] - 1 + a)
-            where[v] = slice(b, padded.shape[v] - 1 + b)
-            return padded[tuple(where)]
 
-        found = np.zeros(nodes, dtype=np.uint16)
-        inside = tuple(slice(0, -1) if a == axis else slice(None) for a in range(3))
-        found[inside] = _touching(cell(0, 0), cell(1, 0), cell(0, 1), cell(1, 1))
-        edges.append(found)
+def _touched(padded: Labels, axis: int) -> Labels:
+    """The label of each edge along `axis` that is to be mended, 0 for the others; on nodes."""
+    u, v = (axis + 1) % 3, (axis + 2) % 3
+    cells = []
+    for a, b in ((0, 0), (1, 0), (0, 1), (1, 1)):
+        where = [slice(1, -1)] * 3
+        where[u] = slice(a, padded.shape[u] - 1 + a)
+        where[v] = slice(b, padded.shape[v] - 1 + b)
+        cells.append(padded[tuple(where)])
+    found = np.zeros([n - 1 for n in padded.shape], dtype=np.uint16)
+    found[tuple(slice(0, -1) if a == axis else slice(None) for a in range(3))] = _touching(*cells)
+    return found
+
+
+def _ends(edges: tuple[Labels, Labels, Labels]) -> NDArray[np.bool_]:
+    """Nodes where a mended edge ends."""
+    dirty = np.zeros(edges[0].shape, dtype=bool)
+    for axis, found in enumerate(edges):
         dirty |= found > 0
-        later = tuple(slice(1, None) if a == axis else slice(None) for a in range(3))
-        dirty[later] |= found[inside] > 0
-    three = (edges[0], edges[1], edges[2])
-    where = np.argwhere(dirty)
-    knots = np.zeros(len(where), dtype=np.uint16)
-    failed = 0
-    for first in range(0, len(where), _BATCH):
-        some = where[first : first + _BATCH]
-        knots[first : first + _BATCH], bad = _knots(padded, three, some)
-        failed += bad
-    return Seams(three, dirty, knots, int(sum((e > 0).sum() for e in edges)), failed)
+        start = tuple(slice(0, -1) if a == axis else slice(None) for a in range(3))
+        end = tuple(slice(1, None) if a == axis else slice(None) for a in range(3))
+        dirty[end] |= found[start] > 0
+    return dirty
+
+
+def _give_all(edges: tuple[Labels, Labels, Labels], node: NDArray[np.int64]) -> None:
+    """Give every edge at a node to the highest label that one of them has."""
+    label = _arms(edges, node[None]).max()
+    for axis in range(3):
+        for side in (0, 1):
+            start = node.copy()
+            start[axis] += side - 1
+            if 0 <= start[axis] < edges[axis].shape[axis] - 1:
+                edges[axis][tuple(start)] = label
 
 
 def _knots(
     padded: Labels, edges: tuple[Labels, ...], nodes: NDArray[np.int64]
-) -> tuple[Labels, int]:
-    """For each node the first label with which no edge of its small cube has four faces."""
+) -> tuple[Labels, NDArray[np.bool_]]:
+    """For each node a label with which no edge of its small cube has four faces; none: True."""
     around, arms = octants(padded, nodes), _arms(edges, nodes)
     block = around.repeat(2, axis=1).repeat(2, axis=2).repeat(2, axis=3)
     for axis in range(3):
@@ -128,7 +152,7 @@ def _knots(
         good = open_ & (trial > 0) & ~_has_touching(block)
         chosen[good] = trial[good]
         open_ &= ~good
-    return chosen.astype(np.uint16), int(open_.sum())
+    return chosen.astype(np.uint16), open_
 
 
 def _has_touching(block: Labels) -> NDArray[np.bool_]:

@@ -39,10 +39,8 @@ class LabelSurfaces:
         Anticlockwise seen from `outer`.
     inner, outer : (m,) uint16
         The labels on both sides; 0 is empty.
-    touching : int
-        Edges along which a label touched itself.
-    open_edges : int
-        Places where that could not be mended; the labels there keep four faces at an edge.
+    touching, mended : int
+        Edges along which a label touched only itself; edges that were given to one label for it.
     """
 
     vertices: NDArray[np.float64]
@@ -50,7 +48,7 @@ class LabelSurfaces:
     inner: NDArray[np.uint16]
     outer: NDArray[np.uint16]
     touching: int
-    open_edges: int
+    mended: int
 
     def of(self, label: int, name: str) -> TriangleMesh:
         """The closed surface of one label."""
@@ -80,7 +78,7 @@ class LabelSurfaces:
             )
             step = (mean / degree - at) * (0.5 if turn % 2 == 0 else -0.53)
             at = np.clip(at + step, self.vertices - largest, self.vertices + largest)
-        return LabelSurfaces(at, self.faces, self.inner, self.outer, self.touching, self.open_edges)
+        return LabelSurfaces(at, self.faces, self.inner, self.outer, self.touching, self.mended)
 
 
 class _Faces:
@@ -236,7 +234,7 @@ def label_surfaces(volume: Volume) -> LabelSurfaces:
     -------
     LabelSurfaces
         Volumes of the labels add up to that of all labelled voxels, to rounding, but for mended
-        edges at the outside: each adds at most ``2 EDGE^2`` of a voxel and each of its ends
+        edges at the outside: each adds at most ``4 EDGE^2`` of a voxel and each of its ends
         ``8 EDGE^3``.
     """
     labels = volume.crisp().values
@@ -262,6 +260,6 @@ def label_surfaces(volume: Volume) -> LabelSurfaces:
         index.reshape(-1, 3),
         np.concatenate(faces.inner).astype(np.uint16),
         np.concatenate(faces.outer).astype(np.uint16),
-        seams.count,
-        seams.failed,
+        seams.touching,
+        seams.mended,
     )

@@ -38,11 +38,6 @@ def _notes(volume: Volume, surfaces: LabelSurfaces, smooth: int, worst: float) -
             f"Along {surfaces.touching} voxel edges a label touched itself; they were thickened to "
             "1/16 of a voxel, so that each surface is closed and simple."
         )
-    if surfaces.open_edges:
-        notes.append(
-            f"At {surfaces.open_edges} voxel corners this was not possible: four faces meet at an "
-            "edge there."
-        )
     return notes
 
 

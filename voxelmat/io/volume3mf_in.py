@@ -20,7 +20,7 @@ from PIL import Image
 
 from voxelmat.errors import FileFormatError, InputError
 from voxelmat.io.axes import straighten
-from voxelmat.io.label_table import LabelTable, labelled, parse_table
+from voxelmat.io.label_table import LabelTable, labelled, parse_table, read_beside
 from voxelmat.io.package3mf import check_package
 from voxelmat.io.volume3mf import CORE, TABLE, VOLUMETRIC
 from voxelmat.io.volume_limits import check_size, parse_xml
@@ -266,7 +266,8 @@ def read_3mf_volume(path: Path, *, field: str | None = None) -> Volume:
                 file=path.name,
                 key="field",
             )
-        table = _table(package)
+        beside = read_beside(path)
+        table = _table(package) if beside is None else beside
     return _volume(path, read, place, length_factor(unit), table, blends, notes)
 
 

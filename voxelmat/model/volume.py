@@ -22,6 +22,7 @@ __all__ = ["HALF_FULL", "Volume"]
 #: Occupancy (of 255) from which a voxel is kept where a format has no place for partly full ones.
 HALF_FULL = 128
 _LARGEST_LABEL = 65535
+_EXACT = 1 << 24  # whole numbers up to here are exact in float32
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -32,7 +33,8 @@ class Volume:
     ----------
     grid : VoxelGrid
     values : ndarray, shape ``grid.shape``
-        Indexed ``[i, j, k]``, x fastest: uint16 labels (0 is empty) or float32 grey values.
+        Indexed ``[i, j, k]``, x fastest: uint16 labels (0 is empty) or float32 grey values
+        (real numbers, or whole ones that are no labels: below 0 or above 65535).
     names : mapping of int to str
         What a label is called, where the file says so.
     blends : mapping of int to Blend
@@ -200,7 +202,7 @@ class Volume:
 
 
 def _kept(values: NDArray[Any], source: str) -> NDArray[Any]:
-    """Whole numbers as uint16 labels, others as float32."""
+    """Whole numbers from 0 to 65535 as uint16 labels, others as float32 grey values."""
     if values.dtype.kind == "f":
         return values.astype(np.float32, copy=False)
     if values.dtype.kind not in "iub":
@@ -209,10 +211,12 @@ def _kept(values: NDArray[Any], source: str) -> NDArray[Any]:
             file=source or None,
         )
     low, high = (int(values.min()), int(values.max())) if values.size else (0, 0)
-    if low < 0 or high > _LARGEST_LABEL:
+    if low >= 0 and high <= _LARGEST_LABEL:
+        return values.astype(np.uint16, copy=False)
+    if max(-low, high) > _EXACT:
         raise InputError(
-            f"Whole numbers go from {low} to {high}; labels lie in 0 to {_LARGEST_LABEL}. For grey "
-            "values, save them as real numbers (float32).",
+            f"Whole numbers go from {low} to {high}: too large for labels (0 to {_LARGEST_LABEL}) "
+            f"and for grey values (up to {_EXACT}).",
             file=source or None,
         )
-    return values.astype(np.uint16, copy=False)
+    return values.astype(np.float32)
