@@ -1,13 +1,21 @@
-"""Fused slicing against NumPy and Pillow in one run, same bits; prints one line of JSON.
+"""Fused slicing against NumPy and Pillow, one worker against two; prints a line of JSON each.
 
-Run: python tests/benchmarks/bench_slicing.py [width_mm]
+Run: python tests/benchmarks/bench_slicing.py [width_mm] [--lattice] [--demo]
+
+``--lattice`` writes a graded sheet lattice of 100 x 80 x 20 mm (a formula, invented) at 600 x 300
+dpi x 27 um, 1.65e9 sites, with support, by one worker process and by two, and checks the stack.
+``--demo`` writes and checks the stack of the demo design.
 """
 
 import io
 import json
+import os
+import shutil
+import statistics
 import sys
 import tempfile
 import time
+from fractions import Fraction
 from pathlib import Path
 
 import numpy as np
@@ -15,19 +23,26 @@ from PIL import Image
 
 sys.path.insert(0, str(Path(__file__).parents[1]))
 
+from big_designs import Sheet
 from print_twins import HARD, MID, SOFT, NumpySlicer, sphere_distance
 
 from voxelmat.io.png import encode_bitmap
 from voxelmat.model.blend import EMPTY, Blend
 from voxelmat.model.grid import VoxelGrid
 from voxelmat.model.part import Part
+from voxelmat.monitor import SILENT
 from voxelmat.printing.designed import used_resins
 from voxelmat.printing.halftone import Slicer
+from voxelmat.printing.job import one_part_job
+from voxelmat.printing.journal import Journal
 from voxelmat.printing.place import place
 from voxelmat.printing.preflight import preflight
 from voxelmat.printing.profile import load_profile
-from voxelmat.printing.stack import write_stack
+from voxelmat.printing.readback import read_stack
+from voxelmat.printing.stack import write_job, write_stack
 from voxelmat.printing.support import outline_box, outline_field
+from voxelmat.printing.workers import write_apart
+from voxelmat.printing.writer import image_files
 
 
 def graded_dome(width):
@@ -124,5 +139,103 @@ def main(width=60.0):
     )
 
 
+def by_workers(job, folder, workers):
+    """Wall and CPU seconds in which so many worker processes write the layers of a job."""
+    images = image_files(job)
+    partial = folder / f"{workers}.partial"
+    journal = Journal(partial, "bench", images.folders, images.names, resume=False)
+    start, before = time.perf_counter(), os.times()
+    write_apart(job, folder / str(workers), journal, SILENT, workers, None, 16)
+    seconds, after = time.perf_counter() - start, os.times()
+    journal.close()
+    shutil.rmtree(partial)
+    cpu = after.children_user + after.children_system
+    cpu -= before.children_user + before.children_system
+    digests = [journal.done[k].sha256 for k in sorted(journal.done)]
+    return seconds, cpu, digests
+
+
+def lattice():
+    """End to end on a graded lattice, and what a second worker gains."""
+    profile = load_profile("invented-standard").replace(layer=Fraction(27, 1000))
+    part = Sheet((333, 266, 66)).part()
+    job = one_part_job(part, profile, support="columns")
+    layers, rows, columns = job.window.image_shape
+    sites = layers * rows * columns
+    with tempfile.TemporaryDirectory() as name:
+        folder = Path(name)
+        # Alternating, for whatever else runs here comes and goes.
+        runs = [(n, *by_workers(job, folder, n)) for n in (1, 2) * 3]
+        if any(r[3] != runs[0][3] for r in runs):
+            raise SystemExit("Two workers do not write the bytes of one.")
+        (one, one_cpu), (two, two_cpu) = (
+            [statistics.median(r[k] for r in runs if r[0] == n) for k in (1, 2)] for n in (1, 2)
+        )
+        start, wall = time.process_time(), time.perf_counter()
+        write_job(job, folder / "s", threads=1)
+        written, wall = time.process_time() - start, time.perf_counter() - wall
+        stack = read_stack(folder / "s")
+        size = sum(f.stat().st_size for f in (folder / "s").rglob("*.png"))
+        start = time.process_time()
+        findings = preflight(stack, part)
+        checked_s = time.process_time() - start
+    return {
+        "benchmark": "graded lattice, end to end",
+        "sites": sites,
+        "channels": len(job.channel_names),
+        "one_worker_s": round(one, 2),
+        "two_workers_s": round(two, 2),
+        "two_over_one": round(one / two, 2),
+        "one_worker_cpu_s": round(one_cpu, 2),
+        "two_workers_cpu_s": round(two_cpu, 2),
+        "same_bytes": True,
+        "write_job_cpu_s": round(written, 2),
+        "write_job_wall_s": round(wall, 2),
+        "Msites_per_cpu_s": round(sites / written / 1e6, 1),
+        "MB": round(size / 1e6, 1),
+        "preflight_cpu_s": round(checked_s, 2),
+        "preflight_over_write": round(checked_s / written, 2),
+        "findings": sorted({f.code for f in findings}),
+        "load": os.getloadavg()[0],
+    }
+
+
+def demo():
+    """The stack of the demo design, written and checked."""
+    from voxelmat.workflow.build import build
+
+    built = build(Path(__file__).parents[2] / "notebooks" / "grip" / "grip.toml")
+    print_table = built.design.printing
+    with tempfile.TemporaryDirectory() as folder:
+        start = time.process_time()
+        stack = write_stack(
+            built.part,
+            built.profile,
+            Path(folder) / "s",
+            orientation=print_table.orientation,
+            support=print_table.support,
+            threads=1,
+        )
+        written = time.process_time()
+        findings = preflight(stack, built.part)
+        done = time.process_time()
+    layers, rows, columns = stack.raster.image_shape
+    sites = layers * rows * columns
+    return {
+        "benchmark": "demo, end to end",
+        "sites": sites,
+        "write_stack_cpu_s": round(written - start, 2),
+        "Msites_per_cpu_s": round(sites / (written - start) / 1e6, 1),
+        "preflight_cpu_s": round(done - written, 2),
+        "preflight_over_write": round((done - written) / (written - start), 2),
+        "findings": sorted({f.code for f in findings}),
+    }
+
+
 if __name__ == "__main__":
-    main(*map(float, sys.argv[1:]))
+    words = [w for w in sys.argv[1:] if not w.startswith("--")]
+    main(*map(float, words))
+    if "--lattice" in sys.argv:
+        print(json.dumps(lattice()))
+    if "--demo" in sys.argv:
+        print(json.dumps(demo()))
