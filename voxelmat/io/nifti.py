@@ -143,8 +143,8 @@ def read_nifti(path: Path, unit: str | None = None) -> Volume:
         code = head.get_xyzt_units()[0]
         factor = millimetres(None if code == "unknown" else code, unit, file)
         affine = _placing(image, file)
-        scaled = head.get_slope_inter()
-        plain = scaled[0] in (None, 1.0) and scaled[1] in (None, 0.0)
+        # The head forgets its scaling when it is loaded; the values keep it.
+        plain = (image.dataobj.slope, image.dataobj.inter) == (1.0, 0.0)
         values = (
             np.asanyarray(image.dataobj.get_unscaled())
             if plain

@@ -8,8 +8,10 @@ from __future__ import annotations
 
 import io
 import math
+import struct
 import warnings
 import zipfile
+import zlib
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
@@ -33,6 +35,10 @@ __all__ = ["read_3mf_volume"]
 _C, _V = f"{{{CORE}}}", f"{{{VOLUMETRIC}}}"
 _CHANNELS = {"red": 0, "green": 1, "blue": 2, "alpha": 3}
 _SHEET_BYTES = 1 << 28
+_DAMAGED = (
+    OSError, SyntaxError, ValueError, EOFError, NotImplementedError, struct.error, zlib.error,
+    zipfile.BadZipFile, Image.DecompressionBombError,
+)  # fmt: skip
 _MODES = {"L": 255, "RGB": 255, "RGBA": 255, "LA": 255, "P": 0, "1": 1, "I;16": 65535, "I": 65535}
 
 
@@ -76,7 +82,7 @@ class _Package:
                     return np.asarray(image), most
         except KeyError as error:
             raise FileFormatError(f"{self.name}: the sheet '{path}' is missing.") from error
-        except (OSError, SyntaxError, ValueError, Image.DecompressionBombError) as error:
+        except _DAMAGED as error:
             if isinstance(error, FileFormatError | InputError):
                 raise
             raise FileFormatError(

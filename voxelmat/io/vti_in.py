@@ -134,6 +134,8 @@ def _open(path: Path) -> _File:
         data = path.read_bytes()
     except OSError as error:
         raise ResourceError(f"{name} cannot be read: {error.strerror or error}.") from error
+    if not data.rstrip().endswith(b"</VTKFile>"):
+        raise FileFormatError(f"{name} is cut short, or is no VTI file.")
     head, appended, encoded = data, b"", False
     found = re.search(rb"<AppendedData([^>]*)>\s*_", data)
     if found:
