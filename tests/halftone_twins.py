@@ -77,19 +77,20 @@ class DiffusionSlicer(HashSlicer):
         carry, below = self.carry, self.dithered
         z, y0, x0 = (o + s for o, s in zip(self.offset, (layer, 0, 0), strict=True))
         self.carry = np.zeros_like(carry)
-        self.dithered = np.zeros_like(below)
+        self.dithered = inside & ((fraction > f32(1e-6)).sum(axis=2) > 1)
         owed = np.zeros_like(carry)
         out = np.zeros((rows, columns), np.uint8)
-        for y in range(rows):
-            step = 1 if (z + y0 + y) % 2 == 0 else -1
+        turn = 1 if z % 2 == 0 else -1
+        for y in range(rows)[::turn]:
+            step = 1 if (z // 2 + y0 + y) % 2 == 0 else -1
             for x in range(columns)[::step]:
                 if not inside[y, x]:
                     continue
                 f = fraction[y, x]
-                blend = [q for q in range(n) if f[q] > f32(1e-6)]
-                if len(blend) == 1:
+                if not self.dithered[y, x]:
                     out[y, x] = self.numbers[int(np.argmax(f))]
                     continue
+                blend = [q for q in range(n) if f[q] > f32(1e-6)]
                 value = owed[y, x] + carry[y, x]
                 share = f32(1) / f32(len(blend))
                 stray = f32(0)
@@ -98,7 +99,7 @@ class DiffusionSlicer(HashSlicer):
                         stray += value[q]
                         value[q] = 0
                 stray *= share
-                first = f32(0.0 if below[y, x] else 0.23)
+                first = f32(0.0 if below[y, x] else 0.21)
                 word = site_word(z, y0 + y, x0 + x, self.key)
                 noisy = {}
                 for q in blend:
@@ -107,21 +108,30 @@ class DiffusionSlicer(HashSlicer):
                     noisy[q] = value[q] + f32(0.5) * noise
                 best = max(blend, key=lambda q: noisy[q])
                 out[y, x] = self.numbers[best]
-                self.dithered[y, x] = True
                 value[best] -= f32(1)
-                self.spread(owed, y, x, step, value)
+                self.spread(owed, y, x, step, turn, value)
         return out
 
-    def spread(self, owed, y, x, step, e):
-        """Pass what stays owed on: 60 % within the layer, 40 % to the next."""
-        rows, columns, _ = owed.shape
-        places = [(0, step), (1, -step), (1, 0), (1, step)]
-        for (dy, dx), w in zip(places, self.WITHIN, strict=True):
-            if y + dy < rows and 0 <= x + dx < columns:
-                owed[y + dy, x + dx] += e * np.float32(0.6 * w)
-        for dy, dx, w in [(0, 0, 0.16), (-1, 0, 0.06), (1, 0, 0.06), (0, -1, 0.06), (0, 1, 0.06)]:
-            if 0 <= y + dy < rows and 0 <= x + dx < columns:
-                self.carry[y + dy, x + dx] += e * np.float32(w)
+    def open(self, y, x):
+        """Whether a site can take what is passed on."""
+        rows, columns = self.dithered.shape
+        return 0 <= y < rows and 0 <= x < columns and self.dithered[y, x]
+
+    def spread(self, owed, y, x, step, turn, e):
+        """Pass what stays owed on: 60 % within the layer, 40 % up; a closed site's share up."""
+        given = []
+        places = [(0, step), (turn, -step), (turn, 0), (turn, step)]
+        for field, near, weights in (
+            (owed, places, [np.float32(0.6 * w) for w in self.WITHIN]),
+            (self.carry, [(-turn, 0), (turn, 0), (0, -1), (0, 1)], [np.float32(0.06)] * 4),
+        ):
+            total = np.float32(0)
+            for (dy, dx), w in zip(near, weights, strict=True):
+                if self.open(y + dy, x + dx):
+                    field[y + dy, x + dx] += e * w
+                    total += w
+            given.append(total)
+        self.carry[y, x] += e * (np.float32(1) - given[0] - given[1])
 
 
 class RampSlicer(NumpySlicer):

@@ -3,7 +3,7 @@
 import numpy as np
 import pytest
 
-from voxelmat.kernels.diffusion import _most, _owed, _pass_on, _sweep
+from voxelmat.kernels.diffusion import _most, _owed, _pass_on, _shares, _sweep
 from voxelmat.kernels.sites import hash_row
 from voxelmat.printing.halftone import _WEIGHTS
 from voxelmat.printing.mask import SIDE, thresholds
@@ -15,13 +15,17 @@ WRAPS = pytest.mark.filterwarnings("ignore:overflow encountered")
 FLOYD_STEINBERG = np.array([7, 3, 5, 1]) / 16
 
 
-def spread(step):
+OPEN = np.ones(9, np.uint8)
+
+
+def spread(step, before=OPEN, here=OPEN, following=OPEN):
     """Where one unit of error of the middle site of seven goes: line, next line, layer above."""
-    line, following, before, above, after = (np.zeros((9, 2), np.float32) for _ in range(5))
+    fields = tuple(np.zeros((9, 2), np.float32) for _ in range(5))
     value = np.array([1.0, 0.0], np.float32)
-    weights = _WEIGHTS.astype(np.float32)
-    _pass_on(value, 1, 3, step, weights, line, following, before, above, after)
-    return [a[1:-1] for a in (line, following, before, above, after)]
+    share = np.empty(9, np.float32)
+    _shares(3, step, _WEIGHTS.astype(np.float32), before, here, following, share)
+    _pass_on(value, 1, 3, step, share, *fields)
+    return [a[1:-1] for a in fields]
 
 
 @pytest.mark.parametrize("step", [1, -1])
@@ -42,6 +46,19 @@ def test_all_of_the_error_is_passed_on_and_none_of_it_made():
     assert share_above == pytest.approx(0.4, abs=1e-6)
 
 
+@pytest.mark.parametrize("step", [1, -1])
+def test_at_walls_the_share_of_a_closed_site_goes_straight_up(step):
+    wall = OPEN.copy()
+    wall[4 + step] = 0  # the site ahead, and those above and behind it in the next row
+    line, following, before, above, after = spread(step, wall, wall, wall)
+    assert line[3 + step, 0] == following[3 + step, 0] == above[3 + step, 0] == 0
+    total = sum(f[:, 0].sum() for f in (line, following, before, above, after))
+    assert total == pytest.approx(1.0, abs=1e-6)
+    assert above[3, 0] == pytest.approx(0.16 + 0.06 + 0.6 * 8 / 16, abs=1e-6)
+    shut = np.zeros(9, np.uint8)
+    assert spread(step, shut, shut, shut)[3][3].tolist() == [1.0, -1.0]
+
+
 def one_layer(grey, noise=0.0, key=5):
     """Two resins, grey and its rest, diffused in one layer by the four weights alone."""
     rows, columns = grey.shape
@@ -51,14 +68,15 @@ def one_layer(grey, noise=0.0, key=5):
     line = np.zeros((2, columns + 2, 2), np.float32)
     above = np.zeros((3, columns + 2, 2), np.float32)
     carry = np.zeros((columns, 2), np.float32)
-    value = np.empty(2, np.float32)
+    can_take = np.zeros(columns + 2, np.uint8)
+    can_take[1:-1] = 1
     out = np.zeros((rows, columns), np.uint8)
     for y in range(rows):
         fraction = np.stack([grey[y], 1 - grey[y]], axis=1).astype(np.float32)
         _sweep(
-            inside, fraction, numbers, 0, y, 0, np.uint64(key), weights, np.float32(noise),
-            np.float32(0), carry, np.ones(columns, np.uint8), line[y % 2], line[1 - y % 2],
-            *above, value, out[y],
+            inside, can_take, can_take, can_take, fraction, numbers, 0, y, 0, np.uint64(key),
+            weights, np.float32(noise), np.float32(0), carry,
+            np.ones(columns, np.uint8), line[y % 2], line[1 - y % 2], *above, out[y],
         )  # fmt: skip
         line[y % 2] = 0
     return out
@@ -87,7 +105,7 @@ def test_what_a_blend_does_not_have_is_never_laid_and_shared_out():
     line = np.array([[0, 0, 0], [0.1, 0.3, -0.4], [0, 0, 0]], np.float32)
     carry = np.array([[0.0, 0.5, 0.0]], np.float32)
     value = np.empty(3, np.float32)
-    assert _owed(fraction, line, carry, 0, np.float32(0), value) == 2
+    _owed(fraction, line, carry, 0, np.float32(0), value)
     assert value == pytest.approx([0.5 + 0.1 + 0.4, 0.0, 0.5 - 0.4 + 0.4])
 
 

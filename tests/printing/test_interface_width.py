@@ -70,11 +70,10 @@ def test_the_mean_fraction_follows_the_ramp(axis, method, width):
     share = (got == 1).sum(axis=others)[laid > 0] / laid[laid > 0]
     ramp = np.clip(0.5 - place_mm[laid > 0] / width, 0, 1)
     # Independent droplets have a standard deviation of sqrt(f (1 - f) / n) (K3, Bernoulli), and
-    # those of a halftone are more even. Error diffusion loses what it passes into a pure zone,
-    # which shows in the outermost sites of a ramp; the sum stays right.
+    # those of a halftone are more even. Error diffusion loses what it passes up into a pure zone.
     allowed = 4 * np.sqrt(ramp * (1 - ramp) / laid.max())
     if method == "error diffusion":
-        allowed = np.where(allowed > 0, 0.08, 0)
+        allowed = np.where(allowed > 0, 0.03, 0)
     assert (abs(share - ramp) <= allowed).all()
     # Rows of sites do not fall on the interface, so the hard halves may differ by one row.
     assert share.mean() == pytest.approx(0.5, abs=0.01)

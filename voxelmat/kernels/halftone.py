@@ -135,8 +135,8 @@ def _row_pair(lower, upper, w, cumulative, i, at, rows):
     """Cumulative fractions of design rows `i` and ``i + 1``, in ``rows[i & 1]`` and the other.
 
     lower, upper u16 [r, c], `w` from the first to the second, cumulative f32 [resins - 1,
-    palette], rows f32 [2, resins - 1, c]; `at` is the i of the call before (-2: none), whose
-    rows are kept where they serve.
+    palette], rows f32 [2, resins - 1, c]; `at` is the i of the call before, above or below
+    (-2: none), whose rows are kept where they serve.
     """
     for r in range(i, i + 2):
         if at <= r <= at + 1:
