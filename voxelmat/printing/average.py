@@ -6,6 +6,7 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
+from scipy import ndimage
 
 from voxelmat.errors import InputError
 from voxelmat.kernels.bitplane import add_to_voxels, to_words
@@ -13,6 +14,7 @@ from voxelmat.model.blend import EMPTY, Blend
 from voxelmat.model.grid import VoxelGrid
 from voxelmat.model.part import Part
 from voxelmat.monitor import SILENT, Monitor
+from voxelmat.printing.bias import as_it_comes_out, part_bias
 from voxelmat.printing.raster import Raster
 from voxelmat.printing.readback import Stack
 
@@ -181,8 +183,13 @@ def _distinct(rows: NDArray[np.int64], levels: int) -> tuple[NDArray[np.int64], 
     return rows[first], code
 
 
-def stack_to_part(stack: Stack, part: Part, *, monitor: Monitor = SILENT) -> Part:
+def stack_to_part(
+    stack: Stack, part: Part, *, which: int | str = 0, monitor: Monitor = SILENT
+) -> Part:
     """The part as the printer will lay it, on the grid of `part`.
+
+    Where the stack was compensated for a bias of the printer, the outline is that which comes
+    out of it: the design's, wherever droplets are laid for it.
 
     Parameters
     ----------
@@ -190,6 +197,8 @@ def stack_to_part(stack: Stack, part: Part, *, monitor: Monitor = SILENT) -> Par
         Written from `part`.
     part : Part
         Gives grid, resins and law. Its bought-in bodies stay as they are.
+    which : int or str
+        Number or name of the part on the tray.
     monitor : Monitor
 
     Returns
@@ -207,10 +216,17 @@ def stack_to_part(stack: Stack, part: Part, *, monitor: Monitor = SILENT) -> Par
     for channel in stack.channels:
         if channel.role == "model" and channel.resin not in known:
             raise InputError(f"The stack lays '{channel.resin}', which the part does not know.")
-    averaged = average(stack, part.grid, monitor=monitor)
-    occupancy = np.rint(averaged.occupancy * 255).astype(np.uint8)
+    averaged = average(stack, part.grid, part=which, monitor=monitor)
+    bias = part_bias(stack.profile, stack.part(which).raster.rotation)
+    if any(bias):
+        fractions, occupancy = as_it_comes_out(averaged.filled, part, bias)
+    else:
+        fractions = averaged.fractions()
+        occupancy = np.rint(averaged.occupancy * 255).astype(np.uint8)
+    if len(stack.parts) > 1:  # a neighbour may reach into the window
+        occupancy[~ndimage.binary_dilation(part.labels > 0)] = 0
     solid = occupancy > 0
-    table = np.stack([f[solid] for f in averaged.fractions()], axis=1).astype(np.float64)
+    table = np.stack([f[solid] for f in fractions], axis=1).astype(np.float64)
     for levels in _LEVELS:
         steps, inverse = _distinct(_rounded(table, levels), levels)
         if len(steps) <= _MOST_BLENDS:

@@ -6,10 +6,11 @@ import numpy as np
 from numpy.typing import NDArray
 
 from voxelmat.errors import FileFormatError
+from voxelmat.model.image import ImageLayout
 from voxelmat.model.profile import PrintProfile
 from voxelmat.printing.raster import Raster
 
-__all__ = ["ImageOrder", "swath_sites"]
+__all__ = ["ImageOrder", "encoder_words", "swath_sites"]
 
 Bits = NDArray[np.uint8]
 
@@ -19,6 +20,16 @@ def swath_sites(window: Raster, profile: PrintProfile) -> int | None:
     if not profile.image.mirrored_passes:
         return None
     return max(1, round(profile.process.swath_mm / float(window.pitch[1])))
+
+
+def encoder_words(layout: ImageLayout) -> str:
+    """How images are encoded, for the manifest."""
+    if layout.kind == "png bitmap":
+        return "one-bit PNG, filter 0, deflate level 1"
+    if layout.kind == "png index":
+        return "8-bit indexed PNG, filter 0, deflate level 1"
+    coding = "Group 4" if layout.compression == "g4" else "deflate level 1"
+    return f"one-bit TIFF of many pages, {coding}, {layout.bit_order} in a byte"
 
 
 class ImageOrder:

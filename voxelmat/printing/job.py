@@ -12,7 +12,9 @@ from voxelmat.io.bigpart import AnyPart
 from voxelmat.model.halftone import Halftone
 from voxelmat.model.profile import PrintProfile
 from voxelmat.model.support_figures import DRAWN_SUPPORT, SUPPORT_POLICIES
+from voxelmat.printing.bias import compensated
 from voxelmat.printing.designed import used_resins
+from voxelmat.printing.imageorder import encoder_words
 from voxelmat.printing.order import halftone_method
 from voxelmat.printing.place import place
 from voxelmat.printing.raster import Raster
@@ -23,7 +25,6 @@ __all__ = ["PART_KINDS", "PlacedPart", "PrintJob", "one_part_job", "placed"]
 
 #: What stands on a tray: a part of the design, a mark for identification, a witness coupon.
 PART_KINDS = ("part", "mark", "coupon")
-_ENCODER = "one-bit PNG, filter 0, deflate level 1"
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -33,7 +34,7 @@ class PlacedPart:
     Attributes
     ----------
     part : Part or StoredPart
-        As it is sliced. `placed` makes one from a design.
+        As it is sliced, moved against the bias of the printer. `placed` makes one from a design.
     raster : Raster
         Its own window on the tray, and the transform into it.
     name : str
@@ -183,7 +184,8 @@ class PrintJob:
             ),
             "seed": self.seed,
             "support": self.support,
-            "encoder": _ENCODER,
+            "bias_mm": list(self.profile.bias),
+            "encoder": encoder_words(self.profile.image),
         }
 
     def digest(self, inputs: Mapping[str, str] | None = None) -> str:
@@ -228,7 +230,7 @@ def placed(
     Parameters
     ----------
     part : Part or StoredPart
-        The design.
+        The design; its outline is moved against the bias of the printer.
     profile : PrintProfile
     orientation : sequence of str
         Turns by multiples of 90 degrees about the tray's axes, in order: ``["x 90"]``.
@@ -244,6 +246,7 @@ def placed(
     InputError
         If there is nothing to print, or if the part does not fit the tray.
     """
+    part = compensated(part, profile, orientation)
     raster = place(outline_box(part), profile, orientation, position)
     return PlacedPart(part=part, raster=raster, name=name or part.name, kind=kind)
 
