@@ -184,6 +184,8 @@ def _check_region(design: Design, index: int, bodies: list[str]) -> None:
         if len(given) != 1:
             raise InputError("A label region takes exactly one of labels and blend.", key=key)
         _check_blend(region.settings.get("blend"), f"{key}.blend")
+    if region.kind == "grown":
+        _known(region.settings["body"], bodies, "body", f"{key}.body")
     if region.kind == "mesh":
         _check_unit(region.settings["mesh"], region.settings.get("unit"), key)
 

@@ -242,8 +242,9 @@ class LimitEntry:
 class OptimiseEntry:
     """What the optimiser is asked for; None leaves a setting to the optimiser's own default.
 
-    With `skip` a run takes the layout as it is. `design_in` names the regions that are designed (empty: the whole part), `keep`, `solid`,
-    `empty` and `protected` name regions, `fixed` pairs a region with the resin it must be.
+    With `skip` a run takes the layout as it is. `design_in` names the regions that are designed
+    (empty: the whole part), `keep`, `solid`, `empty` and `protected` name regions, `fixed` pairs
+    a region with the resin it must be.
     """
 
     resins: tuple[str, ...]

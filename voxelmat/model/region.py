@@ -13,6 +13,7 @@ from numpy.typing import NDArray
 
 from voxelmat.errors import InputError
 from voxelmat.model.part import Part
+from voxelmat.model.region_faces import nodes_of_faces, voxels_of_faces
 from voxelmat.model.surface import Faces, carriers, exposed_faces, visible_from
 
 __all__ = [
@@ -368,21 +369,8 @@ class PatchRegion:
 
     def voxels(self, part: Part) -> Bools:
         """The voxels behind those faces."""
-        out = np.zeros(part.grid.shape, dtype=bool, order="F")
-        out[tuple(self.faces(part).voxel.T)] = True
-        return out
+        return voxels_of_faces(self.faces(part), part)
 
     def nodes(self, part: Part) -> Bools:
         """The corners of those faces."""
-        out = np.zeros(part.grid.node_shape, dtype=bool, order="F")
-        faces = self.faces(part)
-        across = np.array([[1, 2], [0, 2], [0, 1]])[faces.axis]
-        rows = np.arange(len(faces))
-        for a in (0, 1):
-            for b in (0, 1):
-                node = faces.voxel.copy()
-                node[rows, faces.axis] += faces.side > 0
-                node[rows, across[:, 0]] += a
-                node[rows, across[:, 1]] += b
-                out[tuple(node.T)] = True
-        return out
+        return nodes_of_faces(self.faces(part), part)

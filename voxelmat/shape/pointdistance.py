@@ -13,7 +13,7 @@ from voxelmat.shape.bodies import Body
 from voxelmat.shape.inside import contains
 from voxelmat.shape.tree import LEAF, disc_tree
 
-__all__ = ["distance_to_bodies", "distance_to_mesh"]
+__all__ = ["distance_to_bodies", "distance_to_mesh", "distance_to_triangles"]
 
 
 def distance_to_mesh(mesh: TriangleMesh, points: NDArray[np.float64]) -> NDArray[np.float64]:
@@ -30,13 +30,34 @@ def distance_to_mesh(mesh: TriangleMesh, points: NDArray[np.float64]) -> NDArray
     InputError
         If the mesh has no face with an area.
     """
+    corners = np.array(mesh.triangles)
+    out = distance_to_triangles(corners, points, what=f"Mesh '{mesh.name}'")
+    return np.where(contains(mesh, points), -out, out)
+
+
+def distance_to_triangles(
+    corners: NDArray[np.float64], points: NDArray[np.float64], *, what: str = "The surface"
+) -> NDArray[np.float64]:
+    """Distance of points to a set of triangles, open or closed, mm.
+
+    Parameters
+    ----------
+    corners : ndarray of float64, shape (m, 3, 3)
+    points : ndarray of float64, shape (n, 3)
+    what : str
+        Begins the error's sentence.
+
+    Raises
+    ------
+    InputError
+        If no triangle has an area.
+    """
     from voxelmat.kernels.pointdistance import point_distances
 
-    corners = np.array(mesh.triangles)
     edges = corners[:, 1:] - corners[:, :1]
     wide = np.linalg.norm(np.cross(edges[:, 0], edges[:, 1]), axis=1) > 0
     if not wide.any():
-        raise InputError(f"Mesh '{mesh.name}' has no face with an area. Export it again.")
+        raise InputError(f"{what} has no face with an area. Export it again.")
     corners, edges = corners[wide], edges[wide]
     tree = disc_tree(corners)
     u, v = edges[tree.order].transpose(1, 0, 2)
@@ -44,12 +65,10 @@ def distance_to_mesh(mesh: TriangleMesh, points: NDArray[np.float64]) -> NDArray
     triangles = np.concatenate([corners[tree.order, 0], u, v, np.stack(products, axis=1)], axis=1)
     out = np.empty(len(points))
     point_distances(tree.nodes, triangles, LEAF, np.ascontiguousarray(points, dtype=float), out)
-    return np.where(contains(mesh, points), -out, out)
+    return out
 
 
-def distance_to_bodies(
-    bodies: Sequence[Body], points: NDArray[np.float64]
-) -> NDArray[np.float64]:
+def distance_to_bodies(bodies: Sequence[Body], points: NDArray[np.float64]) -> NDArray[np.float64]:
     """Signed distance to what is printed: all bodies together, bought-in ones cut away, mm.
 
     Inside an overlap or beside an interface the size is a lower bound; at the outline it is exact.

@@ -3,8 +3,10 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Iterator, Mapping
+from collections.abc import Iterator, Mapping, Sequence
 from contextlib import contextmanager
+from functools import lru_cache
+from pathlib import Path
 
 import numpy as np
 from numpy.typing import NDArray
@@ -26,13 +28,25 @@ from voxelmat.model.region import (
     Region,
     Sphere,
 )
+from voxelmat.model.region_faces import SurfaceRegion
+from voxelmat.shape.grow import Grown, grow
 from voxelmat.shape.inside import contains
 from voxelmat.shape.repair import mend
 
-__all__ = ["at_key", "box_words", "region_for", "regions_of", "whole_part"]
+__all__ = [
+    "AREA_CHANGE",
+    "at_key",
+    "box_words",
+    "grown_face",
+    "region_for",
+    "regions_of",
+    "whole_part",
+]
 
 #: Fractions of a palette entry that differ by less count as the blend that is asked for.
 _SAME_BLEND = 1e-3
+#: A grown face whose area changed by more than this share is shown and not used; ours.
+AREA_CHANGE = 0.05
 
 
 def whole_part() -> Box:
@@ -128,6 +142,8 @@ def region_for(entry: RegionEntry, design: Design, part: Part) -> Region:
             return _label_region(name, given, part)
         case "mesh":
             return _mesh_region(name, given, design)
+        case "grown":
+            return _grown_region(entry, design)
     raise InputError(f"Region '{name}' has kind {entry.kind!r}, which is not known.")
 
 
@@ -159,6 +175,42 @@ def _label_region(name: str, given: Mapping[str, object], part: Part) -> LabelRe
             f"{there}{'; ...' if len(part.palette) > 9 else ''}."
         )
     return LabelRegion(name=name, labels=close)
+
+
+def _grown_region(entry: RegionEntry, design: Design) -> SurfaceRegion:
+    """The face that was chosen on a body's mesh, found again on the mesh as it is now."""
+    given = entry.settings
+    found = grown_face(design, given["body"], given["seed_mm"], given["angle_deg"])
+    known = given.get("area_mm2")
+    if known is not None and abs(found.area_mm2 - known) > AREA_CHANGE * known:
+        raise InputError(
+            f"Region '{entry.name}' had {known:.4g} mm2 when it was chosen and has "
+            f"{found.area_mm2:.4g} mm2 on the mesh as it is now. Look at it: if it is right, set "
+            f"area_mm2 = {found.area_mm2:.6g}; else choose the face again."
+        )
+    return SurfaceRegion(name=entry.name, picks=found.holds)
+
+
+def grown_face(design: Design, body: str, seed_mm: Sequence[float], angle_deg: float) -> Grown:
+    """The face of a body's mesh at a point, grown up to an angle; see `voxelmat.shape.grow`."""
+    owner = next(b for b in design.bodies if b.name == body)
+    path = design.file(owner.mesh)
+    x, y, z = (float(v) for v in seed_mm)
+    stamp = path.stat().st_mtime_ns if path.is_file() else 0
+    return _grown(path, stamp, owner.unit, owner.object_name, (x, y, z), float(angle_deg))
+
+
+@lru_cache(maxsize=64)
+def _grown(
+    path: Path,
+    stamp: int,
+    unit: str | None,
+    object_name: str | None,
+    seed: tuple[float, float, float],
+    angle: float,
+) -> Grown:
+    del stamp  # a file that was written anew is read anew
+    return grow(read_mesh(path, unit, object_name=object_name)[0], seed, angle)
 
 
 def _mesh_region(name: str, given: Mapping[str, str], design: Design) -> MeshRegion:
