@@ -3,10 +3,13 @@
 from __future__ import annotations
 
 import importlib.util
+import sys
 from pathlib import Path
 
 import pytest
 
+# The samples shared between folders are importable.
+sys.path.insert(0, str(Path(__file__).resolve().parents[1]))
 _SOURCE = Path(__file__).resolve().parents[1] / "fabricated.py"
 
 
