@@ -225,12 +225,14 @@ def _claims(stack: Stack, facts: Facts) -> list[Finding]:
 
 def _volumes(stack: Stack, facts: Facts, part: Part | None) -> list[Finding]:
     raster = stack.raster
-    designed = {c.resin: c.designed_mm3 for c in stack.channels if c.designed_mm3 is not None}
+    designed = stack.designed_mm3
     if part is not None:
         designed.update({r: v for r, v in designed_volumes(part).items() if v > 0})
     rounding = sum(1 / n for n in raster.shape)  # half a site at each of two ends, every axis
     found = []
-    printed = {c.resin: n for c, n in zip(stack.channels, facts.sites, strict=True)}
+    printed: dict[str, int] = {}
+    for channel, sites in zip(stack.channels, facts.sites, strict=True):
+        printed[channel.resin] = printed.get(channel.resin, 0) + sites
     for resin, wanted in designed.items():
         volume = printed.get(resin, 0) * float(raster.site_volume)
         limit = (VOLUME_TOLERANCE + rounding) * wanted
