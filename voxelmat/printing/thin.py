@@ -90,7 +90,7 @@ class ThinScreen:
         return self._advance(~plane if self._solid else plane)
 
     def _advance(self, other: Plane) -> Plane | None:
-        core = ~self._others.push(self._spread(other, self._erode, self._other_edge))
+        core = ~self._near_other(other)
         self._pushed += 1
         if self._pushed <= self._wait[0]:
             return None
@@ -98,6 +98,10 @@ class ThinScreen:
         if self._pushed <= sum(self._wait):
             return None
         return self._layers.popleft() & ~near & self._valid
+
+    def _near_other(self, other: Plane) -> Plane:
+        """Sites that a cube round them would reach `other` from, ``size // 2`` layers back."""
+        return self._others.push(self._spread(other, self._erode, self._other_edge))
 
     @property
     def delay(self) -> int:
