@@ -17,8 +17,10 @@ from voxelmat.errors import Cancelled, FileFormatError, InputError, ResourceErro
 from voxelmat.io.bigpart import KINDS
 from voxelmat.io.bigpart_write import save_big_part
 from voxelmat.model.halftone import Halftone
+from voxelmat.model.image import ImageLayout
 from voxelmat.printing import workers as workers_module
-from voxelmat.printing.job import one_part_job
+from voxelmat.printing.compose import on_whole_bytes, tray_window
+from voxelmat.printing.job import PlacedPart, PrintJob, one_part_job, placed
 from voxelmat.printing.jobfolder import described, load_job
 from voxelmat.printing.profile import load_profile
 from voxelmat.printing.stack import write_job, write_stack
@@ -175,7 +177,7 @@ TRIALS = [pytest.param(n, marks=[] if n < 5 else pytest.mark.slow) for n in rang
 
 @pytest.mark.parametrize("trial", TRIALS)
 def test_killed_at_a_random_moment(tmp_path, whole, trial):
-    """The parent (even trials) or a worker is killed; the next run gives the same bytes."""
+    """Parent killed, worker killed, or parent interrupted; the next run gives the same bytes."""
     rng = random.Random(trial)
     folder, script = tmp_path / "s", tmp_path / "run.py"
     script.write_text(SCRIPT.format(path=[str(Path(__file__).parents[1])]))
@@ -195,11 +197,11 @@ def test_killed_at_a_random_moment(tmp_path, whole, trial):
         time.sleep(0.02 * rng.random())
         children = psutil.Process(run.pid).children(recursive=True) if run.poll() is None else []
         spawned = [c for c in children if any("spawn_main" in w for w in c.cmdline())]
-        victim = run.pid if trial % 2 == 0 or not spawned else rng.choice(spawned).pid
+        victim = rng.choice(spawned).pid if spawned and trial % 3 == 1 else run.pid
         if run.poll() is None:
-            os.kill(victim, signal.SIGKILL)
+            os.kill(victim, signal.SIGINT if trial % 3 == 2 else signal.SIGKILL)
         _, said = run.communicate(timeout=60)
-        assert run.returncode in (0, 1, -signal.SIGKILL)
+        assert run.returncode in (0, 1, -signal.SIGKILL, -signal.SIGINT)
         assert run.returncode != 1 or "layers are kept" in said
         _, alive = psutil.wait_procs(children, timeout=10)
         assert not alive, "workers outlived their parent"
@@ -253,3 +255,40 @@ def test_a_scheduler_that_lost_its_workers(tmp_path, monkeypatch):
     monkeypatch.setattr(workers_module, "LOST_AFTER", 0.5)
     with cluster(0) as address, pytest.raises(ResourceError, match="no workers"):
         write_stack(part(), STANDARD, tmp_path / "s", scheduler=address)
+
+
+def two_parts(profile, support):
+    """Two parts on one tray, one turned."""
+    items = [
+        placed(part(), profile, position=(50.0, 60.0), name="left"),
+        placed(part(), profile, ["z 90", "x 90"], position=(54.0, 61.0), name="right"),
+    ]
+    items = [PlacedPart(part=i.part, raster=on_whole_bytes(i.raster), name=i.name) for i in items]
+    return PrintJob(
+        profile=profile,
+        parts=tuple(items),
+        window=tray_window([i.raster for i in items], profile),
+        channels=profile.assign(("hard", "soft", "mid")),
+        support=support,
+        halftone=Halftone(method="hash noise"),
+    )
+
+
+@pytest.mark.parametrize(
+    ("kind", "support"), [("png index", "grid"), ("tiff pages", "skin"), ("png bitmap", "none")]
+)
+def test_trays_of_several_parts_in_every_kind_of_file(tmp_path, kind, support):
+    profile = STANDARD.replace(image=ImageLayout(kind=kind))
+    job = two_parts(profile, support)
+    write_job(job, tmp_path / "one", threads=1)
+    write_job(job, tmp_path / "two", workers=2, slab=19)
+    one, two = (
+        {
+            p.relative_to(tmp_path / name).as_posix(): p.read_bytes()
+            for p in (tmp_path / name).rglob("*")
+            if p.suffix in (".png", ".tif")
+        }
+        for name in ("one", "two")
+    )
+    assert one == two
+    assert one
