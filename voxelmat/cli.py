@@ -106,6 +106,9 @@ def _parser() -> argparse.ArgumentParser:
     )
     design(command("report", "write the report of what a run left in its folder"))
     _add_convert(command("convert", "turn a part or a volume file into another open format"))
+    sub = command("profile", "show a print profile and draw its tray")
+    sub.add_argument("profile", metavar="NAME_OR_FILE", help="a shipped name, or a .toml file")
+    sub.add_argument("--picture", type=Path, metavar="FILE.png", help="draw the tray into this file")
     command("warm", "compile all inner loops ahead, so that the first run need not")
     sub = command("materials", "show the resin library")
     sub.add_argument(
@@ -142,6 +145,8 @@ def _add_convert(sub: argparse.ArgumentParser) -> None:
     sub.add_argument(
         "--smooth", type=int, default=0, metavar="N", help="rounds of smoothing of STL surfaces"
     )
+    sub.add_argument("--low", type=float, metavar="V", help="make one label of values from here ..")
+    sub.add_argument("--high", type=float, metavar="V", help=".. to here, of all others nothing")
     sub.add_argument(
         "--design", type=Path, metavar="DESIGN.toml", help="where IN was made with its own curves"
     )
@@ -149,7 +154,7 @@ def _add_convert(sub: argparse.ArgumentParser) -> None:
 
 def _dispatch(options: argparse.Namespace) -> Answer:
     from voxelmat.console import ConsoleMonitor
-    from voxelmat.workflow import commands, convert_commands
+    from voxelmat.workflow import commands, convert_commands, profile_commands
 
     calls: dict[str, Callable[..., Answer]] = {
         "run": commands.run,
@@ -160,11 +165,12 @@ def _dispatch(options: argparse.Namespace) -> Answer:
         "report": commands.report,
         "materials": commands.materials,
         "warm": commands.warm,
+        "profile": profile_commands.profile,
         "convert": convert_commands.convert,
     }
     given = {k: v for k, v in vars(options).items() if k not in ("command", "json", "quiet")}
     with ConsoleMonitor(quiet=options.quiet) as monitor:
-        if options.command not in ("materials", "warm", "convert") and not _compiled():
+        if options.command not in ("materials", "warm", "profile", "convert") and not _compiled():
             monitor.say("First run here: the inner loops are compiled, once; about half a minute.")
         return calls[options.command](monitor=monitor, **given)
 

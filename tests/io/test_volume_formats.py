@@ -7,6 +7,7 @@ from pathlib import Path
 
 import numpy as np
 import pytest
+import trimesh
 from volume_samples import ORIGIN, SHAPE, SPACING, labels, sample
 
 from voxelmat.errors import InputError
@@ -274,6 +275,31 @@ def test_a_real_scan_in_millimetres():
     np.testing.assert_array_equal(volume.values, np.asanyarray(canonical.dataobj))
 
 
+def test_a_real_volume_of_many_materials(tmp_path):
+    """pyvista's segmented frog: 500 x 470 x 136 points of 1 x 1 x 1.5, 25 labels and empty."""
+    pyvista = pytest.importorskip("pyvista")
+    file = Path(pyvista.__file__).parent / "examples" / "frog_tissues.vti"
+    if not file.is_file():
+        pytest.skip("pyvista came without its example data")
+    volume = import_volume(file, unit="mm")
+    assert volume.grid.shape == (500, 470, 136)
+    assert volume.grid.spacing == (1.0, 1.0, 1.5)
+    assert len(volume.present()) == 25
+    values = pyvista.read(file)["MetaImage"].reshape(volume.grid.shape, order="F")
+    np.testing.assert_array_equal(volume.values, values)
+    crop = values[230:270, 200:240, 50:80]
+    grid = volume.grid.__class__(shape=crop.shape, spacing=volume.grid.spacing)
+    part = Volume(grid=grid, values=crop)
+    done = export(part, tmp_path / "frog.stl")
+    assert len(done.files) == len(part.present()) > 5
+    total = 0.0
+    for file in done.files:
+        mesh = trimesh.load_mesh(file)
+        assert mesh.is_watertight
+        total += mesh.volume
+    assert total == pytest.approx(np.count_nonzero(crop) * grid.voxel_volume, rel=1e-4)
+
+
 # ---------------------------------------------------------------- from labels to a part
 def test_labels_are_mapped():
     part = sample()
@@ -294,5 +320,7 @@ def test_grey_values_need_thresholds():
     with pytest.raises(InputError, match="thresholds"):
         grey.to_part({})
     np.testing.assert_array_equal(grey.mask(1.0), part.labels >= 2)
+    assert repr(grey).endswith("x 0.027 mm, grey values)")
+    assert repr(Volume.from_part(part)).endswith("x 0.027 mm, 3 labels)")
     with pytest.raises(InputError, match="low <= high"):
         grey.mask(2.0, 1.0)

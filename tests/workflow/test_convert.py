@@ -15,6 +15,7 @@ from voxelmat.io.store import save_part
 from voxelmat.io.volumes import export, import_volume, volume_to_part
 from voxelmat.model.curve import PairCurve
 from voxelmat.model.laws import CalibratedCurve, Reuss
+from voxelmat.model.volume import Volume
 
 
 def convert(capsys, *words):
@@ -33,6 +34,7 @@ def test_a_part_store_and_a_run_folder(tmp_path, capsys, law):
         assert code == 0
         assert data["format"] == "vti"
         assert data["grid"]["shape"] == list(part.grid.shape)
+        assert any("reuss" in note for note in data["notes"]) == (law is not None)
         back = volume_to_part(tmp_path / "out.vti", law=law)
         assert back == part
 
@@ -80,6 +82,21 @@ def test_a_unit_for_a_file_that_does_not_say(tmp_path, capsys):
     code, _ = convert(capsys, tmp_path / "a.nrrd", tmp_path / "b.vti", "--unit", "um")
     assert code == 0
     assert import_volume(tmp_path / "b.vti").grid.spacing == (1e-3, 1e-3, 1e-3)
+
+
+def test_grey_values_become_one_label(tmp_path, capsys):
+    grid = sample().grid
+    values = np.random.default_rng(1).normal(size=grid.shape)
+    export(Volume(grid=grid, values=values, name="scan"), tmp_path / "a.nrrd")
+    code, data = convert(capsys, tmp_path / "a.nrrd", tmp_path / "b.stl")
+    assert code == 3
+    assert "thresholds" in data["error"]
+    more = ("--low", "0.5", "--high", "2")
+    code, _ = convert(capsys, tmp_path / "a.nrrd", tmp_path / "b.vti", *more)
+    assert code == 0
+    back = import_volume(tmp_path / "b.vti")
+    np.testing.assert_array_equal(back.values, (values >= 0.5) & (values <= 2))
+    assert back.names == {1: "0.5 to 2"}
 
 
 def test_bad_input(tmp_path, capsys):

@@ -18,6 +18,10 @@ from voxelmat.units import number
 __all__ = ["write_label_stl"]
 
 
+# Less than half a voxel, so that opposite corners of a voxel do not pass each other.
+_MOST_MOVED = 0.45
+
+
 def _slug(volume: Volume, label: int) -> str:
     name = volume.names.get(label, "")
     return re.sub(r"[^A-Za-z0-9]+", "-", name).strip("-")[:40] or "label"
@@ -29,7 +33,12 @@ def _notes(volume: Volume, surfaces: LabelSurfaces, smooth: int, worst: float) -
         f"The volume of a surface differs by at most {number(100 * worst)} % from that of its "
         "voxels.",
     ]
-    if not smooth:
+    if smooth:
+        notes.append(
+            f"Smoothed {smooth} rounds: vertices moved by up to {_MOST_MOVED:g} of a voxel along "
+            "an axis, and details of one voxel may fold."
+        )
+    else:
         notes.append("Surfaces follow the voxels' faces, so slopes show steps.")
     if volume.occupancy is not None:
         notes.append("Voxels at least half full are taken as full, the others as empty.")
@@ -74,8 +83,7 @@ def write_label_stl(
         raise InputError("No voxel is at least half full, so there is no surface.", file=path.name)
     surfaces = label_surfaces(whole)
     if smooth:
-        # Less than half a voxel, so that opposite corners of a voxel do not pass each other.
-        surfaces = surfaces.smoothed(smooth, 0.45 * np.array(volume.grid.spacing))
+        surfaces = surfaces.smoothed(smooth, _MOST_MOVED * np.array(volume.grid.spacing))
     counts = np.bincount(whole.values.ravel(order="K"))
     worst = 0.0
     made = []

@@ -9,7 +9,7 @@ from pathlib import Path
 from voxelmat.errors import InputError
 from voxelmat.io.label_table import write_beside
 from voxelmat.model.blend import Blend
-from voxelmat.model.laws import BlendLaw
+from voxelmat.model.laws import BlendLaw, LogMix
 from voxelmat.model.material import Material
 from voxelmat.model.part import Part
 from voxelmat.model.volume import Volume
@@ -61,6 +61,16 @@ def _format(path: Path, given: str | None) -> str:
             return key
     known = ", ".join(e for endings in FORMATS.values() for e in endings)
     raise InputError(f"The ending does not say the format; use one of {known}.", file=path.name)
+
+
+def _lost(part: Part) -> list[str]:
+    """What no format keeps of a part."""
+    lost = []
+    if part.bodies:
+        lost.append("Which body owns a voxel is not kept, only its material.")
+    if part.law != LogMix():
+        lost.append(f"The blend law ({part.law.key}) is not kept; give it when reading.")
+    return lost
 
 
 def export(
@@ -133,8 +143,8 @@ def export(
 
         write_3mf(volume, path)
         notes.append("The composite's fractions are 65535ths; the label table keeps them exactly.")
-    if isinstance(source, Part) and source.bodies:
-        notes.append("Which body owns a voxel is not kept, only its material.")
+    if isinstance(source, Part):
+        notes += _lost(source)
     return Exported(format=kind, files=(path, write_beside(volume, path)), notes=tuple(notes))
 
 

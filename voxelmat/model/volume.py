@@ -71,6 +71,14 @@ class Volume:
             )
         object.__setattr__(self, "values", np.asfortranarray(_kept(values, self.source)))
 
+    def __repr__(self) -> str:
+        n, h = self.grid.shape, self.grid.spacing
+        kind = f"{len(self.present())} labels" if self.is_labels else "grey values"
+        return (
+            f"Volume({self.name!r}, {n[0]} x {n[1]} x {n[2]} voxels of {h[0]:g} x {h[1]:g} x "
+            f"{h[2]:g} mm, {kind})"
+        )
+
     @property
     def is_labels(self) -> bool:
         """True for whole-numbered labels, False for grey values."""
@@ -100,6 +108,17 @@ class Volume:
         if not low <= high:
             raise InputError(f"Thresholds need low <= high; got {low} and {high}.")
         return np.asarray((self.values >= low) & (self.values <= high), order="F")
+
+    def thresholded(self, low: float = -math.inf, high: float = math.inf) -> Volume:
+        """Label 1 where the value lies in ``low <= value <= high``, 0 elsewhere; see `mask`."""
+        return Volume(
+            grid=self.grid,
+            values=self.mask(low, high).astype(np.uint16),
+            names={1: f"{low:g} to {high:g}"},
+            name=self.name,
+            source=self.source,
+            notes=self.notes,
+        )
 
     def crisp(self) -> Volume:
         """Without partly full voxels: those at least half full stay, the others are emptied."""

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from pathlib import Path
 from typing import Any
 
@@ -76,6 +77,8 @@ def convert(
     unit: str | None,
     field: str | None,
     smooth: int,
+    low: float | None,
+    high: float | None,
     design: Path | None,
     monitor: Monitor,
 ) -> Answer:
@@ -89,6 +92,11 @@ def convert(
         else import_volume(source, unit=unit, field=field)
     )
     monitor.report("writing", done=1, total=2)
+    if low is not None or high is not None:
+        volume = read if isinstance(read, Volume) else Volume.from_part(read)
+        read = volume.thresholded(
+            -math.inf if low is None else low, math.inf if high is None else high
+        )
     done = export(read, target, smooth=smooth)
     monitor.report("writing", done=2, total=2)
     notes = [*(read.notes if isinstance(read, Volume) else ()), *done.notes]
