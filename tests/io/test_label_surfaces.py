@@ -14,7 +14,7 @@ from volume_samples import sample
 
 from voxelmat.errors import InputError
 from voxelmat.io.label_surfaces import EDGE, label_surfaces
-from voxelmat.io.mesh import read_mesh
+from voxelmat.io.mesh import read_mesh, write_stl
 from voxelmat.io.volumes import export
 from voxelmat.model.grid import VoxelGrid
 from voxelmat.model.volume import Volume
@@ -157,6 +157,19 @@ def test_stl_files_read_by_trimesh(tmp_path, smooth):
             assert share < 0.01
         (ours,) = read_mesh(file, "mm")
         assert ours.volume == pytest.approx(mesh.volume, rel=1e-6)
+
+
+@pytest.mark.parametrize("ending", ["stl", "3mf"])
+def test_icosphere_there_and_back(tmp_path, ending):
+    """Check L4: icosphere(3) has the volume 4.15274082; STL and 3MF round trip."""
+    sphere = trimesh.creation.icosphere(3)
+    sphere.export(tmp_path / f"a.{ending}")
+    (mesh,) = read_mesh(tmp_path / f"a.{ending}", "mm" if ending == "stl" else None)
+    assert mesh.volume == pytest.approx(4.15274082, rel=1e-6)  # single precision in STL
+    write_stl(mesh, tmp_path / "b.stl")
+    back = trimesh.load_mesh(tmp_path / "b.stl")
+    assert back.is_watertight
+    assert back.volume == pytest.approx(4.15274082, rel=1e-6)
 
 
 def test_no_surface_no_file(tmp_path):
