@@ -108,7 +108,7 @@ def _parser() -> argparse.ArgumentParser:
     _add_convert(command("convert", "turn a part or a volume file into another open format"))
     sub = command("profile", "show a print profile and draw its tray")
     sub.add_argument("profile", metavar="NAME_OR_FILE", help="a shipped name, or a .toml file")
-    sub.add_argument("--picture", type=Path, metavar="FILE.png", help="draw the tray into this file")
+    sub.add_argument("--picture", type=Path, metavar="FILE.png", help="draw the tray")
     command("warm", "compile all inner loops ahead, so that the first run need not")
     sub = command("materials", "show the resin library")
     sub.add_argument(
