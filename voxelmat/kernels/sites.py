@@ -41,7 +41,7 @@ def deal_sites(sites, start, count, table):
     """Deal the droplets of each number over the channels of its resin, in place.
 
     sites u8 [rows, columns], start i64 [3] layer, row and column of the first site on the tray,
-    count u8 [256] channels of each number (1 leaves it), table u8 [256, most] the channels.
+    count u8 [256] channels of each number, table u8 [256, most] the channels.
     Blocks of 2 x 2 x 2 sites take the channels in turn along x, y and z: single sites fall in step
     with the checkerboard that an even halftone nearly is, and share up to twice as unevenly.
     """
@@ -50,8 +50,20 @@ def deal_sites(sites, start, count, table):
         for x in range(sites.shape[1]):
             number = sites[y, x]
             n = count[number]
-            if n > 1:
-                sites[y, x] = table[number, (phase + ((start[2] + x) >> 1)) % n]
+            turn = (phase + ((start[2] + x) >> 1)) % n if n > 1 else 0
+            sites[y, x] = table[number, turn]
+
+
+@njit(cache=True, nogil=True)
+def lay_over(own, out):
+    """Lay the sites of a part over those that are there, u8 [rows, columns]; tell if any clash."""
+    clash = np.uint8(0)
+    for y in range(own.shape[0]):
+        for x in range(own.shape[1]):
+            a, b = own[y, x], out[y, x]
+            clash |= np.uint8(1) if (a > 0) & (b > 0) else np.uint8(0)
+            out[y, x] = a if a > 0 else b
+    return clash > 0
 
 
 @njit(cache=True, nogil=True)

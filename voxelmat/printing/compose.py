@@ -9,8 +9,9 @@ import numpy as np
 from numpy.typing import NDArray
 
 from voxelmat.errors import InputError
+from voxelmat.kernels.sites import lay_over
 from voxelmat.model.profile import PrintProfile
-from voxelmat.printing.halftone import Slicer
+from voxelmat.printing.halftone import Slicer, packed_planes
 from voxelmat.printing.job import PlacedPart
 from voxelmat.printing.raster import Raster
 
@@ -78,6 +79,7 @@ class TraySource:
     ) -> None:
         self.window = window
         self._slicers = tuple(slicers)
+        self._names = [item.name for item in parts]
         self._starts = []
         for item in parts:
             start = [
@@ -101,6 +103,43 @@ class TraySource:
         """Materials: the resins of the job in order, support last."""
         return self._slicers[0].n_channels
 
+    def sites(self, first: int, last: int) -> Iterator[NDArray[np.uint8]]:
+        """The material number of every site of layers ``first`` to ``last - 1``.
+
+        Yields
+        ------
+        ndarray of uint8, shape (rows, columns rounded up to a multiple of 8)
+            0 where nothing is laid. The array is used again for the next layer.
+
+        Raises
+        ------
+        InputError
+            Where two parts claim the same site.
+        """
+        _, rows, columns = self.image_shape
+        out = np.empty((rows, -(-columns // _BYTE) * _BYTE), dtype=np.uint8)
+        running: list[Iterator[NDArray[np.uint8]]] = [
+            s.sites(min(first, s.image_shape[0]), min(last, s.image_shape[0]))
+            for s in self._slicers
+        ]
+        for layer in range(first, last):
+            out[:] = 0
+            for name, slicer, sites, (row, byte) in zip(
+                self._names, self._slicers, running, self._starts, strict=True
+            ):
+                if layer >= slicer.image_shape[0]:
+                    continue
+                own = next(sites)
+                column = byte * _BYTE
+                there = out[row : row + own.shape[0], column : column + own.shape[1]]
+                if lay_over(own, there):
+                    raise InputError(
+                        f"'{name}' and another part claim the same droplet sites in layer {layer}; "
+                        "move them apart.",
+                        key="parts",
+                    )
+            yield out
+
     def layers(self, first: int, last: int) -> Iterator[NDArray[np.uint8]]:
         """The packed bits of layers ``first`` to ``last - 1``.
 
@@ -109,18 +148,5 @@ class TraySource:
         ndarray of uint8, shape (materials, rows, ceil(columns / 8))
             A fresh array a layer.
         """
-        _, rows, columns = self.image_shape
-        running: list[Iterator[NDArray[np.uint8]]] = [
-            s.layers(min(first, s.image_shape[0]), min(last, s.image_shape[0]))
-            for s in self._slicers
-        ]
-        for layer in range(first, last):
-            out = np.zeros((self.n_channels, rows, (columns + 7) // _BYTE), dtype=np.uint8)
-            for slicer, bits, (row, byte) in zip(
-                self._slicers, running, self._starts, strict=True
-            ):
-                if layer >= slicer.image_shape[0]:
-                    continue
-                own = next(bits)
-                out[:, row : row + own.shape[1], byte : byte + own.shape[2]] |= own
-            yield out
+        for sites in self.sites(first, last):
+            yield np.stack(list(packed_planes(sites, self.n_channels)))

@@ -291,7 +291,7 @@ def _sampled(job: PrintJob, at: NDArray[np.int64], monitor: Monitor) -> NDArray[
     counter = SwathCounter(job.window, job.profile)
     found = np.zeros((len(at), len(job.channel_names) + 2))
     for row, k in enumerate(int(k) for k in at):
-        bits = dealer.channels(next(iter(source.layers(k, k + 1))), k)
+        bits = np.stack(list(dealer.planes(next(source.sites(k, k + 1)), k)))
         sites, solid = packed_counts(bits)
         size = sum(len(data) for data in images.encode(bits))
         found[row] = [*sites, counter.count(solid), size]

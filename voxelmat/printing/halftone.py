@@ -24,10 +24,12 @@ from voxelmat.printing.ramp import InterfaceRamps, RampPlane
 from voxelmat.printing.raster import Raster
 from voxelmat.printing.support import SupportFill, fill_columns
 
-__all__ = ["INTERFACE_RULE", "INTERFACE_STEP", "MOST_RESINS", "Slicer"]
+__all__ = ["INTERFACE_RULE", "INTERFACE_STEP", "MOST_RESINS", "Slicer", "packed_planes"]
 
 #: A site is a byte: 0 for nothing, the resins, and support.
 MOST_RESINS = 254
+#: So many channels of a layer are packed at a time, whatever their number.
+GROUP = 8
 #: Error diffusion: what is passed on within the layer (7, 3, 5, 1 over 16 of 60 %), straight up
 #: and to each side of the layer above.
 _WEIGHTS = np.array([7, 3, 5, 1, 0, 0]) * 0.6 / 16 + np.array([0, 0, 0, 0, 0.16, 0.06])
@@ -47,6 +49,27 @@ def _fractions(part: AnyPart, resins: tuple[str, ...]) -> NDArray[np.float64]:
         if name in column:
             out[:, q] = given[:, column[name]]
     return out
+
+
+def packed_planes(sites: NDArray[np.uint8], n: int) -> Iterator[NDArray[np.uint8]]:
+    """The packed bits of numbers 1 to `n` one after another, a few of them in memory at a time.
+
+    Parameters
+    ----------
+    sites : ndarray of uint8, shape (rows, columns)
+        Columns a multiple of 8.
+    n : int
+        At most 255.
+
+    Yields
+    ------
+    ndarray of uint8, shape (rows, columns / 8)
+        The first site of a row in the highest bit.
+    """
+    for first in range(0, n, GROUP):
+        bits = np.empty((min(GROUP, n - first), len(sites), sites.shape[1] // 8), dtype=np.uint8)
+        pack_sites(sites, first, bits)
+        yield from bits
 
 
 def _axis(
@@ -145,8 +168,8 @@ class Slicer:
         axes = [_axis(raster.image_index(part.grid, m), true_shape[m]) for m in range(3)]
         (self._layer_at, self._layer_w, self._layers_on_grid) = axes[0]
         (self._row_at, self._row_w, rows) = axes[1]
-        (self._column_at, self._column_w, columns) = axes[2]
-        self._window = np.array([*rows, *columns], dtype=np.int64)
+        (self._column_at, self._column_w, across) = axes[2]
+        self._window = np.array([*rows, *across], dtype=np.int64)
         stepped = part.distance is None and part.occupancy is None
         weights = (self._layer_w, self._row_w, self._column_w)
         self._outline_w = tuple(_rounded(w) if stepped else w for w in weights)
@@ -286,9 +309,7 @@ class Slicer:
             A fresh array a layer; the first pixel of a row in the highest bit.
         """
         for sites in self.sites(first, last):
-            bits = np.empty((self.n_channels, len(sites), sites.shape[1] // 8), dtype=np.uint8)
-            pack_sites(sites, 0, bits)
-            yield bits
+            yield np.stack(list(packed_planes(sites, self.n_channels)))
 
     def slabs(self, size: int = SIDE) -> list[tuple[int, int]]:
         """First and last layer of slabs of at most `size` layers."""

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import colorsys
 import hashlib
-from collections.abc import Sequence
+from collections.abc import Iterable, Iterator, Sequence
 from pathlib import Path
 
 import numpy as np
@@ -21,6 +21,8 @@ from voxelmat.printing.journal import INDEX_FOLDER, LayerRecord
 from voxelmat.printing.raster import Raster
 
 __all__ = ["ImageFiles", "palette"]
+
+Planes = Iterable[NDArray[np.uint8]]
 
 
 def palette(channels: int) -> NDArray[np.uint8]:
@@ -92,32 +94,44 @@ class ImageFiles:
         return self.names(layer)[0 if self.kind == "png index" else channel]
 
     # ------------------------------------------------------------------ writing
-    def encode(self, bits: NDArray[np.uint8]) -> list[bytes]:
+    def encode(self, planes: Planes) -> Iterator[bytes]:
         """What the files of one layer hold, in the order of `names`.
 
         Parameters
         ----------
-        bits : ndarray of uint8, shape (channels, rows, stride)
+        planes : iterable of ndarray of uint8, shape (rows, stride)
+            The bits of the channels one after another, or an array of them all. Each is let go
+            before the next is asked for.
         """
-        pixels = self._order.to_file(bits)
+        pixels = (self._order.to_file(p[None])[0] for p in planes)
         if self.kind == "png bitmap":
-            return [encode_bitmap(p, self._order.width, self._ppm) for p in pixels]
+            return (encode_bitmap(p, self._order.width, self._ppm) for p in pixels)
         if self.kind == "tiff pages":
-            return [encode_page(p, self.page_format) for p in pixels]
+            return (encode_page(p, self.page_format) for p in pixels)
+        return iter([self._encode_index(pixels)])
+
+    def _encode_index(self, pixels: Iterable[NDArray[np.uint8]]) -> bytes:
         numbers = np.zeros((self._order.height, self._order.width), dtype=np.uint8)
         for channel, plane in enumerate(pixels):
             flat = np.unpackbits(plane, axis=1, count=self._order.width)
             flat *= np.uint8(channel + 1)
             numbers |= flat
-        return [encode_indexed(numbers, palette(len(self._channels)), self._ppm)]
+        return encode_indexed(numbers, palette(len(self._channels)), self._ppm)
 
-    def write(self, folder: Path, layer: int, bits: NDArray[np.uint8]) -> LayerRecord:
-        """Write the files of one layer and say what they are."""
-        digests = []
-        for name, data in zip(self.names(layer), self.encode(bits), strict=True):
+    def write(self, folder: Path, layer: int, planes: Planes) -> LayerRecord:
+        """Write the files of one layer and say what they are; `planes` as for `encode`."""
+        digests: list[str] = []
+        count: list[int] = []
+
+        def counted() -> Iterator[NDArray[np.uint8]]:
+            for plane in planes:
+                count.append(_count(plane))
+                yield plane
+
+        for name, data in zip(self.names(layer), self.encode(counted()), strict=True):
             (folder / name).write_bytes(data)
             digests.append(hashlib.sha256(data).hexdigest())
-        return LayerRecord(layer, tuple(digests), tuple(_count(bits)))
+        return LayerRecord(layer, tuple(digests), tuple(count))
 
     def assemble(self, folder: Path, monitor: Monitor) -> None:
         """Put the pages of each channel into one file; the pages stay until `tidy`.
@@ -186,11 +200,10 @@ class ImageFiles:
             raise FileFormatError(f"{name} states {ppm} pixels a metre; it should be {self._ppm}.")
 
 
-def _count(bits: NDArray[np.uint8]) -> list[int]:
-    """Set bits of each channel."""
-    count = np.zeros(len(bits), dtype=np.int64)
-    words = np.empty((bits.shape[1], (bits.shape[2] + 7) // 8), dtype=np.uint64)
-    for channel, plane in enumerate(bits):
-        to_words(plane, words)
-        count_planes(words[None], count[channel : channel + 1])
-    return [int(c) for c in count]
+def _count(plane: NDArray[np.uint8]) -> int:
+    """Set bits of one channel."""
+    count = np.zeros(1, dtype=np.int64)
+    words = np.empty((len(plane), (plane.shape[1] + 7) // 8), dtype=np.uint64)
+    to_words(plane, words)
+    count_planes(words[None], count)
+    return int(count[0])

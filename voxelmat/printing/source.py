@@ -9,8 +9,9 @@ from typing import Protocol
 import numpy as np
 from numpy.typing import NDArray
 
+from voxelmat.kernels.sites import deal_sites
 from voxelmat.printing.compose import TraySource
-from voxelmat.printing.halftone import Slicer
+from voxelmat.printing.halftone import Slicer, packed_planes
 from voxelmat.printing.job import PlacedPart, PrintJob
 from voxelmat.printing.support_policies import support_fill
 
@@ -27,6 +28,12 @@ class LayerSource(Protocol):
     @property
     def n_channels(self) -> int:
         """Materials: the resins of the job in order, support last."""
+
+    def sites(self, first: int, last: int) -> Iterator[NDArray[np.uint8]]:
+        """Material numbers of layers ``first`` to ``last - 1``, each uint8 (rows, 8 * stride).
+
+        The array is used again for the next layer; 0 where nothing is laid.
+        """
 
     def layers(self, first: int, last: int) -> Iterator[NDArray[np.uint8]]:
         """Layers ``first`` to ``last - 1``, each uint8 (materials, rows, ceil(columns / 8))."""
@@ -103,6 +110,31 @@ class Dealer:
         self._start = job.window.image_offset
         self._channels = _by_material(job.material_of)
         self._plain = all(len(c) == 1 for c in self._channels)
+        most = max(map(len, self._channels))
+        self._count = np.ones(256, dtype=np.uint8)
+        self._table = np.zeros((256, most), dtype=np.uint8)  # 0, nothing laid, stays 0
+        for material, places in enumerate(self._channels, start=1):
+            self._count[material] = len(places)
+            self._table[material, : len(places)] = np.add(places, 1)
+
+    def planes(self, sites: NDArray[np.uint8], layer: int) -> Iterator[NDArray[np.uint8]]:
+        """The packed bits of the channels one after another, from material numbers.
+
+        Parameters
+        ----------
+        sites : ndarray of uint8, shape (rows, 8 * stride)
+            Changed where a material has several channels.
+        layer : int
+            Counted from the first layer of the window.
+
+        Yields
+        ------
+        ndarray of uint8, shape (rows, stride)
+        """
+        if not self._plain:
+            start = np.add(self._start, (layer, 0, 0)).astype(np.int64)
+            deal_sites(sites, start, self._count, self._table)
+        yield from packed_planes(sites, sum(map(len, self._channels)))
 
     def channels(self, bits: NDArray[np.uint8], layer: int) -> NDArray[np.uint8]:
         """From (materials, rows, stride) to (channels, rows, stride).

@@ -77,10 +77,10 @@ def write_slab(place: str, partial: str, first: int, last: int) -> list[LayerRec
         return []
     records = []
     with (Path(place) / f"slab-{first}.jsonl").open("w", encoding="utf-8") as notes:
-        for layer, bits in enumerate(source.layers(first, last), start=first):
+        for layer, sites in enumerate(source.sites(first, last), start=first):
             if not description.exists():
                 break
-            record = images.write(Path(partial), layer, dealer.channels(bits, layer))
+            record = images.write(Path(partial), layer, dealer.planes(sites, layer))
             records.append(record)
             notes.write(json.dumps(record.as_dict()) + "\n")
             notes.flush()

@@ -43,11 +43,11 @@ class LayerWriter:
 
     def slab(self, first: int, last: int) -> None:
         """Write the layers ``first`` to ``last - 1``."""
-        for layer, bits in enumerate(self.source.layers(first, last), start=first):
+        for layer, sites in enumerate(self.source.sites(first, last), start=first):
             if self.stop.is_set():
                 return
-            dealt = self._dealer.channels(bits, layer)
-            self.journal.add(self._images.write(self.journal.partial, layer, dealt))
+            planes = self._dealer.planes(sites, layer)
+            self.journal.add(self._images.write(self.journal.partial, layer, planes))
 
 
 def image_files(job: PrintJob) -> ImageFiles:
