@@ -40,6 +40,8 @@ class Workbench:
         By name; each is an attribute too: ``bench.loads``.
     script : list of str
         The lines of code of everything that was done on the screen, in order.
+    picked : dict or None
+        The last place that was clicked: ``place_mm``, and what is known of it.
     """
 
     def __init__(self, design: str | Path) -> None:
@@ -52,14 +54,14 @@ class Workbench:
         self._listeners: list[Callable[[str], None]] = []
         self._built: tuple[Any, Built] | None = None
         self._noting = False
+        self.picked: dict[str, Any] | None = None
         self.sections: dict[str, Section] = {s.name: s for s in sections_of(self)}
         self.draft.listen(self._design_changed)
 
-    def __getattr__(self, name: str) -> Section:
+    def __getattr__(self, name: str) -> Any:
         sections = self.__dict__.get("sections", {})
         if name in sections:
-            found: Section = sections[name]
-            return found
+            return sections[name]
         raise AttributeError(f"The workbench has no '{name}'; it has {', '.join(sections)}.")
 
     # ------------------------------------------------------------------ the design
@@ -117,7 +119,10 @@ class Workbench:
 
     # ------------------------------------------------------------------ what happens
     def listen(self, listener: Callable[[str], None]) -> None:
-        """Call ``listener(what)`` after something changed: "design", "job", "message", "view"."""
+        """Call ``listener(what)`` after something changed.
+
+        `what` is "design", "job", "message", "pick", "highlight", or a section's own word.
+        """
         self._listeners.append(listener)
 
     def tell(self, what: str) -> None:
@@ -129,6 +134,17 @@ class Workbench:
         """Put a message where the user sees it."""
         self.message, self.message_is_bad = message, bad
         self.tell("message")
+
+    def pick(self, place_mm: tuple[float, float, float], **what: Any) -> None:
+        """Note a place on the part that was clicked; sections offer what can be done with it."""
+        x, y, z = (round(float(v), 4) for v in place_mm)
+        self.picked = {"place_mm": (x, y, z), **what}
+        self.tell("pick")
+
+    def highlight(self, region: str) -> None:
+        """Show where a region lies, in the pictures; an empty name shows none."""
+        self.draft.view["highlight"] = region
+        self.tell("highlight")
 
     def noted(self, line: str, action: Callable[[], Any]) -> Any:
         """Do something for the screen and, if it succeeds, note its line of code."""

@@ -6,9 +6,12 @@ from typing import TYPE_CHECKING
 
 from voxelmat.workbench.answers_section import AnswersSection
 from voxelmat.workbench.design_section import DesignSection
+from voxelmat.workbench.loads_section import LoadsSection
 from voxelmat.workbench.material_section import MaterialSection
+from voxelmat.workbench.needs_section import NeedsSection
 from voxelmat.workbench.optimise_section import OptimiseSection
 from voxelmat.workbench.section import Section
+from voxelmat.workbench.shape_section import ShapeSection
 
 if TYPE_CHECKING:
     from voxelmat.workbench.bench import Workbench
@@ -19,6 +22,9 @@ __all__ = ["sections_of"]
 def sections_of(bench: Workbench) -> list[Section]:
     """One of each."""
     return [
+        ShapeSection(bench),
+        LoadsSection(bench),
+        NeedsSection(bench),
         MaterialSection(bench),
         AnswersSection(bench),
         OptimiseSection(bench),
