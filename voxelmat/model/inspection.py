@@ -233,7 +233,7 @@ class InspectionSheet:
         return self.html()
 
     def __repr__(self) -> str:
-        count = {s: 0 for s in ("in tolerance", "out of tolerance", "cannot be said")}
+        count = dict.fromkeys(("in tolerance", "out of tolerance", "cannot be said"), 0)
         for row in self.rows:
             count[row.state] += 1
         words = ", ".join(f"{n} {s}" for s, n in count.items() if n)

@@ -73,9 +73,7 @@ def measure(
             raise InputError("Protected surfaces are measured against the design; give the part.")
         rows += _surfaces(view, part, protected, limit_mm, monitor)
     what = f"part '{view.name}' of " if view.name else ""
-    return InspectionSheet(
-        title=f"Measured on {what}stack '{stack.folder.name}'", rows=tuple(rows)
-    )
+    return InspectionSheet(title=f"Measured on {what}stack '{stack.folder.name}'", rows=tuple(rows))
 
 
 def inspection_findings(sheet: InspectionSheet) -> list[Finding]:
@@ -268,9 +266,7 @@ def _surfaces(
     rows = []
     for name, mask in protected.items():
         near = ndimage.binary_dilation(mask)[at]
-        dimension = Dimension(
-            name=name, kind="surface", nominal=0.0, lower=-allowed, upper=allowed
-        )
+        dimension = Dimension(name=name, kind="surface", nominal=0.0, lower=-allowed, upper=allowed)
         if not near.any():
             note = "none of its outline is in the layers that were looked at."
             rows.append(Measurement(dimension=dimension, measured=None, note=note))

@@ -174,7 +174,7 @@ def outline_deviation(
         raise InputError("The stack has no outline: nothing in it is solid.")
     grid, smallest = part.grid, min(part.grid.spacing)
     field = outline_field(target)
-    at_field = field_at(field, grid, found.points)
+    at_field = field_at(field, target.grid, found.points)
     if bodies:
         own = outline_field(part)
         bias = field_at(own, grid, found.points) - at_field if printed is not None else 0.0
@@ -182,7 +182,7 @@ def outline_deviation(
     else:
         deviation = at_field
     reach = 126 / DISTANCE_STEPS * smallest
-    normals = _normals(field, grid, found.points)
+    normals = _normals(field, target.grid, found.points)
     usual = np.abs(deviation) < max(2 * view.pitch.max(), smallest)
     rows = []
     for number, channel in enumerate(stack.channels):

@@ -2,22 +2,28 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from pathlib import Path
 
 from voxelmat.model.finding import SEVERITIES, Finding
 from voxelmat.model.part import Part
 from voxelmat.model.profile import PrintProfile
 from voxelmat.monitor import SILENT, Monitor
+from voxelmat.printing.bias import compensated, part_bias
+from voxelmat.printing.channelcheck import channel_findings, manifest_findings
 from voxelmat.printing.designed import designed_volumes
+from voxelmat.printing.expected import ExpectedLayers
 from voxelmat.printing.features import piece_findings, small_findings, zone_findings
-from voxelmat.printing.journal import JOURNAL
+from voxelmat.printing.filecheck import file_findings, folder_findings, tray_findings
+from voxelmat.printing.oddlayers import odd_layer_findings
+from voxelmat.printing.outlinecheck import outline_findings
 from voxelmat.printing.readback import Stack, read_stack
 from voxelmat.printing.scan import Facts, scan
 from voxelmat.printing.shifted import shifted_channel
-from voxelmat.printing.sums import OWN_FILES
+from voxelmat.shape.bodies import Body
 from voxelmat.units import quantity
 
-__all__ = ["VOLUME_TOLERANCE", "preflight"]
+__all__ = ["VOLUME_TOLERANCE", "as_sliced", "preflight"]
 
 #: Printed against designed volume of a resin may differ by so much, beyond what the rounding of
 #: the outline to whole sites explains: between voxel centres a curved outline is drawn by chords.
@@ -30,6 +36,7 @@ def preflight(
     part: Part | None = None,
     profile: PrintProfile | None = None,
     *,
+    bodies: Sequence[Body] = (),
     monitor: Monitor = SILENT,
 ) -> list[Finding]:
     """Check a finished stack.
@@ -39,10 +46,12 @@ def preflight(
     stack : Stack or path
         Read from disk whatever is passed; every file is compared with its SHA-256.
     part : Part, optional
-        The design; without it volumes are those in the manifest, and thin zones of one pure
-        resin are not looked for.
+        The design; without it volumes are those in the manifest, and neither outlines nor layers
+        nor thin zones are compared. On a tray of several parts volumes alone are.
     profile : PrintProfile, optional
         The printer; the one in the manifest if left out.
+    bodies : sequence of Body, optional
+        The meshes of the design, which its outlines are then compared with.
     monitor : Monitor
 
     Returns
@@ -54,19 +63,35 @@ def preflight(
     if not isinstance(stack, Stack):
         stack = read_stack(stack)
     printer = stack.profile if profile is None else profile
-    found = _tray(stack, printer) + _folder(stack)
+    found = tray_findings(stack, printer) + folder_findings(stack)
+    found += [*channel_findings(stack, part, printer), *manifest_findings(stack, part)]
+    alone = part if len(stack.parts) == 1 else None
+    sliced = None if alone is None else as_sliced(alone, stack)
+    expected = None if sliced is None else ExpectedLayers(stack, sliced, stack.raster)
     facts = scan(
         stack,
         _in_sites(stack, min(printer.minimum.wall, printer.minimum.strut)),
         _in_sites(stack, printer.minimum.gap),
+        expected=expected,
         monitor=monitor,
     )
-    found += _files(stack, facts) + _claims(stack, facts)
+    found += file_findings(stack, facts) + _claims(stack, facts)
+    found += odd_layer_findings(stack, facts.differences)
+    if expected is not None:
+        found += expected.findings()
+    if alone is not None and not (facts.bad_files or facts.changed_files):
+        found += outline_findings(stack, alone, sliced, bodies=bodies, monitor=monitor)
     found += _volumes(stack, facts, part)
     found += [*piece_findings(stack, facts), *small_findings(stack, facts, printer)]
     if part is not None:
         found += zone_findings(part, printer)
     return sorted(found, key=lambda f: SEVERITIES.index(f.severity))
+
+
+def as_sliced(part: Part, stack: Stack) -> Part:
+    """The part with its outline compensated for the bias of the printer, as it was sliced."""
+    bias = part_bias(stack.profile, stack.parts[0].raster.rotation)
+    return compensated(part, stack.profile.replace(bias=bias))  # type: ignore[return-value]
 
 
 def _in_sites(stack: Stack, size: float) -> tuple[int, int, int]:
@@ -76,107 +101,6 @@ def _in_sites(stack: Stack, size: float) -> tuple[int, int, int]:
         for axis, _ in stack.raster.image_axes
     )
     return (layer, row, column)
-
-
-# ---------------------------------------------------------------- tray and files
-def _tray(stack: Stack, profile: PrintProfile) -> list[Finding]:
-    raster = stack.raster
-    found = []
-    if profile.pitch != raster.pitch:
-        found.append(
-            Finding(
-                severity="stop",
-                code="other pitch",
-                message=f"The stack has pitches of {_um(raster.pitch)}; profile "
-                f"'{profile.name}' prints {_um(profile.pitch)}, so the part would be distorted.",
-                remedy="Write the stack for this profile.",
-            )
-        )
-    margins = (profile.edge_margin, profile.edge_margin, 0.0)
-    for axis, margin in enumerate(margins):
-        pitch = raster.pitch[axis]
-        low = float(raster.offset[axis] * pitch)
-        high = float((raster.offset[axis] + raster.shape[axis]) * pitch)
-        last = profile.tray_size[axis] - margin
-        if low < margin - float(pitch) or high > last + float(pitch):
-            found.append(
-                Finding(
-                    severity="stop",
-                    code="outside the tray",
-                    message=f"Along {'xyz'[axis]} the stack reaches from {low:.4g} to {high:.4g} "
-                    f"mm; the usable tray of '{profile.name}' from {margin:g} to {last:g} mm.",
-                    remedy="Move or turn the part, or take a larger printer.",
-                    value=high,
-                    limit=last,
-                    unit="mm",
-                )
-            )
-    return found
-
-
-def _um(pitch: tuple[object, ...]) -> str:
-    return " x ".join(f"{float(p) * 1000:.4g}" for p in pitch) + " um"  # type: ignore[arg-type]
-
-
-def _folder(stack: Stack) -> list[Finding]:
-    """Files that no channel explains."""
-    known = {*stack.files.names(), "manifest.json", JOURNAL, *OWN_FILES}
-    folders = {name.partition("/")[0] for name in known if "/" in name}
-    extra = sorted(p.name for p in stack.folder.iterdir() if p.name not in {*known, *folders})
-    for name in sorted(folders):
-        if (stack.folder / name).is_dir():
-            files = (f"{name}/{p.name}" for p in (stack.folder / name).iterdir())
-            extra += sorted(f for f in files if f not in known)
-    if not extra:
-        return []
-    return [
-        Finding(
-            severity="warn",
-            code="extra files",
-            message=f"{len(extra)} files do not belong to the stack: {', '.join(extra[:_NAMED])}.",
-            remedy="Remove them, so that the printer does not take them for layers.",
-            value=len(extra),
-            limit=0,
-        )
-    ]
-
-
-def _files(stack: Stack, facts: Facts) -> list[Finding]:
-    found = [
-        Finding(
-            severity="stop",
-            code="unreadable layer",
-            message=text,
-            remedy="Write the stack again.",
-        )
-        for _, _, text in facts.bad_files[:_NAMED]
-    ]
-    if len(facts.bad_files) > _NAMED:
-        found.append(
-            Finding(
-                severity="stop",
-                code="unreadable layer",
-                message=f"{len(facts.bad_files)} files in all are missing or unreadable.",
-                remedy="Write the stack again.",
-                value=len(facts.bad_files),
-                limit=0,
-            )
-        )
-    if facts.changed_files:
-        layer, channel = facts.changed_files[0]
-        found.append(
-            Finding(
-                severity="stop",
-                code="changed layer",
-                message=f"{len(facts.changed_files)} files are not those that were written; the "
-                f"first is layer {layer} of channel '{stack.channels[channel].name}': its SHA-256 "
-                "differs from the manifest's.",
-                remedy="Write the stack again.",
-                value=len(facts.changed_files),
-                limit=0,
-            )
-        )
-    return found
 
 
 # ---------------------------------------------------------------- sites and volumes

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
+from itertools import pairwise
 
 import numpy as np
 from numpy.typing import NDArray
@@ -77,7 +78,7 @@ def line_runs(view: PartView, point: Triple, direction: Array) -> list[Run]:
     bounds = [0, *turns.tolist(), len(solid)]
     return [
         Run(float(t[a]), float(t[b]), bool(solid[a]), a == 0 or b == len(solid))
-        for a, b in zip(bounds, bounds[1:], strict=False)
+        for a, b in pairwise(bounds)
     ]
 
 

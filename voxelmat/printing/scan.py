@@ -10,6 +10,8 @@ from numpy.typing import NDArray
 from voxelmat.kernels.bitplane import count_planes, first_site, lone_sites
 from voxelmat.monitor import SILENT, Monitor
 from voxelmat.printing.decoded import DecodedLayer, decoded_layers
+from voxelmat.printing.expected import ExpectedLayers
+from voxelmat.printing.oddlayers import LayerDifferences
 from voxelmat.printing.pieces import Piece, Pieces
 from voxelmat.printing.readback import Stack
 from voxelmat.printing.thin import ThinScreen
@@ -53,6 +55,7 @@ class Facts:
     hollows: list[Piece] = field(default_factory=list)
     walls: list[Piece] = field(default_factory=list)
     gaps: list[Piece] = field(default_factory=list)
+    differences: LayerDifferences = field(default_factory=LayerDifferences)
 
 
 class _Neighbours:
@@ -156,6 +159,7 @@ class _Main:
         facts.twice.note(k, twice, _count(twice))
         if self._printed is not None:
             self._printed.add(printed)
+        facts.differences.push(part)
         self._part.add(part)
         self._hollows.add(~part & self._valid)
         self._alone.push(part)
@@ -172,7 +176,14 @@ class _Main:
         return self.facts
 
 
-def scan(stack: Stack, wall: Sites, gap: Sites, *, monitor: Monitor = SILENT) -> Facts:
+def scan(
+    stack: Stack,
+    wall: Sites,
+    gap: Sites,
+    *,
+    expected: ExpectedLayers | None = None,
+    monitor: Monitor = SILENT,
+) -> Facts:
     """Read every layer and gather the facts.
 
     Parameters
@@ -180,6 +191,8 @@ def scan(stack: Stack, wall: Sites, gap: Sites, *, monitor: Monitor = SILENT) ->
     stack : Stack
     wall, gap : tuple of int
         Smallest wall and gap along layers, rows and columns, in sites.
+    expected : ExpectedLayers, optional
+        Is shown every layer as well.
     monitor : Monitor
 
     Returns
@@ -201,6 +214,8 @@ def scan(stack: Stack, wall: Sites, gap: Sites, *, monitor: Monitor = SILENT) ->
             part, _ = layer.union(support=False)
             if number == 0:
                 main.push(k, layer, part)
+                if expected is not None:
+                    expected.push(k, layer.planes)
             band.push(part)
             done = number * stack.n_layers + k + 1
             monitor.report("checking layers", done=done, total=total)

@@ -88,9 +88,7 @@ class PartView:
     def block(self, low: tuple[int, int, int], high: tuple[int, int, int]) -> Bools:
         """Solid of pixels `low` up to, without, `high`; outside the window is empty."""
         out = np.zeros([max(0, b - a) for a, b in zip(low, high, strict=True)], dtype=np.bool_)
-        inner = [
-            (max(a, 0), min(b, n)) for a, b, n in zip(low, high, self.shape, strict=True)
-        ]
+        inner = [(max(a, 0), min(b, n)) for a, b, n in zip(low, high, self.shape, strict=True)]
         if any(a >= b for a, b in inner):
             return out
         (_, _), (r0, r1), (c0, c1) = inner
@@ -114,17 +112,15 @@ def part_view(stack: Stack, part: str | None = None) -> PartView:
     InputError
         If the stack holds no part of that name, or several and none is named.
     """
-    parts = getattr(stack, "parts", ())
-    if len(parts) <= 1 and part is None:
-        return PartView(stack=stack, name="", raster=stack.raster, first=(0, 0, 0))
-    names = [p.name for p in parts]
-    if part not in names:
-        raise InputError(f"The stack holds the parts {', '.join(names)}; name one, got {part!r}.")
-    at = names.index(part)
-    rows, columns, layers = stack.crop(at)  # type: ignore[attr-defined]
+    if part is None and len(stack.parts) != 1:
+        names = ", ".join(p.name for p in stack.parts)
+        raise InputError(
+            f"The stack holds {len(stack.parts)} parts: {names}. Name one.", key="part"
+        )
+    found = stack.part(0 if part is None else part)
     return PartView(
         stack=stack,
-        name=names[at],
-        raster=parts[at].raster,
-        first=(layers.start, rows.start, columns.start),
+        name=found.name if len(stack.parts) > 1 else "",
+        raster=found.raster,
+        first=found.start,
     )

@@ -1,0 +1,100 @@
+"""What preflight says of an outline that lies off, and of resins or parts that are shifted."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Sequence
+
+from voxelmat.errors import FileFormatError, InputError
+from voxelmat.model.deviation import ChannelOutline, OutlineDeviation
+from voxelmat.model.finding import Finding
+from voxelmat.model.part import Part
+from voxelmat.monitor import SILENT, Monitor
+from voxelmat.printing.outlines import outline_deviation
+from voxelmat.printing.readback import Stack
+from voxelmat.printing.view import part_view
+from voxelmat.shape.bodies import Body
+
+__all__ = ["outline_findings"]
+
+#: A shift counts from this share of a pitch on. Ours; without a shift some hundredths are seen.
+_SHIFT = 0.4
+
+
+def outline_findings(
+    stack: Stack,
+    part: Part,
+    sliced: Part | None = None,
+    *,
+    bodies: Sequence[Body] = (),
+    monitor: Monitor = SILENT,
+) -> list[Finding]:
+    """Findings on the outline of a stack of one part.
+
+    Parameters
+    ----------
+    stack : Stack
+    part : Part
+        The design.
+    sliced : Part, optional
+        The design compensated for the printer's bias.
+    bodies : sequence of Body, optional
+        Its meshes.
+    monitor : Monitor
+    """
+    printed = None if sliced is part else sliced
+    try:
+        seen = outline_deviation(stack, part, bodies=bodies, printed=printed, monitor=monitor)
+    except (InputError, FileFormatError):
+        return []  # nothing to compare with or nothing to compare; other checks say so
+    found = []
+    pitch = part_view(stack).pitch
+    moved = _moved(seen.whole, pitch)
+    if moved:
+        found.append(_shift_finding("stack shifted", "The whole stack", seen.whole, moved))
+    else:
+        for row in seen.channels:
+            moved = _moved(row, pitch)
+            if moved:
+                what = f"The outline of '{row.name}'"
+                found.append(_shift_finding("channel shifted", what, row, moved))
+    if not seen.within and not found:
+        found.append(_off(seen))
+    return found
+
+
+def _moved(row: ChannelOutline, pitch: Sequence[float]) -> str:
+    """The axes along which an outline is shifted, in words; empty where none is."""
+    if row.shift_mm is None:
+        return ""
+    return ", ".join(
+        f"{1000 * s:+.0f} um along {axis}"
+        for axis, s, p in zip("xyz", row.shift_mm, pitch, strict=True)
+        if math.isfinite(s) and abs(s) >= _SHIFT * p
+    )
+
+
+def _shift_finding(code: str, what: str, row: ChannelOutline, moved: str) -> Finding:
+    return Finding(
+        severity="stop",
+        code=code,
+        message=f"{what} lies {moved} off the design (over {row.points} points of its outline).",
+        place_mm=row.place_mm,
+        remedy="Write the stack again; do not move images.",
+    )
+
+
+def _off(seen: OutlineDeviation) -> Finding:
+    whole = seen.whole
+    return Finding(
+        severity="warn",
+        code="outline",
+        message=f"The outline lies up to {1000 * whole.largest:.0f} um off {seen.against}, 95 % of "
+        f"it within {1000 * whole.p95:.0f} um; rounding explains {1000 * seen.limit_largest:.0f} "
+        f"and {1000 * seen.limit_p95:.0f} um.",
+        place_mm=whole.place_mm,
+        remedy="Look there; finer design voxels draw edges and small features better.",
+        value=1000 * whole.largest,
+        limit=1000 * seen.limit_largest,
+        unit="um",
+    )
