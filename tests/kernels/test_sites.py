@@ -4,8 +4,7 @@ import numpy as np
 import pytest
 from halftone_twins import site_word, unit
 
-from voxelmat.kernels.sites import deal_sites, hash_row, pack_sites
-from voxelmat.printing.source import deal
+from voxelmat.kernels.sites import deal_sites, hash_row, lay_over, pack_sites
 
 pytestmark = pytest.mark.nojit
 # Without the JIT NumPy warns of the wrap-around that the hash is made of.
@@ -25,7 +24,7 @@ def test_packing_in_groups_of_eight_equals_packbits(top):
         assert np.array_equal(bits, np.packbits(wanted, axis=2))
 
 
-def test_dealing_is_by_place_alone_and_equals_the_packed_form():
+def test_dealing_is_by_place_alone():
     random = np.random.default_rng(4)
     sites = random.integers(0, 4, (9, 32)).astype(np.uint8)
     count = np.ones(256, np.uint8)
@@ -38,13 +37,25 @@ def test_dealing_is_by_place_alone_and_equals_the_packed_form():
     deal_sites(whole, start, count, table)
     assert (whole[sites == 1] == 7).all()
     assert not whole[sites == 0].any()
-    for number, channels in ((2, (2, 4, 5)), (3, (3, 6))):
-        dealt = deal(np.packbits(sites == number, axis=1), *start, len(channels))
-        for channel, bits in zip(channels, dealt, strict=True):
-            assert np.array_equal(np.packbits(whole == channel, axis=1), bits)
+    # The slow twin: a site at a time, in blocks of 2 x 2 x 2 sites of the tray.
+    for y, x in np.argwhere(sites > 1):
+        channels = {2: (2, 4, 5), 3: (3, 6)}[int(sites[y, x])]
+        turn = 5 // 2 + (7 + y) // 2 + (11 + x) // 2
+        assert whole[y, x] == channels[turn % len(channels)]
     window = sites[3:, 8:].copy()
     deal_sites(window, np.add(start, (0, 3, 8)), count, table)
     assert np.array_equal(window, whole[3:, 8:])
+
+
+def test_laying_over_fills_what_is_empty_and_tells_of_a_clash():
+    random = np.random.default_rng(8)
+    one = random.integers(0, 3, (6, 16)).astype(np.uint8)
+    other = np.where(one > 0, 0, random.integers(0, 3, one.shape)).astype(np.uint8)
+    out = one.copy()
+    assert not lay_over(other, out)
+    assert np.array_equal(out, one + other)
+    other[tuple(np.argwhere(one > 0)[0])] = 1
+    assert lay_over(other, one.copy())
 
 
 @pytest.mark.parametrize("number", [2, 3, 5])

@@ -11,7 +11,7 @@ from voxelmat.printing.job import PlacedPart, PrintJob, one_part_job, placed
 from voxelmat.printing.preflight import preflight
 from voxelmat.printing.profile import load_profile
 from voxelmat.printing.readback import read_stack
-from voxelmat.printing.source import Dealer, deal
+from voxelmat.printing.source import Dealer
 from voxelmat.printing.stack import write_job, write_stack
 
 STANDARD = load_profile("invented-standard")
@@ -28,18 +28,18 @@ def part():
 # ---------------------------------------------------------------- a resin in several channels
 def test_dealt_sites_are_all_there_once_and_depend_on_their_place_only():
     rng = np.random.default_rng(5)
-    pixels = (rng.random((23, 40)) < 0.5).astype(np.uint8)
-    bits = np.packbits(pixels, axis=1)
-    for n in (1, 2, 3, 5):
-        dealt = deal(bits, 7, 100, 203, n)
-        planes = np.unpackbits(dealt, axis=2, count=40)
-        assert (planes.sum(axis=0) == pixels).all()
-        # The slow twin: a site at a time, in blocks of 2 x 2 x 2 sites of the tray.
-        for row, column in np.argwhere(pixels):
-            turn = 7 // 2 + (100 + row) // 2 + (203 + column) // 2
-            assert planes[turn % n, row, column] == 1
-        part_of = deal(bits[4:9, 1:3], 7, 104, 211, n)
-        assert (part_of == dealt[:, 4:9, 1:3]).all()
+    dealer = Dealer(one_part_job(part(), LOADED))  # hard, soft, mid, support
+    materials = rng.integers(0, 5, (23, 40)).astype(np.uint8)
+    z, y, x = one_part_job(part(), LOADED).window.image_offset
+    planes = np.stack(list(dealer.planes(materials.copy(), 7)))
+    pixels = np.unpackbits(planes, axis=2, count=40)
+    assert (pixels.sum(axis=0) == (materials > 0)).all()
+    of = {1: (0, 2, 4), 2: (1,), 3: (3,), 4: (5,)}
+    # The slow twin: a site at a time, in blocks of 2 x 2 x 2 sites of the tray.
+    for row, column in np.argwhere(materials):
+        turn = (z + 7) // 2 + (y + row) // 2 + (x + column) // 2
+        channels = of[int(materials[row, column])]
+        assert pixels[channels[turn % len(channels)], row, column] == 1
 
 
 def test_a_resin_in_three_channels(tmp_path):
@@ -171,4 +171,4 @@ def test_notes_and_channels_decide_the_digest():
     assert job.digest() != job.replace(seed=4).digest()
     assert job.digest() != job.digest({"a.stl": "0" * 64})
     assert HARD.name in job.resins
-    assert Dealer(job).channels(np.zeros((4, 2, 1), np.uint8), 0).shape == (4, 2, 1)
+    assert len(list(Dealer(job).planes(np.zeros((4, 8), np.uint8), 0))) == 4

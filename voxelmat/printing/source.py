@@ -1,4 +1,4 @@
-"""Where the layers of a job come from: packed bits of materials, then dealt to channels."""
+"""Where the layers of a job come from: materials site by site, then dealt to channels."""
 
 from __future__ import annotations
 
@@ -15,11 +15,11 @@ from voxelmat.printing.halftone import Slicer, packed_planes
 from voxelmat.printing.job import PlacedPart, PrintJob
 from voxelmat.printing.support_policies import support_fill
 
-__all__ = ["Dealer", "LayerSource", "deal", "slicer_of", "source_of"]
+__all__ = ["Dealer", "LayerSource", "slicer_of", "source_of"]
 
 
 class LayerSource(Protocol):
-    """Gives the packed bits of any run of layers; the same bits for any split into runs."""
+    """Gives the sites of any run of layers; the same for any split into runs."""
 
     @property
     def image_shape(self) -> tuple[int, int, int]:
@@ -75,36 +75,13 @@ def source_of(job: PrintJob, scratch: Path | None = None) -> LayerSource:
     return TraySource(job.parts, slicers, job.window)
 
 
-def deal(bits: NDArray[np.uint8], layer: int, row0: int, column0: int, n: int) -> NDArray[np.uint8]:
-    """Deal the sites of one material among `n` channels.
-
-    Site (layer, row, column) of the tray's image goes to channel ``(layer // 2 + row // 2 +
-    column // 2) mod n``, so what a site gets depends on nothing but its place. Blocks of 2 x 2
-    x 2 sites, because single sites fall in step with the checkerboard that an even halftone
-    nearly is, and share up to twice as unevenly.
-
-    Parameters
-    ----------
-    bits : ndarray of uint8, shape (rows, stride)
-        Packed, the first pixel of a row in the highest bit.
-    layer, row0, column0 : int
-        Layer, first row and first column in the image of the whole tray.
-    n : int
-
-    Returns
-    -------
-    ndarray of uint8, shape (n, rows, stride)
-        Disjoint; their union is `bits`.
-    """
-    rows, stride = bits.shape
-    columns = (column0 + np.arange(stride * 8)) // 2
-    combs = np.packbits(np.stack([columns % n == c for c in range(n)]), axis=1)
-    phase = (layer // 2 + (row0 + np.arange(rows)) // 2) % n
-    return np.stack([bits & combs[(channel - phase) % n] for channel in range(n)])
-
-
 class Dealer:
-    """Turns the materials of a layer into the channels of a job."""
+    """Turns the materials of a layer into the channels of a job.
+
+    Of a resin in n channels, site (layer, row, column) of the tray's image goes to its channel
+    ``(layer // 2 + row // 2 + column // 2) mod n``, so what a site gets depends on nothing but
+    its place.
+    """
 
     def __init__(self, job: PrintJob) -> None:
         self._start = job.window.image_offset
@@ -135,25 +112,6 @@ class Dealer:
             start = np.add(self._start, (layer, 0, 0)).astype(np.int64)
             deal_sites(sites, start, self._count, self._table)
         yield from packed_planes(sites, sum(map(len, self._channels)))
-
-    def channels(self, bits: NDArray[np.uint8], layer: int) -> NDArray[np.uint8]:
-        """From (materials, rows, stride) to (channels, rows, stride).
-
-        Parameters
-        ----------
-        bits : ndarray of uint8
-        layer : int
-            Counted from the first layer of the window.
-        """
-        if self._plain:
-            return bits
-        out = np.empty((sum(map(len, self._channels)), *bits.shape[1:]), dtype=np.uint8)
-        z, y, x = self._start
-        for material, places in enumerate(self._channels):
-            dealt = deal(bits[material], z + layer, y, x, len(places))
-            for place, plane in zip(places, dealt, strict=True):
-                out[place] = plane
-        return out
 
 
 def _by_material(material_of: Sequence[int]) -> list[list[int]]:
