@@ -204,7 +204,7 @@ class _Cut:
         """Cell centres in part coordinates."""
         grid = self.part.grid
         first = np.zeros(3)
-        steps = np.zeros((2, 3))
+        steps = np.zeros((3, 3))
         middle = (
             place[0] + self.size[0] / 2,
             place[1] + self.size[1] / 2,
@@ -213,9 +213,9 @@ class _Cut:
         for n, (axis, sign) in enumerate(self.view.axes):
             low, h = grid.origin[axis], grid.spacing[axis]
             first[axis] = low + h * (middle[n] if sign > 0 else grid.shape[axis] - middle[n])
-            if n < 2:
-                steps[n, axis] = sign * h * self.size[n]
-        origin, right, up = (tuple(float(x) for x in v) for v in (first, *steps))
+            along = self.size[n] if n < 2 else (self.size[2] + self.wall) / 2
+            steps[n, axis] = sign * h * along
+        origin, right, up, inward = (tuple(float(x) for x in v) for v in (first, *steps))
         return Mark(
             part=name,
             text=self.text,
@@ -223,6 +223,7 @@ class _Cut:
             origin_mm=origin,  # type: ignore[arg-type]
             right_mm=right,  # type: ignore[arg-type]
             up_mm=up,  # type: ignore[arg-type]
+            inward_mm=inward,  # type: ignore[arg-type]
             raised=False,
         )
 

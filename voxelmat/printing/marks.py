@@ -26,6 +26,7 @@ SIDES = ("", "left", "right")
 _LEAST_DIFFERENCE = 0.1
 
 Vector = tuple[float, float, float]
+_VECTORS = ("origin_mm", "right_mm", "up_mm", "inward_mm")
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -44,6 +45,8 @@ class Mark:
         coordinates, or those of the part until it is placed.
     right_mm, up_mm : tuple of float
         From a cell to the next one along the text, and upwards.
+    inward_mm : tuple of float
+        From a cell into the solid behind it, which tells up from down.
     raised : bool
         True for strokes that are solid, False for engraved ones.
     """
@@ -54,6 +57,7 @@ class Mark:
     origin_mm: Vector
     right_mm: Vector
     up_mm: Vector
+    inward_mm: Vector
     raised: bool
 
     @property
@@ -63,7 +67,10 @@ class Mark:
         return np.ascontiguousarray(rows.T)
 
     def samples(self) -> tuple[NDArray[np.float64], NDArray[np.bool_]]:
-        """Centres of all cells, mm, shape (cells, 3), and whether each should be solid."""
+        """Places to look at, mm, shape (places, 3), and whether each should be solid.
+
+        The centres of all cells, and the solid behind each.
+        """
         cells = self.cells
         c, r = np.meshgrid(*(np.arange(n) for n in cells.shape), indexing="ij")
         at = (
@@ -72,7 +79,12 @@ class Mark:
             + r[..., None] * np.array(self.up_mm)
         )
         solid = cells if self.raised else ~cells
-        return at.reshape(-1, 3), solid.ravel()
+        at = at.reshape(-1, 3)
+        behind = np.ones(len(at), dtype=np.bool_)
+        return (
+            np.concatenate([at, at + np.array(self.inward_mm)]),
+            np.concatenate([solid.ravel(), behind]),
+        )
 
     def moved(self, rotation: Sequence[Sequence[int]], translation: Vector) -> Mark:
         """From the coordinates of the part to those of the tray."""
@@ -88,6 +100,7 @@ class Mark:
             origin_mm=vector(turn @ self.origin_mm + np.array(translation)),
             right_mm=vector(turn @ self.right_mm),
             up_mm=vector(turn @ self.up_mm),
+            inward_mm=vector(turn @ self.inward_mm),
             raised=self.raised,
         )
 
@@ -100,6 +113,7 @@ class Mark:
             "origin_mm": list(self.origin_mm),
             "right_mm": list(self.right_mm),
             "up_mm": list(self.up_mm),
+            "inward_mm": list(self.inward_mm),
             "raised": self.raised,
         }
 
@@ -113,9 +127,7 @@ class Mark:
             If the data are not those of a mark.
         """
         try:
-            vectors = {
-                k: tuple(float(v) for v in data[k]) for k in ("origin_mm", "right_mm", "up_mm")
-            }
+            vectors = {k: tuple(float(v) for v in data[k]) for k in _VECTORS}
             rows = tuple(str(r) for r in data["rows"])
             whole = (
                 all(len(v) == 3 and all(map(math.isfinite, v)) for v in vectors.values())
@@ -216,5 +228,6 @@ def tag_mark(tag: Part, text: tuple[str, ...], part: str) -> Mark:
         origin_mm=(x / 2, y / 2, tag.grid.upper[2] - z / 2),
         right_mm=(x, 0.0, 0.0),
         up_mm=(0.0, y, 0.0),
+        inward_mm=(0.0, 0.0, -tag.grid.upper[2] / 2),
         raised=True,
     )
