@@ -102,7 +102,7 @@ class PrintProfile:
         put = object.__setattr__
         put(self, "channels", dict(self.channels))
         put(self, "tray_size", tuple(float(v) for v in self.tray_size))
-        if not _NAME.match(self.name):
+        if not _NAME.fullmatch(self.name):
             _refuse("name", f"letters, digits, '-' and '_' (at most 32); got {self.name!r}")
         for key in ("pitch_x", "pitch_y", "layer"):
             value = getattr(self, key)
@@ -127,7 +127,7 @@ class PrintProfile:
         if not 1 <= len(self.channels) <= _MOST_CHANNELS:
             _refuse("channels", f"1 to {_MOST_CHANNELS} channels; got {len(self.channels)}")
         for channel in self.channels:
-            if not _NAME.match(channel):
+            if not _NAME.fullmatch(channel):
                 _refuse("channels", f"names of letters, digits, '-' and '_'; got {channel!r}")
         if len({c.lower() for c in self.channels}) != len(self.channels):
             _refuse("channels", "names that differ by more than capitals (they become folders)")

@@ -110,6 +110,9 @@ def _check(data: Any, name: str) -> None:
         wanted = raster.image_shape[0] if indexed == (which == "'layer_sha256'") else 0
         if count != wanted:
             raise FileFormatError(f"{name}: {which} lists {count} files; it should list {wanted}.")
+    for channel in channels:
+        if channel["name"] not in profile.channels:
+            raise FileFormatError(f"{name}: its profile has no channel '{channel['name']}'.")
     if len({c["name"].lower() for c in channels}) != len(channels):
         raise FileFormatError(f"{name}: two channels share one folder.")
     if sum(c["role"] == "support" for c in channels) > 1:
