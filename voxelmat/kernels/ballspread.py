@@ -1,6 +1,5 @@
 """Spreading packed one-bit planes by a ball: every output plane is an OR of moved rows."""
 
-import numpy as np
 from numba import njit
 
 

@@ -37,7 +37,7 @@ def _ball(size: tuple[int, int, int]) -> NDArray[np.int64]:
     half = size[2] / 2 * np.sqrt(np.clip(rest, 0, None)) + 1e-9
     odd = size[2] % 2
     count = 2 * np.floor(half + (0.0 if odd else 0.5)).astype(np.int64) + (1 if odd else 0)
-    return np.where(rest < -1e-12, 0, np.minimum(count, size[2]))
+    return np.asarray(np.where(rest < -1e-12, 0, np.minimum(count, size[2])), np.int64)
 
 
 class _BallSpread:

@@ -119,7 +119,7 @@ class GridSupport:
         off = np.abs(at % pitch)
         off = np.minimum(off, pitch - off) * edge - self.sizes.grid_wall / 2
         steps = np.rint(off * DISTANCE_STEPS / min(self.spacing)) - CLEARANCE
-        return np.clip(steps, -_FAR, _FAR - CLEARANCE).astype(np.int16)
+        return np.asarray(np.clip(steps, -_FAR, _FAR - CLEARANCE), np.int16)
 
 
 @dataclass(frozen=True, slots=True)

@@ -36,7 +36,6 @@ _NAMED = 3  # of these are listed
 class _Kind:
     """One screen: what it looks for, its limit along layers, rows and columns, mm."""
 
-    name: str
     solid: bool
     flat: bool | None  # only walls, only struts, or either
     limit: Triple
@@ -52,14 +51,14 @@ def _kinds(stack: Stack, profile: PrintProfile) -> list[_Kind]:
     least = profile.minimum
     found = []
     for solid, flat, thin in (
-        (True, ("wall", least.wall_xyz), ("strut", least.strut_xyz)),
-        (False, ("gap", least.gap_xyz), ("hole", least.hole_xyz)),
+        (True, least.wall_xyz, least.strut_xyz),
+        (False, least.gap_xyz, least.hole_xyz),
     ):
-        if flat[1] == thin[1]:
-            kinds = [(f"{flat[0]} or {thin[0]}", None, flat[1])]
+        if flat == thin:
+            kinds: list[tuple[bool | None, Triple]] = [(None, flat)]
         else:
-            kinds = [(flat[0], True, flat[1]), (thin[0], False, thin[1])]
-        found += [_Kind(n, solid, f, image_triple(stack, t)) for n, f, t in kinds]
+            kinds = [(True, flat), (False, thin)]
+        found += [_Kind(solid, f, image_triple(stack, t)) for f, t in kinds]
     return found
 
 
@@ -134,9 +133,9 @@ def thickness_findings(
         for kept, pieces in zip(places, band.found(), strict=True):
             kept += [(p, band.first) for p in pieces if p.sites >= _LEAST]
     found: list[Finding] = []
-    for kind, pieces in zip(kinds, places, strict=True):
-        pieces.sort(key=lambda p: -p[0].sites)
-        found += _named(stack, profile, kind, pieces, pitch)
+    for kind, thin in zip(kinds, places, strict=True):
+        thin.sort(key=lambda p: -p[0].sites)
+        found += _named(stack, profile, kind, thin, pitch)
     return found
 
 
