@@ -105,6 +105,7 @@ def _parser() -> argparse.ArgumentParser:
         help="where the design's run left its part (default: out)",
     )
     design(command("report", "write the report of what a run left in its folder"))
+    _add_lab(command("lab", "open a design in the workbench, in JupyterLab on this machine"))
     _add_convert(command("convert", "turn a part or a volume file into another open format"))
     sub = command("profile", "show a print profile and draw its tray")
     sub.add_argument("profile", metavar="NAME_OR_FILE", help="a shipped name, or a .toml file")
@@ -128,6 +129,17 @@ def _parser() -> argparse.ArgumentParser:
         help="show the modulus that a Shore A hardness stands for, as a band",
     )
     return parser
+
+
+def _add_lab(sub: argparse.ArgumentParser) -> None:
+    sub.add_argument(
+        "design", type=Path, metavar="DESIGN.toml", help="one that is not there yet is begun"
+    )
+    sub.add_argument("--port", type=int, metavar="N", help="port on the loopback address")
+    sub.add_argument("--no-browser", action="store_true", help="print the address, open nothing")
+    sub.add_argument(
+        "--dry-run", action="store_true", help="make the notebook, print the command, start nothing"
+    )
 
 
 def _add_convert(sub: argparse.ArgumentParser) -> None:
@@ -154,7 +166,7 @@ def _add_convert(sub: argparse.ArgumentParser) -> None:
 
 def _dispatch(options: argparse.Namespace) -> Answer:
     from voxelmat.console import ConsoleMonitor
-    from voxelmat.workflow import commands, convert_commands, profile_commands
+    from voxelmat.workflow import commands, convert_commands, lab_commands, profile_commands
 
     calls: dict[str, Callable[..., Answer]] = {
         "run": commands.run,
@@ -167,10 +179,14 @@ def _dispatch(options: argparse.Namespace) -> Answer:
         "warm": commands.warm,
         "profile": profile_commands.profile,
         "convert": convert_commands.convert,
+        "lab": lab_commands.lab,
     }
     given = {k: v for k, v in vars(options).items() if k not in ("command", "json", "quiet")}
     with ConsoleMonitor(quiet=options.quiet) as monitor:
-        if options.command not in ("materials", "warm", "profile", "convert") and not _compiled():
+        if (
+            options.command not in ("materials", "warm", "profile", "convert", "lab")
+            and not _compiled()
+        ):
             monitor.say("First run here: the inner loops are compiled, once; about half a minute.")
         return calls[options.command](monitor=monitor, **given)
 
