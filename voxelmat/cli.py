@@ -25,6 +25,9 @@ EXIT_CODES = {
 
 _EPILOG = "exit codes: " + "; ".join(f"{code} {text}" for code, text in EXIT_CODES.items()) + "."
 
+#: Commands that run no compiled loop.
+_WITHOUT_LOOPS = ("materials", "warm", "profile", "convert", "lab")
+
 Answer = tuple[int, dict[str, Any], str]
 
 

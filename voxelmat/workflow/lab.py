@@ -15,13 +15,13 @@ from voxelmat.io.schema import read_toml
 
 __all__ = ["lab_command", "serve_lab", "working_notebook"]
 
-_FIRST = """# Change this first: the design that is opened. A name that does not exist yet starts a new one.
+_FIRST = """# Change this first: the design that is opened. A new name starts a new design.
 DESIGN = {name!r}"""
 _OPEN = """import voxelmat
 
 bench = voxelmat.open_workbench(DESIGN)
 bench"""
-_AFTER = """# What the screen does, a script can do: copy its lines with 'Copy script' and put them here.
+_AFTER = """# What the screen does, a script can do: 'Copy script' copies its lines; put them here.
 """
 
 
