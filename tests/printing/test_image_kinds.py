@@ -13,11 +13,12 @@ import tifffile
 from PIL import Image
 from print_twins import layered_part
 
-from voxelmat.errors import Cancelled, FileFormatError, ResourceError
+from voxelmat.errors import Cancelled, FileFormatError, InputError, ResourceError
 from voxelmat.io.png import encode_bitmap
 from voxelmat.model.image import ImageLayout
 from voxelmat.model.process import ProcessFigures
 from voxelmat.monitor import CancelFlag
+from voxelmat.printing.imagefiles import ImageFiles
 from voxelmat.printing.preflight import preflight
 from voxelmat.printing.profile import load_profile
 from voxelmat.printing.readback import read_stack
@@ -280,6 +281,14 @@ def test_a_bad_index_image_is_told_and_not_believed(copied, kind):
     (folder / "manifest.json").write_text(json.dumps(manifest))
     with pytest.raises(FileFormatError, match="00005"):
         read_stack(folder).bits(5)
+
+
+def test_two_channels_on_one_site_have_no_number(stacks):
+    stack = stacks["index"]
+    images = ImageFiles(stack.raster, ["a", "b"], profile_for("index"))
+    bits = stack.bits(4)[[0, 0]]
+    with pytest.raises(InputError, match="Two channels"):
+        list(images.encode(bits))
 
 
 def test_droplets_in_the_padding_are_refused(copied):

@@ -122,6 +122,15 @@ def test_a_profile_with_none_of_the_new_keys_still_reads():
     assert profile.image.kind == "png bitmap"
 
 
+def test_an_invented_tray_of_1_49e12_sites():
+    # Check L2: an invented tray of 500 x 400 x 200 mm at 600 x 600 dpi and 15 um has 1.49e12
+    # sites; that a tray holds on the order of 1e12 is common practice, no source.
+    plain = data(pitch={"x_dpi": 600, "y_dpi": 600, "layer_um": 15})
+    sites = PrintProfile.from_dict(plain).tray_sites
+    assert sites == (11811, 9448, 13333)
+    assert sites[0] * sites[1] * sites[2] == pytest.approx(1.49e12, rel=2e-3)
+
+
 def test_sizes_along_axes():
     sizes = MinimumSizes.of(wall=(0.4, 0.6, 0.2), gap=0.3)
     assert (sizes.wall, sizes.wall_xyz) == (0.6, (0.4, 0.6, 0.2))

@@ -10,7 +10,7 @@ from pathlib import Path
 import numpy as np
 from numpy.typing import NDArray
 
-from voxelmat.errors import FileFormatError
+from voxelmat.errors import FileFormatError, InputError
 from voxelmat.io.png import decode_bitmap, decode_indexed, encode_bitmap, encode_indexed
 from voxelmat.io.tiff import PageFormat, decode_page, encode_page, write_pages
 from voxelmat.kernels.bitplane import count_planes, to_words
@@ -112,10 +112,14 @@ class ImageFiles:
 
     def _encode_index(self, pixels: Iterable[NDArray[np.uint8]]) -> bytes:
         numbers = np.zeros((self._order.height, self._order.width), dtype=np.uint8)
+        laid = 0
         for channel, plane in enumerate(pixels):
             flat = np.unpackbits(plane, axis=1, count=self._order.width)
+            laid += int(np.count_nonzero(flat))
             flat *= np.uint8(channel + 1)
             numbers |= flat
+        if laid != int(np.count_nonzero(numbers)):
+            raise InputError("Two channels claim one site, which an indexed image cannot hold.")
         return encode_indexed(numbers, palette(len(self._channels)), self._ppm)
 
     def write(self, folder: Path, layer: int, planes: Planes) -> LayerRecord:
