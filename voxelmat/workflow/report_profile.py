@@ -12,7 +12,7 @@ from matplotlib.patches import Rectangle
 from voxelmat.model.profile import PrintProfile
 from voxelmat.workflow.report_canvas import Picture, figure, mm_axes, png
 
-__all__ = ["profile_picture", "profile_rows"]
+__all__ = ["draw_tray", "profile_picture", "profile_rows"]
 
 _ROW, _NEXT, _AXIS = "#D55E00", "#0072B2", "#333333"
 
@@ -71,7 +71,7 @@ def profile_picture(profile: PrintProfile) -> Picture:
     height = float(np.clip(drawn * depth / width + 1.3, 4.2, 7.5))
     fig = figure(9.6, height)
     ax = fig.add_axes((0.08, 0.13, drawn / 9.6, 1 - 1.05 / height - 0.02))
-    _tray(ax, profile)
+    draw_tray(ax, profile)
     _images(ax, profile)
     made = " (invented: no real printer)" if profile.invented else ""
     mm_axes(ax, 0, 1, f"{profile.name}{made}: the tray seen from above")
@@ -89,7 +89,7 @@ def profile_picture(profile: PrintProfile) -> Picture:
     )
 
 
-def _tray(ax: Axes, profile: PrintProfile) -> None:
+def draw_tray(ax: Axes, profile: PrintProfile) -> None:
     """The tray, the part of it that can be used, and the axes at the front left corner."""
     width, depth, _ = profile.tray_size
     margin = profile.edge_margin
