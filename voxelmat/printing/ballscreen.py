@@ -63,7 +63,8 @@ class _BallSpread:
         for width, out in zip(self._widths, self._wide, strict=True):
             dilate_rows(plane, int(width - 1) // 2, int(width) // 2, self._edge, out)
         spread_ball(self._wide, self._level, self._first_row, self._edge, self._ring, self._newest)
-        return self._ring[(self._newest + 1) % len(self._ring)]
+        oldest: Plane = self._ring[(self._newest + 1) % len(self._ring)]
+        return oldest
 
 
 class BallScreen(ThinScreen):
