@@ -206,6 +206,9 @@ def test_plain_data_and_widths_by_pair():
         "order": ["soft", "hard"],
         "interface_width_mm": {"hard | soft": 0.2},
     }
+    assert Halftone.from_dict(halftone.as_dict()) == halftone
+    assert Halftone.from_dict({}) == Halftone()
+    assert Halftone.from_dict(Halftone(interface_width_mm=1).as_dict()).widest_mm == 1.0
     assert halftone.width_between("hard", "soft") == halftone.width_between("soft", "hard") == 0.2
     assert halftone.width_between("hard", "mid") == 0.0
     assert hash(halftone) == hash(Halftone(**{k: getattr(halftone, k) for k in halftone.as_dict()}))

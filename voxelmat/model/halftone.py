@@ -73,8 +73,13 @@ class Halftone:
     @property
     def has_widths(self) -> bool:
         """True where some interface may be dithered."""
+        return self.widest_mm > 0
+
+    @property
+    def widest_mm(self) -> float:
+        """The greatest interface width, mm."""
         widths = self._widths
-        return widths > 0 if isinstance(widths, float) else any(w > 0 for _, w in widths)
+        return widths if isinstance(widths, float) else max((w for _, w in widths), default=0.0)
 
     @property
     def width_names(self) -> tuple[str, ...]:
@@ -95,6 +100,19 @@ class Halftone:
             widths = {" | ".join(pair): width for pair, width in widths}
         order = self.order if isinstance(self.order, str) else list(self.order)
         return {"method": self.method, "order": order, "interface_width_mm": widths}
+
+    @classmethod
+    def from_dict(cls, data: Mapping[str, Any]) -> Halftone:
+        """The inverse of `as_dict`; what is left out is as by default."""
+        fields = dict(data)
+        widths = fields.get("interface_width_mm", 0.0)
+        if isinstance(widths, Mapping):
+            fields["interface_width_mm"] = {
+                tuple(pair.split(" | ")): width for pair, width in widths.items()
+            }
+        if isinstance(fields.get("order"), list):
+            fields["order"] = tuple(fields["order"])
+        return cls(**fields)
 
 
 def _sorted(one: str, other: str) -> tuple[str, str]:

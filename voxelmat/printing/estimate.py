@@ -286,6 +286,8 @@ def forecast_job(job: PrintJob, *, layers: int = 48, monitor: Monitor = SILENT) 
 
 def _sampled(job: PrintJob, at: NDArray[np.int64], monitor: Monitor) -> NDArray[np.float64]:
     """Of each sliced layer: sites a channel, occupied swaths, bytes; float64 (layers, ...)."""
+    if job.halftone.is_serial:  # a layer by itself would need all those below it
+        job = job.replace(halftone=dataclasses.replace(job.halftone, method="blue noise"))
     source, dealer = source_of(job), Dealer(job)
     images = ImageFiles(job.window, job.channel_names, job.profile)
     counter = SwathCounter(job.window, job.profile)

@@ -18,13 +18,13 @@ from voxelmat.kernels.ramp import mark_ramps
 from voxelmat.kernels.sites import pack_sites
 from voxelmat.model.halftone import Halftone
 from voxelmat.printing.mask import SIDE, SKEW, mask_phase, thresholds
-from voxelmat.printing.order import INTERFACE_RULE, INTERFACE_STEP, laying_order
+from voxelmat.printing.order import INTERFACE_STEP, laying_order
 from voxelmat.printing.planes import DesignPlanes, PlaneCursor
 from voxelmat.printing.ramp import InterfaceRamps, RampPlane
 from voxelmat.printing.raster import Raster
 from voxelmat.printing.support import SupportFill, fill_columns
 
-__all__ = ["INTERFACE_RULE", "INTERFACE_STEP", "MOST_RESINS", "Slicer", "packed_planes"]
+__all__ = ["MOST_RESINS", "Slicer", "packed_planes"]
 
 #: A site is a byte: 0 for nothing, the resins, and support.
 MOST_RESINS = 254
@@ -202,7 +202,7 @@ class Slicer:
     @property
     def serial(self) -> bool:
         """True where a layer needs those below it: runs that start higher up make them again."""
-        return self.halftone.method == "error diffusion"
+        return self.halftone.is_serial
 
     # ------------------------------------------------------------------ planes
     def _plane(self, cursor: PlaneCursor, k: int) -> _Fields:
