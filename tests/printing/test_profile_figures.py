@@ -5,12 +5,14 @@ import json
 
 import jsonschema
 import pytest
+from print_twins import layered_part
 
 from voxelmat.errors import InputError
 from voxelmat.io.schema import load_schema
 from voxelmat.model.minimum_sizes import MinimumSizes
 from voxelmat.model.process import ProcessFigures
 from voxelmat.model.profile import PrintProfile
+from voxelmat.printing.job import placed
 from voxelmat.printing.profile import load_profile, shipped_profiles
 
 STANDARD = load_profile("invented-standard")
@@ -42,6 +44,8 @@ def test_shipped_profiles_agree_with_the_schema(name):
         ({"pitch__x_um": 0}, "pitch.x_um"),
         ({"bias_mm": [0.1, 0.1]}, "bias_mm"),
         ({"bias_mm": [0.1, 0.1, 11]}, "bias_mm"),
+        ({"tray__usable_mm": [0, 0, 10]}, "tray.usable_mm"),
+        ({"tray__usable_mm": [-1, 0, 10, 10]}, "tray.usable_mm"),
         ({"image__kind": "bmp"}, "image.kind"),
         ({"image__compression": "lzw"}, "image.compression"),
         ({"image__row_order": "left"}, "image.row_order"),
@@ -76,6 +80,9 @@ def test_reader_and_schema_refuse_the_same(changes, key):
 @pytest.mark.parametrize(
     ("changes", "key"),
     [
+        ({"tray__usable_mm": [0, 0, 501, 10]}, "tray.usable_mm"),
+        ({"tray__usable_mm": [20, 0, 10, 10]}, "tray.usable_mm"),
+        ({"tray__usable_mm": [0, 0, 10, 10]}, "tray.edge_margin_mm"),
         ({"image__compression": "g4"}, "image.compression"),
         ({"image__bit_order": "first low"}, "image.bit_order"),
         ({"image": {"kind": "tiff pages", "bit_order": "first low"}}, "image.bit_order"),
@@ -138,6 +145,20 @@ def test_sizes_along_axes():
     assert dataclasses.replace(sizes, gap=0.5).wall_xyz == (0.4, 0.6, 0.2)
     assert dataclasses.replace(sizes, wall=0.5).wall_xyz == (0.5, 0.5, 0.5)
     assert sizes != MinimumSizes.of(wall=0.6, gap=0.3)
+
+
+def test_parts_stand_in_the_usable_area():
+    profile = PrintProfile.from_dict(data(tray__usable_mm=[100, 50, 300, 350]))
+    assert profile.room == ((105, 295), (55, 345), (0, 200))
+    assert PrintProfile.from_dict(profile.as_dict()) == profile
+    item = placed(layered_part("distance"), profile)
+    low = [float(o * p) for o, p in zip(item.raster.offset, profile.pitch, strict=True)]
+    size = [float(n * p) for n, p in zip(item.raster.shape, profile.pitch, strict=True)]
+    assert low[0] + size[0] / 2 == pytest.approx(200, abs=0.1)
+    assert low[1] + size[1] / 2 == pytest.approx(200, abs=0.1)
+    for position in ((104, 60), (294, 60), (110, 54), (110, 344.5)):
+        with pytest.raises(InputError, match="usable tray"):
+            placed(layered_part("distance"), profile, position=position)
 
 
 def test_figures_by_resin():

@@ -49,7 +49,9 @@ class PrintProfile:
     tray_size : tuple of float
         Tray along x, y, z, mm.
     edge_margin : float
-        Strip along each side edge of the tray that must stay empty, mm.
+        Strip along each side of the usable area that must stay empty, mm.
+    usable : tuple of float, optional
+        Low x, low y, high x and high y of what the heads reach, mm; the whole tray if left out.
     channels : mapping
         Channel name to the resin loaded in it; ``""`` where any resin may be loaded. A resin of
         the part may stand in several: its droplets are then dealt among them.
@@ -85,6 +87,7 @@ class PrintProfile:
     tray_size: tuple[float, float, float]
     channels: Mapping[str, str]
     edge_margin: float = 5.0
+    usable: tuple[float, float, float, float] | None = None
     support_channel: str = ""
     support_policy: str = "none"
     support_sizes: SupportFigures = field(default_factory=SupportFigures)
@@ -110,8 +113,7 @@ class PrintProfile:
                 _refuse(key, f"an exact fraction of 0.001 to 5 mm; got {value!r}")
         if len(self.tray_size) != 3 or not all(1 <= v <= 1e4 for v in self.tray_size):
             _refuse("tray.size_mm", f"three lengths of 1 to 10000 mm; got {self.tray_size}")
-        if not 0 <= self.edge_margin < min(self.tray_size[:2]) / 2:
-            _refuse("tray.edge_margin_mm", f"0 to half the tray; got {self.edge_margin}")
+        self._check_area()
         self._check_channels()
         for key, known in (
             ("support_policy", SUPPORT_POLICIES),
@@ -122,6 +124,26 @@ class PrintProfile:
             if getattr(self, key) not in known:
                 _refuse(key, f"one of {', '.join(known)}; got {getattr(self, key)!r}")
         self._check_figures()
+
+    def _check_area(self) -> None:
+        if self.usable is not None:
+            area = tuple(float(v) for v in self.usable)
+            object.__setattr__(self, "usable", area)
+            width, depth, _ = self.tray_size
+            if len(area) != 4 or not (
+                0 <= area[0] < area[2] <= width and 0 <= area[1] < area[3] <= depth
+            ):
+                _refuse(
+                    "tray.usable_mm",
+                    "the low and high corner of an area of the tray, [x, y, x, y] in mm; got "
+                    f"{list(area)} on a tray of {width:g} x {depth:g} mm",
+                )
+        if not (
+            math.isfinite(self.edge_margin)
+            and self.edge_margin >= 0
+            and all(low < high for low, high in self.room)
+        ):
+            _refuse("tray.edge_margin_mm", f"0 to half the usable tray; got {self.edge_margin}")
 
     def _check_channels(self) -> None:
         if not 1 <= len(self.channels) <= _MOST_CHANNELS:
@@ -158,6 +180,14 @@ class PrintProfile:
     def pitch(self) -> tuple[Fraction, Fraction, Fraction]:
         """Pitch along x, y, z, mm, exact."""
         return (self.pitch_x, self.pitch_y, self.layer)
+
+    @property
+    def room(self) -> tuple[tuple[float, float], tuple[float, float], tuple[float, float]]:
+        """Where parts may stand: low and high along tray x, y and z, mm."""
+        width, depth, height = self.tray_size
+        x0, y0, x1, y1 = self.usable or (0.0, 0.0, width, depth)
+        margin = self.edge_margin
+        return ((x0 + margin, x1 - margin), (y0 + margin, y1 - margin), (0.0, height))
 
     @property
     def tray_sites(self) -> tuple[int, int, int]:

@@ -35,6 +35,7 @@ def profile_data(profile: PrintProfile) -> dict[str, Any]:
         "tray": {
             "size_mm": list(profile.tray_size),
             "edge_margin_mm": profile.edge_margin,
+            **({} if profile.usable is None else {"usable_mm": list(profile.usable)}),
             "origin_corner": profile.origin_corner,
             "row_direction": profile.row_direction,
             "polarity": profile.polarity,
@@ -92,14 +93,14 @@ def profile_arguments(data: Mapping[str, Any]) -> dict[str, Any]:
 def _layout(data: Mapping[str, Any]) -> dict[str, Any]:
     """Arguments from the tables ``tray`` and ``image``; the polarity may stand in either."""
     orders = ("origin_corner", "row_direction", "polarity")
-    tray = _table(data, "tray", ("size_mm", "edge_margin_mm", *orders))
+    tray = _table(data, "tray", ("size_mm", "edge_margin_mm", "usable_mm", *orders))
     if "size_mm" not in tray:
         raise InputError("This key is missing.", key="tray.size_mm")
     image = _table(data, "image", ("polarity", *ImageLayout().as_dict()))
     polarity = image.pop("polarity", None)
     if polarity is not None and tray.setdefault("polarity", polarity) != polarity:
         _refuse("image.polarity", f"what tray.polarity says, or only one of them; got {polarity!r}")
-    renamed = {"edge_margin_mm": "edge_margin", "size_mm": "tray_size"}
+    renamed = {"edge_margin_mm": "edge_margin", "size_mm": "tray_size", "usable_mm": "usable"}
     return {
         **{renamed.get(k, k): v for k, v in tray.items()},
         "image": ImageLayout.from_dict(image),

@@ -77,12 +77,9 @@ class Arranger:
         pitch = [float(p) for p in profile.pitch[:2]]
         self._spacing_mm = spacing_mm
         self._gap = (math.ceil(spacing_mm / pitch[0]), math.ceil(spacing_mm / pitch[1]))
-        margin = profile.edge_margin
-        self._first = [math.ceil(margin / p - 1e-9) for p in pitch]
-        last = [
-            math.floor((t - margin) / p + 1e-9)
-            for t, p in zip(profile.tray_size[:2], pitch, strict=True)
-        ]
+        room = profile.room[:2]
+        self._first = [math.ceil(a / p - 1e-9) for (a, _), p in zip(room, pitch, strict=True)]
+        last = [math.floor(b / p + 1e-9) for (_, b), p in zip(room, pitch, strict=True)]
         self._room = (last[0] - self._first[0], last[1] - self._first[1])
 
     # ------------------------------------------------------------------ what to place

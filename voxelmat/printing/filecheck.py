@@ -29,19 +29,17 @@ def tray_findings(stack: Stack, profile: PrintProfile) -> list[Finding]:
                 remedy="Write the stack for this profile.",
             )
         )
-    margins = (profile.edge_margin, profile.edge_margin, 0.0)
-    for axis, margin in enumerate(margins):
+    for axis, (first, last) in enumerate(profile.room):
         pitch = raster.pitch[axis]
         low = float(raster.offset[axis] * pitch)
         high = float((raster.offset[axis] + raster.shape[axis]) * pitch)
-        last = profile.tray_size[axis] - margin
-        if low < margin - float(pitch) or high > last + float(pitch):
+        if low < first - float(pitch) or high > last + float(pitch):
             found.append(
                 Finding(
                     severity="stop",
                     code="outside the tray",
                     message=f"Along {'xyz'[axis]} the stack reaches from {low:.4g} to {high:.4g} "
-                    f"mm; the usable tray of '{profile.name}' from {margin:g} to {last:g} mm.",
+                    f"mm; the usable tray of '{profile.name}' from {first:g} to {last:g} mm.",
                     remedy="Move or turn the part, or take a larger printer.",
                     value=high,
                     limit=last,

@@ -129,8 +129,8 @@ def plan_kit(profile: PrintProfile, *, scale: float = 1.0) -> KitPlan:
         rows += _blends(cell, below)
     rows += _dimensions(cell, below, base, rise)
     size = (11.9 * cell, below + 1.9 * cell, base + rise)
-    for name, wanted, tray in zip("xyz", size, profile.tray_size, strict=True):
-        room = tray - (0 if name == "z" else 2 * profile.edge_margin)
+    for name, wanted, (low, high) in zip("xyz", size, profile.room, strict=True):
+        room = high - low
         if wanted > room:
             raise InputError(
                 f"The kit is {wanted:.4g} mm along {name}; the usable tray of "

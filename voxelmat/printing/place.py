@@ -98,29 +98,25 @@ def place(
     size = high - low
     pitch = [float(p) for p in profile.pitch]
     shape = [max(1, int(np.ceil(s / p - _EPSILON))) for s, p in zip(size, pitch, strict=True)]
-    margin = (profile.edge_margin, profile.edge_margin, 0.0)
-    room = [t - 2 * m for t, m in zip(profile.tray_size, margin, strict=True)]
+    room = [b - a for a, b in profile.room]
     if any(s > r + _EPSILON for s, r in zip(size, room, strict=True)):
         raise InputError(
             f"The part takes {_mm(size)} on the tray, but profile '{profile.name}' has room for "
-            f"{_mm(room)} ({_mm(profile.tray_size)} less a margin of {profile.edge_margin:g} mm "
-            "at each side). Turn the part, or take a printer with a larger tray.",
+            f"{_mm(room)} (a tray of {_mm(profile.tray_size)}; {profile.edge_margin:g} mm stay "
+            "empty at each side). Turn the part, or take a printer with a larger tray.",
             key="profile",
         )
     if position is None:
-        x, y = ((t - s) / 2 for t, s in zip(profile.tray_size[:2], size[:2], strict=True))
+        x, y = ((a + b - s) / 2 for (a, b), s in zip(profile.room, size[:2], strict=False))
         corner = (float(x), float(y))
     else:
         corner = _position(position)
-    for axis in (0, 1):
-        if not (
-            margin[axis] - _EPSILON <= corner[axis]
-            and corner[axis] + size[axis] <= profile.tray_size[axis] - margin[axis] + _EPSILON
-        ):
+    for axis, (first, last) in enumerate(profile.room[:2]):
+        if not (first - _EPSILON <= corner[axis] and corner[axis] + size[axis] <= last + _EPSILON):
             raise InputError(
                 f"At position {corner[0]:g}, {corner[1]:g} mm a part of {_mm(size)} reaches past "
-                f"the usable tray: {'xy'[axis]} must lie in {margin[axis]:g} to "
-                f"{profile.tray_size[axis] - margin[axis] - size[axis]:g} mm.",
+                f"the usable tray: {'xy'[axis]} must lie in {first:g} to "
+                f"{last - size[axis]:g} mm.",
                 key="position",
             )
     offset = [int(np.floor(c / p + _EPSILON)) for c, p in zip(corner, pitch, strict=False)] + [0]

@@ -23,7 +23,7 @@ def profile_rows(profile: PrintProfile) -> list[tuple[str, str]]:
     tray = " x ".join(f"{v:g}" for v in profile.tray_size)
     rows = [
         ("tray x, y, z", f"{tray} mm"),
-        ("unusable edge", f"{profile.edge_margin:g} mm (dashed)"),
+        ("parts stand in", f"{_span(profile.room[0])}, {_span(profile.room[1])} mm (dashed)"),
         *(
             (f"pitch {axis}", f"{_um(pitch)} µm")
             for axis, pitch in zip(("x", "y", "z (layer)"), profile.pitch, strict=True)
@@ -51,6 +51,10 @@ def profile_rows(profile: PrintProfile) -> list[tuple[str, str]]:
     names = [f"{c}: {r or 'any resin'}" for c, r in profile.channels.items()]
     shown = names if len(names) <= 8 else [*names[:7], f"and {len(names) - 7} more"]
     return rows + [("channels" if n == 0 else "", text) for n, text in enumerate(shown)]
+
+
+def _span(ends: tuple[float, float]) -> str:
+    return f"{ends[0]:g} to {ends[1]:g}"
 
 
 def _um(pitch: Fraction) -> str:
@@ -92,11 +96,11 @@ def profile_picture(profile: PrintProfile) -> Picture:
 def draw_tray(ax: Axes, profile: PrintProfile) -> None:
     """The tray, the part of it that can be used, and the axes at the front left corner."""
     width, depth, _ = profile.tray_size
-    margin = profile.edge_margin
+    (left, right), (front, back), _ = profile.room
     ax.add_patch(Rectangle((0, 0), width, depth, facecolor="#F2F2F2", edgecolor=_AXIS))
     ax.add_patch(
         Rectangle(
-            (margin, margin), width - 2 * margin, depth - 2 * margin,
+            (left, front), right - left, back - front,
             facecolor="white", edgecolor="#888888", linestyle="--", linewidth=0.8,
         )
     )  # fmt: skip
@@ -149,7 +153,7 @@ def _images(ax: Axes, profile: PrintProfile) -> None:
     width, depth, _ = profile.tray_size
     vertical, horizontal = profile.origin_corner.split()
     sign_x, sign_y = (1 if horizontal == "left" else -1), (1 if vertical == "front" else -1)
-    inset = max(profile.edge_margin, 0.03 * max(width, depth))
+    inset = 0.03 * max(width, depth)
     x = inset if sign_x > 0 else width - inset
     y = inset if sign_y > 0 else depth - inset
     ax.plot(
