@@ -113,6 +113,15 @@ def _parser() -> argparse.ArgumentParser:
     sub = command("profile", "show a print profile and draw its tray")
     sub.add_argument("profile", metavar="NAME_OR_FILE", help="a shipped name, or a .toml file")
     sub.add_argument("--picture", type=Path, metavar="FILE.png", help="draw the tray")
+    sub = command("tray", "lay out many parts on one tray, write and check their stack")
+    sub.add_argument("tray", type=Path, metavar="TRAY.toml")
+    sub.add_argument(
+        "--out",
+        type=Path,
+        default=Path("tray"),
+        metavar="FOLDER",
+        help="gets the stack, a picture and tray.json (default: tray)",
+    )
     command("warm", "compile all inner loops ahead, so that the first run need not")
     sub = command("materials", "show the resin library")
     sub.add_argument(
@@ -169,7 +178,13 @@ def _add_convert(sub: argparse.ArgumentParser) -> None:
 
 def _dispatch(options: argparse.Namespace) -> Answer:
     from voxelmat.console import ConsoleMonitor
-    from voxelmat.workflow import commands, convert_commands, lab_commands, profile_commands
+    from voxelmat.workflow import (
+        commands,
+        convert_commands,
+        lab_commands,
+        profile_commands,
+        tray_commands,
+    )
 
     calls: dict[str, Callable[..., Answer]] = {
         "run": commands.run,
@@ -183,6 +198,7 @@ def _dispatch(options: argparse.Namespace) -> Answer:
         "profile": profile_commands.profile,
         "convert": convert_commands.convert,
         "lab": lab_commands.lab,
+        "tray": tray_commands.tray,
     }
     given = {k: v for k, v in vars(options).items() if k not in ("command", "json", "quiet")}
     with ConsoleMonitor(quiet=options.quiet) as monitor:
