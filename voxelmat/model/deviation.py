@@ -24,9 +24,11 @@ class ChannelOutline:
         mm; the last two of the size without the sign.
     place_mm : tuple of float
         Where it is largest, part coordinates.
-    shift_mm : tuple of float or None
-        How far the whole outline is moved along x, y, z; an axis across which too little of the
-        outline lies is nan. None where no axis can be told.
+    fit : float
+        Share of the points where the solid site lies inside the design and the empty one outside.
+    shift : tuple of int
+        Layers, rows and columns that the images are moved by, where moving them back makes all
+        fit that does not fit as it is; else zeros.
     """
 
     name: str
@@ -36,7 +38,8 @@ class ChannelOutline:
     p95: float
     largest: float
     place_mm: Triple
-    shift_mm: Triple | None = None
+    fit: float = 1.0
+    shift: tuple[int, int, int] = (0, 0, 0)
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

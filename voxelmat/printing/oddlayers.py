@@ -24,7 +24,7 @@ Bools = NDArray[np.bool_]
 #: A layer is odd if its neighbours differ by less than `_AGREE` of what it differs from each, and
 #: two layers are swapped if the other order has less than `_BETTER` of the differences; both only
 #: above `_FEWEST` sites and `_SHARE` of the layer. All limits are ours.
-_AGREE, _BETTER, _FEWEST, _SHARE = 0.3, 0.7, 48, 0.002
+_AGREE, _BETTER, _FEWEST, _SHARE = 0.3, 0.7, 24, 0.002
 _NAMED = 3
 
 
@@ -131,13 +131,15 @@ def _described(stack: Stack, layer: int) -> str:
     if not here.any():
         return "is blank"
     off = int((here != below).sum())
-    for words, turned in (
-        ("is mirrored along its columns", here[:, ::-1]),
-        ("is mirrored along its rows", here[::-1]),
-        ("is turned by 180 degrees", here[::-1, ::-1]),
-    ):
-        if int((turned != below).sum()) < _AGREE * off:
-            return words
+    turns = {
+        "is mirrored along its columns": here[:, ::-1],
+        "is mirrored along its rows": here[::-1],
+        "is turned by 180 degrees": here[::-1, ::-1],
+    }
+    left = {words: int((turned != below).sum()) for words, turned in turns.items()}
+    best = min(left, key=left.__getitem__)
+    if left[best] < _AGREE * off:
+        return best
     rows = np.flatnonzero(here.any(axis=1))
     kept = int(rows[-1]) + 1
     if (

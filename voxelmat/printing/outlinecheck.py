@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import math
 from collections.abc import Sequence
 
 from voxelmat.errors import FileFormatError, InputError
@@ -12,13 +11,9 @@ from voxelmat.model.part import Part
 from voxelmat.monitor import SILENT, Monitor
 from voxelmat.printing.outlines import outline_deviation
 from voxelmat.printing.readback import Stack
-from voxelmat.printing.view import part_view
 from voxelmat.shape.bodies import Body
 
 __all__ = ["outline_findings"]
-
-#: A shift counts from this share of a pitch on. Ours; without a shift some hundredths are seen.
-_SHIFT = 0.4
 
 
 def outline_findings(
@@ -48,37 +43,27 @@ def outline_findings(
     except (InputError, FileFormatError):
         return []  # nothing to compare with or nothing to compare; other checks say so
     found = []
-    pitch = part_view(stack).pitch
-    moved = _moved(seen.whole, pitch)
-    if moved:
-        found.append(_shift_finding("stack shifted", "The whole stack", seen.whole, moved))
+    if any(seen.whole.shift):
+        found.append(_shift_finding("stack shifted", "The whole stack", seen.whole))
     else:
-        for row in seen.channels:
-            moved = _moved(row, pitch)
-            if moved:
-                what = f"The outline of '{row.name}'"
-                found.append(_shift_finding("channel shifted", what, row, moved))
+        found += [
+            _shift_finding("channel shifted", f"The outline of '{row.name}'", row)
+            for row in seen.channels
+            if any(row.shift)
+        ]
     if not seen.within and not found:
         found.append(_off(seen))
     return found
 
 
-def _moved(row: ChannelOutline, pitch: Sequence[float]) -> str:
-    """The axes along which an outline is shifted, in words; empty where none is."""
-    if row.shift_mm is None:
-        return ""
-    return ", ".join(
-        f"{1000 * s:+.0f} um along {axis}"
-        for axis, s, p in zip("xyz", row.shift_mm, pitch, strict=True)
-        if math.isfinite(s) and abs(s) >= _SHIFT * p
-    )
-
-
-def _shift_finding(code: str, what: str, row: ChannelOutline, moved: str) -> Finding:
+def _shift_finding(code: str, what: str, row: ChannelOutline) -> Finding:
+    layers, rows, columns = row.shift
     return Finding(
         severity="stop",
         code=code,
-        message=f"{what} lies {moved} off the design (over {row.points} points of its outline).",
+        message=f"{what} is shifted by {columns} columns, {rows} rows and {layers} layers: "
+        f"{100 * (1 - row.fit):.2g} % of {row.points} points of the outline lie on the wrong side "
+        "of the design's, and moved back they fit.",
         place_mm=row.place_mm,
         remedy="Write the stack again; do not move images.",
     )

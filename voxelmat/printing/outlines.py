@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import math
 from collections.abc import Sequence
 from dataclasses import dataclass
 
@@ -30,7 +29,8 @@ _POINTS = 200_000  # points of the outline that are compared, evenly taken
 #: so much of a voxel (chords of a curved outline, rounding of the distance), and every point by
 #: the second (edges are rounded between voxel centres). Both limits are ours.
 CHORD_P95, CHORD_LARGEST = 0.15, 0.75
-_CROSS = 0.02  # share of the outline that must lie across an axis to tell a shift along it
+#: Share of the outline that must fit the design site by site; less may be a shift. Ours.
+FIT = 0.97
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -39,14 +39,18 @@ class OutlinePoints:
 
     Attributes
     ----------
+    solid, empty : ndarray of float64, shape (n, 3)
+        The two sites as layer, row and column of the part's window.
     points : ndarray of float64, shape (n, 3)
-        Half way between the two site centres, part coordinates, mm.
+        Half way between their centres, part coordinates, mm.
     channel : ndarray of int64, shape (n,)
         Channel of the solid site.
     layers : int
         Layers that were looked at.
     """
 
+    solid: Array
+    empty: Array
     points: Array
     channel: NDArray[np.int64]
     layers: int
@@ -67,7 +71,7 @@ def outline_points(
     count = view.shape[0]
     chosen = np.unique(np.linspace(0, count - 1, min(layers, count)).astype(int))
     model = [m for m, c in enumerate(view.stack.channels) if c.role != "support"]
-    places, channels = [], []
+    places, ways, channels = [], [], []
     for number, k in enumerate(chosen):
         monitor.report("reading the outline", done=number, total=len(chosen))
         here = _numbered(view, int(k), model)
@@ -82,12 +86,19 @@ def outline_points(
             row, column = np.nonzero((a > 0) != (b > 0))
             place = np.stack([np.full(len(row), float(k)), row, column], axis=1)
             place[:, axis] += 0.5 if axis == 0 else -0.5
+            way = np.zeros_like(place)  # half way from the outline to the empty site
+            way[:, axis] = np.where(a[row, column] > 0, 0.5, -0.5)
             places.append(place)
+            ways.append(way)
             channels.append(np.maximum(a, b)[row, column].astype(np.int64) - 1)
-    pixels, channel = np.concatenate(places), np.concatenate(channels)
-    step = max(1, -(-len(pixels) // most))
+    step = max(1, -(-sum(len(p) for p in places) // most))
+    pixels, way = np.concatenate(places)[::step], np.concatenate(ways)[::step]
     return OutlinePoints(
-        points=view.to_part(pixels[::step]), channel=channel[::step], layers=len(chosen)
+        solid=pixels - way,
+        empty=pixels + way,
+        points=view.to_part(pixels),
+        channel=np.concatenate(channels)[::step],
+        layers=len(chosen),
     )
 
 
@@ -118,16 +129,47 @@ def field_at(field: NDArray[np.int8], grid: VoxelGrid, points: Array) -> Array:
     return np.asarray(value * (min(grid.spacing) / DISTANCE_STEPS))
 
 
-def _normals(field: NDArray[np.int8], grid: VoxelGrid, points: Array) -> Array:
-    """Unit outward normals of the field's levels at points, (n, 3); 0 where it is flat."""
-    slope = np.empty((len(points), 3))
+def _fitting(
+    view: PartView, found: OutlinePoints, field: NDArray[np.int8], grid: VoxelGrid, move: Array
+) -> NDArray[np.bool_]:
+    """Where solid lies inside and empty outside, the images moved by layers, rows and columns."""
+    inside = field_at(field, grid, view.to_part(found.solid + move)) < 0
+    place = view.to_part(found.empty + move)
+    low, high = np.array(grid.origin), np.array(grid.upper)
+    off_grid = ((place < low) | (place > high)).any(axis=1)
+    return np.asarray(inside & (off_grid | (field_at(field, grid, place) >= 0)))
+
+
+def _shift(
+    view: PartView, found: OutlinePoints, field: NDArray[np.int8], grid: VoxelGrid
+) -> dict[int, tuple[float, tuple[int, int, int]]]:
+    """For each channel, and -1 for all: the share that fits, and what shift explains the rest.
+
+    A shift of one site explains it if less than half of the misfits are left then. The rim of the
+    window is left out: a window that is as tight as the part loses its last row there.
+    """
+    usual = np.abs(field_at(field, grid, found.points)) < 3 * view.pitch.max()
+    usual &= ((found.empty >= 0) & (found.empty < np.array(view.shape))).all(axis=1)
+    groups = {-1: usual} | {int(c): usual & (found.channel == c) for c in np.unique(found.channel)}
+    fits = _fitting(view, found, field, grid, np.zeros(3))
+    found_fit = {n: float(fits[g].mean()) if g.any() else 1.0 for n, g in groups.items()}
+    answer = {n: (fit, (0, 0, 0)) for n, fit in found_fit.items()}
+    if all(fit >= FIT for fit in found_fit.values()):
+        return answer
+    least = {n: 0.5 * (1 - fit) for n, fit in found_fit.items()}  # misfits still left
     for axis in range(3):
-        half = np.zeros(3)
-        half[axis] = 0.5 * grid.spacing[axis]
-        ahead = field_at(field, grid, points + half)
-        slope[:, axis] = (ahead - field_at(field, grid, points - half)) / grid.spacing[axis]
-    size = np.linalg.norm(slope, axis=1, keepdims=True)
-    return np.asarray(slope / np.where(size > 1e-9, size, 1.0))
+        for step in (1, -1):
+            move = np.zeros(3)
+            move[axis] = -step
+            moved = _fitting(view, found, field, grid, move)
+            for number, group in groups.items():
+                left = 1 - float(moved[group].mean()) if group.any() else 1.0
+                if found_fit[number] < FIT and left < least[number]:
+                    shift = [0, 0, 0]
+                    shift[axis] = step
+                    answer[number] = (found_fit[number], (shift[0], shift[1], shift[2]))
+                    least[number] = left
+    return answer
 
 
 def outline_deviation(
@@ -182,19 +224,18 @@ def outline_deviation(
     else:
         deviation = at_field
     reach = 126 / DISTANCE_STEPS * smallest
-    normals = _normals(field, target.grid, found.points)
-    usual = np.abs(deviation) < max(2 * view.pitch.max(), smallest)
-    rows = []
-    for number, channel in enumerate(stack.channels):
-        mine = found.channel == number
-        if mine.any():
-            rows.append(_row(channel.resin, deviation, normals, found.points, mine, usual))
+    shifts = _shift(view, found, field, target.grid)
+    rows = [
+        _row(channel.resin, deviation, found.points, found.channel == number, shifts[number])
+        for number, channel in enumerate(stack.channels)
+        if number in shifts
+    ]
     half = 0.5 * float(view.pitch.max())
     everything = np.ones(len(deviation), dtype=np.bool_)
     against = f"the mesh of {len(bodies)} bodies" if bodies else "the signed distance of the design"
     return OutlineDeviation(
         against=against + (", compensated for the printer's bias" if printed is not None else ""),
-        whole=_row("all", deviation, normals, found.points, everything, usual),
+        whole=_row("all", deviation, found.points, everything, shifts[-1]),
         channels=tuple(rows),
         layers=found.layers,
         beyond=int((np.abs(at_field) >= reach).sum()),
@@ -206,10 +247,9 @@ def outline_deviation(
 def _row(
     name: str,
     deviation: Array,
-    normals: Array,
     points: Array,
     mine: NDArray[np.bool_],
-    usual: NDArray[np.bool_],
+    shift: tuple[float, tuple[int, int, int]],
 ) -> ChannelOutline:
     """The figures of some of the points."""
     d, at = deviation[mine], points[mine]
@@ -223,28 +263,6 @@ def _row(
         p95=float(np.quantile(size, 0.95)),
         largest=float(size.max()),
         place_mm=(float(worst[0]), float(worst[1]), float(worst[2])),
-        shift_mm=_shift(deviation[mine & usual], normals[mine & usual]),
+        fit=shift[0],
+        shift=shift[1],
     )
-
-
-def _shift(deviation: Array, normals: Array) -> tuple[float, float, float] | None:
-    """The translation that explains the deviations best, by least squares over the normals.
-
-    Growth or shrinkage of the outline is solved for beside it, so that a resin which forms one
-    side only gives no shift: its outline may as well have grown.
-    """
-    if len(deviation) < 30:
-        return None
-    across = (normals**2).mean(axis=0) >= _CROSS
-    both = np.array(
-        [min((normals[:, a] > 0.3).mean(), (normals[:, a] < -0.3).mean()) for a in range(3)]
-    )
-    told = across & (both >= _CROSS / 4)
-    if not told.any():
-        return None
-    table = np.column_stack([normals[:, told], np.ones(len(deviation))])
-    answer = np.linalg.lstsq(table, deviation, rcond=None)[0]
-    out = [math.nan] * 3
-    for axis, value in zip(np.flatnonzero(told), answer, strict=False):
-        out[int(axis)] = float(value)
-    return (out[0], out[1], out[2])

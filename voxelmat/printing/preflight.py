@@ -12,9 +12,9 @@ from voxelmat.monitor import SILENT, Monitor
 from voxelmat.printing.bias import compensated, part_bias
 from voxelmat.printing.channelcheck import channel_findings, manifest_findings
 from voxelmat.printing.designed import designed_volumes
-from voxelmat.printing.expected import ExpectedLayers
 from voxelmat.printing.features import piece_findings, small_findings, zone_findings
 from voxelmat.printing.filecheck import file_findings, folder_findings, tray_findings
+from voxelmat.printing.layerdesign import ExpectedLayers
 from voxelmat.printing.oddlayers import odd_layer_findings
 from voxelmat.printing.outlinecheck import outline_findings
 from voxelmat.printing.readback import Stack, read_stack
@@ -131,6 +131,8 @@ def _claims(stack: Stack, facts: Facts) -> list[Finding]:
                     remedy="Write the stack again; do not move one channel's images alone.",
                 )
             )
+    elif facts.gaps:
+        found += _slit(stack, facts)
     for channel, sites in zip(stack.channels, facts.sites, strict=True):
         if sites != channel.sites:
             found.append(
@@ -145,6 +147,26 @@ def _claims(stack: Stack, facts: Facts) -> list[Finding]:
                 )
             )
     return found
+
+
+def _slit(stack: Stack, facts: Facts) -> list[Finding]:
+    """A slit of one site between two channels, as a shift away from each other leaves it."""
+    column, row, layer = facts.gaps[0].place
+    move = shifted_channel(stack, (layer, row, column))
+    if move is None or max(abs(move[1]), abs(move[2])) > 1:
+        return []
+    name, rows, columns = move
+    return [
+        Finding(
+            severity="warn",
+            code="channel shifted",
+            message=f"A slit of one site closes when the images of channel '{name}' are moved by "
+            f"{columns} columns and {rows} rows: this channel is shifted, or the design has a slit "
+            "that no printer can hold.",
+            place_mm=stack.locate(layer, row, column)[1],
+            remedy="Compare with the design; write the stack again.",
+        )
+    ]
 
 
 def _volumes(stack: Stack, facts: Facts, part: Part | None) -> list[Finding]:

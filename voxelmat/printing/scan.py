@@ -10,7 +10,7 @@ from numpy.typing import NDArray
 from voxelmat.kernels.bitplane import count_planes, first_site, lone_sites
 from voxelmat.monitor import SILENT, Monitor
 from voxelmat.printing.decoded import DecodedLayer, decoded_layers
-from voxelmat.printing.expected import ExpectedLayers
+from voxelmat.printing.layerdesign import ExpectedLayers
 from voxelmat.printing.oddlayers import LayerDifferences
 from voxelmat.printing.pieces import Piece, Pieces
 from voxelmat.printing.readback import Stack

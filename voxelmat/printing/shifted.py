@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import itertools
+
 import numpy as np
 from numpy.typing import NDArray
 from scipy import ndimage
@@ -11,13 +13,20 @@ from voxelmat.printing.readback import Stack
 __all__ = ["shifted_channel"]
 
 _REACH = 3  # sites that are tried either way
+#: Rows and columns that a channel is moved by, the smallest move first.
+_MOVES = sorted(
+    (m for m in itertools.product(range(-_REACH, _REACH + 1), repeat=2) if any(m)),
+    key=lambda m: (abs(m[0]) + abs(m[1]), m),
+)
 _CROP = 96  # sites round the first conflict that are looked at
 
 
 def _conflict(claims: NDArray[np.int64]) -> int:
     """Sites claimed more than once, and narrow slits that no one claims."""
     both = claims > 0
-    slits = ndimage.binary_closing(both, np.ones((2 * _REACH + 1,) * 2, dtype=np.bool_)) & ~both
+    slits = np.zeros_like(both)
+    for line in ((1, 2 * _REACH + 1), (2 * _REACH + 1, 1)):  # along rows, along columns
+        slits |= ndimage.binary_closing(both, np.ones(line, dtype=np.bool_)) & ~both
     inner = slice(2 * _REACH, -2 * _REACH)
     return int((claims > 1)[inner, inner].sum() + slits[inner, inner].sum())
 
@@ -54,11 +63,10 @@ def shifted_channel(stack: Stack, place: tuple[int, int, int]) -> tuple[str, int
     start = _conflict(everything)
     for channel, plane in enumerate(padded):
         others = everything - plane
-        for dy in range(-_REACH, _REACH + 1):
-            for dx in range(-_REACH, _REACH + 1):
-                left = _conflict(others + np.roll(plane, (dy, dx), axis=(0, 1)))
-                if (dy or dx) and (best is None or left < best[0]):
-                    best = (left, stack.channels[channel].name, dy, dx)
+        for dy, dx in _MOVES:
+            left = _conflict(others + np.roll(plane, (dy, dx), axis=(0, 1)))
+            if best is None or left < best[0]:
+                best = (left, stack.channels[channel].name, dy, dx)
     if best is None or best[0] > start / 10:
         return None
     return best[1:]
