@@ -227,3 +227,30 @@ def web_folder(tmp_path):
 class _Quiet(http.server.SimpleHTTPRequestHandler):
     def log_message(self, *args):
         """Say nothing."""
+
+
+_BENCH = """
+import pathlib, voxelmat, small_design
+folder = pathlib.Path("{folder}")
+folder.mkdir(exist_ok=True)
+path = folder / "design.toml"
+if not path.exists():
+    small_design.write_small_design(folder)
+bench = voxelmat.open_workbench(path)
+bench
+"""
+
+
+@pytest.fixture
+def open_bench(notebook):
+    """Opens a workbench on the small design, `bench` in the kernel; gives its desk."""
+
+    def opened(name):
+        notebook.open(f"{name}.ipynb", [_BENCH.format(folder=name)])
+        notebook.run_all()
+        desk = notebook.page.locator(".vm-desk")
+        desk.wait_for()
+        notebook.page.locator(".vm img[data-seq]").first.wait_for()
+        return desk
+
+    return opened

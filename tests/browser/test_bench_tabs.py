@@ -1,0 +1,44 @@
+"""Every tab of the workbench: opens, nothing clipped at 1280 x 720, light and dark."""
+
+from __future__ import annotations
+
+import os
+from pathlib import Path
+
+import pytest
+
+pytestmark = [pytest.mark.browser, pytest.mark.timeout(300)]
+
+# Labels, buttons and cells whose text is wider than the box it is drawn in.
+CLIPPED = """
+() => [...document.querySelectorAll('.vm-desk :is(label, button, td, th, h4, p, span)')]
+  .filter(n => n.offsetParent && n.scrollWidth > n.clientWidth + 2)
+  .filter(n => getComputedStyle(n).display !== 'inline')
+  .filter(n => !n.closest('.scroll') || n.tagName !== 'TD')
+  .map(n => n.tagName + ': ' + n.textContent.slice(0, 60))
+"""
+
+
+def _shot(notebook, name):
+    if os.environ.get("VOXELMAT_SHOTS"):
+        notebook.page.screenshot(path=Path(os.environ["VOXELMAT_SHOTS"]) / f"{name}.png")
+
+
+def test_every_tab_opens_with_nothing_clipped(notebook, open_bench, gl):
+    desk = open_bench("tabs")
+    notebook.ask("bench.jobs.settle(120); bench.optimiser.set_up()")
+    titles = desk.locator("[role=tab]").all_inner_texts()
+    assert len(titles) == len(set(titles)) >= 8
+    for theme in ("light", "dark"):
+        if theme == "dark":
+            notebook.page.evaluate(
+                "window.jupyterapp.commands.execute('apputils:change-theme', "
+                "{theme: 'JupyterLab Dark'})"
+            )
+            notebook.page.wait_for_timeout(800)
+        for title in titles:
+            desk.get_by_role("tab", name=title, exact=True).click()
+            desk.locator(f"[role=tabpanel][aria-label='{title}']").wait_for()
+            _shot(notebook, f"tab-{theme}-{title}")
+            assert notebook.page.evaluate(CLIPPED) == [], title
+    assert desk.locator(".message.bad").count() == 0
