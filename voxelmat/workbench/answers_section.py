@@ -273,14 +273,15 @@ class AnswersSection(Section):
                 words += "Add a load case under Loads first."
             return [*shown, c.words(words, tone="hint")]
         stale = self.stale
-        how = (
-            "full solve"
-            if best.coarsening == 1
-            else (
-                f"quick answer on voxels {number(best.coarsening, 2)} times as long; solve in full "
-                "before you rely on it"
+        if best is self.full:
+            how = "full solve"
+        elif best.coarsening == 1:
+            how = "quick answer, on the design's own voxels"
+        else:
+            how = (
+                f"quick answer, on voxels {number(best.coarsening, 2)} times as long; solve in "
+                "full before you rely on it"
             )
-        )
         out = "Out of date, the design has changed: " if stale else ""
         shown.append(c.words(f"{out}{how} ({number(best.seconds, 2)} s).", tone="hint"))
         shown += self._requirements(best, stale)

@@ -134,7 +134,7 @@ function render({model, el}) {
       const rows = s.rows.map((row, r) => {
         const tr = element('tr', {className: r === s.chosen ? 'chosen' : ''}, ...row.map((text, i) => {
           const cell = element('td', {textContent: text});
-          if (/^[-+\u2212]?[\d.]/.test(text) && !/[a-z]{4}/i.test(text)) cell.className = 'figure';
+          if (/^[-+\u2212]?[\d.]/.test(text) && !/[a-z]{4}/i.test(text)) cell.className = text.length < 12 ? 'figure' : 'figure long';
           if (i === 0 && s.colours && s.colours[r]) {
             const swatch = element('span', {className: 'swatch'});
             swatch.style.background = s.colours[r]; cell.prepend(swatch, ' ');
