@@ -197,8 +197,8 @@ def test_wrong_entries_name_their_key(values, key):
 @pytest.mark.parametrize("profile", [load_profile(n) for n in shipped_profiles()])
 def test_window_on_whole_bytes_moves_no_site(profile):
     item = placed(block((3.1, 2.3, 0.2)), profile, position=(20.3, 30.7))
-    grown = on_whole_bytes(item.raster)
-    assert grown.image_offset[2] % 8 == 0
+    grown = on_whole_bytes(item.raster, 3)
+    assert grown.image_offset[2] % 8 == 3
     spare = item.raster.image_offset[2] - grown.image_offset[2]
     assert 0 <= spare < 8
     shape, more = item.raster.image_shape, grown.image_shape

@@ -20,13 +20,20 @@ __all__ = ["TraySource", "on_whole_bytes", "tray_window"]
 _BYTE = 8
 
 
-def on_whole_bytes(raster: Raster) -> Raster:
-    """The same place with up to 7 empty columns more, so that it starts on a byte of the tray.
+def on_whole_bytes(raster: Raster, first_column: int = 0) -> Raster:
+    """The same place with up to 7 empty columns more, so that it starts on a byte of a window.
 
-    The part does not move by a site; only its window grows, towards the first column.
+    The part does not move by a site; only its own window grows, towards the first column.
+
+    Parameters
+    ----------
+    raster : Raster
+    first_column : int
+        Where the window of the whole job starts in the image of the whole tray, or a multiple of
+        8 before or after it.
     """
     tray_axis, sign = raster.image_axes[2]
-    spare = raster.image_offset[2] % _BYTE
+    spare = (raster.image_offset[2] - first_column) % _BYTE
     shape, offset = list(raster.shape), list(raster.offset)
     shape[tray_axis] += spare
     if sign > 0:

@@ -182,8 +182,11 @@ class Tray:
         parts = self.placed
         window = parts[0].raster
         if len(parts) > 1:
+            first = min(p.raster.image_offset[2] for p in parts)
             parts = tuple(
-                PlacedPart(part=p.part, raster=on_whole_bytes(p.raster), name=p.name, kind=p.kind)
+                PlacedPart(
+                    part=p.part, raster=on_whole_bytes(p.raster, first), name=p.name, kind=p.kind
+                )
                 for p in parts
             )
             window = tray_window([p.raster for p in parts], self.profile)
