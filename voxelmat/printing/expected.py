@@ -1,207 +1,104 @@
-"""Every layer of a stack against its design, on points well off any outline.
-
-Independent of the slicer: the design's outline is evaluated on a coarse lattice of sites that is
-moved from layer to layer. Points near the outline and points in blends are left out, so neither
-rounding nor a halftone can be taken for a fault.
-"""
+"""What the design says of a layer on a sample of its places, to compare a written layer with."""
 
 from __future__ import annotations
-
-from collections.abc import Iterator
-from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
 
-from voxelmat.model.finding import Finding
-from voxelmat.model.part import DISTANCE_STEPS, Part
-from voxelmat.printing.raster import Raster
+from voxelmat.io.bigpart import AnyPart
+from voxelmat.printing.planes import DesignPlanes
 from voxelmat.printing.readback import Stack
-from voxelmat.printing.support import outline_field
 
-__all__ = ["ExpectedLayers"]
+__all__ = ["Expected"]
 
-Bools = NDArray[np.bool_]
-_LATTICE = 64  # points along rows and along columns
-#: Share of the points of a layer that may be wrong; a feature between two voxels may be drawn
-#: otherwise than straight interpolation says. Ours.
-_WRONG = 0.01
-_FEWEST = 4
-_NAMED = 3
-_TURNS = {"as it is": (1, 1), "columns": (1, -1), "rows": (-1, 1), "180 degrees": (-1, -1)}
+_ACROSS = 192  # places along each side of a layer, at most
+_SHARE = 0.01  # of the solid places, that may differ
+_FEW = 8  # places, in addition
+_KEPT = 16  # layers that differ and are kept to look for their place
 
 
-@dataclass(slots=True)
-class _Seen:
-    """Of one layer: points judged, wrong ones for each turn, and the first wrong pixel."""
-
-    layer: int
-    points: int
-    wrong: dict[str, int]
-    place: tuple[int, int]
-    empty: bool
-
-
-class ExpectedLayers:
-    """Feed decoded layers from the tray upwards, then ask for the findings.
+class Expected:
+    """The outline of a design at sampled places; layers are asked for from the tray upwards.
 
     Parameters
     ----------
     stack : Stack
         Of one part.
-    part : Part
-        The design, compensated for the printer's bias.
-    raster : Raster
-        Of the part.
+    part : Part or StoredPart
+        What was sliced.
+
+    Attributes
+    ----------
+    differing : list of (int, float)
+        Layers that differ, and by which share of the solid places.
     """
 
-    def __init__(self, stack: Stack, part: Part, raster: Raster) -> None:
-        self._stack = stack
-        self._part = part
-        self._field = raster.to_image(outline_field(part))
-        self._labels = raster.to_image(part.labels)
-        self._index = [raster.image_index(part.grid, m) for m in range(3)]
-        # A site at the rim of the grid may lie half outside it.
-        self._within = [
-            (i >= 0.5 * s - 0.5) & (i <= n - 0.5 - 0.5 * s)
-            for i, n in zip(self._index, self._field.shape, strict=True)
-            for s in (float(np.abs(np.diff(i)).max(initial=0.0)),)
-        ]
-        if part.distance is not None:
-            pitch = max(float(p) for p in raster.pitch)
-            self._sure = DISTANCE_STEPS * pitch / min(part.grid.spacing) + 2.0
-        else:
-            self._sure = 7.9 if part.occupancy is None else 100.0
-        table = part.palette_fractions()
-        # Where interfaces are dithered over a width, a pure voxel may hold other droplets too.
-        hard = not any(stack.manifest["method"].get("interface_width_mm") or ())
-        self._pure = np.where((table.max(axis=1) == 1.0) & hard, table.argmax(axis=1), -1)
-        number = {m.name: n for n, m in enumerate(part.resins)}
-        self._resin = np.array([number.get(c.resin, -2) for c in stack.channels])
-        self._model = np.array([c.role != "support" for c in stack.channels])
-        self._seen: list[_Seen] = []
+    def __init__(self, stack: Stack, part: AnyPart) -> None:
+        raster = stack.raster
+        _, rows, columns = raster.image_shape
+        self._planes = DesignPlanes(part, raster)
+        self._cursor = self._planes.cursor()
+        self._stepped = part.distance is None and part.occupancy is None
+        self._rows = np.unique(np.linspace(0, rows - 1, min(rows, _ACROSS)).astype(int))
+        self._columns = np.unique(np.linspace(0, columns - 1, min(columns, _ACROSS)).astype(int))
+        shape = [part.grid.shape[a] for a, _ in raster.part_axes()]
+        index = [raster.image_index(part.grid, m) for m in range(3)]
+        self._layer_axis = self._axis(index[0], shape[0])
+        self._row_axis = self._axis(index[1][self._rows], shape[1])
+        self._column_axis = self._axis(index[2][self._columns], shape[2])
+        self.differing: list[tuple[int, float]] = []
+        self._kept: dict[int, tuple[NDArray[np.bool_], NDArray[np.bool_]]] = {}
 
-    def _lattice(self, layer: int) -> tuple[NDArray[np.int64], NDArray[np.int64]]:
-        """Rows and columns of the points, moved by a golden section a layer."""
-        found = []
-        for m, ratio in ((1, 0.618), (2, 0.382)):
-            n = len(self._index[m])
-            count = min(n, _LATTICE)
-            at = (np.arange(count) + (layer * ratio) % 1.0) * n / count
-            found.append(np.minimum(at.astype(np.int64), n - 1))
-        return found[0], found[1]
+    @property
+    def limit(self) -> float:
+        """Share of the solid places that may differ."""
+        return _SHARE
 
-    def _corners(
-        self, layer: int, rows: NDArray[np.int64], columns: NDArray[np.int64]
-    ) -> tuple[NDArray[np.float32], NDArray[np.uint16]]:
-        """Field at the points, and the one label of all eight voxels round each (0 if several)."""
-        low, high, weight = [], [], []
-        for m, at in ((0, np.array([layer])), (1, rows), (2, columns)):
-            n = self._field.shape[m]
-            index = np.clip(self._index[m][at], 0, n - 1)
-            first = np.minimum(index.astype(np.int64), max(n - 2, 0))
-            low.append(first)
-            high.append(np.minimum(first + 1, n - 1))
-            weight.append((index - first).astype(np.float32))
-        value: NDArray[np.float32] = np.zeros((len(rows), len(columns)), dtype=np.float32)
-        one = self._labels[np.ix_(low[0], low[1], low[2])][0]
-        for a in (0, 1):
-            for b in (0, 1):
-                for c in (0, 1):
-                    at = np.ix_(
-                        *(h if up else g for g, h, up in zip(low, high, (a, b, c), strict=True))
-                    )
-                    share = [w if up else 1 - w for w, up in zip(weight, (a, b, c), strict=True)]
-                    value += share[0][0] * np.outer(share[1], share[2]) * self._field[at][0]
-                    one = np.where(self._labels[at][0] == one, one, 0)
-        return value, one
+    def _axis(
+        self, index: NDArray[np.float64], n: int
+    ) -> tuple[NDArray[np.int64], NDArray[np.float32], NDArray[np.bool_]]:
+        """Lower voxel, weight of the upper one, and whether the place lies on the grid."""
+        on = (index >= -0.5) & (index <= n - 0.5)
+        clipped = np.clip(index, 0, n - 1)
+        low = np.minimum(clipped.astype(np.int64), max(n - 2, 0))
+        weight = (clipped - low).astype(np.float32)
+        return low, np.rint(weight) if self._stepped else weight, on
 
-    def push(self, layer: int, planes: NDArray[np.uint64]) -> None:
-        """Take in a layer, words ``[channel, row, word]``."""
-        rows, columns = self._lattice(layer)
-        value, label = self._corners(layer, rows, columns)
-        inside, sure = value < 0, np.abs(value) > self._sure
-        sure &= self._within[0][layer] & np.outer(self._within[1][rows], self._within[2][columns])
-        pure = np.where(sure & inside, self._pure[label], -1)
-        n_rows, n_columns = planes.shape[1], len(self._index[2])
-        wrong: dict[str, int] = {}
-        place = (int(rows[0]), int(columns[0]))
-        for words, (up, along) in _TURNS.items():
-            at = rows if up > 0 else n_rows - 1 - rows
-            to = columns if along > 0 else n_columns - 1 - columns
-            bits = self._bits(planes, at, to)
-            solid = bits[self._model].any(axis=0)
-            off = sure & (solid != inside)
-            if (pure >= 0).any():
-                right = (bits & (self._resin[:, None, None] == pure)).any(axis=0)
-                off |= (pure >= 0) & ~right
-            wrong[words] = int(off.sum())
-            if up > 0 and along > 0:
-                empty = not solid.any()
-                if not off.any():
-                    break
-                first = np.argwhere(off)[0]
-                place = (int(rows[first[0]]), int(columns[first[1]]))
-        self._seen.append(_Seen(layer, int(sure.sum()), wrong, place, empty))
+    def layer(self, k: int) -> NDArray[np.bool_]:
+        """Solid or not at the sampled places of one layer, ``[row, column]``."""
+        low, weight, on = (v[k] for v in self._layer_axis)
+        (r, rw, r_on), (c, cw, c_on) = self._row_axis, self._column_axis
+        if not on:
+            return np.zeros((len(r), len(c)), dtype=np.bool_)
+        lower, upper = (self._cursor.plane(int(low) + m).outlines[0] for m in (0, 1))
+        rows = []
+        for side in (0, 1):
+            a, b = (p[np.ix_(r + side, np.arange(p.shape[1]))] for p in (lower, upper))
+            rows.append(a + weight * (b.astype(np.float32) - a))
+        line = rows[0] + rw[:, None] * (rows[1] - rows[0])
+        field = line[:, c] + cw * (line[:, c + 1] - line[:, c])
+        return np.asarray((field < 0) & r_on[:, None] & c_on)
 
-    @staticmethod
-    def _bits(
-        planes: NDArray[np.uint64], rows: NDArray[np.int64], columns: NDArray[np.int64]
-    ) -> Bools:
-        words = planes[:, rows][:, :, columns >> 6]
-        shift = (63 - (columns & 63)).astype(np.uint64)
-        return (words >> shift & np.uint64(1)).astype(np.bool_)
+    def compare(self, k: int, solid: NDArray[np.uint64]) -> None:
+        """Compare a written layer, words ``[row, word]``."""
+        column = self._columns
+        words = solid[np.ix_(self._rows, column >> 6)]
+        there = (words >> (63 - (column & 63)).astype(np.uint64)) & np.uint64(1) != 0
+        wanted = self.layer(k)
+        differ = int((there != wanted).sum())
+        size = max(int(wanted.sum()), int(there.sum()))
+        if differ > _SHARE * size + _FEW or (size > 0 and not there.any() and wanted.any()):
+            self.differing.append((k, differ / size))
+            if len(self._kept) < _KEPT:
+                self._kept[k] = (there, wanted)
 
-    def findings(self) -> Iterator[Finding]:
-        """Layers that are not those of the design."""
-        bad = [
-            s for s in self._seen
-            if s.wrong["as it is"] >= max(_FEWEST, _WRONG * s.points)
-        ]  # fmt: skip
-        if not bad:
-            return
-        turn = self._turn(bad)
-        if turn and len(bad) > 0.5 * len(self._seen):
-            yield Finding(
-                severity="stop",
-                code="mirrored stack",
-                message=f"{len(bad)} of {len(self._seen)} layers fit the design only when "
-                f"{_turned(turn)}.",
-                place_mm=self._place(bad[0]),
-                remedy="Write the stack again; do not turn or mirror its images.",
-                value=len(bad),
-                limit=0,
-            )
-            return
-        for seen in bad[:_NAMED]:
-            own = self._turn([seen])
-            what = (
-                "is blank" if seen.empty
-                else f"fits only when {_turned(own)}" if own
-                else f"differs in {seen.wrong['as it is']} of {seen.points} points looked at"
-            )  # fmt: skip
-            yield Finding(
-                severity="stop",
-                code="wrong layer",
-                message=f"Layer {seen.layer} is not that of the design: it {what} "
-                f"({len(bad)} such layers in all).",
-                place_mm=self._place(seen),
-                remedy="Write the stack again from this design.",
-                value=len(bad),
-                limit=0,
-            )
-
-    def _turn(self, bad: list[_Seen]) -> str:
-        """The turn that explains nearly everything; empty where none does."""
-        now = sum(s.wrong["as it is"] for s in bad)
-        for words in list(_TURNS)[1:]:
-            if sum(s.wrong[words] for s in bad) < 0.1 * now:
-                return words
-        return ""
-
-    def _place(self, seen: _Seen) -> tuple[float, float, float]:
-        return self._stack.locate(seen.layer, *seen.place)[1]
-
-
-def _turned(turn: str) -> str:
-    return "turned by 180 degrees" if turn == "180 degrees" else f"mirrored along its {turn}"
+    def fits(self, k: int) -> int | None:
+        """Another differing layer whose place in the design layer `k` fits, if there is one."""
+        if k not in self._kept:
+            return None
+        there = self._kept[k][0]
+        for other, (_, wanted) in self._kept.items():
+            differ = int((there != wanted).sum())
+            if other != k and differ <= _SHARE * int(wanted.sum()):
+                return other
+        return None
