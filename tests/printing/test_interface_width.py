@@ -14,8 +14,10 @@ from voxelmat.printing.designed import used_resins
 from voxelmat.printing.halftone import Slicer
 from voxelmat.printing.place import place
 from voxelmat.printing.planes import DesignPlanes
+from voxelmat.printing.preflight import preflight
 from voxelmat.printing.profile import load_profile
 from voxelmat.printing.ramp import InterfaceRamps
+from voxelmat.printing.stack import write_stack
 from voxelmat.printing.support import outline_box
 
 PROFILE = load_profile("invented-standard")
@@ -212,3 +214,14 @@ def test_plain_data_and_widths_by_pair():
     assert halftone.width_between("hard", "soft") == halftone.width_between("soft", "hard") == 0.2
     assert halftone.width_between("hard", "mid") == 0.0
     assert hash(halftone) == hash(Halftone(**{k: getattr(halftone, k) for k in halftone.as_dict()}))
+
+
+@pytest.mark.parametrize("width", [0.3, 0.9, {("hard", "soft"): 0.6}])
+def test_the_preflight_takes_no_ramp_for_a_fault_and_sees_what_is_none(tmp_path, width):
+    part = halves(0, (20, 6, 4))
+    halftone = Halftone(interface_width_mm=width)
+    stack = write_stack(part, PROFILE, tmp_path / "s", halftone=halftone)
+    known = {f.code for f in preflight(stack, part)}
+    assert not known & {"wrong layer", "mirrored stack"}
+    other = part.replace(labels=np.where(part.labels > 0, 3 - part.labels, 0).astype(np.uint16))
+    assert "mirrored stack" in {f.code for f in preflight(stack, other)}  # the halves are swapped

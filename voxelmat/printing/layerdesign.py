@@ -121,12 +121,12 @@ class ExpectedLayers:
         for a in (0, 1):
             for b in (0, 1):
                 for c in (0, 1):
-                    at = np.ix_(
+                    corner = np.ix_(
                         *(h if up else g for g, h, up in zip(low, high, (a, b, c), strict=True))
                     )
                     share = [w if up else 1 - w for w, up in zip(weight, (a, b, c), strict=True)]
-                    value += share[0][0] * np.outer(share[1], share[2]) * self._field[at][0]
-                    one = np.where(self._labels[at][0] == one, one, 0)
+                    value += share[0][0] * np.outer(share[1], share[2]) * self._field[corner][0]
+                    one = np.where(self._labels[corner][0] == one, one, 0)
         return value, one
 
     def push(self, layer: int, planes: NDArray[np.uint64]) -> None:
