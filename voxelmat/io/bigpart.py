@@ -94,13 +94,22 @@ class StoredArray:
             Where the block cannot be read or a chunk fails its checksum.
         """
         try:
-            block = np.array(self.open()[tuple(reversed(index))], order="C")
+            block = self._read(tuple(reversed(index)))
         except (OSError, ValueError, RuntimeError, KeyError) as error:
             raise FileFormatError(
                 f"Array '{self.name}' of the part in '{self.folder.name}' cannot be read "
                 f"({error}); make the store again."
             ) from error
         return block.T
+
+    def _read(self, index: tuple[slice, ...]) -> NDArray[Any]:
+        if self.kind == "maps":
+            return np.array(self.open()[index], order="C")
+        import zarr
+
+        # One chunk at a time: each thread that decodes keeps memory of its own.
+        with zarr.config.set({"async.concurrency": 1}):
+            return np.ascontiguousarray(self.open()[index])
 
     def check(self) -> None:
         """Raise `FileFormatError` if the array's shape or type is not what the head says."""

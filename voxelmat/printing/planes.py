@@ -5,6 +5,7 @@ from __future__ import annotations
 import shutil
 import tempfile
 import weakref
+from collections.abc import Iterator
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
@@ -183,13 +184,15 @@ class DesignPlanes:
         last = (n - 1 - k) // step * step  # the store counts from the other end
         return max(n - last - step, 0), n - last
 
-    def read(self, first: int, last: int) -> tuple[NDArray[np.uint16], NDArray[np.int8]]:
-        """Raw labels and the outline field of planes ``first`` to ``last - 1``."""
+    def read(self, first: int, last: int) -> Iterator[tuple[NDArray[np.uint16], NDArray[np.int8]]]:
+        """Raw labels and the outline field of each of the planes ``first`` to ``last - 1``."""
         labels = self._block("labels", first, last)
         if labels is None:
             raise InputError(f"Part '{self._part.name}' has no labels.")
         distance, occupancy = (self._block(f, first, last) for f in ("distance", "occupancy"))
-        return labels, outline_values(self._printed, labels, distance, occupancy)
+        for m, plane in enumerate(labels):
+            fields = (None if f is None else f[m] for f in (distance, occupancy))
+            yield plane, outline_values(self._printed, plane, *fields)
 
     def _filled(self, fill: SupportFill, path: Path | None) -> PlaneRow:
         n, rows, columns = self._true_shape
@@ -227,12 +230,13 @@ class PlaneCursor:
         if k not in self._known:
             # Steps are counted from where the store's are, for a block may be costly to read.
             first, last = self._planes.aligned(k, self._step)
-            first, last = max(first, min(self._low, k)), min(last, max(self._high, k + 1))
+            if self._planes.together == 1:
+                first, last = max(first, min(self._low, k)), min(last, max(self._high, k + 1))
             # Copies, for a view would keep all of the last block in memory.
             near = {m: (a.copy(), b.copy()) for m, (a, b) in self._known.items() if abs(m - k) <= 2}
-            labels, outline = self._planes.read(first, last)
-            new = {first + m: (labels[m], outline[m]) for m in range(last - first)}
-            self._known = {**near, **new}
+            self._known = near  # lets go of the last block before the next is read
+            for m, planes in enumerate(self._planes.read(first, last), start=first):
+                self._known[m] = planes
         return self._known[k]
 
     def outline(self, k: int) -> NDArray[np.int8]:
