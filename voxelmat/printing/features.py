@@ -25,7 +25,17 @@ _NAMED = 3  # findings of one kind that are listed with their place; the rest is
 
 def _place(stack: Stack, piece: Piece) -> tuple[float, float, float]:
     column, row, layer = piece.place
-    return stack.raster.pixel_to_part(layer, row, column)
+    return stack.locate(layer, row, column)[1]
+
+
+def _by_part(stack: Stack, pieces: list[Piece]) -> dict[str, list[Piece]]:
+    """The pieces of each part of a tray, in the order given."""
+    found: dict[str, list[Piece]] = {}
+    for piece in pieces:
+        column, row, layer = piece.place
+        name = stack.locate(layer, row, column)[0] if len(stack.parts) > 1 else ""
+        found.setdefault(name, []).append(piece)
+    return found
 
 
 def _volume(stack: Stack, piece: Piece) -> str:
@@ -35,17 +45,21 @@ def _volume(stack: Stack, piece: Piece) -> str:
 def piece_findings(stack: Stack, facts: Facts) -> Iterator[Finding]:
     """Floating pieces, a part that falls into several, sealed cavities."""
     yield from _floating(stack, facts)
-    pieces = [p for p in facts.part if p.sites >= _SPECK]
-    if len(pieces) > 1:
+    whole = [p for p in facts.part if p.sites >= _SPECK]
+    for name, pieces in _by_part(stack, whole).items():
+        if len(pieces) < 2:
+            continue
+        what = f"'{name}'" if name else "the part"
         yield Finding(
             severity="warn",
             code="separate pieces",
-            message=f"Without support the part comes in {len(pieces)} pieces; the smallest has "
+            message=f"Without support {what} comes in {len(pieces)} pieces; the smallest has "
             f"{_volume(stack, pieces[-1])}.",
             place_mm=_place(stack, pieces[-1]),
             remedy="Join what should be one part.",
             value=len(pieces),
             limit=1,
+            part=name,
         )
     sealed = [p for p in facts.hollows if not p.on_tray and not p.at_side and p.sites >= _SPECK]
     for piece in sealed[:_NAMED]:
