@@ -27,7 +27,8 @@ class Halftone:
     Attributes
     ----------
     method : str
-        One of `METHODS`.
+        One of `METHODS`. Error diffusion runs on one core, from the lowest layer up, and keeps 4
+        bytes a resin and site of a layer's window in memory.
     order : str or tuple of str
         In which order the thresholds lay the resins. The first and the last get the least
         noise, a resin between two others the noise of two thresholds. ``"stiffness"`` goes from
