@@ -97,17 +97,17 @@ def test_a_thin_wall_and_a_thin_gap(tmp_path):
     labels = slab()
     labels[:, :, 6:] = 0
     labels[8:9, 2:10, 6:12] = 1  # 0.25 mm, minimum 0.5
-    found = only(preflight(written(tmp_path, labels)), "thin wall or strut")
+    found = only(preflight(written(tmp_path, labels), deep=False), "thin wall or strut")
     near(found.place_mm, (7.1, 0.6, 1.2), by=0.5)
     assert found.limit == 0.5
     labels[8:10, 2:10, 6:12] = 1  # 0.5 mm
-    assert "thin wall or strut" not in codes(preflight(written(tmp_path, labels)))
+    assert "thin wall or strut" not in codes(preflight(written(tmp_path, labels), deep=False))
     labels = slab()
     labels[8:9, :, 2:] = 0  # a slot of 0.25 mm, minimum 0.4, open above and at its ends
-    found = only(preflight(written(tmp_path, labels)), "thin gap")
+    found = only(preflight(written(tmp_path, labels), deep=False), "thin gap")
     assert found.limit == 0.4
     labels[8:10, :, 2:] = 0
-    assert "thin gap" not in codes(preflight(written(tmp_path, labels)))
+    assert "thin gap" not in codes(preflight(written(tmp_path, labels), deep=False))
 
 
 def test_thin_layers_of_a_dithered_channel_are_no_defect(tmp_path):

@@ -201,7 +201,7 @@ def _amount(view: PartView, dimension: Dimension, low: NDArray[np.int64], high: 
             return Measurement(dimension=dimension, measured=None, note=note)
     total, rim = 0, 0
     for layer in range(int(low[0]), int(high[0])):
-        plane = view.channels(layer)[names].any(axis=0)[rows, columns]
+        plane = np.asarray(view.channels(layer)[names].any(axis=0))[rows, columns]
         total += int(plane.sum())
         rim += int((plane & ~ndimage.binary_erosion(plane, border_value=1)).sum())
     return Measurement(

@@ -11,6 +11,7 @@ from voxelmat.model.profile import PrintProfile
 from voxelmat.monitor import SILENT, Monitor
 from voxelmat.printing.bias import compensated, part_bias
 from voxelmat.printing.channelcheck import channel_findings, manifest_findings
+from voxelmat.printing.deepcheck import deep_findings, without_repeats
 from voxelmat.printing.designed import designed_volumes
 from voxelmat.printing.features import piece_findings, small_findings, zone_findings
 from voxelmat.printing.filecheck import file_findings, folder_findings, tray_findings
@@ -37,6 +38,7 @@ def preflight(
     profile: PrintProfile | None = None,
     *,
     bodies: Sequence[Body] = (),
+    deep: bool = True,
     monitor: Monitor = SILENT,
 ) -> list[Finding]:
     """Check a finished stack.
@@ -52,6 +54,9 @@ def preflight(
         The printer; the one in the manifest if left out.
     bodies : sequence of Body, optional
         The meshes of the design, which its outlines are then compared with.
+    deep : bool
+        Check thickness, ways out of rooms and overhangs in three dimensions too, which takes a
+        few times as long as all the rest.
     monitor : Monitor
 
     Returns
@@ -85,6 +90,8 @@ def preflight(
     found += [*piece_findings(stack, facts), *small_findings(stack, facts, printer)]
     if part is not None:
         found += zone_findings(part, printer)
+    if deep:
+        found = without_repeats(found + deep_findings(stack, facts, printer, monitor=monitor))
     return sorted(found, key=lambda f: SEVERITIES.index(f.severity))
 
 
