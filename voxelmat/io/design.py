@@ -10,6 +10,7 @@ from typing import Any, NoReturn
 
 from voxelmat.errors import InputError
 from voxelmat.io.design_checks import check_design, resin_uses
+from voxelmat.io.design_print import dimension_entry, print_entry
 from voxelmat.io.schema import check_document, read_toml
 from voxelmat.model.design import (
     FORMAT,
@@ -23,7 +24,6 @@ from voxelmat.model.design import (
     LoadEntry,
     OptimiseEntry,
     PlateEntry,
-    PrintEntry,
     RegionEntry,
     RequirementEntry,
     SupportEntry,
@@ -119,8 +119,8 @@ def parse_design(data: Table, *, path: Path | None = None) -> Design:
             key="format",
         )
     check_document(data, "design", file=file)
-    design = _design(data, path)
     try:
+        design = _design(data, path)
         check_design(design)
     except InputError as error:
         raise InputError(error.message, file=file, key=error.key) from None
@@ -154,7 +154,8 @@ def _design(data: Table, path: Path | None) -> Design:
         targets=tuple(_target(t) for t in data.get("target", ())),
         requirements=tuple(_requirement(r) for r in data.get("requirement", ())),
         optimise=_optimise(data["optimise"]) if "optimise" in data else None,
-        printing=_printing(data["print"]) if "print" in data else None,
+        printing=print_entry(data["print"]) if "print" in data else None,
+        dimensions=tuple(dimension_entry(d, i) for i, d in enumerate(data.get("dimension", ()))),
         path=path,
         data=dict(data),
     )
@@ -272,15 +273,6 @@ def _optimise(table: Table) -> OptimiseEntry:
         **listed,
         limits=tuple(limits),
         fixed=tuple((f["region"], f["resin"]) for f in table.get("fixed", ())),
-    )
-
-
-def _printing(table: Table) -> PrintEntry:
-    return PrintEntry(
-        profile=table["profile"],
-        orientation=tuple(table.get("orientation", ())),
-        position_mm=_floats(table["position_mm"]) if "position_mm" in table else None,
-        support=table.get("support"),
     )
 
 

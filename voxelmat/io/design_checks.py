@@ -27,6 +27,7 @@ def check_design(design: Design) -> None:
     _distinct("load_case", [c.name for c in design.cases])
     _distinct("target", [t.name for t in design.targets])
     _distinct("requirement", [r.name for r in design.requirements])
+    _distinct("dimension", [d.name for d in design.dimensions])
     _check_bodies(design)
     places = [r.name for r in design.regions] + [b.name for b in design.bodies]
     for i, region in enumerate(design.regions):

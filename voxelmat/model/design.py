@@ -10,6 +10,8 @@ from pathlib import Path
 from typing import Any
 
 from voxelmat.errors import InputError
+from voxelmat.model.halftone import Halftone
+from voxelmat.model.inspection import Dimension
 from voxelmat.model.material import Constant, Material
 from voxelmat.provenance import text_digest
 from voxelmat.units import DENSITY_G_CM3
@@ -285,13 +287,19 @@ class PrintEntry:
     position_mm : tuple of float or None
         Low x and y corner on the tray; None puts the part in the middle.
     support : str or None
-        ``"columns"``, ``"machine"`` or ``"none"``; None takes the profile's own policy.
+        A policy of `voxelmat.model.profile.SUPPORT_POLICIES`; None takes the profile's own.
+    halftone : Halftone
+        How blends become droplets.
+    job_number : str
+        Goes on marks, tickets and records.
     """
 
     profile: str
     orientation: tuple[str, ...] = ()
     position_mm: tuple[float, float] | None = None
     support: str | None = None
+    halftone: Halftone = field(default_factory=Halftone)
+    job_number: str = ""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -310,7 +318,7 @@ class Design:
         Files of the user's own, beside the shipped library.
     law : str
         Key of a blend law, see `voxelmat.model.laws.LAWS`.
-    bodies, gaps, layout, regions, cases, targets, requirements, optimise, printing
+    bodies, gaps, layout, regions, cases, targets, requirements, optimise, printing, dimensions
         The tables of the file. A body's name may stand wherever a region's may.
     path : Path or None
         Where it was read from.
@@ -337,6 +345,7 @@ class Design:
     requirements: tuple[RequirementEntry, ...] = ()
     optimise: OptimiseEntry | None = None
     printing: PrintEntry | None = None
+    dimensions: tuple[Dimension, ...] = ()
     format: int = FORMAT
     path: Path | None = None
     inputs: Mapping[str, str] = field(default_factory=dict)

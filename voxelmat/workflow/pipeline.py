@@ -276,6 +276,8 @@ class _Run:
                 position=printing.position_mm,
                 support=printing.support,
                 seed=built.design.seed,
+                halftone=printing.halftone,
+                notes={"job_number": printing.job_number} if printing.job_number else None,
                 monitor=self.monitor,
                 inputs=built.design.inputs,
                 workers=self.workers,
