@@ -115,7 +115,7 @@ class ImageFiles:
         laid = 0
         for channel, plane in enumerate(pixels):
             flat = np.unpackbits(plane, axis=1, count=self._order.width)
-            laid += int(np.count_nonzero(flat))
+            laid += _count(plane)
             flat *= np.uint8(channel + 1)
             numbers |= flat
         if laid != int(np.count_nonzero(numbers)):
