@@ -7,6 +7,7 @@ import json
 import os
 import sys
 from collections.abc import Callable, Sequence
+from importlib import import_module
 from pathlib import Path
 from typing import Any, NoReturn
 
@@ -42,6 +43,7 @@ class _Parser(argparse.ArgumentParser):
 
 def _parser() -> argparse.ArgumentParser:
     from voxelmat import __version__
+    from voxelmat.workflow.printroom_options import add_printroom
 
     parser = _Parser(
         prog="voxelmat",
@@ -122,6 +124,7 @@ def _parser() -> argparse.ArgumentParser:
         metavar="FOLDER",
         help="gets the stack, a picture and tray.json (default: tray)",
     )
+    add_printroom(command)
     command("warm", "compile all inner loops ahead, so that the first run need not")
     sub = command("materials", "show the resin library")
     sub.add_argument(
@@ -198,6 +201,10 @@ def _dispatch(options: argparse.Namespace) -> Answer:
         "profile": profile_commands.profile,
         "convert": convert_commands.convert,
         "lab": lab_commands.lab,
+        "ticket": _later("printroom_commands", "ticket"),
+        "proof": _later("printroom_commands", "proof"),
+        "record": _later("printroom_commands", "record"),
+        "kit": _later("kit_commands", "kit"),
         "tray": tray_commands.tray,
     }
     given = {k: v for k, v in vars(options).items() if k not in ("command", "json", "quiet")}
@@ -208,6 +215,16 @@ def _dispatch(options: argparse.Namespace) -> Answer:
         ):
             monitor.say("First run here: the inner loops are compiled, once; about half a minute.")
         return calls[options.command](monitor=monitor, **given)
+
+
+def _later(module: str, name: str) -> Callable[..., Answer]:
+    """A command whose module loads the compiled loops, so that it is imported when called."""
+
+    def call(**given: Any) -> Answer:
+        answer: Answer = getattr(import_module(f"voxelmat.workflow.{module}"), name)(**given)
+        return answer
+
+    return call
 
 
 def _compiled() -> bool:
