@@ -223,3 +223,18 @@ def test_a_wrong_record_of_a_mark_is_refused(stack, change):
     assert Mark.from_dict(record).as_dict() == record
     with pytest.raises(InputError):
         Mark.from_dict({**record, **change})
+
+
+def test_a_printer_with_bias_still_gets_its_marks_where_they_say(tmp_path):
+    profile = STANDARD.replace(bias=(0.06, 0.03, 0.02))
+    entries = [
+        TrayEntry(part=brick(), mark="engraved", name="cut"),
+        TrayEntry(part=brick((12, 10, 8)), name="small"),
+    ]
+    tray = lay_out(entries, profile, job_number="J")
+    assert [p.kind for p in tray.placed][:3] == ["part", "part", "mark"]
+    stack = write_tray(tray, tmp_path / "s")
+    assert [how for _, _, how, _ in find_marks(stack)] == ["", ""]
+    block = next(p for p in tray.placed if p.name == "block hard")
+    # Witness coupons are laid as drawn, so that measuring them shows the printer's bias.
+    assert tray.box_mm(block)[2] == pytest.approx(BLOCK_MM, abs=float(profile.pitch_x))

@@ -70,6 +70,7 @@ class Arranger:
         self.profile = profile
         self.designs: dict[str, AnyPart] = {}
         self.notes: list[str] = []
+        self._as_drawn = profile.replace(bias=(0.0, 0.0, 0.0))
         self._job_number = job_number
         self._items: list[_Item] = []
         self._extra: list[_Item] = []
@@ -84,12 +85,14 @@ class Arranger:
 
     # ------------------------------------------------------------------ what to place
     def _item(self, part: AnyPart, name: str, kind: str, lies: list[tuple[str, ...]]) -> _Item:
+        # Tags and coupons are laid as drawn: a coupon shows what the printer adds.
+        profile = self.profile if kind == "part" else self._as_drawn
         ready, boxes = [], []
         for orientation in lies:
             key = (id(part), orientation)
             if key not in self._known:
                 try:
-                    made = placed(part, self.profile, orientation, name=name, kind=kind)
+                    made = placed(part, profile, orientation, name=name, kind=kind)
                 except InputError as error:
                     raise InputError(f"'{name}': {error.message}", key=error.key) from None
                 self._known[key] = (made, outline_box(made.part))

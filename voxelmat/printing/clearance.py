@@ -74,10 +74,10 @@ def _reach(raster: Raster, spacing_mm: float) -> tuple[int, int]:
     return (x, y)
 
 
-def _common(a: Raster, b: Raster, spacing_mm: float) -> tuple[slice, slice] | None:
-    """Sites of the tray where both windows lie within the spacing, or None."""
+def _common(a: Raster, b: Raster, reaches: tuple[int, int]) -> tuple[slice, slice] | None:
+    """Sites of the tray where both windows lie within a distance (in sites), or None."""
     cuts = []
-    for axis, reach in enumerate(_reach(a, spacing_mm)):
+    for axis, reach in enumerate(reaches):
         low = max(a.offset[axis], b.offset[axis])
         high = min(a.offset[axis] + a.shape[axis], b.offset[axis] + b.shape[axis])
         if low - high >= reach:
@@ -133,10 +133,11 @@ def clashes(job: PrintJob, spacing_mm: float, *, monitor: Monitor = SILENT) -> l
     """
     pitch = (float(job.profile.pitch_x), float(job.profile.pitch_y))
     least = spacing_mm - float(np.hypot(*pitch))
+    reach = _reach(job.window, spacing_mm)
     near = [
         (a, b, region)
         for a, b in combinations(job.parts, 2)
-        if (region := _common(a.raster, b.raster, spacing_mm)) is not None
+        if (region := _common(a.raster, b.raster, reach)) is not None
     ]
     known: dict[str, NDArray[np.bool_]] = {}
     found = []

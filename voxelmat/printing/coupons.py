@@ -1,4 +1,4 @@
-"""Witness coupons: a density block and a staircase of each resin, printed with every tray."""
+"""Witness coupons of each resin on a tray: a density block and a staircase, laid as drawn."""
 
 from __future__ import annotations
 
