@@ -71,7 +71,7 @@ class SupportFigures:
         InputError
             If a value is no number or out of range, naming its key.
         """
-        given = {k: v for k, v in data.items() if k in cls.keys()}
+        given = {k: v for k, v in data.items() if k in set(cls.keys())}
         for key, value in given.items():
             if isinstance(value, bool) or not isinstance(value, int | float):
                 raise InputError(f"A size in mm is a number; got {value!r}.", key=f"support.{key}")

@@ -11,7 +11,7 @@ from scipy import ndimage
 
 from voxelmat.printing.ballscreen import thin_sites
 
-__all__ = ["Measured", "image_sizes", "measure", "width_at"]
+__all__ = ["Measured", "deepest_of", "image_sizes", "measure", "width_at"]
 
 Bools = NDArray[np.bool_]
 Sites = tuple[int, int, int]
@@ -83,10 +83,18 @@ def measure(block: Bools, at: Sites, limit: Triple, pitch: Triple) -> Measured |
     sizes = image_sizes(limit, pitch)
     near[tuple(slice(max(0, a - 2 * n), a + 2 * n + 1) for a, n in zip(at, sizes, strict=True))] = 1
     inside = np.where((pieces == pieces[at]) & near, depth, -1.0)
-    best = tuple(int(v) for v in np.unravel_index(int(inside.argmax()), block.shape))
-    deepest = (best[0], best[1], best[2])
+    sites = np.argwhere(inside > 0)
+    deepest = deepest_of(sites, inside[tuple(sites.T)])
     thickness, normal = width_at(block, deepest, pitch)
     return Measured(thickness, normal, deepest, _flat(block, deepest, 1.5 * max(limit), pitch))
+
+
+def deepest_of(sites: NDArray[np.int64], depth: NDArray[np.float64]) -> Sites:
+    """Of sites (n, 3) the deepest; of several as deep the one in their middle."""
+    best = sites[depth >= 0.999 * depth.max()]
+    off = best - best.mean(axis=0)
+    z, y, x = (int(v) for v in best[int((off**2).sum(axis=1).argmin())])
+    return (z, y, x)
 
 
 def width_at(block: Bools, at: Sites, pitch: Triple) -> tuple[float, Triple]:
