@@ -7,6 +7,7 @@ support on one side.
 
 from __future__ import annotations
 
+import math
 from collections.abc import Iterator
 from typing import Any
 
@@ -16,7 +17,7 @@ from scipy import ndimage
 
 from voxelmat.model.finding import Finding
 from voxelmat.printing.ballscreen import thin_sites
-from voxelmat.printing.measure import deepest_of, image_sizes, width_at
+from voxelmat.printing.measure import deepest_of, width_at
 from voxelmat.printing.support import SupportFill
 from voxelmat.printing.zones import SOFT_MODULUS, Zones
 from voxelmat.units import quantity
@@ -27,6 +28,7 @@ TEAR_BOTH = 1.0
 TEAR_ONE = 0.5
 _LEAST = 4  # voxel faces that touch support
 _BALANCE = 0.25  # the lesser of two opposite sides over the largest of all six
+_MEASURED = 12  # of the pieces that may tear, those that touch support most
 _NAMED = 3
 
 
@@ -43,7 +45,7 @@ def tearing_findings(zones: Zones, fill: SupportFill | None) -> list[Finding]:
     -------
     list of Finding
         Code "support tears soft wall"; nothing where the voxels are too coarse to tell, which is
-        above half the limit.
+        the limit and above.
     """
     found: list[Finding] = []
     soft = zones.soft
@@ -52,10 +54,10 @@ def tearing_findings(zones: Zones, fill: SupportFill | None) -> list[Finding]:
         return found
     named: set[tuple[int, int, int]] = set()
     for limit, both in ((TEAR_BOTH, True), (TEAR_ONE, False)):
-        sizes = image_sizes((limit,) * 3, zones.spacing)
-        if min(sizes) < 2:
+        z, y, x = (math.ceil(limit / h - 1e-9) for h in zones.spacing)
+        if min(z, y, x) < 2:
             continue
-        thin = thin_sites(zones.solid, sizes) & soft
+        thin = thin_sites(zones.solid, (z, y, x)) & soft
         pieces, _ = ndimage.label(thin)
         faces = _faces(pieces, support)
         for number in _torn(faces, both):
@@ -88,7 +90,7 @@ def _torn(faces: NDArray[np.int64], both: bool) -> list[int]:
         hit = (more >= _LEAST).any(axis=1)
     numbers = np.flatnonzero(hit)
     order = np.argsort(-faces.sum(axis=(1, 2))[numbers], kind="stable")
-    return [int(n) for n in numbers[order][:_NAMED]]
+    return [int(n) for n in numbers[order][:_MEASURED]]
 
 
 def _deepest(zones: Zones, voxels: NDArray[np.int64]) -> tuple[int, int, int]:
