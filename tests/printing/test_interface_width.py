@@ -6,6 +6,7 @@ from halftone_twins import RampSlicer, interface_place
 from print_twins import HARD, MID, SOFT, layered_part, nearest_printed, sphere_distance
 
 from voxelmat.errors import InputError
+from voxelmat.io.bigpart_write import save_big_part
 from voxelmat.model.blend import EMPTY, Blend
 from voxelmat.model.grid import VoxelGrid
 from voxelmat.model.halftone import Halftone
@@ -225,3 +226,25 @@ def test_the_preflight_takes_no_ramp_for_a_fault_and_sees_what_is_none(tmp_path,
     assert not known & {"wrong layer", "mirrored stack"}
     other = part.replace(labels=np.where(part.labels > 0, 3 - part.labels, 0).astype(np.uint16))
     assert "mirrored stack" in {f.code for f in preflight(stack, other)}  # the halves are swapped
+
+
+@pytest.mark.parametrize("method", ["blue noise", "error diffusion"])
+@pytest.mark.parametrize("slabs", [2, 7])
+def test_any_split_gives_the_same_bits(method, slabs):
+    part = halves(2, (5, 4, 8))
+    raster = place(outline_box(part), PROFILE)
+    halftone = Halftone(method=method, interface_width_mm=0.9)
+    slicer = Slicer(part, raster, used_resins(part), support=False, seed=1, halftone=halftone)
+    n = raster.image_shape[0]
+    runs = slicer.slabs(-(-n // slabs))
+    assert len(runs) == slabs
+    parts = [bits for run in runs[::-1] for bits in list(slicer.layers(*run))[::-1]][::-1]
+    assert all(np.array_equal(a, b) for a, b in zip(slicer.layers(0, n), parts, strict=True))
+
+
+@pytest.mark.parametrize("kind", ["zarr", "maps"])
+@pytest.mark.parametrize("axis", [0, 2])
+def test_a_part_from_a_store_is_sliced_the_same(tmp_path, kind, axis):
+    part = halves(axis, (8, 6, 8))
+    stored = save_big_part(part, tmp_path / "p", kind=kind)
+    assert np.array_equal(sites(part, 0.6)[0], sites(stored, 0.6)[0])
