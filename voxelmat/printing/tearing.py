@@ -27,7 +27,7 @@ __all__ = ["TEAR_BOTH", "TEAR_ONE", "tearing_findings"]
 TEAR_BOTH = 1.0
 TEAR_ONE = 0.5
 _LEAST = 4  # voxel faces that touch support
-_BALANCE = 0.25  # the lesser of two opposite sides over the largest of all six
+_BALANCE = 0.25  # the lesser of two opposite sides over the larger
 _MEASURED = 12  # of the pieces that may tear, those that touch support most
 _NAMED = 3
 
@@ -45,28 +45,23 @@ def tearing_findings(zones: Zones, fill: SupportFill | None) -> list[Finding]:
     -------
     list of Finding
         Code "support tears soft wall"; nothing where the voxels are too coarse to tell, which is
-        the limit and above.
+        `TEAR_BOTH` and above.
     """
     found: list[Finding] = []
     soft = zones.soft
     support = zones.support(fill)
     if not soft.any() or not support.any():
         return found
-    named: set[tuple[int, int, int]] = set()
-    for limit, both in ((TEAR_BOTH, True), (TEAR_ONE, False)):
-        z, y, x = (math.ceil(limit / h - 1e-9) for h in zones.spacing)
-        if min(z, y, x) < 2:
-            continue
-        thin = thin_sites(zones.solid, (z, y, x)) & soft
-        pieces, _ = ndimage.label(thin)
-        faces = _faces(pieces, support)
-        for number in _torn(faces, both):
-            cut = np.argwhere(pieces == number)
-            at = _deepest(zones, cut)
-            if at in named:
-                continue
-            named.add(at)
-            found += _finding(zones, at, limit, both)
+    z, y, x = (math.ceil(TEAR_BOTH / h - 1e-9) for h in zones.spacing)
+    if min(z, y, x) < 2:
+        return found
+    pieces, _ = ndimage.label(thin_sites(zones.solid, (z, y, x)) & soft)
+    faces = _faces(pieces, support)
+    touching = faces.sum(axis=(1, 2))
+    for number in np.argsort(-touching, kind="stable")[:_MEASURED]:
+        if touching[number] >= _LEAST:
+            at = _deepest(zones, np.argwhere(pieces == number))
+            found += _finding(zones, at, faces[number])
     return found[:_NAMED]
 
 
@@ -81,18 +76,6 @@ def _faces(pieces: NDArray[Any], support: NDArray[np.bool_]) -> NDArray[np.int64
     return count
 
 
-def _torn(faces: NDArray[np.int64], both: bool) -> list[int]:
-    less, more = faces.min(axis=2), faces.max(axis=2)
-    if both:
-        most = more.max(axis=1, keepdims=True)
-        hit = ((less >= _LEAST) & (less >= _BALANCE * most)).any(axis=1)
-    else:
-        hit = (more >= _LEAST).any(axis=1)
-    numbers = np.flatnonzero(hit)
-    order = np.argsort(-faces.sum(axis=(1, 2))[numbers], kind="stable")
-    return [int(n) for n in numbers[order][:_MEASURED]]
-
-
 def _deepest(zones: Zones, voxels: NDArray[np.int64]) -> tuple[int, int, int]:
     """The voxel of a piece farthest from empty space."""
     low = np.maximum(voxels.min(axis=0) - 2, 0)
@@ -101,12 +84,17 @@ def _deepest(zones: Zones, voxels: NDArray[np.int64]) -> tuple[int, int, int]:
     return deepest_of(voxels, depth[tuple((voxels - low + 1).T)])
 
 
-def _finding(zones: Zones, at: tuple[int, int, int], limit: float, both: bool) -> Iterator[Finding]:
-    reach = [int(2 * limit / h) + 2 for h in zones.spacing]
+def _finding(zones: Zones, at: tuple[int, int, int], faces: NDArray[np.int64]) -> Iterator[Finding]:
+    """Measure a wall and judge it by the support on the two sides that it is thin between."""
+    reach = [int(2 * TEAR_BOTH / h) + 2 for h in zones.spacing]
     low = [max(0, a - n) for a, n in zip(at, reach, strict=True)]
     block = zones.solid[tuple(slice(b, a + n + 1) for a, b, n in zip(at, low, reach, strict=True))]
-    thickness, _ = width_at(block, (at[0] - low[0], at[1] - low[1], at[2] - low[2]), zones.spacing)
-    if thickness >= limit:
+    here = (at[0] - low[0], at[1] - low[1], at[2] - low[2])
+    thickness, normal = width_at(block, here, zones.spacing)
+    less, more = sorted(faces[int(np.abs(normal).argmax())])
+    both = less >= max(_LEAST, _BALANCE * more)
+    limit = TEAR_BOTH if both else TEAR_ONE
+    if more < _LEAST or thickness >= limit:
         return
     sides = "both sides" if both else "one side"
     yield Finding(
