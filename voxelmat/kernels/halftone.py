@@ -74,12 +74,12 @@ def mark_interfaces(lower, upper, fractions, pure, step, out):
 
 @njit(cache=True, nogil=True)
 def blend_planes(lower, upper, w, out):
-    """``out = lower + w * (upper - lower)``; all f32 [field, r, c]."""
+    """``out = lower + w * (upper - lower)``; i8, i8, f32, f32 [field, r, c]."""
     for f in range(lower.shape[0]):
         for j in range(lower.shape[1]):
             for k in range(lower.shape[2]):
-                a = lower[f, j, k]
-                out[f, j, k] = a + w * (upper[f, j, k] - a)
+                a = np.float32(lower[f, j, k])
+                out[f, j, k] = a + w * (np.float32(upper[f, j, k]) - a)
 
 
 @njit(cache=True, nogil=True)

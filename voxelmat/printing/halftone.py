@@ -92,7 +92,7 @@ class _Fields:
     """Of one design plane: labels, outline fields, and the ramps of dithered interfaces."""
 
     labels: NDArray[np.uint16]
-    outlines: NDArray[np.float32]
+    outlines: NDArray[np.int8]
     ramp: RampPlane | None
 
 
@@ -210,7 +210,7 @@ class Slicer:
         ramp = None
         if self._ramps is not None:
             ramp = self._ramps.plane(self.planes, k, plane.labels)
-        return _Fields(plane.labels, plane.outlines.astype(np.float32), ramp)
+        return _Fields(plane.labels, plane.outlines, ramp)
 
     def _cells(self, lower: _Fields, upper: _Fields, hard: NDArray[np.uint8]) -> None:
         """Say of each cell between two planes how its blends are interpolated."""
@@ -254,6 +254,7 @@ class Slicer:
             k, w = int(self._layer_at[layer]), self._layer_w[layer]
             if k != at:
                 at = k
+                ready = {m: v for m, v in ready.items() if m == k}
                 ready = {m: ready.get(m) or self._plane(cursor, m) for m in (k, k + 1)}
                 self._cells(ready[k], ready[k + 1], hard)
             lower, upper = ready[k], ready[k + 1]

@@ -255,12 +255,11 @@ class PlaneCursor:
         """Plane `k`; the plane above the only one is that one again."""
         k = min(k, self._planes._true_shape[0] - 1)
         if k not in self._made:
+            self._made = {m: v for m, v in self._made.items() if abs(m - k) <= 1}
             fields = [self.outline(k)]
             if self._planes._support is not None:
                 fields.append(self._planes._support[k])
-            plane = DesignPlane(_doubled(self.labels(k)), _doubled(np.stack(fields)))
-            near = {m: v for m, v in self._made.items() if abs(m - k) <= 1}
-            self._made = {**near, k: plane}
+            self._made[k] = DesignPlane(_doubled(self.labels(k)), _doubled(np.stack(fields)))
         return self._made[k]
 
 
