@@ -16,6 +16,7 @@ from scipy import ndimage
 
 from voxelmat.errors import InputError
 from voxelmat.monitor import SILENT, Monitor
+from voxelmat.model.halftone import Halftone
 from voxelmat.printing.job import PlacedPart, PrintJob
 from voxelmat.printing.raster import Raster
 from voxelmat.printing.source import slicer_of
@@ -60,7 +61,8 @@ def shadow(job: PrintJob, item: PlacedPart) -> NDArray[np.bool_]:
     ndarray of bool, shape ``item.raster.shape[:2]``
         Indexed ``[ix, iy]`` along tray x and y.
     """
-    slicer = slicer_of(job, item)
+    # Where droplets lie does not depend on which they are, so the fastest halftone will do.
+    slicer = slicer_of(job.replace(halftone=Halftone()), item)
     layers, rows, columns = slicer.image_shape
     seen = np.zeros((rows, columns), dtype=np.bool_)
     for sites in slicer.sites(0, layers):
