@@ -15,8 +15,8 @@ from numpy.typing import NDArray
 from scipy import ndimage
 
 from voxelmat.errors import InputError
-from voxelmat.monitor import SILENT, Monitor
 from voxelmat.model.halftone import Halftone
+from voxelmat.monitor import SILENT, Monitor
 from voxelmat.printing.job import PlacedPart, PrintJob
 from voxelmat.printing.raster import Raster
 from voxelmat.printing.source import slicer_of
