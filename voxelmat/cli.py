@@ -124,6 +124,12 @@ def _parser() -> argparse.ArgumentParser:
         metavar="FOLDER",
         help="gets the stack, a picture and tray.json (default: tray)",
     )
+    writes(sub)
+    sub = command("orientations", "compare the ways in which a part can lie on the tray")
+    design(sub)
+    sub.add_argument("--order", default="time", metavar="FIGURE", help="by what they are ranked")
+    sub.add_argument("--turns", action="store_true", help="turned by 90 degrees about z as well")
+    sub.add_argument("--html", type=Path, metavar="FILE", help="write the table as a page too")
     add_printroom(command)
     command("warm", "compile all inner loops ahead, so that the first run need not")
     sub = command("materials", "show the resin library")
@@ -206,6 +212,7 @@ def _dispatch(options: argparse.Namespace) -> Answer:
         "record": _later("printroom_commands", "record"),
         "kit": _later("kit_commands", "kit"),
         "tray": tray_commands.tray,
+        "orientations": tray_commands.orientations,
     }
     given = {k: v for k, v in vars(options).items() if k not in ("command", "json", "quiet")}
     with ConsoleMonitor(quiet=options.quiet) as monitor:

@@ -159,3 +159,38 @@ def test_the_picture_says_what_stands_where(pads):
     assert "pad 1, pad 2, kept" in picture.alt
     assert "front right" in picture.caption
     assert picture.png == tray_picture(tray).png
+
+
+def test_orientations_from_the_shell(small_design, capsys):
+    page = small_design.parent / "table.html"
+    words = ["orientations", str(small_design), "--order", "height", "--html", str(page)]
+    words += ["--out", str(small_design.parent / "none"), "--json", "--quiet"]
+    assert main(words) == 0
+    answer = json.loads(capsys.readouterr().out)
+    heights = [c["size_mm"][2] for c in answer["choices"]]
+    assert len(heights) == 6
+    assert heights == sorted(heights)
+    assert page.read_text().count("<tr>") == 7
+    assert main([*words[:2], "--order", "beauty", "--quiet"]) == 3
+    assert "ranked by" in capsys.readouterr().err
+
+
+def test_a_design_that_is_optimised_is_printed_from_its_run_only(small_design):
+    folder = small_design.parent
+    table = """
+[optimise]
+resins = ["measured-soft", "measured-hard"]
+objective = "compliance"
+design_in = ["pad"]
+void = false
+filter_radius_mm = 2.0
+"""
+    save_part(build(small_design).part, folder / "part.npz")
+    small_design.write_text(small_design.read_text() + table)
+    path = tray_file(folder, '[[part]]\ndesign = "design.toml"\n')
+    with pytest.raises(InputError, match="run it first") as error:
+        tray_of(load_tray_file(path))
+    assert error.value.key == "optimise"
+    path = tray_file(folder, '[[part]]\ndesign = "design.toml"\nrun = "."\n')
+    _, notes = tray_of(load_tray_file(path))
+    assert any(n.startswith("Caution") and "was changed after its run" in n for n in notes)
