@@ -10,6 +10,7 @@ from voxelmat.workbench.loads_section import LoadsSection
 from voxelmat.workbench.material_section import MaterialSection
 from voxelmat.workbench.needs_section import NeedsSection
 from voxelmat.workbench.optimise_section import OptimiseSection
+from voxelmat.workbench.paint_section import PaintSection
 from voxelmat.workbench.press_section import PressSection
 from voxelmat.workbench.section import Section
 from voxelmat.workbench.shape_section import ShapeSection
@@ -27,6 +28,7 @@ def sections_of(bench: Workbench) -> list[Section]:
         LoadsSection(bench),
         NeedsSection(bench),
         MaterialSection(bench),
+        PaintSection(bench),
         PressSection(bench),
         AnswersSection(bench),
         OptimiseSection(bench),

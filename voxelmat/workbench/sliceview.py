@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import io
 import threading
+from collections.abc import Callable
 from typing import Any
 
 import anywidget
@@ -19,7 +20,8 @@ __all__ = ["SliceView"]
 class SliceView(anywidget.AnyWidget):
     """Slices of what is shown.
 
-    Setting `axis`, `index` or `field` from a cell does what the controls do.
+    Setting `axis`, `index` or `field` from a cell does what the controls do. With `brush` on,
+    strokes drawn on the canvas are given to `listener`: axis, index and points.
 
     Parameters
     ----------
@@ -42,6 +44,7 @@ class SliceView(anywidget.AnyWidget):
     size_mm = traitlets.List(traitlets.Float(), default_value=[1.0, 1.0]).tag(sync=True)
     picture = traitlets.Bytes(b"").tag(sync=True)
     seq = traitlets.Int(0).tag(sync=True)
+    brush = traitlets.Dict().tag(sync=True)
 
     def __init__(self, shown: Shown, **traits: Any) -> None:
         self._shown = shown
@@ -58,8 +61,17 @@ class SliceView(anywidget.AnyWidget):
             **traits,
         )
         self._ready = True
+        self.listener: Callable[[str, int, list[list[float]]], None] | None = None
+        self.on_msg(self._told)
         self.observe(self._changed, ["axis", "index", "field"])
         self._push()
+
+    def _told(self, _: Any, message: dict[str, Any], buffers: Any) -> None:
+        """A stroke was drawn: points as shares of the slice's width and height."""
+        if message.get("kind") == "stroke" and self.listener is not None:
+            points = [[float(u), float(v)] for u, v in message["points"]]
+            self.listener(str(message["axis"]), int(message["index"]), points)
+            self._push()  # what was drawn ahead of the answer is replaced by what is
 
     def show(self, shown: Shown) -> None:
         """Draw something else from now on, at the same place where it has one."""

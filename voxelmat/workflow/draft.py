@@ -142,6 +142,13 @@ class Draft:
             self._put(_shared(fresh, self._data), design)
         self._tell()
 
+    def drop_last(self) -> None:
+        """Take the last change back for good: it is neither to be undone nor made again."""
+        with self._lock:
+            if self._undo:
+                self._put(self._undo.pop().data, None)
+        self._tell()
+
     def undo(self) -> str:
         """Take the last change back and return its label; empty where there is none."""
         return self._step(self._undo, self._redo)
