@@ -11,7 +11,7 @@ from voxelmat.model.blend import EMPTY, Blend
 from voxelmat.model.grid import VoxelGrid
 from voxelmat.model.part import Part
 from voxelmat.printing.average import average
-from voxelmat.printing.clearance import clashes
+from voxelmat.printing.clearance import _clash, clashes
 from voxelmat.printing.compose import on_whole_bytes
 from voxelmat.printing.job import PlacedPart, placed
 from voxelmat.printing.pack import Rectangle, free_rectangles, pack
@@ -280,3 +280,28 @@ def test_windows_must_start_on_a_byte(tmp_path):
     parts = (job.parts[0], PlacedPart(part=moved.part, raster=moved.raster, name="moved"))
     with pytest.raises(InputError, match="multiple of 8"):
         TraySource(parts, (), tray_window([p.raster for p in parts], STANDARD))
+
+
+# ------------------------------------------------------------------ distances, the slow way
+@settings(deadline=None, max_examples=25)
+@given(st.integers(0, 2**32 - 1), st.integers(0, 6))
+def test_the_free_gap_is_that_of_all_pairs_of_sites(seed, shift):
+    """`_clash` against every pair of sites: the gap of two boxes is what lies between them."""
+    rng = np.random.default_rng(seed)
+    pitch = (0.05, 0.05)
+    first = np.zeros((14, 14), bool)
+    second = np.zeros((14, 14), bool)
+    first[:5, :6] = rng.random((5, 6)) < 0.4
+    second[2 + shift : 6 + shift, 4:9] = rng.random((4, 5)) < 0.4
+    found = _clash(first, second, pitch)
+    a, b = np.argwhere(first), np.argwhere(second)
+    if not len(a) or not len(b):
+        assert found is None
+        return
+    steps = np.abs(a[:, None] - b[None])
+    assert found is not None
+    assert found[2] == bool((steps.sum(axis=2) == 0).any())
+    gaps = np.hypot(*(np.maximum(steps - 1, 0) * np.array(pitch)).transpose(2, 0, 1))
+    # The nearest pair of centres is looked at; another pair may be nearer by its edges, by less
+    # than a site.
+    assert gaps.min() - 1e-12 <= found[0] <= gaps.min() + pitch[0]
