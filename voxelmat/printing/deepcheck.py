@@ -1,15 +1,14 @@
-"""The checks in three dimensions: thickness, ways out of rooms, what hangs free. Slower, apart."""
+"""The checks in three dimensions beside the packed ones, nothing said twice."""
 
 from __future__ import annotations
 
 from voxelmat.model.finding import Finding
+from voxelmat.model.part import Part
 from voxelmat.model.profile import PrintProfile
 from voxelmat.monitor import SILENT, Monitor
-from voxelmat.printing.drains import drain_findings
-from voxelmat.printing.jumps import jump_findings
+from voxelmat.printing.checks3d import three_d_findings
 from voxelmat.printing.readback import Stack
 from voxelmat.printing.scan import Facts
-from voxelmat.printing.thickness import thickness_findings
 
 __all__ = ["deep_findings", "without_repeats"]
 
@@ -23,24 +22,28 @@ _SAME = {
 
 
 def deep_findings(
-    stack: Stack, facts: Facts, profile: PrintProfile, *, monitor: Monitor = SILENT
+    stack: Stack,
+    part: Part | None,
+    facts: Facts,
+    profile: PrintProfile,
+    *,
+    monitor: Monitor = SILENT,
 ) -> list[Finding]:
-    """Everything that is judged in three dimensions.
+    """Everything that is judged in three dimensions, without what is said already.
 
     Parameters
     ----------
     stack : Stack
+    part : Part or None
+        What a stack of one part was sliced from.
     facts : Facts
-        Of the same stack; what it says already is not said again.
+        Of the same stack.
     profile : PrintProfile
     monitor : Monitor
     """
     sealed = [p for p in facts.hollows if not p.on_tray and not p.at_side]
-    return [
-        *thickness_findings(stack, profile, monitor=monitor),
-        *drain_findings(stack, profile, sealed=sealed, monitor=monitor),
-        *(f for f in jump_findings(stack, monitor=monitor) if f.code not in _SAID),
-    ]
+    found = three_d_findings(stack, part, profile, sealed=sealed, monitor=monitor)
+    return [f for f in found if f.code not in _SAID]
 
 
 def without_repeats(found: list[Finding]) -> list[Finding]:

@@ -43,7 +43,8 @@ def outline_findings(
     except (InputError, FileFormatError):
         return []  # nothing to compare with or nothing to compare; other checks say so
     found = []
-    if any(seen.whole.shift):
+    together = {row.shift for row in seen.channels} == {seen.whole.shift}
+    if any(seen.whole.shift) and together:
         found.append(_shift_finding("stack shifted", "The whole stack", seen.whole))
     else:
         found += [

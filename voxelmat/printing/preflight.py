@@ -91,7 +91,9 @@ def preflight(
     if part is not None:
         found += zone_findings(part, printer)
     if deep:
-        found = without_repeats(found + deep_findings(stack, facts, printer, monitor=monitor))
+        found = without_repeats(
+            found + deep_findings(stack, sliced, facts, printer, monitor=monitor)
+        )
     return sorted(found, key=lambda f: SEVERITIES.index(f.severity))
 
 
