@@ -48,7 +48,7 @@ def run(width, folder):
     for name, call in (
         ("thickness", lambda: thickness_findings(stack, profile)),
         ("drains", lambda: drain_findings(stack, profile, sealed=facts.hollows)),
-        ("jumps", lambda: jump_findings(stack, part)),
+        ("jumps", lambda: jump_findings(stack)),
         ("zones", lambda: design_findings(part, stack.raster, profile)),
     ):
         seconds[name], findings = timed(call)

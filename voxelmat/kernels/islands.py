@@ -1,4 +1,4 @@
-"""Pieces of one layer that nothing in the layer below touches, and what differs between layers."""
+"""What hangs free from one layer to the next, and pieces of a layer that begin in mid-air."""
 
 from numba import njit
 
@@ -46,20 +46,14 @@ def find_islands(row_start, first, last, below, parent, held, area, out):
 
 
 @njit(cache=True, nogil=True)
-def compare_layers(earlier, below, here, printed, out):
-    """Sites that differ and sites that hang, over three layers u64 [rows, words] in a row.
-
-    out i64 [5]: sites of `here`; differing between earlier and below, below and here, earlier
-    and here; sites of `here` above none of `printed` (the layer below with support).
-    """
-    out[:] = 0
+def count_hanging(here, below):
+    """Set sites of `here`, and those of them above none of `below`; u64 [rows, words]."""
+    sites = 0
+    hanging = 0
     for y in range(here.shape[0]):
         for w in range(here.shape[1]):
-            a, b, c = earlier[y, w], below[y, w], here[y, w]
-            if (a | b | c) == 0:
-                continue
-            out[0] += _ones(c)
-            out[1] += _ones(a ^ b)
-            out[2] += _ones(b ^ c)
-            out[3] += _ones(a ^ c)
-            out[4] += _ones(c & ~printed[y, w])
+            v = here[y, w]
+            if v != 0:
+                sites += _ones(v)
+                hanging += _ones(v & ~below[y, w])
+    return sites, hanging

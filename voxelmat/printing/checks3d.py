@@ -35,7 +35,7 @@ def three_d_findings(
     sealed: Sequence[Piece] = (),
     monitor: Monitor = SILENT,
 ) -> list[Finding]:
-    """Thickness, drains and jumps of a stack, and skins, tearing and dragging of its design.
+    """Thickness, drains, overhangs of a stack; skins, tearing and dragging of its design.
 
     Parameters
     ----------
@@ -56,7 +56,7 @@ def three_d_findings(
     profile = stack.profile if profile is None else profile
     found = thickness_findings(stack, profile, monitor=monitor)
     found += drain_findings(stack, profile, sealed=sealed, monitor=monitor)
-    found += jump_findings(stack, part, monitor=monitor)
+    found += jump_findings(stack, monitor=monitor)
     if part is not None and len(stack.parts) == 1:
         raster = stack.parts[0].raster
         found += design_findings(part, raster, profile, support=stack.support_policy)
