@@ -109,6 +109,17 @@ def _parser() -> argparse.ArgumentParser:
         metavar="FOLDER",
         help="where the design's run left its part (default: out)",
     )
+    sub = command("fix", "make the safe repairs of what preflight found, as a new part")
+    sub.add_argument("stack", type=Path, metavar="STACK")
+    sub.add_argument("--design", type=Path, metavar="DESIGN.toml", required=True)
+    sub.add_argument("--out", type=Path, default=Path("out"), metavar="FOLDER")
+    sub.add_argument(
+        "--drain",
+        action="append",
+        default=[],
+        metavar="X,Y,Z:DX,DY,DZ[:D]",
+        help="cut a drain hole from this point this way, of diameter D, mm (may be repeated)",
+    )
     design(command("report", "write the report of what a run left in its folder"))
     _add_lab(command("lab", "open a design in the workbench, in JupyterLab on this machine"))
     _add_convert(command("convert", "turn a part or a volume file into another open format"))
@@ -201,6 +212,7 @@ def _dispatch(options: argparse.Namespace) -> Answer:
         "optimise": commands.optimise,
         "stack": commands.stack,
         "preflight": commands.preflight,
+        "fix": _later("fix_commands", "fix"),
         "report": commands.report,
         "materials": commands.materials,
         "warm": commands.warm,

@@ -91,9 +91,8 @@ def preflight(
     if part is not None:
         found += zone_findings(part, printer)
     if deep:
-        found = without_repeats(
-            found + deep_findings(stack, sliced, facts, printer, monitor=monitor)
-        )
+        found += deep_findings(stack, sliced, facts, printer, monitor=monitor)
+        found = without_repeats(found)
     return sorted(found, key=lambda f: SEVERITIES.index(f.severity))
 
 

@@ -56,7 +56,7 @@ def drain_from_text(text: str) -> DrainHole:
 
 
 def protected_voxels(built: Built) -> NDArray[np.bool_]:
-    """What a repair must not touch: protected and kept regions, and where loads and supports act."""
+    """What no repair may touch: protected and kept regions, and where loads and supports act."""
     design = built.design
     names = [*design.optimise.protected, *design.optimise.keep] if design.optimise else []
     for case in design.cases:
@@ -99,6 +99,7 @@ def fix(
         position=None if printing is None else printing.position_mm,
         support=opened.support_policy,
         seed=built.design.seed,
+        halftone=None if printing is None else printing.halftone,
         monitor=monitor,
     )
     after = named_fixes(preflight(again, done.part, monitor=monitor))
