@@ -11,9 +11,11 @@ from voxelmat.model.grid import VoxelGrid
 from voxelmat.model.loadcase import Force, LoadCase, PressureMap, Support
 from voxelmat.model.material import Constant, Material
 from voxelmat.model.part import DISTANCE_STEPS, Part
+from voxelmat.model.process import ProcessFigures
 from voxelmat.model.region import Box, FaceRegion
 from voxelmat.model.requirement import Requirement, judge
 from voxelmat.model.result import Extreme, StaticResult
+from voxelmat.printing.bill import bill_row
 from voxelmat.provenance import Provenance
 from voxelmat.workflow.report_data import LayerPicture, RunData, StackSummary
 
@@ -198,7 +200,11 @@ def made_up_stack() -> StackSummary:
         orientation="x of the part along x of the tray",
         halftone="blue noise, seed 7",
         layers=(picture,),
-        estimate={"time, h": "1.9 to 3.1", "resin, g": "41.2"},
+        estimate={"time, h": "1.9 to 3.1", "height, mm": "30.0"},
+        bill=(
+            bill_row(ProcessFigures(), "rigid-example", ["A"], "model", 7012.0, 1.15e-9),
+            bill_row(ProcessFigures(), "support-example", ["S"], "support", 3100.0, None),
+        ),
     )
 
 

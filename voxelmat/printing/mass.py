@@ -71,7 +71,7 @@ def mass_band(
     for channel, volume in zip(stack.channels, volumes, strict=True):
         if channel.role == "support" and not with_support:
             continue
-        known = (materials or {}).get(channel.resin)
+        known = materials[channel.resin] if materials and channel.resin in materials else None
         density = channel.density_t_mm3
         if known is not None:
             middle, (least, most) = known.density.value, known.density.band

@@ -17,6 +17,7 @@ from voxelmat.monitor import SILENT, Monitor
 from voxelmat.units import number
 from voxelmat.workflow import report_fields, report_pictures
 from voxelmat.workflow import report_tables as tables
+from voxelmat.workflow.bill_table import bill_table
 from voxelmat.workflow.interfaces import spot_rows
 from voxelmat.workflow.report_data import RunData, StackSummary
 from voxelmat.workflow.report_pressure import pressure_picture
@@ -251,6 +252,7 @@ def _stack(run: RunData) -> dict[str, Any]:
         "words": words,
         "table": tables.stack_table(stack),
         "estimate": estimate if stack.estimate else None,
+        "bill": bill_table(stack.bill) if stack.bill else None,
         "layers": report_pictures.layer_pictures(stack, run.part),
     }
 

@@ -16,6 +16,7 @@ from voxelmat.model.interface import InterfaceSpot
 from voxelmat.model.part import Part
 from voxelmat.model.requirement import Verdict
 from voxelmat.model.result import StaticResult
+from voxelmat.printing.bill import BillRow
 from voxelmat.provenance import Provenance
 
 __all__ = ["LayerPicture", "RunData", "StackSummary"]
@@ -80,6 +81,8 @@ class StackSummary:
     layers : tuple of LayerPicture
     estimate : mapping
         Name with unit to value, as text, in reading order ("time, h": "2.1 to 3.4").
+    bill : tuple of BillRow
+        What of each resin is needed, flushed and lost.
     """
 
     folder: str
@@ -95,6 +98,7 @@ class StackSummary:
     halftone: str = ""
     layers: tuple[LayerPicture, ...] = ()
     estimate: Mapping[str, str] = field(default_factory=dict)
+    bill: tuple[BillRow, ...] = ()
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)

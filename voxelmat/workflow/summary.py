@@ -85,11 +85,16 @@ def _in_words(figures: PrintEstimate) -> dict[str, str]:
     low, high = (t / 3600 for t in figures.time_s)
     rows = {
         "layers": f"{figures.layers}",
-        "passes a layer": f"{figures.passes}",
-        "time, h (warm-up and cleaning left out)": f"{number(low)} to {number(high)}",
+        "height, mm": number(figures.height_mm),
+        "passes, in all and at most a layer": f"{figures.passes_in_all:.0f}, {figures.passes}",
+        "time, h (warm-up and cool-down too, not cleaning)": f"{number(low)} to {number(high)}",
+        "files, MB": number(figures.file_bytes / 1e6),
     }
-    for resin, mass in figures.mass_t.items():
-        rows[f"{resin}, g"] = number(mass * 1e6)
+    if figures.cost is not None:
+        least, most = figures.cost
+        rows[f"cost, {figures.cost_unit}"] = f"{number(least)} to {number(most)}"
+    elif figures.unpriced:
+        rows["cost"] = f"not known: no price of {', '.join(figures.unpriced)} in the profile"
     if figures.support_mm3 is not None:
         rows["support, cm³"] = number(figures.support_mm3 / 1000)
     else:
@@ -130,4 +135,5 @@ def summarise(stack: Stack, figures: PrintEstimate | None = None) -> StackSummar
         halftone=f"{method['halftone']}; seed {method['seed']}",
         layers=(*(_layer_picture(stack, k) for k in layers), *_droplets(stack, layers)),
         estimate={} if figures is None else _in_words(figures),
+        bill=() if figures is None else figures.bill,
     )
