@@ -2,10 +2,12 @@
 
 from __future__ import annotations
 
+import ctypes
 import json
 import multiprocessing
 import os
 import signal
+import sys
 import threading
 import time
 from collections.abc import Callable, Iterator, Sequence
@@ -33,6 +35,7 @@ __all__ = ["ANSWER_WITHIN", "LOST_AFTER", "write_apart", "write_slab"]
 LOST_AFTER = 30.0
 #: A scheduler answers within so many seconds, or is not there.
 ANSWER_WITHIN = 10.0
+_M_MMAP_THRESHOLD = -3  # of malloc.h: allocations from this size on are mapped each by itself
 _POLL = 0.25  # seconds between looks at the monitor
 
 _KILLED = (
@@ -49,8 +52,22 @@ _opening = threading.Lock()
 def _opened(place: str, written_ns: int) -> tuple[LayerSource, Dealer, ImageFiles]:
     """What a job's layers come from; `written_ns` tells one description from the next."""
     del written_ns
+    _give_back_memory()
     job = load_job(Path(place))
     return source_of(job, Path(place)), Dealer(job), image_files(job)
+
+
+def _give_back_memory() -> None:
+    """Have freed arrays go back to the system at once, where the C library is glibc.
+
+    Else it keeps ever larger ones for later, and the peak creeps up by a tenth over the first
+    hundred layers of a tray (measured).
+    """
+    if sys.platform != "linux":
+        return
+    mallopt = getattr(ctypes.CDLL(None), "mallopt", None)
+    if mallopt is not None:
+        mallopt(_M_MMAP_THRESHOLD, 256 << 10)
 
 
 def write_slab(place: str, partial: str, first: int, last: int) -> list[LayerRecord]:
