@@ -55,6 +55,7 @@ class Workbench:
         self._built: tuple[Any, Built] | None = None
         self._noting = False
         self.picked: dict[str, Any] | None = None
+        self.outbox: list[tuple[str, bytes]] = []
         self.sections: dict[str, Section] = {s.name: s for s in sections_of(self)}
         self.draft.listen(self._design_changed)
 
@@ -145,6 +146,11 @@ class Workbench:
         """Show where a region lies, in the pictures; an empty name shows none."""
         self.draft.view["highlight"] = region
         self.tell("highlight")
+
+    def give(self, name: str, data: bytes) -> None:
+        """Hand a file to whoever sits at the screen, as a download."""
+        self.outbox.append((name, data))
+        self.tell("file")
 
     def noted(self, line: str, action: Callable[[], Any]) -> Any:
         """Do something for the screen and, if it succeeds, note its line of code."""

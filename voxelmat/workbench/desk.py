@@ -41,7 +41,15 @@ class Desk(anywidget.AnyWidget):
         super().__init__(tab=first if first in bench.sections else "", **traits)
         self.tab = self.tab or next(iter(bench.sections))
         self.on_msg(self._told)
-        bench.listen(lambda what: self.refresh())
+        bench.listen(self._heard)
+        self.refresh()
+
+    def _heard(self, what: str) -> None:
+        if what == "file":
+            while self._bench.outbox:
+                name, data = self._bench.outbox.pop(0)
+                self.send({"kind": "file", "name": name}, buffers=[data])
+            return
         self.refresh()
 
     def refresh(self) -> None:

@@ -12,6 +12,7 @@ from voxelmat.workbench.needs_section import NeedsSection
 from voxelmat.workbench.optimise_section import OptimiseSection
 from voxelmat.workbench.paint_section import PaintSection
 from voxelmat.workbench.press_section import PressSection
+from voxelmat.workbench.print_section import PrintSection
 from voxelmat.workbench.section import Section
 from voxelmat.workbench.shape_section import ShapeSection
 
@@ -32,5 +33,6 @@ def sections_of(bench: Workbench) -> list[Section]:
         PressSection(bench),
         AnswersSection(bench),
         OptimiseSection(bench),
+        PrintSection(bench),
         DesignSection(bench),
     ]

@@ -271,6 +271,12 @@ function render({model, el}) {
     root.dataset.seq = model.get('seq');
   }
   model.on('change:seq', show);
+  model.on('msg:custom', (m, buffers) => {           // a file for whoever sits here
+    if (m.kind !== 'file') return;
+    const link = element('a', {href: URL.createObjectURL(new Blob([buffers[0]])), download: m.name});
+    link.click();
+    setTimeout(() => URL.revokeObjectURL(link.href), 10000);
+  });
   show();
 }
 export default { render };
