@@ -9,11 +9,12 @@ from voxelmat.model.finding import Finding
 from voxelmat.model.image import ImageLayout
 from voxelmat.model.process import ProcessFigures
 from voxelmat.printing.crop import PROOF_LIMIT, proof_crop
-from voxelmat.printing.estimate import estimate
+from voxelmat.printing.estimate import estimate, forecast_job
 from voxelmat.printing.preflight import preflight
 from voxelmat.printing.profile import load_profile, shipped_profiles
 from voxelmat.printing.proof import worst_place, write_proof
 from voxelmat.printing.stack import write_stack
+from voxelmat.printing.tray import TrayEntry, lay_out, write_tray
 
 STANDARD = load_profile("invented-standard")
 PART = layered_part("distance", shape=(30, 20, 16), pure=True)
@@ -122,3 +123,27 @@ def test_what_cannot_be_cut(tmp_path):
     with pytest.raises(FileFormatError, match="not the file that was written"):
         write_proof(stack, tmp_path / "proof")
     assert not (tmp_path / "proof").exists()
+
+
+def test_a_tray_of_several_parts(tmp_path):
+    small = layered_part("distance", shape=(8, 6, 8), pure=True)
+    entries = [TrayEntry(part=small, name="a", copies=2), TrayEntry(part=PART, name="b")]
+    stack = write_tray(lay_out(entries, STANDARD, coupons=False), tmp_path / "s", support="none")
+    place = (3.0, 0.0, 1.0)
+    crop = proof_crop(stack, finding(place, part="a 2"), height_mm=0.5, side_mm=1.0)
+    proof = write_proof(stack, tmp_path / "proof", crop)
+    assert [p.name for p in proof.parts] == ["a 2"]
+    layers, rows, columns = proof.raster.image_shape
+    name, here = proof.locate(layers // 2, rows // 2, columns // 2)
+    assert name == "a 2"
+    assert here == pytest.approx(place, abs=0.3)
+    on_tray = finding(stack.raster.pixel_to_tray(5, 3, 7))
+    assert proof_crop(stack, on_tray, height_mm=0.1, side_mm=0.1).layers == (4, 7)
+    whole = write_proof(stack, tmp_path / "whole")
+    assert {p.name for p in whole.parts} >= {"b"}
+    told = forecast_job(lay_out(entries, STANDARD, coupons=False).job(support="none"), layers=40)
+    real = estimate(stack)
+    for resin, volume in real.volume_mm3.items():
+        assert abs(told.volume_mm3[resin] - volume) <= told.volume_error_mm3[resin] + 1e-9
+    assert told.time_s[0] <= real.time_s[0]
+    assert real.time_s[1] <= told.time_s[1]

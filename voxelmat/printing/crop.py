@@ -12,6 +12,7 @@ from numpy.typing import NDArray
 
 from voxelmat.errors import InputError
 from voxelmat.model.finding import Finding
+from voxelmat.model.profile import PrintProfile
 from voxelmat.printing.raster import Raster
 from voxelmat.printing.readback import Stack
 
@@ -90,9 +91,10 @@ def _pixel(stack: Stack, finding: Finding) -> tuple[int, int, int]:
     place = finding.place_mm
     if place is None:
         raise InputError(f"The finding '{finding.code}' has no place to cut a proof print round.")
-    raster = stack.part(finding.part).raster if finding.part else stack.parts[0].raster
-    turn = np.array(raster.rotation)
-    tray = turn @ np.array(place) + np.array(raster.translation)
+    tray = np.array(place)
+    if finding.part or len(stack.parts) == 1:  # else the place is on the tray
+        raster = stack.part(finding.part or 0).raster
+        tray = np.array(raster.rotation) @ tray + np.array(raster.translation)
     window = stack.raster
     at = []
     for axis, sign in window.image_axes:
@@ -107,6 +109,43 @@ def _round(middle: int, size: int, n: int) -> tuple[int, int]:
     size = max(1, min(size, n))
     first = min(max(middle - size // 2, 0), n - size)
     return first, first + size
+
+
+def _within(
+    profile: PrintProfile, limit_s: float, layers: int, depth_mm: float
+) -> tuple[int, float, float, str]:
+    """Layers and depth along tray y that print in time: swaths go first, then layers.
+
+    Returns
+    -------
+    layers : int
+    depth_mm, time_s : float
+    said : str
+        What was left out; empty where nothing was.
+    """
+    process = profile.process
+    swath_s, layer_s = process.passes_per_layer * process.swath_s[1], process.layer_s[1]
+    if layer_s + swath_s > limit_s:
+        raise InputError(
+            f"One layer takes {layer_s + swath_s:g} s on '{profile.name}'; no proof print is "
+            f"possible in {limit_s:g} s."
+        )
+    needed = math.ceil(depth_mm / process.swath_mm - 1e-9)
+    left_out = []
+    if layers * (layer_s + needed * swath_s) > limit_s:
+        room = limit_s / layers - layer_s
+        swaths = max(1, math.floor(room / swath_s)) if swath_s > 0 else needed
+        if swaths < needed:
+            depth_mm = swaths * process.swath_mm
+            left_out.append(f"{swaths} of {needed} swaths")
+            needed = swaths
+        fitting = min(layers, math.floor(limit_s / (layer_s + needed * swath_s)))
+        if fitting < layers:
+            left_out.append(f"{fitting} of {layers} layers")
+            layers = fitting
+    said = f"; cut to {' and '.join(left_out)} to stay below {limit_s / 60:g} min"
+    time_s = layers * (layer_s + needed * swath_s)
+    return layers, depth_mm, time_s, said if left_out else ""
 
 
 def proof_crop(
@@ -149,35 +188,14 @@ def proof_crop(
         sides = [min(n, math.ceil(side_mm / p)) for n, p in zip(shape[1:], pitch[1:], strict=True)]
         where = f"round '{finding.code}' ({finding.severity})"
     y = 0 if window.image_axes[1][0] == 1 else 1  # which side of an image follows tray y
-    process = stack.profile.process
-    per_swath = process.passes_per_layer * process.swath_s[1]
-    swath = process.swath_mm / pitch[1 + y]  # sites
-    needed = math.ceil(sides[y] / swath - 1e-9)
-    if process.layer_s[1] + per_swath > limit_s:
-        raise InputError(
-            f"One layer takes {process.layer_s[1] + per_swath:g} s on '{stack.profile.name}'; no "
-            f"proof print is possible in {limit_s:g} s."
-        )
-    left_out = []
-    room = limit_s / layers - process.layer_s[1]
-    allowed = max(1, math.floor(room / per_swath)) if per_swath > 0 else needed
-    if allowed < needed:
-        sides[y] = math.floor(allowed * swath)
-        left_out.append(f"{allowed} of {needed} swaths")
-        needed = allowed
-    most = math.floor(limit_s / (process.layer_s[1] + needed * per_swath)) if limit_s else layers
-    if most < layers:
-        left_out.append(f"{most} of {layers} layers")
-        layers = most
-    columns = _round(at[2], sides[1], shape[2])
-    size = f"{layers} layers ({layers * pitch[0]:.3g} mm) {where}"
-    cut = (
-        f"; cut to {' and '.join(left_out)} to stay below {limit_s / 60:g} min" if left_out else ""
-    )
+    depth = sides[y] * pitch[1 + y]
+    layers, kept, time_s, said = _within(stack.profile, limit_s, layers, depth)
+    if kept < depth:
+        sides[y] = math.floor(kept / pitch[1 + y] + 1e-9)
     return Crop(
         layers=_round(at[0], layers, shape[0]),
         rows=_round(at[1], sides[0], shape[1]),
-        columns=columns,
-        why=size + cut,
-        time_s=layers * (process.layer_s[1] + needed * per_swath),
+        columns=_round(at[2], sides[1], shape[2]),
+        why=f"{layers} layers ({layers * pitch[0]:.3g} mm) {where}{said}",
+        time_s=time_s,
     )
