@@ -17,6 +17,7 @@ from voxelmat.printing.job import PlacedPart, placed
 from voxelmat.printing.pack import Rectangle, free_rectangles, pack
 from voxelmat.printing.profile import load_profile, shipped_profiles
 from voxelmat.printing.readback import read_stack
+from voxelmat.printing.source import source_of
 from voxelmat.printing.stack import write_stack
 from voxelmat.printing.tray import TrayEntry, lay_out, write_tray
 
@@ -305,3 +306,14 @@ def test_the_free_gap_is_that_of_all_pairs_of_sites(seed, shift):
     # The nearest pair of centres is looked at; another pair may be nearer by its edges, by less
     # than a site.
     assert gaps.min() - 1e-12 <= found[0] <= gaps.min() + pitch[0]
+
+
+def test_copies_share_their_planes_and_turned_ones_do_not():
+    part = layered_part("distance", shape=(7, 6, 5))
+    entries = [TrayEntry(part=part, copies=3), TrayEntry(part=part, orientation=("z 90",))]
+    tray = lay_out(entries, FINE, marks=False, coupons=False)
+    source = source_of(tray.job())
+    first, second, third, turned = (s.planes for s in source._slicers)
+    assert first is second
+    assert second is third
+    assert turned is not first

@@ -113,6 +113,8 @@ class Slicer:
         Blue noise and hard interfaces if left out.
     support_file : Path, optional
         Keeps the support field; see `DesignPlanes`.
+    planes : DesignPlanes, optional
+        Those of a slicer of the same part that lies the same way, with the same support.
 
     Attributes
     ----------
@@ -135,6 +137,7 @@ class Slicer:
         seed: int,
         halftone: Halftone | None = None,
         support_file: Path | None = None,
+        planes: DesignPlanes | None = None,
     ) -> None:
         if len(resins) > MOST_RESINS:
             raise InputError(
@@ -152,18 +155,18 @@ class Slicer:
         self._cumulative = np.ascontiguousarray(total.T.astype(np.float32))
         numbers = [resins.index(r) + 1 for r in self.order]
         self._numbers = np.array([*numbers, len(resins) + 1], dtype=np.uint8)
-        self._lay_out(part, support, support_file)
+        if planes is None:
+            columns = fill_columns if support else None
+            fill = columns if isinstance(support, bool) else support
+            planes = DesignPlanes(part, raster, support=fill, support_file=support_file)
+        self.planes = planes
+        self._lay_out(part)
         self._set_up_noise(seed)
         self._set_up_ramps(part)
 
-    def _lay_out(
-        self, part: AnyPart, support: bool | SupportFill, support_file: Path | None
-    ) -> None:
-        """Say where the planes come from and find the sites between voxels."""
+    def _lay_out(self, part: AnyPart) -> None:
+        """Find the sites between voxels."""
         raster = self.raster
-        columns = fill_columns if support else None
-        fill = columns if isinstance(support, bool) else support
-        self.planes = DesignPlanes(part, raster, support=fill, support_file=support_file)
         true_shape = [part.grid.shape[a] for a, _ in raster.part_axes()]
         axes = [_axis(raster.image_index(part.grid, m), true_shape[m]) for m in range(3)]
         (self._layer_at, self._layer_w, self._layers_on_grid) = axes[0]

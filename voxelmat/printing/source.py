@@ -13,6 +13,8 @@ from voxelmat.kernels.sites import deal_sites
 from voxelmat.printing.compose import TraySource
 from voxelmat.printing.halftone import Slicer, packed_planes
 from voxelmat.printing.job import PlacedPart, PrintJob
+from voxelmat.printing.planes import DesignPlanes
+from voxelmat.printing.raster import Matrix
 from voxelmat.printing.support_policies import support_fill
 
 __all__ = ["Dealer", "LayerSource", "slicer_of", "source_of"]
@@ -39,8 +41,16 @@ class LayerSource(Protocol):
         """Layers ``first`` to ``last - 1``, each uint8 (materials, rows, ceil(columns / 8))."""
 
 
-def slicer_of(job: PrintJob, item: PlacedPart, scratch: Path | None = None) -> Slicer:
-    """The slicer of one placed part of a job; its support field goes to `scratch`, if given."""
+def slicer_of(
+    job: PrintJob,
+    item: PlacedPart,
+    scratch: Path | None = None,
+    planes: DesignPlanes | None = None,
+) -> Slicer:
+    """The slicer of one placed part of a job; its support field goes to `scratch`, if given.
+
+    Copies that lie the same way can share their `planes`.
+    """
     number = job.parts.index(item)
     fill = support_fill(job.support, job.profile.support_sizes, item.part, item.raster)
     return Slicer(
@@ -51,6 +61,7 @@ def slicer_of(job: PrintJob, item: PlacedPart, scratch: Path | None = None) -> S
         seed=job.seed,
         halftone=job.halftone,
         support_file=None if scratch is None else scratch / f"support-{number}.raw",
+        planes=planes,
     )
 
 
@@ -69,7 +80,12 @@ def source_of(job: PrintJob, scratch: Path | None = None) -> LayerSource:
     InputError
         If a window of several does not start at a whole byte of the images.
     """
-    slicers = [slicer_of(job, item, scratch) for item in job.parts]
+    slicers: list[Slicer] = []
+    shared: dict[tuple[int, Matrix], DesignPlanes] = {}
+    for item in job.parts:
+        key = (id(item.part), item.raster.rotation)
+        slicers.append(slicer_of(job, item, scratch, shared.get(key)))
+        shared[key] = slicers[-1].planes
     if len(slicers) == 1 and job.window == job.parts[0].raster:
         return slicers[0]
     return TraySource(job.parts, slicers, job.window)
