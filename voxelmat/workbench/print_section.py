@@ -78,12 +78,12 @@ class PrintSection(Section):
         """Layers, time, grams and cost before anything is written, beside the screen."""
         design = self.bench.design
         printing = self._printing()
+        profile = load_profile(self._profile_path(printing.profile))
 
         def work(monitor: Monitor) -> PrintEstimate:
-            built = self.bench.build(monitor)
             found = forecast(
-                built.part,
-                built.profile,
+                self.bench.build(monitor).part,
+                profile,
                 orientation=printing.orientation,
                 position=printing.position_mm,
                 support=printing.support,
@@ -98,11 +98,11 @@ class PrintSection(Section):
     def compare_turns(self) -> Job[OrientationTable]:
         """Compare build orientations: height, support, contact, time."""
         design = self.bench.design
-        self._printing()
+        profile = load_profile(self._profile_path(self._printing().profile))
 
         def work(monitor: Monitor) -> OrientationTable:
-            built = self.bench.build(monitor)
-            found = compare_orientations(built.part, built.profile, monitor=monitor)
+            part = self.bench.build(monitor).part
+            found = compare_orientations(part, profile, monitor=monitor)
             self._turned = (design.digest, found)
             self.bench.tell("printing")
             return found
