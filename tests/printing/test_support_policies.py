@@ -12,6 +12,7 @@ from voxelmat.model.part import Part
 from voxelmat.model.profile import PrintProfile
 from voxelmat.model.support_figures import SupportFigures
 from voxelmat.printing.estimate import estimate
+from voxelmat.printing.preflight import preflight
 from voxelmat.printing.profile import load_profile
 from voxelmat.printing.stack import write_stack
 from voxelmat.printing.support import fill_columns
@@ -169,3 +170,36 @@ def test_sizes_that_cannot_be():
     with pytest.raises(InputError, match="a number") as error:
         PrintProfile.from_dict(data, file="p.toml")
     assert error.value.key == "support.skin_mm"
+
+
+@pytest.mark.parametrize("turns", [(), ("x 90",), ("y 180",)])
+@pytest.mark.parametrize("outline", ["distance", "voxels"])
+def test_a_skin_goes_round_a_part_that_fills_its_grid(tmp_path, turns, outline):
+    grid = VoxelGrid(shape=(20, 15, 10), spacing=(0.2, 0.2, 0.2), origin=(1.0, 2.0, 3.0))
+    labels = np.ones(grid.shape, np.uint16)
+    distance = None
+    if outline == "distance":
+        deep = [np.minimum(np.arange(n), np.arange(n)[::-1]) + 0.5 for n in grid.shape]
+        distance = -16 * np.minimum.reduce(np.meshgrid(*deep, indexing="ij"))
+        distance = np.rint(distance).astype(np.int8)
+    part = Part(grid=grid, resins=(HARD,), palette=PALETTE, labels=labels, distance=distance)
+    stack = write_stack(part, STANDARD, tmp_path / "s", support="skin", orientation=turns)
+    block = sites(stack)
+    volume = float((block == 1).sum() * stack.raster.site_volume)
+    pitch = stack.raster.pitch
+    rounding = sum(float(p) / size for p, size in zip(pitch, (2, 2, 2), strict=True))
+    assert volume == pytest.approx(4 * 3 * 2, rel=rounding)  # whole sites, shortest edge 2 mm
+    z, x, y = (n // 2 for n in block.shape)
+    for line, p in ((block[z, :, y], pitch[0]), (block[z, x, :], pitch[1]), (block[:, x, y], 0)):
+        inside = np.flatnonzero(line == 1)
+        step = float(p or pitch[2])
+        below, above = inside[0], len(line) - 1 - inside[-1]
+        assert (line[:below] == 2).all()
+        assert below * step == pytest.approx(0.6, abs=1.6 * step)
+        assert above * step == pytest.approx(0.6 if p else 0.0, abs=1.6 * step)
+
+
+def test_preflight_takes_a_skin_as_it_is(tmp_path):
+    stack = written(tmp_path, "skin")
+    found = {f.code for f in preflight(stack, table(), STANDARD)}
+    assert found <= {"floating piece", "island in mid-air"}  # a skin does not reach the tray

@@ -21,7 +21,7 @@ from voxelmat.model.part import DISTANCE_STEPS, Part
 from voxelmat.model.profile import PrintProfile
 from voxelmat.printing.place import rotation_matrix
 
-__all__ = ["as_it_comes_out", "compensated", "part_bias"]
+__all__ = ["as_it_comes_out", "compensated", "part_bias", "with_margin"]
 
 Floats = NDArray[np.float32]
 Triple = tuple[float, float, float]
@@ -61,7 +61,7 @@ def compensated(part: AnyPart, profile: PrintProfile, orientation: Sequence[str]
         return part
     part = _checked(part, bias)
     outwards = max(0.0, *(-b for b in bias))
-    part = _with_margin(part, [int(np.ceil(outwards / h)) + 1 for h in part.grid.spacing])
+    part = with_margin(part, [int(np.ceil(outwards / h)) + 1 for h in part.grid.spacing])
     distance = part.distance
     assert distance is not None  # noqa: S101 - checked
     before = distance.astype(np.float32)
@@ -105,7 +105,7 @@ def _share(steps: Floats) -> Floats:
     return share
 
 
-def _with_margin(part: Part, voxels: Sequence[int]) -> Part:
+def with_margin(part: Part, voxels: Sequence[int]) -> Part:
     """The part on a grid with empty voxels all round, the distance carried on."""
     grid = part.grid
     pads = [(n, n) for n in voxels]

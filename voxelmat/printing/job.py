@@ -18,6 +18,7 @@ from voxelmat.printing.imageorder import encoder_words
 from voxelmat.printing.order import halftone_method
 from voxelmat.printing.place import place
 from voxelmat.printing.raster import Raster
+from voxelmat.printing.skin_room import box_with_skin, part_with_skin
 from voxelmat.printing.support import outline_box, outline_source
 from voxelmat.provenance import text_digest, versions
 
@@ -224,6 +225,7 @@ def placed(
     *,
     name: str = "",
     kind: str = "part",
+    support: str = "none",
 ) -> PlacedPart:
     """Turn a part and set it on the tray.
 
@@ -240,6 +242,8 @@ def placed(
         The part's own name if left out.
     kind : str
         One of `PART_KINDS`.
+    support : str
+        The policy; "skin" makes room for the skin on grid and window.
 
     Raises
     ------
@@ -247,7 +251,11 @@ def placed(
         If there is nothing to print, or if the part does not fit the tray.
     """
     part = compensated(part, profile, orientation)
-    raster = place(outline_box(part), profile, orientation, position)
+    box = outline_box(part)
+    if support == "skin":
+        thickness = profile.support_sizes.skin
+        part, box = part_with_skin(part, thickness), box_with_skin(box, thickness, orientation)
+    raster = place(box, profile, orientation, position)
     return PlacedPart(part=part, raster=raster, name=name or part.name, kind=kind)
 
 
@@ -274,13 +282,14 @@ def one_part_job(
     InputError
         If the part does not fit the tray or the channels, or an option is not known.
     """
-    item = placed(part, profile, orientation, position)
+    policy = profile.support_policy if support is None else support
+    item = placed(part, profile, orientation, position, support=policy)
     return PrintJob(
         profile=profile,
         parts=(item,),
         window=item.raster,
         channels=profile.assign(used_resins(part)),
-        support=profile.support_policy if support is None else support,
+        support=policy,
         seed=seed,
         halftone=Halftone() if halftone is None else halftone,
         notes=notes or {},

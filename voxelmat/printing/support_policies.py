@@ -129,7 +129,8 @@ class SkinSupport:
     A site is support where some site of the part at its height or above lies within the
     thickness, and nearer than the part straight below it, so that slopes of more than 45 degrees
     carry a skin and flatter ones that look up do not. Distances are exact on flat faces along the
-    axes; on oblique ones the skin is thin by up to a fifth of a voxel. It ends with the raster.
+    axes; on oblique ones the skin is thin by up to a fifth of a voxel. It ends with
+    the raster and the design grid; `voxelmat.printing.skin_room` makes room for it.
 
     Attributes
     ----------
