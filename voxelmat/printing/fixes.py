@@ -65,7 +65,7 @@ def fix_part(
     profile : PrintProfile
         Its smallest sizes are what is thickened and drilled to.
     protected : ndarray of bool, ``[i, j, k]``, optional
-        Voxels that stay as they are, with all that touches them.
+        Voxels that stay as they are, and whose outline stays where it is.
     drains : sequence of DrainHole
         Where holes may be cut; no other place is drilled.
 
@@ -80,7 +80,6 @@ def fix_part(
             "it from its mesh."
         )
     keep = np.zeros(part.grid.shape, dtype=np.bool_) if protected is None else protected
-    keep = ndimage.binary_dilation(keep) if keep.any() else keep
     work, steps, refused = part, [], []
     holes = list(drains)
     for finding in findings:
@@ -113,7 +112,10 @@ def _step(
     """What a repair changed; refused where that is protected or bought in."""
     change = _fill(new) - _fill(old)
     changed = np.asarray((change != 0) | (old.labels != new.labels))
-    if (changed & keep).any():
+    assert old.distance is not None  # noqa: S101 - checked by `fix_part`
+    assert new.distance is not None  # noqa: S101 - as above
+    outline = np.minimum(np.abs(old.distance), np.abs(new.distance)) < DISTANCE_STEPS
+    if (((old.distance != new.distance) & outline | changed) & keep).any():
         raise _Refused("it would change a protected surface.")
     bought = ~old.printed_labels()[old.labels] & (old.labels > 0)
     if (changed & ndimage.binary_dilation(bought)).any():

@@ -15,6 +15,7 @@ from voxelmat.printing.deepcheck import deep_findings, without_repeats
 from voxelmat.printing.designed import designed_volumes
 from voxelmat.printing.features import piece_findings, small_findings, zone_findings
 from voxelmat.printing.filecheck import file_findings, folder_findings, tray_findings
+from voxelmat.printing.findmark import mark_findings
 from voxelmat.printing.layerdesign import ExpectedLayers
 from voxelmat.printing.oddlayers import odd_layer_findings
 from voxelmat.printing.outlinecheck import outline_findings
@@ -82,6 +83,8 @@ def preflight(
     )
     found += file_findings(stack, facts) + _claims(stack, facts)
     found += odd_layer_findings(stack, facts.differences)
+    if not (facts.bad_files or facts.changed_files):
+        found += mark_findings(stack, monitor=monitor)
     if expected is not None:
         found += expected.findings()
     if alone is not None and not (facts.bad_files or facts.changed_files):
