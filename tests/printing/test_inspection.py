@@ -138,7 +138,8 @@ def test_protected_surfaces_are_measured_against_the_design(part, stack):
 @pytest.mark.parametrize(
     ("wrong", "key"),
     [({"kind": "length"}, "kind"), ({"lower": 1.0}, "lower"),
-     ({"direction": (0, 0, 0)}, "direction"), ({"nominal": math.nan}, "nominal"), ({"low_mm": (0, 0, 0)}, "low_mm")],
+     ({"direction": (0, 0, 0)}, "direction"), ({"nominal": math.nan}, "nominal"),
+     ({"low_mm": (0, 0, 0)}, "low_mm")],
 )  # fmt: skip
 def test_a_dimension_that_cannot_be(wrong, key):
     given = {"name": "d", "kind": "wall", "nominal": 1.0, "lower": -0.1, "upper": 0.1, **wrong}

@@ -8,6 +8,7 @@ from __future__ import annotations
 
 import dataclasses
 from collections.abc import Sequence
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -297,7 +298,7 @@ def _drained(
     )
 
 
-def _outside(rooms: NDArray[np.int32]) -> list[int]:
+def _outside(rooms: NDArray[np.signedinteger[Any]]) -> list[int]:
     """Rooms that reach the rim of the grid."""
     faces = [np.unique(np.take(rooms, e, axis=a)) for a in range(3) for e in (0, -1)]
     return [int(n) for n in np.unique(np.concatenate(faces)) if n > 0]

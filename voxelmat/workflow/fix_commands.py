@@ -60,9 +60,10 @@ def protected_voxels(built: Built) -> NDArray[np.bool_]:
     design = built.design
     names = [*design.optimise.protected, *design.optimise.keep] if design.optimise else []
     for case in design.cases:
-        names += [entry.region for entry in (*case.supports, *case.loads)]
+        names += [s.region for s in case.supports if s.region]
+        names += [load.region for load in case.loads if load.region]
     out = np.zeros(built.part.grid.shape, dtype=np.bool_)
-    for name in dict.fromkeys(n for n in names if n):
+    for name in dict.fromkeys(names):
         out |= built.regions[name].voxels(built.part)
     return out
 
