@@ -19,6 +19,7 @@ from voxelmat.printing.findmark import SYMMETRIES, find_marks, mark_findings
 from voxelmat.printing.glyphs import CHARACTERS, text_cells
 from voxelmat.printing.marks import Mark, mark_cells, mark_text
 from voxelmat.printing.place import rotation_matrix
+from voxelmat.printing.preflight import preflight
 from voxelmat.printing.profile import load_profile
 from voxelmat.printing.readback import read_stack
 from voxelmat.printing.support import outline_field
@@ -213,6 +214,19 @@ def test_coupons_are_as_large_as_they_say_and_never_the_highest():
         coupons_of(HARD, STANDARD, highest_mm=0.1)
     with pytest.raises(InputError, match="No part of the tray uses 'soft'"):
         lay_out([TrayEntry(part=brick())], STANDARD, coupons=["soft"])
+
+
+def test_preflight_stops_a_mirrored_tray(stack, tmp_path):
+    assert [f for f in preflight(stack, deep=False) if f.severity == "stop"] == []
+    folder = shutil.copytree(stack.folder, tmp_path / "s")
+    mirrored = rewritten(folder, lambda n: [i[:, ::-1] for i in n])
+    found = preflight(mirrored, deep=False)
+    assert "tray mirrored" in {f.code for f in found if f.severity == "stop"}
+    path = folder / "manifest.json"
+    data = json.loads(path.read_text())
+    data["notes"]["marks"] = [{"part": "flat 1"}]
+    path.write_text(json.dumps(data))
+    assert "mark record" in {f.code for f in preflight(folder, deep=False)}
 
 
 @pytest.mark.parametrize(

@@ -212,8 +212,19 @@ def mark_findings(stack: Stack, *, monitor: Monitor = SILENT) -> list[Finding]:
     FileFormatError
         If an image is missing or damaged.
     """
+    try:
+        looked = list(find_marks(stack, monitor=monitor))
+    except InputError as error:
+        return [
+            Finding(
+                severity="stop",
+                code="mark record",
+                message=f"The manifest's records of marks cannot be read: {error.message}",
+                remedy="Write the stack again.",
+            )
+        ]
     found = []
-    for mark, score, how, way in find_marks(stack, monitor=monitor):
+    for mark, score, how, way in looked:
         if not how:
             continue
         where = f"The mark of '{mark.part}' ({' / '.join(mark.text)})"

@@ -9,10 +9,9 @@ from typing import Any
 from voxelmat.errors import InputError
 from voxelmat.io.atomic import explain_os_error, write_bytes, write_json
 from voxelmat.io.trayfile import TrayPlan, load_tray_file
-from voxelmat.model.finding import SEVERITIES, Finding
+from voxelmat.model.finding import Finding
 from voxelmat.monitor import SILENT, Monitor
 from voxelmat.printing.estimate import PrintEstimate, estimate
-from voxelmat.printing.findmark import mark_findings
 from voxelmat.printing.preflight import preflight
 from voxelmat.printing.profile import load_profile
 from voxelmat.printing.readback import Stack, read_stack
@@ -145,9 +144,6 @@ def run_tray(
     )
     stack = read_stack(folder / "stack")
     found = preflight(stack, monitor=monitor)
-    if not any(f.code in ("unreadable layer", "changed layer") for f in found):
-        found = [*found, *mark_findings(stack, monitor=monitor)]
-    found.sort(key=lambda f: SEVERITIES.index(f.severity))
     result = TrayResult(
         plan=plan,
         tray=tray,
