@@ -10,13 +10,14 @@ from voxelmat.model.blend import EMPTY, Blend
 from voxelmat.model.grid import VoxelGrid
 from voxelmat.model.part import Part
 from voxelmat.model.profile import PrintProfile
-from voxelmat.model.support_figures import SupportFigures
+from voxelmat.model.support_figures import SUPPORT_POLICIES, SupportFigures
 from voxelmat.printing.estimate import estimate
 from voxelmat.printing.preflight import preflight
 from voxelmat.printing.profile import load_profile
 from voxelmat.printing.stack import write_stack
 from voxelmat.printing.support import fill_columns
 from voxelmat.printing.support_policies import GridSupport, SkinSupport
+from voxelmat.workflow.summary import _SUPPORT
 
 PALETTE = (EMPTY, Blend.pure("hard"))
 SIZES = SupportFigures(grid_pitch=1.6, grid_wall=0.4, interface=0.8, skin=0.6)
@@ -203,3 +204,7 @@ def test_preflight_takes_a_skin_as_it_is(tmp_path):
     stack = written(tmp_path, "skin")
     found = {f.code for f in preflight(stack, table(), STANDARD)}
     assert found <= {"floating piece", "island in mid-air"}  # a skin does not reach the tray
+
+
+def test_the_report_has_words_for_every_policy():
+    assert set(_SUPPORT) == set(SUPPORT_POLICIES)

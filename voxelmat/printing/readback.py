@@ -85,7 +85,7 @@ class Stack:
 
     @property
     def support_policy(self) -> str:
-        """How support is made: "columns", "machine" or "none"."""
+        """How support is made, one of `voxelmat.model.support_figures.SUPPORT_POLICIES`."""
         return str(self.manifest["method"]["support"])
 
     @cached_property

@@ -21,7 +21,9 @@ _WINDOW_MM = (8.0, 4.0)
 
 _SUPPORT = {
     "columns": "columns below overhangs, laid by us through the support channel",
-    "machine": "the machine adds it; none is in the stack",
+    "grid": "a grid of walls below overhangs under a solid interface, laid by us",
+    "skin": "a thin skin beside and below the part, laid by us",
+    "machine": "the machine adds it; none is in the stack, and its volume is not known",
     "none": "none",
 }
 
