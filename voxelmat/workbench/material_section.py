@@ -192,12 +192,9 @@ class MaterialSection(Section):
             for n, f in self.parts.items()
         ]  # fmt: skip
         more = [n for n in self.resins if n not in self.parts]
-        shown.append(
-            c.group(
-                c.choice("add", "Blend in", _NONE, [_NONE, *more]),
-                c.choice("drop", "Take out", _NONE, [_NONE, *self.parts]),
-            )
-        )
+        shown.append(c.choice("add", "Blend in", _NONE, [_NONE, *more]))
+        if len(self.parts) > 1:
+            shown.append(c.choice("drop", "Take out", _NONE, [_NONE, *self.parts]))
         shown += self._by_hardness()
         shown += self._facts(facts)
         places = self._places

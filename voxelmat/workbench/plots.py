@@ -7,9 +7,11 @@ from collections.abc import Mapping, Sequence
 import numpy as np
 from numpy.typing import NDArray
 
+from voxelmat.model.profile import PrintProfile
 from voxelmat.workflow.report_canvas import figure, png
+from voxelmat.workflow.report_profile import draw_tray
 
-__all__ = ["histogram_png", "line_png", "lines_png"]
+__all__ = ["histogram_png", "line_png", "lines_png", "tray_png"]
 
 _WIDTH, _HEIGHT = 3.6, 2.2  # inches; fits the desk
 _COLOURS = ("#0072B2", "#D55E00", "#009E73", "#CC79A7", "#E69F00", "#56B4E9")  # Okabe and Ito 2008
@@ -68,4 +70,16 @@ def histogram_png(values: NDArray[np.float64], xlabel: str, *, logarithmic: bool
         else:
             edges = np.linspace(float(values.min()), float(values.max()) + 1e-30, 41)
         ax.hist(values, edges, weights=np.full(len(values), 100.0 / len(values)), color="#0072B2")
+    return png(made)
+
+
+def tray_png(profile: PrintProfile) -> bytes:
+    """The tray from above, at true aspect, in the width of the desk."""
+    width, depth, _ = profile.tray_size
+    height = float(np.clip(0.72 * _WIDTH * depth / width + 0.8, 1.8, 4.5))
+    made = figure(_WIDTH, height)
+    ax = made.add_axes((0.17, 0.5 / height, 0.8, 1 - 0.8 / height))
+    draw_tray(ax, profile)
+    ax.set_xlabel("mm", fontsize=8)
+    ax.tick_params(labelsize=7.5)
     return png(made)

@@ -17,11 +17,11 @@ from voxelmat.printing.readback import Stack, read_stack
 from voxelmat.units import number, quantity
 from voxelmat.workbench import controls as c
 from voxelmat.workbench.jobs import Job
+from voxelmat.workbench.plots import tray_png
 from voxelmat.workbench.section import Section
 from voxelmat.workbench.shownstack import of_stack
 from voxelmat.workflow.finding_pictures import finding_picture
 from voxelmat.workflow.pipeline import RunResult, run
-from voxelmat.workflow.report_profile import profile_picture
 from voxelmat.workflow.ticket import write_ticket
 
 __all__ = ["PrintSection"]
@@ -241,7 +241,7 @@ class PrintSection(Section):
     def _tray(self, name: str) -> bytes:
         if self._picture[0] != name:
             profile = load_profile(self._profile_path(name))
-            self._picture = (name, profile_picture(profile).png)
+            self._picture = (name, tray_png(profile))
         return self._picture[1]
 
     def _estimates(self) -> list[c.Control]:

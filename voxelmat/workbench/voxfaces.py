@@ -12,7 +12,7 @@ from voxelmat.model.part import Part
 from voxelmat.model.surface import Faces
 from voxelmat.workflow.depth import faces_of_cut
 
-__all__ = ["LARGEST", "Quads", "coarser", "cut_mask", "quads_of"]
+__all__ = ["LARGEST", "Quads", "coarser", "corner_nodes", "cut_mask", "quads_from", "quads_of"]
 
 #: Voxels with material above which a coarser preview is drawn.
 LARGEST = 4_000_000
@@ -61,22 +61,39 @@ def coarser(part: Part, largest: int = LARGEST) -> tuple[Part, int]:
     pick = (slice(None, None, step),) * 3
     occupancy = None if part.occupancy is None else part.occupancy[pick]
     small = part.replace(
-        grid=grid, labels=part.labels[pick], distance=None, occupancy=occupancy, bodies={}
+        grid=grid,
+        labels=part.labels[pick],
+        distance=None,
+        occupancy=occupancy,
+        bodies={name: mask[pick] for name, mask in part.bodies.items()},
     )
     return small, step
 
 
-def cut_mask(part: Part, axis: int, share: float) -> NDArray[np.bool_]:
-    """Voxels that stay when everything below `share` (0 to 1) of the box along `axis` goes."""
+def cut_mask(part: Part, axis: int, share: float, above: bool = False) -> NDArray[np.bool_]:
+    """Voxels that stay when one side of a plane goes; one layer always stays.
+
+    Parameters
+    ----------
+    part : Part
+    axis : int
+        Across which the plane lies.
+    share : float
+        Where, 0 to 1 of the box along `axis`.
+    above : bool
+        What lies above it goes, else what lies below it.
+    """
     keep = np.zeros(part.grid.shape, dtype=bool)
-    first = min(int(share * part.grid.shape[axis]), part.grid.shape[axis] - 1)
+    n = part.grid.shape[axis]
     where: list[slice] = [slice(None)] * 3
-    where[axis] = slice(first, None)
+    # A hair more, so that a share made from a number of voxels is that number again.
+    first = int(share * n + 1e-6)
+    where[axis] = slice(0, max(first, 1)) if above else slice(min(first, n - 1), None)
     keep[tuple(where)] = True
     return keep
 
 
-def _corner_nodes(faces: Faces) -> NDArray[np.intp]:
+def corner_nodes(faces: Faces) -> NDArray[np.intp]:
     """Node (i, j, k) of each corner, shape (n, 4, 3), anticlockwise seen from outside."""
     nodes = np.repeat(faces.voxel[:, None, :], 4, axis=1)
     rows = np.arange(len(faces))
@@ -94,6 +111,7 @@ def quads_of(
     part: Part,
     shown: NDArray[np.bool_] | None = None,
     move: NDArray[np.float64] | None = None,
+    outer: Faces | None = None,
 ) -> Quads:
     """The outside of the voxels in `shown`; cut faces are closed.
 
@@ -104,9 +122,16 @@ def quads_of(
         ``[i, j, k]``; everything where left out.
     move : ndarray, shape (nx+1, ny+1, nz+1, 3), optional
         Displacement of the nodes to add, mm, already magnified.
+    outer : Faces, optional
+        The part's exposed faces, where they are known already.
     """
-    faces, _ = faces_of_cut(part, part.solid if shown is None else shown)
-    nodes = _corner_nodes(faces).reshape(-1, 3)
+    faces, _ = faces_of_cut(part, part.solid if shown is None else shown, outer)
+    return quads_from(part, faces, move)
+
+
+def quads_from(part: Part, faces: Faces, move: NDArray[np.float64] | None = None) -> Quads:
+    """Quadrilaterals of some faces of a part, moved with its nodes."""
+    nodes = corner_nodes(faces).reshape(-1, 3)
     axes = part.grid.nodes()
     points = np.column_stack([axes[a][nodes[:, a]] for a in range(3)])
     if move is not None:
