@@ -317,3 +317,22 @@ def test_copies_share_their_planes_and_turned_ones_do_not():
     assert first is second
     assert second is third
     assert turned is not first
+
+
+def test_thousands_of_copies_are_laid_out_and_named():
+    tray = lay_out(
+        [TrayEntry(part=block((2.0, 1.5, 1.0)), copies=2000)],
+        STANDARD,
+        spacing_mm=1.0,
+        marks=False,
+        coupons=False,
+    )
+    assert len({p.name for p in tray.placed}) == 2000
+    corners = np.array([tray.box_mm(p) for p in tray.placed])
+    assert len(np.unique(corners[:, :2], axis=0)) == 2000
+    assert not clashes(tray.job(), 1.0)
+    with pytest.raises(InputError, match="would be called 'a 1'"):
+        lay_out(
+            [TrayEntry(part=block(), name="a", copies=2), TrayEntry(part=block(), name="a 1")],
+            STANDARD,
+        )

@@ -8,7 +8,6 @@ up, never runs into another part, and no part stands below the overhang of anoth
 from __future__ import annotations
 
 from dataclasses import dataclass
-from itertools import combinations
 
 import numpy as np
 from numpy.typing import NDArray
@@ -88,6 +87,18 @@ def _common(a: Raster, b: Raster, reaches: tuple[int, int]) -> tuple[slice, slic
     return (cuts[0], cuts[1])
 
 
+def _near_pairs(job: PrintJob, reaches: tuple[int, int]) -> list[tuple[int, int]]:
+    """Numbers of parts whose windows lie within a distance (in sites)."""
+    low = np.array([p.raster.offset[:2] for p in job.parts])
+    high = low + np.array([p.raster.shape[:2] for p in job.parts])
+    found: list[tuple[int, int]] = []
+    for n in range(len(low)):
+        apart = np.maximum(low[n + 1 :] - high[n], low[n] - high[n + 1 :])
+        close = np.flatnonzero((apart < np.array(reaches)).all(axis=1))
+        found += [(n, n + 1 + int(m)) for m in close]
+    return found
+
+
 def _on_tray(
     seen: NDArray[np.bool_], raster: Raster, region: tuple[slice, slice]
 ) -> NDArray[np.bool_]:
@@ -137,9 +148,9 @@ def clashes(job: PrintJob, spacing_mm: float, *, monitor: Monitor = SILENT) -> l
     least = spacing_mm - float(np.hypot(*pitch))
     reach = _reach(job.window, spacing_mm)
     near = [
-        (a, b, region)
-        for a, b in combinations(job.parts, 2)
-        if (region := _common(a.raster, b.raster, reach)) is not None
+        (job.parts[a], job.parts[b], region)
+        for a, b in _near_pairs(job, reach)
+        if (region := _common(job.parts[a].raster, job.parts[b].raster, reach)) is not None
     ]
     known: dict[str, NDArray[np.bool_]] = {}
     found = []

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from collections import Counter
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field
 from pathlib import Path
@@ -298,10 +299,9 @@ def _single(entries: Sequence[TrayEntry]) -> list[tuple[TrayEntry, str]]:
         for _ in range(entry.copies):
             at[name] = at.get(name, 0) + 1
             found.append((entry, name if total[name] == 1 else f"{name} {at[name]}"))
-    names = [n for _, n in found]
-    for name in names:
-        if names.count(name) > 1:
-            raise InputError(f"Two parts of the tray would be called '{name}'.", key="name")
+    twice = [name for name, n in Counter(n for _, n in found).items() if n > 1]
+    if twice:
+        raise InputError(f"Two parts of the tray would be called '{twice[0]}'.", key="name")
     return found
 
 
