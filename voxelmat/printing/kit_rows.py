@@ -108,7 +108,10 @@ def plan_kit(profile: PrintProfile, *, scale: float = 1.0) -> KitPlan:
         least = profile.minimum.xyz(kind)
         for axis in axes or ("",):
             start = least["xyz".index(axis)] if axis else max(least)
-            sizes.append((kind, axis, [round(scale * f * start, 4) for f in FACTORS]))
+            values = [scale * f * start for f in FACTORS]
+            if kind in ("wall", "gap"):
+                values = _whole(values, float(profile.pitch["xyz".index(axis)]))
+            sizes.append((kind, axis, [round(v, 6) for v in values]))
     largest = max(s[-1] for kind, _, s in sizes if kind != "text")
     text = max(s[-1] for kind, _, s in sizes if kind == "text")
     cell = max(4.0, 4.4 * largest, 5.7 * text / FACTORS[-1])
@@ -127,7 +130,7 @@ def plan_kit(profile: PrintProfile, *, scale: float = 1.0) -> KitPlan:
             rows.append(KitRow(name=name, kind=kind, axis=axis, nominal_mm=value, place_mm=place))
     if len([c for c in profile.channels if c != profile.support_channel]) > 1:
         rows += _blends(cell, below)
-    rows += _dimensions(cell, below, base, rise)
+    rows += _dimensions(profile, cell, below, base, rise)
     size = (11.9 * cell, below + 1.9 * cell, base + rise)
     for name, wanted, (low, high) in zip("xyz", size, profile.room, strict=True):
         room = high - low
@@ -147,6 +150,15 @@ def plan_kit(profile: PrintProfile, *, scale: float = 1.0) -> KitPlan:
     )
 
 
+def _whole(values: list[float], pitch: float) -> list[float]:
+    """Rising sizes as whole numbers of sites, so that the raster neither adds nor takes any."""
+    found: list[int] = []
+    for value in values:
+        sites = max(1, round(value / pitch))
+        found.append(max(sites, found[-1] + 1) if found else sites)
+    return [n * pitch for n in found]
+
+
 def _blends(cell: float, below: float) -> list[KitRow]:
     """Five blocks of blends in the free line of cells, and the peel tab in the corner."""
     found = [
@@ -164,12 +176,16 @@ def _blends(cell: float, below: float) -> list[KitRow]:
     return found
 
 
-def _dimensions(cell: float, below: float, base: float, rise: float) -> list[KitRow]:
+def _dimensions(
+    profile: PrintProfile, cell: float, below: float, base: float, rise: float
+) -> list[KitRow]:
     """Three bars along x, three along y, and the heights of those along x: the steps."""
     found = []
     for m, share in enumerate((0.25, 0.5, 1.0)):
-        length, width = round(9.5 * cell * share, 4), round(6.5 * cell * share, 4)
-        height = round(base + rise * (m + 1) / 3, 4)
+        wanted = (9.5 * cell * share, 6.5 * cell * share, base + rise * (m + 1) / 3)
+        length, width, height = (
+            round(_whole([v], float(p))[0], 6) for v, p in zip(wanted, profile.pitch, strict=True)
+        )
         along_x = (0.25 * cell + length / 2, below + (0.4 + 0.55 * m) * cell)
         along_y = ((10.4 + 0.55 * m) * cell, 0.25 * cell + width / 2)
         for axis, value, place in (("x", length, along_x), ("y", width, along_y)):
