@@ -106,7 +106,8 @@ def _smallest(sheet: FilledSheet, kind: str, axis: str, notes: list[str]) -> flo
         notes.append(f"{', '.join(odd)} came out although a larger one did not; taken as chance.")
     if len(good) == len(rows):
         notes.append(
-            f"Every {label} was made, down to {good[-1].row.nominal_mm:.4g} mm; smaller ones may be."
+            f"Every {label} was made, down to {good[-1].row.nominal_mm:.4g} mm; smaller ones may "
+            "be too."
         )
     return good[-1].row.nominal_mm
 
