@@ -1,9 +1,10 @@
-"""3-D checks on a tray of several parts: each finding names its part, in that part's coordinates."""
+"""3-D checks on a tray of several parts: each finding names its part and a place in it."""
 
 import numpy as np
 import pytest
 from print_twins import HARD
 
+from voxelmat.errors import InputError
 from voxelmat.model.blend import EMPTY, Blend
 from voxelmat.model.grid import VoxelGrid
 from voxelmat.model.part import Part
@@ -38,7 +39,7 @@ def fin():
     return part(labels, "fin")
 
 
-@pytest.mark.parametrize("cells", [24_000_000, 30_000])
+@pytest.mark.parametrize("cells", [16_000_000, 30_000])
 def test_findings_name_their_part(tmp_path, monkeypatch, cells):
     monkeypatch.setattr(coarse_module, "MOST_CELLS", cells)  # all at once, or part by part
     sound = part(np.ones((20, 20, 12), np.uint16), "sound")
@@ -60,3 +61,19 @@ def test_findings_name_their_part(tmp_path, monkeypatch, cells):
     assert wall.code == "wall under minimum"
     assert wall.value == pytest.approx(0.2, abs=0.09)
     assert abs(wall.place_mm[0] - (-1 + 12.5 * H)) <= 2 * H
+
+
+def test_a_skin_on_a_tray_has_room(tmp_path):
+    profile = STANDARD.replace(support_policy="skin")
+    blocks = [part(np.ones((15, 12, 10), np.uint16), name) for name in ("one", "two")]
+    entries = [TrayEntry(part=b, mark="none") for b in blocks]
+    stack = write_tray(lay_out(entries, profile, coupons=False), tmp_path / "s")
+    pitch = stack.raster.pitch
+    assert stack.support_channel is not None
+    for k in range(2):
+        n = stack.parts[k].raster.shape
+        for axis, edge in enumerate((3.0, 2.4)):
+            size = n[axis] * float(pitch[axis])
+            assert edge + 1.0 - 0.1 <= size <= edge + 1.0 + 9 * float(pitch[axis])
+    with pytest.raises(InputError, match="before the tray is laid out"):
+        write_tray(lay_out(entries, STANDARD, coupons=False), tmp_path / "b", support="skin")

@@ -19,6 +19,7 @@ from voxelmat.printing.job import PlacedPart, placed
 from voxelmat.printing.marks import Mark, mark_text, tag_mark, tag_part
 from voxelmat.printing.pack import Rectangle, Size, Spot, free_rectangles, pack
 from voxelmat.printing.place import Box, place
+from voxelmat.printing.skin_room import box_with_skin
 from voxelmat.printing.support import outline_box
 
 if TYPE_CHECKING:
@@ -87,15 +88,21 @@ class Arranger:
     def _item(self, part: AnyPart, name: str, kind: str, lies: list[tuple[str, ...]]) -> _Item:
         # Tags and coupons are laid as drawn: a coupon shows what the printer adds.
         profile = self.profile if kind == "part" else self._as_drawn
+        support = profile.support_policy
         ready, boxes = [], []
         for orientation in lies:
             key = (id(part), orientation)
             if key not in self._known:
                 try:
-                    made = placed(part, profile, orientation, name=name, kind=kind)
+                    made = placed(
+                        part, profile, orientation, name=name, kind=kind, support=support
+                    )
                 except InputError as error:
                     raise InputError(f"'{name}': {error.message}", key=error.key) from None
-                self._known[key] = (made, outline_box(made.part))
+                box = outline_box(made.part)
+                if support == "skin":
+                    box = box_with_skin(box, profile.support_sizes.skin, orientation)
+                self._known[key] = (made, box)
             made, box = self._known[key]
             ready.append(made)
             boxes.append(box)

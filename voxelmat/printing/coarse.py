@@ -16,7 +16,7 @@ from voxelmat.printing.readback import Stack, StackPart
 __all__ = ["MOST_CELLS", "CoarsePart", "coarse_parts"]
 
 #: Cells that are in memory at once; a part that needs more takes larger cells.
-MOST_CELLS = 24_000_000
+MOST_CELLS = 16_000_000
 
 
 @dataclass(frozen=True, slots=True, eq=False)

@@ -180,6 +180,13 @@ class Tray:
         InputError
             If the profile has not channels enough, or parts have other data for one resin.
         """
+        policy = self.profile.support_policy if support is None else support
+        if policy == "skin" != self.profile.support_policy:
+            raise InputError(
+                "A skin of support needs room between the parts: name it as the profile's policy "
+                "before the tray is laid out.",
+                key="support",
+            )
         parts = self.placed
         window = parts[0].raster
         if len(parts) > 1:
@@ -196,7 +203,7 @@ class Tray:
             parts=parts,
             window=window,
             channels=self.profile.assign(self.resins),
-            support=self.profile.support_policy if support is None else support,
+            support=policy,
             seed=seed,
             halftone=Halftone() if halftone is None else halftone,
             notes={
