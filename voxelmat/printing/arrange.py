@@ -94,9 +94,7 @@ class Arranger:
             key = (id(part), orientation)
             if key not in self._known:
                 try:
-                    made = placed(
-                        part, profile, orientation, name=name, kind=kind, support=support
-                    )
+                    made = placed(part, profile, orientation, name=name, kind=kind, support=support)
                 except InputError as error:
                     raise InputError(f"'{name}': {error.message}", key=error.key) from None
                 box = outline_box(made.part)
