@@ -230,6 +230,15 @@ def test_a_job_comes_back_from_its_folder(tmp_path):
         load_job(place)
 
 
+def test_a_folder_of_someone_else_is_left_alone(tmp_path):
+    (tmp_path / ".s.job").mkdir()
+    (tmp_path / ".s.job" / "thesis.txt").write_text("years of work")
+    with pytest.raises(ResourceError, match="not a job of ours"):
+        write_stack(part(), STANDARD, tmp_path / "s", workers=2)
+    assert (tmp_path / ".s.job" / "thesis.txt").read_text() == "years of work"
+    assert not (tmp_path / "s").exists()
+
+
 def test_other_versions_are_refused(tmp_path, monkeypatch):
     job = one_part_job(part(), STANDARD)
     with described(job, tmp_path / "s") as place:

@@ -13,7 +13,7 @@ from contextlib import contextmanager
 from pathlib import Path
 from typing import Any
 
-from voxelmat.errors import FileFormatError, VoxelmatError
+from voxelmat.errors import FileFormatError, ResourceError, VoxelmatError
 from voxelmat.io.atomic import write_json
 from voxelmat.io.bigpart import StoredPart, open_big_part
 from voxelmat.io.bigpart_write import save_big_part
@@ -27,6 +27,7 @@ __all__ = ["JOB_FILE", "described", "job_folder", "load_job"]
 
 JOB_FILE = "job.json"
 _FORMAT = "voxelmat-print-job"
+_OURS = ("job.json", "part-", "support-", "slab-")  # how the names in such a folder begin
 _BYTES_DEPEND_ON = ("voxelmat", "numpy", "numba", "isal")
 
 
@@ -60,7 +61,14 @@ def described(job: PrintJob, folder: Path) -> Iterator[Path]:
 
 
 def _remove(place: Path) -> None:
+    """Delete a job's folder, but nothing that is not one."""
     if place.is_dir():
+        foreign = [p.name for p in place.iterdir() if not p.name.lstrip(".").startswith(_OURS)]
+        if foreign:
+            raise ResourceError(
+                f"'{place.name}' holds files that are not a job of ours ({foreign[0]}). Nothing "
+                "was changed; move them away."
+            )
         (place / JOB_FILE).unlink(missing_ok=True)
         shutil.rmtree(place)
 
