@@ -212,6 +212,30 @@ def notebook(lab, chromium, request):
     assert not outside, outside
 
 
+_AXE = """async place => {
+    const found = await axe.run(place, {resultTypes: ['violations']});
+    return found.violations.filter(v => ['serious', 'critical'].includes(v.impact))
+        .flatMap(v => v.nodes.map(n => `${v.id} (${v.impact}): ${n.html.slice(0, 160)} ` +
+            n.any.concat(n.all).map(m => m.message).join('; ').slice(0, 200)));
+}"""
+
+
+@pytest.fixture(scope="session")
+def axe_findings():
+    """Calls axe-core, as its PyPI package ships it, on a page: serious and critical findings."""
+    spec = importlib.util.find_spec("axe_playwright_python")
+    if spec is None:
+        _missing("axe-core is not installed: pip install axe-playwright-python")
+    source = Path(spec.submodule_search_locations[0], "axe.min.js").read_text(encoding="utf-8")
+
+    def found(page, place=".vm-bench"):
+        if page.evaluate("typeof window.axe") == "undefined":
+            page.evaluate(source)
+        return page.evaluate(_AXE, place)
+
+    return found
+
+
 @pytest.fixture
 def web_folder(tmp_path):
     """A folder that is served, and its address."""
