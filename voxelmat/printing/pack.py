@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Sequence
 from dataclasses import dataclass
 
-import rpack  # type: ignore[import-untyped]
+import rpack
 
 __all__ = ["Rectangle", "Size", "Spot", "free_rectangles", "pack"]
 
