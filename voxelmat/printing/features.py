@@ -25,7 +25,7 @@ _NAMED = 3  # findings of one kind that are listed with their place; the rest is
 
 def _place(stack: Stack, piece: Piece) -> tuple[float, float, float]:
     column, row, layer = piece.place
-    return stack.locate(layer, row, column)[1]
+    return stack.raster.pixel_to_part(layer, row, column)  # `preflight` names the part
 
 
 def _by_part(stack: Stack, pieces: list[Piece]) -> dict[str, list[Piece]]:
@@ -59,7 +59,6 @@ def piece_findings(stack: Stack, facts: Facts) -> Iterator[Finding]:
             remedy="Join what should be one part.",
             value=len(pieces),
             limit=1,
-            part=name,
         )
     sealed = [p for p in facts.hollows if not p.on_tray and not p.at_side and p.sites >= _SPECK]
     for piece in sealed[:_NAMED]:

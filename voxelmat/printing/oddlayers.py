@@ -112,9 +112,9 @@ def _middle(stack: Stack, layer: int) -> tuple[float, float, float]:
         at = np.argwhere(_solid(stack, k))
         if len(at):
             row, column = at[len(at) // 2]
-            return stack.locate(layer, int(row), int(column))[1]
+            return stack.raster.pixel_to_part(layer, int(row), int(column))
     _, rows, columns = stack.raster.image_shape
-    return stack.locate(layer, rows // 2, columns // 2)[1]
+    return stack.raster.pixel_to_part(layer, rows // 2, columns // 2)
 
 
 def _solid(stack: Stack, layer: int) -> Bools:

@@ -2,8 +2,11 @@
 
 from __future__ import annotations
 
+import dataclasses
 from collections.abc import Sequence
 from pathlib import Path
+
+import numpy as np
 
 from voxelmat.model.finding import SEVERITIES, Finding
 from voxelmat.model.part import Part
@@ -96,7 +99,22 @@ def preflight(
     if deep:
         found += deep_findings(stack, sliced, facts, printer, monitor=monitor)
         found = without_repeats(found)
+    found = [_located(stack, f) for f in found]
     return sorted(found, key=lambda f: SEVERITIES.index(f.severity))
+
+
+def _located(stack: Stack, finding: Finding) -> Finding:
+    """On a tray of several parts: name the part, and give the place in its coordinates."""
+    if len(stack.parts) == 1 or finding.part or finding.place_mm is None:
+        return finding
+    raster = stack.raster
+    origin = np.array(raster.pixel_to_part(0, 0, 0))
+    ends = ((1, 0, 0), (0, 1, 0), (0, 0, 1))
+    step = np.stack([np.array(raster.pixel_to_part(*e)) - origin for e in ends], axis=1)
+    pixel = np.rint(np.linalg.solve(step, np.array(finding.place_mm) - origin)).astype(int)
+    layer, row, column = (int(v) for v in pixel)
+    name, place = stack.locate(layer, row, column)
+    return dataclasses.replace(finding, part=name, place_mm=place)
 
 
 def as_sliced(part: Part, stack: Stack) -> Part:
@@ -174,7 +192,7 @@ def _slit(stack: Stack, facts: Facts) -> list[Finding]:
             message=f"A slit of one site closes when the images of channel '{name}' are moved by "
             f"{columns} columns and {rows} rows: this channel is shifted, or the design has a slit "
             "that no printer can hold.",
-            place_mm=stack.locate(layer, row, column)[1],
+            place_mm=stack.raster.pixel_to_part(layer, row, column),
             remedy="Compare with the design; write the stack again.",
         )
     ]
