@@ -17,8 +17,7 @@ from voxelmat.workbench import controls as c
 from voxelmat.workbench.jobs import Job
 from voxelmat.workbench.plots import histogram_png, line_png
 from voxelmat.workbench.section import Section, number_from
-from voxelmat.workbench.shown import of_part
-from voxelmat.workbench.shownresult import FIELDS, field_values, of_result
+from voxelmat.workbench.shownresult import FIELDS, field_values
 from voxelmat.workflow.interfaces import spot_rows
 from voxelmat.workflow.live import LIVE_VOXELS, Answers, answer, live_answer
 from voxelmat.workflow.report_tables import verdict_rows
@@ -196,13 +195,13 @@ class AnswersSection(Section):
         self._field, self._case = field, result.load_case.name
         stage = getattr(self.bench, "stage", None)
         if stage is not None:
-            stage.show(of_result(result, field, factor or None))
+            stage.colour_by(field, result.load_case.name, factor)
 
     def show_material(self) -> None:
         """Show the part in its materials again."""
         stage = getattr(self.bench, "stage", None)
         if stage is not None:
-            stage.show(of_part(self.bench.part))
+            stage.colour_by("material")
 
     def along(
         self, start_mm: list[float], end_mm: list[float], field: str = "", load_case: str = ""

@@ -114,6 +114,15 @@ class Workbench:
             return self._built[1]
 
     @property
+    def ready(self) -> Built | None:
+        """What `build` gives, where that is known already; None where it would take time."""
+        made = self._built
+        if made is None or self.draft.empty:
+            return None
+        design = self.design
+        return made[1] if made[0] == (design.digest, design.name) else None
+
+    @property
     def part(self) -> Part:
         """The part as it is laid out now."""
         return self.build().part

@@ -1,223 +1,225 @@
-"""VTK drawing on one thread of its own: callbacks come on any thread, OpenGL belongs to one."""
+"""One drawing with VTK: a surface, its ghosts and its arrows, an eye, and pictures of them."""
 
 from __future__ import annotations
 
-import atexit
 import io
-import math
 import os
-import threading
-from collections.abc import Callable
-from concurrent.futures import Future
-from dataclasses import dataclass
-from queue import SimpleQueue
-from typing import Any, ParamSpec, TypeVar
+from collections.abc import Sequence
+from functools import cache
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
-from PIL import Image, ImageDraw, ImageFont
+from PIL import Image
 
+from voxelmat.workbench.captions import Line, write_on
+from voxelmat.workbench.eye import Eye
 from voxelmat.workbench.glprobe import probe_gl
+from voxelmat.workbench.marks import Arrow
+from voxelmat.workbench.renderthread import close_at_end, forget, on_render_thread
+from voxelmat.workbench.solid import Surface
 from voxelmat.workbench.voxfaces import Quads
-from voxelmat.workflow.depth import Camera
 
-__all__ = ["SIZE", "Scene", "on_render_thread"]
+__all__ = ["SIZE", "Scene"]
 
-P = ParamSpec("P")
-T = TypeVar("T")
-#: Width and height of every picture, pixels.
+#: Width and height of a picture, pixels.
 SIZE = (840, 480)
 _MARGIN = 1.15
-
-
-class _RenderThread:
-    """One daemon thread that runs what it is given, in order, until the interpreter ends."""
-
-    def __init__(self) -> None:
-        self._jobs: SimpleQueue[Callable[[], None] | None] = SimpleQueue()
-        self._thread = threading.Thread(target=self._work, name="voxelmat-render", daemon=True)
-        self._thread.start()
-
-    def _work(self) -> None:
-        while (job := self._jobs.get()) is not None:
-            job()
-
-    def call(self, function: Callable[P, T], *args: P.args, **kwargs: P.kwargs) -> T:
-        """Run on the render thread and wait for the answer."""
-        if threading.current_thread() is self._thread:
-            return function(*args, **kwargs)
-        if not self._thread.is_alive():
-            raise RuntimeError("The program is ending; nothing is drawn any more.")
-        answer: Future[T] = Future()
-
-        def job() -> None:
-            try:
-                answer.set_result(function(*args, **kwargs))
-            except BaseException as error:  # noqa: BLE001 (handed to the caller, not hidden)
-                answer.set_exception(error)
-
-        self._jobs.put(job)
-        return answer.result()
-
-    def stop(self) -> None:
-        """End after what is queued."""
-        self._jobs.put(None)
-        self._thread.join(timeout=10)
-
-
-_lock = threading.RLock()  # a widget may be collected, and closed, while it is held
-_thread: _RenderThread | None = None
-_open: set[Scene] = set()
-
-
-def _the_thread() -> _RenderThread:
-    global _thread
-    with _lock:
-        if _thread is None:
-            _thread = _RenderThread()
-            atexit.register(_shut_down)
-        return _thread
-
-
-def _shut_down() -> None:
-    if _thread is not None:
-        for scene in list(_open):
-            scene.close()
-        _thread.stop()
-
-
-def on_render_thread(function: Callable[P, T], *args: P.args, **kwargs: P.kwargs) -> T:
-    """Run `function` on the one thread that may touch VTK, and wait for its answer."""
-    return _the_thread().call(function, *args, **kwargs)
-
-
-@dataclass(slots=True)
-class _Eye:
-    """Where the viewer stands: a turntable that never rolls."""
-
-    azimuth: float = -62.0
-    elevation: float = 24.0
-    zoom: float = 1.0
-
-    def turn(self, across: float, up: float) -> None:
-        self.azimuth = (self.azimuth - across) % 360.0
-        self.elevation = min(89.0, max(-89.0, self.elevation + up))
-
-    def camera(self) -> Camera:
-        return Camera(azimuth=self.azimuth, elevation=self.elevation)
+_PAPER = {False: "white", True: "#1c1c1c"}
+Rgb = NDArray[np.uint8]
 
 
 class Scene:
-    """One drawing: quadrilaterals with a colour each, an eye, and JPEG pictures of both.
+    """What is drawn, and from where.
 
     Parameters
     ----------
-    quads : Quads
-    rgb : ndarray of uint8, shape (n, 3)
-    note : str
-        Written into every picture: the factor of a deformation, the step of a preview.
+    low, high : ndarray, shape (3,)
+        The box that the first picture has room for, mm.
+    size : tuple of int
+        Width and height of the pictures, pixels.
+
+    Attributes
+    ----------
+    eye : Eye
+    notes : list of str
+        Written into every picture.
+    ruler : Line or None
+        Places that are marked, and a measured line.
+    dark : bool
+        Whether the background is.
+
+    Raises
+    ------
+    RuntimeError
+        Where the machine cannot draw with OpenGL; the message says what to install.
     """
 
-    def __init__(self, quads: Quads, rgb: NDArray[np.uint8], note: str = "") -> None:
-        self.eye = _Eye()
-        self.note = note
+    def __init__(
+        self,
+        low: NDArray[np.float64],
+        high: NDArray[np.float64],
+        size: tuple[int, int] = SIZE,
+    ) -> None:
+        self.eye = Eye()
+        self.notes: list[str] = []
+        self.ruler: Line | None = None
+        self.dark = False
+        self.size = size
         self._plotter: Any = None
-        self._actor: Any = None
-        low, high = quads.points.min(axis=0), quads.points.max(axis=0)
-        self._centre = 0.5 * (low + high).astype(float)
-        self._radius = 0.5 * float(np.linalg.norm(high - low))
+        self._actors: dict[str, Any] = {}
+        self._points: NDArray[np.float32] = np.zeros((0, 3), dtype=np.float32)
+        self.frame(low, high)
+        on_render_thread(self._build)
+        close_at_end(self)
+
+    def frame(self, low: NDArray[np.float64], high: NDArray[np.float64]) -> None:
+        """Have room for a box at zoom 1."""
+        self._centre = 0.5 * (low + high)
+        self._radius = max(0.5 * float(np.linalg.norm(high - low)), 1e-6)
         # Wide enough at every azimuth, high enough at the first elevation.
         across = 0.5 * float(np.hypot(*(high - low)[:2]))
-        up = np.abs(self.eye.camera().axes()[1])
-        self._half = _MARGIN * max(across * SIZE[1] / SIZE[0], 0.5 * float((high - low) @ up))
-        on_render_thread(self._build, quads, rgb)
-        _open.add(self)
+        up = np.abs(Eye().axes()[1])
+        wide = across * self.size[1] / self.size[0]
+        self._half = _MARGIN * max(wide, 0.5 * float((high - low) @ up), 1e-6)
 
-    # Methods with a leading underscore run on the render thread.
-    def _mesh(self, quads: Quads, rgb: NDArray[np.uint8]) -> Any:
-        import pyvista
+    def room_for(self, half: float) -> float:
+        """Have room for at least this half height at zoom 1; what it is afterwards, mm."""
+        self._half = max(self._half, half)
+        return self._half
 
-        corners = np.arange(4 * len(quads), dtype=np.int64).reshape(-1, 4)
-        mesh = pyvista.PolyData.from_regular_faces(quads.points, corners)
-        mesh.cell_data["rgb"] = rgb
-        mesh.cell_data["Normals"] = quads.normals
-        mesh.cell_data.active_normals_name = "Normals"
-        return mesh
+    @property
+    def focus(self) -> NDArray[np.float64]:
+        """What lies in the middle of the picture, mm."""
+        return np.asarray(self._centre + np.array(self.eye.aside))
 
-    def _build(self, quads: Quads, rgb: NDArray[np.uint8]) -> None:
+    @property
+    def half(self) -> float:
+        """Half the height of the picture, mm."""
+        return self._half / self.eye.zoom
+
+    @property
+    def pixel_mm(self) -> float:
+        """Edge of a pixel of a frame, mm."""
+        return 2.0 * self.half / self.size[1]
+
+    def line_of_sight(self, x: float, y: float) -> tuple[float, float]:
+        """Coordinates along right and up, mm, of a place in the picture, shares of its size."""
+        right, up, _ = self.eye.axes() @ self.focus
+        return (
+            float(right + (x - 0.5) * self.size[0] * self.pixel_mm),
+            float(up + (0.5 - y) * self.size[1] * self.pixel_mm),
+        )
+
+    def fit(self) -> None:
+        """Move and zoom so that what is drawn fills the picture."""
+        if not len(self._points):
+            return
+        axes = self.eye.axes()
+        flat = self._points @ axes.T.astype(np.float32)
+        low, high = flat.min(axis=0).astype(float), flat.max(axis=0).astype(float)
+        x, y, z = (0.5 * (low + high)) @ axes - self._centre
+        self.eye.aside = (float(x), float(y), float(z))
+        span = high - low
+        need = 0.5 * max(span[1], span[0] * self.size[1] / self.size[0])
+        self.eye.zoom = 1.0
+        self.eye.nearer(self._half / (_MARGIN * max(float(need), 1e-9)))
+
+    # ------------------------------------------------------------------ on the render thread
+    def _build(self) -> None:
         probe = probe_gl()
         if not probe.works:
             raise RuntimeError(probe.reason)
         os.environ.update(dict(probe.environment))  # read when VTK is first imported
         import pyvista
 
-        self._plotter = pyvista.Plotter(off_screen=True, window_size=SIZE, lighting="none")
-        self._plotter.set_background("white")
-        self._plotter.disable_anti_aliasing()
+        plotter = pyvista.Plotter(off_screen=True, window_size=self.size, lighting="none")
+        plotter.disable_anti_aliasing()
         lamp = pyvista.Light(light_type="camera light", intensity=0.6)
         lamp.position = (-0.6, 0.9, 1.4)
-        self._plotter.add_light(lamp)
-        self._plotter.add_light(pyvista.Light(light_type="headlight", intensity=0.12))
-        self._actor = self._plotter.add_mesh(
-            self._mesh(quads, rgb), scalars="rgb", rgb=True, ambient=0.35, show_scalar_bar=False
-        )
-
-    def _picture(self, quality: int) -> bytes:
-        axes = self.eye.camera().axes()
-        camera = self._plotter.camera
-        camera.parallel_projection = True
-        camera.focal_point = tuple(self._centre)
-        camera.position = tuple(self._centre + 4.0 * self._radius * axes[2])
-        camera.up = tuple(axes[1])
-        camera.parallel_scale = self._half / self.eye.zoom
-        self._plotter.renderer.ResetCameraClippingRange()
-        self._plotter.render()  # a screenshot alone would give the last picture again
-        image = Image.fromarray(self._plotter.screenshot(None, return_img=True))
-        self._write_on(image, axes, camera.parallel_scale)
-        store = io.BytesIO()
-        image.save(store, "JPEG", quality=quality)
-        return store.getvalue()
-
-    def _write_on(self, image: Image.Image, axes: NDArray[np.float64], half: float) -> None:
-        """Arrows of the axes, a bar for the scale, and the note."""
-        draw = ImageDraw.Draw(image)
-        font = ImageFont.load_default(15)
-        width, height = image.size
-        x0, y0 = 48, height - 48
-        for a in range(3):
-            dx, dy = 34 * axes[0, a], -34 * axes[1, a]
-            draw.line((x0, y0, x0 + dx, y0 + dy), fill="black", width=2)
-            draw.text(
-                (x0 + 1.35 * dx, y0 + 1.35 * dy), "xyz"[a], fill="black", font=font, anchor="mm"
+        plotter.add_light(lamp)
+        plotter.add_light(pyvista.Light(light_type="headlight", intensity=0.12))
+        start = pyvista.Triangle()
+        for name, opacity in (("firm", 1.0), ("ghost", 0.22), ("arrows", 1.0)):
+            start.cell_data["rgb"] = np.zeros((1, 3), dtype=np.uint8)
+            actor = plotter.add_mesh(
+                start.copy(),
+                scalars="rgb",
+                rgb=True,
+                ambient=0.35,
+                opacity=opacity,
+                # Of a ghost only the near side: two layers over one another hide too much.
+                culling="back" if name == "ghost" else None,
+                show_scalar_bar=False,
             )
-        span = 0.2 * width * 2.0 * half / height
-        power = 10.0 ** math.floor(math.log10(span))
-        bar = power * max(s for s in (1, 2, 5) if s * power <= span)
-        x1 = width - 20
-        left = x1 - bar * height / (2.0 * half)
-        draw.line((left, height - 22, x1, height - 22), fill="black", width=3)
-        draw.text(
-            (0.5 * (left + x1), height - 28), f"{bar:g} mm", fill="black", font=font, anchor="mb"
-        )
-        if self.note:
-            draw.text((12, 10), self.note, fill="black", font=font)
+            actor.visibility = False
+            self._actors[name] = actor
+        self._plotter = plotter
 
-    def _swap(self, quads: Quads, rgb: NDArray[np.uint8]) -> None:
-        self._actor.mapper.dataset = self._mesh(quads, rgb)
+    def _put(self, surface: Surface, rgb: Rgb, arrows: Sequence[Arrow]) -> None:
+        for name, quads, colours in (
+            ("firm", surface.quads, rgb),
+            ("ghost", surface.ghost, surface.ghost_rgb),
+        ):
+            actor = self._actors[name]
+            actor.visibility = len(quads) > 0
+            if len(quads):
+                actor.mapper.dataset = _mesh(quads, colours)
+        actor = self._actors["arrows"]
+        actor.visibility = len(arrows) > 0
+        if arrows:
+            actor.mapper.dataset = _arrow_mesh(arrows)
+
+    def _image(self, scale: int = 1) -> Image.Image:
+        axes = self.eye.axes()
+        plotter = self._plotter
+        plotter.set_background(_PAPER[self.dark])
+        camera = plotter.camera
+        camera.parallel_projection = True
+        camera.focal_point = tuple(self.focus)
+        camera.position = tuple(self.focus + 4.0 * self._radius * axes[2])
+        camera.up = tuple(axes[1])
+        camera.parallel_scale = self.half
+        plotter.renderer.ResetCameraClippingRange()
+        plotter.render()  # a screenshot alone would give the last picture again
+        pixels = plotter.screenshot(None, return_img=True, scale=scale)
+        image = Image.fromarray(np.ascontiguousarray(pixels[..., :3]))
+        write_on(
+            image,
+            axes,
+            self.focus,
+            self.half,
+            self.notes,
+            self.ruler,
+            dark=self.dark,
+            scale=scale,
+        )
+        return image
 
     def _close(self) -> None:
         if self._plotter is not None:
             self._plotter.close()
-            self._plotter = self._actor = None
+            self._plotter = None
+            self._actors = {}
 
     # ------------------------------------------------------------------ from any thread
+    def put(self, surface: Surface, rgb: Rgb, arrows: Sequence[Arrow] = ()) -> None:
+        """Draw another surface from now on, in colours (n, 3), seen from the same place."""
+        points = surface.quads.points
+        self._points = points if len(points) else surface.ghost.points
+        on_render_thread(self._put, surface, rgb, arrows)
+
     def jpeg(self, quality: int = 85) -> bytes:
         """A picture as JPEG bytes."""
-        return on_render_thread(self._picture, quality)
+        store = io.BytesIO()
+        on_render_thread(self._image).save(store, "JPEG", quality=quality)
+        return store.getvalue()
 
-    def swap(self, quads: Quads, rgb: NDArray[np.uint8]) -> None:
-        """Draw other quadrilaterals from now on, seen from the same place."""
-        on_render_thread(self._swap, quads, rgb)
+    def png(self, scale: int = 2) -> bytes:
+        """A picture as PNG bytes, `scale` times as large."""
+        store = io.BytesIO()
+        on_render_thread(self._image, scale).save(store, "PNG", compress_level=4)
+        return store.getvalue()
 
     @property
     def closed(self) -> bool:
@@ -226,6 +228,49 @@ class Scene:
 
     def close(self) -> None:
         """Free the plotter; twice is no harm, nor is it after the interpreter began to end."""
-        _open.discard(self)
+        forget(self)
         if not self.closed:
             on_render_thread(self._close)
+
+
+def _mesh(quads: Quads, rgb: Rgb) -> Any:
+    import pyvista
+
+    corners = np.arange(4 * len(quads), dtype=np.int64).reshape(-1, 4)
+    mesh = pyvista.PolyData.from_regular_faces(quads.points, corners)
+    mesh.cell_data["rgb"] = rgb
+    mesh.cell_data["Normals"] = quads.normals
+    mesh.cell_data.active_normals_name = "Normals"
+    return mesh
+
+
+@cache
+def _one_arrow() -> tuple[NDArray[np.float64], NDArray[np.int64]]:
+    """An arrow of length 1 along x: points and triangles."""
+    import pyvista
+
+    arrow = pyvista.Arrow(
+        tip_length=0.34, tip_radius=0.11, tip_resolution=12, shaft_radius=0.04, shaft_resolution=10
+    ).triangulate()
+    return np.array(arrow.points, dtype=float), np.array(arrow.regular_faces, dtype=np.int64)
+
+
+def _arrow_mesh(arrows: Sequence[Arrow]) -> Any:
+    """All arrows as one mesh."""
+    import pyvista
+
+    points, faces = _one_arrow()
+    places, corners, rgb = [], [], []
+    for n, arrow in enumerate(arrows):
+        tail, tip = np.array(arrow.tail), np.array(arrow.tip)
+        length = float(np.linalg.norm(tip - tail))
+        along = (tip - tail) / length
+        beside = np.cross(along, np.eye(3)[int(np.abs(along).argmin())])
+        beside /= np.linalg.norm(beside)
+        places.append(tail + length * points @ np.stack([along, beside, np.cross(along, beside)]))
+        corners.append(faces + n * len(points))
+        colour = [int(arrow.colour[a : a + 2], 16) for a in (1, 3, 5)]
+        rgb.append(np.tile(np.array(colour, dtype=np.uint8), (len(faces), 1)))
+    mesh = pyvista.PolyData.from_regular_faces(np.concatenate(places), np.concatenate(corners))
+    mesh.cell_data["rgb"] = np.concatenate(rgb)
+    return mesh

@@ -2,26 +2,21 @@
 
 from __future__ import annotations
 
-import base64
-import io
-from html import escape
 from typing import Any
 
 import ipywidgets
-from PIL import Image
 
 from voxelmat.errors import InputError
 from voxelmat.model.part import Part
 from voxelmat.model.result import StaticResult
 from voxelmat.workbench.glprobe import probe_gl
 from voxelmat.workbench.hook import register
-from voxelmat.workbench.render import SIZE
 from voxelmat.workbench.shown import Shown, of_part
 from voxelmat.workbench.shownresult import of_result
 from voxelmat.workbench.sliceview import SliceView
 from voxelmat.workbench.spaceview import SpaceView
+from voxelmat.workbench.stills import drawn_without_gl, still_picture
 from voxelmat.workbench.theme import notice
-from voxelmat.workflow.depth import draw_faces
 
 __all__ = ["View", "register", "show"]
 
@@ -54,8 +49,8 @@ class View:
             self._still = self.space.jpeg()
             parts.append(self.space)
         else:
-            self._still = _drawn_without_gl(shown)
-            parts.append(_still_picture(self._still, shown.title))
+            self._still = drawn_without_gl(shown)
+            parts.append(still_picture(self._still, shown.title))
             parts.append(
                 notice(f"The picture above stands still and is not deformed. {probe.reason}")
             )
@@ -150,19 +145,3 @@ def _keep(view: View) -> None:
     _live.append((f"{cell} {run}", view))
     while len(_live) > MOST:
         _live.pop(0)[1].close()
-
-
-def _drawn_without_gl(shown: Shown) -> bytes:
-    """The part in space, cut open, drawn by NumPy alone, as JPEG."""
-    quads, rgb = shown.surface("y", 0.5)
-    shot = draw_faces(quads.faces, rgb, quads.spacing, width=SIZE[0])
-    store = io.BytesIO()
-    Image.fromarray(shot.rgb).save(store, "JPEG", quality=90)
-    return store.getvalue()
-
-
-def _still_picture(jpeg: bytes, title: str) -> ipywidgets.Widget:
-    data = base64.b64encode(jpeg).decode()
-    return ipywidgets.HTML(
-        f'<img src="data:image/jpeg;base64,{data}" alt="Picture of {escape(title)}, cut open">'
-    )

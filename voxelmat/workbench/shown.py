@@ -12,7 +12,9 @@ from numpy.typing import NDArray
 from voxelmat.model.html import part_table
 from voxelmat.model.part import Part
 from voxelmat.units import number, quantity
-from voxelmat.workbench.voxfaces import Quads, coarser, cut_mask, quads_of
+from voxelmat.workbench.look import Look
+from voxelmat.workbench.solid import Solid
+from voxelmat.workbench.voxfaces import Quads, coarser
 from voxelmat.workflow.colours import palette_rgb, resin_colours
 
 __all__ = [
@@ -20,6 +22,7 @@ __all__ = [
     "Shown",
     "material_field",
     "of_part",
+    "in_materials",
     "picture_of",
     "preview_words",
     "scalar_field",
@@ -43,11 +46,16 @@ class Field:
         of the two other axes upwards.
     legend : dict
         ``items``: colour and text each; or ``ramp``: colours, low and high.
+    values : ndarray of float, shape (nx, ny, nz), or None
+        Its numbers, for a field that has any.
+    unit : str
     """
 
     name: str
     slice_rgb: Callable[[str, int], Rgb]
     legend: dict[str, Any]
+    values: NDArray[np.floating[Any]] | None = None
+    unit: str = ""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -72,12 +80,20 @@ class Shown:
     frame : callable
         ``frame(axis)``: which way is right and which is up, and how far, in words.
     fields : tuple of Field
-    surface : callable
-        ``surface(axis, share)``: faces and their colours, cut away below `share` along `axis`.
+    solid : Solid
+        What is drawn in space.
     legend : dict
-        Of the surface's colours.
+        Of the colours in space.
     note : str
         Written into every picture in space.
+    painted : str
+        What the colours in space mean, one of `paints`.
+    paints : tuple of str
+        What else they could mean.
+    factor : float or None
+        By which displacements are drawn larger; None where nothing is deformed.
+    repaint : callable or None
+        ``repaint(paint, factor)``: the same in other colours, or deformed by another factor.
     """
 
     title: str
@@ -89,9 +105,30 @@ class Shown:
     where: Callable[[str, int], str]
     frame: Callable[[str], str]
     fields: tuple[Field, ...]
-    surface: Callable[[str, float], tuple[Quads, Rgb]]
+    solid: Solid
     legend: dict[str, Any] = field(default_factory=dict)
     note: str = ""
+    painted: str = "material"
+    paints: tuple[str, ...] = ("material",)
+    factor: float | None = None
+    repaint: Callable[[str, float | None], Shown] | None = None
+
+    def surface(self, axis: str, share: float) -> tuple[Quads, Rgb]:
+        """Faces and their colours, cut away below `share` (0 to 1) along `axis`."""
+        made = self.solid.surface(Look(axis=axis, share=share))
+        return made.quads, made.rgb
+
+    def values_at(self, voxel: tuple[int, ...]) -> dict[str, float]:
+        """The fields' numbers in a voxel, by name with unit."""
+        return {f.name: float(f.values[voxel]) for f in self.fields if f.values is not None}
+
+    def words_at(self, voxel: tuple[int, ...]) -> list[str]:
+        """The same in words: ``displacement 0.123 mm``."""
+        return [
+            f"{f.name.removesuffix(f', {f.unit}')} {quantity(float(f.values[voxel]), f.unit)}"
+            for f in self.fields
+            if f.values is not None
+        ]
 
 
 def picture_of(array: NDArray[Any], axis: str, index: int) -> NDArray[Any]:
@@ -137,12 +174,16 @@ def scalar_field(
     solid: NDArray[np.bool_],
     cmap: str,
     decades: float | None = None,
+    top: float | None = None,
 ) -> tuple[Field, Callable[[NDArray[np.floating[Any]]], Rgb]]:
     """A field of numbers, linear from 0 or over some decades below its largest value.
 
-    Returns the field, and the function from values to colours.
+    `top` is the value of the last colour; the field's largest where left out. Returns the field,
+    and the function from values to colours.
     """
-    top = max(float(np.max(values, where=solid, initial=0.0)), 1e-30)
+    if top is None:
+        top = float(np.max(values, where=solid, initial=0.0))
+    top = max(top, 1e-30)
     lut = _lut(cmap)
 
     def colour(v: NDArray[np.floating[Any]]) -> Rgb:
@@ -162,7 +203,14 @@ def scalar_field(
     else:
         low = f"{quantity(top * 10**-decades, unit)} or less, logarithmic"
     ramp = _ramp(lut, low, quantity(top, unit))
-    return Field(name=f"{name}, {unit}", slice_rgb=slice_rgb, legend=ramp), colour
+    made = Field(
+        name=f"{name}, {unit}" if unit else name,
+        slice_rgb=slice_rgb,
+        legend=ramp,
+        values=values,
+        unit=unit,
+    )
+    return made, colour
 
 
 def slices_of(part: Part) -> dict[str, Any]:
@@ -202,21 +250,22 @@ def preview_words(step: int) -> str:
     return "" if step == 1 else f"; preview: one voxel in {step} is drawn, each way"
 
 
-def of_part(part: Part) -> Shown:
-    """A part in the colours of its materials."""
+def in_materials(part: Part) -> Solid:
+    """A part in the colours of its materials, in space."""
     drawn, step = coarser(part)
     colours = palette_rgb(part)
+    return Solid(part, drawn, step, lambda voxel: colours[drawn.labels[tuple(voxel.T)]])
 
-    def surface(axis: str, share: float) -> tuple[Quads, Rgb]:
-        quads = quads_of(drawn, cut_mask(drawn, AXES.index(axis), share))
-        return quads, colours[drawn.labels[tuple(quads.voxel.T)]]
 
+def of_part(part: Part) -> Shown:
+    """A part in the colours of its materials."""
+    solid = in_materials(part)
     return Shown(
         title=part.name,
         html=part_table(part),
         fields=(material_field(part),),
-        surface=surface,
+        solid=solid,
         legend=_material_legend(part),
-        note=preview_words(step).removeprefix("; "),
+        note=preview_words(solid.step).removeprefix("; "),
         **slices_of(part),
     )

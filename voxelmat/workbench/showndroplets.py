@@ -14,7 +14,6 @@ from voxelmat.printing.job import PrintJob
 from voxelmat.printing.source import source_of
 from voxelmat.units import number
 from voxelmat.workbench.shown import Field, Rgb, Shown
-from voxelmat.workbench.voxfaces import Quads
 from voxelmat.workflow.colours import palette_rgb, resin_colours
 
 __all__ = ["of_droplets"]
@@ -82,9 +81,6 @@ def of_droplets(
             f"y upwards, {number(low[1], 4)} to {number(high[1], 4)} mm"
         )
 
-    def surface(axis: str, share: float) -> tuple[Quads, Rgb]:
-        return still.surface(axis, share)
-
     items = [{"colour": c, "text": n} for n, c in resin_colours(part).items()]
     if job.draws_support:
         items.append({"colour": "#c4c4c4", "text": "support"})
@@ -99,7 +95,7 @@ def of_droplets(
         where=where,
         frame=frame,
         fields=(Field(name="droplets", slice_rgb=slice_rgb, legend={"items": items}),),
-        surface=surface,
+        solid=still.solid,
         legend=still.legend,
         note=still.note,
     )

@@ -10,6 +10,7 @@ from numpy.typing import NDArray
 
 from voxelmat.errors import InputError
 from voxelmat.model.html import table
+from voxelmat.model.part import Part
 from voxelmat.model.result import StaticResult
 from voxelmat.units import number, quantity
 from voxelmat.workbench.shown import (
@@ -20,7 +21,9 @@ from voxelmat.workbench.shown import (
     scalar_field,
     slices_of,
 )
-from voxelmat.workbench.voxfaces import Quads, coarser, cut_mask, quads_of
+from voxelmat.workbench.solid import Solid
+from voxelmat.workbench.voxfaces import coarser
+from voxelmat.workflow.colours import palette_rgb
 from voxelmat.workflow.report_fields import magnification
 from voxelmat.workflow.verdicts import safety_factors
 
@@ -87,7 +90,12 @@ def field_values(result: StaticResult, field: str) -> tuple[Values, str]:
 
 
 def of_result(
-    result: StaticResult, field: str = "displacement", factor: float | None = None
+    result: StaticResult,
+    field: str = "displacement",
+    factor: float | None = None,
+    *,
+    below: float | None = None,
+    top: float | None = None,
 ) -> Shown:
     """A solved load case: the deformed part, coloured by a field.
 
@@ -95,45 +103,111 @@ def of_result(
     ----------
     result : StaticResult
     field : str
-        One of `FIELDS`.
+        One of `FIELDS`, or "material".
     factor : float, optional
         By which displacements are drawn larger; chosen to be visible where left out.
+    below : float, optional
+        Draw only voxels whose safety (strength over von Mises stress) is below this in full; the
+        others are ghosts.
+    top : float, optional
+        Value of the last colour, so that two pictures have one scale; the field's largest where
+        left out.
     """
     part = result.part
     if factor is None:
         factor = magnification(result)
-    values, _ = field_values(result, field)
-    fields: list[Field] = []
-    for name in (field, *(n for n in ("displacement", "von Mises stress") if n != field)):
-        kind = FIELDS[name]
-        shown, paint = scalar_field(
-            name, kind.unit, kind.values(result), part.solid, kind.cmap, kind.decades
-        )
-        if name == field:
-            colour = paint
-        fields.append(shown)
+    fields = _fields(result, field, top)
     drawn, step = coarser(part)
     # Nodes of the coarser grid are every n-th of the part's; the last one may lie beyond it.
     pick = [
         np.minimum(np.arange(n + 1) * step, m)
         for n, m in zip(drawn.grid.shape, part.grid.shape, strict=True)
     ]
-    shift = factor * result.displacement[np.ix_(*pick)]
-    thin = values[::step, ::step, ::step]
+    only, words = None, ""
+    if below is not None:
+        weak = _weak(result, below)
+        only = weak[::step, ::step, ::step]
+        words = (
+            f"; in full: safety below {number(below)}, {np.count_nonzero(weak):,} of "
+            f"{np.count_nonzero(part.solid):,} voxels"
+        )
+    solid = Solid(
+        part,
+        drawn,
+        step,
+        _paint(result, drawn, step, fields, field),
+        shift=factor * result.displacement[np.ix_(*pick)],
+        only=only,
+    )
 
-    def surface(axis: str, share: float) -> tuple[Quads, Rgb]:
-        quads = quads_of(drawn, cut_mask(drawn, "xyz".index(axis), share), shift)
-        return quads, colour(thin[tuple(quads.voxel.T)])
+    def repaint(paint: str, factor: float | None) -> Shown:
+        return of_result(result, paint, factor, below=below)
 
+    made = {f.name: f for f, _ in fields}
+    materials = material_field(part)
+    legend = materials.legend if field == "material" else fields[0][0].legend
     return Shown(
         title=f"{part.name}, load case {result.load_case.name}",
         html=result_table(result),
-        fields=(*fields, material_field(part)),
-        surface=surface,
-        legend=fields[0].legend,
-        note=f"deformed {factor:g} times as much as in truth{preview_words(step)}",
+        fields=(*made.values(), materials),
+        solid=solid,
+        legend=legend,
+        note=f"deformed {factor:g} times as much as in truth{words}{preview_words(step)}",
+        painted=field,
+        paints=("material", *FIELDS),
+        factor=factor,
+        repaint=repaint,
         **slices_of(part),
     )
+
+
+_Painted = tuple[Field, Callable[[Values], Rgb]]
+
+
+def _fields(result: StaticResult, field: str, top: float | None) -> list[_Painted]:
+    """The field that is asked for first, then those that slices always offer."""
+    if field != "material":
+        field_values(result, field)  # refuses what is none
+    names = dict.fromkeys((field, "displacement", "von Mises stress"))
+    made = []
+    for name in names:
+        if name == "material":
+            continue
+        kind = FIELDS[name]
+        made.append(
+            scalar_field(
+                name,
+                kind.unit,
+                kind.values(result),
+                result.part.solid,
+                kind.cmap,
+                kind.decades,
+                top if name == field else None,
+            )
+        )
+    return made
+
+
+def _paint(
+    result: StaticResult, drawn: Part, step: int, fields: list[_Painted], field: str
+) -> Callable[[NDArray[np.intp]], Rgb]:
+    """Colours of the voxels that are drawn."""
+    if field == "material":
+        colours = palette_rgb(result.part)
+        return lambda voxel: colours[drawn.labels[tuple(voxel.T)]]
+    shown, colour = fields[0]
+    if shown.values is None:
+        raise InputError(f"The field '{field}' has no numbers.")
+    thin = shown.values[::step, ::step, ::step]
+    return lambda voxel: colour(thin[tuple(voxel.T)])
+
+
+def _weak(result: StaticResult, below: float) -> NDArray[np.bool_]:
+    """Voxels whose safety lies below a number; those without a known strength do not."""
+    if not below > 0:
+        raise InputError(f"The safety must be above 0; got {below}.")
+    with np.errstate(invalid="ignore"):
+        return np.asarray(safety_factors(result) < below)
 
 
 def result_table(result: StaticResult) -> str:

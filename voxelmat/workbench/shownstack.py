@@ -16,8 +16,7 @@ from voxelmat.model.material import Constant, Material
 from voxelmat.model.part import Part
 from voxelmat.printing.readback import Channel, Stack
 from voxelmat.units import number
-from voxelmat.workbench.shown import AXES, Field, Rgb, Shown
-from voxelmat.workbench.voxfaces import Quads, cut_mask, quads_of
+from voxelmat.workbench.shown import Field, Rgb, Shown, in_materials
 from voxelmat.workflow.colours import OKABE_ITO, palette_rgb, resin_colours
 
 __all__ = ["of_stack"]
@@ -105,10 +104,6 @@ def of_stack(stack: Stack) -> Shown:
     def slice_rgb(axis: str, index: int) -> Rgb:
         return np.asarray(colours[codes(index).T[::-1]])
 
-    def surface(axis: str, share: float) -> tuple[Quads, Rgb]:
-        quads = quads_of(part, cut_mask(part, AXES.index(axis), share))
-        return quads, colours[part.labels[tuple(quads.voxel.T)]]
-
     def where(axis: str, index: int) -> str:
         height = (index + 0.5) * pitch[2]
         shown = "every site" if step == 1 else f"one site in {step} each way"
@@ -128,7 +123,7 @@ def of_stack(stack: Stack) -> Shown:
             f"y upwards, {number(stack.shape[1] * pitch[1])} mm"
         ),
         fields=(Field(name="resin", slice_rgb=slice_rgb, legend={"items": items}),),
-        surface=surface,
+        solid=in_materials(part),
         legend={"items": items},
         note=f"preview: one site in {thin} each way, one layer in {layers}",
     )

@@ -1,21 +1,32 @@
-"""The part in space: JPEG frames over the notebook's own channel, turned with mouse or keys."""
+"""The part in space: JPEG frames over the notebook's own channel, and all that is done on them."""
 
 from __future__ import annotations
 
 import threading
+from collections.abc import Callable
+from dataclasses import replace
+from pathlib import Path
 from typing import Any
 
 import anywidget
+import numpy as np
 import traitlets
 
-from voxelmat.workbench.render import Scene
+from voxelmat.errors import InputError
+from voxelmat.io.atomic import write_bytes
+from voxelmat.units import number
+from voxelmat.workbench.captions import Line
+from voxelmat.workbench.eye import VIEWS, Eye
+from voxelmat.workbench.look import Look
+from voxelmat.workbench.marks import Marks, tinted
+from voxelmat.workbench.picking import Hit
+from voxelmat.workbench.render import SIZE, Scene
 from voxelmat.workbench.shown import Shown
 from voxelmat.workbench.theme import script, style
 
 __all__ = ["SpaceView"]
 
-
-_VIEWS = {"x": (0.0, 0.0), "y": (-90.0, 0.0), "z": (-90.0, 89.0), "i": (-62.0, 24.0)}
+_MOVING, _STILL = 60, 85  # JPEG quality
 
 
 class SpaceView(anywidget.AnyWidget):
@@ -24,6 +35,20 @@ class SpaceView(anywidget.AnyWidget):
     Parameters
     ----------
     shown : Shown
+    look : Look, optional
+        What of it is drawn; the half in front is cut away where left out.
+    eye : Eye, optional
+    size : tuple of int
+        Width and height of the pictures, pixels.
+
+    Attributes
+    ----------
+    ask : callable or None
+        ``ask(message)`` is given what was done on the picture first; True where it did it.
+    changed : callable or None
+        ``changed(what)`` after the "look" or the "eye" is another one.
+    picked : callable or None
+        ``picked(hit, facts)`` after a place was clicked.
 
     Raises
     ------
@@ -31,84 +56,374 @@ class SpaceView(anywidget.AnyWidget):
         Where the machine cannot draw with OpenGL; the message says what to install.
     """
 
-    _esm = script("space.js")
-    _css = style()
+    _esm = script("spacebar.js", "space.js")
+    _css = style("space.css")
     frame = traitlets.Bytes(b"").tag(sync=True)
     seq = traitlets.Int(0).tag(sync=True)
+    ack = traitlets.Int(0).tag(sync=True)
     label = traitlets.Unicode("").tag(sync=True)
     legend = traitlets.Dict().tag(sync=True)
+    tools = traitlets.Dict().tag(sync=True)
+    said = traitlets.Unicode("").tag(sync=True)
     status = traitlets.Unicode("").tag(sync=True)
-    cut = traitlets.Float(0.5).tag(sync=True)
-    cut_axis = traitlets.Unicode("y").tag(sync=True)
 
-    def __init__(self, shown: Shown, **traits: Any) -> None:
-        self._shown = shown
+    def __init__(
+        self,
+        shown: Shown,
+        look: Look | None = None,
+        eye: Eye | None = None,
+        size: tuple[int, int] = SIZE,
+        **traits: Any,
+    ) -> None:
+        self._shown, self._marks = shown, Marks()
+        self._look = Look(share=0.5) if look is None else look
+        self._extra: dict[str, Any] = {}
+        self._more_notes: tuple[str, ...] = ()
         self._lock = threading.RLock()
-        # The first drawing is of the whole, so that the eye knows its size; then it is cut open.
-        self._scene = Scene(*shown.surface("y", 0.0), note=shown.note)
-        super().__init__(label=f"3-D view of {shown.title}", legend=shown.legend, **traits)
+        self._hits: list[Hit] = []
+        self._measuring = False
+        self.ask: Callable[[dict[str, Any]], bool] | None = None
+        self.changed: Callable[[str], None] | None = None
+        self.picked: Callable[[Hit, dict[str, Any]], None] | None = None
+        self._scene = Scene(*shown.solid.box, size)
+        if eye is not None:
+            self._scene.eye = eye
+        super().__init__(**traits)
         self.on_msg(self._told)
-        self.cut_away(self.cut, self.cut_axis)
+        self.show(shown)
 
-    def cut_away(self, share: float, axis: str = "y") -> None:
-        """Take away what lies below `share` (0 to 0.95) of the box along `axis`."""
-        with self._lock:
-            self.cut, self.cut_axis = min(max(float(share), 0.0), 0.95), axis
-            self._scene.swap(*self._shown.surface(axis, self.cut))
-            self._push()
+    # ------------------------------------------------------------------ what is drawn
+    def show(
+        self,
+        shown: Shown,
+        marks: Marks | None = None,
+        tools: dict[str, Any] | None = None,
+        notes: tuple[str, ...] = (),
+    ) -> None:
+        """Draw something else from now on, cut and seen as before.
 
-    def show(self, shown: Shown) -> None:
-        """Draw something else from now on, cut and seen as before."""
+        Parameters
+        ----------
+        shown : Shown
+        marks : Marks, optional
+            Loads and supports on it.
+        tools : dict, optional
+            What else the tool bar offers; see `voxelmat.workbench.stage.Stage`.
+        notes : tuple of str
+            Written into the picture besides what is known of the part.
+        """
         with self._lock:
-            self._shown = shown
-            self._scene.note = shown.note
+            if not np.array_equal(shown.solid.box, self._shown.solid.box):
+                self._hits = []
+                self._scene.frame(*shown.solid.box)
+            self._shown, self._marks = shown, marks or Marks()
+            self._extra, self._more_notes = dict(tools or {}), notes
             self.label, self.legend = f"3-D view of {shown.title}", shown.legend
-            self.cut_away(self.cut, self.cut_axis)
+            self._draw()
 
+    def cut_away(self, share: float, axis: str = "y", above: bool = False) -> None:
+        """Take away what lies below a plane, or above it.
+
+        Parameters
+        ----------
+        share : float
+            Where the plane lies, 0 to 1 of the box along `axis`.
+        axis : str
+        above : bool
+        """
+        self._looks(replace(self._look, share=share, axis=axis, above=above))
+
+    def see(self, name: str, how: str) -> None:
+        """Show a material, a blend or a body, hide it, or leave its ghost.
+
+        Parameters
+        ----------
+        name : str
+            As in the tool bar: a resin's name, "blends of ...", "body ...".
+        how : str
+            "shown", "ghost" or "hidden".
+
+        Raises
+        ------
+        InputError
+            If there is nothing of that name.
+        """
+        known = [g.name for g in self._shown.solid.groups]
+        if name not in known:
+            raise InputError(f"There is no '{name}' in the picture; there are {', '.join(known)}.")
+        self._looks(self._look.seen(name, how))
+
+    @property
+    def look(self) -> Look:
+        """What of the part is drawn."""
+        return self._look
+
+    @property
+    def eye(self) -> Eye:
+        """Where the viewer stands."""
+        return self._scene.eye
+
+    def match(self, look: Look) -> None:
+        """Draw what another view draws, without telling anybody."""
+        with self._lock:
+            self._look = look
+            self._draw()
+
+    def _looks(self, look: Look) -> None:
+        self.match(look)
+        self._tell("look")
+
+    def _tell(self, what: str) -> None:
+        if self.changed is not None:
+            self.changed(what)
+
+    def _draw(self, quality: int = _STILL) -> None:
+        solid = self._shown.solid
+        self._surface = solid.surface(self._look)
+        rgb = tinted(solid, self._surface, self._marks.tints)
+        self._scene.put(self._surface, rgb, self._marks.arrows)
+        first = "; ".join(t for t in (self._shown.note, *self._surface.words) if t)
+        second = "; ".join(self._marks.notes)
+        self._scene.notes = [t for t in (first, second, *self._more_notes) if t]
+        self._scene.ruler = self._ruler()
+        self._push(quality)
+
+    def _push(self, quality: int = _STILL) -> None:
+        picture = self._scene.jpeg(quality)
+        with self.hold_sync():
+            self.tools = self._tools()
+            self.frame = picture
+            self.status = ""
+            self.seq += 1
+
+    def _tools(self) -> dict[str, Any]:
+        """What the tool bar shows."""
+        look, solid, shown = self._look, self._shown.solid, self._shown
+        n = solid.drawn.grid.shape["xyz".index(look.axis)]
+        return {
+            "materials": [[g.name, g.colour, look.how(g.name)] for g in solid.groups],
+            "paints": list(shown.paints),
+            "painted": shown.painted,
+            "factor": shown.factor,
+            "axis": look.axis,
+            "share": look.share,
+            "above": look.above,
+            "step": 1.0 / n,
+            "plane": f"{look.axis} = {number(solid.plane_mm(look))} mm",
+            "measuring": self._measuring,
+            **self._extra,
+        }
+
+    # ------------------------------------------------------------------ the eye
     def look_from(self, azimuth: float, elevation: float) -> None:
         """Stand at an azimuth round z from x+ and an elevation, degrees."""
         with self._lock:
-            self._scene.eye.azimuth, self._scene.eye.elevation = azimuth, elevation
+            self.eye.azimuth, self.eye.elevation = azimuth, elevation
+            self._push()
+        self._tell("eye")
+
+    def stand(self, eye: Eye, moving: bool = False) -> None:
+        """Stand where another viewer stands."""
+        with self._lock:
+            self._scene.eye = replace(eye)
+            self._push(_MOVING if moving else _STILL)
+
+    def room_for(self, half_mm: float) -> float:
+        """Have room for at least this half height at zoom 1; what it is afterwards, mm."""
+        with self._lock:
+            return self._scene.room_for(half_mm)
+
+    def fit(self) -> None:
+        """Move and zoom so that what is drawn fills the picture."""
+        with self._lock:
+            self._scene.fit()
+            self._push()
+        self._tell("eye")
+
+    # ------------------------------------------------------------------ pointing
+    def pick(self, x: float = 0.5, y: float = 0.5) -> dict[str, Any] | None:
+        """What lies at a place of the picture, shares of its width and height from the top left.
+
+        Returns
+        -------
+        dict or None
+            ``place_mm`` on the part before it deforms, ``material``, ``blend``, ``body``,
+            ``voxel`` and ``fields``; None where there is nothing opaque.
+        """
+        with self._lock:
+            right, up = self._scene.line_of_sight(x, y)
+            solid = self._shown.solid
+            hit = solid.pick(self._surface, self.eye.axes(), right, up, self._look)
+            if hit is None:
+                self.said = "Nothing opaque lies there."
+                return None
+            facts = {
+                **solid.material_at(hit.voxel),
+                "fields": self._shown.values_at(hit.voxel),
+            }
+            self._hits = [*self._hits, hit][-2:] if self._measuring and len(self._hits) < 2 else [hit]
+            self._scene.ruler = self._ruler()
+            self.said = self._words(hit, facts)
+            self._push()
+        if self.picked is not None:
+            self.picked(hit, facts)
+        return {"place_mm": hit.place_mm, **facts}
+
+    def measure(self, on: bool) -> None:
+        """With it on, two clicks give the distance between two places; off forgets them."""
+        with self._lock:
+            self._measuring = bool(on)
+            self._hits = []
+            self.said = "Click two places on the part." if on else ""
+            self._scene.ruler = None
             self._push()
 
+    @property
+    def distance(self) -> tuple[float, tuple[float, float, float]] | None:
+        """Distance of the two places that were measured, mm, and its part along x, y, z."""
+        if not self._measuring or len(self._hits) < 2:
+            return None
+        first, second = (np.array(h.place_mm) for h in self._hits)
+        dx, dy, dz = map(float, second - first)
+        return float(np.linalg.norm(second - first)), (dx, dy, dz)
+
+    def _ruler(self) -> Line | None:
+        if not self._hits:
+            return None
+        moved = self._shown.solid.moved(np.array([h.place_mm for h in self._hits]))
+        far = self.distance
+        return Line(
+            places=tuple(tuple(map(float, p)) for p in moved),
+            text="" if far is None else f"{number(far[0])} mm",
+        )
+
+    def _words(self, hit: Hit, facts: dict[str, Any]) -> str:
+        at = ", ".join(number(v) for v in hit.place_mm)
+        body = f", body {facts['body']}" if facts["body"] else ""
+        fields = "".join(f"; {words}" for words in self._shown.words_at(hit.voxel))
+        text = f"At {at} mm: {facts['material']}{body}{fields}."
+        far = self.distance
+        if far is not None:
+            dx, dy, dz = map(number, far[1])
+            before = " before it deforms" if self._shown.factor else ""
+            text = f"Distance {number(far[0])} mm{before}: x {dx}, y {dy}, z {dz} mm. {text}"
+        elif self._measuring:
+            text = f"{text} Click the second place."
+        return text
+
+    # ------------------------------------------------------------------ pictures
     def jpeg(self) -> bytes:
         """The present picture."""
         return bytes(self.frame)
+
+    def png(self) -> bytes:
+        """The present picture, twice as large."""
+        with self._lock:
+            return self._scene.png()
+
+    def screenshot(self, path: str | Path) -> Path:
+        """Write the present picture as PNG, twice as large.
+
+        Raises
+        ------
+        ResourceError
+            If it cannot be written.
+        """
+        target = Path(path)
+        if target.suffix.lower() != ".png":
+            raise InputError(f"A picture is written as .png; got '{target.name}'.", key="path")
+        write_bytes(target, self.png())
+        return target
 
     def close(self) -> None:
         """Free the plotter and the channel."""
         self._scene.close()
         super().close()
 
-    def _push(self, quality: int = 85) -> None:
-        picture = self._scene.jpeg(quality)
-        with self.hold_sync():
-            self.frame = picture
-            self.status = ""
-            self.seq += 1
-
+    # ------------------------------------------------------------------ from the screen
     def _told(self, _: Any, message: dict[str, Any], buffers: Any) -> None:
         # Runs beside cells, on other threads; an exception would be lost, so it is shown.
         try:
-            with self._lock:
+            if not self._scene.closed and not (self.ask is not None and self.ask(message)):
                 self._act(message)
         except Exception as error:  # noqa: BLE001
             self.status = f"Error: {error}"
+        finally:
+            if not self._scene.closed:
+                self.ack += 1
 
     def _act(self, message: dict[str, Any]) -> None:
-        if self._scene.closed:
-            return
         kind = message["kind"]
-        if kind == "cut":
-            self.cut_away(float(message["share"]), str(message["axis"]))
-        elif kind == "view":
-            self.look_from(*_VIEWS[message["to"]])
-        elif kind == "turn":
-            self._scene.eye.turn(0.5 * float(message["dx"]), 0.5 * float(message["dy"]))
-            self._push(60 if message.get("moving") else 85)
-        elif kind == "zoom":
-            eye = self._scene.eye
-            eye.zoom = min(50.0, max(0.2, eye.zoom * float(message["factor"])))
-            self._push()
+        moving = bool(message.get("moving"))
+        if kind in ("turn", "pan", "zoom", "view", "still"):
+            with self._lock:
+                self._move(kind, message)
+                self._push(_MOVING if moving else _STILL)
+            self._tell("moving" if moving else "eye")
+        elif kind == "fit":
+            self.fit()
+        elif kind == "cut":
+            share, axis = float(message["share"]), str(message["axis"])
+            self.cut_away(share, axis, bool(message["above"]))
+        elif kind == "other side":
+            self._looks(self._look.turned_over())
+        elif kind == "slide":
+            self._slide(float(message["dx"]), float(message["dy"]))
+        elif kind == "pick":
+            self.pick(float(message["x"]), float(message["y"]))
+        elif kind == "measure":
+            self.measure(bool(message["on"]))
+        elif kind == "see":
+            self.see(str(message["name"]), str(message["how"]))
+        elif kind == "picture":
+            self.send({"kind": "picture", "name": f"{_plain(self._shown.title)}.png"}, [self.png()])
+        elif kind == "paper":
+            with self._lock:
+                self._scene.dark = bool(message["dark"])
+                self._push()
+        elif kind in ("paint", "factor") and self._shown.repaint is not None:
+            self._repaint(kind, message["value"])
         else:
-            self._push()
+            raise InputError(f"The picture cannot do '{kind}'.")
+
+    def _move(self, kind: str, message: dict[str, Any]) -> None:
+        eye = self.eye
+        if kind == "turn":
+            eye.turn(0.5 * float(message["dx"]), 0.5 * float(message["dy"]))
+        elif kind == "pan":
+            # Shares of the picture's height, whatever its size on the screen.
+            span = self._scene.size[1] * self._scene.pixel_mm
+            eye.pan(span * float(message["dx"]), -span * float(message["dy"]))
+        elif kind == "zoom":
+            eye.nearer(float(message["factor"]))
+        elif kind == "view":
+            eye.azimuth, eye.elevation = VIEWS[message["to"]]
+
+    def _slide(self, dx: float, dy: float) -> None:
+        """Move the cutting plane with the pointer: shares of the picture's height."""
+        a = "xyz".index(self._look.axis)
+        across = self.eye.axes()[:2, a]
+        length = float(np.hypot(*across))
+        # An axis that points at the viewer has no direction in the picture: then up is onwards.
+        along = (dx * across[0] - dy * across[1]) / length**2 if length > 0.2 else -dy
+        low, high = self._shown.solid.box
+        span = self._scene.size[1] * self._scene.pixel_mm
+        self._looks(replace(self._look, share=self._look.share + along * span / (high - low)[a]))
+
+    def _repaint(self, kind: str, value: Any) -> None:
+        shown = self._shown
+        if shown.repaint is None:
+            return
+        if kind == "paint":
+            self.show(shown.repaint(str(value), shown.factor))
+            return
+        try:
+            factor = float(value)
+        except (TypeError, ValueError):
+            raise InputError(f"The factor of the displacements is a number; got '{value}'.") from None
+        self.show(shown.repaint(shown.painted, factor))
+
+
+def _plain(title: str) -> str:
+    """A title as a file name."""
+    return "".join(c if c.isalnum() or c in "-_" else "-" for c in title)[:80] or "picture"

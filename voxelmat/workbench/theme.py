@@ -14,14 +14,14 @@ def _text(name: str) -> str:
     return (files("voxelmat.workbench") / "static" / name).read_text("utf-8")
 
 
-def script(name: str) -> str:
-    """One view's script, with the pieces that all share before it."""
-    return _text("helpers.js") + _text(name)
+def script(*names: str) -> str:
+    """One view's script, from one file or more, with the pieces that all share before it."""
+    return "".join(map(_text, ("helpers.js", *names)))
 
 
-def style() -> str:
-    """The style sheet of all views."""
-    return _text("views.css")
+def style(*more: str) -> str:
+    """The style sheet of all views, and what one view needs besides."""
+    return "".join(map(_text, ("views.css", *more)))
 
 
 def notice(text: str) -> ipywidgets.Widget:

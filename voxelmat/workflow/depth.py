@@ -64,15 +64,18 @@ class Shot:
         return (right - self.left) / self.pixel, (self.top - up) / self.pixel
 
 
-def faces_of_cut(part: Part, shown: NDArray[np.bool_]) -> tuple[Faces, NDArray[np.bool_]]:
+def faces_of_cut(
+    part: Part, shown: NDArray[np.bool_], outer: Faces | None = None
+) -> tuple[Faces, NDArray[np.bool_]]:
     """Exposed faces of the voxels in `shown`, and which of them are cut faces.
 
     Cut faces border material that is not shown; their normal is that of the voxel face, while
-    the others keep the true normal of the whole part's surface.
+    the others keep the true normal of the whole part's surface. `outer` are the exposed faces of
+    the whole part, where they are known already.
     """
     solid = carriers(part)
     shown = shown & solid
-    outer = exposed_faces(part)
+    outer = exposed_faces(part) if outer is None else outer
     outer = outer.select(shown[tuple(outer.voxel.T)])
     centres, spacing = part.grid.centres(), part.grid.spacing
     found = [(outer, np.zeros(len(outer), dtype=bool))]

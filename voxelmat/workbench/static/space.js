@@ -1,74 +1,121 @@
-// JPEG frames of the part in space, turned with mouse or keys, cut away with a slider.
+// JPEG frames of the part in space: turned, moved, cut, picked from and measured; its tool bar.
 function render({model, el}) {
-  const image = element('img', {tabIndex: 0, draggable: false});
+  const image = element('img', {tabIndex: 0, draggable: false, className: 'space'});
   image.setAttribute('aria-description',
-    'Drag or arrow keys turn, plus and minus zoom, x, y, z and i choose a view.');
-  const cut = element('input', {type: 'range', min: 0, max: 0.95, step: 0.01});
-  cut.setAttribute('aria-label', 'Cut away');
-  const axis = element('select', {}, ...['x', 'y', 'z'].map(a => element('option', {value: a, textContent: a})));
+    'Drag or arrow keys turn; shift with them moves; plus and minus zoom; x, y, z and i choose a ' +
+    'view; f fits; [ and ] move the cut, c changes its axis, o its side; p picks what lies in the ' +
+    'middle; m measures.');
+  const cross = element('span', {className: 'cross', ariaHidden: 'true'});
+  const frame = element('div', {className: 'picture'}, image, cross);
+  const said = element('div', {className: 'said', role: 'status'});
   const key = element('div', {className: 'row legend'});
   const line = element('div', {className: 'status', role: 'status'});
-  const row = element('div', {className: 'row'}, element('label', {}, 'Cut away ', cut),
-    element('label', {}, 'along ', axis),
-    element('span', {}, 'Drag to turn, wheel to zoom, keys x y z i for views.'));
-  el.append(element('div', {className: 'vm'}, row, image, key, line));
-  let address = null, drag = null, busy = false, pending = null, sent = 0;
+  const queue = new Map();
+  let address = null, drag = null, busy = false, sent = 0, sliding = 0;
+
+  // One message on its way; moves add up, of anything else the last one counts.
+  function send(message) {
+    const old = queue.get(message.kind);
+    if (old && ['turn', 'pan', 'slide'].includes(message.kind)) {
+      message = {...message, dx: old.dx + message.dx, dy: old.dy + message.dy};
+    } else if (old && message.kind === 'zoom') message = {...message, factor: old.factor * message.factor};
+    const name = ['see', 'pick'].includes(message.kind) ? `${message.kind} ${JSON.stringify(message)}` : message.kind;
+    queue.delete(name);
+    queue.set(name, message);
+    next();
+  }
+  function next() {
+    if (busy || !queue.size) return;
+    const [name, message] = queue.entries().next().value;
+    queue.delete(name);
+    busy = true; sent = performance.now();
+    model.send(message);
+    setTimeout(() => { if (busy && performance.now() - sent > 4900) { busy = false; next(); } }, 5000);
+  }
+  const tools = toolbar(model, send, () => sliding = performance.now());
+  el.append(element('div', {className: 'vm vm-space'}, tools.node, frame, said, key, line));
 
   function show() {
     image.alt = model.get('label');
-    cut.value = model.get('cut'); axis.value = model.get('cut_axis');
     legend(model, key);
+    const found = model.get('tools');
+    if (found.painted === 'material') key.replaceChildren();   // the tool bar names them
+    tools.update(found, performance.now() - sliding > 600);
+    said.textContent = model.get('said');
     const data = model.get('frame');
     if (!data.byteLength) return;
-    const old = address;
+    const old = address, seq = model.get('seq');
     address = URL.createObjectURL(new Blob([data], {type: 'image/jpeg'}));
-    image.onload = () => {
-      if (old) URL.revokeObjectURL(old);
-      image.dataset.seq = model.get('seq');
-      busy = false;
-      if (pending) { const next = pending; pending = null; send(next); }
-    };
+    image.onload = () => { if (old) URL.revokeObjectURL(old); image.dataset.seq = seq; };
     image.src = address;
   }
-  function send(message) {                           // one frame on its way, drags add up
-    if (busy) {
-      if (pending && pending.kind === 'turn' && message.kind === 'turn') {
-        pending.dx += message.dx; pending.dy += message.dy;
-      } else pending = message;
-      return;
-    }
-    busy = true; sent = performance.now();
-    model.send(message);
-    setTimeout(() => { if (busy && performance.now() - sent > 4900) busy = false; }, 5000);
-  }
+  const high = () => image.getBoundingClientRect().height || 1;
+  const share = e => {
+    const box = image.getBoundingClientRect();
+    return [(e.clientX - box.left) / box.width, (e.clientY - box.top) / box.height];
+  };
   image.addEventListener('pointerdown', e => {
-    image.setPointerCapture(e.pointerId); drag = [e.clientX, e.clientY]; image.focus(); e.preventDefault();
+    if (e.button > 1) return;
+    image.setPointerCapture(e.pointerId);
+    const kind = e.altKey || e.ctrlKey ? 'slide' : e.shiftKey || e.button === 1 ? 'pan' : 'turn';
+    drag = {kind, x: e.clientX, y: e.clientY, far: 0, plain: e.button === 0 && kind === 'turn'};
+    image.focus({preventScroll: true}); e.preventDefault();
   });
   image.addEventListener('pointermove', e => {
     if (!drag) return;
-    send({kind: 'turn', dx: e.clientX - drag[0], dy: e.clientY - drag[1], moving: true});
-    drag = [e.clientX, e.clientY];
+    const dx = e.clientX - drag.x, dy = e.clientY - drag.y;
+    drag.far += Math.abs(dx) + Math.abs(dy);
+    if (drag.far < 4) return;                          // a click trembles
+    const by = drag.kind === 'turn' ? 1 : 1 / high();
+    send({kind: drag.kind, dx: dx * by, dy: dy * by, moving: true});
+    drag.x = e.clientX; drag.y = e.clientY;
   });
-  const release = () => { if (drag) { drag = null; send({kind: 'still'}); } };
-  image.addEventListener('pointerup', release);
-  image.addEventListener('pointercancel', release);
+  image.addEventListener('pointerup', e => {
+    if (!drag) return;
+    const {far, plain} = drag;
+    drag = null;
+    if (far >= 4) send({kind: 'still'});
+    else if (plain) { const [x, y] = share(e); send({kind: 'pick', x, y}); }
+  });
+  image.addEventListener('pointercancel', () => { drag = null; send({kind: 'still'}); });
+  image.addEventListener('auxclick', e => e.preventDefault());
   image.addEventListener('wheel', e => {
     send({kind: 'zoom', factor: e.deltaY < 0 ? 1.1 : 1 / 1.1}); e.preventDefault();
   }, {passive: false});
   image.addEventListener('keydown', e => {
-    const turn = {ArrowLeft: [-20, 0], ArrowRight: [20, 0], ArrowUp: [0, -20], ArrowDown: [0, 20]}[e.key];
-    if (turn) send({kind: 'turn', dx: turn[0], dy: turn[1]});
+    const arrow = {ArrowLeft: [-1, 0], ArrowRight: [1, 0], ArrowUp: [0, -1], ArrowDown: [0, 1]}[e.key];
+    if (e.ctrlKey || e.metaKey || e.altKey) return;
+    if (arrow && e.shiftKey) send({kind: 'pan', dx: 0.05 * arrow[0], dy: 0.05 * arrow[1]});
+    else if (arrow) send({kind: 'turn', dx: 20 * arrow[0], dy: 20 * arrow[1]});
     else if (e.key === '+' || e.key === '=') send({kind: 'zoom', factor: 1.1});
     else if (e.key === '-') send({kind: 'zoom', factor: 1 / 1.1});
-    else if ('xyzi'.includes(e.key)) send({kind: 'view', to: e.key});
-    else return;
+    else if (e.key === 'p') send({kind: 'pick', x: 0.5, y: 0.5});
+    else if (!tools.key(e.key)) return;
     e.preventDefault(); e.stopPropagation();
   });
-  cut.addEventListener('input', () => send({kind: 'cut', share: Number(cut.value), axis: axis.value}));
-  cut.addEventListener('keydown', e => e.stopPropagation());
-  axis.addEventListener('change', () => send({kind: 'cut', share: Number(cut.value), axis: axis.value}));
+  model.on('msg:custom', (message, buffers) => {
+    if (message.kind !== 'picture') return;
+    const url = URL.createObjectURL(new Blob([buffers[0]], {type: 'image/png'}));
+    const link = element('a', {href: url, download: message.name});
+    document.body.append(link); link.click(); link.remove();
+    setTimeout(() => URL.revokeObjectURL(url), 10000);
+  });
+  const paper = () => send({kind: 'paper', dark: document.body.dataset.jpThemeLight === 'false'});
+  const theme = new MutationObserver(paper);
+  theme.observe(document.body, {attributes: true, attributeFilter: ['data-jp-theme-light']});
+  const acknowledged = () => { busy = false; next(); };
+  const say = () => { said.textContent = model.get('said'); };
+  const complain = () => status(model, line);
   model.on('change:seq', show);
-  model.on('change:status', () => status(model, line));
-  show(); status(model, line);
+  model.on('change:ack', acknowledged);
+  model.on('change:said', say);
+  model.on('change:status', complain);
+  show(); complain();
+  if (document.body.dataset.jpThemeLight === 'false') paper();
+  return () => {
+    theme.disconnect();
+    model.off('change:seq', show); model.off('change:ack', acknowledged);
+    model.off('change:said', say); model.off('change:status', complain);
+  };
 }
 export default { render };
