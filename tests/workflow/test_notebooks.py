@@ -15,9 +15,27 @@ ROOT = Path(__file__).resolve().parents[2]
 FOLDER = ROOT / "notebooks"
 BOOKS = sorted(FOLDER.glob("*.ipynb"))
 
-#: What the tests set in the cell tagged "parameters": name to value.
+#: What the tests set in the cell tagged "parameters": name to value. PLACE is a folder of the test.
+PLACE = "a folder of the test"
 COARSE = {
-    "grip.ipynb": {"SPACING_MM": 3.0, "PRINTER": "invented-coarse", "SUPPORT": "machine"},
+    "bracket.ipynb": {"SPACING_MM": 2.7, "ITERATIONS": 5, "VOLUME": 0.8, "OUT": PLACE},
+    "grip.ipynb": {
+        "SPACING_MM": 3.0, "PRINTER": "invented-coarse", "SUPPORT": "machine", "OUT": PLACE,
+    },
+    "tray.ipynb": {
+        "PRINTER": "invented-coarse", "COPIES": {"foot": 1, "buffer": 1}, "MARKS": False,
+        "OUT": PLACE,
+    },
+    "workbench.ipynb": {"SPACING_MM": 4.0, "WORK": PLACE},
+}  # fmt: skip
+#: How many live views each shows, how many other pictures, and what it leaves in PLACE.
+SHOWN = {"bracket.ipynb": 2, "grip.ipynb": 4, "tray.ipynb": 1, "workbench.ipynb": 1}
+PICTURES = {"bracket.ipynb": 1, "grip.ipynb": 2, "tray.ipynb": 1, "workbench.ipynb": 0}
+LEFT = {
+    "bracket.ipynb": "bracket.npz",
+    "grip.ipynb": "report.html",
+    "tray.ipynb": "ticket.html",
+    "workbench.ipynb": "grip.toml",
 }
 
 
@@ -49,8 +67,9 @@ def test_runs_from_top_to_bottom(path, tmp_path, monkeypatch):
     book = _read(path)
     (cell,) = [c for c in book.cells if "parameters" in c.metadata.get("tags", [])]
     lines = cell.source.splitlines()
-    settings = {**COARSE[path.name], "OUT": str(tmp_path / "out")}
-    for name, value in settings.items():
+    place = tmp_path / "out"
+    for name, given in COARSE[path.name].items():
+        value = str(place) if given is PLACE else given
         (at,) = [n for n, line in enumerate(lines) if line.startswith(f"{name} = ")]
         lines[at] = f"{name} = {value!r}"
     cell.source = "\n".join(lines)
@@ -63,6 +82,9 @@ def test_runs_from_top_to_bottom(path, tmp_path, monkeypatch):
     warned = [o.text for o in outputs if o.get("name") == "stderr"]
     assert not warned, warned
     views = [o for o in outputs if "application/vnd.jupyter.widget-view+json" in o.get("data", {})]
-    assert len(views) == 4
+    assert len(views) == SHOWN[path.name]
     assert all("image/jpeg" in v["data"] for v in views)  # a picture without a kernel
-    assert (tmp_path / "out" / "report.html").stat().st_size > 100_000
+    pictures = [o for o in outputs if "image/png" in o.get("data", {})]
+    assert len(pictures) == PICTURES[path.name]
+    assert (place / LEFT[path.name]).stat().st_size > 1000
+    assert not list(FOLDER.glob("*/.*")), "something was written beside the demo's files"
