@@ -71,7 +71,7 @@ class Physics:
         system: Callable[..., Any] = LinearSystem,
     ) -> None:
         self.cases, self.tolerance = cases, tolerance
-        self._spacing, self._element, self._monitor = spacing, element, monitor
+        self.spacing, self.element, self.monitor = spacing, element, monitor
         self._system = system
         self._group = [self._first_alike(n) for n in range(len(cases))]
         self._systems: dict[int, Any] = {}
@@ -109,7 +109,7 @@ class Physics:
 
     def quiet(self) -> None:
         """No more reports, and so no more cancelling: for the last solves after a stop."""
-        self._monitor = SILENT
+        self.monitor = SILENT
 
     def warm_state(self) -> dict[str, Array]:
         """Last solutions by name; never changed in place."""
@@ -118,6 +118,17 @@ class Physics:
     def restore(self, warm: Mapping[str, Array]) -> None:
         """Start the next solves from these."""
         self._warm = dict(warm)
+
+    def recall(self, name: str) -> Array | None:
+        """What `remember` was last given under this name, from an earlier design."""
+        return self._warm.get(name)
+
+    def remember(self, name: str, value: Array) -> None:
+        """Keep an array of a response of its own physics for the next design.
+
+        It goes into checkpoints with the displacements, and must not be changed in place.
+        """
+        self._warm[name] = value
 
     def displacement(self, case: int) -> Array:
         """Of one load case, mm, (3, nz+1, ny+1, nx+1)."""
@@ -130,7 +141,7 @@ class Physics:
     def by_stiffness(self, u: Array, v: Array) -> dict[str, Array]:
         """v^T (dK / d lam, dK / d mu) u of each voxel."""
         f = self.fields
-        lam, mu = stiffness_forms(u, v, f.lam, f.mu, self._spacing, self._element)
+        lam, mu = stiffness_forms(u, v, f.lam, f.mu, self.spacing, self.element)
         return {"lam": lam, "mu": mu}
 
     def _solve(self, case: int, right: Array, name: str) -> Array:
@@ -139,8 +150,8 @@ class Physics:
             if group not in self._systems:
                 f, c = self.fields, self.cases[case]
                 self._systems[group] = self._system(
-                    f.lam, f.mu, self._spacing, c.fixed,
-                    springs=c.springs, element=self._element, monitor=self._monitor,
+                    f.lam, f.mu, self.spacing, c.fixed,
+                    springs=c.springs, element=self.element, monitor=self.monitor,
                 )  # fmt: skip
             solution = self._systems[group].solve(
                 right, x0=self._warm.get(name), tol=self.tolerance
