@@ -31,7 +31,7 @@ def test_an_export_is_that_of_the_pipeline(bench, small_design, tmp_path):
     assert len(rows[-1]["rows"]) == len(bench.printing.findings)
     bench.printing.show_layers()
     path = bench.printing.ticket()
-    assert path.read_text().lstrip().startswith("<!")
+    assert path.read_text("utf-8").lstrip().startswith("<!")
     bench.sections["printing"].act("manifest", None)
     name, data = bench.outbox.pop()
     assert name == "manifest.json"

@@ -49,7 +49,7 @@ def test_everything_from_the_shell(design, tmp_path, capsys):
     assert case["as_printed_energy_mJ"] != case["energy_mJ"]
     assert case["force_balance"] < 1e-6
     assert 0 < abs(case["estimated_displacement_error"]) < 0.5
-    page = (out / "report.html").read_text()
+    page = (out / "report.html").read_text("utf-8")
     assert "pad on a plate" in page
     assert "http://" not in page.replace("http://www.w3.org", "")
     stack = read_stack(out / "stack")

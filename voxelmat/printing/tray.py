@@ -259,11 +259,6 @@ def lay_out(
     InputError
         If something does not fit (each is named, with its size and the room left), overlaps or
         stands too close (with the place).
-
-    Examples
-    --------
-    >>> tray = lay_out([TrayEntry(part=grip, copies=4)], profile, job_number="J7")  # doctest: +SKIP
-    >>> stack = write_tray(tray, "stack")  # doctest: +SKIP
     """
     if not entries:
         raise InputError("A tray needs at least one part.", key="part")
