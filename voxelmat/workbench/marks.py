@@ -30,14 +30,15 @@ __all__ = ["Arrow", "Marks", "Tint", "marks_of", "tinted"]
 Double = NDArray[np.float64]
 _LOAD, _MOTION, _SUPPORT, _SPRING, _POINTED = "#D55E00", "#009E73", "#222222", "#0072B2", "#CC79A7"
 _ARROWS = 14  # of one load at most
-_LONGEST = 0.16  # of the diagonal of the part
+_LONGEST = 0.12  # of the diagonal of the part
 _SHORTEST = 0.25  # of the longest arrow, so that a small load is still seen
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Arrow:
-    """From `tail` to `tip`, mm, as drawn; `colour` is ``#rrggbb``."""
+    """From `tail` to `tip`, mm, as drawn; `place` is where it acts; `colour` is ``#rrggbb``."""
 
+    place: tuple[float, float, float]
     tail: tuple[float, float, float]
     tip: tuple[float, float, float]
     colour: str
@@ -231,14 +232,16 @@ def _arrows(solid: Solid, push: _Push) -> tuple[list[Arrow], list[str]]:
     lengths = longest * np.maximum(sizes / sizes.max(), _SHORTEST)
     starts = solid.moved(np.array(push.places))
     made = []
-    for place, vector, normal, size, length in zip(
-        starts, push.vectors, push.normals, sizes, lengths, strict=True
+    for acts, place, vector, normal, size, length in zip(
+        push.places, starts, push.vectors, push.normals, sizes, lengths, strict=True
     ):
         along = length * vector / size
         # What presses ends on the surface; what pulls begins there.
         pulls = normal is not None and float(vector @ normal) > 0
         tail, tip = (place, place + along) if pulls else (place - along, place)
-        made.append(Arrow(tail=_triple(tail), tip=_triple(tip), colour=push.colour))
+        made.append(
+            Arrow(place=_triple(acts), tail=_triple(tail), tip=_triple(tip), colour=push.colour)
+        )
     what = {"N": "force", "MPa": "pressure", "mm": "given motion"}.get(push.unit, "acceleration")
     return made, [f"longest {what} arrow: {quantity(float(sizes.max()), push.unit)}"]
 

@@ -25,6 +25,7 @@ __all__ = ["SIZE", "Scene"]
 #: Width and height of a picture, pixels.
 SIZE = (840, 480)
 _MARGIN = 1.15
+_ROOM_ABOVE = 1.3  # for notes and arrows
 _PAPER = {False: "white", True: "#1c1c1c"}
 Rgb = NDArray[np.uint8]
 
@@ -81,7 +82,8 @@ class Scene:
         across = 0.5 * float(np.hypot(*(high - low)[:2]))
         up = np.abs(Eye().axes()[1])
         wide = across * self.size[1] / self.size[0]
-        self._half = _MARGIN * max(wide, 0.5 * float((high - low) @ up), 1e-6)
+        tall = 0.5 * float((high - low) @ up)
+        self._half = max(_MARGIN * wide, _ROOM_ABOVE * tall, 1e-6)
 
     def room_for(self, half: float) -> float:
         """Have room for at least this half height at zoom 1; what it is afterwards, mm."""

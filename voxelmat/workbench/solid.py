@@ -103,6 +103,13 @@ class Solid:
         low, high = self.box
         return float(low[a] + look.share * (high[a] - low[a]))
 
+    def is_cut_off(self, place: tuple[float, float, float], look: Look) -> bool:
+        """Whether a place, mm, lies on the side of the plane that a look takes away."""
+        a = _AXES.index(look.axis)
+        beyond = place[a] - self.plane_mm(look)
+        slack = 1e-6 * self.part.grid.spacing[a]
+        return look.cuts and (beyond > slack if look.above else beyond < -slack)
+
     # ------------------------------------------------------------------ drawing
     def surface(self, look: Look) -> Surface:
         """The faces that a look leaves, opaque and translucent."""

@@ -181,7 +181,8 @@ class SpaceView(anywidget.AnyWidget):
         solid = self._shown.solid
         self._surface = solid.surface(self._look)
         rgb = tinted(solid, self._surface, self._marks.tints)
-        self._scene.put(self._surface, rgb, self._marks.arrows)
+        arrows = [a for a in self._marks.arrows if not solid.is_cut_off(a.place, self._look)]
+        self._scene.put(self._surface, rgb, arrows)
         first = "; ".join(t for t in (self._shown.note, *self._surface.words) if t)
         second = "; ".join(self._marks.notes)
         self._scene.notes = [t for t in (first, second, *self._more_notes) if t]
