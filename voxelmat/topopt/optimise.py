@@ -35,7 +35,7 @@ from voxelmat.topopt.problem import (
 )
 from voxelmat.topopt.unknowns import Choice, Fields, Palette, Unknowns
 
-__all__ = ["optimise"]
+__all__ = ["layout_problem", "optimise"]
 
 #: Linear solver tolerance while a design is still changing, and for the figures at the end.
 _RUNNING = {"compliance": 1e-3, "target": 1e-5}
@@ -90,20 +90,11 @@ def optimise(
     """
     started = utc_now()
     progress = _Progress(monitor, spec.iterations)
-    cases = as_arrays(part, load_cases)
-    choice, notes = build_choice(part, spec, cases)
-    unknowns = _unknowns(part, spec, choice)
-    physics = Physics(cases, part.grid.spacing, element=element, monitor=progress)
+    problem, notes = layout_problem(part, load_cases, spec, element=element, monitor=progress)
+    physics, choice, cases = problem.physics, problem.unknowns.choice, problem.physics.cases
     is_target = isinstance(spec.objective, TargetDeflection)
     physics.tolerance = _RUNNING["target" if is_target else "compliance"]
-    problem = LayoutProblem(
-        unknowns,
-        physics,
-        objective_of(spec, cases),
-        limits_of(spec, unknowns, part.grid.voxel_volume),
-        spec.projection,
-    )
-    start = start_of(spec, unknowns, problem.bounds)
+    start = start_of(spec, problem.unknowns, problem.bounds)
     digest = _digest(part, spec, cases, element)
     state = None if checkpoint is None else read_checkpoint(checkpoint, digest)
     outcome = run(
@@ -126,6 +117,35 @@ def optimise(
         finished_utc=utc_now(),
     )
     return dataclasses.replace(result, provenance=provenance)
+
+
+def layout_problem(
+    part: Part,
+    load_cases: Sequence[LoadCase],
+    spec: DesignSpec,
+    *,
+    element: str = "icmb",
+    monitor: Monitor = SILENT,
+) -> tuple[LayoutProblem, tuple[str, ...]]:
+    """The design problem of a specification on a part, and what was frozen without being asked.
+
+    Raises
+    ------
+    InputError
+        As `optimise`.
+    """
+    cases = as_arrays(part, load_cases)
+    choice, notes = build_choice(part, spec, cases)
+    unknowns = _unknowns(part, spec, choice)
+    physics = Physics(cases, part.grid.spacing, element=element, monitor=monitor)
+    problem = LayoutProblem(
+        unknowns,
+        physics,
+        objective_of(spec, cases),
+        limits_of(spec, unknowns, part.grid.voxel_volume),
+        spec.projection,
+    )
+    return problem, notes
 
 
 def _watcher(
