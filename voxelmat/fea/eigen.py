@@ -203,6 +203,7 @@ def extreme_pairs(
     maxiter: int,
     monitor: Monitor,
     stage: str,
+    start: Double | None = None,
 ) -> Eigenpairs:
     """Find `count` pairs at one end of the spectrum, with `guard` vectors more to speed them up.
 
@@ -218,6 +219,8 @@ def extreme_pairs(
     monitor : Monitor
     stage : str
         What the monitor is told.
+    start : ndarray, shape (m, n), optional
+        Vectors of a similar problem to begin with; random ones fill up the block.
 
     Raises
     ------
@@ -230,7 +233,8 @@ def extreme_pairs(
         return _direct(problem, block)
     history: list[float] = []
     try:
-        return _iterate(problem, count, block, tol, maxiter, history, monitor, stage)
+        first = _first(problem, block, start)
+        return _iterate(problem, count, first, tol, maxiter, history, monitor, stage)
     except np.linalg.LinAlgError as error:
         raise ConvergenceError(
             f"The eigenvalue iteration broke down ({error}). Check that the part hangs together "
@@ -239,19 +243,25 @@ def extreme_pairs(
         ) from error
 
 
+def _first(problem: Problem, block: int, start: Double | None) -> Double:
+    """Given vectors, and random ones smoothed by the preconditioner."""
+    rng = np.random.default_rng(0)
+    given = np.zeros((0, problem.size)) if start is None else start[:block]
+    rest = rng.standard_normal((block - len(given), problem.size))
+    return np.concatenate([given, problem.precondition(rest)]) if len(rest) else given
+
+
 def _iterate(
     problem: Problem,
     count: int,
-    block: int,
+    first: Double,
     tol: float,
     maxiter: int,
     history: list[float],
     monitor: Monitor,
     stage: str,
 ) -> Eigenpairs:
-    rng = np.random.default_rng(0)
-    # Random vectors, smoothed by the preconditioner.
-    search = _Search(problem, problem.precondition(rng.standard_normal((block, problem.size))))
+    search = _Search(problem, first)
     best: Eigenpairs | None = None
     while True:
         W, residuals = search.residuals()

@@ -18,7 +18,7 @@ from voxelmat.fea.system import first_method
 from voxelmat.kernels.threads import crew
 from voxelmat.monitor import SILENT, Monitor, computing
 
-__all__ = ["Packed"]
+__all__ = ["Apply", "Packed"]
 
 Double = NDArray[np.float64]
 Apply = Callable[[Double, Double], None]
