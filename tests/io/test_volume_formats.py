@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import math
 from pathlib import Path
 
 import numpy as np
@@ -29,6 +30,18 @@ def test_a_part_comes_back_exactly(tmp_path, name):
     assert back.grid == part.grid
     assert back == part
     assert back.name == part.name
+
+
+@pytest.mark.parametrize("name", ["part.nrrd", "part.3mf", "part.vti"])
+def test_a_bought_in_material_holds_for_any_time(tmp_path, name):
+    """Its record has no longest duration, and no hottest temperature."""
+    part = sample()
+    steel = part.resins[0].replace(
+        max_duration_s=math.inf, temperature_range_degC=(-273.15, math.inf)
+    )
+    part = part.replace(resins=(steel, part.resins[1]))
+    export(part, tmp_path / name)
+    assert import_volume(tmp_path / name).resins == part.resins
 
 
 @pytest.mark.parametrize("name", ALL)

@@ -7,6 +7,7 @@ from __future__ import annotations
 
 import hashlib
 import json
+import math
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field, replace
 from pathlib import Path
@@ -88,9 +89,27 @@ def table_of(volume: Volume) -> dict[str, Any]:
         "unit": "mm",
         "grid": volume.grid.as_dict(),
         "labels": rows,
-        "resins": [m.as_dict() for m in volume.resins],
+        "resins": [_finite(m.as_dict()) for m in volume.resins],
         "values_sha256": _digest(volume.values),
     }
+
+
+def _finite(value: Any) -> Any:
+    """Plain data with infinities as text, which JSON has no number for."""
+    if isinstance(value, dict):
+        return {k: _finite(v) for k, v in value.items()}
+    if isinstance(value, list | tuple):
+        return [_finite(v) for v in value]
+    return str(value) if isinstance(value, float) and math.isinf(value) else value
+
+
+def _infinite(value: Any) -> Any:
+    """The inverse of `_finite`."""
+    if isinstance(value, dict):
+        return {k: _infinite(v) for k, v in value.items()}
+    if isinstance(value, list):
+        return [_infinite(v) for v in value]
+    return float(value) if value in ("inf", "-inf") else value
 
 
 def _digest(values: NDArray[Any]) -> str:
@@ -156,7 +175,7 @@ def parse_table(text: str, file: str) -> LabelTable:
                 for row in data["labels"]
                 if "fractions" in row
             },
-            resins=tuple(material_of(m) for m in data["resins"]),
+            resins=tuple(material_of(_infinite(m)) for m in data["resins"]),
             grid=VoxelGrid(
                 shape=tuple(grid["shape"]),
                 spacing=tuple(grid["spacing_mm"]),
