@@ -40,6 +40,8 @@ class Workbench:
         By name; each is an attribute too: ``bench.loads``.
     script : list of str
         The lines of code of everything that was done on the screen, in order.
+    trouble : str
+        Why the design cannot be made into a part as it stands; empty where it can.
     picked : dict or None
         The last place that was clicked: ``place_mm``, and what is known of it.
     """
@@ -54,6 +56,7 @@ class Workbench:
         self._listeners: list[Callable[[str], None]] = []
         self._built: tuple[Any, Built] | None = None
         self._noting = False
+        self.trouble = ""
         self.picked: dict[str, Any] | None = None
         self.outbox: list[tuple[str, bytes]] = []
         self.sections: dict[str, Section] = {s.name: s for s in sections_of(self)}
@@ -110,7 +113,12 @@ class Workbench:
             design = self.design
             key = design.digest, design.name
             if self._built is None or self._built[0] != key:
-                self._built = (key, build(design, monitor=monitor, shapes=self.shapes))
+                try:
+                    self._built = (key, build(design, monitor=monitor, shapes=self.shapes))
+                except InputError as error:
+                    self.trouble = str(error)
+                    raise
+            self.trouble = ""
             return self._built[1]
 
     @property

@@ -30,13 +30,16 @@ function render({model, el}) {
     catch { window.prompt('Copy these lines:', text); }
     setTimeout(() => { copy.textContent = 'Copy script'; }, 1500);
   });
-  root.addEventListener('keydown', e => {
-    const typing = ['INPUT', 'TEXTAREA'].includes(e.target.tagName) && e.target.type !== 'range';
-    if ((e.ctrlKey || e.metaKey) && e.key.toLowerCase() === 'z' && !typing) {
-      send({kind: e.shiftKey ? 'redo' : 'undo'}); e.preventDefault();
-    }
-    e.stopPropagation();                                // the notebook has keys of its own
-  });
+  root.addEventListener('keydown', e => e.stopPropagation());   // the notebook has keys of its own
+  // Undo by keys counts in the pictures too, so it is caught before the notebook's own.
+  const undoKeys = e => {
+    if (!(e.ctrlKey || e.metaKey) || e.key.toLowerCase() !== 'z') return;
+    const typing = ['INPUT', 'TEXTAREA'].includes(e.target.tagName) && e.target.type === 'text';
+    if (typing || !(root.closest('.vm-bench') || root).contains(e.target)) return;
+    send({kind: e.shiftKey ? 'redo' : 'undo'});
+    e.preventDefault(); e.stopPropagation();
+  };
+  document.addEventListener('keydown', undoKeys, true);
 
   let count = 0;
   const labelled = (spec, input, ...after) => {
@@ -278,5 +281,6 @@ function render({model, el}) {
     setTimeout(() => URL.revokeObjectURL(link.href), 10000);
   });
   show();
+  return () => document.removeEventListener('keydown', undoKeys, true);
 }
 export default { render };
