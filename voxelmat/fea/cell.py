@@ -15,7 +15,7 @@ from voxelmat.fea.periodic import PeriodicSystem
 from voxelmat.fea.sensitivity import strain
 from voxelmat.monitor import SILENT, Monitor
 
-__all__ = ["CellSolution", "solve_cell"]
+__all__ = ["CellSolution", "affine", "solve_cell"]
 
 Double = NDArray[np.float64]
 
@@ -67,14 +67,26 @@ def _coordinates(shape: tuple[int, ...], spacing: Spacing) -> list[Double]:
     return out
 
 
-def _add_affine(u: Double, case: int, at: list[Double]) -> None:
-    """Add the displacement of unit strain number `case` to u."""
-    a, b = _PAIRS[case]
-    if a == b:
-        u[a] += at[a]
-    else:
-        u[a] += 0.5 * at[b]
-        u[b] += 0.5 * at[a]
+def affine(mean: Double, spacing: Spacing, shape: tuple[int, ...]) -> Double:
+    """Displacement of a uniform strain (6,), engineering shear, about the middle of the cell.
+
+    Parameters
+    ----------
+    mean : ndarray, shape (6,)
+        Strain, order xx, yy, zz, xy, xz, yz.
+    spacing : tuple of float
+        mm.
+    shape : tuple of int
+        (3, nz+1, ny+1, nx+1).
+    """
+    u, at = np.zeros(shape), _coordinates(shape, spacing)
+    for (a, b), e in zip(_PAIRS, mean, strict=True):
+        if a == b:
+            u[a] += e * at[a]
+        else:
+            u[a] += 0.5 * e * at[b]
+            u[b] += 0.5 * e * at[a]
+    return u
 
 
 def _mean_stress(q: Double, at: list[Double], volume: float) -> Double:
@@ -149,8 +161,7 @@ def solve_cell(
     worst = 0.0
     for case in range(6 if not system.empty else 0):
         monitor.report("homogenising", done=case, total=6)
-        w = np.zeros(system.shape)
-        _add_affine(w, case, at)
+        w = affine(np.eye(6)[case], spacing, system.shape)
         load = -system.apply_open(w)
         fold(load, array_axes(system.periodic))
         guess = _guess(system, load, None if warm is None else warm[case])
@@ -162,8 +173,7 @@ def solve_cell(
         q = system.apply_open(w)
         means[:, case] = _mean_stress(q, at, volume)
         for other in range(case + 1):
-            v = fields[other].copy()
-            _add_affine(v, other, at)
+            v = fields[other] + affine(np.eye(6)[other], spacing, system.shape)
             C[case, other] = C[other, case] = dot(v, q) / volume
         if expansion is not None:
             thermal[case] = float((stress * strain(w, spacing)[:3].sum(axis=0)).sum()) / lam.size

@@ -77,6 +77,7 @@ class Physics:
         self._systems: dict[int, Any] = {}
         self._solved: dict[str, Array] = {}
         self._warm: dict[str, Array] = {}
+        self._once: dict[str, Any] = {}
         self._fields: Fields | None = None
         self.cg_iterations = 0
 
@@ -105,6 +106,7 @@ class Physics:
         self._fields = fields
         self._systems.clear()
         self._solved = {}
+        self._once.clear()
         self.cg_iterations = 0
 
     def quiet(self) -> None:
@@ -129,6 +131,12 @@ class Physics:
         It goes into checkpoints with the displacements, and must not be changed in place.
         """
         self._warm[name] = value
+
+    def once(self, name: str, make: Callable[[], Any]) -> Any:
+        """What `make` gives for the present design, made once and shared by responses."""
+        if name not in self._once:
+            self._once[name] = make()
+        return self._once[name]
 
     def displacement(self, case: int) -> Array:
         """Of one load case, mm, (3, nz+1, ny+1, nx+1)."""
