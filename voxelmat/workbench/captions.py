@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -11,7 +12,7 @@ from PIL import Image, ImageDraw, ImageFont
 
 __all__ = ["Line", "write_on"]
 
-_FONT = 19  # pixels at the size of a frame, which a narrow column shows at two thirds
+_FONT = 13  # pixels on the screen
 _RULER = (204, 0, 102)
 
 
@@ -23,6 +24,32 @@ class Line:
     text: str = ""
 
 
+@dataclass(frozen=True, slots=True)
+class _Pen:
+    """What everything is written with, on a picture of `scale` pixels to a point."""
+
+    draw: ImageDraw.ImageDraw
+    font: ImageFont.FreeTypeFont | ImageFont.ImageFont
+    ink: str
+    paper: str
+    scale: float
+
+    def text(self, at: tuple[float, float], words: str, anchor: str) -> None:
+        """Words that can be read over anything."""
+        self.draw.text(
+            at,
+            words,
+            fill=self.ink,
+            font=self.font,
+            anchor=anchor,
+            stroke_width=max(1, round(self.scale)),
+            stroke_fill=self.paper,
+        )
+
+    def line(self, points: tuple[float, ...], width: float, colour: Any = None) -> None:
+        self.draw.line(points, fill=colour or self.ink, width=max(1, round(width * self.scale)))
+
+
 def write_on(
     image: Image.Image,
     axes: NDArray[np.float64],
@@ -32,7 +59,7 @@ def write_on(
     ruler: Line | None,
     *,
     dark: bool = False,
-    scale: int = 1,
+    scale: float = 1.0,
 ) -> None:
     """Draw all of it.
 
@@ -46,112 +73,75 @@ def write_on(
     half : float
         Half the height of the picture, mm.
     notes : list of str
-        One line each, from the top left.
+        From the top left, each begins a line.
     ruler : Line or None
     dark : bool
         Whether the background is.
-    scale : int
-        Pixels of the picture to one of a frame.
+    scale : float
+        Pixels of the picture to one on the screen.
     """
-    draw = ImageDraw.Draw(image)
     font = ImageFont.load_default(_FONT * scale)
-    ink = "white" if dark else "black"
-    _axes(draw, axes, image.height, font, ink, scale)
-    _bar(draw, image.size, half, font, ink, scale)
-    top = 8 * scale
+    ink, paper = ("white", "#1c1c1c") if dark else ("black", "white")
+    pen = _Pen(ImageDraw.Draw(image), font, ink, paper, scale)
+    _axes(pen, axes, image.height)
+    _bar(pen, image.size, half)
+    top = 5 * scale
     for note in notes:
-        for text in _wrapped(draw, note, font, image.width - 24 * scale):
-            _text(draw, (12 * scale, top), text, font, ink, dark, "la")
-            top += round(1.2 * _FONT) * scale
+        for words in _wrapped(pen, note, image.width - 16 * scale):
+            pen.text((8 * scale, top), words, "la")
+            top += 1.25 * _FONT * scale
     if ruler is not None:
-        pixels = image.height / (2.0 * half)
-        _ruler(draw, ruler, axes, focus, pixels, image.size, font, dark, scale)
+        _ruler(pen, ruler, axes, focus, image.height / (2.0 * half), image.size)
 
 
-def _text(
-    draw: ImageDraw.ImageDraw,
-    at: tuple[float, float],
-    text: str,
-    font: ImageFont.FreeTypeFont | ImageFont.ImageFont,
-    ink: str,
-    dark: bool,
-    anchor: str,
-) -> None:
-    """Words that can be read over anything."""
-    paper = "black" if dark else "white"
-    draw.text(at, text, fill=ink, font=font, anchor=anchor, stroke_width=2, stroke_fill=paper)
-
-
-def _wrapped(
-    draw: ImageDraw.ImageDraw,
-    text: str,
-    font: ImageFont.FreeTypeFont | ImageFont.ImageFont,
-    width: float,
-) -> list[str]:
+def _wrapped(pen: _Pen, text: str, width: float) -> list[str]:
     lines: list[str] = []
     for word in text.split():
-        if lines and draw.textlength(f"{lines[-1]} {word}", font=font) <= width:
+        if lines and pen.draw.textlength(f"{lines[-1]} {word}", font=pen.font) <= width:
             lines[-1] += f" {word}"
         else:
             lines.append(word)
     return lines
 
 
-def _axes(
-    draw: ImageDraw.ImageDraw,
-    axes: NDArray[np.float64],
-    height: int,
-    font: ImageFont.FreeTypeFont | ImageFont.ImageFont,
-    ink: str,
-    scale: int,
-) -> None:
-    x0, y0 = 52 * scale, height - 52 * scale
+def _axes(pen: _Pen, axes: NDArray[np.float64], height: int) -> None:
+    x0, y0 = 40 * pen.scale, height - 40 * pen.scale
     for a in range(3):
-        dx, dy = 34 * scale * axes[0, a], -34 * scale * axes[1, a]
-        draw.line((x0, y0, x0 + dx, y0 + dy), fill=ink, width=2 * scale)
-        draw.text((x0 + 1.4 * dx, y0 + 1.4 * dy), "xyz"[a], fill=ink, font=font, anchor="mm")
+        dx, dy = 26 * pen.scale * axes[0, a], -26 * pen.scale * axes[1, a]
+        pen.line((x0, y0, x0 + dx, y0 + dy), 1.5)
+        pen.text((x0 + 1.4 * dx, y0 + 1.4 * dy), "xyz"[a], "mm")
 
 
-def _bar(
-    draw: ImageDraw.ImageDraw,
-    size: tuple[int, int],
-    half: float,
-    font: ImageFont.FreeTypeFont | ImageFont.ImageFont,
-    ink: str,
-    scale: int,
-) -> None:
+def _bar(pen: _Pen, size: tuple[int, int], half: float) -> None:
     width, height = size
     span = 0.2 * width * 2.0 * half / height
     power = 10.0 ** math.floor(math.log10(span))
     bar = power * max(s for s in (1, 2, 5) if s * power <= span)
-    right = width - 20 * scale
+    right = width - 14 * pen.scale
     left = right - bar * height / (2.0 * half)
-    y = height - 22 * scale
-    draw.line((left, y, right, y), fill=ink, width=3 * scale)
-    at = (0.5 * (left + right), y - 6 * scale)
-    draw.text(at, f"{bar:g} mm", fill=ink, font=font, anchor="mb")
+    y = height - 14 * pen.scale
+    pen.line((left, y, right, y), 2)
+    pen.text((0.5 * (left + right), y - 4 * pen.scale), f"{bar:g} mm", "mb")
 
 
 def _ruler(
-    draw: ImageDraw.ImageDraw,
+    pen: _Pen,
     ruler: Line,
     axes: NDArray[np.float64],
     focus: NDArray[np.float64],
     pixels: float,
     size: tuple[int, int],
-    font: ImageFont.FreeTypeFont | ImageFont.ImageFont,
-    dark: bool,
-    scale: int,
 ) -> None:
+    """Marked places; `pixels` of the picture are 1 mm."""
     flat = (np.array(ruler.places) - focus) @ axes[:2].T
     points = [(0.5 * size[0] + pixels * u, 0.5 * size[1] - pixels * v) for u, v in flat]
     if len(points) > 1:
-        draw.line([*points[0], *points[1]], fill=_RULER, width=3 * scale)
-    r = 5 * scale
+        pen.line((*points[0], *points[1]), 2, _RULER)
+    r = 4 * pen.scale
     for x, y in points:
-        draw.ellipse((x - r, y - r, x + r, y + r), outline=_RULER, width=2 * scale)
-        draw.ellipse((x - 1, y - 1, x + 1, y + 1), fill=_RULER)
+        width = max(1, round(1.5 * pen.scale))
+        pen.draw.ellipse((x - r, y - r, x + r, y + r), outline=_RULER, width=width)
+        pen.draw.ellipse((x - 1, y - 1, x + 1, y + 1), fill=_RULER)
     if ruler.text and len(points) > 1:
         (x0, y0), (x1, y1) = points[:2]
-        middle = (0.5 * (x0 + x1), 0.5 * (y0 + y1) - 8 * scale)
-        _text(draw, middle, ruler.text, font, "white" if dark else "black", dark, "mb")
+        pen.text((0.5 * (x0 + x1), 0.5 * (y0 + y1) - 6 * pen.scale), ruler.text, "mb")

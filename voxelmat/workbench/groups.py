@@ -24,7 +24,8 @@ class Group:
     Attributes
     ----------
     name : str
-        A resin, a blend as ``25 % rigid + 75 % soft``, ``blends of rigid, soft``, or ``body pad``.
+        A resin, a blend as ``25 % rigid + 75 % soft``, ``blends of rigid, soft``, or ``body pad``
+        (only where the body is not just one of these).
     colour : str
         ``#rrggbb``; empty for a body.
     labels : ndarray of bool, shape (palette,)
@@ -60,12 +61,22 @@ def groups_of(part: Part) -> tuple[Group, ...]:
         own[entries] = True
         mean = np.rint(np.average(rgb[entries], axis=0, weights=count[entries])).astype(int)
         found.append(Group(name=name, colour="#{:02x}{:02x}{:02x}".format(*mean), labels=own))
+    return (*found, *_bodies(part, found))
+
+
+def _bodies(part: Part, materials: Collection[Group]) -> list[Group]:
+    """The bodies, less those that are one of the materials and nothing else."""
     none = np.zeros(len(part.palette), dtype=bool)
-    if len(part.bodies) > 1:
-        found += [
-            Group(name=f"body {body}", colour="", labels=none, body=body) for body in part.bodies
-        ]
-    return tuple(found)
+    whole = {g.labels.tobytes() for g in materials}
+    count = np.bincount(part.labels.ravel(order="K"), minlength=len(part.palette))
+    found = []
+    for body, mask in part.bodies.items():
+        own = np.bincount(part.labels[mask], minlength=len(part.palette))
+        own[0] = 0
+        alone = bool(np.all((own == 0) | (own == count))) and (own > 0).tobytes() in whole
+        if own.any() and not alone:
+            found.append(Group(name=f"body {body}", colour="", labels=none, body=body))
+    return found
 
 
 def mask_of(

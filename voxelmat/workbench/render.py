@@ -22,8 +22,9 @@ from voxelmat.workbench.voxfaces import Quads
 
 __all__ = ["SIZE", "Scene"]
 
-#: Width and height of a picture, pixels.
+#: Width and height of a picture before the screen asks for its own size, pixels.
 SIZE = (840, 480)
+_NARROWEST, _WIDEST = 240, 1280  # pixels; wider ones take too long while the part is turned
 _MARGIN = 1.15
 _ROOM_ABOVE = 1.3  # for notes and arrows
 _PAPER = {False: "white", True: "#1c1c1c"}
@@ -42,6 +43,8 @@ class Scene:
 
     Attributes
     ----------
+    scale : float
+        Pixels of a picture to one on the screen.
     eye : Eye
     notes : list of str
         Written into every picture.
@@ -67,6 +70,7 @@ class Scene:
         self.ruler: Line | None = None
         self.dark = False
         self.size = size
+        self.scale = 1.0
         self._plotter: Any = None
         self._actors: dict[str, Any] = {}
         self._points: NDArray[np.float32] = np.zeros((0, 3), dtype=np.float32)
@@ -84,6 +88,15 @@ class Scene:
         wide = across * self.size[1] / self.size[0]
         tall = 0.5 * float((high - low) @ up)
         self._half = max(_MARGIN * wide, _ROOM_ABOVE * tall, 1e-6)
+
+    def fill(self, width: float, ratio: float) -> bool:
+        """Draw for a place on the screen this wide, of `ratio` pixels each; True if that is new."""
+        wanted = min(max(round(width * ratio), _NARROWEST), _WIDEST)
+        self.scale = wanted / max(width, 1.0)
+        if abs(wanted - self.size[0]) < 4:
+            return False
+        self.size = (wanted, round(wanted * self.size[1] / self.size[0]))
+        return True
 
     def room_for(self, half: float) -> float:
         """Have room for at least this half height at zoom 1; what it is afterwards, mm."""
@@ -175,6 +188,8 @@ class Scene:
     def _image(self, scale: int = 1) -> Image.Image:
         axes = self.eye.axes()
         plotter = self._plotter
+        if tuple(plotter.window_size) != self.size:
+            plotter.window_size = self.size
         plotter.set_background(_PAPER[self.dark])
         camera = plotter.camera
         camera.parallel_projection = True
@@ -194,7 +209,7 @@ class Scene:
             self.notes,
             self.ruler,
             dark=self.dark,
-            scale=scale,
+            scale=scale * self.scale,
         )
         return image
 

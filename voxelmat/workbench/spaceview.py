@@ -382,6 +382,10 @@ class SpaceView(anywidget.AnyWidget):
             with self._lock:
                 self._scene.dark = bool(message["dark"])
                 self._push()
+        elif kind == "size":
+            with self._lock:
+                if self._scene.fill(float(message["width"]), float(message["ratio"])):
+                    self._push()
         elif kind in ("paint", "factor") and self._shown.repaint is not None:
             self._repaint(kind, message["value"])
         else:

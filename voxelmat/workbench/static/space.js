@@ -110,10 +110,19 @@ function render({model, el}) {
   model.on('change:ack', acknowledged);
   model.on('change:said', say);
   model.on('change:status', complain);
+  let wide = 0;                                        // frames as wide as they are shown
+  const fill = () => {
+    const width = frame.clientWidth;
+    if (width < 100 || Math.abs(width - wide) < 8) return;
+    wide = width;
+    send({kind: 'size', width, ratio: window.devicePixelRatio || 1});
+  };
+  const fits = new ResizeObserver(fill);
+  fits.observe(frame);
   show(); complain();
   if (document.body.dataset.jpThemeLight === 'false') paper();
   return () => {
-    theme.disconnect();
+    theme.disconnect(); fits.disconnect();
     model.off('change:seq', show); model.off('change:ack', acknowledged);
     model.off('change:said', say); model.off('change:status', complain);
   };
