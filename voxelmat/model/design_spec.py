@@ -13,6 +13,8 @@ import numpy as np
 from numpy.typing import NDArray
 
 from voxelmat.errors import InputError
+from voxelmat.model.goal import AtLeast, AtMost, Maximise, Minimise, plain
+from voxelmat.model.measure import Compliance, TargetDeflection, mask
 from voxelmat.provenance import text_digest
 
 __all__ = [
@@ -30,77 +32,9 @@ __all__ = [
 Bools = NDArray[np.bool_]
 
 
-def _mask(value: object, what: str) -> Bools:
-    array = np.asarray(value)
-    if array.ndim != 3 or array.dtype != np.bool_:
-        raise InputError(f"{what} must be a 3-D array of true and false; got {array.dtype}, "
-                         f"{array.ndim}-D.")  # fmt: skip
-    out = np.array(array, order="F")
-    out.flags.writeable = False
-    return out
-
-
 def _positive(value: float, what: str, unit: str) -> None:
     if not (math.isfinite(value) and value > 0):
         raise InputError(f"{what} must be above 0 {unit}; got {value!r}.")
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class Compliance:
-    """Least work of the loads, N mm: the stiffest part.
-
-    Summed over the load cases, each times its `LoadCase.weight`.
-    """
-
-
-@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
-class TargetDeflection:
-    """A map of how much a surface is to move under one load case.
-
-    The objective is the relative error sqrt(sum (u - u*)^2 / sum u*^2) over the nodes.
-
-    Attributes
-    ----------
-    nodes : ndarray of bool, shape ``grid.node_shape``
-        Where the displacement counts.
-    target : ndarray of float, shape ``grid.node_shape``
-        Wanted displacement along `direction`, mm; only read at `nodes`.
-    direction : tuple of float
-        Scaled to length 1.
-    load_case : str or None
-        Name of the load case; may be left out where there is only one.
-    """
-
-    nodes: Bools
-    target: NDArray[np.float64]
-    direction: tuple[float, float, float] = (0.0, 0.0, 1.0)
-    load_case: str | None = None
-
-    def __post_init__(self) -> None:
-        nodes = _mask(self.nodes, "The nodes of a target deflection")
-        target = np.array(self.target, dtype=np.float64, order="F")
-        if target.shape != nodes.shape:
-            raise InputError(
-                f"A target deflection has nodes of shape {nodes.shape} and targets of shape "
-                f"{target.shape}; they must be the same."
-            )
-        if not nodes.any():
-            raise InputError("A target deflection selects no node; name a surface of the part.")
-        if not np.all(np.isfinite(target[nodes])):
-            raise InputError("A target deflection (mm) holds values that are no number.")
-        if not np.any(target[nodes] != 0):
-            raise InputError(
-                "A target deflection is zero at every node, so an error relative to it has no "
-                "meaning; minimise compliance instead."
-            )
-        length = math.sqrt(sum(d * d for d in self.direction))
-        if not (math.isfinite(length) and length > 0):
-            raise InputError(f"A target's direction must not be zero; got {self.direction}.")
-        target.flags.writeable = False
-        x, y, z = (float(d) / length for d in self.direction)
-        object.__setattr__(self, "nodes", nodes)
-        object.__setattr__(self, "target", target)
-        object.__setattr__(self, "direction", (x, y, z))
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -139,18 +73,24 @@ class ResinLimit:
             )
 
 
-Objective = Compliance | TargetDeflection
-Limit = VolumeLimit | MassLimit | ResinLimit
+Objective = Compliance | TargetDeflection | Minimise | Maximise
+Limit = VolumeLimit | MassLimit | ResinLimit | AtMost | AtLeast
+
+#: More would not fit a tray, and a softmax over more is not tested.
+_MOST_RESINS = 40
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Projection:
-    """Continuation of the smoothed step that makes densities empty or solid.
+    """Continuation of the smoothed step that makes densities empty or solid, and of the penalty.
 
     Attributes
     ----------
     sharpness : tuple of float
         One value a stage, rising; 0 means no projection.
+    penalties : tuple of float
+        Penalty exponent of each stage, rising; none: `DesignSpec.penalty` from the start. Where
+        there are fewer of these or of the sharpnesses than stages, the last one stays.
     every : int
         Iterations a stage; the last one lasts to the end.
     threshold : float
@@ -158,6 +98,7 @@ class Projection:
     """
 
     sharpness: tuple[float, ...] = (0.0, 2.0, 4.0, 8.0, 16.0)
+    penalties: tuple[float, ...] = ()
     every: int = 15
     threshold: float = 0.5
 
@@ -171,11 +112,22 @@ class Projection:
                 "A projection needs at least 1 iteration a stage and a threshold between 0 and 1; "
                 f"got {self.every} and {self.threshold}."
             )
+        rising = all(a < b for a, b in itertools.pairwise(self.penalties))
+        if not rising or any(not math.isfinite(p) or p < 1 for p in self.penalties):
+            raise InputError(
+                f"The penalties of a continuation must be >= 1 and rise; got {self.penalties}."
+            )
         object.__setattr__(self, "sharpness", s)
+        object.__setattr__(self, "penalties", tuple(float(p) for p in self.penalties))
+
+    @property
+    def stages(self) -> int:
+        """How many there are."""
+        return max(len(self.sharpness), len(self.penalties))
 
     def stage(self, iteration: int) -> int:
         """Which stage an iteration (from 0) belongs to."""
-        return min(iteration // self.every, len(self.sharpness) - 1)
+        return min(iteration // self.every, self.stages - 1)
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -186,8 +138,11 @@ class DesignSpec:
     ----------
     resins : tuple of str
         Names of the part's resins to choose from. With two or more, every voxel is a blend.
-    objective : Compliance or TargetDeflection
-    limits : tuple of VolumeLimit, MassLimit, ResinLimit
+    objective : Compliance, TargetDeflection, Minimise or Maximise
+        A measure alone is minimised; ``Minimise(measure=...)`` and ``Maximise(measure=...)`` take
+        any measure of `voxelmat.model.measure`, `measure_amount` and `measure_physics`.
+    limits : tuple of VolumeLimit, MassLimit, ResinLimit, AtMost, AtLeast
+        The last two take any measure.
     void : bool
         Whether voxels may become empty.
     filter_radius : float
@@ -248,13 +203,17 @@ class DesignSpec:
     def __post_init__(self) -> None:
         put = object.__setattr__
         put(self, "resins", tuple(self.resins))
+        if isinstance(self.objective, Minimise) and isinstance(
+            self.objective.measure, Compliance | TargetDeflection
+        ):
+            put(self, "objective", self.objective.measure)
         put(self, "limits", tuple(self.limits))
         put(self, "symmetry", tuple(self.symmetry))
-        fixed = {r: _mask(m, f"The region fixed to '{r}'") for r, m in self.fixed_resin.items()}
+        fixed = {r: mask(m, f"The region fixed to '{r}'") for r, m in self.fixed_resin.items()}
         put(self, "fixed_resin", fixed)
         for name in ("solid", "empty", "keep", "protected"):
             if (given := getattr(self, name)) is not None:
-                put(self, name, _mask(given, f"The region '{name}'"))
+                put(self, name, mask(given, f"The region '{name}'"))
         self._check_numbers()
         self._check_choices()
 
@@ -277,6 +236,10 @@ class DesignSpec:
     def _check_choices(self) -> None:
         if not self.resins or len(set(self.resins)) != len(self.resins):
             raise InputError(f"A design names each resin once, at least one; got {self.resins}.")
+        if len(self.resins) > _MOST_RESINS:
+            raise InputError(
+                f"A design chooses among at most {_MOST_RESINS} resins; got {len(self.resins)}."
+            )
         if not self.void and len(self.resins) == 1:
             raise InputError(
                 f"With the one resin '{self.resins[0]}' and no empty voxels allowed there is "
@@ -288,31 +251,33 @@ class DesignSpec:
             raise InputError(f"The method is auto, mma or oc; got {self.method!r}.")
         if self.void_law not in ("bounded", "plain"):
             raise InputError(f"The void law is bounded or plain; got {self.void_law!r}.")
-        kinds = [(type(x).__name__, getattr(x, "resin", "")) for x in self.limits]
+        simple = [x for x in self.limits if not isinstance(x, AtMost | AtLeast)]
+        kinds = [(type(x).__name__, getattr(x, "resin", "")) for x in simple]
         if len(set(kinds)) != len(kinds):
             raise InputError("The same quantity is limited twice; keep the tighter limit.")
 
     @property
     def digest(self) -> str:
         """SHA-256 over everything but the number of iterations and palette levels."""
-        head: dict[str, Any] = {}
         arrays: list[NDArray[Any]] = []
-        for name in self.__dataclass_fields__:
-            value = getattr(self, name)
-            if name in ("iterations", "levels", "seed"):
-                continue
-            if isinstance(value, np.ndarray):
-                head[name] = list(value.shape)
-                arrays.append(value)
-            elif name == "fixed_resin":
-                head[name] = list(value)
-                arrays += value.values()
-            elif isinstance(value, TargetDeflection):
-                head[name] = [value.direction, value.load_case]
-                arrays += [value.nodes, value.target]
-            else:
-                head[name] = repr(value)
+        head = {
+            name: plain(getattr(self, name), arrays)
+            for name in self.__dataclass_fields__
+            if name not in ("iterations", "levels", "seed")
+        }
         code = hashlib.sha256(text_digest(head).encode())
         for array in arrays:
             code.update(b"|" + np.ascontiguousarray(array.T).tobytes())
         return code.hexdigest()
+
+    @property
+    def measure(self) -> object:
+        """What the objective is about."""
+        goal = self.objective
+        return goal.measure if isinstance(goal, Minimise | Maximise) else goal
+
+    @property
+    def measures(self) -> tuple[object, ...]:
+        """All measures of the objective and of the general limits, the objective's first."""
+        limits = [x.measure for x in self.limits if isinstance(x, AtMost | AtLeast)]
+        return (self.measure, *limits)
