@@ -58,7 +58,7 @@ def test_variable_thickness_sheet(unknowns, method, element, solid, best):
     ones = np.ones(u.n)
     steppers = {
         "oc": OptimalityCriteria(1e-3 * ones, ones, move=0.2),
-        "mma": MovingAsymptotes(0 * ones, ones, move=0.5, adaptive=False),
+        "mma": MovingAsymptotes(0 * ones, ones, move=0.5, back="none"),
     }
     bound = Bound(response=mean_of(shape, [1.0]), limit=0.5)
     history = descend(u, physics, ComplianceResponse(), (bound,), 0.5 * ones, 50, steppers[method])
@@ -138,7 +138,7 @@ def test_two_resins_beat_each_alone(unknowns, cantilever):
         rho = 0.4 if len(E) == 2 else min(1.0, 0.4 / density[0])
         x = u.start(rho, np.full(len(E), 1 / len(E)))
         ones = np.ones(u.n)
-        stepper = MovingAsymptotes(0 * ones, ones, move=0.2, adaptive=False)
+        stepper = MovingAsymptotes(0 * ones, ones, move=0.2, back="none")
         history = descend(u, physics, ComplianceResponse(), (bound,), x, 50, stepper)
         assert history[-1].violation <= 1e-3
         return history[-1].objective

@@ -24,6 +24,9 @@ class Sheet:
     def sharpness(self, iteration):
         return 0.0 if iteration < 4 else 2.0
 
+    def begin(self, iteration, history):
+        return iteration == 4
+
     def settled(self, iteration):
         return iteration >= 4
 

@@ -17,7 +17,7 @@ from voxelmat.topopt.loop import State
 
 __all__ = ["read_checkpoint", "write_checkpoint"]
 
-_FORMAT = 1
+_FORMAT = 2
 _FIGURES = tuple(f.name for f in dataclasses.fields(IterationRecord))
 _COUNTS = ("iteration", "cg_iterations")
 

@@ -36,6 +36,7 @@ class OptimalityCriteria:
         self._low, self._high = low, high
         self._longest = move * (high - low)
         self.multipliers = np.empty(0)
+        self.accepted = True
 
     def step(self, x: Array, F: Array, dF: Array) -> Array:
         """The next design; arguments as for `MovingAsymptotes.step`, with m = 1."""

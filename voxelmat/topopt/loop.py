@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import dataclasses
+import math
 from collections.abc import Callable
 from dataclasses import dataclass, field
 from typing import Protocol
@@ -39,6 +41,8 @@ class Evaluation:
     weight : ndarray, (n,)
         How much a change of each unknown matters.
     cg_iterations : int
+    least : float
+        No design has an objective below this.
     """
 
     F: Array
@@ -47,6 +51,7 @@ class Evaluation:
     grey: float
     weight: Array
     cg_iterations: int
+    least: float = -math.inf
 
 
 class Problem(Protocol):
@@ -57,6 +62,12 @@ class Problem(Protocol):
 
     def sharpness(self, iteration: int) -> float:
         """Of the projection in this iteration."""
+
+    def begin(self, iteration: int, history: tuple[IterationRecord, ...]) -> bool:
+        """Prepare an iteration (from 0); whether it asks other functions than the one before.
+
+        What it sets depends on the arguments only, so that a resumed run does the same.
+        """
 
     def settled(self, iteration: int) -> bool:
         """Whether the problem no longer changes from this iteration on."""
@@ -75,6 +86,7 @@ class Stepper(Protocol):
     """An optimiser; see `MovingAsymptotes`."""
 
     multipliers: Array
+    accepted: bool
 
     def step(self, x: Array, F: Array, dF: Array) -> Array:
         """The next design."""
@@ -119,12 +131,15 @@ class State:
     x : ndarray
         The design to evaluate next.
     whole : ndarray
-        The last design that was evaluated to the end (`x` itself before the first).
+        The last design that was evaluated to the end and not given up for the one before it
+        (`x` itself before the first).
     scale : float
         Factor on the objective; 0 before the first evaluation.
     first : float
         First objective.
     history : tuple of IterationRecord
+        Each record is about the `whole` of its time: after a step back it repeats the figures of
+        the design that was gone back to.
     optimiser, warm : dict
     finished : str
         Reason why it converged; empty while it has not.
@@ -221,35 +236,41 @@ def _iteration(problem: Problem, optimiser: Stepper, state: State, stopping: Sto
     """One evaluation and one step; `state` itself stays as it was."""
     n = len(state.history)
     sharpness = problem.sharpness(n)
-    if n and sharpness != state.history[-1].sharpness:
+    if problem.begin(n, state.history) and n:
         optimiser.forget_model()
     e = problem.evaluate(state.x, sharpness)
     first = state.first if n else float(e.F[0])
     scale = state.scale or _FIRST_OBJECTIVE / max(abs(first), 1e-300)
-    F, dF = e.F.copy(), e.dF.copy()
+    F, dF = e.F.copy(), e.dF
     F[0] *= scale
     dF[0] *= scale
     new = optimiser.step(state.x, F, dF)
+    whole = state.x if optimiser.accepted else state.whole
     gap = float("nan")
-    if (n + 1) % _GAP_EVERY == 0 and problem.settled(n):
+    if (n + 1) % _GAP_EVERY == 0 and problem.settled(n) and optimiser.accepted:
         size = abs(first * scale) if stopping.gap_of_first else max(abs(F[0]), 1e-300)
-        bound = linearised_gap(state.x, problem.low, problem.high, F, dF, optimiser.multipliers)
-        # Both objectives are never negative, so no design can win more than all there is.
-        gap = float(min(bound, F[0]) / size)
-    moved = e.weight * np.abs(new - state.x) / (problem.high - problem.low)
-    record = IterationRecord(
-        iteration=n + 1,
-        objective=e.reported,
-        violation=float(e.F[1:].max(initial=-1.0)),
-        gap=gap,
-        grey=e.grey,
-        change=float(moved.sum() / max(float(e.weight.sum()), 1e-300)),
-        sharpness=sharpness,
-        cg_iterations=e.cg_iterations,
-    )
+        bound = linearised_gap(whole, problem.low, problem.high, F, dF, optimiser.multipliers)
+        gap = float(min(bound, F[0] - e.least * scale) / size)
+    moved = e.weight * np.abs(new - whole) / (problem.high - problem.low)
+    change = float(moved.sum() / max(float(e.weight.sum()), 1e-300))
+    if optimiser.accepted:
+        record = IterationRecord(
+            iteration=n + 1,
+            objective=e.reported,
+            violation=float(e.F[1:].max(initial=-1.0)),
+            gap=gap,
+            grey=e.grey,
+            change=change,
+            sharpness=sharpness,
+            cg_iterations=e.cg_iterations,
+        )
+    else:
+        record = dataclasses.replace(
+            state.history[-1], iteration=n + 1, cg_iterations=e.cg_iterations
+        )
     return State(
         x=new,
-        whole=state.x,
+        whole=whole,
         scale=scale,
         first=first,
         history=(*state.history, record),
@@ -279,22 +300,24 @@ def _reason(problem: Problem, state: State, stopping: Stopping) -> str:
     if last.gap <= stopping.gap:
         return (
             f"converged after {last.iteration} iterations: the linearised problem could gain at "
-            f"most {number(last.gap, 2)} of the objective, largest violation "
-            f"{number(max(last.violation, 0.0), 2)}"
+            f"most {number(last.gap, 2)} of the objective, {_figures(state)}"
         )
     recent = state.history[-_QUIET:]
     if len(recent) == _QUIET and all(r.change < stopping.change for r in recent):
-        return (
-            f"no longer changing after {last.iteration} iterations: mean change "
-            f"{number(last.change, 2)} of the range, largest violation "
-            f"{number(max(last.violation, 0.0), 2)}"
-        )
+        return f"no longer changing after {last.iteration} iterations: {_figures(state)}"
     return ""
 
 
 def _ran_out(state: State, iterations: int) -> str:
+    return f"all {iterations} iterations are used: {_figures(state, still='still ')}"
+
+
+def _figures(state: State, still: str = "") -> str:
+    """How far from converged a design is, in words."""
     last = state.history[-1]
+    known = [r.gap for r in state.history[-_GAP_EVERY:] if not math.isnan(r.gap)]
+    gap = f", linearised gap {number(known[-1], 2)} of the objective" if known else ""
     return (
-        f"all {iterations} iterations are used: mean change still {number(last.change, 2)} of the "
-        f"range, largest violation {number(max(last.violation, 0.0), 2)}"
+        f"mean change {still}{number(last.change, 2)} of the range, largest violation "
+        f"{number(max(last.violation, 0.0), 2)}, grey level {number(last.grey, 2)}{gap}"
     )

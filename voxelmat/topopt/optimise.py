@@ -210,8 +210,8 @@ def _stepper(spec: DesignSpec, problem: LayoutProblem) -> Stepper:
     criteria = suits_criteria(spec, problem.unknowns)
     if spec.method == "oc" or (spec.method == "auto" and criteria):
         return OptimalityCriteria(problem.low, problem.high, move=spec.move)
-    adaptive = isinstance(spec.objective, TargetDeflection)
-    return MovingAsymptotes(problem.low, problem.high, move=spec.move, adaptive=adaptive)
+    back = "worse" if isinstance(spec.objective, TargetDeflection) else "none"
+    return MovingAsymptotes(problem.low, problem.high, move=spec.move, back=back)
 
 
 def _digest(part: Part, spec: DesignSpec, cases: tuple[Case, ...], element: str) -> str:
@@ -232,6 +232,7 @@ def _result(
     unknowns, physics = problem.unknowns, problem.physics
     history = outcome.state.history
     unknowns.sharpness = history[-1].sharpness if history else problem.sharpness(0)
+    problem.begin(max(len(history) - 1, 0), history)
     fields = unknowns.forward(outcome.state.whole)
     physics.tolerance = _FINAL
     physics.update(fields)

@@ -2,12 +2,14 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+import math
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
 
 from voxelmat.errors import InputError
+from voxelmat.model.design_result import IterationRecord
 from voxelmat.model.design_spec import (
     Compliance,
     DesignSpec,
@@ -33,6 +35,11 @@ __all__ = [
 
 Array = NDArray[np.float64]
 
+_NEVER_NEGATIVE = (ComplianceResponse, TargetResponse)
+#: Mean change of a design above which its solves may be less close, and by what factor at most.
+_LOOSEN_FROM, _LOOSEST = 5e-3, 10.0
+_OF_MISS = 3e-3
+
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Bound:
@@ -56,15 +63,35 @@ class LayoutProblem:
         self.unknowns, self.physics = unknowns, physics
         self.objective, self.bounds, self._projection = objective, bounds, projection
         self.low, self.high = np.zeros(unknowns.n), np.ones(unknowns.n)
+        self._usual = physics.tolerance
+
+    def begin(self, iteration: int, history: tuple[IterationRecord, ...]) -> bool:
+        """Set the penalty, and the solver tolerance that the progress so far calls for."""
+        self.physics.tolerance = self._tolerance(history)
+        c, void = self._projection, self.unknowns.void
+        if void is not None and c.penalties:
+            penalty = c.penalties[min(c.stage(iteration), len(c.penalties) - 1)]
+            self.unknowns.void = replace(void, penalty=penalty)
+        return iteration > 0 and c.stage(iteration) != c.stage(iteration - 1)
 
     def sharpness(self, iteration: int) -> float:
         """Of the projection in this iteration."""
-        return self._projection.sharpness[self._projection.stage(iteration)]
+        c = self._projection
+        return c.sharpness[min(c.stage(iteration), len(c.sharpness) - 1)]
+
+    def _tolerance(self, history: tuple[IterationRecord, ...]) -> float:
+        """Loose while designs change much; close in the end, where a miss becomes small."""
+        change = history[-1].change if history else 1.0
+        loosened = self._usual * min(max(change / _LOOSEN_FROM, 1.0), _LOOSEST)
+        if isinstance(self.objective, TargetResponse) and history:
+            # Solver noise above a part of the miss would pass for a rise of the objective.
+            return min(loosened, max(_OF_MISS * history[-1].objective, 1e-8))
+        return loosened
 
     def settled(self, iteration: int) -> bool:
         """Whether the projection is at its last stage, or there is nothing to project."""
-        last = len(self._projection.sharpness) - 1
-        return self.unknowns.n_rho == 0 or self._projection.stage(max(iteration, 0)) == last
+        c = self._projection
+        return self.unknowns.n_rho == 0 or c.stage(max(iteration, 0)) == c.stages - 1
 
     def evaluate(self, x: Array, sharpness: float) -> Evaluation:
         """Values and derivatives at x."""
@@ -85,6 +112,7 @@ class LayoutProblem:
             grey=float((4.0 * rho * (1.0 - rho)).mean()),
             weight=self.unknowns.solidity(fields),
             cg_iterations=self.physics.cg_iterations,
+            least=0.0 if isinstance(self.objective, _NEVER_NEGATIVE) else -math.inf,
         )
 
     def warm_state(self) -> dict[str, Array]:

@@ -3,22 +3,25 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import Protocol
 
 import numpy as np
 from numpy.typing import NDArray
 
 from voxelmat.errors import ConvergenceError
-from voxelmat.kernels.mma import dual_terms
+from voxelmat.kernels.mma import dual_terms, model_values
 from voxelmat.monitor import computing
 
-__all__ = ["Separable", "solve_dual"]
+__all__ = ["BLOCKS", "Dual", "Separable", "climb_dual", "solve_dual"]
 
 Array = NDArray[np.float64]
 
-_BLOCKS = 8  # partial sums, added in order: the same bits on any number of threads
+BLOCKS = 8  # partial sums, added in order: the same bits on any number of threads
 _BARRIER_START, _BARRIER_END = 0.1, 1e-9
 _NEWTON_STEPS = 60
 _HALVINGS = 20
+_WARM_STEPS = 10  # of the plain Newton method from the multipliers of the step before
+_WARM_END = 1e-9
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -44,19 +47,32 @@ class Separable:
 
     def values(self, x: Array) -> Array:
         """Objective and constraints at x, (1 + m,)."""
-        total: Array = self.r + (self.p / (self.upper - x) + self.q / (x - self.lower)).sum(1)
+        value = np.empty((BLOCKS, self.r.size))
+        with computing():
+            model_values(x, self.p, self.q, self.lower, self.upper, value)
+        total: Array = self.r + value.sum(0)
         return total
 
 
-class _Dual:
-    """Constraint values and curvature as functions of the multipliers."""
+class Dual(Protocol):
+    """A concave dual: constraint values at the minimiser x of the Lagrangian, and curvature."""
 
-    def __init__(self, model: Separable, ceiling: float) -> None:
-        self._model, self._ceiling = model, ceiling
+    m: int
+    x: Array
+
+    def __call__(self, multipliers: Array) -> tuple[Array, Array]:
+        """Values (m,) and the matrix (m, m) by which they fall; leaves the minimiser in `x`."""
+
+
+class _SeparableDual:
+    """The dual of a `Separable`."""
+
+    def __init__(self, model: Separable) -> None:
+        self._model = model
         self.m = model.p.shape[0] - 1
         self.x = np.empty(model.p.shape[1])
-        self._value = np.empty((_BLOCKS, self.m))
-        self._curvature = np.empty((_BLOCKS, self.m, self.m))
+        self._value = np.empty((BLOCKS, self.m))
+        self._curvature = np.empty((BLOCKS, self.m, self.m))
 
     def __call__(self, multipliers: Array) -> tuple[Array, Array]:
         s = self._model
@@ -69,27 +85,9 @@ class _Dual:
         curvature: Array = self._curvature.sum(0)
         return value, curvature
 
-    def gradient(self, multipliers: Array, barrier: float) -> tuple[Array, Array]:
-        """Of the concave dual plus ``barrier * sum log multipliers``; and minus its Hessian.
-
-        The elastic variable y of each constraint costs ceiling * y + y^2 / 2, so beyond the
-        ceiling a multiplier buys violation instead of growing without end; the barrier on y
-        rounds the kink.
-        """
-        value, curvature = self(multipliers)
-        over = multipliers - self._ceiling
-        root = np.sqrt(over**2 + 4.0 * barrier)
-        y = np.where(over > 0, 0.5 * (over + root), 2.0 * barrier / (root - np.minimum(over, 0.0)))
-        slope = value - y + barrier / multipliers
-        bend = curvature + np.diag(y / root + barrier / multipliers**2)
-        return slope, bend
-
 
 def solve_dual(model: Separable, ceiling: float, start: Array | None = None) -> tuple[Array, Array]:
     """Minimise the objective of `model` subject to its constraints <= 0.
-
-    Newton's method on the multipliers along a barrier that falls to 1e-9; x follows from them in
-    closed form, so only m x m systems are solved.
 
     Parameters
     ----------
@@ -109,29 +107,80 @@ def solve_dual(model: Separable, ceiling: float, start: Array | None = None) -> 
     ConvergenceError
         If the values are not finite.
     """
-    dual = _Dual(model, ceiling)
+    dual = _SeparableDual(model)
+    multipliers = climb_dual(dual, ceiling, start)
+    return dual.x, multipliers
+
+
+def climb_dual(dual: Dual, ceiling: float, start: Array | None = None) -> Array:
+    """Multipliers at the top of a concave dual; its minimiser is then in ``dual.x``.
+
+    With the multipliers of a similar problem, Newton's method on those that are not zero takes
+    a handful of evaluations. Without, or should it not settle, Newton's method climbs along a
+    barrier that falls to 1e-9. Only m x m systems are solved.
+
+    Raises
+    ------
+    ConvergenceError
+        If the values are not finite.
+    """
     if dual.m == 0:
         dual(np.empty(0))
-        return dual.x, np.empty(0)
-    lam = np.ones(dual.m) if start is None else np.clip(start, 1e-3, ceiling)
+        return np.empty(0)
+    lam = np.ones(dual.m) if start is None else np.clip(start, 0.0, ceiling)
     if not np.all(np.isfinite(dual(lam)[0])):
         raise ConvergenceError(
             "The subproblem of the optimiser has values that are not finite; the response or "
             "its gradient overflowed."
         )
+    if start is not None and (warm := _from_near(dual, lam, ceiling)) is not None:
+        return warm
+    lam = np.maximum(lam, 1e-3)
     barrier = _BARRIER_START
     while True:
-        lam = _climb(dual, lam, barrier)
+        lam = _climb(dual, lam, ceiling, barrier)
         if barrier <= _BARRIER_END:
             break
         barrier = max(0.1 * barrier, _BARRIER_END)
     dual(lam)
-    return dual.x, lam
+    return lam
 
 
-def _climb(dual: _Dual, lam: Array, barrier: float) -> Array:
+def _from_near(dual: Dual, lam: Array, ceiling: float) -> Array | None:
+    """Newton's method on the multipliers that are not zero; None if it does not settle."""
+    for _ in range(_WARM_STEPS):
+        slope, bend = dual(lam)
+        slope = slope - np.maximum(lam - ceiling, 0.0)
+        free = (lam > 0.0) | (slope > 0.0)
+        if not free.any() or float(np.abs(slope[free]).max()) < _WARM_END:
+            return lam
+        bend = bend + np.diag((lam > ceiling).astype(np.float64))
+        bend += (1e-13 * float(bend.diagonal().max()) + 1e-300) * np.eye(dual.m)
+        step = np.linalg.solve(bend[np.ix_(free, free)], slope[free])
+        lam = lam.copy()
+        lam[free] = np.clip(lam[free] + step, 0.0, 20.0 * np.maximum(lam[free], 0.05))
+    return None
+
+
+def _barred(dual: Dual, lam: Array, ceiling: float, barrier: float) -> tuple[Array, Array]:
+    """Gradient of the dual plus ``barrier * sum log multipliers``; and minus its Hessian.
+
+    The elastic variable y of each constraint costs ceiling * y + y^2 / 2, so beyond the
+    ceiling a multiplier buys violation instead of growing without end; the barrier on y
+    rounds the kink.
+    """
+    value, curvature = dual(lam)
+    over = lam - ceiling
+    root = np.sqrt(over**2 + 4.0 * barrier)
+    y = np.where(over > 0, 0.5 * (over + root), 2.0 * barrier / (root - np.minimum(over, 0.0)))
+    slope = value - y + barrier / lam
+    bend = curvature + np.diag(y / root + barrier / lam**2)
+    return slope, bend
+
+
+def _climb(dual: Dual, lam: Array, ceiling: float, barrier: float) -> Array:
     """Newton's method to the top of the concave dual with its barrier."""
-    slope, bend = dual.gradient(lam, barrier)
+    slope, bend = _barred(dual, lam, ceiling, barrier)
     for _ in range(_NEWTON_STEPS):
         if float(np.abs(slope).max()) < 0.5 * barrier:
             break
@@ -142,7 +191,7 @@ def _climb(dual: _Dual, lam: Array, barrier: float) -> Array:
         rise = float(slope @ step)
         for _ in range(_HALVINGS):
             new = lam + length * step
-            slope, bend = dual.gradient(new, barrier)
+            slope, bend = _barred(dual, new, ceiling, barrier)
             # Along the step the slope only falls; far below zero means far beyond the top.
             if float(slope @ step) > -0.5 * rise:
                 break
