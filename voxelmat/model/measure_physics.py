@@ -177,7 +177,7 @@ class PeakTemperature(_Heat):
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class MeanTemperature(_Heat):
-    """Steady temperature, mean over the nodes of a region, degC.
+    """Steady temperature over the coldest one that is given, mean over a region's nodes, K.
 
     Attributes
     ----------

@@ -13,7 +13,12 @@ from numpy.typing import NDArray
 from voxelmat.errors import InputError
 from voxelmat.model.part import Part
 
-__all__ = ["mixed_conductivity", "palette_capacity", "palette_conductivity"]
+__all__ = [
+    "conductivity_slopes",
+    "mixed_conductivity",
+    "palette_capacity",
+    "palette_conductivity",
+]
 
 Floats = NDArray[np.float64]
 
@@ -51,6 +56,28 @@ def mixed_conductivity(fractions: Floats, conductivity: Floats) -> Floats:
             balance += fractions[:, m] * (k - middle) / (k + 2.0 * middle)
         low, high = np.where(balance > 0, middle, low), np.where(balance > 0, high, middle)
     return np.asarray(0.5 * (low + high))
+
+
+def conductivity_slopes(fractions: Floats, conductivity: Floats, mixed: Floats) -> Floats:
+    """Slopes of `mixed_conductivity` by each fraction with the others held.
+
+    They hold for changes that keep the sum of the fractions; off it the balance that defines the
+    average is taken as it stands.
+
+    Parameters
+    ----------
+    fractions : ndarray, shape (n, K)
+    conductivity : ndarray, shape (K,)
+    mixed : ndarray, shape (n,)
+        `mixed_conductivity` of these.
+
+    Returns
+    -------
+    ndarray, shape (n, K)
+    """
+    k = mixed[:, None]
+    below = (fractions * 3.0 * conductivity / (conductivity + 2.0 * k) ** 2).sum(axis=1)
+    return np.asarray((conductivity - k) / (conductivity + 2.0 * k) / below[:, None])
 
 
 def _values(part: Part, field: str, what: str, key: str) -> Floats:
