@@ -16,7 +16,8 @@ from voxelmat.model.part import Part
 from voxelmat.printing.circle import fitted_circle
 from voxelmat.printing.inspection import inspection_findings, measure
 from voxelmat.printing.outlines import outline_deviation
-from voxelmat.printing.preflight import as_sliced, preflight
+from voxelmat.printing.partcheck import as_sliced
+from voxelmat.printing.preflight import preflight
 from voxelmat.printing.stack import write_stack
 from voxelmat.printing.view import part_view
 from voxelmat.shape.bodies import Body

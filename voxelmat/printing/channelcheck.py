@@ -2,27 +2,33 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+from collections.abc import Iterator, Sequence
 
+from voxelmat.io.bigpart import AnyPart
 from voxelmat.model.finding import Finding
-from voxelmat.model.part import Part
 from voxelmat.model.profile import PrintProfile
 from voxelmat.printing.designed import used_resins
 from voxelmat.printing.readback import Stack
+from voxelmat.printing.stackparts import StackPart
 
-__all__ = ["channel_findings", "manifest_findings"]
+__all__ = ["channel_findings", "digest_findings", "manifest_findings"]
 
 
 def _stop(code: str, message: str, remedy: str) -> Finding:
     return Finding(severity="stop", code=code, message=message, remedy=remedy)
 
 
-def channel_findings(stack: Stack, part: Part | None, profile: PrintProfile) -> Iterator[Finding]:
-    """A resin that no channel lays, a channel that the printer lacks or loads otherwise."""
+def channel_findings(
+    stack: Stack, designs: Sequence[AnyPart], profile: PrintProfile
+) -> Iterator[Finding]:
+    """A resin that no channel lays, a channel that the printer lacks or loads otherwise.
+
+    `designs` are those of some of the stack's parts.
+    """
     model = [c for c in stack.channels if c.role != "support"]
     again = "Write the stack again for this design and profile."
-    if part is not None:
-        needed = used_resins(part)
+    if designs:
+        needed = tuple(dict.fromkeys(r for design in designs for r in used_resins(design)))
         laid = {c.resin for c in model}
         for resin in needed:
             if resin not in laid:
@@ -60,8 +66,8 @@ def channel_findings(stack: Stack, part: Part | None, profile: PrintProfile) -> 
             )
 
 
-def manifest_findings(stack: Stack, part: Part | None) -> Iterator[Finding]:
-    """Figures of the manifest that contradict each other, or another design."""
+def manifest_findings(stack: Stack) -> Iterator[Finding]:
+    """Figures of the manifest that contradict each other."""
     site = float(stack.raster.site_volume)
     for channel in stack.channels:
         if abs(channel.sites * site - channel.volume_mm3) > 1e-6 * max(channel.volume_mm3, site):
@@ -71,11 +77,13 @@ def manifest_findings(stack: Stack, part: Part | None) -> Iterator[Finding]:
                 f"{channel.sites * site:.6g} mm^3, and beside it {channel.volume_mm3:.6g} mm^3.",
                 "The manifest was edited; write the stack again.",
             )
-    if part is None or len(stack.parts) != 1 or any(stack.profile.bias):
-        return
+
+
+def digest_findings(placed: StackPart, sliced: AnyPart, stack: Stack) -> Iterator[Finding]:
+    """Another state of the design than that which the stack was written from."""
     if stack.support_policy == "skin":  # sliced on a grid with room for it
         return
-    if stack.parts[0].digest != part.digest:
+    if placed.digest != sliced.digest:
         yield Finding(
             severity="warn",
             code="other design",

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 from voxelmat.model.finding import Finding
-from voxelmat.model.part import Part
 from voxelmat.model.profile import PrintProfile
 from voxelmat.monitor import SILENT, Monitor
 from voxelmat.printing.checks3d import three_d_findings
@@ -12,8 +11,6 @@ from voxelmat.printing.scan import Facts
 
 __all__ = ["deep_findings", "without_repeats"]
 
-#: Said with more detail by `voxelmat.printing.oddlayers` and `voxelmat.printing.layerdesign`.
-_SAID = ("layer out of line", "other layer")
 #: Packed screen and the check in three dimensions that judges the same feature by its thickness.
 _SAME = {
     "thin wall or strut": ("wall under minimum", "strut under minimum"),
@@ -22,28 +19,20 @@ _SAME = {
 
 
 def deep_findings(
-    stack: Stack,
-    part: Part | None,
-    facts: Facts,
-    profile: PrintProfile,
-    *,
-    monitor: Monitor = SILENT,
+    stack: Stack, facts: Facts, profile: PrintProfile, *, monitor: Monitor = SILENT
 ) -> list[Finding]:
-    """Everything that is judged in three dimensions, without what is said already.
+    """Everything that is judged in three dimensions on sites, sealed cavities not again.
 
     Parameters
     ----------
     stack : Stack
-    part : Part or None
-        What a stack of one part was sliced from.
     facts : Facts
         Of the same stack.
     profile : PrintProfile
     monitor : Monitor
     """
     sealed = [p for p in facts.hollows if not p.on_tray and not p.at_side]
-    found = three_d_findings(stack, part, profile, sealed=sealed, monitor=monitor)
-    return [f for f in found if f.code not in _SAID]
+    return three_d_findings(stack, None, profile, sealed=sealed, monitor=monitor)
 
 
 def without_repeats(found: list[Finding]) -> list[Finding]:

@@ -14,16 +14,19 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy import ndimage
 
+from voxelmat.kernels.bitplane import count_planes
 from voxelmat.model.finding import Finding
 from voxelmat.model.halftone import Halftone
 from voxelmat.model.part import DISTANCE_STEPS, Part
 from voxelmat.printing.raster import Raster
 from voxelmat.printing.readback import Stack
+from voxelmat.printing.stackparts import StackPart
 from voxelmat.printing.support import outline_field
 
 __all__ = ["ExpectedLayers"]
 
 Bools = NDArray[np.bool_]
+_FULL = np.uint64(2**64 - 1)
 _LATTICE = 64  # points along rows and along columns
 #: Share of the points of a layer that may be wrong; a feature between two voxels may be drawn
 #: otherwise than straight interpolation says. Ours.
@@ -50,16 +53,22 @@ class ExpectedLayers:
     Parameters
     ----------
     stack : Stack
-        Of one part.
     part : Part
-        The design, compensated for the printer's bias.
-    raster : Raster
-        Of the part.
+        The design of one of its parts, compensated for the printer's bias.
+    placed : StackPart
+        Where it stands in the images.
+
+    Attributes
+    ----------
+    sites : ndarray of int64, shape (channels,)
+        Droplet sites of each channel in the part's window, counted on the way.
     """
 
-    def __init__(self, stack: Stack, part: Part, raster: Raster) -> None:
+    def __init__(self, stack: Stack, part: Part, placed: StackPart) -> None:
+        raster = placed.raster
         self._stack = stack
-        self._part = part
+        self._placed = placed
+        self.sites = np.zeros(len(stack.channels), dtype=np.int64)
         self._field = raster.to_image(outline_field(part))
         self._labels = raster.to_image(part.labels)
         self._index = [raster.image_index(part.grid, m) for m in range(3)]
@@ -130,19 +139,23 @@ class ExpectedLayers:
         return value, one
 
     def push(self, layer: int, planes: NDArray[np.uint64]) -> None:
-        """Take in a layer, words ``[channel, row, word]``."""
+        """Take in a layer of the stack, words ``[channel, row, word]``."""
+        layer -= self._placed.layers.start
+        if not 0 <= layer < len(self._index[0]):
+            return
+        self._count(planes)
         rows, columns = self._lattice(layer)
         value, label = self._corners(layer, rows, columns)
         inside, sure = value < 0, np.abs(value) > self._sure
         sure &= self._within[0][layer] & np.outer(self._within[1][rows], self._within[2][columns])
         pure = np.where(sure & inside, self._pure[label], -1)
-        n_rows, n_columns = planes.shape[1], len(self._index[2])
+        n_rows, n_columns = len(self._index[1]), len(self._index[2])
         wrong: dict[str, int] = {}
         place = (int(rows[0]), int(columns[0]))
         for words, (up, along) in _TURNS.items():
             at = rows if up > 0 else n_rows - 1 - rows
             to = columns if along > 0 else n_columns - 1 - columns
-            bits = self._bits(planes, at, to)
+            bits = self._bits(planes, at + self._placed.rows.start, to + self._placed.columns.start)
             solid = bits[self._model].any(axis=0)
             off = sure & (solid != inside)
             if (pure >= 0).any():
@@ -156,6 +169,15 @@ class ExpectedLayers:
                 first = np.argwhere(off)[0]
                 place = (int(rows[first[0]]), int(columns[first[1]]))
         self._seen.append(_Seen(layer, int(sure.sum()), wrong, place, empty))
+
+    def _count(self, planes: NDArray[np.uint64]) -> None:
+        """Add the sites of a layer within the part's window."""
+        rows, columns = self._placed.rows, self._placed.columns
+        first, last = columns.start >> 6, (columns.stop + 63) >> 6
+        cut = planes[:, rows, first:last].copy()
+        cut[:, :, 0] &= _FULL >> np.uint64(columns.start & 63)
+        cut[:, :, -1] &= _FULL << np.uint64(-columns.stop & 63)
+        count_planes(cut, self.sites)
 
     @staticmethod
     def _bits(
@@ -212,7 +234,7 @@ class ExpectedLayers:
         return best if off[best] < 0.1 * now else ""
 
     def _place(self, seen: _Seen) -> tuple[float, float, float]:
-        return self._stack.locate(seen.layer, *seen.place)[1]
+        return self._placed.raster.pixel_to_part(seen.layer, *seen.place)
 
 
 def _turned(turn: str) -> str:

@@ -2,46 +2,14 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
-
-from voxelmat.errors import FileFormatError, InputError
 from voxelmat.model.deviation import ChannelOutline, OutlineDeviation
 from voxelmat.model.finding import Finding
-from voxelmat.model.part import Part
-from voxelmat.monitor import SILENT, Monitor
-from voxelmat.printing.outlines import outline_deviation
-from voxelmat.printing.readback import Stack
-from voxelmat.shape.bodies import Body
 
 __all__ = ["outline_findings"]
 
 
-def outline_findings(
-    stack: Stack,
-    part: Part,
-    sliced: Part | None = None,
-    *,
-    bodies: Sequence[Body] = (),
-    monitor: Monitor = SILENT,
-) -> list[Finding]:
-    """Findings on the outline of a stack of one part.
-
-    Parameters
-    ----------
-    stack : Stack
-    part : Part
-        The design.
-    sliced : Part, optional
-        The design compensated for the printer's bias.
-    bodies : sequence of Body, optional
-        Its meshes.
-    monitor : Monitor
-    """
-    printed = None if sliced is part else sliced
-    try:
-        seen = outline_deviation(stack, part, bodies=bodies, printed=printed, monitor=monitor)
-    except (InputError, FileFormatError):
-        return []  # nothing to compare with or nothing to compare; other checks say so
+def outline_findings(seen: OutlineDeviation) -> list[Finding]:
+    """Findings on the outline of one part."""
     found = []
     together = {row.shift for row in seen.channels} == {seen.whole.shift}
     if any(seen.whole.shift) and together:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass, field, replace
 
 import numpy as np
@@ -181,7 +182,7 @@ def scan(
     wall: Sites,
     gap: Sites,
     *,
-    expected: ExpectedLayers | None = None,
+    expected: Sequence[ExpectedLayers] = (),
     monitor: Monitor = SILENT,
 ) -> Facts:
     """Read every layer and gather the facts.
@@ -191,8 +192,8 @@ def scan(
     stack : Stack
     wall, gap : tuple of int
         Smallest wall and gap along layers, rows and columns, in sites.
-    expected : ExpectedLayers, optional
-        Is shown every layer as well.
+    expected : sequence of ExpectedLayers
+        Are shown every layer as well.
     monitor : Monitor
 
     Returns
@@ -214,8 +215,8 @@ def scan(
             part, _ = layer.union(support=False)
             if number == 0:
                 main.push(k, layer, part)
-                if expected is not None:
-                    expected.push(k, layer.planes)
+                for each in expected:
+                    each.push(k, layer.planes)
             band.push(part)
             done = number * stack.n_layers + k + 1
             monitor.report("checking layers", done=done, total=total)
