@@ -10,6 +10,7 @@ from typing import Any, NoReturn
 
 from voxelmat.errors import InputError
 from voxelmat.io.design_checks import check_design, resin_uses
+from voxelmat.io.design_measures import measure_goal, measure_limit
 from voxelmat.io.design_print import dimension_entry, print_entry
 from voxelmat.io.schema import check_document, read_toml
 from voxelmat.model.design import (
@@ -263,14 +264,19 @@ def _requirement(table: Table) -> RequirementEntry:
 
 def _optimise(table: Table) -> OptimiseEntry:
     lists = ("resins", "design_in", "keep", "solid", "empty", "protected", "symmetry", "sharpness")
-    limits = []
-    for limit in table.get("limit", ()):
+    limits, measured = [], []
+    for i, limit in enumerate(table.get("limit", ())):
+        if "measure" in limit:
+            measured.append(measure_limit(limit, f"optimise.limit[{i}]"))
+            continue
         most = limit["at_most_g"] if limit["kind"] == "mass" else limit["at_most_fraction"]
         limits.append(LimitEntry(kind=limit["kind"], at_most=float(most), resin=limit.get("resin")))
     listed: dict[str, Any] = {k: tuple(table[k]) for k in lists if k in table}
     return OptimiseEntry(
-        **_rest(table, "limit", "fixed", *lists),
+        **_rest(table, "limit", "fixed", "minimise", "maximise", *lists),
         **listed,
+        goal=measure_goal(table),
+        measured=tuple(measured),
         limits=tuple(limits),
         fixed=tuple((f["region"], f["resin"]) for f in table.get("fixed", ())),
     )

@@ -10,6 +10,7 @@ from typing import Any
 import numpy as np
 
 from voxelmat.errors import InputError
+from voxelmat.io.design_measures import check_measure, measures_of, named_in_measures
 from voxelmat.model.design import Design, LoadEntry, RequirementEntry, TargetEntry
 from voxelmat.model.region import parse_side
 from voxelmat.model.requirement import MEASURES
@@ -17,6 +18,7 @@ from voxelmat.model.requirement import MEASURES
 __all__ = ["check_design", "resin_uses"]
 
 _MAP_KEYS = ("cell_mm", "side", "first_cell_mm", "columns_grow", "rows_grow")
+_MOST_RESINS = 40
 _PICTURES = (".png", ".tif", ".tiff", ".bmp", ".jpg", ".jpeg")
 
 
@@ -108,6 +110,7 @@ def resin_uses(design: Design) -> Iterable[tuple[str, str]]:
             yield name, f"optimise.resins[{i}]"
         for i, (_, name) in enumerate(design.optimise.fixed):
             yield name, f"optimise.fixed[{i}].resin"
+        yield from named_in_measures(design.optimise, "resin")
 
 
 def _known(name: str, known: Collection[str], what: str, key: str) -> None:
@@ -218,6 +221,7 @@ def _region_uses(design: Design) -> Iterable[tuple[str, str]]:
                 yield name, f"optimise.{table}[{i}]"
         for i, (name, _) in enumerate(design.optimise.fixed):
             yield name, f"optimise.fixed[{i}].region"
+        yield from named_in_measures(design.optimise, "region")
 
 
 def _check_axes(settings: Mapping[str, Any], key: str) -> None:
@@ -305,6 +309,14 @@ def _check_optimise(design: Design, targets: list[str]) -> None:
         raise InputError(
             "There is no load case to optimise for; add [[load_case]].", key="optimise"
         )
+    for entry in measures_of(ask):
+        check_measure(entry)
+    for name, key in named_in_measures(ask, "load case"):
+        _known(name, [c.name for c in design.cases], "load case", key)
+    for name, key in named_in_measures(ask, "target"):
+        _known(name, targets, "target", key)
+    for name, key in named_in_measures(ask, "resin"):
+        _known(name, ask.resins, "resin in optimise.resins", key)
     if (ask.objective == "target deflection") != (ask.target is not None):
         raise InputError(
             "The objective 'target deflection' names a target, and no other objective does.",
@@ -314,6 +326,11 @@ def _check_optimise(design: Design, targets: list[str]) -> None:
         _known(ask.target, targets, "target", "optimise.target")
     if len(set(ask.resins)) != len(ask.resins):
         raise InputError("A resin is named twice.", key="optimise.resins")
+    if len(ask.resins) > _MOST_RESINS:
+        raise InputError(
+            f"A design chooses among at most {_MOST_RESINS} resins; got {len(ask.resins)}.",
+            key="optimise.resins",
+        )
     if not ask.void and len(ask.resins) < 2:
         raise InputError(
             "With one resin and void = false there is nothing to choose; add a resin, or set "

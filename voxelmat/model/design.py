@@ -13,6 +13,7 @@ from voxelmat.errors import InputError
 from voxelmat.model.halftone import Halftone
 from voxelmat.model.inspection import Dimension
 from voxelmat.model.material import Constant, Material
+from voxelmat.model.measure_entry import MeasureEntry
 from voxelmat.provenance import text_digest
 from voxelmat.units import DENSITY_G_CM3
 
@@ -244,14 +245,19 @@ class LimitEntry:
 class OptimiseEntry:
     """What the optimiser is asked for; None leaves a setting to the optimiser's own default.
 
-    With `skip` a run takes the layout as it is. `design_in` names the regions that are designed
+    Exactly one of `objective` (``"compliance"`` or ``"target deflection"``; empty where not used)
+    and `goal` says what is made least or greatest; `measured` are limits on any measure. Where
+    `levels` is None, the palette is as small as `palette_error` (a share of the objective)
+    allows. With `skip` a run takes the layout as it is. `design_in` names the regions that are designed
     (empty: the whole part), `keep`, `solid`, `empty` and `protected` name regions, `fixed` pairs
     a region with the resin it must be.
     """
 
     resins: tuple[str, ...]
-    objective: str
     filter_radius_mm: float
+    objective: str = ""
+    goal: MeasureEntry | None = None
+    measured: tuple[MeasureEntry, ...] = ()
     target: str | None = None
     limits: tuple[LimitEntry, ...] = ()
     void: bool = False
@@ -265,6 +271,7 @@ class OptimiseEntry:
     symmetry: tuple[str, ...] = ()
     iterations: int | None = None
     levels: int | None = None
+    palette_error: float | None = None
     penalty: float | None = None
     move: float | None = None
     method: str | None = None
