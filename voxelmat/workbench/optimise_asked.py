@@ -56,10 +56,15 @@ def asked_controls(bench: Workbench) -> list[c.Control]:
     data = bench.draft.data
     table = data["optimise"]
     targets = [t["name"] for t in data.get("target", [])]
-    objective = table["objective"]
-    shown = [
-        c.choice("objective", "Make least", objective, ["compliance", "target deflection"]),
-    ]
+    objective = table.get("objective", "")
+    shown: list[c.Control] = []
+    if objective:
+        shown.append(
+            c.choice("objective", "Make least", objective, ["compliance", "target deflection"])
+        )
+    for sense, word in (("minimise", "least"), ("maximise", "greatest")):
+        if sense in table:
+            shown.append(c.words(f"Makes {word}: {table[sense]['measure']}."))
     if objective == "target deflection":
         shown.append(c.choice("target", "Target", table.get("target", ""), targets))
     shown += [
@@ -68,7 +73,10 @@ def asked_controls(bench: Workbench) -> list[c.Control]:
         c.number_box("radius", "Filter radius", table["filter_radius_mm"], "mm"),
         c.number_box("iterations", "Iterations, at most", table.get("iterations", 80)),
     ]
-    limits = {(e["kind"], e.get("resin", "")): e for e in table.get("limit", [])}
+    limits = {(e["kind"], e.get("resin", "")): e for e in table.get("limit", []) if "kind" in e}
+    for e in table.get("limit", []):
+        for key in (k for k in e if "measure" in e and k.startswith("at_")):
+            shown.append(c.words(f"Limit: {e['measure']}, {key.replace('_', ' ')} {e[key]:g}."))
     volume, mass = limits.get(("volume", "")), limits.get(("mass", ""))
     shown += [
         c.number_box("volume", "Volume, at most", _given(volume, "at_most_fraction"), "of 1"),

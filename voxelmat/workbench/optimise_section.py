@@ -86,6 +86,7 @@ class OptimiseSection(Section):
         super().__init__(bench)
         self.runs: list[Run] = []
         self._chosen, self._iteration = 0, -1
+        self._other = ""
         self._plot = b""
         self._drawn = 0.0
 
@@ -116,7 +117,7 @@ class OptimiseSection(Section):
             limits = [
                 entry
                 for entry in data["optimise"].get("limit", [])
-                if (entry["kind"], entry.get("resin", "")) != (kind, resin)
+                if (entry.get("kind"), entry.get("resin", "")) != (kind, resin)
             ]
             if at_most:
                 new = {"kind": kind, keys[kind]: at_most}
@@ -206,6 +207,24 @@ class OptimiseSection(Section):
             stage.show(of_part(part))
         return part
 
+    def compare(self, first: int, second: int) -> tuple[Part, Part]:
+        """Show the last designs of two runs side by side, with one camera.
+
+        Returns
+        -------
+        tuple of Part
+
+        Raises
+        ------
+        InputError
+            If there is no such run, or it has no iteration yet.
+        """
+        parts = self.run(first).at(-1), self.run(second).at(-1)
+        stage = getattr(self.bench, "stage", None)
+        if stage is not None:
+            stage.compare(*parts, names=(f"run {first}", f"run {second}"))
+        return parts
+
     def take(self, run: int = 0, iteration: int = -1) -> Path:
         """Make the design of one iteration the layout of the design, in one step of undo.
 
@@ -284,6 +303,16 @@ class OptimiseSection(Section):
                 c.slider("iteration", f"Iteration of run {run.number}", at, 1, last, 1),
                 c.group(c.button("take", "Take this design"), c.button("last", "Show the last")),
             ]
+        others = [str(r.number) for r in self.runs if r is not run and r.iterates]
+        if run.iterates and others:
+            if self._other not in others:
+                self._other = others[-1]
+            shown.append(
+                c.group(
+                    c.choice("other", f"Beside run {run.number}: run", self._other, others),
+                    c.button("compare", "Show side by side"),
+                )
+            )
         return shown
 
     def act(self, name: str, value: Any) -> None:
@@ -298,6 +327,10 @@ class OptimiseSection(Section):
             kept = [i.record.iteration for i in self.run(self._chosen).iterates]
             near = min(kept, key=lambda n: abs(n - float(value)))
             self.call("show", run=self._chosen, iteration=near)
+        elif name == "other":
+            self._other = str(value)
+        elif name == "compare":
+            self.call("compare", first=self.run(self._chosen).number, second=int(self._other))
         elif name == "last":
             self.call("show", run=self._chosen)
         elif name == "take":

@@ -25,6 +25,7 @@ from voxelmat.model.design_spec import (
 from voxelmat.monitor import SILENT, Monitor
 from voxelmat.topopt.iterate import Iterate
 from voxelmat.topopt.optimise import optimise
+from voxelmat.workflow.asked_measures import goal_of, limit_of
 from voxelmat.workflow.build import Built
 
 __all__ = ["design_spec", "optimised"]
@@ -97,7 +98,10 @@ def design_spec(built: Built) -> DesignSpec:
             resins=entry.resins,
             objective=_objective(built, entry),
             filter_radius=entry.filter_radius_mm,
-            limits=tuple(_limit(limit) for limit in entry.limits),
+            limits=(
+                *(_limit(limit) for limit in entry.limits),
+                *(limit_of(built, limit) for limit in entry.measured),
+            ),
             void=entry.void,
             projection=Projection(
                 sharpness=standard.sharpness if sharpness is None else sharpness,
@@ -119,6 +123,8 @@ def design_spec(built: Built) -> DesignSpec:
 
 
 def _objective(built: Built, entry: OptimiseEntry) -> Objective:
+    if entry.goal is not None:
+        return goal_of(built, entry.goal)
     if entry.objective == "compliance" or entry.target is None:
         return Compliance()
     target = built.resolved.targets[entry.target]
