@@ -114,7 +114,7 @@ def test_turned_cut_painted_mixed_and_grown(notebook, open_bench, gl):
     desk.get_by_text(re.compile("Clicked: ")).wait_for()
     typed(desk.get_by_label("Its name"), "clicked face")
     desk.get_by_role("button", name="Grow the region").click()
-    desk.get_by_role("cell", name="clicked face").wait_for()
+    desk.get_by_role("cell", name="clicked face", exact=True).wait_for()
     assert notebook.ask("print(bench.draft.data['region'][-1]['kind'])") == "grown"
     assert desk.locator("code.line").inner_text().startswith("bench.shape.grow(")
 
@@ -130,8 +130,9 @@ def test_turned_cut_painted_mixed_and_grown(notebook, open_bench, gl):
     patch = desk.locator("img.still").first
     before = pixels(patch)
     for n in range(10):
-        slider.fill(str(0.05 + 0.09 * n))
-        until(notebook, f"abs(bench.mix.parts['measured-soft'] - {0.05 + 0.09 * n}) < 1e-6",
+        share = round(0.86 - 0.09 * n, 2)
+        slider.fill(str(share))
+        until(notebook, f"abs(bench.mix.parts['measured-soft'] - {share}) < 1e-6",
               "the slider did not reach the kernel")  # fmt: skip
     assert notebook.ask("print(1 + 1)") == "2"
     assert notebook.ask("print(any(t is not threading.main_thread() for t in threads))") == "True"
