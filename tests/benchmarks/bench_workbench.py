@@ -64,9 +64,7 @@ def space(bench):
     if not view.said.startswith("At "):
         raise SystemExit(f"the picks missed the part: {view.said}")
     name = view.tools["materials"][-1][0]
-    found["ghost"] = milliseconds(
-        lambda n: view.see(name, "ghost" if n % 2 == 0 else "shown"), 10
-    )
+    found["ghost"] = milliseconds(lambda n: view.see(name, "ghost" if n % 2 == 0 else "shown"), 10)
     found["png_2x"] = milliseconds(lambda n: view.png(), 3)
 
     def both(n):

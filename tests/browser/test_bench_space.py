@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import io
+import itertools
 import os
 from pathlib import Path
 
@@ -92,10 +93,10 @@ def test_the_part_is_turned_cut_picked_measured_and_saved(notebook, open_bench, 
     seen.append(space.after(lambda: space.drag(60, 0, modifier="Shift")))
     seen.append(space.after(lambda: space.drag(-30, 20, button="middle")))
     space.image.focus()
-    for key in ("ArrowLeft", "Shift+ArrowRight", "+", "x", "i", "f"):
-        seen.append(space.after(lambda key=key: page.keyboard.press(key)))
+    keys = ("ArrowLeft", "Shift+ArrowRight", "+", "x", "i", "f")
+    seen += [space.after(lambda key=key: page.keyboard.press(key)) for key in keys]
     assert all(is_a_picture(p) for p in seen)
-    changed = [np.abs(a - b).mean() for a, b in zip(seen, seen[1:], strict=False)]
+    changed = [np.abs(a - b).mean() for a, b in itertools.pairwise(seen)]
     assert min(changed) > 0.3, changed
     # a click finds the top of the pad and says so
     space.after(lambda: page.keyboard.press("z"))
@@ -131,7 +132,7 @@ def test_the_part_is_turned_cut_picked_measured_and_saved(notebook, open_bench, 
     with page.expect_download() as download:
         space.box.get_by_role("button", name="Download the picture").click()
     with Image.open(download.value.path()) as picture:
-        assert picture.size == (1680, 960)
+        assert picture.width >= 2 * (space.image.bounding_box()["width"] - 4)
     assert notebook.ask("print(bench.message_is_bad)") == "False"
 
 
@@ -170,7 +171,8 @@ def test_materials_loads_fields_and_the_state_after_reopening(notebook, open_ben
     shot(notebook, "space-field")
     space.after(
         lambda: notebook.page.evaluate(
-            "window.jupyterapp.commands.execute('apputils:change-theme', {theme: 'JupyterLab Dark'})"
+            "window.jupyterapp.commands.execute('apputils:change-theme', "
+            "{theme: 'JupyterLab Dark'})"
         )
     )
     corner = space.pixels()[20:40, -40:-20]
@@ -183,6 +185,6 @@ def test_materials_loads_fields_and_the_state_after_reopening(notebook, open_ben
     notebook.run_all()
     notebook.page.locator(".vm-space img[data-seq]").first.wait_for()
     notebook.ask("bench.jobs.settle(120)")
-    assert notebook.ask("print(bench.stage.space._shown.painted, bench.stage.space._shown.factor)") == (
-        "von Mises stress 100.0"
-    )
+    assert notebook.ask(
+        "print(bench.stage.space._shown.painted, bench.stage.space._shown.factor)"
+    ) == ("von Mises stress 100.0")

@@ -47,6 +47,14 @@ def test_runs_are_kept_and_any_iterate_can_be_taken(bench):
     assert (last.occupancy == first.part.occupancy).mean() > 0.99
     tables = [c for c in bench.optimiser.controls() if c["kind"] == "table"]
     assert [row[0] for row in tables[-1]["rows"]] == ["1", "2"]
+    section = bench.sections["optimiser"]
+    section.act("other", "1")
+    section.act("compare", None)
+    assert bench.script[-1] == "bench.optimiser.compare(first=2, second=1)"
+    parts = bench.optimiser.compare(1, 2)
+    assert [p.digest for p in parts] == [first.part.digest, second.part.digest]
+    with pytest.raises(InputError, match="runs 1 to 2"):
+        bench.optimiser.compare(1, 3)
     before = bench.draft.data
     path = bench.optimiser.take(1, 3)
     assert bench.design.optimise.skip

@@ -82,7 +82,12 @@ class AnswersSection(Section):
         voxels = self.bench.build(monitor).part.grid.n_voxels
         try:
             found = live_answer(
-                design, voxels, shapes=self.bench.shapes, most=LIVE_VOXELS, monitor=monitor
+                design,
+                voxels,
+                shapes=self.bench.shapes,
+                most=LIVE_VOXELS,
+                before=self.quick,
+                monitor=monitor,
             )
         except InputError as error:
             self._trouble = str(error)

@@ -49,6 +49,21 @@ class Eye:
         x, y, z = np.array(self.aside) - right * axes[0] - up * axes[1]
         self.aside = (float(x), float(y), float(z))
 
+    def told(self, message: Mapping[str, Any], height_mm: float) -> None:
+        """Move as the screen asks: "turn", "pan" (shares of the picture's height), "zoom", "view".
+
+        `height_mm` is the height of the picture on the part.
+        """
+        kind = message["kind"]
+        if kind == "turn":
+            self.turn(0.5 * float(message["dx"]), 0.5 * float(message["dy"]))
+        elif kind == "pan":
+            self.pan(height_mm * float(message["dx"]), -height_mm * float(message["dy"]))
+        elif kind == "zoom":
+            self.nearer(float(message["factor"]))
+        elif kind == "view":
+            self.azimuth, self.elevation = VIEWS[message["to"]]
+
     def kept(self) -> dict[str, Any]:
         """As plain data that a draft keeps."""
         return {

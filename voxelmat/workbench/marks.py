@@ -1,4 +1,4 @@
-"""What is drawn onto a part: arrows of loads, hatching of supports, a region that is pointed out."""
+"""What is drawn onto a part: arrows of loads, stripes on supports, a region pointed out."""
 
 from __future__ import annotations
 
@@ -155,19 +155,20 @@ def _spread(faces: Faces, most: int = _ARROWS) -> NDArray[np.intp]:
 
 
 def _anchors(solid: Solid, region: Region) -> tuple[Double, Double | None]:
-    """Places on a region for arrows, with normals where it has a surface."""
+    """Places on a region for arrows, and the mean normal at each where it has a surface.
+
+    One normal for all, so that all arrows of one force begin on the surface or all end there.
+    """
     faces = region.faces(solid.part)
     if len(faces):
         some = faces.select(_spread(faces))
-        return some.centre, some.normal
+        return some.centre, np.tile(faces.normal.mean(axis=0), (len(some), 1))
     cells = np.argwhere(region.voxels(solid.part))[:1]
     centres = solid.part.grid.centres()
     return np.column_stack([centres[a][cells[:, a]] for a in range(3)]), None
 
 
-def _support(
-    solid: Solid, support: Support, pushes: dict[str, _Push], tints: list[Tint]
-) -> None:
+def _support(solid: Solid, support: Support, pushes: dict[str, _Push], tints: list[Tint]) -> None:
     tints.append(_tint(solid, support.region.faces(solid.part), _SUPPORT, striped=True))
     given = np.array([d or 0.0 for d in support.displacement])
     if given.any():

@@ -34,9 +34,9 @@ class Hit:
         Which way the face looks: along 0, 1 or 2, up (1) or down (-1).
     """
 
-    place_mm: tuple[float, ...]
-    voxel: tuple[int, ...]
-    drawn_mm: tuple[float, ...]
+    place_mm: tuple[float, float, float]
+    voxel: tuple[int, int, int]
+    drawn_mm: tuple[float, float, float]
     axis: int
     side: int
 

@@ -182,10 +182,11 @@ class Solid:
             if finer is not None:
                 place, voxel = finer
                 drawn_at = place
+        i, j, k = np.minimum(voxel, np.array(self.part.grid.shape) - 1)
         return Hit(
-            place_mm=tuple(map(float, place)),
-            voxel=tuple(map(int, np.minimum(voxel, np.array(self.part.grid.shape) - 1))),
-            drawn_mm=tuple(map(float, drawn_at)),
+            place_mm=(float(place[0]), float(place[1]), float(place[2])),
+            voxel=(int(i), int(j), int(k)),
+            drawn_mm=(float(drawn_at[0]), float(drawn_at[1]), float(drawn_at[2])),
             axis=int(face.axis[0]),
             side=int(face.side[0]),
         )

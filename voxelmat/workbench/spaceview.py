@@ -15,11 +15,11 @@ import traitlets
 from voxelmat.errors import InputError
 from voxelmat.io.atomic import write_bytes
 from voxelmat.units import number
-from voxelmat.workbench.captions import Line
-from voxelmat.workbench.eye import VIEWS, Eye
+from voxelmat.workbench.eye import Eye
 from voxelmat.workbench.look import Look
 from voxelmat.workbench.marks import Marks, tinted
 from voxelmat.workbench.picking import Hit
+from voxelmat.workbench.pointer import Pointer
 from voxelmat.workbench.render import SIZE, Scene
 from voxelmat.workbench.shown import Shown
 from voxelmat.workbench.theme import script, style
@@ -80,8 +80,7 @@ class SpaceView(anywidget.AnyWidget):
         self._extra: dict[str, Any] = {}
         self._more_notes: tuple[str, ...] = ()
         self._lock = threading.RLock()
-        self._hits: list[Hit] = []
-        self._measuring = False
+        self._pointer = Pointer()
         self.ask: Callable[[dict[str, Any]], bool] | None = None
         self.changed: Callable[[str], None] | None = None
         self.picked: Callable[[Hit, dict[str, Any]], None] | None = None
@@ -114,7 +113,7 @@ class SpaceView(anywidget.AnyWidget):
         """
         with self._lock:
             if not np.array_equal(shown.solid.box, self._shown.solid.box):
-                self._hits = []
+                self._pointer.hits = []
                 self._scene.frame(*shown.solid.box)
             self._shown, self._marks = shown, marks or Marks()
             self._extra, self._more_notes = dict(tools or {}), notes
@@ -186,7 +185,7 @@ class SpaceView(anywidget.AnyWidget):
         first = "; ".join(t for t in (self._shown.note, *self._surface.words) if t)
         second = "; ".join(self._marks.notes)
         self._scene.notes = [t for t in (first, second, *self._more_notes) if t]
-        self._scene.ruler = self._ruler()
+        self._scene.ruler = self._pointer.ruler(self._shown)
         self._push(quality)
 
     def _push(self, quality: int = _STILL) -> None:
@@ -211,7 +210,7 @@ class SpaceView(anywidget.AnyWidget):
             "above": look.above,
             "step": 1.0 / n,
             "plane": f"{look.axis} = {number(solid.plane_mm(look))} mm",
-            "measuring": self._measuring,
+            "measuring": self._pointer.measuring,
             **self._extra,
         }
 
@@ -262,9 +261,9 @@ class SpaceView(anywidget.AnyWidget):
                 **solid.material_at(hit.voxel),
                 "fields": self._shown.values_at(hit.voxel),
             }
-            self._hits = [*self._hits, hit][-2:] if self._measuring and len(self._hits) < 2 else [hit]
-            self._scene.ruler = self._ruler()
-            self.said = self._words(hit, facts)
+            self._pointer.add(hit)
+            self._scene.ruler = self._pointer.ruler(self._shown)
+            self.said = self._pointer.words(self._shown, facts)
             self._push()
         if self.picked is not None:
             self.picked(hit, facts)
@@ -273,8 +272,7 @@ class SpaceView(anywidget.AnyWidget):
     def measure(self, on: bool) -> None:
         """With it on, two clicks give the distance between two places; off forgets them."""
         with self._lock:
-            self._measuring = bool(on)
-            self._hits = []
+            self._pointer.measuring, self._pointer.hits = bool(on), []
             self.said = "Click two places on the part." if on else ""
             self._scene.ruler = None
             self._push()
@@ -282,35 +280,7 @@ class SpaceView(anywidget.AnyWidget):
     @property
     def distance(self) -> tuple[float, tuple[float, float, float]] | None:
         """Distance of the two places that were measured, mm, and its part along x, y, z."""
-        if not self._measuring or len(self._hits) < 2:
-            return None
-        first, second = (np.array(h.place_mm) for h in self._hits)
-        dx, dy, dz = map(float, second - first)
-        return float(np.linalg.norm(second - first)), (dx, dy, dz)
-
-    def _ruler(self) -> Line | None:
-        if not self._hits:
-            return None
-        moved = self._shown.solid.moved(np.array([h.place_mm for h in self._hits]))
-        far = self.distance
-        return Line(
-            places=tuple(tuple(map(float, p)) for p in moved),
-            text="" if far is None else f"{number(far[0])} mm",
-        )
-
-    def _words(self, hit: Hit, facts: dict[str, Any]) -> str:
-        at = ", ".join(number(v) for v in hit.place_mm)
-        body = f", body {facts['body']}" if facts["body"] else ""
-        fields = "".join(f"; {words}" for words in self._shown.words_at(hit.voxel))
-        text = f"At {at} mm: {facts['material']}{body}{fields}."
-        far = self.distance
-        if far is not None:
-            dx, dy, dz = map(number, far[1])
-            before = " before it deforms" if self._shown.factor else ""
-            text = f"Distance {number(far[0])} mm{before}: x {dx}, y {dy}, z {dz} mm. {text}"
-        elif self._measuring:
-            text = f"{text} Click the second place."
-        return text
+        return self._pointer.distance
 
     # ------------------------------------------------------------------ pictures
     def jpeg(self) -> bytes:
@@ -358,7 +328,7 @@ class SpaceView(anywidget.AnyWidget):
         moving = bool(message.get("moving"))
         if kind in ("turn", "pan", "zoom", "view", "still"):
             with self._lock:
-                self._move(kind, message)
+                self.eye.told(message, self._scene.size[1] * self._scene.pixel_mm)
                 self._push(_MOVING if moving else _STILL)
             self._tell("moving" if moving else "eye")
         elif kind == "fit":
@@ -391,19 +361,6 @@ class SpaceView(anywidget.AnyWidget):
         else:
             raise InputError(f"The picture cannot do '{kind}'.")
 
-    def _move(self, kind: str, message: dict[str, Any]) -> None:
-        eye = self.eye
-        if kind == "turn":
-            eye.turn(0.5 * float(message["dx"]), 0.5 * float(message["dy"]))
-        elif kind == "pan":
-            # Shares of the picture's height, whatever its size on the screen.
-            span = self._scene.size[1] * self._scene.pixel_mm
-            eye.pan(span * float(message["dx"]), -span * float(message["dy"]))
-        elif kind == "zoom":
-            eye.nearer(float(message["factor"]))
-        elif kind == "view":
-            eye.azimuth, eye.elevation = VIEWS[message["to"]]
-
     def _slide(self, dx: float, dy: float) -> None:
         """Move the cutting plane with the pointer: shares of the picture's height."""
         a = "xyz".index(self._look.axis)
@@ -425,7 +382,7 @@ class SpaceView(anywidget.AnyWidget):
         try:
             factor = float(value)
         except (TypeError, ValueError):
-            raise InputError(f"The factor of the displacements is a number; got '{value}'.") from None
+            raise InputError(f"The factor is a number; got '{value}'.") from None
         self.show(shown.repaint(shown.painted, factor))
 
 

@@ -11,24 +11,24 @@ import ipywidgets
 from voxelmat.errors import InputError, VoxelmatError
 from voxelmat.monitor import Monitor
 from voxelmat.workbench.bench import Workbench
-from voxelmat.workbench.compare import Comparison, compare
+from voxelmat.workbench.comparison import Comparison, compare
 from voxelmat.workbench.eye import Eye
 from voxelmat.workbench.glprobe import probe_gl
 from voxelmat.workbench.look import Look
 from voxelmat.workbench.marks import Marks, marks_of
 from voxelmat.workbench.picking import Hit
-from voxelmat.workbench.section import code_of, number_from
+from voxelmat.workbench.section import code_of
 from voxelmat.workbench.shown import Shown, of_part
 from voxelmat.workbench.shownresult import FIELDS, of_result
 from voxelmat.workbench.sliceview import SliceView
 from voxelmat.workbench.spaceview import SpaceView
+from voxelmat.workbench.stagetools import AS_SHOWN, asked
 from voxelmat.workbench.theme import notice
 from voxelmat.workflow.build import Built
 
 __all__ = ["Stage"]
 
 _PAUSE_S = 0.6  # after the last change of what is seen, until it is kept beside the design
-_AS_SHOWN = "as shown"
 
 
 class Stage:
@@ -77,9 +77,9 @@ class Stage:
         if what == "design":
             self._guest = None
             self._follow()
-        elif what == "answers" and self._guest is None and self._seen != self._answered():
-            self._again()
-        elif what == "highlight" and self.slices is not None:
+            return
+        news = what == "answers" and self._guest is None and self._seen != self._answered()
+        if news or (what == "highlight" and self.slices is not None):
             self._again()
 
     def _follow(self) -> None:
@@ -164,7 +164,7 @@ class Stage:
         paints = ["material", *(FIELDS if best is not None else ())]
         painted = shown.painted
         if self._guest is not None:
-            painted = _AS_SHOWN
+            painted = AS_SHOWN
             paints.insert(0, painted)
         names = [c["name"] for c in self._bench.draft.data.get("load_case", [])]
         return {
@@ -193,6 +193,12 @@ class Stage:
         names = [c["name"] for c in self._bench.draft.data.get("load_case", [])]
         chosen = str(self._view.get("case", ""))
         return chosen if chosen in names or not names else names[0]
+
+    @property
+    def field(self) -> str:
+        """The field that the colours mean, or "displacement" where they are those of materials."""
+        by = self._view.get("colour", {}).get("by", "material")
+        return str(by) if by in FIELDS else "displacement"
 
     @property
     def loads(self) -> bool:
@@ -293,38 +299,7 @@ class Stage:
 
     # ------------------------------------------------------------------ from the picture
     def _asked(self, message: dict[str, Any]) -> bool:
-        """What is done on the tool bar and is more than looking; with its line of code."""
-        kind, value = message["kind"], message.get("value")
-        bench, answers = self._bench, self._bench.answers
-        colour = self._view.get("colour", {})
-        if kind == "paint" and value == "material":
-            action = lambda: answers.call("show_material")  # noqa: E731
-        elif kind == "paint" and value != _AS_SHOWN:
-            action = lambda: answers.call("show", field=value, load_case=self.case)  # noqa: E731
-        elif kind == "factor":
-            factor = number_from(value, "The factor of the displacements") if value else 0.0
-            field = colour.get("by", "displacement")
-            action = lambda: answers.call(  # noqa: E731
-                "show", field=field, load_case=self.case, factor=factor
-            )
-        elif kind == "below":
-            safety = number_from(value, "The safety") if value else 0.0
-            action = lambda: self._call("only_below", safety=safety)  # noqa: E731
-        elif kind == "case":
-            action = lambda: self._call("choose_case", name=str(value))  # noqa: E731
-        elif kind == "loads":
-            action = lambda: self._call("show_loads", on=bool(message["on"]))  # noqa: E731
-        elif kind == "see":
-            action = lambda: self._call("see", name=message["name"], how=message["how"])  # noqa: E731
-        else:
-            return kind == "paint"
-        bench.guarded(action)
-        bench.tell("view")
-        return True
-
-    def _call(self, verb: str, **values: Any) -> Any:
-        line = f"bench.stage.{code_of(verb, values)}"
-        return self._bench.noted(line, lambda: getattr(self, verb)(**values))
+        return asked(self._bench, self, message)
 
     def _changed(self, what: str) -> None:
         space = self.space
@@ -336,7 +311,7 @@ class Stage:
             self._keep(eye=space.eye.kept())
 
     def _picked(self, hit: Hit, facts: dict[str, Any]) -> None:
-        self._bench.pick(hit.place_mm, **facts)  # type: ignore[arg-type]
+        self._bench.pick(hit.place_mm, **facts)
 
     # ------------------------------------------------------------------ keeping the view
     def _keep(self, **what: Any) -> None:

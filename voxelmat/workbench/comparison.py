@@ -172,9 +172,7 @@ def _thing(given: Any) -> Part | StaticResult:
     elif isinstance(getattr(given, "part", None), Part):
         found = given.part
     else:
-        raise InputError(
-            f"Parts, results and designs can be compared; got {type(given).__name__}."
-        )
+        raise InputError(f"Parts, results and designs can be compared; got {type(given).__name__}.")
     part = found.part if isinstance(found, StaticResult) else found
     if not part.solid.any():
         raise InputError(f"Part '{part.name}' has no material, so there is nothing to show.")
