@@ -65,22 +65,21 @@ def generalised_mean(w: Floats, x: Floats, z: Floats) -> tuple[Floats, Floats]:
     slope : ndarray, shape (K, n)
         Of the logarithm of the mean.
     """
-    inverse = [1.0 / (xm + z) for xm in x]
-    weight = np.zeros(w.shape[1])
-    top = np.zeros(w.shape[1])
-    for m, xm in enumerate(x):
-        part = w[m] * inverse[m]
-        weight += part
-        top += xm * part
+    inverse = 1.0 / (x[:, None] + z)
+    part = w * inverse
+    weight = part.sum(axis=0)
+    top = np.multiply(part, x[:, None], out=part).sum(axis=0)
     mean = top / weight
-    slope = np.empty_like(w)
-    for m, xm in enumerate(x):
-        np.multiply((xm - mean) / top, inverse[m], out=slope[m])
+    slope = x[:, None] - mean
+    slope /= top
+    slope *= inverse
     return mean, slope
 
 
 def extent(w: Floats, x: Floats) -> tuple[Floats, Floats]:
     """Smallest and largest modulus among the phases that each blend holds, shapes (n,)."""
+    if np.all(w > 0):
+        return np.full(w.shape[1], x.min()), np.full(w.shape[1], x.max())
     low, high = np.full(w.shape[1], np.inf), np.zeros(w.shape[1])
     for m, xm in enumerate(x):
         here = w[m] > 0

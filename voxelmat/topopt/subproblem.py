@@ -22,6 +22,7 @@ _NEWTON_STEPS = 60
 _HALVINGS = 20
 _WARM_STEPS = 10  # of the plain Newton method from the multipliers of the step before
 _WARM_END = 1e-9
+_SMALLEST = 1e-6  # a multiplier that falls below this is zero
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -151,6 +152,7 @@ def _from_near(dual: Dual, lam: Array, ceiling: float) -> Array | None:
     for _ in range(_WARM_STEPS):
         slope, bend = dual(lam)
         slope = slope - np.maximum(lam - ceiling, 0.0)
+        lam = np.where((lam <= _SMALLEST) & (slope <= 0.0), 0.0, lam)
         free = (lam > 0.0) | (slope > 0.0)
         if not free.any() or float(np.abs(slope[free]).max()) < _WARM_END:
             return lam
@@ -158,7 +160,10 @@ def _from_near(dual: Dual, lam: Array, ceiling: float) -> Array | None:
         bend += (1e-13 * float(bend.diagonal().max()) + 1e-300) * np.eye(dual.m)
         step = np.linalg.solve(bend[np.ix_(free, free)], slope[free])
         lam = lam.copy()
-        lam[free] = np.clip(lam[free] + step, 0.0, 20.0 * np.maximum(lam[free], 0.05))
+        at = np.maximum(lam[free], _SMALLEST)
+        # On a logarithmic scale constraints are nearly straight and multipliers stay positive.
+        moved = at * np.exp(np.clip(step / at, -5.0, 3.0))
+        lam[free] = np.where((at == _SMALLEST) & (step < 0.0), 0.0, moved)
     return None
 
 
