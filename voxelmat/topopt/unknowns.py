@@ -94,7 +94,8 @@ class Unknowns:
 
     Order of x: densities of the free voxels (if voids are allowed), then blend coordinates of
     the voxels whose blend is free: one coordinate each for two resins (the fraction of the
-    second), K for more, which a softmax turns into fractions.
+    second), K for more, which a softmax turns into fractions; or, with `simplex`, the K fractions
+    themselves, which the optimiser must keep above 0 and summing to 1.
 
     Parameters
     ----------
@@ -108,6 +109,8 @@ class Unknowns:
         Of the filter, mm.
     threshold : float
         Of the projection.
+    simplex : bool
+        Blend unknowns are fractions: for `voxelmat.topopt.mirror.MirrorDescent`.
     """
 
     def __init__(
@@ -119,11 +122,14 @@ class Unknowns:
         spacing: tuple[float, float, float],
         radius: float,
         threshold: float = 0.5,
+        simplex: bool = False,
     ) -> None:
         self.choice, self.palette, self.void, self.threshold = choice, palette, void, threshold
         self.sharpness = 0.0
         self.resins = palette.bulk.size
-        self._coordinates = {1: 0, 2: 1}.get(self.resins, self.resins)
+        self.simplex = simplex and self.resins > 1
+        few = {1: 0} if simplex else {1: 0, 2: 1}
+        self._coordinates = few.get(self.resins, self.resins)
         self._free_rho = choice.domain & ~choice.solid & ~choice.empty
         self._free_blend = choice.domain & (choice.resin < 0) & ~choice.empty
         if void is None:
@@ -146,6 +152,8 @@ class Unknowns:
         """Unknowns of a uniform design: density `rho` and fractions (K,) in every free voxel."""
         if self._coordinates == 0:
             blend = np.empty(0)
+        elif self.simplex:
+            blend = np.maximum(fractions, 1e-6) / np.maximum(fractions, 1e-6).sum()
         elif self._coordinates == 1:
             blend = np.array([fractions[1]])
         else:
@@ -213,7 +221,9 @@ class Unknowns:
             w[0][c.domain] = 1.0
             return w
         smooth = np.array([self._smooth_blend(v)[free] for v in x.reshape(self._coordinates, -1)])
-        if self._coordinates == 1:
+        if self.simplex:
+            w[:, free] = np.maximum(smooth, 0.0)
+        elif self._coordinates == 1:
             second = np.clip(smooth[0], 0.0, 1.0)
             w[0][free], w[1][free] = 1.0 - second, second
         else:
@@ -270,7 +280,9 @@ class Unknowns:
         free = self._free_blend
         if self._coordinates == 0:
             return np.empty(0)
-        if self._coordinates == 1:
+        if self.simplex:
+            by_coordinate = c_w
+        elif self._coordinates == 1:
             by_coordinate = (c_w[1] - c_w[0])[None]
         else:
             by_coordinate = _SHARPNESS * w * (c_w - (c_w * w).sum(0))
