@@ -106,3 +106,34 @@ def test_shapes_are_voxelised_once(small_design, monkeypatch):
     small_design.write_text(text.replace("[1.0, 1.0, 1.0]", "[2.0, 2.0, 2.0]"))
     build(small_design, shapes=shapes)
     assert len(calls) == 2
+
+
+def test_what_an_edit_left_as_it_was_is_not_solved_again(small_design):
+    text = small_design.read_text()
+    first_case = text[text.index("[[load_case]]") : text.index("[[requirement]]")]
+    second = first_case.replace('"press"', '"hold"').replace("0.02", "0.01")
+    small_design.write_text(text.replace("[[requirement]]", second + "[[requirement]]"))
+
+    def quick(before=None):
+        design = build(small_design).design
+        return live_answer(design, 576, before=before)
+
+    first = quick()
+    small_design.write_text(
+        small_design.read_text().replace("pressure_MPa = 0.02", "pressure_MPa = 0.03")
+    )
+    edited = quick(first)
+    assert edited.results["hold"] is first.results["hold"]
+    assert edited.interfaces["hold"] is first.interfaces["hold"]
+    assert edited.results["press"].iterations == 0  # the load only grew
+    np.testing.assert_allclose(
+        edited.results["press"].displacement, 1.5 * first.results["press"].displacement, rtol=1e-9
+    )
+    small_design.write_text(
+        small_design.read_text().replace("measured-soft = 0.75", "measured-soft = 0.6")
+    )
+    stiffer, cold = quick(edited), quick()
+    assert stiffer.results["hold"] is not first.results["hold"]
+    for name, result in stiffer.results.items():
+        assert result.size.max() == pytest.approx(cold.results[name].size.max(), rel=1e-3)
+        assert result.size.max() < 0.9 * edited.results[name].size.max()
