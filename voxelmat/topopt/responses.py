@@ -5,6 +5,7 @@ A response never sees filters or unknowns, so any response works with any kind o
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass
 from typing import Protocol
 
@@ -13,7 +14,7 @@ from numpy.typing import NDArray
 
 from voxelmat.topopt.physics import Physics
 
-__all__ = ["Amount", "ComplianceResponse", "Response", "TargetResponse"]
+__all__ = ["Amount", "ComplianceResponse", "Response", "TargetResponse", "told"]
 
 Array = NDArray[np.float64]
 Slopes = dict[str, Array]
@@ -37,10 +38,17 @@ class Response(Protocol):
         """The value as it is told to people."""
 
 
+def told(response: Response, physics: Physics, value: float) -> float:
+    """What people are told: the true value where a smooth one stands for it, which has `truth`."""
+    truth: Callable[[Physics], float] | None = getattr(response, "truth", None)
+    return response.report(value) if truth is None else truth(physics)
+
+
 @dataclass(frozen=True, slots=True, kw_only=True)
 class ComplianceResponse:
-    """sum over load cases of weight times force times displacement, N mm."""
+    """sum over load cases of weight times force times displacement, N mm; all, or those named."""
 
+    of: tuple[int, ...] | None = None
     name: str = "compliance"
     unit: str = "N mm"
 
@@ -49,6 +57,8 @@ class ComplianceResponse:
         total = 0.0
         slopes: Slopes = {}
         for n, case in enumerate(physics.cases):
+            if self.of is not None and n not in self.of:
+                continue
             u = physics.displacement(n)
             total += case.weight * float(np.vdot(case.force, u))
             for key, form in physics.by_stiffness(u, u).items():
@@ -73,12 +83,15 @@ class TargetResponse:
         u*, mm; 0 outside `nodes`.
     direction : tuple of float
         Unit vector, x, y, z.
+    key : str
+        A name of its own for what the solver keeps.
     """
 
     case: int
     nodes: NDArray[np.bool_]
     target: Array
     direction: tuple[float, float, float]
+    key: str = "target"
     name: str = "relative error of the deflection"
     unit: str = ""
 
@@ -89,7 +102,7 @@ class TargetResponse:
         miss = np.where(self.nodes, along - self.target, 0.0)
         size = float((self.target**2).sum())
         slope = np.stack([2.0 / size * d * miss for d in self.direction])
-        adjoint = physics.adjoint(self.case, slope, "target")
+        adjoint = physics.adjoint(self.case, slope, self.key)
         forms = physics.by_stiffness(u, adjoint)
         return float((miss**2).sum()) / size, {key: -form for key, form in forms.items()}
 
@@ -109,12 +122,15 @@ class Amount:
         For instance the solid volume that the shape allows each voxel, mm^3.
     factor : ndarray, (K,)
         1 for volume, densities for mass, 1 for one resin and 0 for the others.
+    always : float
+        What is there whatever the design.
     """
 
     name: str
     unit: str
     weight: Array
     factor: Array
+    always: float = 0.0
 
     def value(self, physics: Physics) -> tuple[float, Slopes]:
         """Needs no solve."""
@@ -122,7 +138,7 @@ class Amount:
         mixed = np.tensordot(self.factor, f.w, 1)
         by_rho = self.weight * mixed
         by_w = np.multiply.outer(self.factor, self.weight * f.rho)
-        return float((by_rho * f.rho).sum()), {"rho": by_rho, "w": by_w}
+        return float((by_rho * f.rho).sum()) + self.always, {"rho": by_rho, "w": by_w}
 
     def report(self, value: float) -> float:
         """As it is."""
