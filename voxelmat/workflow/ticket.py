@@ -16,7 +16,7 @@ from voxelmat.model.finding import Finding
 from voxelmat.monitor import SILENT, Monitor
 from voxelmat.printing.bill import BillRow
 from voxelmat.printing.estimate import PrintEstimate, estimate
-from voxelmat.printing.occupancy import gather
+from voxelmat.printing.occupancy import Occupancy, gather
 from voxelmat.printing.readback import Stack
 from voxelmat.units import number
 from voxelmat.workflow.topview import shadow_drawing, tray_drawing
@@ -125,6 +125,7 @@ def write_ticket(
     loaded: Mapping[str, Loaded] | None = None,
     day: date,
     findings: Sequence[Finding] | None = None,
+    occupancy: Occupancy | None = None,
     monitor: Monitor = SILENT,
 ) -> list[tuple[str, str]]:
     """Write the ticket of a stack.
@@ -141,6 +142,8 @@ def write_ticket(
     findings : sequence of Finding, optional
         Of the preflight; the page says whether the stack may be printed. None where it was not
         checked.
+    occupancy : Occupancy, optional
+        As `voxelmat.printing.occupancy.gather` finds it; the stack is read if left out.
     monitor : Monitor
 
     Returns
@@ -162,7 +165,7 @@ def write_ticket(
             raise InputError(
                 f"The stack lays no '{resin}'; it lays {', '.join(resins)}.", key="loaded"
             )
-    seen = gather(stack, monitor=monitor)
+    seen = gather(stack, monitor=monitor) if occupancy is None else occupancy
     figures = estimate(stack, occupancy=seen)
     warnings = ticket_warnings(figures.bill, held, day)
     if findings is None:
@@ -222,7 +225,7 @@ def _context(
         low, high = figures.cost
         facts["cost"] = f"{number(low)} to {number(high)} {figures.cost_unit}"
     return {
-        "job": _cut(str(notes.get("job_number", "") or "not given")),
+        "job": _cut(str(notes.get("job_number", "") or "no job number")),
         "title": _cut(str(notes.get("title", "") or ", ".join(parts[:3]))),
         "digest": stack.manifest["job"][:16],
         "day": day.isoformat(),
