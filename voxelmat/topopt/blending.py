@@ -11,7 +11,7 @@ from __future__ import annotations
 import numpy as np
 from numpy.typing import NDArray
 
-from voxelmat.topopt.fields import Choice, Draft, Palette, Realisation
+from voxelmat.topopt.fields import Choice, Draft, Palette
 from voxelmat.topopt.filter import ConeFilter
 from voxelmat.topopt.kind import Slopes
 from voxelmat.topopt.links import Mirror, Sharing
