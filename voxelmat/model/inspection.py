@@ -144,9 +144,6 @@ class Measurement:
         return "cannot be said"
 
 
-_HEAD = ("dimension", "kind", "nominal", "tolerance", "measured", "deviation", "+-", "unit", "")
-
-
 @dataclass(frozen=True, slots=True, kw_only=True)
 class InspectionSheet:
     """Dimensions of a design as they stand in a stack.
@@ -160,6 +157,11 @@ class InspectionSheet:
     title: str
     rows: tuple[Measurement, ...]
 
+    #: Heads of the columns of `cells`.
+    HEAD = (
+        "dimension", "kind", "nominal", "tolerance", "measured", "deviation", "±", "unit", "judged",
+    )  # fmt: skip
+
     def __iter__(self) -> Iterator[Measurement]:
         return iter(self.rows)
 
@@ -169,7 +171,8 @@ class InspectionSheet:
                 return row
         raise InputError(f"The sheet has no dimension '{name}'.")
 
-    def _cells(self) -> list[list[str]]:
+    def cells(self) -> list[list[str]]:
+        """A table as text, one row a dimension."""
         found = []
         for row in self.rows:
             d = row.dimension
@@ -192,8 +195,8 @@ class InspectionSheet:
 
     def text(self) -> str:
         """A table for a terminal."""
-        lines = [list(_HEAD), *self._cells()]
-        width = [max(len(line[c]) for line in lines) for c in range(len(_HEAD))]
+        lines = [list(self.HEAD), *self.cells()]
+        width = [max(len(line[c]) for line in lines) for c in range(len(self.HEAD))]
         return "\n".join(
             [self.title]
             + [
@@ -227,7 +230,7 @@ class InspectionSheet:
         """A table as HTML."""
         from voxelmat.model.html import table
 
-        return table(list(_HEAD), self._cells(), self.title)
+        return table(list(self.HEAD), self.cells(), self.title)
 
     def _repr_html_(self) -> str:
         return self.html()

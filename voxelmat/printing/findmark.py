@@ -16,7 +16,18 @@ from voxelmat.printing.marks import Mark
 from voxelmat.printing.raster import Raster
 from voxelmat.printing.readback import Stack
 
-__all__ = ["FOUND_FROM", "SYMMETRIES", "Symmetry", "find_marks", "mark_findings", "marks_of"]
+__all__ = [
+    "FOUND_FROM",
+    "MARK_CODES",
+    "SYMMETRIES",
+    "Symmetry",
+    "find_marks",
+    "mark_findings",
+    "marks_of",
+]
+
+#: Codes of the findings on marks.
+MARK_CODES = ("mark record", "mark not found", "tray mirrored", "tray moved", "tray turned")
 
 #: A mark is found where (share of stroke cells that are right) + (share of the others that are
 #: right) - 1 is at least this; a place with nothing to do with the mark scores about 0.

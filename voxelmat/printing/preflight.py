@@ -20,6 +20,7 @@ from voxelmat.printing.deepcheck import deep_findings, without_repeats
 from voxelmat.printing.features import piece_findings, small_findings
 from voxelmat.printing.filecheck import file_findings, folder_findings, tray_findings
 from voxelmat.printing.findmark import mark_findings
+from voxelmat.printing.fixes import named_fixes
 from voxelmat.printing.oddlayers import odd_layer_findings
 from voxelmat.printing.partcheck import part_checks
 from voxelmat.printing.readback import Stack, read_stack
@@ -61,8 +62,9 @@ def preflight(
     Returns
     -------
     list of Finding
-        Worst first. Empty where nothing at all was found. Solid is judged against empty, never
-        one dithered channel: a lone droplet of one resin inside a blend is as it should be.
+        Worst first, with the repair that may help. Empty where nothing at all was found. Solid is
+        judged against empty, never one dithered channel: a lone droplet of one resin inside a
+        blend is as it should be.
     """
     return list(
         check_stack(stack, part, profile, bodies=bodies, deep=deep, monitor=monitor).findings
@@ -135,7 +137,7 @@ def check_stack(
     if deep:
         found += deep_findings(stack, facts, printer, monitor=monitor)
         found = without_repeats(found)
-    found = [_located(stack, f) for f in found]
+    found = named_fixes([_located(stack, f) for f in found])
     found.sort(key=lambda f: SEVERITIES.index(f.severity))
     return StackChecks(findings=tuple(found), outlines=outlines)
 

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import math
 from collections import Counter
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import replace
 from pathlib import Path
 from typing import Any
@@ -12,6 +12,7 @@ from typing import Any
 from voxelmat.model.requirement import Verdict
 from voxelmat.printing.readback import Stack
 from voxelmat.units import number, quantity
+from voxelmat.workflow.finding_words import checked_dict
 from voxelmat.workflow.report_data import RunData
 
 __all__ = ["as_dict", "exit_code", "joined_verdicts", "summary_lines"]
@@ -50,7 +51,12 @@ def _plain(value: float) -> float | None:
 
 
 def as_dict(
-    data: RunData, *, stack: Stack | None, report: Path | None, folder: Path
+    data: RunData,
+    *,
+    stack: Stack | None,
+    report: Path | None,
+    folder: Path,
+    papers: Mapping[str, Path] | None = None,
 ) -> dict[str, Any]:
     """Plain data for JSON; keys carry their unit, and what is not a number is null."""
     return {
@@ -58,6 +64,7 @@ def as_dict(
         "folder": str(folder),
         "report": str(report) if report is not None else None,
         "stack": str(stack.folder) if stack is not None else None,
+        "papers": {what: str(path) for what, path in (papers or {}).items()},
         "part": {
             "digest": data.part.digest,
             "voxels": list(data.part.grid.shape),
@@ -116,16 +123,7 @@ def as_dict(
             }
             for v in data.verdicts
         ],
-        "findings": [
-            {
-                "severity": f.severity,
-                "code": f.code,
-                "message": f.message,
-                "place_mm": list(f.place_mm) if f.place_mm is not None else None,
-                "remedy": f.remedy,
-            }
-            for f in data.findings
-        ],
+        **checked_dict(data.findings, data.outline, data.inspection),
         "cautions": list(data.cautions),
         "notes": list(data.notes),
         "timings_s": {k: round(v, 3) for k, v in data.timings.items()},

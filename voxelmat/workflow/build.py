@@ -32,7 +32,7 @@ from voxelmat.workflow.layout import apply_layout
 from voxelmat.workflow.resolve import Resolved, resolve
 from voxelmat.workflow.shapecache import ShapeCache, Shaped
 
-__all__ = ["Built", "build"]
+__all__ = ["Built", "bodies_of", "build"]
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -53,6 +53,9 @@ class Built:
     notes : tuple of str
         What the program decided by itself: repairs, overlaps, gaps, cavities.
     cautions : tuple of str
+    bodies : tuple of Body
+        The mended meshes that the outline of `part` follows; empty where a stored part or a
+        closed gap gave it another outline.
     """
 
     design: Design
@@ -62,6 +65,7 @@ class Built:
     profile: PrintProfile | None
     notes: tuple[str, ...] = ()
     cautions: tuple[str, ...] = field(default_factory=tuple)
+    bodies: tuple[Body, ...] = ()
 
     @property
     def load_cases(self) -> tuple[LoadCase, ...]:
@@ -117,7 +121,31 @@ def build(
         profile=profile,
         notes=(*notes, *library.notes, *resolved.notes),
         cautions=(*cautions, *resolved.cautions),
+        bodies=() if _reshaped(part, assembly) else assembly.bodies,
     )
+
+
+def _reshaped(part: Part, assembly: Assembly) -> bool:
+    """Whether a layout rule or a closed gap gave the outline another course than the meshes'."""
+    closed = any(e.kind == "gap" and e.volume_mm3 > 0 for e in assembly.report)
+    same = part.distance is not None and np.array_equal(part.distance, assembly.print_distance)
+    return closed or not same or bool(((part.labels > 0) != (assembly.owner > 0)).any())
+
+
+def bodies_of(design: Design, *, monitor: Monitor = SILENT) -> tuple[Body, ...]:
+    """The bodies of a design as meshes, read and mended, without making voxels of them.
+
+    Parameters
+    ----------
+    design : Design
+    monitor : Monitor
+
+    Raises
+    ------
+    InputError, FileFormatError
+        If a mesh cannot be read or mended.
+    """
+    return tuple(_bodies(design, monitor)[0])
 
 
 def _shaped(design: Design, monitor: Monitor) -> Shaped:

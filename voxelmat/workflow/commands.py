@@ -7,18 +7,16 @@ from collections.abc import Mapping, Sequence
 from pathlib import Path
 from typing import Any
 
-from voxelmat.errors import FileFormatError, InputError
+from voxelmat.errors import InputError
 from voxelmat.io.design import load_design
 from voxelmat.io.materials import load_library
-from voxelmat.io.store import load_part
 from voxelmat.material.hardness import VALID_SHORE_A, modulus_from_shore_a
 from voxelmat.material.table import material_rows
-from voxelmat.model.part import Part
 from voxelmat.model.result import StaticResult
 from voxelmat.monitor import Monitor
 from voxelmat.units import number
 
-__all__ = ["materials", "optimise", "preflight", "report", "run", "solve", "stack", "warm"]
+__all__ = ["materials", "optimise", "report", "run", "solve", "stack", "warm"]
 
 Answer = tuple[int, dict[str, Any], str]
 
@@ -112,48 +110,6 @@ def report(*, design: Path, out: Path, monitor: Monitor) -> Answer:
             f"There is no finished run in '{out}'. Call 'voxelmat run {design} --out {out}' first."
         )
     return _stages(design, out, None, monitor)
-
-
-def preflight(*, stack: Path, design: Path | None, out: Path, monitor: Monitor) -> Answer:
-    """The checks on a stack that is on disk."""
-    from voxelmat.printing.preflight import preflight as check_stack
-    from voxelmat.printing.readback import read_stack
-
-    part: Part | None = None
-    if design is not None:
-        plan = load_design(design)
-        law = load_library([plan.file(f) for f in plan.material_files]).law(plan.law)
-        kept = out / "part.npz"
-        if not kept.is_file():
-            raise FileFormatError(
-                f"'{kept}' is missing: give with --out the folder that the design's run wrote to."
-            )
-        part = load_part(kept, law)
-    opened = read_stack(stack)
-    findings = check_stack(opened, part=part, monitor=monitor)
-    data = {
-        "stack": str(stack),
-        "findings": [
-            {
-                "severity": f.severity,
-                "code": f.code,
-                "message": f.message,
-                "place_mm": list(f.place_mm) if f.place_mm is not None else None,
-                "remedy": f.remedy,
-            }
-            for f in findings
-        ],
-    }
-    lines = [f"{opened!r}"]
-    for f in findings:
-        place = "" if f.place_mm is None else f" at {', '.join(map(number, f.place_mm))} mm"
-        lines.append(f"  {f.severity}: {f.message}{place}")
-        if f.remedy:
-            lines.append(f"        {f.remedy}")
-    if not findings:
-        lines.append("  nothing found")
-    bad = any(f.severity == "stop" for f in findings)
-    return (1 if bad else 0), data, "\n".join(lines)
 
 
 def warm(*, monitor: Monitor) -> Answer:

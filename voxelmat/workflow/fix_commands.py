@@ -11,19 +11,20 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from voxelmat.errors import FileFormatError, InputError
+from voxelmat.errors import InputError
 from voxelmat.io.atomic import aside
-from voxelmat.io.store import load_part, save_part
+from voxelmat.io.store import save_part
 from voxelmat.model.finding import Finding
 from voxelmat.model.fix import DrainHole, FixResult
 from voxelmat.monitor import Monitor
-from voxelmat.printing.fixes import fix_part, named_fixes
-from voxelmat.printing.preflight import preflight
+from voxelmat.printing.fixes import fix_part
 from voxelmat.printing.readback import Stack, read_stack
 from voxelmat.printing.stack import write_stack
 from voxelmat.workflow.build import Built, build
+from voxelmat.workflow.checking import check_built
 from voxelmat.workflow.finding_pictures import finding_picture
 from voxelmat.workflow.report_canvas import Picture
+from voxelmat.workflow.trayparts import part_of_run
 
 __all__ = ["drain_from_text", "fix", "protected_voxels"]
 
@@ -73,19 +74,14 @@ def fix(
 ) -> Answer:
     """Repair the part that a run left, write it and its stack anew, and compare the findings."""
     holes = [drain_from_text(text) for text in drain]
-    kept = out / "part.npz"
-    if not kept.is_file():
-        raise FileFormatError(
-            f"'{kept}' is missing: give with --out the folder that the design's run wrote to."
-        )
     built = build(design, monitor=monitor)
-    part = load_part(kept, built.part.law)
+    part = part_of_run(built.design, out)
     opened = read_stack(stack)
     if len(opened.parts) != 1:
         raise InputError(
             f"The stack holds {len(opened.parts)} parts; repair each in a stack of its own."
         )
-    before = named_fixes(preflight(opened, part, monitor=monitor))
+    before = check_built(opened, built, part, monitor=monitor).findings
     done = fix_part(part, before, opened.profile, protected=protected_voxels(built), drains=holes)
     if not done.steps:
         return 0, _data(done, before, before, None), done.text()
@@ -103,7 +99,7 @@ def fix(
         halftone=None if printing is None else printing.halftone,
         monitor=monitor,
     )
-    after = named_fixes(preflight(again, done.part, monitor=monitor))
+    after = check_built(again, built, done.part, monitor=monitor).findings
     page = target.with_suffix(".html")
     _write_page(page, done, before, after, opened, again)
     lines = [done.text(), *_compared(before, after), f"  new part: {target}", f"  page: {page}"]

@@ -21,15 +21,11 @@ from voxelmat.io.store import save_part
 from voxelmat.kernels.threads import threads
 from voxelmat.model.design import Design
 from voxelmat.model.design_result import DesignResult
-from voxelmat.model.finding import Finding
 from voxelmat.model.part import Part
 from voxelmat.model.requirement import Verdict
 from voxelmat.model.result import StaticResult
 from voxelmat.monitor import SILENT, Monitor
-from voxelmat.printing.estimate import estimate
-from voxelmat.printing.preflight import preflight
-from voxelmat.printing.readback import Stack, read_stack
-from voxelmat.printing.stack import write_stack
+from voxelmat.printing.readback import Stack
 from voxelmat.provenance import Provenance, utc_now
 from voxelmat.units import number
 from voxelmat.workflow.answer import as_dict, exit_code, joined_verdicts
@@ -37,9 +33,9 @@ from voxelmat.workflow.build import Built, build
 from voxelmat.workflow.designing import optimised
 from voxelmat.workflow.interfaces import interface_spots
 from voxelmat.workflow.printed import as_printed
+from voxelmat.workflow.printing_stage import PrintStage, check_stage, stack_stage
 from voxelmat.workflow.report import write_report
 from voxelmat.workflow.report_data import RunData
-from voxelmat.workflow.summary import summarise
 from voxelmat.workflow.verdicts import safety_factors, verdicts
 
 __all__ = ["STAGES", "RunResult", "run"]
@@ -60,6 +56,8 @@ class RunResult:
     folder : Path
     stack : Stack or None
     report : Path or None
+    papers : mapping of str to Path
+        For the print room, by what they are.
     """
 
     data: RunData
@@ -67,6 +65,7 @@ class RunResult:
     folder: Path
     stack: Stack | None = None
     report: Path | None = None
+    papers: Mapping[str, Path] = field(default_factory=dict)
 
     @property
     def part(self) -> Part:
@@ -85,7 +84,13 @@ class RunResult:
 
     def as_dict(self) -> dict[str, Any]:
         """Plain data for JSON."""
-        return as_dict(self.data, stack=self.stack, report=self.report, folder=self.folder)
+        return as_dict(
+            self.data,
+            stack=self.stack,
+            report=self.report,
+            folder=self.folder,
+            papers=self.papers,
+        )
 
 
 @dataclass(slots=True)
@@ -200,20 +205,27 @@ class _Run:
             results = self._solved(built, part, "solve")
         with self.clock.stage("grid error"):
             coarser = self._coarser(results)
-        stack, findings = self._stacked(built, part)
+        stack, stage = self._stacked(built, part)
         again: dict[str, StaticResult] = {}
         if stack is not None and "as printed" in self.stages:
             with self.clock.stage("as printed"):
                 printed = as_printed(stack, part, monitor=self.monitor)
                 again = self._solved(built, printed, "as printed", results)
         with self.clock.stage("verdicts"):
-            data = self._data(built, part, found, results, again, stack, findings)
+            data = self._data(built, part, found, results, again, stage)
             data = replace(data, grid_error=coarser)
         report = None
         if "report" in self.stages:
             with self.clock.stage("report"):
                 report = write_report(data, self.folder / "report.html", monitor=self.monitor)
-        result = RunResult(data=data, built=built, folder=self.folder, stack=stack, report=report)
+        result = RunResult(
+            data=data,
+            built=built,
+            folder=self.folder,
+            stack=stack,
+            report=report,
+            papers={} if stage is None else stage.papers,
+        )
         write_json(self.folder / "result.json", result.as_dict())
         return result
 
@@ -262,31 +274,22 @@ class _Run:
             return {}
         return {name: error_estimate(r, monitor=self.monitor) for name, r in results.items()}
 
-    def _stacked(self, built: Built, part: Part) -> tuple[Stack | None, list[Finding]]:
-        printing = built.design.printing
-        if "stack" not in self.stages or printing is None or built.profile is None:
-            return None, []
-        folder = self.folder / "stack"
+    def _stacked(self, built: Built, part: Part) -> tuple[Stack | None, PrintStage | None]:
+        if "stack" not in self.stages:
+            return None, None
         with self.clock.stage("stack"):
-            write_stack(
+            stack = stack_stage(
+                built,
                 part,
-                built.profile,
-                folder,
-                orientation=printing.orientation,
-                position=printing.position_mm,
-                support=printing.support,
-                seed=built.design.seed,
-                halftone=printing.halftone,
-                notes={"job_number": printing.job_number} if printing.job_number else None,
-                monitor=self.monitor,
-                inputs=built.design.inputs,
+                self.folder,
                 workers=self.workers,
                 scheduler=self.scheduler,
+                monitor=self.monitor,
             )
-            stack = read_stack(folder)
+        if stack is None:
+            return None, None
         with self.clock.stage("preflight"):
-            findings = preflight(stack, part=part, monitor=self.monitor)
-        return stack, findings
+            return stack, check_stage(stack, built, part, self.folder, monitor=self.monitor)
 
     def _data(
         self,
@@ -295,8 +298,7 @@ class _Run:
         found: DesignResult | None,
         results: dict[str, StaticResult],
         again: dict[str, StaticResult],
-        stack: Stack | None,
-        findings: list[Finding],
+        stage: PrintStage | None,
     ) -> RunData:
         answers: tuple[Verdict, ...] = ()
         if results:
@@ -326,9 +328,7 @@ class _Run:
                 name: interface_spots(r, built.resolved.bonds) for name, r in results.items()
             },
             optimised=found,
-            stack=summarise(stack, estimate(stack)) if stack is not None else None,
-            findings=tuple(findings),
-            checked=stack is not None,
+            **({} if stage is None else stage.shown()),
             cautions=tuple(dict.fromkeys(cautions)),
             notes=tuple(dict.fromkeys(notes)),
             provenance=Provenance(

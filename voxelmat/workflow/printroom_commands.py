@@ -14,6 +14,7 @@ from voxelmat.monitor import Monitor
 from voxelmat.printing.bill import write_bom_csv
 from voxelmat.printing.crop import proof_crop
 from voxelmat.printing.estimate import estimate
+from voxelmat.printing.occupancy import gather
 from voxelmat.printing.preflight import preflight
 from voxelmat.printing.proof import worst_place, write_proof
 from voxelmat.printing.readback import Stack, read_stack
@@ -100,10 +101,11 @@ def ticket(
     opened = read_stack(stack)
     findings = None if no_check else preflight(opened, monitor=monitor)
     target = _beside(opened, ".ticket.html") if out is None else out
+    seen = gather(opened, monitor=monitor)
     warnings = write_ticket(
-        opened, target, loaded=held, day=_today(), findings=findings, monitor=monitor
+        opened, target, loaded=held, day=_today(), findings=findings, occupancy=seen
     )
-    figures = estimate(opened, monitor=monitor)
+    figures = estimate(opened, occupancy=seen)
     table = write_bom_csv(figures.bill, _beside(opened, ".bom.csv") if bom is None else bom)
     low, high = (t / 3600 for t in figures.time_s)
     lines = [

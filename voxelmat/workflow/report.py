@@ -10,7 +10,6 @@ from typing import Any
 from jinja2 import Environment, PackageLoader, StrictUndefined
 
 from voxelmat.io.atomic import write_text
-from voxelmat.model.finding import SEVERITIES
 from voxelmat.model.loadcase import PressureMap
 from voxelmat.model.result import ROTATION_LIMIT, STRAIN_LIMIT
 from voxelmat.monitor import SILENT, Monitor
@@ -19,6 +18,7 @@ from voxelmat.workflow import report_fields, report_pictures
 from voxelmat.workflow import report_tables as tables
 from voxelmat.workflow.bill_table import bill_table
 from voxelmat.workflow.interfaces import spot_rows
+from voxelmat.workflow.report_checks import checks
 from voxelmat.workflow.report_data import RunData, StackSummary
 from voxelmat.workflow.report_pressure import pressure_picture
 from voxelmat.workflow.report_tables import Table
@@ -120,7 +120,7 @@ def _context(run: RunData, monitor: Monitor) -> dict[str, Any]:
         "stack": stack,
         "compared": tables.compared_table(run),
         "checked": run.checked,
-        "findings": _findings(run),
+        "checks": checks(run),
         "inputs": Table(
             head=("input file", "SHA-256"),
             rows=tuple(run.provenance.inputs.items()),
@@ -255,30 +255,6 @@ def _stack(run: RunData) -> dict[str, Any]:
         "bill": bill_table(stack.bill) if stack.bill else None,
         "layers": report_pictures.layer_pictures(stack, run.part),
     }
-
-
-_SEVERITY_WORDS = {"stop": "do not print", "warn": "look first", "note": "good to know"}
-
-
-def _findings(run: RunData) -> Table | None:
-    if not run.findings:
-        return None
-    rows = []
-    for finding in sorted(run.findings, key=lambda f: SEVERITIES.index(f.severity)):
-        where = tables.place(finding.place_mm) if finding.place_mm else ""
-        rows.append(
-            (
-                _SEVERITY_WORDS[finding.severity],
-                finding.code,
-                finding.message,
-                where,
-                finding.remedy,
-            )
-        )
-    return Table(
-        head=("how bad", "check", "what was found", "where, mm", "what to do"),
-        rows=tuple(rows),
-    )
 
 
 def _contents(run: RunData) -> list[tuple[str, str]]:

@@ -11,13 +11,16 @@ from numpy.typing import NDArray
 from voxelmat.fea.energy_error import EnergyError
 from voxelmat.fea.refine import ErrorEstimate
 from voxelmat.model.design_result import DesignResult
+from voxelmat.model.deviation import OutlineDeviation
 from voxelmat.model.finding import Finding
+from voxelmat.model.inspection import InspectionSheet
 from voxelmat.model.interface import InterfaceSpot
 from voxelmat.model.part import Part
 from voxelmat.model.requirement import Verdict
 from voxelmat.model.result import StaticResult
 from voxelmat.printing.bill import BillRow
 from voxelmat.provenance import Provenance
+from voxelmat.workflow.report_canvas import Picture
 
 __all__ = ["LayerPicture", "RunData", "StackSummary"]
 
@@ -129,8 +132,14 @@ class RunData:
     optimised : DesignResult or None
     stack : StackSummary or None
     findings : tuple of Finding
+    finding_pictures : mapping of int to Picture
+        Of the findings that have a place, by their number.
     checked : bool
         Whether the preflight ran; no findings then means that it found nothing.
+    outline : OutlineDeviation or None
+        How far the outline of the stack lies off the design's.
+    inspection : InspectionSheet or None
+        Dimensions and protected surfaces of the design, measured on the stack.
     cautions : tuple of str
     notes : tuple of str
         What the program decided by itself: overlaps settled, gaps closed, repairs.
@@ -153,7 +162,10 @@ class RunData:
     optimised: DesignResult | None = None
     stack: StackSummary | None = None
     findings: tuple[Finding, ...] = ()
+    finding_pictures: Mapping[int, Picture] = field(default_factory=dict)
     checked: bool = False
+    outline: OutlineDeviation | None = None
+    inspection: InspectionSheet | None = None
     cautions: tuple[str, ...] = ()
     notes: tuple[str, ...] = ()
     provenance: Provenance = field(default_factory=Provenance)

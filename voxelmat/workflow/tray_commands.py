@@ -9,6 +9,7 @@ from typing import TYPE_CHECKING, Any
 from voxelmat.io.atomic import write_text
 from voxelmat.monitor import Monitor
 from voxelmat.units import number, quantity
+from voxelmat.workflow.finding_words import checked_lines
 
 if TYPE_CHECKING:
     from voxelmat.workflow.traying import TrayResult
@@ -112,11 +113,8 @@ def _lines(result: TrayResult) -> list[str]:
     for resin, volume in expected.volume_mm3.items():
         lines.append(f"  {resin}: {quantity(volume, 'mm^3')}")
     lines += [f"  note: {note}" for note in result.notes]
-    for f in result.findings:
-        lines.append(f"  {f.severity}: {f.message}")
-        if f.remedy:
-            lines.append(f"        {f.remedy}")
-    if not result.findings:
-        lines.append("  nothing found" + (", all marks in their places" if made.marks else ""))
+    lines += checked_lines(result.findings)
+    if result.marks_found:
+        lines.append("  all marks in their places")
     lines += [f"stack: {result.stack.folder}", f"picture: {result.picture}"]
     return lines

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
@@ -9,13 +10,16 @@ from typing import Any
 from voxelmat.errors import InputError
 from voxelmat.io.atomic import explain_os_error, write_bytes, write_json
 from voxelmat.io.trayfile import TrayPlan, load_tray_file
+from voxelmat.model.deviation import OutlineDeviation
 from voxelmat.model.finding import Finding
 from voxelmat.monitor import SILENT, Monitor
 from voxelmat.printing.estimate import PrintEstimate, estimate
-from voxelmat.printing.preflight import preflight
+from voxelmat.printing.findmark import MARK_CODES
+from voxelmat.printing.preflight import check_stack
 from voxelmat.printing.profile import load_profile
 from voxelmat.printing.readback import Stack, read_stack
 from voxelmat.printing.tray import Tray, lay_out, write_tray
+from voxelmat.workflow.finding_words import finding_dict, outline_dict
 from voxelmat.workflow.report_tray import tray_picture
 from voxelmat.workflow.trayparts import PartSources
 
@@ -33,6 +37,8 @@ class TrayResult:
     stack : Stack
     findings : tuple of Finding
         Worst first.
+    outlines : mapping of str to OutlineDeviation
+        How far the outline of each part lies off its design's.
     estimate : PrintEstimate
     picture : Path
         The tray from above.
@@ -45,6 +51,7 @@ class TrayResult:
     tray: Tray
     stack: Stack
     findings: tuple[Finding, ...]
+    outlines: Mapping[str, OutlineDeviation]
     estimate: PrintEstimate
     picture: Path
     folder: Path
@@ -54,6 +61,11 @@ class TrayResult:
     def exit_code(self) -> int:
         """1 where a finding says: do not print."""
         return 1 if any(f.severity == "stop" for f in self.findings) else 0
+
+    @property
+    def marks_found(self) -> bool:
+        """True where there are marks, and all were found in their places."""
+        return bool(self.tray.marks) and not any(f.code in MARK_CODES for f in self.findings)
 
     def as_dict(self) -> dict[str, Any]:
         """Plain data for JSON, lengths in mm."""
@@ -80,17 +92,8 @@ class TrayResult:
             "volume_mm3": dict(self.estimate.volume_mm3),
             "support_mm3": self.estimate.support_mm3,
             "time_s": list(self.estimate.time_s),
-            "findings": [
-                {
-                    "severity": f.severity,
-                    "code": f.code,
-                    "message": f.message,
-                    "part": f.part,
-                    "place_mm": None if f.place_mm is None else list(f.place_mm),
-                    "remedy": f.remedy,
-                }
-                for f in self.findings
-            ],
+            "findings": [finding_dict(f) for f in self.findings],
+            "outlines": {n: outline_dict(seen) for n, seen in self.outlines.items()},
             "notes": list(self.notes),
         }
 
@@ -143,12 +146,13 @@ def run_tray(
         scheduler=scheduler,
     )
     stack = read_stack(folder / "stack")
-    found = preflight(stack, monitor=monitor)
+    checks = check_stack(stack, tray.designs, monitor=monitor)
     result = TrayResult(
         plan=plan,
         tray=tray,
         stack=stack,
-        findings=tuple(found),
+        findings=checks.findings,
+        outlines=checks.outlines,
         estimate=estimate(stack),
         picture=picture,
         folder=folder,

@@ -25,7 +25,7 @@ from voxelmat.printing.profile import load_profile
 from voxelmat.printing.tray import TrayEntry
 from voxelmat.workflow.build import Built, build
 
-__all__ = ["PartSources", "printed_part"]
+__all__ = ["PartSources", "part_of_run", "printed_part"]
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -119,7 +119,7 @@ def _source(item: TrayPart, monitor: Monitor) -> _Source:
     design = load_design(item.design)
     if item.run is not None:
         notes = _run_notes(item.run, item.design)
-        return _Source(part=_part_of_run(design, item.run), design=design, notes=notes)
+        return _Source(part=part_of_run(design, item.run), design=design, notes=notes)
     built = _made(design, monitor)
     note = f"'{design.name}' was made anew from {item.design.name}."
     return _Source(part=built.part, design=design, built=built, notes=(note,))
@@ -136,11 +136,20 @@ def _made(design: Design, monitor: Monitor) -> Built:
     return build(design, monitor=monitor)
 
 
-def _part_of_run(design: Design, run: Path) -> Part:
+def part_of_run(design: Design, run: Path) -> Part:
+    """The part that the run of a design left in its folder.
+
+    Raises
+    ------
+    InputError
+        If there is none.
+    """
     kept = run / "part.npz"
     if not kept.is_file():
         raise InputError(
-            f"'{kept}' is missing: give the folder that the design's run wrote to.", key="run"
+            f"'{kept}' is missing: give the folder that the design's run wrote to (--out, or 'run' "
+            "in a tray file).",
+            key="run",
         )
     law = load_library([design.file(f) for f in design.material_files]).law(design.law)
     return load_part(kept, law)
@@ -195,5 +204,5 @@ def printed_part(
     name = design.printing.profile
     profile = load_profile(design.file(name) if name.endswith(".toml") else name)
     if (Path(run) / "part.npz").is_file():
-        return _part_of_run(design, Path(run)), profile
+        return part_of_run(design, Path(run)), profile
     return _made(design, monitor).part, profile
