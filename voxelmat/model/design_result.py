@@ -8,6 +8,7 @@ from dataclasses import dataclass, field
 import numpy as np
 from numpy.typing import NDArray
 
+from voxelmat.model.design_stages import Price, StagedValue
 from voxelmat.model.part import Part
 from voxelmat.provenance import Provenance
 from voxelmat.units import number
@@ -91,7 +92,13 @@ class DesignResult:
     fractions : ndarray of float32, shape (resins, ...) over ``grid.shape``
         Volume fractions over `DesignSpec.resins`; kept voxels hold zeros.
     notes : tuple of str
-        What was frozen or adapted without being asked for.
+        What was frozen or adapted without being asked for, and what rounding changed much.
+    stages : tuple of StagedValue
+        The objective and every limit: as optimised, and of the part that was made.
+    prices : tuple of Price
+        Of the limits that hold the objective back, dearest first.
+    unknowns : ndarray or None
+        Of the last whole design; what a run of a similar question can start from.
     provenance : Provenance
     """
 
@@ -109,6 +116,9 @@ class DesignResult:
     density: NDArray[np.float32]
     fractions: NDArray[np.float32]
     notes: tuple[str, ...] = ()
+    stages: tuple[StagedValue, ...] = ()
+    prices: tuple[Price, ...] = ()
+    unknowns: NDArray[np.float64] | None = None
     provenance: Provenance = field(default_factory=Provenance)
 
     @property

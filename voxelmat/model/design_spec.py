@@ -170,6 +170,10 @@ class DesignSpec:
     iterations : int
     levels : int
         Blends in the palette of the result, at most.
+    palette_error : float or None
+        Share of the objective (of the target, for a target deflection) that rounding to a palette
+        may cost, and by how much of a limit it may overstep it; the palette is then the smallest
+        that does. None: as many blends as `levels` allows.
     method : str
         ``"mma"``, ``"oc"`` (optimality criteria) or ``"auto"``.
     move : float
@@ -196,6 +200,7 @@ class DesignSpec:
     symmetry: tuple[str, ...] = ()
     iterations: int = 80
     levels: int = 64
+    palette_error: float | None = None
     method: Literal["auto", "mma", "oc"] = "auto"
     move: float = 0.2
     seed: int = 0
@@ -263,7 +268,7 @@ class DesignSpec:
         head = {
             name: plain(getattr(self, name), arrays)
             for name in self.__dataclass_fields__
-            if name not in ("iterations", "levels", "seed")
+            if name not in ("iterations", "levels", "palette_error", "seed")
         }
         code = hashlib.sha256(text_digest(head).encode())
         for array in arrays:

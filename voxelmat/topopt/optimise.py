@@ -10,36 +10,28 @@ from pathlib import Path
 import numpy as np
 from numpy.typing import NDArray
 
-from voxelmat.model.design_result import ConstraintValue, DesignResult
+from voxelmat.model.design_result import DesignResult
 from voxelmat.model.design_spec import DesignSpec, TargetDeflection
 from voxelmat.model.loadcase import LoadCase
 from voxelmat.model.part import Part
 from voxelmat.monitor import SILENT, Figure, Monitor
 from voxelmat.provenance import Provenance, text_digest, utc_now
 from voxelmat.topopt.assemble import assemble
-from voxelmat.topopt.cases import as_arrays
 from voxelmat.topopt.checkpoint import read_checkpoint, write_checkpoint
 from voxelmat.topopt.criteria import OptimalityCriteria
-from voxelmat.topopt.domain import build_choice, resin_numbers
-from voxelmat.topopt.interpolation import VoidLaw
+from voxelmat.topopt.finish import finished
 from voxelmat.topopt.iterate import Iterate
-from voxelmat.topopt.loop import Outcome, State, Stepper, Stopping, run
+from voxelmat.topopt.loop import State, Stepper, Stopping, run
 from voxelmat.topopt.mma import MovingAsymptotes
-from voxelmat.topopt.physics import Case, Physics
-from voxelmat.topopt.problem import (
-    LayoutProblem,
-    limits_of,
-    objective_of,
-    start_of,
-    suits_criteria,
-)
-from voxelmat.topopt.unknowns import Choice, Fields, Palette, Unknowns
+from voxelmat.topopt.physics import Case
+from voxelmat.topopt.problem import LayoutProblem, start_of, suits_criteria
+from voxelmat.topopt.setup import layout_problem, unknowns_of
+from voxelmat.topopt.unknowns import Choice
 
-__all__ = ["layout_problem", "optimise"]
+__all__ = ["optimise"]
 
-#: Linear solver tolerance while a design is still changing, and for the figures at the end.
+#: Linear solver tolerance while a design is still changing.
 _RUNNING = {"compliance": 1e-3, "target": 1e-5}
-_FINAL = 1e-6
 #: A target's objective goes to zero, so its gap is held against the first value.
 _FOR_TARGET = Stopping(gap=1e-7, gap_of_first=True, change=2e-5)
 _KEEP_EVERY = 5
@@ -109,7 +101,7 @@ def optimise(
         seen=None if watch is None else _watcher(part, spec, choice, watch),
     )
     physics.quiet()
-    result = _result(part, spec, problem, outcome, notes)
+    result = finished(part, spec, problem, outcome, notes)
     provenance = Provenance(
         inputs={"part": part.digest, "design": spec.digest},
         seed=spec.seed,
@@ -119,40 +111,11 @@ def optimise(
     return dataclasses.replace(result, provenance=provenance)
 
 
-def layout_problem(
-    part: Part,
-    load_cases: Sequence[LoadCase],
-    spec: DesignSpec,
-    *,
-    element: str = "icmb",
-    monitor: Monitor = SILENT,
-) -> tuple[LayoutProblem, tuple[str, ...]]:
-    """The design problem of a specification on a part, and what was frozen without being asked.
-
-    Raises
-    ------
-    InputError
-        As `optimise`.
-    """
-    cases = as_arrays(part, load_cases)
-    choice, notes = build_choice(part, spec, cases)
-    unknowns = _unknowns(part, spec, choice)
-    physics = Physics(cases, part.grid.spacing, element=element, monitor=monitor)
-    problem = LayoutProblem(
-        unknowns,
-        physics,
-        objective_of(spec, cases),
-        limits_of(spec, unknowns, part.grid.voxel_volume),
-        spec.projection,
-    )
-    return problem, notes
-
-
 def _watcher(
     part: Part, spec: DesignSpec, choice: Choice, watch: Callable[[Iterate], None]
 ) -> Callable[[State], None]:
     """Hands on each design; parts are made by unknowns of its own, which the run does not use."""
-    own = _unknowns(part, spec, choice)
+    own = unknowns_of(part, spec, choice)
 
     def make(x: NDArray[np.float64], sharpness: float) -> Part:
         own.sharpness = sharpness
@@ -177,35 +140,6 @@ class _Progress:
         self._inner.report("optimising", done=self._done, total=self._total, **self._figures)
 
 
-def _unknowns(part: Part, spec: DesignSpec, choice: Choice) -> Unknowns:
-    numbers = resin_numbers(part, spec)
-    resins = [part.resins[n] for n in numbers]
-    palette = Palette(
-        names=tuple(m.name for m in resins),
-        bulk=np.array([m.bulk for m in resins]),
-        shear=np.array([m.shear for m in resins]),
-        density=np.array([m.density.value for m in resins]),
-        law=part.law,
-    )
-    void = None
-    if spec.void:
-        soft = spec.void_stiffness * min(m.E.value for m in resins)
-        void = VoidLaw(
-            penalty=spec.penalty,
-            kind=spec.void_law,
-            floor_shear=soft / 2.6,  # nu = 0.3: nothing depends on it
-            floor_lame=soft * 0.3 / (1.3 * 0.4),
-        )
-    return Unknowns(
-        choice,
-        palette,
-        void=void,
-        spacing=part.grid.spacing,
-        radius=spec.filter_radius,
-        threshold=spec.projection.threshold,
-    )
-
-
 def _stepper(spec: DesignSpec, problem: LayoutProblem) -> Stepper:
     criteria = suits_criteria(spec, problem.unknowns)
     if spec.method == "oc" or (spec.method == "auto" and criteria):
@@ -223,68 +157,3 @@ def _digest(part: Part, spec: DesignSpec, cases: tuple[Case, ...], element: str)
             if array is not None:
                 code.update(np.ascontiguousarray(array).tobytes())
     return code.hexdigest()
-
-
-def _result(
-    part: Part, spec: DesignSpec, problem: LayoutProblem, outcome: Outcome, notes: tuple[str, ...]
-) -> DesignResult:
-    """Solve the last whole design and its palette once more, closely, and put all together."""
-    unknowns, physics = problem.unknowns, problem.physics
-    history = outcome.state.history
-    unknowns.sharpness = history[-1].sharpness if history else problem.sharpness(0)
-    problem.begin(max(len(history) - 1, 0), history)
-    fields = unknowns.forward(outcome.state.whole)
-    physics.tolerance = _FINAL
-    physics.update(fields)
-    value = problem.objective.value(physics)[0]
-    constraints = tuple(
-        ConstraintValue(
-            name=b.response.name,
-            value=b.response.value(physics)[0],
-            limit=b.limit,
-            unit=b.response.unit,
-        )
-        for b in problem.bounds
-    )
-    new, rounded, error = assemble(part, unknowns, fields, spec.levels)
-    physics.update(unknowns.with_fractions(fields, rounded))
-    of_palette = problem.objective.value(physics)[0]
-    return DesignResult(
-        part=new,
-        history=history,
-        reason=outcome.reason,
-        converged=outcome.converged,
-        cancelled=outcome.cancelled,
-        objective=problem.objective.report(value),
-        objective_name=problem.objective.name,
-        objective_unit=problem.objective.unit,
-        objective_of_palette=problem.objective.report(of_palette),
-        palette_error=error,
-        constraints=constraints,
-        density=np.where(unknowns.choice.kept_mu > 0, 1.0, fields.rho).T.astype(np.float32),
-        fractions=np.ascontiguousarray(fields.w, dtype=np.float32).transpose(0, 3, 2, 1),
-        notes=(*notes, *_radius_note(part, spec), *_law_notes(fields)),
-    )
-
-
-def _radius_note(part: Part, spec: DesignSpec) -> tuple[str, ...]:
-    if spec.filter_radius > min(part.grid.spacing):
-        return ()
-    return (
-        f"The filter radius of {spec.filter_radius:g} mm is not above the smallest spacing, so "
-        "nothing is smoothed: designs may show single voxels and depend on the grid.",
-    )
-
-
-def _law_notes(fields: Fields) -> tuple[str, ...]:
-    """Where the blend law was held within its bounds, or was not calibrated."""
-    notes = []
-    clipped, open_ = int(fields.blend.clipped.sum()), int(fields.blend.uncalibrated.sum())
-    of = f"of {fields.blend.clipped.size} designed voxels"
-    if clipped:
-        notes.append(
-            f"In {clipped} {of} the blend law was held within the Hashin-Shtrikman bounds."
-        )
-    if open_:
-        notes.append(f"In {open_} {of} the blend has no calibrated curve; logarithms are mixed.")
-    return tuple(notes)
