@@ -4,12 +4,14 @@ from __future__ import annotations
 
 import dataclasses
 import hashlib
+import time
 from collections.abc import Callable, Sequence
 from pathlib import Path
 
 import numpy as np
 from numpy.typing import NDArray
 
+from voxelmat.errors import InputError
 from voxelmat.model.design_result import DesignResult
 from voxelmat.model.design_spec import DesignSpec, TargetDeflection
 from voxelmat.model.loadcase import LoadCase
@@ -46,6 +48,7 @@ def optimise(
     checkpoint: Path | None = None,
     element: str = "icmb",
     watch: Callable[[Iterate], None] | None = None,
+    start: NDArray[np.float64] | None = None,
 ) -> DesignResult:
     """Find where which resin goes and what stays empty.
 
@@ -58,7 +61,7 @@ def optimise(
     spec : DesignSpec
     monitor : Monitor
         ``report("optimising", done=, total=, objective=, violation=, grey=, change=,
-        cg_iterations=)`` after each iteration. `Cancelled` ends the run with its last whole
+        cg_iterations=, time_left_s=)`` after each iteration. `Cancelled` ends the run with its last whole
         design as the result.
     checkpoint : Path, optional
         Written every 5 iterations and at the end. Where the file is there and belongs to this
@@ -68,6 +71,9 @@ def optimise(
     watch : callable, optional
         Given the `Iterate` of each iteration, on the optimiser's thread; it can be kept and made
         into a part later.
+    start : ndarray, optional
+        Unknowns to begin with, such as `DesignResult.unknowns` of a question that differs only in
+        a limit; a checkpoint goes before it.
 
     Returns
     -------
@@ -86,7 +92,13 @@ def optimise(
     physics, choice, cases = problem.physics, problem.unknowns.choice, problem.physics.cases
     is_target = isinstance(spec.objective, TargetDeflection)
     physics.tolerance = _RUNNING["target" if is_target else "compliance"]
-    start = start_of(spec, problem.unknowns, problem.bounds)
+    if start is None:
+        start = start_of(spec, problem.unknowns, problem.bounds)
+    elif start.shape != (problem.unknowns.n,):
+        raise InputError(
+            f"The start holds {start.size} unknowns, this design has {problem.unknowns.n}; it must "
+            "come from the same shape, resins and frozen regions."
+        )
     digest = _digest(part, spec, cases, element)
     state = None if checkpoint is None else read_checkpoint(checkpoint, digest)
     outcome = run(
@@ -133,9 +145,17 @@ class _Progress:
     def __init__(self, inner: Monitor, total: int) -> None:
         self._inner, self._total, self._done = inner, total, 0
         self._figures: dict[str, Figure] = {}
+        self._began: tuple[float, int] | None = None
 
     def report(self, stage: str, *, done: int, total: int, **figures: Figure) -> None:
         if stage == "optimising":
+            now = time.monotonic()
+            if self._began is None:
+                self._began = now, done - 1  # the first iteration of this run is not timed
+            since, before = self._began
+            if done > before + 1:
+                each = (now - since) / (done - before - 1)
+                figures["time_left_s"] = round(each * (total - done), 1)
             self._total, self._done, self._figures = total, done, figures
         self._inner.report("optimising", done=self._done, total=self._total, **self._figures)
 
