@@ -21,8 +21,10 @@ from voxelmat.model.measure import (
     TargetDeflection,
     WorstCompliance,
 )
+from voxelmat.topopt.measures_physics import PHYSICS
 from voxelmat.topopt.physics import Case
 from voxelmat.topopt.response_amount import AMOUNTS
+from voxelmat.topopt.response_cell import CellTargetResponse
 from voxelmat.topopt.response_interface import InterfaceResponse
 from voxelmat.topopt.response_motion import (
     LargestMotionResponse,
@@ -57,6 +59,8 @@ def response_of(measure: object, setting: Setting) -> Response:
 
 def root_of(response: Response) -> Response:
     """For limits: the error of a target itself, where the objective is its square."""
+    if isinstance(response, CellTargetResponse):
+        return dataclasses.replace(response, root=True)
     return TargetErrorResponse(square=response) if type(response) is TargetResponse else response
 
 
@@ -231,4 +235,5 @@ _MAKERS: dict[type, Callable[[Any, Setting], Response]] = {
     Stretch: _strength,
     InterfaceTraction: _interface,
     **AMOUNTS,
+    **PHYSICS,
 }

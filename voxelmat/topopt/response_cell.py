@@ -140,21 +140,28 @@ class CellTargetResponse(_CellResponse):
     ----------
     target : ndarray, shape (6, 6)
         MPa; nan where it does not matter.
+    root : bool
+        Take the root of it, as limits do.
     """
 
     target: Array
+    root: bool = False
 
     def of(self, C: Array) -> tuple[float, Array]:
-        """The square, smooth at 0."""
+        """The square, smooth at 0; or its root."""
         known = ~np.isnan(self.target)
         wanted = np.where(known, self.target, 0.0)
         size = float((wanted**2).sum())
         miss = np.where(known, C - wanted, 0.0)
-        return float((miss**2).sum()) / size, 2.0 * miss / size
+        square = float((miss**2).sum()) / size
+        if not self.root:
+            return square, 2.0 * miss / size
+        error = float(np.sqrt(square))
+        return error, miss / (size * max(error, 1e-300))
 
     def report(self, value: float) -> float:
-        """Root, a relative error."""
-        return float(np.sqrt(max(value, 0.0)))
+        """A relative error."""
+        return value if self.root else float(np.sqrt(max(value, 0.0)))
 
 
 _WORDS = {

@@ -78,6 +78,8 @@ class FrequencyResponse:
         Modes in the sum.
     exponent : float
         P.
+    key : str
+        Tells it from other responses.
     """
 
     held: NDArray[np.bool_]
@@ -89,13 +91,14 @@ class FrequencyResponse:
     carried: Array | None = None
     count: int = 4
     exponent: float = 16.0
+    key: str = ""
     name: str = "lowest frequency"
     unit: str = "Hz"
 
     def value(self, physics: Physics) -> tuple[float, dict[str, Array]]:
         """Value, and derivatives by ``lam``, ``mu``, ``rho`` and ``w``."""
         f = physics.fields
-        packed, pairs, scale = self._modes(physics, f)
+        packed, pairs, scale = self._found(physics)
         t = pairs.values[: self.count]
         P = self.exponent
         J = float(t[0] * np.sum((t[0] / t) ** P) ** (-1.0 / P))
@@ -124,6 +127,18 @@ class FrequencyResponse:
     def report(self, value: float) -> float:
         """As it is."""
         return value
+
+    def truth(self, physics: Physics) -> float:
+        """The lowest frequency itself."""
+        _, pairs, scale = self._found(physics)
+        return float(np.sqrt(pairs.values[0] * scale[0] / scale[1])) / (2.0 * np.pi)
+
+    def _found(self, physics: Physics) -> tuple[Packed, Eigenpairs, tuple[float, float]]:
+        """Lowest pairs of the present design, as `_modes` gives them."""
+        packed, pairs, scale = physics.once(
+            f"modes {self.key}", lambda: self._modes(physics, physics.fields)
+        )
+        return packed, pairs, scale
 
     def _share(self, share: Array) -> Array:
         return self.floor + (1.0 - self.floor) * share
@@ -160,7 +175,7 @@ class FrequencyResponse:
             largest=False,
             fixed=fixed,
         )
-        start = physics.recall(self.name)
+        start = physics.recall(f"modes {self.key}")
         pairs = extreme_pairs(
             problem,
             self.count,
@@ -179,7 +194,7 @@ class FrequencyResponse:
                 f"that empty voxels keep.",
                 pairs.history,
             )
-        physics.remember(self.name, pairs.vectors)
+        physics.remember(f"modes {self.key}", pairs.vectors)
         return packed, pairs, (stiff, heavy)
 
 
@@ -194,7 +209,9 @@ def _orthonormal(packed: Packed, inertia: Apply, fields: Array, heavy: float) ->
     return np.asarray(R)
 
 
-def frequency_response(measure: Frequency, part: Part, unknowns: Unknowns) -> FrequencyResponse:
+def frequency_response(
+    measure: Frequency, part: Part, unknowns: Unknowns, key: str = ""
+) -> FrequencyResponse:
     """The response that a measure stands for.
 
     Raises
@@ -229,4 +246,5 @@ def frequency_response(measure: Frequency, part: Part, unknowns: Unknowns) -> Fr
         carried=carried,
         count=measure.count,
         exponent=measure.exponent,
+        key=key,
     )

@@ -11,7 +11,6 @@ shape as it is given.
 
 from __future__ import annotations
 
-from abc import ABC, abstractmethod
 from dataclasses import dataclass
 
 import numpy as np
@@ -24,17 +23,21 @@ from voxelmat.fea.heat_system import HeatSystem
 from voxelmat.fea.operator import touched_nodes
 from voxelmat.fea.scalar_element import modal_factors
 from voxelmat.fea.scalar_forms import scalar_forms
+from voxelmat.model.goal import plain
 from voxelmat.model.measure_physics import MeanTemperature, PeakTemperature, ThermalCompliance
 from voxelmat.model.part import Part
 from voxelmat.model.thermal import conductivity_slopes, mixed_conductivity
-from voxelmat.topopt.peak import corrected_peak
+from voxelmat.provenance import text_digest
 from voxelmat.topopt.physics import Physics
+from voxelmat.topopt.smooth import correction, scaled, smooth_maximum
 from voxelmat.topopt.unknowns import Unknowns
 
-__all__ = ["Conducting", "TemperatureResponse", "temperature_response"]
+__all__ = ["Conducting", "PeakResponse", "TemperatureResponse", "temperature_response"]
 
 Array = NDArray[np.float64]
 Bools = NDArray[np.bool_]
+
+Measure = PeakTemperature | MeanTemperature | ThermalCompliance
 
 # Share of the poorest resin's conductivity that empty voxels keep where none is stated.
 _VOID = 1e-3
@@ -120,21 +123,28 @@ class Conducting:
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
-class TemperatureResponse(ABC):
-    """Any differentiable function of the temperature."""
+class TemperatureResponse:
+    """A weighted sum of temperatures at nodes.
+
+    Attributes
+    ----------
+    conducting : Conducting
+    weight : ndarray of float64, shape (nz+1, ny+1, nx+1)
+    key : str
+        Tells it from other responses.
+    """
 
     conducting: Conducting
+    weight: Array
+    key: str
     name: str
     unit: str
 
-    @abstractmethod
-    def of(self, T: Array, physics: Physics) -> tuple[float, Array]:
-        """Value, and its slope by the temperature at each node."""
-
     def value(self, physics: Physics) -> tuple[float, dict[str, Array]]:
         """Value, and derivatives by ``rho`` and ``w``."""
-        value, slope = self.of(self.conducting.solved(physics)[1], physics)
-        return value, self.conducting.slopes(physics, slope, self.name)
+        T = self.conducting.solved(physics)[1]
+        slopes = self.conducting.slopes(physics, self.weight, self.key)
+        return float((self.weight * T).sum()), slopes
 
     def report(self, value: float) -> float:
         """As it is."""
@@ -142,28 +152,45 @@ class TemperatureResponse(ABC):
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
-class _Peak(TemperatureResponse):
+class PeakResponse:
+    """Largest temperature of some nodes, by a p-norm that is corrected to it.
+
+    Attributes
+    ----------
+    conducting : Conducting
+    nodes : ndarray of bool, shape (nz+1, ny+1, nx+1)
+    exponent : float
+    key : str
+        Tells it from other responses.
+    """
+
+    conducting: Conducting
     nodes: Bools
     exponent: float
+    key: str
+    name: str
+    unit: str = "K"
 
-    def of(self, T: Array, physics: Physics) -> tuple[float, Array]:
-        slope = np.zeros(T.shape)
-        key = f"{self.conducting.key} {self.name} factor"
-        value, slope[self.nodes] = corrected_peak(physics, key, T[self.nodes], self.exponent)
-        return value, slope
+    def value(self, physics: Physics) -> tuple[float, dict[str, Array]]:
+        """Value, and derivatives by ``rho`` and ``w``."""
+        T = self.conducting.solved(physics)[1]
+        rise = np.where(self.nodes, np.maximum(T, 0.0), 0.0)
+        peak, by_T = smooth_maximum(rise, self.exponent)
+        slopes = self.conducting.slopes(physics, by_T, self.key)
+        return scaled(correction(physics, self.key, peak, float(rise.max())), peak, slopes)
 
+    def report(self, value: float) -> float:
+        """As it is."""
+        return value
 
-@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
-class _Weighted(TemperatureResponse):
-    weight: Array
-
-    def of(self, T: Array, physics: Physics) -> tuple[float, Array]:
-        return float((self.weight * T).sum()), self.weight
+    def truth(self, physics: Physics) -> float:
+        """The largest."""
+        return max(float(self.conducting.solved(physics)[1][self.nodes].max()), 0.0)
 
 
 def temperature_response(
-    measure: PeakTemperature | MeanTemperature | ThermalCompliance, part: Part, unknowns: Unknowns
-) -> TemperatureResponse:
+    measure: Measure, part: Part, unknowns: Unknowns, key: str = ""
+) -> TemperatureResponse | PeakResponse:
     """The response that a measure stands for.
 
     Raises
@@ -173,8 +200,12 @@ def temperature_response(
     """
     conducting = _conducting(measure, part, unknowns)
     if isinstance(measure, ThermalCompliance):
-        return _Weighted(
-            conducting=conducting, name="thermal compliance", unit="mW K", weight=conducting.heat
+        return TemperatureResponse(
+            conducting=conducting,
+            weight=conducting.heat,
+            key=key,
+            name="thermal compliance",
+            unit="mW K",
         )
     nodes = touched_nodes(np.ascontiguousarray(part.solid.T))
     if measure.region is not None:
@@ -186,24 +217,30 @@ def temperature_response(
             )
     where = "" if measure.region is None else f" of {measure.region.name}"
     if isinstance(measure, MeanTemperature):
-        return _Weighted(
+        return TemperatureResponse(
             conducting=conducting,
+            key=key,
             name=f"mean temperature rise{where}",
             unit="K",
             weight=nodes / float(nodes.sum()),
         )
-    return _Peak(
+    return PeakResponse(
         conducting=conducting,
+        key=key,
         name=f"peak temperature rise{where}",
-        unit="K",
         nodes=nodes,
         exponent=measure.exponent,
     )
 
 
-def _conducting(
-    measure: PeakTemperature | MeanTemperature | ThermalCompliance, part: Part, unknowns: Unknowns
-) -> Conducting:
+def _digest(measure: Measure) -> str:
+    """Names the temperature, which measures of one heat case share."""
+    arrays: list[NDArray[np.generic]] = []
+    head = plain([measure.heat_case, measure.void_W_per_m_K], arrays)
+    return text_digest([head, [a.tobytes().hex() for a in arrays]])[:16]
+
+
+def _conducting(measure: Measure, part: Part, unknowns: Unknowns) -> Conducting:
     case, c = measure.heat_case, unknowns.choice
     by_name = {m.name: m for m in part.resins}
     known = {n: by_name[n].conductivity for n in unknowns.palette.names}
@@ -231,7 +268,7 @@ def _conducting(
     )
     void = measure.void_W_per_m_K
     return Conducting(
-        key=f"heat {case.name}",
+        key=f"heat {_digest(measure)}",
         held=acts.held,
         given=np.where(acts.held, acts.given - coldest, 0.0),
         heat=acts.heat(coldest),

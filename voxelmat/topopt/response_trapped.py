@@ -26,8 +26,8 @@ from voxelmat.model.measure_physics import TrappedSupport
 from voxelmat.model.part import Part
 from voxelmat.model.surface import Faces, exposed_faces
 from voxelmat.monitor import SILENT, Monitor
-from voxelmat.topopt.peak import smooth_peak
 from voxelmat.topopt.physics import Physics
+from voxelmat.topopt.smooth import smooth_maximum
 from voxelmat.topopt.unknowns import Unknowns
 
 __all__ = ["TrappedResponse", "trapped_response"]
@@ -66,6 +66,8 @@ class TrappedResponse:
     empty_norm : float
         p-norm of the empty shape, mm^2.
     exponent : float
+    key : str
+        Tells it from other responses.
     """
 
     fill: Array
@@ -73,6 +75,7 @@ class TrappedResponse:
     held: Bools
     empty_norm: float
     exponent: float
+    key: str = ""
     name: str = "trapped support"
     unit: str = ""
 
@@ -81,8 +84,8 @@ class TrappedResponse:
         empty = np.where(self.designed, 1.0 - physics.fields.rho, 0.0)
         system, T = self._warmed(empty, physics)
         mean = corner_mean(T)
-        norm, slope = smooth_peak(empty * mean, self.exponent)
-        key = f"{self.name} adjoint"
+        norm, slope = smooth_maximum(empty * np.maximum(mean, 0.0), self.exponent)
+        key = f"trapped adjoint {self.key}"
         a, run = system.solve(
             _to_corners(slope * empty), x0=physics.recall(key), tol=physics.tolerance
         )
@@ -103,11 +106,11 @@ class TrappedResponse:
         system = _system(self.fill, empty, self.held, physics.spacing, physics.monitor)
         T, run = system.solve(
             _heat(self.fill, empty, physics.spacing),
-            x0=physics.recall(self.name),
+            x0=physics.recall(f"trapped {self.key}"),
             tol=physics.tolerance,
         )
         physics.cg_iterations += run.iterations
-        physics.remember(self.name, T)
+        physics.remember(f"trapped {self.key}", T)
         return system, T
 
 
@@ -154,7 +157,9 @@ def _keys(faces: Faces) -> NDArray[np.int64]:
     return np.asarray(((((k << 20) + j) << 20) + i) * 6 + 2 * faces.axis.astype(np.int64) + side)
 
 
-def trapped_response(measure: TrappedSupport, part: Part, unknowns: Unknowns) -> TrappedResponse:
+def trapped_response(
+    measure: TrappedSupport, part: Part, unknowns: Unknowns, key: str = ""
+) -> TrappedResponse:
     """The response that a measure stands for.
 
     Raises
@@ -173,7 +178,7 @@ def trapped_response(measure: TrappedSupport, part: Part, unknowns: Unknowns) ->
     empty = np.where(unknowns.choice.domain, 1.0, 0.0)
     system = _system(fill, empty, held, spacing, SILENT)
     T, _ = system.solve(_heat(fill, empty, spacing), tol=_CLOSE)
-    norm = smooth_peak(empty * corner_mean(T), measure.exponent)[0]
+    norm = smooth_maximum(empty * np.maximum(corner_mean(T), 0.0), measure.exponent)[0]
     if norm == 0.0:
         raise InputError(
             "Every designed voxel lies at the open surface, so nothing can be trapped; drop the "
@@ -185,4 +190,5 @@ def trapped_response(measure: TrappedSupport, part: Part, unknowns: Unknowns) ->
         held=held,
         empty_norm=norm,
         exponent=measure.exponent,
+        key=key,
     )
