@@ -1,4 +1,4 @@
-"""Kinds of unknowns: pure resins, shared voxels, self-support, realisations, a kind of one's own."""
+"""Kinds of unknowns: pure resins, shared voxels, self-support, realisations, one of our own."""
 
 import numpy as np
 import pytest

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
-from typing import Literal
+from typing import TYPE_CHECKING, Literal
 
 import numpy as np
 from numpy.typing import NDArray
@@ -12,7 +12,18 @@ from numpy.typing import NDArray
 from voxelmat.errors import InputError
 from voxelmat.model.measure import mask
 
-__all__ = ["ChosenZones", "LoadScatter", "MaterialScatter", "Robust", "Skin", "Zones"]
+__all__ = [
+    "ChosenZones",
+    "LoadScatter",
+    "MaterialScatter",
+    "Robust",
+    "Skin",
+    "Zones",
+    "check_rules",
+]
+
+if TYPE_CHECKING:
+    from voxelmat.model.design_spec import DesignSpec
 
 _MOST_ZONES = 4096
 
@@ -180,3 +191,102 @@ class Skin:
             raise InputError(f"The thickness of a skin must be above 0 mm; got {self.thickness!r}.")
         if self.region is not None:
             object.__setattr__(self, "region", mask(self.region, "The region of a skin"))
+
+
+def check_rules(spec: DesignSpec) -> None:
+    """Refuse rules that are out of range or contradict each other.
+
+    Raises
+    ------
+    InputError
+    """
+    _check_lengths(spec)
+    _check_blends(spec)
+    _check_links(spec)
+    _check_robust(spec)
+    if spec.skin is not None and spec.skin.resin not in spec.resins:
+        raise InputError(
+            f"The skin is of '{spec.skin.resin}', which is not among the resins of the design "
+            f"({', '.join(spec.resins)})."
+        )
+    if spec.support_angle is not None:
+        if not 10 <= spec.support_angle <= 80:
+            raise InputError(
+                f"A self-support angle lies in 10 to 80 degrees; got {spec.support_angle!r}."
+            )
+        if not spec.void:
+            raise InputError(
+                "A self-support angle is asked for, but the design allows no empty voxels, so "
+                "there is no overhang; leave it out or set void to true."
+            )
+    if spec.most_resins is not None and spec.most_resins < 1:
+        raise InputError(f"A design uses at least 1 resin; got most_resins {spec.most_resins!r}.")
+    if spec.most_resins == 1 and not spec.void:
+        raise InputError(
+            "At most one resin and no empty voxels leave nothing to design; allow either."
+        )
+
+
+def _check_lengths(spec: DesignSpec) -> None:
+    for name, length in (
+        ("interface width", spec.interface_width),
+        ("radius of the blends' filter", spec.blend_radius),
+    ):
+        if length is not None and not (math.isfinite(length) and length > 0):
+            raise InputError(f"The {name} must be above 0 mm; got {length!r}.")
+
+
+def _check_blends(spec: DesignSpec) -> None:
+    if spec.blends not in ("free", "pure"):
+        raise InputError(f"Blends are free or pure; got {spec.blends!r}.")
+    if spec.interface_width is not None and spec.blends == "pure":
+        raise InputError(
+            f"Only pure resins are allowed, yet they shall change over {spec.interface_width:g} "
+            "mm, which takes blends; allow blends or leave the interface width out."
+        )
+    if spec.interface_width is not None and spec.zones is not None:
+        raise InputError(
+            "One blend a zone and a least interface width contradict each other: blends jump at "
+            "the borders of zones. Leave one of them out."
+        )
+    if spec.zones is not None and len(spec.resins) == 1:
+        raise InputError(
+            f"Zones share a blend, but '{spec.resins[0]}' is the only resin; name at least two."
+        )
+
+
+def _check_links(spec: DesignSpec) -> None:
+    if any(a not in "xyz" or len(a) != 1 for a in (*spec.extruded, *spec.repeated)):
+        raise InputError(
+            "A design is extruded or repeated along x, y or z; got "
+            f"{', '.join((*spec.extruded, *spec.repeated))}."
+        )
+    for axis, count in spec.repeated.items():
+        if count < 2 or count != int(count):
+            raise InputError(f"A design is repeated at least 2 times along {axis}; got {count!r}.")
+
+
+def _check_robust(spec: DesignSpec) -> None:
+    kinds = [type(s) for s in spec.scatter]
+    if len(set(kinds)) != len(kinds):
+        raise InputError("A scatter of one kind is given twice; keep one of materials, of loads.")
+    if spec.robust is None:
+        return
+    pure = spec.blends == "pure" and len(spec.resins) > 1
+    if spec.robust.phases and not pure:
+        raise InputError(
+            "Borders between resins shall move in and out, but blends are free and have no "
+            "borders; allow pure resins only, or leave phases out."
+        )
+    if not spec.void and not pure:
+        raise InputError(
+            "A robust design needs borders that move: of voids, or between pure resins; this one "
+            "has neither."
+        )
+    margin, threshold = spec.robust.margin, spec.projection.threshold
+    if not margin < threshold < 1 - margin:
+        raise InputError(
+            f"The threshold {threshold:g} +- the margin {margin:g} leaves 0 to 1; lower the margin."
+        )
+    if spec.projection.sharpness[-1] == 0:
+        raise InputError("A robust design needs a projection: end at a sharpness above 0.")

@@ -13,6 +13,15 @@ import numpy as np
 from numpy.typing import NDArray
 
 from voxelmat.errors import InputError
+from voxelmat.model.design_rules import (
+    ChosenZones,
+    LoadScatter,
+    MaterialScatter,
+    Robust,
+    Skin,
+    Zones,
+    check_rules,
+)
 from voxelmat.model.goal import AtLeast, AtMost, Maximise, Minimise, plain
 from voxelmat.model.measure import Compliance, TargetDeflection, mask
 from voxelmat.provenance import text_digest
@@ -167,6 +176,29 @@ class DesignSpec:
         mm; one voxel where left out.
     symmetry : tuple of str
         ``"x"``: mirror halves about the middle of the shape's bounding box along x; and so on.
+    blends : str
+        ``"free"``: any blend may be printed. ``"pure"``: blends are driven to pure resins as the
+        projection sharpens, and each voxel ends as the resin it has most of.
+    extruded : tuple of str
+        Axes along which the design does not change.
+    repeated : mapping of str to int
+        How many times the design is repeated along an axis of the shape's bounding box.
+    zones : Zones, ChosenZones or None
+        One blend a zone; solid or empty stays free in each voxel.
+    robust : Robust or None
+        Hold with borders further in and out, which sets least sizes; see
+        `voxelmat.topopt.sizes.minimum_from_profile`.
+    scatter : tuple of MaterialScatter, LoadScatter
+    skin : Skin or None
+    support_angle : float or None
+        Least angle from the horizontal that prints without support, degrees; z is up.
+    interface_width : float or None
+        mm over which the share of any resin takes at least to go from 0 to 1.
+    blend_radius : float or None
+        mm; of the blends' own filter, the filter radius where left out.
+    most_resins : int or None
+        At most this many of the resins are used: the least used one is taken away and the design
+        made again, until few enough are left.
     iterations : int
     levels : int
         Blends in the palette of the result, at most.
@@ -198,6 +230,17 @@ class DesignSpec:
     protected: Bools | None = None
     protected_depth: float | None = None
     symmetry: tuple[str, ...] = ()
+    blends: Literal["free", "pure"] = "free"
+    extruded: tuple[str, ...] = ()
+    repeated: Mapping[str, int] = field(default_factory=dict)
+    zones: Zones | ChosenZones | None = None
+    robust: Robust | None = None
+    scatter: tuple[MaterialScatter | LoadScatter, ...] = ()
+    skin: Skin | None = None
+    support_angle: float | None = None
+    interface_width: float | None = None
+    blend_radius: float | None = None
+    most_resins: int | None = None
     iterations: int = 80
     levels: int = 64
     palette_error: float | None = None
@@ -213,7 +256,9 @@ class DesignSpec:
         ):
             put(self, "objective", self.objective.measure)
         put(self, "limits", tuple(self.limits))
-        put(self, "symmetry", tuple(self.symmetry))
+        for name in ("symmetry", "extruded", "scatter"):
+            put(self, name, tuple(getattr(self, name)))
+        put(self, "repeated", dict(self.repeated))
         fixed = {r: mask(m, f"The region fixed to '{r}'") for r, m in self.fixed_resin.items()}
         put(self, "fixed_resin", fixed)
         for name in ("solid", "empty", "keep", "protected"):
@@ -221,6 +266,7 @@ class DesignSpec:
                 put(self, name, mask(given, f"The region '{name}'"))
         self._check_numbers()
         self._check_choices()
+        check_rules(self)
 
     def _check_numbers(self) -> None:
         _positive(self.filter_radius, "The filter radius", "mm")

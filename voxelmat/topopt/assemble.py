@@ -7,8 +7,8 @@ from numpy.typing import NDArray
 
 from voxelmat.model.blend import EMPTY, Blend
 from voxelmat.model.part import DISTANCE_STEPS, Part
+from voxelmat.topopt.blending import purest
 from voxelmat.topopt.outline import extend, staircase_distance, void_distance, void_fill
-from voxelmat.topopt.projection import half_level
 from voxelmat.topopt.quantise import quantise
 from voxelmat.topopt.unknowns import Fields, Unknowns
 
@@ -46,13 +46,14 @@ def assemble(
     distance, occupancy = _outline(part, unknowns, fields)
     solid = occupancy > 0
     inside = domain & solid
+    # Where only pure resins may be printed, each voxel becomes the resin it has most of.
+    w = purest(fields.w) if unknowns.blending.pure else fields.w.copy()
     rounded = quantise(
-        np.ascontiguousarray(fields.w[:, inside].T),
+        np.ascontiguousarray(w[:, inside].T),
         occupancy[inside].astype(np.float64),
         fields.blend.shear[solid[domain]],
         levels,
     )
-    w = fields.w.copy()
     w[:, inside] = rounded.table[rounded.index].T
     labels, palette = _labels(part, unknowns.palette.names, inside, solid, rounded.table,
                               rounded.index)  # fmt: skip
@@ -64,7 +65,10 @@ def assemble(
         bodies={name: mask & solid.T for name, mask in part.bodies.items()},
         name=f"{part.name} designed",
     )
-    return new, w, rounded.error
+    error = rounded.error
+    if unknowns.blending.pure:
+        error = float(np.abs(w - fields.w)[:, inside].max())
+    return new, w, error
 
 
 def _labels(
@@ -110,8 +114,7 @@ def _outline(
     kept = unknowns.choice.kept_mu > 0
     density = np.where(kept, 1.0, fields.filtered)
     density = extend(density, unknowns.choice.domain | kept, h)
-    level = half_level(unknowns.sharpness, unknowns.threshold)
-    void = void_distance(density, level, h, reach)
+    void = void_distance(density, unknowns.outline_level, h, reach)
     fill = shape_fill * np.where(kept, 1.0, void_fill(void, density, h))
     void[kept] = -reach
     if shape_distance is None:

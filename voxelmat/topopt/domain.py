@@ -3,17 +3,21 @@
 from __future__ import annotations
 
 import difflib
+from collections.abc import Callable
 
 import numpy as np
 from numpy.typing import NDArray
 
 from voxelmat.errors import InputError
 from voxelmat.fea.assemble import moduli
-from voxelmat.model.design_spec import DesignSpec, ResinLimit, TargetDeflection
+from voxelmat.model.design_rules import Zones
+from voxelmat.model.design_spec import DesignSpec, ResinLimit
 from voxelmat.model.part import DISTANCE_STEPS, Part
-from voxelmat.model.region import solid_nodes
+from voxelmat.topopt.links import box_of, groups, spread
+from voxelmat.topopt.measures import asked_nodes
 from voxelmat.topopt.outline import staircase_distance
 from voxelmat.topopt.physics import Case
+from voxelmat.topopt.setting import check_nodes
 from voxelmat.topopt.unknowns import Choice
 
 __all__ = ["build_choice", "resin_numbers", "touching"]
@@ -87,14 +91,24 @@ def build_choice(
     if not domain.any():
         raise InputError("Nothing is left to design: all voxels of the shape are kept as they are.")
     mirrors = tuple(2 - "xyz".index(a) for a in spec.symmetry)
-    box = _box(shape)
+    box = box_of(shape)
     _check_mirror(shape, keep, mirrors, box)
+    group = groups(
+        shape,
+        mirrors,
+        tuple(2 - "xyz".index(a) for a in spec.extruded),
+        {2 - "xyz".index(a): int(n) for a, n in spec.repeated.items()},
+    )
+
+    def alike(mask: Bools) -> Bools:
+        return spread(_mirrored(mask & domain, mirrors, box), domain, group)
+
     resin = np.full(shape.shape, -1, dtype=np.intp)
-    empty = _mirrored(_given(spec.empty, shape) & domain, mirrors, box)
-    solid = _mirrored(_given(spec.solid, shape) & domain, mirrors, box)
+    empty = alike(_given(spec.empty, shape))
+    solid = alike(_given(spec.solid, shape))
     for number, name in enumerate(spec.resins):
         if name in spec.fixed_resin:
-            mask = _mirrored(_given(spec.fixed_resin[name], shape) & domain, mirrors, box)
+            mask = alike(_given(spec.fixed_resin[name], shape))
             clash = mask & (resin >= 0)
             if clash.any():
                 other = spec.resins[int(resin[clash][0])]
@@ -109,9 +123,15 @@ def build_choice(
             "set void to true."
         )
     _refuse(solid & empty, "must be solid (or one resin) and must be empty at once")
+    if spec.skin is not None:
+        layer = alike(_layer(part, spec.skin.thickness, spec.skin.region)) & ~empty
+        if not layer.any():
+            raise InputError("The skin holds no voxel that is designed; choose another region.")
+        resin[layer & (resin < 0)] = spec.resins.index(spec.skin.resin)
+        solid |= layer
     if spec.void:
-        solid |= _protected(part, spec, domain, mirrors, box, empty)
-        solid |= _carrying(spec, cases, domain, mirrors, box, empty, notes)
+        solid |= _protected(part, spec, alike, empty)
+        solid |= _carrying(spec, cases, alike, empty, notes)
     lam, mu = (np.where(keep, m, 0.0) for m in moduli(part))
     choice = Choice(
         domain=domain,
@@ -122,6 +142,8 @@ def build_choice(
         kept_lam=lam,
         kept_mu=mu,
         mirrors=mirrors,
+        group=group,
+        zones=_zones(spec, domain & (resin < 0) & ~empty, mirrors, box),
     )
     return choice, tuple(notes)
 
@@ -133,6 +155,7 @@ def _given(mask: Bools | None, like: Bools) -> Bools:
 def _check_shapes(part: Part, spec: DesignSpec) -> None:
     named = {n: getattr(spec, n) for n in ("solid", "empty", "keep", "protected")}
     named |= {f"fixed_resin '{r}'": m for r, m in spec.fixed_resin.items()}
+    named["skin"] = None if spec.skin is None else spec.skin.region
     for name, mask in named.items():
         if mask is not None and mask.shape != part.grid.shape:
             raise InputError(
@@ -140,34 +163,15 @@ def _check_shapes(part: Part, spec: DesignSpec) -> None:
             )
         if mask is not None and not (mask & part.solid).any():
             raise InputError(f"The region '{name}' holds no voxel of the shape.")
-    if isinstance(spec.objective, TargetDeflection):
-        _check_target(part, spec.objective)
-
-
-def _check_target(part: Part, target: TargetDeflection) -> None:
-    if target.nodes.shape != part.grid.node_shape:
-        raise InputError(
-            f"The target deflection has nodes of shape {target.nodes.shape}; the grid has "
-            f"{part.grid.node_shape}."
-        )
-    off = int((target.nodes & ~solid_nodes(part.solid)).sum())
-    if off:
-        raise InputError(
-            f"{off} of {int(target.nodes.sum())} nodes of the target deflection touch no material; "
-            "choose nodes of the part's surface."
-        )
+    for measure in spec.measures:
+        for what, nodes in asked_nodes(measure):
+            check_nodes(part, nodes, what)
 
 
 def _bought_in(part: Part) -> Bools:
     bought = {m.name for m in part.resins if m.kind == "bought-in"}
     flag = np.array([any(n in bought for n, _ in b.fractions) for b in part.palette])
     return np.ascontiguousarray((flag[part.labels] & part.solid).T)
-
-
-def _box(shape: Bools) -> tuple[slice, ...]:
-    places = np.argwhere(shape)
-    low, high = places.min(0), places.max(0)
-    return tuple(slice(int(a), int(b) + 1) for a, b in zip(low, high, strict=True))
 
 
 def _check_mirror(
@@ -199,26 +203,52 @@ def _refuse(clash: Bools, what: str) -> None:
         )
 
 
-def _protected(
-    part: Part,
-    spec: DesignSpec,
-    domain: Bools,
-    mirrors: tuple[int, ...],
-    box: tuple[slice, ...],
-    empty: Bools,
-) -> Bools:
-    """Voxels of the shape's surface that must stay solid."""
-    if spec.protected is None:
-        return np.zeros_like(domain)
+def _zones(
+    spec: DesignSpec, free: Bools, mirrors: tuple[int, ...], box: tuple[slice, ...]
+) -> NDArray[np.intp] | None:
+    """Zone of each voxel; those whose blend is free must have one."""
+    if not isinstance(spec.zones, Zones):
+        return None
+    numbers = np.ascontiguousarray(spec.zones.numbers.T, dtype=np.intp)
+    if numbers.shape != free.shape:
+        raise InputError(
+            f"The zones have shape {spec.zones.numbers.shape}; the grid has {free.shape[::-1]}."
+        )
+    none = int((free & (numbers == 0)).sum())
+    if none:
+        raise InputError(
+            f"{none} voxels whose blend is free belong to no zone; number all of them from 1."
+        )
+    for axis in mirrors:
+        off = int((numbers[box] != np.flip(numbers[box], axis)).sum()) // 2
+        if off:
+            raise InputError(
+                f"Symmetry in {'zyx'[axis]} is asked for, but the zones differ from their mirror "
+                f"image in {off} voxels."
+            )
+    return numbers
+
+
+def _layer(part: Part, depth: float, region: Bools | None) -> Bools:
+    """Voxels of the shape's surface, `depth` mm deep, in a region ``[i, j, k]``."""
     h = part.grid.spacing
-    depth = max(h) if spec.protected_depth is None else spec.protected_depth
     unit = min(h) / DISTANCE_STEPS
     if part.distance is not None and depth <= 120 * unit:
         distance = part.distance.T * unit
     else:
         distance = staircase_distance(np.ascontiguousarray(part.solid.T), h, depth + max(h))
-    layer = domain & (distance > -depth)
-    mask = _mirrored(layer & np.ascontiguousarray(spec.protected.T), mirrors, box)
+    layer = distance > -depth
+    return layer if region is None else layer & np.ascontiguousarray(region.T)
+
+
+def _protected(
+    part: Part, spec: DesignSpec, alike: Callable[[Bools], Bools], empty: Bools
+) -> Bools:
+    """Voxels of the shape's surface that must stay solid."""
+    if spec.protected is None:
+        return np.zeros_like(empty)
+    depth = spec.protected_depth or max(part.grid.spacing)
+    mask = alike(_layer(part, depth, spec.protected))
     _refuse(mask & empty, "belong to a protected surface and must be empty at once")
     return mask
 
@@ -226,14 +256,12 @@ def _protected(
 def _carrying(
     spec: DesignSpec,
     cases: tuple[Case, ...],
-    domain: Bools,
-    mirrors: tuple[int, ...],
-    box: tuple[slice, ...],
+    alike: Callable[[Bools], Bools],
     empty: Bools,
     notes: list[str],
 ) -> Bools:
     """Voxels that loads, springs and full supports act on, and those whose motion is asked for."""
-    out = np.zeros_like(domain)
+    out = np.zeros_like(empty)
     loaded = np.zeros(cases[0].force.shape[1:], dtype=bool)
     held = np.zeros_like(loaded)
     for case in cases:
@@ -243,14 +271,15 @@ def _carrying(
         # A plane that slides is a symmetry plane as often as not, and is left to the design.
         held |= case.fixed.all(axis=0)
     measured = np.zeros_like(loaded)
-    if isinstance(spec.objective, TargetDeflection):
-        measured = np.ascontiguousarray(spec.objective.nodes.T)
+    for measure in spec.measures:
+        for _, nodes in asked_nodes(measure):
+            measured |= nodes.T
     for nodes, what in (
         (loaded, "that carry a load or a spring"),
         (held, "that are held in all directions"),
         (measured, "whose deflection is asked for"),
     ):
-        mask = _mirrored(touching(nodes) & domain, mirrors, box)
+        mask = alike(touching(nodes))
         _refuse(mask & empty, f"{what[5:]} must be empty at once")
         if mask.any():
             notes.append(f"{int(mask.sum())} voxels {what} stay solid.")

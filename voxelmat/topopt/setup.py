@@ -78,4 +78,8 @@ def unknowns_of(part: Part, spec: DesignSpec, choice: Choice) -> Unknowns:
         spacing=part.grid.spacing,
         radius=spec.filter_radius,
         threshold=spec.projection.threshold,
+        blend_radius=spec.blend_radius,
+        pure=spec.blends == "pure",
+        width=spec.interface_width,
+        overhang=spec.support_angle,
     )
