@@ -43,6 +43,8 @@ class Evaluation:
     cg_iterations : int
     least : float
         No design has an objective below this.
+    size : float or None
+        What the objective is scaled by; its first value where left out.
     """
 
     F: Array
@@ -52,6 +54,7 @@ class Evaluation:
     weight: Array
     cg_iterations: int
     least: float = -math.inf
+    size: float | None = None
 
 
 class Problem(Protocol):
@@ -240,7 +243,7 @@ def _iteration(problem: Problem, optimiser: Stepper, state: State, stopping: Sto
         optimiser.forget_model()
     e = problem.evaluate(state.x, sharpness)
     first = state.first if n else float(e.F[0])
-    scale = state.scale or _FIRST_OBJECTIVE / max(abs(first), 1e-300)
+    scale = state.scale or _FIRST_OBJECTIVE / max(e.size or abs(first), 1e-300)
     F, dF = e.F.copy(), e.dF
     F[0] *= scale
     dF[0] *= scale

@@ -172,8 +172,8 @@ class InterfaceResponse:
             over = np.divide(0.5, share[p], out=np.zeros_like(ra), where=share[p] > 0)
             by_product = -g * use[p] * over
             for a, b in ((m, n), (n, m)):
-                back.w[(a, *high)] += by_product * step[b]
-                back.w[(a, *low)] -= by_product * step[b]
+                back.w[a][high] += by_product * step[b]
+                back.w[a][low] -= by_product * step[b]
             per = g * share[p] / use[p]
             by_t[axis] += per * pull / self.tensile[m, n] ** 2
             by_t += per * slide / self.shear[m, n] ** 2
