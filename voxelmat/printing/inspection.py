@@ -15,7 +15,7 @@ from voxelmat.model.inspection import Dimension, InspectionSheet, Measurement
 from voxelmat.model.part import Part
 from voxelmat.monitor import SILENT, Monitor
 from voxelmat.printing.circle import fitted_circle
-from voxelmat.printing.outlines import field_at, outline_points
+from voxelmat.printing.outlines import outline_at, outline_points
 from voxelmat.printing.probe import Run, line_runs, section_crossings
 from voxelmat.printing.readback import Stack
 from voxelmat.printing.support import outline_field
@@ -257,7 +257,7 @@ def _surfaces(
 ) -> list[Measurement]:
     """95 % of the deviation of each protected surface."""
     found = outline_points(view, monitor=monitor)
-    off = np.abs(field_at(outline_field(part), part.grid, found.points))
+    off = np.abs(outline_at(outline_field(part), part.grid, found.points))
     index = np.floor(
         (found.points - np.array(part.grid.origin)) / np.array(part.grid.spacing)
     ).astype(int)

@@ -20,7 +20,7 @@ from voxelmat.printing.view import PartView, part_view
 from voxelmat.shape.bodies import Body
 from voxelmat.shape.pointdistance import distance_to_bodies
 
-__all__ = ["OutlinePoints", "field_at", "outline_deviation", "outline_points"]
+__all__ = ["OutlinePoints", "field_at", "outline_at", "outline_deviation", "outline_points"]
 
 Array = NDArray[np.float64]
 _LAYERS = 48  # layers that are looked at, evenly spread
@@ -129,6 +129,16 @@ def field_at(field: NDArray[np.int8], grid: VoxelGrid, points: Array) -> Array:
     return np.asarray(value * (min(grid.spacing) / DISTANCE_STEPS))
 
 
+def outline_at(field: NDArray[np.int8], grid: VoxelGrid, points: Array) -> Array:
+    """`field_at`, except that the faces of the grid bound the outline too, mm.
+
+    Nothing is laid beyond the grid, so a part that reaches a face of it ends there, whatever its
+    distance says.
+    """
+    beyond = np.maximum(np.array(grid.origin) - points, points - np.array(grid.upper)).max(axis=1)
+    return np.asarray(np.maximum(field_at(field, grid, points), beyond))
+
+
 def _fitting(
     view: PartView, found: OutlinePoints, field: NDArray[np.int8], grid: VoxelGrid, move: Array
 ) -> NDArray[np.bool_]:
@@ -216,10 +226,10 @@ def outline_deviation(
         raise InputError("The stack has no outline: nothing in it is solid.")
     grid, smallest = part.grid, min(part.grid.spacing)
     field = outline_field(target)
-    at_field = field_at(field, target.grid, found.points)
+    at_field = outline_at(field, target.grid, found.points)
     if bodies:
         own = outline_field(part)
-        bias = field_at(own, grid, found.points) - at_field if printed is not None else 0.0
+        bias = outline_at(own, grid, found.points) - at_field if printed is not None else 0.0
         deviation = distance_to_bodies(bodies, found.points) - bias
     else:
         deviation = at_field

@@ -129,7 +129,8 @@ def _reshaped(part: Part, assembly: Assembly) -> bool:
     """Whether a layout rule or a closed gap gave the outline another course than the meshes'."""
     closed = any(e.kind == "gap" and e.volume_mm3 > 0 for e in assembly.report)
     same = part.distance is not None and np.array_equal(part.distance, assembly.print_distance)
-    return closed or not same or bool(((part.labels > 0) != (assembly.owner > 0)).any())
+    lost = (assembly.print_distance < 0) & (assembly.print_owner > 0) & (part.labels == 0)
+    return closed or not same or bool(lost.any())
 
 
 def bodies_of(design: Design, *, monitor: Monitor = SILENT) -> tuple[Body, ...]:

@@ -17,6 +17,7 @@ from voxelmat.printing.inspection import inspection_findings, measure
 from voxelmat.printing.partcheck import as_sliced
 from voxelmat.printing.preflight import check_stack
 from voxelmat.printing.readback import Stack
+from voxelmat.printing.support import outline_field
 from voxelmat.shape.bodies import Body
 from voxelmat.workflow.build import Built
 
@@ -64,7 +65,7 @@ def meshes_of(built: Built, part: Part) -> tuple[Body, ...]:
         and part.distance is not None
         and base.distance is not None
         and np.array_equal(part.distance, base.distance)
-        and np.array_equal(part.labels > 0, base.labels > 0)
+        and np.array_equal(outline_field(part) < 0, outline_field(base) < 0)
     ):
         return ()
     return built.bodies

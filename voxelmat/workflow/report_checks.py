@@ -75,7 +75,7 @@ def _pictures(run: RunData) -> list[Picture]:
 
 def _outline(seen: OutlineDeviation) -> Table:
     return Table(
-        head=tuple(seen.HEAD),
+        head=tuple(h.replace("um", "µm") for h in seen.HEAD),
         rows=tuple(tuple(row) for row in seen.rows()),
         numbers=(1, 2, 3, 4, 5),
         caption="Above zero the stack is larger than the design. Each resin's row holds the "
