@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import contextlib
 import functools
 import http.server
 import importlib.util
@@ -14,6 +15,7 @@ import subprocess
 import sys
 import threading
 import time
+import urllib.error
 import urllib.request
 from pathlib import Path
 
@@ -81,17 +83,9 @@ def _settings(folder):
     (place / "notification.jupyterlab-settings").write_text(json.dumps(quiet))
 
 
-@pytest.fixture(scope="session")
-def lab(tmp_path_factory):
-    """A JupyterLab of our own: its address and the folder of its notebooks."""
-    if importlib.util.find_spec("jupyterlab") is None:
-        _missing("jupyterlab is not installed")
-    folder = tmp_path_factory.mktemp("lab")
-    notebooks = folder / "notebooks"
-    notebooks.mkdir()
-    _settings(folder)
-    port = _free_port()
-    env = {
+def _own_home(folder):
+    """An environment in which Jupyter finds nothing of the user's."""
+    return {
         **os.environ,
         "HOME": str(folder),
         "JUPYTER_CONFIG_DIR": str(folder / "config"),
@@ -102,26 +96,67 @@ def lab(tmp_path_factory):
         "JUPYTERLAB_WORKSPACES_DIR": str(folder / "workspaces"),
         "PYTHONPATH": f"{ROOT}{os.pathsep}{ROOT / 'tests'}",
     }
+
+
+@contextlib.contextmanager
+def _serving(command, env, log_file, address):
+    """A server in its own process group, with its kernels, until the block ends."""
+    with log_file.open("w") as log:
+        server = subprocess.Popen(command, env=env, stdout=log, stderr=log, start_new_session=True)
+    try:
+        _wait_for(address, server, log_file)
+        yield
+    finally:
+        os.killpg(server.pid, signal.SIGTERM)
+        try:
+            server.wait(20)
+        except subprocess.TimeoutExpired:
+            os.killpg(server.pid, signal.SIGKILL)
+            server.wait(20)
+
+
+@pytest.fixture(scope="session")
+def lab(tmp_path_factory):
+    """A JupyterLab of our own: its address and the folder of its notebooks."""
+    if importlib.util.find_spec("jupyterlab") is None:
+        _missing("jupyterlab is not installed")
+    folder = tmp_path_factory.mktemp("lab")
+    notebooks = folder / "notebooks"
+    notebooks.mkdir()
+    _settings(folder)
+    port = _free_port()
+    env = _own_home(folder)
     command = [
         sys.executable, "-m", "jupyterlab", "--no-browser", "--allow-root", "--ip=127.0.0.1",
         f"--port={port}", "--ServerApp.port_retries=0", "--IdentityProvider.token=t",
         "--LabApp.expose_app_in_browser=True", "--LabApp.extension_manager=readonly",
         f"--ServerApp.root_dir={notebooks}",
     ]  # fmt: skip
-    log_file = folder / "lab.log"
-    with log_file.open("w") as log:
-        server = subprocess.Popen(command, env=env, stdout=log, stderr=log, start_new_session=True)
     base = f"http://127.0.0.1:{port}"
-    try:
-        _wait_for(f"{base}/api/status?token=t", server, log_file)
+    with _serving(command, env, folder / "lab.log", f"{base}/api/status?token=t"):
         yield base, notebooks
-    finally:
-        os.killpg(server.pid, signal.SIGTERM)  # its own group: the server and its kernels
-        try:
-            server.wait(20)
-        except subprocess.TimeoutExpired:
-            os.killpg(server.pid, signal.SIGKILL)
-            server.wait(20)
+
+
+@pytest.fixture
+def voila(tmp_path):
+    """Serves a notebook as `voxelmat lab --app` does; gives the address with its token."""
+    if importlib.util.find_spec("voila") is None:
+        _missing("voila is not installed")
+    from voxelmat.workflow.lab import app_command
+
+    with contextlib.ExitStack() as stack:
+
+        def serve(notebook):
+            port = _free_port()
+            command = [*app_command(notebook, port=port, browser=False), "--Voila.token=t"]
+            base = f"http://127.0.0.1:{port}"
+            log = tmp_path / "voila.log"
+            stack.enter_context(
+                _serving(command, _own_home(tmp_path), log, f"{base}/voila/static/main.js?token=t")
+            )
+            return base, f"{base}/?token=t"
+
+        yield serve
 
 
 def _wait_for(address, server, log_file):
@@ -131,9 +166,11 @@ def _wait_for(address, server, log_file):
         try:
             with urllib.request.urlopen(address, timeout=1):
                 return
+        except urllib.error.HTTPError:
+            return  # it answers
         except OSError:
             time.sleep(0.25)
-    pytest.fail("JupyterLab did not answer within 100 s.\n" + log_file.read_text()[-3000:])
+    pytest.fail("The server did not answer within 100 s.\n" + log_file.read_text()[-3000:])
 
 
 class Notebook:
@@ -182,6 +219,17 @@ class Notebook:
             code,
         ).strip()
 
+    def change_theme(self, name):
+        """JupyterLab's "Light" or "Dark"."""
+        self.page.evaluate(
+            "name => window.jupyterapp.commands.execute('apputils:change-theme', {theme: name})",
+            f"JupyterLab {name}",
+        )
+        light = "true" if name == "Light" else "false"
+        self.page.wait_for_function(
+            "wanted => document.body.dataset.jpThemeLight === wanted", arg=light
+        )
+
     def shut_down(self):
         """End the kernel."""
         self.page.evaluate("window.jupyterapp.shell.currentWidget.sessionContext.shutdown()")
@@ -204,6 +252,8 @@ def notebook(lab, chromium, request):
     yield book
     if os.environ.get("VOXELMAT_SHOTS"):
         page.screenshot(path=Path(os.environ["VOXELMAT_SHOTS"]) / f"{request.node.name}.png")
+    if page.evaluate("document.body.dataset.jpThemeLight === 'false'"):
+        book.change_theme("Light")  # the server keeps it for the next test
     failed = page.get_by_text("javascript error").count()
     book.shut_down()
     context.close()

@@ -169,12 +169,7 @@ def test_materials_loads_fields_and_the_state_after_reopening(notebook, open_ben
     assert notebook.page.evaluate(CLIPPED) == []
     assert notebook.page.evaluate(NAMELESS) == []
     shot(notebook, "space-field")
-    space.after(
-        lambda: notebook.page.evaluate(
-            "window.jupyterapp.commands.execute('apputils:change-theme', "
-            "{theme: 'JupyterLab Dark'})"
-        )
-    )
+    space.after(lambda: notebook.change_theme("Dark"))
     corner = space.pixels()[20:40, -40:-20]
     assert corner.mean() < 60
     shot(notebook, "space-dark")

@@ -149,7 +149,9 @@ def test_running_a_cell_again_leaves_one_live_view(notebook, gl):
     space = notebook.page.get_by_role("img", name=re.compile("3-D view of made-up grip"))
     wait_for(space, 0)
     live = notebook.ask("from voxelmat.workbench import show; print(len(show._live))")
-    scenes = notebook.ask("from voxelmat.workbench import render; print(len(render._open))")
+    scenes = notebook.ask(
+        "from voxelmat.workbench import renderthread; print(len(renderthread._open))"
+    )
     assert (live, scenes) == ("1", "1")
 
 

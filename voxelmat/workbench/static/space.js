@@ -29,7 +29,8 @@ function render({model, el}) {
     const [name, message] = queue.entries().next().value;
     queue.delete(name);
     busy = true; sent = performance.now();
-    model.send(message);
+    try { model.send(message); }
+    catch { queue.clear(); busy = false; return; }     // the kernel is gone; the picture stays
     setTimeout(() => { if (busy && performance.now() - sent > 4900) { busy = false; next(); } }, 5000);
   }
   const tools = toolbar(model, send, () => sliding = performance.now());
@@ -113,7 +114,7 @@ function render({model, el}) {
   let wide = 0;                                        // frames as wide as they are shown
   const fill = () => {
     const width = frame.clientWidth;
-    if (width < 100 || Math.abs(width - wide) < 8) return;
+    if (!el.isConnected || width < 100 || Math.abs(width - wide) < 8) return;
     wide = width;
     send({kind: 'size', width, ratio: window.devicePixelRatio || 1});
   };

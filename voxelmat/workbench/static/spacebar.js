@@ -32,7 +32,7 @@ function toolbar(model, send, slides) {
   const axis = element('select', {title: 'Axis of the cut (key c)'},
     ...['x', 'y', 'z'].map(a => element('option', {value: a, textContent: a})));
   axis.setAttribute('aria-label', 'Axis of the cut');
-  const other = tool('Other side', 'Cut away the other side', 'Cut away the other side (key o)', acts.o);
+  const other = tool('Other side', 'Other side of the cut', 'Cut away the other side (key o)', acts.o);
   const plane = element('output', {className: 'plane'});
   const moved = (along, share) => {
     slides();
