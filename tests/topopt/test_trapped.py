@@ -17,10 +17,11 @@ from voxelmat.model.measure_physics import TrappedSupport
 from voxelmat.model.part import Part
 from voxelmat.model.region import Box, FaceRegion
 from voxelmat.topopt.interpolation import VoidLaw
+from voxelmat.topopt.limits import Bound, Goal
 from voxelmat.topopt.loop import State, Stopping, run
 from voxelmat.topopt.mma import MovingAsymptotes
 from voxelmat.topopt.physics import Case, Physics
-from voxelmat.topopt.problem import Bound, LayoutProblem
+from voxelmat.topopt.problem import LayoutProblem
 from voxelmat.topopt.response_trapped import trapped_response
 from voxelmat.topopt.responses import Amount, ComplianceResponse
 from voxelmat.topopt.unknowns import Choice, Palette, Unknowns
@@ -131,7 +132,7 @@ def beam(limit):
     if limit is not None:
         bounds.append(Bound(response=trapped, limit=limit))
     problem = LayoutProblem(
-        u, physics, ComplianceResponse(), tuple(bounds),
+        u, physics, Goal(response=ComplianceResponse()), tuple(bounds),
         Projection(sharpness=(0.0, 2.0, 4.0, 8.0), every=12),
     )  # fmt: skip
     x = u.start(0.6, np.ones(1))
