@@ -52,17 +52,31 @@ class IterationRecord:
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class ConstraintValue:
-    """A limited quantity: what it is, what was reached, what was allowed."""
+    """A limited quantity: what it is, what was reached, what was allowed.
+
+    Attributes
+    ----------
+    name : str
+    value, limit : float
+    unit : str
+    at_least : bool
+        Whether the limit is a lower one.
+    scale : float or None
+        What a violation is measured by; the size of the limit where left out.
+    """
 
     name: str
     value: float
     limit: float
     unit: str
+    at_least: bool = False
+    scale: float | None = None
 
     @property
     def met(self) -> bool:
-        """Within a thousandth of the limit."""
-        return self.value <= self.limit * (1 + 1e-3)
+        """Within a thousandth of the scale."""
+        over = self.limit - self.value if self.at_least else self.value - self.limit
+        return over <= 1e-3 * (abs(self.limit) if self.scale is None else self.scale) * (1 + 1e-9)
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)

@@ -20,7 +20,7 @@ from voxelmat.topopt.loop import Outcome
 from voxelmat.topopt.made import fields_of, values_of_fields
 from voxelmat.topopt.prices import prices_of
 from voxelmat.topopt.problem import LayoutProblem
-from voxelmat.topopt.responses import TargetResponse
+from voxelmat.topopt.responses import Response, TargetResponse
 from voxelmat.topopt.unknowns import Fields
 
 __all__ = ["finished"]
@@ -70,7 +70,12 @@ def finished(
         palette_error=made.error,
         constraints=tuple(
             ConstraintValue(
-                name=b.response.name, value=float(v), limit=b.limit, unit=b.response.unit
+                name=b.response.name,
+                value=float(v),
+                limit=b.limit,
+                unit=b.response.unit,
+                at_least=b.at_least,
+                scale=b.scale,
             )
             for b, v in zip(problem.bounds, values[1:], strict=True)
         ),
@@ -85,8 +90,13 @@ def finished(
 
 def _stages(problem: LayoutProblem, values: Array, of_part: Array) -> tuple[StagedValue, ...]:
     """The objective and every limit, as optimised and as made into a part."""
-    asked = [(problem.objective, "least", None)]
-    asked += [(b.response, "at most", b.limit) for b in problem.bounds]
+    asked: list[tuple[Response, str, float | None]] = [
+        (problem.objective, "greatest" if problem.goal.maximise else "least", None),
+        *(
+            (b.response, "at least" if b.at_least else "at most", b.limit)
+            for b in problem.bounds
+        ),
+    ]  # fmt: skip
     return tuple(
         StagedValue(
             name=response.name,
@@ -143,7 +153,7 @@ def _cost(problem: LayoutProblem, values: Array, rounded: Array, relative: bool)
     size = 1.0 if relative else max(abs(values[0]), 1e-300)
     worst = abs(rounded[0] - values[0]) / size
     for bound, was, now in zip(problem.bounds, values[1:], rounded[1:], strict=True):
-        worst = max(worst, (now - max(was, bound.limit)) / abs(bound.limit))
+        worst = max(worst, bound.excess(now) - max(bound.excess(was), 0.0))
     return float(worst)
 
 

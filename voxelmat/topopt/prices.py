@@ -83,11 +83,11 @@ def prices_of(problem: LayoutProblem, x: Array, values: Array) -> tuple[Price, .
             Price(
                 name=bound.response.name,
                 unit=bound.response.unit,
-                sense="at most",
+                sense="at least" if bound.at_least else "at most",
                 limit=bound.limit,
                 objective=problem.objective.name,
                 objective_value=float(values[0]),
-                slope=float(-multiplier * told / bound.limit),
+                slope=float(-multiplier * told * bound.slope * problem.goal.sign),
             )
         )
     return tuple(sorted(prices, key=lambda p: -abs(p.slope * p.limit)))
