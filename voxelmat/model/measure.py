@@ -256,8 +256,8 @@ class _Strength:
 class Stress(_Strength):
     """Largest von Mises stress over the resin's own tensile strength; 1 is all of it.
 
-    A blend's strength is taken as the geometric mean of its resins' (an assumption: no record
-    holds the strength of a blend). In half-empty voxels the stress of the solid counts by the
+    A blend's strength is taken as the harmonic mean of its resins', which is nearer to the
+    weaker (an assumption: no record holds the strength of a blend). In half-empty voxels the stress of the solid counts by the
     root of the density, so that material can vanish (relaxation).
 
     Attributes
@@ -280,7 +280,7 @@ class Stress(_Strength):
 class Stretch(_Strength):
     """Largest equivalent strain over the resin's own elongation at break; 1 is all of it.
 
-    A blend's elongation is taken as the geometric mean of its resins'. Small strains: beyond
+    A blend's elongation is taken as the harmonic mean of its resins'. Small strains: beyond
     some 10 % a check with large strains is due. Attributes as for `Stress`.
     """
 
