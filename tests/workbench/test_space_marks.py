@@ -149,6 +149,8 @@ def test_a_map_has_its_longest_arrow_where_it_presses_most(made_up):
     sizes = [np.linalg.norm(np.array(a.tip) - np.array(a.tail)) for a in marks.arrows]
     values = load.at(np.array([a.place for a in marks.arrows]))
     assert np.argmax(sizes) == np.argmax(values)
+    every = load.at(load.region.faces(part).centre)
+    assert values.max() == every.max()
     assert all(a.tail[2] > a.tip[2] for a in marks.arrows)  # from above
 
 
@@ -169,6 +171,9 @@ def test_supports_are_striped_and_a_region_is_tinted(grip):
     rgb = tinted(solid, surface, pointed.tints)
     assert ((rgb != surface.rgb).any(axis=1) == on).all()
     assert pointed.notes == ("region 'shaft end' in purple",)
+    (mark,) = pointed.lines  # a ring with its name, for where something lies before it
+    assert mark.text == "shaft end"
+    assert np.linalg.norm(held.faces(grip).centre - np.array(mark.places[0]), axis=1).min() < 1e-9
 
 
 def test_motions_plates_and_springs_have_their_marks(grip):

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from typing import Any
 
@@ -10,10 +11,11 @@ import numpy as np
 from numpy.typing import NDArray
 from PIL import Image, ImageDraw, ImageFont
 
-__all__ = ["Line", "write_on"]
+__all__ = ["Line", "with_legend", "write_on"]
 
 _FONT = 13  # pixels on the screen
-_RULER = (204, 0, 102)
+_SWATCH = 11  # pixels on the screen
+_RULER = "#cc0066"
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -22,6 +24,7 @@ class Line:
 
     places: tuple[tuple[float, ...], ...]
     text: str = ""
+    colour: str = _RULER
 
 
 @dataclass(frozen=True, slots=True)
@@ -56,7 +59,7 @@ def write_on(
     focus: NDArray[np.float64],
     half: float,
     notes: list[str],
-    ruler: Line | None,
+    lines: Sequence[Line],
     *,
     dark: bool = False,
     scale: float = 1.0,
@@ -74,7 +77,7 @@ def write_on(
         Half the height of the picture, mm.
     notes : list of str
         From the top left, each begins a line.
-    ruler : Line or None
+    lines : list of Line
     dark : bool
         Whether the background is.
     scale : float
@@ -90,8 +93,8 @@ def write_on(
         for words in _wrapped(pen, note, image.width - 16 * scale):
             pen.text((8 * scale, top), words, "la")
             top += 1.25 * _FONT * scale
-    if ruler is not None:
-        _ruler(pen, ruler, axes, focus, image.height / (2.0 * half), image.size)
+    for line in lines:
+        _line(pen, line, axes, focus, image.height / (2.0 * half), image.size)
 
 
 def _wrapped(pen: _Pen, text: str, width: float) -> list[str]:
@@ -124,24 +127,75 @@ def _bar(pen: _Pen, size: tuple[int, int], half: float) -> None:
     pen.text((0.5 * (left + right), y - 4 * pen.scale), f"{bar:g} mm", "mb")
 
 
-def _ruler(
+def _line(
     pen: _Pen,
-    ruler: Line,
+    line: Line,
     axes: NDArray[np.float64],
     focus: NDArray[np.float64],
     pixels: float,
     size: tuple[int, int],
 ) -> None:
-    """Marked places; `pixels` of the picture are 1 mm."""
-    flat = (np.array(ruler.places) - focus) @ axes[:2].T
+    """Marked places, over whatever lies before them; `pixels` of the picture are 1 mm."""
+    flat = (np.array(line.places) - focus) @ axes[:2].T
     points = [(0.5 * size[0] + pixels * u, 0.5 * size[1] - pixels * v) for u, v in flat]
     if len(points) > 1:
-        pen.line((*points[0], *points[1]), 2, _RULER)
+        pen.line((*points[0], *points[1]), 2, line.colour)
     r = 4 * pen.scale
     for x, y in points:
         width = max(1, round(1.5 * pen.scale))
-        pen.draw.ellipse((x - r, y - r, x + r, y + r), outline=_RULER, width=width)
-        pen.draw.ellipse((x - 1, y - 1, x + 1, y + 1), fill=_RULER)
-    if ruler.text and len(points) > 1:
-        (x0, y0), (x1, y1) = points[:2]
-        pen.text((0.5 * (x0 + x1), 0.5 * (y0 + y1) - 6 * pen.scale), ruler.text, "mb")
+        pen.draw.ellipse((x - r, y - r, x + r, y + r), outline=line.colour, width=width)
+        pen.draw.ellipse((x - 1, y - 1, x + 1, y + 1), fill=line.colour)
+    if line.text:
+        x, y = np.mean(points, axis=0)
+        pen.text((float(x), float(y) - 6 * pen.scale), line.text, "mb")
+
+
+def with_legend(
+    image: Image.Image, legend: Mapping[str, Any], *, dark: bool = False, scale: float = 1.0
+) -> Image.Image:
+    """The picture over a strip that says what its colours mean.
+
+    Parameters
+    ----------
+    image : Image
+    legend : mapping
+        ``ramp`` with colours, low and high, or ``items`` with colour and text each.
+    dark : bool
+    scale : float
+        Pixels of the picture to one on the screen.
+    """
+    font = ImageFont.load_default(_FONT * scale)
+    ink, paper = ("white", "#1c1c1c") if dark else ("black", "white")
+    line, gap = round(1.7 * _FONT * scale), round(8 * scale)
+    pieces = list(_pieces(legend))
+    measure = ImageDraw.Draw(image)
+    places, x, row = [], gap, 0
+    for colours, text in pieces:
+        wide = round(len(colours) * _SWATCH * scale) + round(measure.textlength(text, font=font))
+        if x > gap and x + wide > image.width:
+            x, row = gap, row + 1
+        places.append((x, row))
+        x += wide + 2 * gap
+    high = image.height + line * (row + 1) if pieces else image.height
+    out = Image.new("RGB", (image.width, high), paper)
+    out.paste(image)
+    draw = ImageDraw.Draw(out)
+    for (colours, text), (x, row) in zip(pieces, places, strict=True):
+        y = image.height + row * line + line // 2
+        wide = round(_SWATCH * scale)
+        for n, colour in enumerate(colours):
+            box = (x + n * wide, y - wide // 2, x + (n + 1) * wide - 1, y + wide // 2)
+            draw.rectangle(box, fill=colour)
+        draw.text((x + len(colours) * wide + gap // 2, y), text, fill=ink, font=font, anchor="lm")
+    return out
+
+
+def _pieces(legend: Mapping[str, Any]) -> Iterator[tuple[list[str], str]]:
+    """Colours in a row, and the words after them."""
+    ramp = legend.get("ramp")
+    if ramp:
+        yield [], str(ramp["low"])
+        yield list(ramp["colours"]), str(ramp["high"])
+    for item in legend.get("items", ()):
+        blank = item["colour"] == "transparent"
+        yield ([] if blank else [item["colour"]]), str(item["text"])

@@ -23,6 +23,7 @@ from voxelmat.model.plate import Plate
 from voxelmat.model.region import Region, parse_side
 from voxelmat.model.surface import Faces, visible_from
 from voxelmat.units import quantity
+from voxelmat.workbench.captions import Line
 from voxelmat.workbench.solid import Solid, Surface, face_keys
 
 __all__ = ["Arrow", "Marks", "Tint", "marks_of", "tinted"]
@@ -61,12 +62,15 @@ class Marks:
     ----------
     arrows : tuple of Arrow
     tints : tuple of Tint
+    lines : tuple of Line
+        Places that are seen even where something lies before them.
     notes : tuple of str
         What the arrows and stripes mean, with the scale of each kind of arrow.
     """
 
     arrows: tuple[Arrow, ...] = ()
     tints: tuple[Tint, ...] = ()
+    lines: tuple[Line, ...] = ()
     notes: tuple[str, ...] = ()
 
 
@@ -118,10 +122,15 @@ def marks_of(solid: Solid, case: LoadCase | None = None, pointed: Region | None 
         made, words = _arrows(solid, push)
         arrows += made
         notes += words
+    lines = []
     if pointed is not None:
-        tints.append(_tint(solid, pointed.faces(solid.part), _POINTED, striped=False))
+        faces = pointed.faces(solid.part)
+        tints.append(_tint(solid, faces, _POINTED, striped=False))
+        if len(faces):
+            places = solid.moved(faces.centre[_spread(faces, 1)])
+            lines.append(Line(places=(_triple(places[0]),), text=pointed.name, colour=_POINTED))
         notes.append(f"region '{pointed.name}' in purple")
-    return Marks(arrows=tuple(arrows), tints=tuple(tints), notes=tuple(notes))
+    return Marks(arrows=tuple(arrows), tints=tuple(tints), lines=tuple(lines), notes=tuple(notes))
 
 
 def _stripe_words(case: LoadCase) -> list[str]:
@@ -215,7 +224,10 @@ def _map(solid: Solid, load: PressureMap, push: _Push) -> None:
     faces = faces.select(visible_from(solid.part, faces, axis, side))
     values = load.at(faces.centre)
     pressed = np.flatnonzero(values > 0.02 * values.max(initial=0.0))
+    if not len(pressed):
+        return
     some = pressed[_spread(faces.select(pressed), 2 * _ARROWS)]
+    some = np.union1d(some, values.argmax())  # the longest arrow is that of the largest value
     normal = faces.normal[some]
     if load.acts == "along":
         normal = np.zeros((len(some), 3))

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import io
 import os
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from functools import cache
 from typing import Any
 
@@ -12,7 +12,7 @@ import numpy as np
 from numpy.typing import NDArray
 from PIL import Image
 
-from voxelmat.workbench.captions import Line, write_on
+from voxelmat.workbench.captions import Line, with_legend, write_on
 from voxelmat.workbench.eye import Eye
 from voxelmat.workbench.glprobe import probe_gl
 from voxelmat.workbench.marks import Arrow
@@ -48,7 +48,7 @@ class Scene:
     eye : Eye
     notes : list of str
         Written into every picture.
-    ruler : Line or None
+    lines : list of Line
         Places that are marked, and a measured line.
     dark : bool
         Whether the background is.
@@ -67,7 +67,7 @@ class Scene:
     ) -> None:
         self.eye = Eye()
         self.notes: list[str] = []
-        self.ruler: Line | None = None
+        self.lines: list[Line] = []
         self.dark = False
         self.size = size
         self.scale = 1.0
@@ -163,8 +163,6 @@ class Scene:
                 rgb=True,
                 ambient=0.35,
                 opacity=opacity,
-                # Of a ghost only the near side: two layers over one another hide too much.
-                culling="back" if name == "ghost" else None,
                 show_scalar_bar=False,
             )
             actor.visibility = False
@@ -207,7 +205,7 @@ class Scene:
             self.focus,
             self.half,
             self.notes,
-            self.ruler,
+            self.lines,
             dark=self.dark,
             scale=scale * self.scale,
         )
@@ -232,10 +230,12 @@ class Scene:
         on_render_thread(self._image).save(store, "JPEG", quality=quality)
         return store.getvalue()
 
-    def png(self, scale: int = 2) -> bytes:
-        """A picture as PNG bytes, `scale` times as large."""
+    def png(self, legend: Mapping[str, Any], scale: int = 2) -> bytes:
+        """A picture as PNG bytes, `scale` times as large, over what its colours mean."""
         store = io.BytesIO()
-        on_render_thread(self._image, scale).save(store, "PNG", compress_level=4)
+        image = on_render_thread(self._image, scale)
+        made = with_legend(image, legend, dark=self.dark, scale=scale * self.scale)
+        made.save(store, "PNG", compress_level=4)
         return store.getvalue()
 
     @property

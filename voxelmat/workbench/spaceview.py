@@ -15,6 +15,7 @@ import traitlets
 from voxelmat.errors import InputError
 from voxelmat.io.atomic import write_bytes
 from voxelmat.units import number
+from voxelmat.workbench.captions import Line
 from voxelmat.workbench.eye import Eye
 from voxelmat.workbench.look import Look
 from voxelmat.workbench.marks import Marks, tinted
@@ -185,7 +186,7 @@ class SpaceView(anywidget.AnyWidget):
         first = "; ".join(t for t in (self._shown.note, *self._surface.words) if t)
         second = "; ".join(self._marks.notes)
         self._scene.notes = [t for t in (first, second, *self._more_notes) if t]
-        self._scene.ruler = self._pointer.ruler(self._shown)
+        self._scene.lines = self._lines()
         self._push(quality)
 
     def _push(self, quality: int = _STILL) -> None:
@@ -262,7 +263,7 @@ class SpaceView(anywidget.AnyWidget):
                 "fields": self._shown.values_at(hit.voxel),
             }
             self._pointer.add(hit)
-            self._scene.ruler = self._pointer.ruler(self._shown)
+            self._scene.lines = self._lines()
             self.said = self._pointer.words(self._shown, facts)
             self._push()
         if self.picked is not None:
@@ -274,7 +275,7 @@ class SpaceView(anywidget.AnyWidget):
         with self._lock:
             self._pointer.measuring, self._pointer.hits = bool(on), []
             self.said = "Click two places on the part." if on else ""
-            self._scene.ruler = None
+            self._scene.lines = self._lines()
             self._push()
 
     @property
@@ -282,15 +283,19 @@ class SpaceView(anywidget.AnyWidget):
         """Distance of the two places that were measured, mm, and its part along x, y, z."""
         return self._pointer.distance
 
+    def _lines(self) -> list[Line]:
+        ruler = self._pointer.ruler(self._shown)
+        return [*self._marks.lines, *([ruler] if ruler else [])]
+
     # ------------------------------------------------------------------ pictures
     def jpeg(self) -> bytes:
         """The present picture."""
         return bytes(self.frame)
 
     def png(self) -> bytes:
-        """The present picture, twice as large."""
+        """The present picture, twice as large, over the legend of its colours."""
         with self._lock:
-            return self._scene.png()
+            return self._scene.png(self.legend)
 
     def screenshot(self, path: str | Path) -> Path:
         """Write the present picture as PNG, twice as large.
