@@ -41,6 +41,10 @@ _NEVER_NEGATIVE = (
 #: Mean change of a design above which its solves may be less close, and by what factor at most.
 _LOOSEN_FROM, _LOOSEST = 5e-3, 10.0
 _OF_MISS = 3e-3
+#: Responses whose error is that of the solver squared, or that have a rule of their own; others
+#: are solved closer by this factor.
+_FORGIVING = (ComplianceResponse, WorstComplianceResponse, TargetResponse, Amount)
+_CLOSER = 0.1
 
 
 class LayoutProblem:
@@ -58,7 +62,9 @@ class LayoutProblem:
         self.goal, self.bounds, self._projection = goal, bounds, projection
         self.objective = goal.response
         self.low, self.high = np.zeros(unknowns.n), np.ones(unknowns.n)
-        self._usual = physics.tolerance
+        asked = (goal.response, *(b.response for b in bounds))
+        close = not all(isinstance(r, _FORGIVING) for r in asked)
+        self._usual = physics.tolerance * (_CLOSER if close else 1.0)
         self._seen = False
 
     def begin(self, iteration: int, history: tuple[IterationRecord, ...]) -> bool:
