@@ -224,6 +224,31 @@ class Pressed:
             residual=solution.residual,
         )
 
+    def adjoint(self, found: Contact, weight: Double, x0: Double | None = None) -> Double:
+        """Field v with which d(weight . push) = v . dK u at constant depth and the same contact.
+
+        Parameters
+        ----------
+        found : Contact
+        weight : ndarray of float64, shape (m,)
+        x0 : ndarray, optional
+            First guess.
+
+        Returns
+        -------
+        ndarray of float64, shape (3, nz+1, ny+1, nx+1)
+            What the part does when the touching nodes move by `weight` along the push.
+        """
+        unit = self._with(np.zeros_like(self._given), found.active, weight)
+        system = self._for(found.active)
+        return system.solve(np.zeros_like(self._force), x0=x0, prescribed=unit, tol=self._tol).u
+
+    def stiffness(self, found: Contact, u: Double) -> Double:
+        """Forces along the push, (m,), on the nodes that touch, for a displacement u, N."""
+        s = self.surface
+        pull = self._for(found.active).apply(u)[s.axis].ravel()[s.flat]
+        return np.where(found.active, s.sign * pull, 0.0)
+
     def _slope(
         self, system: LinearSystem, active: Bools, start: Contact | None
     ) -> tuple[Double, float, int]:

@@ -21,14 +21,28 @@ from voxelmat.model.loadcase import LoadCase, Support
 from voxelmat.model.part import Part
 from voxelmat.monitor import SILENT, Monitor
 
-__all__ = ["contact", "press"]
+__all__ = ["contact", "for_force", "press"]
 
 # Force control ends this near the force; it takes a few steps, so many that more means a fault.
 _NEAR, _STEPS = 1e-5, 40
 
 
-def _for_force(pressed: Pressed, wanted: float, first: float) -> Contact:
-    """Find the depth with the given force: force rises with depth, so the place is bracketed."""
+def for_force(pressed: Pressed, wanted: float, first: float) -> Contact:
+    """Find the depth with the given force: force rises with depth, so the place is bracketed.
+
+    Parameters
+    ----------
+    pressed : Pressed
+    wanted : float
+        N, > 0; met to 1e-5 of it.
+    first : float
+        Depth to begin with, mm, > 0.
+
+    Raises
+    ------
+    ConvergenceError
+        No depth has the force.
+    """
     low, high = 0.0, np.inf
     depth, found = first, None
     misses: list[float] = []
@@ -116,7 +130,7 @@ def contact(
     if depth_mm is not None:
         return job.answer(job.pressed.at(depth_mm))
     first = 0.1 * min(part.grid.spacing)
-    return job.answer(_for_force(job.pressed, float(aim), first))
+    return job.answer(for_force(job.pressed, float(aim), first))
 
 
 def press(

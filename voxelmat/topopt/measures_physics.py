@@ -8,6 +8,7 @@ from typing import Any
 from voxelmat.model.measure_physics import (
     CellProperty,
     CellTarget,
+    ContactPeak,
     Frequency,
     MeanTemperature,
     PeakTemperature,
@@ -15,6 +16,7 @@ from voxelmat.model.measure_physics import (
     TrappedSupport,
 )
 from voxelmat.topopt.response_cell import cell_response
+from voxelmat.topopt.response_contact import contact_response
 from voxelmat.topopt.response_frequency import frequency_response
 from voxelmat.topopt.response_temperature import temperature_response
 from voxelmat.topopt.response_trapped import trapped_response
@@ -36,6 +38,7 @@ PHYSICS: dict[type, Callable[[Any, Setting], Response]] = {
     Frequency: lambda m, s: frequency_response(m, s.part, s.unknowns, s.key),
     CellProperty: _cell,
     CellTarget: _cell,
+    ContactPeak: lambda m, s: contact_response(m, s.part, s.unknowns, s.key),
     PeakTemperature: _temperature,
     MeanTemperature: _temperature,
     ThermalCompliance: _temperature,
