@@ -9,6 +9,7 @@ import numpy as np
 
 from voxelmat.errors import InputError
 from voxelmat.io.mesh import read_mesh
+from voxelmat.model.blend import Blend
 from voxelmat.printing.place import rotation_matrix
 from voxelmat.units import LENGTH_MM, number
 from voxelmat.workbench import controls as c
@@ -253,7 +254,7 @@ class ShapeSection(Section):
         shown.append(c.file_drop("file", "Mesh (STL, OBJ, PLY, 3MF)", ",".join(MESHES)))
         if not bodies:
             return shown
-        rows = [[b["name"], b["mesh"], b.get("resin") or b.get("unit", "")] for b in bodies]
+        rows = [[b["name"], b["mesh"], _made_of(b)] for b in bodies]
         shown.append(
             c.table(["body", "file", "of"], rows, caption="Bodies", name="body",
                     actions=["Remove"])
@@ -385,6 +386,12 @@ def _start_edge(points: np.ndarray[Any, Any]) -> float:
     """A voxel edge of two digits with which the box holds about `_START_VOXELS`."""
     edges = np.maximum(np.ptp(points, axis=0), 1e-3)
     return float(f"{(float(np.prod(edges)) / _START_VOXELS) ** (1 / 3):.2g}")
+
+
+def _made_of(body: dict[str, Any]) -> str:
+    if "blend" in body:
+        return str(Blend.of(body["blend"]))
+    return str(body.get("resin") or body.get("bought_in", {}).get("name", "bought in"))
 
 
 def _free(name: str, taken: list[str]) -> str:

@@ -1,7 +1,8 @@
-"""Starts JupyterLab on a working notebook of a design: on this machine alone, with a token."""
+"""Serves a working notebook of a design, in JupyterLab or as an app: on this machine, by token."""
 
 from __future__ import annotations
 
+import importlib.util
 import json
 import os
 import subprocess
@@ -13,7 +14,9 @@ from voxelmat.errors import InputError, ResourceError
 from voxelmat.io.atomic import write_text
 from voxelmat.io.schema import read_toml
 
-__all__ = ["lab_command", "serve_lab", "working_notebook"]
+__all__ = ["app_command", "app_environment", "lab_command", "serve_lab", "working_notebook"]
+
+_TEMPLATES = Path(__file__).with_name("templates") / "app"
 
 _FIRST = """# Change this first: the design that is opened. A new name starts a new design.
 DESIGN = {name!r}"""
@@ -85,6 +88,9 @@ def lab_command(notebook: Path, *, port: int | None = None, browser: bool = True
         "--ServerApp.ip=127.0.0.1",
         f"--ServerApp.root_dir={notebook.absolute().parent}",
         "--LabApp.extension_manager=readonly",
+        # Nothing is asked of the network: no news, no look for newer versions.
+        "--LabApp.news_url=None",
+        "--LabApp.check_for_updates_class=jupyterlab.NeverCheckForUpdate",
     ]  # fmt: skip
     if port is not None:
         command += [f"--ServerApp.port={port}", "--ServerApp.port_retries=0"]
@@ -95,8 +101,50 @@ def lab_command(notebook: Path, *, port: int | None = None, browser: bool = True
     return command
 
 
-def serve_lab(notebook: Path, *, port: int | None = None, browser: bool = True) -> int:
-    """Run JupyterLab until it is closed; its exit code.
+def app_command(notebook: Path, *, port: int | None = None, browser: bool = True) -> list[str]:
+    """The command line that serves one notebook without its code, by Voila, in the same way.
+
+    It takes the variables of `app_environment`.
+
+    Raises
+    ------
+    InputError
+        If Voila is not installed.
+    """
+    if importlib.util.find_spec("voila") is None:
+        raise InputError(
+            "The app is served by Voila, which is not installed: pip install 'voxelmat[app]'. "
+            "Without --app the design opens in JupyterLab.",
+            key="app",
+        )
+    command = [
+        sys.executable, "-m", "voila", str(notebook.absolute()),
+        "--Voila.ip=127.0.0.1",
+        "--Voila.auto_token=True",
+        "--VoilaConfiguration.template=voxelmat",  # fetches nothing from elsewhere
+    ]  # fmt: skip
+    if port is not None:
+        command += [f"--Voila.port={port}", "--Voila.port_retries=0"]
+    if not browser:
+        command.append("--no-browser")
+    return command
+
+
+def app_environment() -> dict[str, str]:
+    """What `app_command` needs in its environment: where the app's page lies."""
+    before = os.environ.get("JUPYTER_PATH")
+    paths = [str(_TEMPLATES), *([before] if before else [])]
+    return {"JUPYTER_PATH": os.pathsep.join(paths)}
+
+
+def serve_lab(command: list[str], environment: dict[str, str] | None = None) -> int:
+    """Run JupyterLab or Voila until it is closed; its exit code.
+
+    Parameters
+    ----------
+    command : list of str
+    environment : dict of str, optional
+        Variables besides those of this process.
 
     Raises
     ------
@@ -104,9 +152,9 @@ def serve_lab(notebook: Path, *, port: int | None = None, browser: bool = True) 
         If it cannot be started.
     """
     try:
-        process = subprocess.Popen(lab_command(notebook, port=port, browser=browser))
+        process = subprocess.Popen(command, env={**os.environ, **(environment or {})})
     except OSError as error:
-        raise ResourceError(f"JupyterLab could not be started: {error}.") from None
+        raise ResourceError(f"{command[2]} could not be started: {error}.") from None
     while True:
         try:
             return process.wait()
