@@ -92,7 +92,23 @@ def parser() -> argparse.ArgumentParser:
         action="store_true",
         help="also write each result as a VTK image file (.vti) into the folder",
     )
-    design(command("optimise", "choose blends and where material goes"))
+    sub = command("optimise", "choose blends and where material goes")
+    design(sub)
+    sub.add_argument(
+        "--animate",
+        type=Path,
+        metavar="FILE.gif",
+        help="draw how the design formed, as a moving picture (.gif or .webp)",
+    )
+    sub = command("tradeoff", "optimise under a sweep of one or two limits: a front of designs")
+    design(sub, "tradeoff")
+    sub.add_argument(
+        "--limit",
+        action="append",
+        required=True,
+        metavar="NAME=V,V,..",
+        help="a limit of [optimise] by its name or number, and its values (at most twice)",
+    )
     sub = command("stack", "write the bitmap stacks, read them back and check them")
     design(sub)
     writes(sub)
@@ -168,6 +184,7 @@ def _add_lab(sub: argparse.ArgumentParser) -> None:
     sub.add_argument(
         "design", type=Path, metavar="DESIGN.toml", help="one that is not there yet is begun"
     )
+    sub.add_argument("--app", action="store_true", help="without code, by Voila: the [app] extra")
     sub.add_argument("--port", type=int, metavar="N", help="port on the loopback address")
     sub.add_argument("--no-browser", action="store_true", help="print the address, open nothing")
     sub.add_argument(

@@ -116,7 +116,7 @@ def slices(bench):
 
 
 def brush(bench):
-    """A stroke, from the browser's message to the rule in the design and the new slice.
+    """A stroke beside the core, from the message of the browser to the rule and the new slice.
 
     The browser draws it at once, before any message; tests/browser holds that at 50 ms.
     """
@@ -126,7 +126,7 @@ def brush(bench):
 
     def stroke(n):
         u = 0.35 + 0.002 * n
-        points = [[u, 0.5], [u + 0.1, 0.5]]
+        points = [[u, 0.15], [u + 0.1, 0.15]]
         view._told(
             None, {"kind": "stroke", "axis": view.axis, "index": middle, "points": points}, []
         )

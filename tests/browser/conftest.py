@@ -142,7 +142,7 @@ def voila(tmp_path):
     """Serves a notebook as `voxelmat lab --app` does; gives the address with its token."""
     if importlib.util.find_spec("voila") is None:
         _missing("voila is not installed")
-    from voxelmat.workflow.lab import app_command
+    from voxelmat.workflow.lab import app_command, app_environment
 
     with contextlib.ExitStack() as stack:
 
@@ -152,7 +152,12 @@ def voila(tmp_path):
             base = f"http://127.0.0.1:{port}"
             log = tmp_path / "voila.log"
             stack.enter_context(
-                _serving(command, _own_home(tmp_path), log, f"{base}/voila/static/main.js?token=t")
+                _serving(
+                    command,
+                    {**_own_home(tmp_path), **app_environment()},
+                    log,
+                    f"{base}/voila/static/main.js?token=t",
+                )
             )
             return base, f"{base}/?token=t"
 

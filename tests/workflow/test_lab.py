@@ -7,7 +7,7 @@ import pytest
 
 from voxelmat.cli import main
 from voxelmat.errors import InputError
-from voxelmat.workflow.lab import lab_command, working_notebook
+from voxelmat.workflow.lab import app_command, lab_command, working_notebook
 
 
 def test_the_notebook_is_valid_and_never_replaced(design):
@@ -40,3 +40,16 @@ def test_a_new_design_may_be_begun_and_bad_ones_are_named(tmp_path, capsys):
     (tmp_path / "bad.toml").write_text("= no")
     assert main(["lab", str(tmp_path / "bad.toml"), "--dry-run"]) == 3
     assert "bad.toml" in capsys.readouterr().err
+
+
+def test_the_app_is_served_in_the_same_way_or_says_what_to_install(design, capsys, monkeypatch):
+    args = ["lab", str(design), "--app", "--dry-run", "--no-browser", "--port", "8899", "--json"]
+    assert main(args) == 0
+    command = json.loads(capsys.readouterr().out)["command"]
+    assert command[2] == "voila"
+    assert "--Voila.ip=127.0.0.1" in command
+    assert "--Voila.auto_token=True" in command
+    assert "--Voila.port=8899" in command
+    monkeypatch.setattr("importlib.util.find_spec", lambda name: None)
+    with pytest.raises(InputError, match=r"pip install 'voxelmat\[app\]'"):
+        app_command(design.with_suffix(".ipynb"))

@@ -7,21 +7,36 @@ from typing import Any
 
 from voxelmat.errors import ResourceError
 from voxelmat.monitor import Monitor
-from voxelmat.workflow.lab import lab_command, serve_lab, working_notebook
+from voxelmat.workflow.lab import (
+    app_command,
+    app_environment,
+    lab_command,
+    serve_lab,
+    working_notebook,
+)
 
 __all__ = ["lab"]
 
 
 def lab(
-    *, design: Path, port: int | None, no_browser: bool, dry_run: bool, monitor: Monitor
+    *,
+    design: Path,
+    app: bool,
+    port: int | None,
+    no_browser: bool,
+    dry_run: bool,
+    monitor: Monitor,
 ) -> tuple[int, dict[str, Any], str]:
-    """Open a design in the workbench, in JupyterLab; ends when JupyterLab is closed."""
+    """Open a design in the workbench, in JupyterLab or as an app; ends when that is closed."""
     del monitor
     notebook = working_notebook(design)
-    command = lab_command(notebook, port=port, browser=not no_browser)
-    data = {"notebook": str(notebook), "command": command}
+    command = (app_command if app else lab_command)(notebook, port=port, browser=not no_browser)
+    environment = app_environment() if app else {}
+    data = {"notebook": str(notebook), "command": command, "environment": environment}
     if not dry_run:
-        code = serve_lab(notebook, port=port, browser=not no_browser)
+        code = serve_lab(command, environment)
         if code:
-            raise ResourceError(f"JupyterLab ended with code {code}; what it said stands above.")
-    return 0, data, f"{notebook}\n{' '.join(command)}" if dry_run else f"Closed; {notebook} stays."
+            raise ResourceError(f"{command[2]} ended with code {code}; what it said stands above.")
+        return 0, data, f"Closed; {notebook} stays."
+    line = " ".join([*(f"{k}={v}" for k, v in environment.items()), *command])
+    return 0, data, f"{notebook}\n{line}"
