@@ -36,6 +36,7 @@ def _dispatch(options: argparse.Namespace) -> Answer:
         "run": commands.run,
         "solve": commands.solve,
         "optimise": commands.optimise,
+        "tradeoff": _later("tradeoff_commands", "tradeoff"),
         "stack": commands.stack,
         "preflight": _later("check_commands", "preflight"),
         "fix": _later("fix_commands", "fix"),

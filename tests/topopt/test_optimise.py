@@ -91,7 +91,7 @@ def test_solid_or_empty_design(solid_or_empty):
     assert volume.value == pytest.approx(0.5, abs=0.01)
     assert watch.stages == {"optimising"}
     assert set(watch.last) == {
-        "done", "total", "objective", "violation", "grey", "change", "cg_iterations",
+        "done", "total", "objective", "violation", "grey", "change", "cg_iterations", "time_left_s",
     }  # fmt: skip
     assert any("carry a load" in n for n in result.notes)
     assert any("held in all directions" in n for n in result.notes)

@@ -74,7 +74,7 @@ def measures_of(ask: OptimiseEntry) -> list[MeasureEntry]:
 
 
 def named_in_measures(ask: OptimiseEntry, what: str) -> Iterable[tuple[str, str]]:
-    """Every ``"region"``, ``"load case"``, ``"target"`` or ``"resin"`` in a measure, with its key."""
+    """Every region, load case, target or resin that a measure names, with its key."""
     single = {
         "region": _REGIONS,
         "load case": ("load_case", "held_in"),
@@ -131,9 +131,8 @@ def _check_pairs(entry: MeasureEntry) -> None:
         )
     if entry.measure == "contact peak":
         _check_indenter(given["indenter"], f"{entry.key}.indenter")
-    if entry.measure == "cell modulus" and given["property"] in ("shear plane",):
-        if "axes" not in given:
-            raise InputError("This key is missing.", key=f"{entry.key}.axes")
+    if given.get("property") == "shear plane" and "axes" not in given:
+        raise InputError("A shear plane needs its axes.", key=f"{entry.key}.axes")
 
 
 def _check_indenter(given: Mapping[str, Any], key: str) -> None:

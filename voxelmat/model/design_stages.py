@@ -7,7 +7,7 @@ from dataclasses import dataclass
 
 from voxelmat.units import number, quantity
 
-__all__ = ["Price", "Reach", "StagedValue"]
+__all__ = ["Price", "Reach", "StagedValue", "shown"]
 
 #: A limit counts as met within this share of it.
 _SLACK = 1e-3
@@ -67,12 +67,12 @@ class StagedValue:
                     "where the load passes; let it run longer, or allow more material."
                 )
             elif broken or change > _WORTH_TELLING * max(size, 1e-300):
-                now, unit = _shown(value, self.unit)
-                was = number(_shown(self.optimised, self.unit)[0])
+                now, unit = shown(value, self.unit)
+                was = number(shown(self.optimised, self.unit)[0])
                 limit = (
                     ""
                     if self.limit is None
-                    else f" ({self.sense} {number(_shown(self.limit, self.unit)[0])})"
+                    else f" ({self.sense} {number(shown(self.limit, self.unit)[0])})"
                 )
                 end = ", which breaks the limit." if broken else "."
                 found.append(
@@ -108,7 +108,7 @@ class Price:
 
     @property
     def sentence(self) -> str:
-        """Such as "0.2 g more mass buys 3 % less compliance"."""
+        """Such as "Mass: 0.2 g more (1 % of the limit) buys 3 % less compliance"."""
         if self.slope == 0:
             return f"The limit on {self.name} costs nothing: another value is as good."
         step = 0.01 * abs(self.limit)
@@ -117,8 +117,8 @@ class Price:
         share = change / max(abs(self.objective_value), 1e-300)
         better = "less" if (self.slope < 0) == (self.sense == "at most") else "more"
         return (
-            f"{quantity(*_shown(step, self.unit))} {looser} {self.name} (1 % of the limit) buys "
-            f"{number(100 * share, 2)} % {better} {self.objective}."
+            f"{self.name[0].upper()}{self.name[1:]}: {quantity(*shown(step, self.unit))} {looser} "
+            f"(1 % of the limit) buys {number(100 * share, 2)} % {better} {self.objective}."
         )
 
 
@@ -163,19 +163,19 @@ class Reach:
     def sentence(self) -> str:
         """The range in words, and how far the limit lies outside."""
         what = "lies between" if self.bound else "of the designs tried lies between"
-        low, unit = _shown(self.least, self.unit)
+        low, unit = shown(self.least, self.unit)
         text = (
             f"The {self.name} {what} {number(low)} ({self.of_least}) and "
-            f"{quantity(_shown(self.greatest, self.unit)[0], unit)} ({self.of_greatest})"
+            f"{quantity(shown(self.greatest, self.unit)[0], unit)} ({self.of_greatest})"
         )
         if self.missed_by == 0 or self.limit is None:
             return text + "."
         return (
-            f"{text}, but {self.sense} {quantity(*_shown(self.limit, self.unit))} is asked for: "
-            f"{quantity(*_shown(self.missed_by, self.unit))} out of reach."
+            f"{text}, but {self.sense} {quantity(*shown(self.limit, self.unit))} is asked for: "
+            f"{quantity(*shown(self.missed_by, self.unit))} out of reach."
         )
 
 
-def _shown(value: float, unit: str) -> tuple[float, str]:
+def shown(value: float, unit: str) -> tuple[float, str]:
     """Mass in grams for people."""
     return (value * 1e6, "g") if unit == "tonne" else (value, unit)

@@ -14,6 +14,7 @@ from voxelmat.printing.readback import Stack
 from voxelmat.units import number, quantity
 from voxelmat.workflow.finding_words import checked_dict
 from voxelmat.workflow.report_data import RunData
+from voxelmat.workflow.report_optimised import optimised_lines
 
 __all__ = ["as_dict", "exit_code", "joined_verdicts", "summary_lines"]
 
@@ -107,6 +108,23 @@ def as_dict(
             "iterations": data.optimised.iterations,
             "reason": data.optimised.reason,
             "limits_met": data.optimised.feasible,
+            "values": [
+                {
+                    "name": s.name,
+                    "unit": s.unit,
+                    "sense": s.sense,
+                    "limit": s.limit,
+                    "as_optimised": _plain(s.optimised),
+                    "as_a_part": _plain(s.palette),
+                    "as_printed": None if s.printed is None else _plain(s.printed),
+                }
+                for s in data.optimised.stages
+            ],
+            "palette": len(data.part.palette) - 1,
+            "prices": [
+                {"name": p.name, "limit": p.limit, "unit": p.unit, "objective_per_unit": p.slope}
+                for p in data.optimised.prices
+            ],
         },
         "verdicts": [
             {
@@ -146,6 +164,8 @@ def summary_lines(
             again = float(data.as_printed[name].size.max())
             line += f", {quantity(again, 'mm')} as printed"
         lines.append(line)
+    if data.optimised is not None:
+        lines += optimised_lines(data.optimised)
     for v in data.verdicts:
         value = quantity(v.value, v.requirement.unit)
         lines.append(f"  {v.status:<14}  {v.requirement.name}: {value}")

@@ -8,7 +8,6 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from voxelmat.errors import InputError
 from voxelmat.model.goal import AtLeast, AtMost, Maximise, Minimise
 from voxelmat.model.heatcase import Convection, FixedTemperature, HeatCase, HeatFlux, HeatSource
 from voxelmat.model.indenter import CylinderIndenter, FlatPunch, Indenter, SphereIndenter

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import re
-from collections.abc import Mapping, Sequence
+from collections.abc import Callable, Mapping, Sequence
 from pathlib import Path
 from typing import Any
 
@@ -14,6 +14,7 @@ from voxelmat.material.hardness import VALID_SHORE_A, modulus_from_shore_a
 from voxelmat.material.table import material_rows
 from voxelmat.model.result import StaticResult
 from voxelmat.monitor import Monitor
+from voxelmat.topopt.iterate import Iterate
 from voxelmat.units import number
 
 __all__ = ["materials", "optimise", "report", "run", "solve", "stack", "warm"]
@@ -32,6 +33,7 @@ def _stages(
     vti: bool = False,
     workers: int = 1,
     scheduler: str | None = None,
+    watch: Callable[[Iterate], None] | None = None,
 ) -> Answer:
     from voxelmat.workflow.answer import summary_lines
     from voxelmat.workflow.pipeline import STAGES
@@ -44,6 +46,7 @@ def _stages(
         monitor=monitor,
         workers=workers,
         scheduler=scheduler,
+        watch=watch,
     )
     lines = summary_lines(
         result.data, stack=result.stack, report=result.report, folder=result.folder
@@ -78,7 +81,7 @@ def solve(*, design: Path, out: Path, vti: bool, monitor: Monitor) -> Answer:
     return _stages(design, out, ("optimise", "solve", "grid error"), monitor, vti=vti)
 
 
-def optimise(*, design: Path, out: Path, monitor: Monitor) -> Answer:
+def optimise(*, design: Path, out: Path, animate: Path | None, monitor: Monitor) -> Answer:
     """The optimisation, and the load cases on what it made."""
     if load_design(design).optimise is None:
         raise InputError(
@@ -86,7 +89,16 @@ def optimise(*, design: Path, out: Path, monitor: Monitor) -> Answer:
             file=str(design),
             key="optimise",
         )
-    return _stages(design, out, ("optimise", "solve"), monitor)
+    if animate is None:
+        return _stages(design, out, ("optimise", "solve"), monitor)
+    from voxelmat.workflow.animate import Frames, check_animation, write_animation
+
+    frames = Frames()
+    check_animation(animate)
+    code, data, text = _stages(design, out, ("optimise", "solve"), monitor, watch=frames)
+    unit = str(data["optimised"]["values"][0]["unit"])
+    write_animation(frames.iterates, animate, unit=unit, monitor=monitor)
+    return code, {**data, "animation": str(animate)}, f"{text}\n  animation: {animate}"
 
 
 def stack(

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable
+from dataclasses import replace
 from pathlib import Path
 
 import numpy as np
@@ -23,14 +24,19 @@ from voxelmat.model.design_spec import (
     VolumeLimit,
 )
 from voxelmat.monitor import SILENT, Monitor
+from voxelmat.model.part import Part
 from voxelmat.topopt.iterate import Iterate
+from voxelmat.topopt.made import values_of_part
 from voxelmat.topopt.optimise import optimise
 from voxelmat.workflow.asked_measures import goal_of, limit_of
 from voxelmat.workflow.build import Built
 
-__all__ = ["design_spec", "optimised"]
+__all__ = ["design_spec", "optimised", "with_printed"]
 
 Bools = NDArray[np.bool_]
+
+#: Share of the objective that rounding to a palette may cost where a design says nothing of it.
+_PALETTE_ERROR = 0.01
 
 
 def optimised(
@@ -39,6 +45,7 @@ def optimised(
     checkpoint: Path | None = None,
     monitor: Monitor = SILENT,
     watch: Callable[[Iterate], None] | None = None,
+    start: NDArray[np.float64] | None = None,
 ) -> DesignResult:
     """Run the optimisation that the design asks for.
 
@@ -50,6 +57,8 @@ def optimised(
     monitor : Monitor
     watch : callable, optional
         Given each `voxelmat.topopt.iterate.Iterate`.
+    start : ndarray, optional
+        Unknowns to begin with, see `voxelmat.topopt.optimise.optimise`.
 
     Raises
     ------
@@ -65,11 +74,34 @@ def optimised(
             monitor=monitor,
             checkpoint=checkpoint,
             watch=watch,
+            start=start,
         )
     except InputError as error:
         if error.file is not None:
             raise
         raise InputError(error.message, file=built.design.file_name, key="optimise") from error
+
+
+def with_printed(
+    built: Built, found: DesignResult, printed: Part, *, monitor: Monitor = SILENT
+) -> DesignResult:
+    """The result with the value of everything asked as the stack prints it.
+
+    Parameters
+    ----------
+    built : Built
+        That was optimised.
+    found : DesignResult
+    printed : Part
+        Read back from the stack, on the grid of the design.
+    monitor : Monitor
+    """
+    spec = design_spec(built)
+    values = values_of_part(built.part, printed, built.load_cases, spec, monitor=monitor)
+    stages = tuple(replace(s, printed=float(v)) for s, v in zip(found.stages, values, strict=True))
+    before = {r for s in found.stages for r in s.remarks}
+    notes = tuple(n for n in found.notes if n not in before)
+    return replace(found, stages=stages, notes=(*notes, *(r for s in stages for r in s.remarks)))
 
 
 def design_spec(built: Built) -> DesignSpec:
@@ -83,11 +115,13 @@ def design_spec(built: Built) -> DesignSpec:
             key="optimise",
         )
     standard = Projection()
+    from_error = entry.levels is None and entry.palette_error is None
     sharpness = (0.0,) if not entry.void and entry.sharpness is None else entry.sharpness
     given = {
         "penalty": entry.penalty,
         "iterations": entry.iterations,
         "levels": entry.levels,
+        "palette_error": _PALETTE_ERROR if from_error else entry.palette_error,
         "move": entry.move,
         "method": entry.method,
         "void_law": entry.void_law,

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import time
-from collections.abc import Iterator, Mapping, Sequence
+from collections.abc import Callable, Iterator, Mapping, Sequence
 from contextlib import contextmanager
 from dataclasses import dataclass, field, replace
 from pathlib import Path
@@ -27,10 +27,11 @@ from voxelmat.model.result import StaticResult
 from voxelmat.monitor import SILENT, Monitor
 from voxelmat.printing.readback import Stack
 from voxelmat.provenance import Provenance, utc_now
+from voxelmat.topopt.iterate import Iterate
 from voxelmat.units import number
 from voxelmat.workflow.answer import as_dict, exit_code, joined_verdicts
 from voxelmat.workflow.build import Built, build
-from voxelmat.workflow.designing import optimised
+from voxelmat.workflow.designing import optimised, with_printed
 from voxelmat.workflow.interfaces import interface_spots
 from voxelmat.workflow.printed import as_printed
 from voxelmat.workflow.printing_stage import PrintStage, check_stage, stack_stage
@@ -135,6 +136,7 @@ def run(
     monitor: Monitor = SILENT,
     workers: int = 1,
     scheduler: str | None = None,
+    watch: Callable[[Iterate], None] | None = None,
 ) -> RunResult:
     """Do the whole job, or some of its stages.
 
@@ -149,6 +151,8 @@ def run(
     monitor : Monitor
     workers, scheduler
         Who writes the layers; see `voxelmat.printing.stack.write_job`.
+    watch : callable, optional
+        Given each `voxelmat.topopt.iterate.Iterate` of the optimisation.
 
     Returns
     -------
@@ -172,7 +176,7 @@ def run(
         raise InputError(f"At least one worker writes the layers; got {workers}.", key="workers")
     folder = Path(folder)
     with _held(folder):
-        return _Run(folder, frozenset(stages), monitor, workers, scheduler).all(design)
+        return _Run(folder, frozenset(stages), monitor, workers, scheduler, watch).all(design)
 
 
 class _Run:
@@ -185,8 +189,10 @@ class _Run:
         monitor: Monitor,
         workers: int,
         scheduler: str | None,
+        watch: Callable[[Iterate], None] | None = None,
     ) -> None:
         self.folder = folder
+        self.watch = watch
         self.workers = workers
         self.scheduler = scheduler
         self.stages = stages
@@ -211,6 +217,8 @@ class _Run:
             with self.clock.stage("as printed"):
                 printed = as_printed(stack, part, monitor=self.monitor)
                 again = self._solved(built, printed, "as printed", results)
+                if found is not None:
+                    found = with_printed(built, found, printed, monitor=self.monitor)
         with self.clock.stage("verdicts"):
             data = self._data(built, part, found, results, again, stage)
             data = replace(data, grid_error=coarser)
@@ -235,7 +243,12 @@ class _Run:
         if asked is None or asked.skip or "optimise" not in self.stages:
             return None
         with self.clock.stage("optimise"):
-            found = optimised(built, checkpoint=self.folder / "optimise.npz", monitor=self.monitor)
+            found = optimised(
+                built,
+                checkpoint=self.folder / "optimise.npz",
+                monitor=self.monitor,
+                watch=self.watch,
+            )
         if found.cancelled:
             raise Cancelled(f"Stopped by the user while optimising: {found.reason}")
         return found

@@ -20,6 +20,7 @@ from voxelmat.workflow.bill_table import bill_table
 from voxelmat.workflow.interfaces import spot_rows
 from voxelmat.workflow.report_checks import checks
 from voxelmat.workflow.report_data import RunData, StackSummary
+from voxelmat.workflow.report_optimised import optimised_section
 from voxelmat.workflow.report_pressure import pressure_picture
 from voxelmat.workflow.report_tables import Table
 
@@ -116,7 +117,7 @@ def _context(run: RunData, monitor: Monitor) -> dict[str, Any]:
         "cases": cases,
         "strain_limit": f"{number(100 * STRAIN_LIMIT)} %",
         "rotation_limit": f"{number(math.degrees(ROTATION_LIMIT))}°",
-        "optimised": _optimised(run) if optimised is not None else None,
+        "optimised": optimised_section(optimised) if optimised is not None else None,
         "stack": stack,
         "compared": tables.compared_table(run),
         "checked": run.checked,
@@ -207,30 +208,6 @@ def _interfaces(run: RunData, name: str) -> Table | None:
         numbers=(2, 3, 4, 5),
         caption="normal traction above 0 pulls the two apart; pressing does not use strength",
     )
-
-
-def _optimised(run: RunData) -> dict[str, Any]:
-    design = run.optimised
-    if design is None:
-        raise TypeError("There is no optimised design to describe.")
-    words = (
-        f"The layout was optimised in {design.iterations} iterations: {design.objective_name} "
-        f"{number(design.objective)} {design.objective_unit}".rstrip()
-        + f", and {number(design.objective_of_palette)} with the blends that are printed. "
-        f"It stopped because: {design.reason}."
-    )
-    if not design.converged:
-        words += " It had not converged: more iterations may give a better layout."
-    limits = None
-    if design.constraints:
-        rows = [
-            (c.name, number(c.value), number(c.limit), c.unit, "yes" if c.met else "no")
-            for c in design.constraints
-        ]
-        limits = Table(
-            head=("limit", "value", "at most", "unit", "kept"), rows=tuple(rows), numbers=(1, 2)
-        )
-    return {"words": words, "limits": limits, "notes": design.notes}
 
 
 def _stack(run: RunData) -> dict[str, Any]:
