@@ -30,6 +30,7 @@ __all__ = ["Arrow", "Marks", "Tint", "marks_of", "tinted"]
 
 Double = NDArray[np.float64]
 _LOAD, _MOTION, _SUPPORT, _SPRING, _POINTED = "#D55E00", "#009E73", "#222222", "#0072B2", "#CC79A7"
+_RING = "#99226B"  # a ring must stand out where a face of _POINTED would do
 _ARROWS = 14  # of one load at most
 _LONGEST = 0.12  # of the diagonal of the part
 _SHORTEST = 0.25  # of the longest arrow, so that a small load is still seen
@@ -128,7 +129,7 @@ def marks_of(solid: Solid, case: LoadCase | None = None, pointed: Region | None 
         tints.append(_tint(solid, faces, _POINTED, striped=False))
         if len(faces):
             places = solid.moved(faces.centre[_spread(faces, 1)])
-            lines.append(Line(places=(_triple(places[0]),), text=pointed.name, colour=_POINTED))
+            lines.append(Line(places=(_triple(places[0]),), text=pointed.name, colour=_RING))
         notes.append(f"region '{pointed.name}' in purple")
     return Marks(arrows=tuple(arrows), tints=tuple(tints), lines=tuple(lines), notes=tuple(notes))
 

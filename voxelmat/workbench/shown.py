@@ -20,9 +20,9 @@ from voxelmat.workflow.colours import palette_rgb, resin_colours
 __all__ = [
     "Field",
     "Shown",
+    "in_materials",
     "material_field",
     "of_part",
-    "in_materials",
     "picture_of",
     "preview_words",
     "scalar_field",

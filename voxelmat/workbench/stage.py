@@ -74,6 +74,12 @@ class Stage:
     def _told(self, what: str) -> None:
         if self._bench.draft.empty:
             return
+        try:
+            self._heard(what)
+        except VoxelmatError as error:  # must not stop the work that told it
+            self._bench.say(str(error), bad=True)
+
+    def _heard(self, what: str) -> None:
         if what == "design":
             self._guest = None
             self._follow()
