@@ -7,27 +7,13 @@ import pytest
 
 from voxelmat.cli import main
 from voxelmat.errors import InputError
-from voxelmat.io.mesh import write_stl
 from voxelmat.io.store import load_part
-from voxelmat.model.mesh import TriangleMesh
-from voxelmat.shape.solid import box
 from voxelmat.workflow.build import build
 from voxelmat.workflow.fix_commands import drain_from_text
 
 
-def hollow_pad(path):
-    """The pad with a sealed cavity of 4 x 4 x 2 mm in it."""
-    outer, inner = box((12.0, 8.0, 4.0), (0.0, 0.0, 2.0)), box((4.0, 4.0, 2.0), (4.0, 2.0, 3.0))
-    mesh = TriangleMesh(
-        vertices=np.concatenate([outer.vertices, inner.vertices]),
-        faces=np.concatenate([outer.faces, inner.faces[:, ::-1] + len(outer.vertices)]),
-        name="pad",
-    )
-    write_stl(mesh, path)
-
-
+@pytest.mark.usefixtures("hollow_pad")
 def test_a_drain_is_cut_into_a_new_part(design, tmp_path, capsys):
-    hollow_pad(tmp_path / "pad.stl")
     out = tmp_path / "out"
     main(["stack", str(design), "--out", str(out), "--quiet"])
     capsys.readouterr()
@@ -58,8 +44,8 @@ def test_a_drain_is_cut_into_a_new_part(design, tmp_path, capsys):
     assert "drain: a hole of 1.5 mm" in capsys.readouterr().out
 
 
+@pytest.mark.usefixtures("hollow_pad")
 def test_the_loaded_face_is_not_drilled(design, tmp_path, capsys):
-    hollow_pad(tmp_path / "pad.stl")
     out = tmp_path / "out"
     main(["stack", str(design), "--out", str(out), "--quiet"])
     capsys.readouterr()

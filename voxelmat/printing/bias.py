@@ -72,7 +72,11 @@ def compensated(part: AnyPart, profile: PrintProfile, orientation: Sequence[str]
     if outwards and free.any():
         labels = _carried(part, free)
     if occupancy is not None:
-        moved = np.clip(occupancy + np.rint(inside - _share(before)), 0, 255)
+        change = inside - _share(before)
+        moved = np.clip(occupancy + np.rint(change), 0, 255)
+        # What the outline has left wholly, or taken in wholly, keeps no rest of another share.
+        ends = (change != 0) & ((inside == 0) | (inside == 255))
+        moved[ends] = inside[ends]
         bought = ~part.printed_labels()[part.labels] & (part.labels > 0)
         moved[bought] = occupancy[bought]
         moved[free] = np.rint(inside[free])
