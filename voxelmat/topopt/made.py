@@ -56,7 +56,9 @@ def fields_of(part: Part, problem: LayoutProblem, like: Fields) -> tuple[Fields,
     fill = np.ascontiguousarray(part.fill.T, dtype=np.float64)
     filled = np.where(c.domain, fill / np.where(c.fill > 0, c.fill, 1.0), 0.0)
     rho = np.minimum(filled, 1.0)
-    return dataclasses.replace(like, lam=lam, mu=mu, rho=rho, w=w), filled
+    p = unknowns.palette
+    blend = p.law.evaluate(w[:, c.domain].T, p.bulk, p.shear, resins=names)
+    return dataclasses.replace(like, lam=lam, mu=mu, rho=rho, w=w, blend=blend), filled
 
 
 def values_of_fields(problem: LayoutProblem, fields: Fields, filled: Array | None = None) -> Array:
