@@ -125,12 +125,13 @@ def _made(
         return tried[levels]
 
     most = spec.levels
-    if spec.palette_error is None or problem.unknowns.resins == 1:
+    allowed = spec.palette_error
+    if allowed is None or problem.unknowns.resins == 1:
         return at(most), ()
     relative = isinstance(problem.objective, TargetResponse)
 
     def good(levels: int) -> bool:
-        return _cost(problem, values, at(levels).values, relative) <= spec.palette_error
+        return _cost(problem, values, at(levels).values, relative) <= allowed
 
     levels = min(max(problem.unknowns.resins, 2), most)
     while levels < most and not good(levels):
@@ -139,7 +140,7 @@ def _made(
         cost = _cost(problem, values, at(levels).values, relative)
         return at(levels), (
             f"A palette of {levels} blends changes the objective or a limit by {cost:.2g} of it, "
-            f"more than the {spec.palette_error:g} allowed; allow more levels.",
+            f"more than the {allowed:g} allowed; allow more levels.",
         )
     low = levels // 2
     while levels - low > max(1, low // 8):

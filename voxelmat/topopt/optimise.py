@@ -20,20 +20,17 @@ from voxelmat.monitor import SILENT, Figure, Monitor
 from voxelmat.provenance import Provenance, text_digest, utc_now
 from voxelmat.topopt.assemble import assemble
 from voxelmat.topopt.checkpoint import read_checkpoint, write_checkpoint
-from voxelmat.topopt.criteria import OptimalityCriteria
 from voxelmat.topopt.finish import finished
 from voxelmat.topopt.iterate import Iterate
-from voxelmat.topopt.loop import State, Stepper, Stopping, run
-from voxelmat.topopt.mma import MovingAsymptotes
+from voxelmat.topopt.loop import State, Stopping, run
+from voxelmat.topopt.method import stepper_of
 from voxelmat.topopt.physics import Case
-from voxelmat.topopt.problem import LayoutProblem, start_of, suits_criteria
+from voxelmat.topopt.problem import start_of
 from voxelmat.topopt.setup import layout_problem, unknowns_of
 from voxelmat.topopt.unknowns import Choice
 
 __all__ = ["optimise"]
 
-#: Linear solver tolerance while a design is still changing.
-_RUNNING = {"compliance": 1e-3, "target": 1e-5}
 #: A target's objective goes to zero, so its gap is held against the first value.
 _FOR_TARGET = Stopping(gap=1e-7, gap_of_first=True, change=2e-5)
 _KEEP_EVERY = 5
@@ -61,8 +58,8 @@ def optimise(
     spec : DesignSpec
     monitor : Monitor
         ``report("optimising", done=, total=, objective=, violation=, grey=, change=,
-        cg_iterations=, time_left_s=)`` after each iteration. `Cancelled` ends the run with its last whole
-        design as the result.
+        cg_iterations=, time_left_s=)`` after each iteration. `Cancelled` ends the run with its
+        last whole design as the result.
     checkpoint : Path, optional
         Written every 5 iterations and at the end. Where the file is there and belongs to this
         problem, the run goes on from it, to the same bits as one that was never interrupted.
@@ -91,7 +88,6 @@ def optimise(
     problem, notes = layout_problem(part, load_cases, spec, element=element, monitor=progress)
     physics, choice, cases = problem.physics, problem.unknowns.choice, problem.physics.cases
     is_target = isinstance(spec.objective, TargetDeflection)
-    physics.tolerance = _RUNNING["target" if is_target else "compliance"]
     if start is None:
         start = start_of(spec, problem.unknowns, problem.bounds)
     elif start.shape != (problem.unknowns.n,):
@@ -103,7 +99,7 @@ def optimise(
     state = None if checkpoint is None else read_checkpoint(checkpoint, digest)
     outcome = run(
         problem,
-        _stepper(spec, problem),
+        stepper_of(spec, problem),
         state or State(x=start, whole=start),
         iterations=spec.iterations,
         stopping=_FOR_TARGET if is_target else Stopping(),
@@ -158,14 +154,6 @@ class _Progress:
                 figures["time_left_s"] = round(each * (total - done), 1)
             self._total, self._done, self._figures = total, done, figures
         self._inner.report("optimising", done=self._done, total=self._total, **self._figures)
-
-
-def _stepper(spec: DesignSpec, problem: LayoutProblem) -> Stepper:
-    criteria = suits_criteria(spec, problem.unknowns)
-    if spec.method == "oc" or (spec.method == "auto" and criteria):
-        return OptimalityCriteria(problem.low, problem.high, move=spec.move)
-    back = "worse" if isinstance(spec.objective, TargetDeflection) else "none"
-    return MovingAsymptotes(problem.low, problem.high, move=spec.move, back=back)
 
 
 def _digest(part: Part, spec: DesignSpec, cases: tuple[Case, ...], element: str) -> str:

@@ -50,6 +50,7 @@ class Frames:
         self._every = 1
 
     def __call__(self, iterate: Iterate) -> None:
+        """Take one."""
         if (iterate.record.iteration - 1) % self._every == 0:
             self.iterates.append(iterate)
         if len(self.iterates) > _MOST:

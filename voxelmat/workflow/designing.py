@@ -23,8 +23,8 @@ from voxelmat.model.design_spec import (
     TargetDeflection,
     VolumeLimit,
 )
-from voxelmat.monitor import SILENT, Monitor
 from voxelmat.model.part import Part
+from voxelmat.monitor import SILENT, Monitor
 from voxelmat.topopt.iterate import Iterate
 from voxelmat.topopt.made import values_of_part
 from voxelmat.topopt.optimise import optimise

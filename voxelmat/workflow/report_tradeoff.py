@@ -61,6 +61,8 @@ def front_picture(front: Front, names: tuple[str, ...]) -> Picture | None:
     ax.tick_params(labelsize=8)
     ax.grid(visible=True, color="#DDDDDD", linewidth=0.6)
     ax.set_axisbelow(True)
+    if front.invented:
+        fig.text(0.16, 0.955, "invented data", fontsize=8, color="#B00020")
     if second != [None]:
         ax.legend(fontsize=7, frameon=False)
     return Picture(

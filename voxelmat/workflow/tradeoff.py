@@ -92,6 +92,7 @@ class Front:
     sweeps: tuple[Sweep, ...]
     points: tuple[Point, ...]
     folder: Path
+    invented: bool = False
 
     @property
     def rows(self) -> list[dict[str, Any]]:
@@ -191,7 +192,7 @@ def tradeoff(
             seen(point)
     front = Front(
         sweeps=tuple(sweeps), points=_compared(sorted(points, key=lambda p: p.number), sweeps),
-        folder=folder,
+        folder=folder, invented=design.invented,
     )  # fmt: skip
     write_json(folder / "front.json", {"invented": design.invented, "points": front.rows})
     return front
@@ -206,7 +207,7 @@ def _checked(design: Design, sweeps: Sequence[Sweep]) -> list[Sweep]:
     if not 1 <= len(sweeps) <= 2:
         raise refuse(f"A trade-off sweeps one or two limits; got {len(sweeps)}.")
     for sweep in sweeps:
-        now = get_at(design.data, sweep.key)
+        now = get_at(dict(design.data), sweep.key)
         if not sweep.key.startswith("optimise.limit[") or isinstance(now, str | bool | list):
             raise refuse(f"'{sweep.key}' is not the value of a limit.", sweep.key)
         if not sweep.values or len(set(sweep.values)) != len(sweep.values):
@@ -224,7 +225,7 @@ def _serpentine(lengths: list[int]) -> list[tuple[int, tuple[int, ...]]]:
     numbers = {at: n + 1 for n, at in enumerate(product(*(range(k) for k in lengths)))}
     if len(lengths) == 1:
         return [(n, at) for at, n in numbers.items()]
-    order = []
+    order: list[tuple[int, tuple[int, ...]]] = []
     for i in range(lengths[0]):
         row = range(lengths[1]) if i % 2 == 0 else range(lengths[1] - 1, -1, -1)
         order += [(numbers[i, j], (i, j)) for j in row]
