@@ -23,15 +23,18 @@ from voxelmat.model.design_spec import (
     TargetDeflection,
     VolumeLimit,
 )
+from voxelmat.model.design_stages import shown
 from voxelmat.model.part import Part
 from voxelmat.monitor import SILENT, Monitor
+from voxelmat.topopt.feasibility import check_reach, reachable, worth_checking
 from voxelmat.topopt.iterate import Iterate
 from voxelmat.topopt.made import values_of_part
 from voxelmat.topopt.optimise import optimise
+from voxelmat.units import number, quantity
 from voxelmat.workflow.asked_measures import goal_of, limit_of
 from voxelmat.workflow.build import Built
 
-__all__ = ["design_spec", "optimised", "with_printed"]
+__all__ = ["design_spec", "optimised", "shortfalls", "with_printed"]
 
 Bools = NDArray[np.bool_]
 
@@ -67,7 +70,10 @@ def optimised(
     """
     spec = design_spec(built)
     try:
-        return optimise(
+        doubts: tuple[str, ...] = ()
+        if worth_checking(spec) and (checkpoint is None or not checkpoint.exists()):
+            doubts = check_reach(reachable(built.part, built.load_cases, spec, monitor=monitor))
+        found = optimise(
             built.part,
             built.load_cases,
             spec,
@@ -76,10 +82,27 @@ def optimised(
             watch=watch,
             start=start,
         )
+        return replace(found, notes=(*found.notes, *doubts, *shortfalls(found)))
     except InputError as error:
         if error.file is not None:
             raise
         raise InputError(error.message, file=built.design.file_name, key="optimise") from error
+
+
+def shortfalls(found: DesignResult) -> tuple[str, ...]:
+    """Which limits the design breaks, and by how much."""
+    told = []
+    for s in found.stages:
+        if s.limit is None or s.met(s.optimised):
+            continue
+        value, unit = shown(s.optimised, s.unit)
+        limit, by = shown(s.limit, s.unit)[0], shown(abs(s.optimised - s.limit), s.unit)[0]
+        told.append(
+            f"The limit on {s.name} is not met: {quantity(value, unit)} against {s.sense} "
+            f"{number(limit)}, off by {number(by)}. Loosen it or another limit, or allow more "
+            "iterations."
+        )
+    return tuple(told)
 
 
 def with_printed(
