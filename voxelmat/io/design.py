@@ -15,6 +15,7 @@ from voxelmat.io.design_print import dimension_entry, print_entry
 from voxelmat.io.schema import check_document, read_toml
 from voxelmat.model.design import (
     FORMAT,
+    RULE_KEYS,
     BodyEntry,
     BoughtIn,
     CaseEntry,
@@ -273,7 +274,8 @@ def _optimise(table: Table) -> OptimiseEntry:
         limits.append(LimitEntry(kind=limit["kind"], at_most=float(most), resin=limit.get("resin")))
     listed: dict[str, Any] = {k: tuple(table[k]) for k in lists if k in table}
     return OptimiseEntry(
-        **_rest(table, "limit", "fixed", "minimise", "maximise", *lists),
+        **_rest(table, "limit", "fixed", "minimise", "maximise", *lists, *RULE_KEYS),
+        rules={k: table[k] for k in RULE_KEYS if k in table},
         **listed,
         goal=measure_goal(table),
         measured=tuple(measured),

@@ -10,7 +10,12 @@ from typing import Any
 import numpy as np
 
 from voxelmat.errors import InputError
-from voxelmat.io.design_measures import check_measure, measures_of, named_in_measures
+from voxelmat.io.design_measures import (
+    check_measure,
+    measures_of,
+    named_in_measures,
+    needs_load_case,
+)
 from voxelmat.model.design import Design, LoadEntry, RequirementEntry, TargetEntry
 from voxelmat.model.region import parse_side
 from voxelmat.model.requirement import MEASURES
@@ -222,6 +227,10 @@ def _region_uses(design: Design) -> Iterable[tuple[str, str]]:
         for i, (name, _) in enumerate(design.optimise.fixed):
             yield name, f"optimise.fixed[{i}].region"
         yield from named_in_measures(design.optimise, "region")
+        for i, name in enumerate(design.optimise.rules.get("zones", ())):
+            yield name, f"optimise.zones[{i}]"
+        if "region" in (skin := design.optimise.rules.get("skin", {})):
+            yield skin["region"], "optimise.skin.region"
 
 
 def _check_axes(settings: Mapping[str, Any], key: str) -> None:
@@ -305,7 +314,7 @@ def _check_optimise(design: Design, targets: list[str]) -> None:
     ask = design.optimise
     if ask is None:
         return
-    if not design.cases:
+    if not design.cases and needs_load_case(ask):
         raise InputError(
             "There is no load case to optimise for; add [[load_case]].", key="optimise"
         )
@@ -313,6 +322,13 @@ def _check_optimise(design: Design, targets: list[str]) -> None:
         check_measure(entry)
     for name, key in named_in_measures(ask, "load case"):
         _known(name, [c.name for c in design.cases], "load case", key)
+    for i, name in enumerate(ask.rules.get("load_scatter", {}).get("load_cases", ())):
+        known = [c.name for c in design.cases]
+        _known(name, known, "load case", f"optimise.load_scatter.load_cases[{i}]")
+    if "resin" in (skin := ask.rules.get("skin", {})):
+        _known(skin["resin"], ask.resins, "resin in optimise.resins", "optimise.skin.resin")
+    if "zones" in ask.rules and "zone_count" in ask.rules:
+        raise InputError("Zones are either named or counted, not both.", key="optimise.zone_count")
     for name, key in named_in_measures(ask, "target"):
         _known(name, targets, "target", key)
     for name, key in named_in_measures(ask, "resin"):

@@ -8,9 +8,16 @@ from typing import Any
 
 from voxelmat.errors import InputError
 from voxelmat.model.design import OptimiseEntry
-from voxelmat.model.measure_entry import MEASURE_KEYS, MeasureEntry
+from voxelmat.model.measure_entry import MEASURE_KEYS, WITHOUT_LOADS, MeasureEntry
 
-__all__ = ["check_measure", "measure_goal", "measure_limit", "measures_of", "named_in_measures"]
+__all__ = [
+    "check_measure",
+    "measure_goal",
+    "measure_limit",
+    "measures_of",
+    "named_in_measures",
+    "needs_load_case",
+]
 
 _REGIONS = ("region", "output", "input", "carried", "closed")
 
@@ -71,6 +78,11 @@ def measure_limit(table: Mapping[str, Any], key: str) -> MeasureEntry:
 def measures_of(ask: OptimiseEntry) -> list[MeasureEntry]:
     """The goal's measure, then those of the limits."""
     return [*([] if ask.goal is None else [ask.goal]), *ask.measured]
+
+
+def needs_load_case(ask: OptimiseEntry) -> bool:
+    """Whether anything asked is about load cases: the old objectives are."""
+    return ask.goal is None or any(e.measure not in WITHOUT_LOADS for e in measures_of(ask))
 
 
 def named_in_measures(ask: OptimiseEntry, what: str) -> Iterable[tuple[str, str]]:

@@ -19,6 +19,7 @@ from voxelmat.units import DENSITY_G_CM3
 
 __all__ = [
     "FORMAT",
+    "RULE_KEYS",
     "BodyEntry",
     "BoughtIn",
     "CaseEntry",
@@ -40,6 +41,13 @@ __all__ = [
 FORMAT = 1
 
 Triple = tuple[float, float, float]
+
+#: Keys of ``[optimise]`` that are rules a design is made by.
+RULE_KEYS = (
+    "blends", "extruded", "repeated", "zones", "zone_count", "robust", "material_scatter",
+    "load_scatter", "skin", "support_angle_deg", "interface_width_mm", "blend_radius_mm",
+    "most_resins", "penalties",
+)  # fmt: skip
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -248,7 +256,7 @@ class OptimiseEntry:
     Exactly one of `objective` (``"compliance"`` or ``"target deflection"``; empty where not used)
     and `goal` says what is made least or greatest; `measured` are limits on any measure. Where
     `levels` is None, the palette is as small as `palette_error` (a share of the objective)
-    allows. With `skip` a run takes the layout as it is. `design_in` names the regions that are designed
+    allows. `rules` are further tables and keys as the file has them (`RULE_KEYS`). With `skip` a run takes the layout as it is. `design_in` names the regions that are designed
     (empty: the whole part), `keep`, `solid`, `empty` and `protected` name regions, `fixed` pairs
     a region with the resin it must be.
     """
@@ -278,6 +286,7 @@ class OptimiseEntry:
     void_law: str | None = None
     sharpness: tuple[float, ...] | None = None
     sharpness_every: int | None = None
+    rules: Mapping[str, Any] = field(default_factory=dict)
     skip: bool = False
 
 

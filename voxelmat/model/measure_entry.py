@@ -6,7 +6,7 @@ from collections.abc import Mapping
 from dataclasses import dataclass, field
 from typing import Any, Literal
 
-__all__ = ["MEASURE_KEYS", "MeasureEntry", "MeasureKeys"]
+__all__ = ["MEASURE_KEYS", "WITHOUT_LOADS", "MeasureEntry", "MeasureKeys"]
 
 
 @dataclass(frozen=True, slots=True)
@@ -72,6 +72,15 @@ MEASURE_KEYS: Mapping[str, MeasureKeys] = {
     ),
     "trapped support": MeasureKeys(may=("closed", "exponent")),
 }  # fmt: skip
+
+#: Measures that no load case has a part in.
+WITHOUT_LOADS = frozenset(
+    {
+        "volume", "mass", "cost", "resin volume", "centre of mass", "interface area", "perimeter",
+        "cell modulus", "cell poisson", "cell target", "peak temperature", "mean temperature",
+        "thermal compliance", "trapped support",
+    }
+)  # fmt: skip
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

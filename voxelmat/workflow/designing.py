@@ -32,6 +32,7 @@ from voxelmat.topopt.made import values_of_part
 from voxelmat.topopt.optimise import optimise
 from voxelmat.units import number, quantity
 from voxelmat.workflow.asked_measures import goal_of, limit_of
+from voxelmat.workflow.asked_rules import rules_of
 from voxelmat.workflow.build import Built
 
 __all__ = ["design_spec", "optimised", "shortfalls", "with_printed"]
@@ -163,6 +164,7 @@ def design_spec(built: Built) -> DesignSpec:
             projection=Projection(
                 sharpness=standard.sharpness if sharpness is None else sharpness,
                 every=entry.sharpness_every or standard.every,
+                penalties=tuple(entry.rules.get("penalties", ())),
             ),
             fixed_resin=_fixed(built, entry),
             solid=_union(built, entry.solid),
@@ -171,6 +173,7 @@ def design_spec(built: Built) -> DesignSpec:
             protected=_union(built, entry.protected),
             symmetry=entry.symmetry,
             seed=built.design.seed,
+            **rules_of(built, entry.rules),
             **{k: v for k, v in given.items() if v is not None},  # type: ignore[arg-type]
         )
     except InputError as error:
