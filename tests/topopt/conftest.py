@@ -127,6 +127,7 @@ def unknowns():
     def build(
         shape, E, nu, *, void=True, radius=1.5, spacing=(1.0, 1.0, 1.0), penalty=3.0,
         kind="bounded", floor=1e-6, density=None, law=None, choice=None,
+        simplex=False,
     ):  # fmt: skip
         soft = floor * min(E)
         laws = VoidLaw(
@@ -135,7 +136,7 @@ def unknowns():
         )  # fmt: skip
         return Unknowns(
             choice or _block(shape), _palette(E, nu, density, law),
-            void=laws if void else None, spacing=spacing, radius=radius,
+            void=laws if void else None, spacing=spacing, radius=radius, simplex=simplex,
         )  # fmt: skip
 
     return build

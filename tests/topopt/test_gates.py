@@ -8,10 +8,11 @@ import pytest
 
 from voxelmat.model.design_spec import Projection
 from voxelmat.topopt.criteria import OptimalityCriteria
+from voxelmat.topopt.limits import Bound, Goal
 from voxelmat.topopt.loop import State, Stopping, run
 from voxelmat.topopt.mma import MovingAsymptotes
 from voxelmat.topopt.physics import Case, Physics
-from voxelmat.topopt.problem import Bound, LayoutProblem
+from voxelmat.topopt.problem import LayoutProblem
 from voxelmat.topopt.responses import Amount, ComplianceResponse, TargetResponse
 
 PLAIN = Projection(sharpness=(0.0,))
@@ -24,7 +25,7 @@ def mean_of(shape, factor, name="mean"):
 
 
 def descend(u, physics, objective, bounds, x, iterations, stepper=None, move=0.5):
-    problem = LayoutProblem(u, physics, objective, bounds, PLAIN)
+    problem = LayoutProblem(u, physics, Goal(response=objective), bounds, PLAIN)
     stepper = stepper or MovingAsymptotes(problem.low, problem.high, move=move)
     return run(
         problem, stepper, State(x=x, whole=x), iterations=iterations, stopping=NEVER

@@ -85,6 +85,7 @@ class ResinLimit:
 Objective = Compliance | TargetDeflection | Minimise | Maximise
 Limit = VolumeLimit | MassLimit | ResinLimit | AtMost | AtLeast
 
+_METHODS = ("auto", "mma", "gcmma", "oc", "mirror")
 #: More would not fit a tray, and a softmax over more is not tested.
 _MOST_RESINS = 40
 
@@ -207,11 +208,15 @@ class DesignSpec:
         may cost, and by how much of a limit it may overstep it; the palette is then the smallest
         that does. None: as many blends as `levels` allows.
     method : str
-        ``"mma"``, ``"oc"`` (optimality criteria) or ``"auto"``.
+        ``"mma"`` (moving asymptotes; takes steps back unless objective and limits are compliance
+        and amounts), ``"gcmma"`` (globally convergent: more solves, never a worse design),
+        ``"oc"`` (optimality criteria; one limit), ``"mirror"`` (mirror descent on the fractions)
+        or ``"auto"``: ``"oc"`` for compliance under one amount with only solid or empty to
+        choose, else ``"mma"``.
     move : float
         Longest change of an unknown in one iteration.
     seed : int
-        Recorded; nothing in the method draws random numbers.
+        Of the starts of `voxelmat.topopt.starts.ranked_starts`; one run draws no random numbers.
     """
 
     resins: tuple[str, ...]
@@ -244,7 +249,7 @@ class DesignSpec:
     iterations: int = 80
     levels: int = 64
     palette_error: float | None = None
-    method: Literal["auto", "mma", "oc"] = "auto"
+    method: Literal["auto", "mma", "gcmma", "oc", "mirror"] = "auto"
     move: float = 0.2
     seed: int = 0
 
@@ -298,8 +303,8 @@ class DesignSpec:
             )
         if any(a not in "xyz" or len(a) != 1 for a in self.symmetry):
             raise InputError(f"Symmetry is any of x, y, z; got {self.symmetry}.")
-        if self.method not in ("auto", "mma", "oc"):
-            raise InputError(f"The method is auto, mma or oc; got {self.method!r}.")
+        if self.method not in _METHODS:
+            raise InputError(f"The method is one of {', '.join(_METHODS)}; got {self.method!r}.")
         if self.void_law not in ("bounded", "plain"):
             raise InputError(f"The void law is bounded or plain; got {self.void_law!r}.")
         simple = [x for x in self.limits if not isinstance(x, AtMost | AtLeast)]

@@ -1,7 +1,8 @@
 """Unknowns that say which resins a voxel is made of: fractions on the simplex.
 
 One coordinate for two resins (the fraction of the second), K for more, which a softmax turns into
-fractions. Blends are not penalised. Where only pure resins may be printed, the fractions are
+fractions; or, with `simplex`, the K fractions themselves, which the optimiser then keeps above 0
+and summing to 1. Blends are not penalised. Where only pure resins may be printed, the fractions are
 sharpened, w_m <- w_m^q / sum_n w_n^q, with q rising in the same stages as the projection of the
 densities: at the last one a blend is left only where the unknowns hardly prefer any resin.
 """
@@ -67,6 +68,8 @@ class Blending:
         Whether to end at pure resins.
     width : float or None
         mm over which any fraction takes at least to go from 0 to 1.
+    simplex : bool
+        The coordinates are fractions: for `voxelmat.topopt.mirror.MirrorDescent`.
     """
 
     def __init__(
@@ -78,10 +81,13 @@ class Blending:
         *,
         pure: bool = False,
         width: float | None = None,
+        simplex: bool = False,
     ) -> None:
         self._choice, self.palette, self.pure = choice, palette, pure
         self.resins = palette.bulk.size
-        self.coordinates = {1: 0, 2: 1}.get(self.resins, self.resins)
+        self.simplex = simplex and self.resins > 1
+        few = {1: 0} if simplex else {1: 0, 2: 1}
+        self.coordinates = few.get(self.resins, self.resins)
         self._free = choice.domain & (choice.resin < 0) & ~choice.empty
         if self.coordinates == 0:
             self._free = np.zeros_like(choice.domain)
@@ -107,6 +113,9 @@ class Blending:
         """Coordinates (c, m) of blends (K, m)."""
         if self.coordinates == 0:
             return np.empty((0, fractions.shape[1]))
+        if self.simplex:
+            above = np.maximum(fractions, 1e-6)
+            return np.asarray(above / above.sum(0))
         if self.coordinates == 1:
             return fractions[1:2].copy()
         z = np.log(np.maximum(fractions, 1e-6)) / _SHARPNESS
@@ -131,7 +140,9 @@ class Blending:
             w[0][c.domain] = 1.0
             return
         smooth = np.array([self._smooth(v) for v in x.reshape(self.coordinates, -1)])
-        if self.coordinates == 1:
+        if self.simplex:
+            w[:, free] = np.maximum(smooth, 0.0)
+        elif self.coordinates == 1:
             second = np.clip(smooth[0], 0.0, 1.0)
             w[0][free], w[1][free] = 1.0 - second, second
         else:
@@ -198,7 +209,9 @@ class Blending:
             c_w = sharpen_back(sharp, ratio, self._exponent(draft), c_w)
         elif self._wide is not None:
             w = draft.memory["narrow"]
-        if self.coordinates == 1:
+        if self.simplex:
+            by_coordinate = c_w
+        elif self.coordinates == 1:
             by_coordinate = (c_w[1] - c_w[0])[None]
         else:
             by_coordinate = _SHARPNESS * w * (c_w - (c_w * w).sum(0))

@@ -48,6 +48,8 @@ class Unknowns:
         Least width of the change from one resin to another, mm.
     overhang : float or None
         Self-support angle, degrees.
+    simplex : bool
+        Blend unknowns are fractions, see `Blending`.
     extra : tuple of Kind
         Further kinds; they see the blends' moduli and come before the voids.
     """
@@ -65,6 +67,7 @@ class Unknowns:
         pure: bool = False,
         width: float | None = None,
         overhang: float | None = None,
+        simplex: bool = False,
         extra: tuple[Kind, ...] = (),
     ) -> None:
         self.choice, self.palette, self.threshold = choice, palette, threshold
@@ -75,8 +78,9 @@ class Unknowns:
             None if overhang is None or void is None else SelfSupport(overhang, spacing),
         )  # fmt: skip
         self.blending = Blending(
-            choice, palette, spacing, blend_radius or radius, pure=pure, width=width
-        )
+            choice, palette, spacing, blend_radius or radius, pure=pure, width=width,
+            simplex=simplex,
+        )  # fmt: skip
         #: In the order in which they act; x holds them from the last to the first.
         self.kinds: tuple[Kind, ...] = (self.blending, *extra[::-1], self.density)
         self.n_rho = self.density.n
