@@ -256,7 +256,8 @@ class OptimiseEntry:
     Exactly one of `objective` (``"compliance"`` or ``"target deflection"``; empty where not used)
     and `goal` says what is made least or greatest; `measured` are limits on any measure. Where
     `levels` is None, the palette is as small as `palette_error` (a share of the objective)
-    allows. `rules` are further tables and keys as the file has them (`RULE_KEYS`). With `skip` a run takes the layout as it is. `design_in` names the regions that are designed
+    allows. `rules` are further tables and keys as the file has them (`RULE_KEYS`). With `skip` a
+    run takes the layout as it is. `design_in` names the regions that are designed
     (empty: the whole part), `keep`, `solid`, `empty` and `protected` name regions, `fixed` pairs
     a region with the resin it must be.
     """
