@@ -100,6 +100,9 @@ def test_a_thin_wall_and_a_thin_gap(tmp_path):
     found = only(preflight(written(tmp_path, labels), deep=False), "thin wall or strut")
     near(found.place_mm, (7.1, 0.6, 1.2), by=0.5)
     assert found.limit == 0.5
+    named = codes(preflight(written(tmp_path, labels)))  # in three dimensions a wall is a wall
+    assert "wall under minimum" in named
+    assert not {"strut under minimum", "thin wall or strut"} & named
     labels[8:10, 2:10, 6:12] = 1  # 0.5 mm
     assert "thin wall or strut" not in codes(preflight(written(tmp_path, labels), deep=False))
     labels = slab()

@@ -136,6 +136,18 @@ def test_limits_that_differ_by_axis_and_other_orientations(tmp_path):
     near(one.place_mm, (20.5, 12, 15), free=(1, 2))
 
 
+def test_the_limit_of_a_strut_goes_with_the_way_it_runs(tmp_path):
+    labels = graded()
+    labels[8:32, :, 8:] = 0
+    labels[8:32, 10:13, 14:17] = 7  # 0.6 mm, along x of the part
+    sizes = MinimumSizes.of(wall=0.5, gap=0.5, hole=0.5, strut=(0.4, 0.9, 0.4))
+    profile = STANDARD.replace(minimum=sizes)
+    assert found(tmp_path / "a", labels, profile) == []
+    (one,) = found(tmp_path / "b", labels, profile, orientation=["z 90"])  # along tray y
+    assert one.code == "strut under minimum"
+    assert one.limit == pytest.approx(0.9, rel=0.01)
+
+
 def test_bands_find_the_same(tmp_path, monkeypatch):
     labels = graded()
     labels[:, :, 8:] = 0

@@ -27,9 +27,11 @@ class MinimumSizes:
     Attributes
     ----------
     wall, gap : float
-        Thickness of a wall, width of a gap between two, across the axis.
+        Thickness of a wall, width of a gap between two. Of three values, that of z is for walls
+        and gaps that are thin along z: a wall of this kind lies flat.
     hole, strut : float
-        Diameter across the axis.
+        Diameter. Of three values, that of z is for holes and struts that run along z: a strut of
+        this kind stands upright.
     text : float
         Width of a stroke.
     feature : float
@@ -95,22 +97,22 @@ class MinimumSizes:
 
     @property
     def wall_xyz(self) -> Triple:
-        """Walls along tray x, y and z, mm."""
+        """Walls that are thin along tray x, y and z, mm."""
         return self.xyz("wall")
 
     @property
     def gap_xyz(self) -> Triple:
-        """Gaps along tray x, y and z, mm."""
+        """Gaps that are thin along tray x, y and z, mm."""
         return self.xyz("gap")
 
     @property
     def hole_xyz(self) -> Triple:
-        """Holes along tray x, y and z, mm."""
+        """Diameters of holes that run along tray x, y and z, mm."""
         return self.xyz("hole")
 
     @property
     def strut_xyz(self) -> Triple:
-        """Struts along tray x, y and z, mm."""
+        """Diameters of struts that run along tray x, y and z, mm."""
         return self.xyz("strut")
 
     @property

@@ -30,7 +30,7 @@ class KitRow:
     kind : str
         A kind of `TESTED`, "dimension", "blend" or "peel".
     axis : str
-        "x", "y", "z" or "". Walls and gaps are thin along it; struts and holes run along it.
+        "x", "y", "z" or "", as in `voxelmat.model.minimum_sizes.MinimumSizes`.
     nominal_mm : float
         Size of the feature; share of the soft resin for a blend.
     place_mm : tuple of float

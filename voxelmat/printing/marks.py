@@ -186,7 +186,7 @@ def mark_cells(text: tuple[str, ...]) -> NDArray[np.bool_]:
 def stroke_mm(profile: PrintProfile, axis: int) -> float:
     """Width of strokes, and of the gaps between, across a tray axis; also a depth along it."""
     m = profile.minimum
-    return max(m.text_xyz[axis], m.gap_xyz[axis], min(m.wall_xyz[axis], m.strut_xyz[axis]))
+    return max(m.text_xyz[axis], m.gap_xyz[axis], min(m.wall_xyz[axis], m.strut))
 
 
 def tag_part(text: tuple[str, ...], resin: Material, profile: PrintProfile, *, name: str) -> Part:

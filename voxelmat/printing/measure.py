@@ -35,16 +35,24 @@ class Measured:
         Site in the block.
     flat : bool
         True for a wall or gap, False for a strut or hole.
+    along : tuple of float
+        Unit vector along its longest direction: the way that a strut or hole runs.
     """
 
     thickness: float
     normal: Triple
     at: Sites
     flat: bool
+    along: Triple
 
     def allowed(self, limit: Triple) -> float:
-        """The limit across it, mm, where the limit differs along layers, rows and columns."""
-        return math.sqrt(sum((a * b) ** 2 for a, b in zip(self.normal, limit, strict=True)))
+        """The limit, mm, where it differs along layers, rows and columns.
+
+        That of a wall or gap counts across it, that of a strut or hole the way it runs; see
+        `voxelmat.model.minimum_sizes.MinimumSizes`.
+        """
+        way = self.normal if self.flat else self.along
+        return math.sqrt(sum((a * b) ** 2 for a, b in zip(way, limit, strict=True)))
 
     def site(self, pitch: Triple) -> float:
         """Length of a site across it, mm."""
@@ -86,7 +94,8 @@ def measure(block: Bools, at: Sites, limit: Triple, pitch: Triple) -> Measured |
     sites = np.argwhere(inside > 0)
     deepest = deepest_of(sites, inside[tuple(sites.T)])
     thickness, normal = width_at(block, deepest, pitch)
-    return Measured(thickness, normal, deepest, _flat(block, deepest, 1.5 * max(limit), pitch))
+    flat, along = _form(block, deepest, 1.5 * max(limit), pitch)
+    return Measured(thickness, normal, deepest, flat, along)
 
 
 def deepest_of(sites: NDArray[np.int64], depth: NDArray[np.float64]) -> Sites:
@@ -126,8 +135,8 @@ def width_at(block: Bools, at: Sites, pitch: Triple) -> tuple[float, Triple]:
     return length, (float(normal[0]), float(normal[1]), float(normal[2]))
 
 
-def _flat(block: Bools, at: Sites, radius: float, pitch: Triple) -> bool:
-    """Whether the piece round a site is long in two directions rather than one."""
+def _form(block: Bools, at: Sites, radius: float, pitch: Triple) -> tuple[bool, Triple]:
+    """Whether the piece round a site is long in two directions rather than one, and the longest."""
     reach = [int(radius / p) for p in pitch]
     low = [max(0, a - n) for a, n in zip(at, reach, strict=True)]
     cut = tuple(slice(b, a + n + 1) for a, b, n in zip(at, low, reach, strict=True))
@@ -136,6 +145,8 @@ def _flat(block: Bools, at: Sites, radius: float, pitch: Triple) -> bool:
     points = (np.argwhere(pieces == pieces[here]) - here) * np.array(pitch)
     points = points[(points**2).sum(axis=1) <= radius**2]
     if len(points) < 4:
-        return False
-    spread = np.sqrt(np.clip(np.linalg.eigvalsh(np.cov(points.T)), 1e-12, None))
-    return bool(spread[1] > _WALL_RATIO * spread[0])
+        return False, (1.0, 0.0, 0.0)
+    size, ways = np.linalg.eigh(np.cov(points.T))
+    spread = np.sqrt(np.clip(size, 1e-12, None))
+    z, y, x = (float(v) for v in ways[:, 2])
+    return bool(spread[1] > _WALL_RATIO * spread[0]), (z, y, x)

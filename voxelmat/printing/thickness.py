@@ -40,6 +40,16 @@ class _Kind:
     flat: bool | None  # only walls, only struts, or either
     limit: Triple
 
+    @property
+    def ball(self) -> Triple:
+        """Diameters of the ball that what is thick enough holds.
+
+        A wall's limit counts across it. That of a strut depends on the way it runs, which only
+        measuring tells, so the largest is screened for.
+        """
+        most = max(self.limit)
+        return self.limit if self.flat else (most, most, most)
+
 
 def image_triple(stack: Stack, xyz: Triple) -> Triple:
     """Values along tray x, y, z in the order layers, rows, columns."""
@@ -54,7 +64,7 @@ def _kinds(stack: Stack, profile: PrintProfile) -> list[_Kind]:
         (True, least.wall_xyz, least.strut_xyz),
         (False, least.gap_xyz, least.hole_xyz),
     ):
-        if flat == thin:
+        if flat == thin and len(set(flat)) == 1:
             kinds: list[tuple[bool | None, Triple]] = [(None, flat)]
         else:
             kinds = [(True, flat), (False, thin)]
@@ -121,7 +131,7 @@ def thickness_findings(
     profile = stack.profile if profile is None else profile
     pitch = image_triple(stack, stack.pitch_mm)
     kinds = _kinds(stack, profile)
-    sizes = [(image_sizes(k.limit, pitch), k.solid) for k in kinds]
+    sizes = [(image_sizes(k.ball, pitch), k.solid) for k in kinds]
     places: list[list[tuple[Piece, int]]] = [[] for _ in kinds]
     bands = _bands(stack, sizes)
     for number, rows in enumerate(bands):
@@ -182,7 +192,7 @@ def _named(
 
 
 def _measured(stack: Stack, kind: _Kind, at: Sites, pitch: Triple) -> tuple[Sites, Measured | None]:
-    reach = [4 * n + 2 for n in image_sizes(kind.limit, pitch)]
+    reach = [4 * n + 2 for n in image_sizes(kind.ball, pitch)]
     low = tuple(a - n for a, n in zip(at, reach, strict=True))
     high = tuple(a + n + 1 for a, n in zip(at, reach, strict=True))
     start = (low[0], low[1], low[2])
@@ -190,7 +200,7 @@ def _measured(stack: Stack, kind: _Kind, at: Sites, pitch: Triple) -> tuple[Site
     if not kind.solid:
         block = ~block
     here = (reach[0], reach[1], reach[2])
-    return start, measure(block, here, kind.limit, pitch)
+    return start, measure(block, here, kind.ball, pitch)
 
 
 def solid_block(stack: Stack, low: Sites, high: Sites) -> NDArray[np.bool_]:
