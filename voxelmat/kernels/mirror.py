@@ -40,8 +40,8 @@ def simplex_step(w, slope, prices, rate, least, new, value, curvature):
             for k in range(resins):
                 for i in range(m):
                     off = rate * h[k] * (slope[1 + i, k, j] - mean[i])
-                    for l in range(m):
-                        bend[i, l] += off * (slope[1 + l, k, j] - mean[l])
+                    for c in range(m):
+                        bend[i, c] += off * (slope[1 + c, k, j] - mean[c])
         value[b] = total
         curvature[b] = bend
 
@@ -69,7 +69,7 @@ def interval_step(x, slope, prices, rate, least, new, value, curvature):
             new[j] = y
             for i in range(m):
                 total[i] += slope[1 + i, j] * (y - x[j])
-                for l in range(m):
-                    bend[i, l] += rate * y * (1.0 - y) * slope[1 + i, j] * slope[1 + l, j]
+                for c in range(m):
+                    bend[i, c] += rate * y * (1.0 - y) * slope[1 + i, j] * slope[1 + c, j]
         value[b] = total
         curvature[b] = bend

@@ -30,5 +30,6 @@ def stepper_of(spec: DesignSpec, problem: LayoutProblem) -> Stepper:
         return MovingAsymptotes(problem.low, problem.high, move=spec.move, back="exceeded")
     amounts = all(isinstance(b.response, Amount) for b in problem.bounds)
     plain = isinstance(spec.objective, Compliance) and amounts
-    back = "none" if plain else "worse"
-    return MovingAsymptotes(problem.low, problem.high, move=spec.move, back=back)
+    return MovingAsymptotes(
+        problem.low, problem.high, move=spec.move, back="none" if plain else "worse"
+    )
