@@ -16,16 +16,18 @@ from voxelmat.topopt.physics import Case
 __all__ = ["as_arrays"]
 
 
-def as_arrays(part: Part, load_cases: Sequence[LoadCase]) -> tuple[Case, ...]:
+def as_arrays(
+    part: Part, load_cases: Sequence[LoadCase], *, needed: bool = True
+) -> tuple[Case, ...]:
     """Forces, supports and springs of each load case on the nodes of the part.
 
     Raises
     ------
     InputError
-        No load case, two of one name, one without a force, a body force or a prescribed
+        No load case where one is `needed`, two of one name, one without a force, a body force or a prescribed
         displacement (their work changes with the design), a part or a piece that is not held.
     """
-    if not load_cases:
+    if needed and not load_cases:
         raise InputError("There is no load case, so there is nothing to design for; add one.")
     names = [c.name for c in load_cases]
     if len(set(names)) != len(names):

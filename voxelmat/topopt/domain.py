@@ -262,7 +262,7 @@ def _carrying(
 ) -> Bools:
     """Voxels that loads, springs and full supports act on, and those whose motion is asked for."""
     out = np.zeros_like(empty)
-    loaded = np.zeros(cases[0].force.shape[1:], dtype=bool)
+    loaded = np.zeros(tuple(n + 1 for n in empty.shape), dtype=bool)
     held = np.zeros_like(loaded)
     for case in cases:
         loaded |= (case.force != 0).any(axis=0)

@@ -36,7 +36,7 @@ from voxelmat.topopt.response_strength import StrengthResponse
 from voxelmat.topopt.responses import ComplianceResponse, Response, TargetResponse
 from voxelmat.topopt.setting import Setting, case_number
 
-__all__ = ["asked_nodes", "response_of", "root_of", "with_springs"]
+__all__ = ["asked_nodes", "needs_loads", "response_of", "root_of", "with_springs"]
 
 Array = NDArray[np.float64]
 Bools = NDArray[np.bool_]
@@ -73,6 +73,11 @@ def asked_nodes(measure: object) -> list[tuple[str, Bools]]:
     if isinstance(measure, OutputOfMechanism):
         return [("mechanism's output", measure.output), ("mechanism's input", measure.input)]
     return []
+
+
+def needs_loads(measure: object) -> bool:
+    """Whether a measure is read off the displacements of load cases."""
+    return type(measure) not in AMOUNTS and type(measure) not in PHYSICS
 
 
 def with_springs(cases: tuple[Case, ...], measures: tuple[object, ...]) -> tuple[Case, ...]:

@@ -12,11 +12,13 @@ from voxelmat.model.part import Part
 from voxelmat.monitor import SILENT, Monitor
 from voxelmat.topopt.cases import as_arrays
 from voxelmat.topopt.domain import build_choice, resin_numbers
+from voxelmat.topopt.ensemble import SharedSystems, ensemble_of, loads_of
 from voxelmat.topopt.interpolation import VoidLaw
 from voxelmat.topopt.limits import goal_of, limits_of
-from voxelmat.topopt.measures import with_springs
-from voxelmat.topopt.physics import Physics
+from voxelmat.topopt.measures import needs_loads, with_springs
+from voxelmat.topopt.physics import Case, Physics
 from voxelmat.topopt.problem import LayoutProblem
+from voxelmat.topopt.robust import RobustProblem
 from voxelmat.topopt.unknowns import Choice, Palette, Unknowns
 
 __all__ = ["layout_problem", "unknowns_of"]
@@ -37,16 +39,26 @@ def layout_problem(
     InputError
         As `optimise`.
     """
-    cases = with_springs(as_arrays(part, load_cases), spec.measures)
-    choice, notes = build_choice(part, spec, cases)
+    needed = any(needs_loads(m) for m in spec.measures)
+    cases = with_springs(as_arrays(part, load_cases, needed=needed), spec.measures)
+    loads = loads_of(spec, part, cases)
+    # Voxels that carry a load stay solid, wherever that load may act.
+    acting = (*cases, *(case for pair in loads for side in pair for case in side))
+    choice, notes = build_choice(part, spec, acting)
     unknowns = unknowns_of(part, spec, choice)
-    physics = Physics(cases, part.grid.spacing, element=element, monitor=monitor)
-    problem = LayoutProblem(
-        unknowns,
-        physics,
-        goal_of(spec, part, cases, unknowns),
-        limits_of(spec, part, cases, unknowns),
-        spec.projection,
+    goal = goal_of(spec, part, cases, unknowns)
+    bounds = limits_of(spec, part, cases, unknowns)
+    if spec.robust is None and not spec.scatter:
+        physics = Physics(cases, part.grid.spacing, element=element, monitor=monitor)
+        return LayoutProblem(unknowns, physics, goal, bounds, spec.projection), notes
+    systems = SharedSystems()
+
+    def physics_of(of: tuple[Case, ...]) -> Physics:
+        return Physics(of, part.grid.spacing, element=element, monitor=monitor, system=systems)
+
+    ensemble = ensemble_of(spec, part, cases, loads, unknowns, physics_of)
+    problem = RobustProblem(
+        unknowns, physics_of(cases), goal, bounds, spec.projection, ensemble, systems
     )
     return problem, notes
 
@@ -82,4 +94,5 @@ def unknowns_of(part: Part, spec: DesignSpec, choice: Choice) -> Unknowns:
         pure=spec.blends == "pure",
         width=spec.interface_width,
         overhang=spec.support_angle,
+        simplex=spec.method == "mirror",
     )
