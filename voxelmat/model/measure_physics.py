@@ -24,6 +24,7 @@ __all__ = [
     "PeakTemperature",
     "ThermalCompliance",
     "TrappedSupport",
+    "Warpage",
 ]
 
 
@@ -245,3 +246,36 @@ class TrappedSupport:
 
     def __post_init__(self) -> None:
         _exponent(self.exponent, "trapped support")
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Warpage:
+    """How far a region moves when the temperature of the whole part changes, rms, mm.
+
+    Attributes
+    ----------
+    change_K : float
+        Of the temperature, from where the part is free of stress.
+    region : Region
+        Its nodes count.
+    supports : tuple of Support
+        Held still; they must leave the part no free motion.
+    springs : tuple of GroundSpring or Foundation
+    direction : tuple of float
+        Along which the displacement counts; scaled to length 1.
+    """
+
+    change_K: float
+    region: Region
+    supports: tuple[Support, ...] = ()
+    springs: tuple[GroundSpring | Foundation, ...] = ()
+    direction: tuple[float, float, float] = (0.0, 0.0, 1.0)
+
+    def __post_init__(self) -> None:
+        if not (math.isfinite(self.change_K) and self.change_K != 0):
+            raise InputError(f"Warping needs a change of temperature, K; got {self.change_K!r}.")
+        length = math.sqrt(sum(d * d for d in self.direction))
+        if not (math.isfinite(length) and length > 0):
+            raise InputError(f"The direction of warping must not be 0; got {self.direction}.")
+        x, y, z = (float(d) / length for d in self.direction)
+        object.__setattr__(self, "direction", (x, y, z))

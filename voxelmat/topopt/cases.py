@@ -24,8 +24,9 @@ def as_arrays(
     Raises
     ------
     InputError
-        No load case where one is `needed`, two of one name, one without a force, a body force or a prescribed
-        displacement (their work changes with the design), a part or a piece that is not held.
+        No load case where one is `needed`, two of one name, one without a force, a body force or
+        a prescribed displacement (their work changes with the design), a part or a piece that is
+        not held.
     """
     if needed and not load_cases:
         raise InputError("There is no load case, so there is nothing to design for; add one.")

@@ -14,12 +14,14 @@ from voxelmat.model.measure_physics import (
     PeakTemperature,
     ThermalCompliance,
     TrappedSupport,
+    Warpage,
 )
 from voxelmat.topopt.response_cell import cell_response
 from voxelmat.topopt.response_contact import contact_response
 from voxelmat.topopt.response_frequency import frequency_response
 from voxelmat.topopt.response_temperature import temperature_response
 from voxelmat.topopt.response_trapped import trapped_response
+from voxelmat.topopt.response_warp import warp_response
 from voxelmat.topopt.responses import Response
 from voxelmat.topopt.setting import Setting
 
@@ -43,4 +45,5 @@ PHYSICS: dict[type, Callable[[Any, Setting], Response]] = {
     MeanTemperature: _temperature,
     ThermalCompliance: _temperature,
     TrappedSupport: lambda m, s: trapped_response(m, s.part, s.unknowns, s.key),
+    Warpage: lambda m, s: warp_response(m, s.part, s.unknowns, s.key),
 }
