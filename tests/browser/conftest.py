@@ -269,6 +269,7 @@ def notebook(lab, chromium, request):
 
 _AXE = """async place => {
     const found = await axe.run(place, {resultTypes: ['violations']});
+    if (found.passes.length < 10) throw new Error(`axe looked at nothing in ${place}`);
     return found.violations.filter(v => ['serious', 'critical'].includes(v.impact))
         .flatMap(v => v.nodes.map(n => `${v.id} (${v.impact}): ${n.html.slice(0, 160)} ` +
             n.any.concat(n.all).map(m => m.message).join('; ').slice(0, 200)));

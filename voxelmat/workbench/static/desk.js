@@ -131,13 +131,18 @@ function render({model, el}) {
     table: s => {
       const table = element('table', {className: s.stale ? 'data stale' : 'data'},
         element('caption', {textContent: s.caption}));
-      const head = element('tr', {}, ...s.head.map(h => {
-        const cell = element('th', {textContent: h}); cell.scope = 'col'; return cell; }));
+      const figure = text => /^[-+\u2212]?[\d.]/.test(text) && !/[a-z]{4}/i.test(text);
+      const head = element('tr', {}, ...s.head.map((h, i) => {       // as its column is set
+        const right = s.rows.length && s.rows.every(row => !row[i] || figure(row[i])) && s.rows.some(row => row[i]);
+        const cell = element('th', {textContent: h, className: right ? 'figure' : ''});
+        cell.scope = 'col';
+        return cell;
+      }));
       if (s.actions.length) head.append(element('td', {}));
       const rows = s.rows.map((row, r) => {
         const tr = element('tr', {className: r === s.chosen ? 'chosen' : ''}, ...row.map((text, i) => {
           const cell = element('td', {textContent: text});
-          if (/^[-+\u2212]?[\d.]/.test(text) && !/[a-z]{4}/i.test(text)) cell.className = text.length < 12 ? 'figure' : 'figure long';
+          if (figure(text)) cell.className = text.length < 12 ? 'figure' : 'figure long';
           if (i === 0 && s.colours && s.colours[r]) {
             const swatch = element('span', {className: 'swatch'});
             swatch.style.background = s.colours[r]; cell.prepend(swatch, ' ');
@@ -159,7 +164,13 @@ function render({model, el}) {
       });
       if (!rows.length) rows.push(element('tr', {}, element('td', {colSpan: s.head.length, textContent: 'nothing yet'})));
       table.append(element('thead', {}, head), element('tbody', {}, ...rows));
-      return element('div', {className: 'scroll'}, table);
+      const scroll = element('div', {className: 'scroll'}, table);
+      new ResizeObserver(() => {                            // what scrolls can be reached by keys
+        const wide = scroll.scrollWidth > scroll.clientWidth + 1;
+        if (wide) { scroll.tabIndex = 0; scroll.setAttribute('role', 'region'); scroll.setAttribute('aria-label', s.caption); }
+        else ['tabindex', 'role', 'aria-label'].forEach(a => scroll.removeAttribute(a));
+      }).observe(scroll);
+      return scroll;
     },
     picture: s => {
       const image = element('img', {src: s.url, alt: s.alt, draggable: false, className: 'still'});
