@@ -254,6 +254,20 @@ def test_error_diffusion_is_not_shared_out(tmp_path):
     assert images(tmp_path / "one") == images(tmp_path / "two")
 
 
+def test_error_diffusion_that_does_not_fit_is_refused(tmp_path, monkeypatch):
+    job = one_part_job(part(), STANDARD, halftone=Halftone(method="error diffusion"))
+    _, rows, columns = job.window.image_shape
+    needed = rows * columns * (4 * 3 + 1)  # three resins
+    monkeypatch.setattr("voxelmat.fea.resources.available_bytes", lambda: 2 * needed - 1)
+    with pytest.raises(ResourceError, match="Take the halftone 'blue noise'"):
+        write_job(job, tmp_path / "s")
+    assert not (tmp_path / "s").exists()
+    monkeypatch.setattr("voxelmat.fea.resources.available_bytes", lambda: 2 * needed)
+    assert write_job(job, tmp_path / "s").n_layers == job.window.shape[2]
+    monkeypatch.setattr("voxelmat.fea.resources.available_bytes", lambda: 0)
+    write_job(job.replace(halftone=Halftone()), tmp_path / "blue")  # carries nothing
+
+
 def test_bad_counts(tmp_path):
     for options in ({"workers": 0}, {"workers": 2, "threads": 2}, {"slab": 0}, {"threads": 0}):
         with pytest.raises(InputError, match=r"Workers, threads|one thread"):

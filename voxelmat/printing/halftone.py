@@ -207,6 +207,14 @@ class Slicer:
         """True where a layer needs those below it: runs that start higher up make them again."""
         return self.halftone.is_serial
 
+    @property
+    def state_bytes(self) -> int:
+        """Memory of what error diffusion carries from layer to layer; 0 for other methods."""
+        if not self.serial:
+            return 0
+        _, n_rows, n_columns = self.image_shape
+        return n_rows * n_columns * (4 * len(self.order) + 1)
+
     # ------------------------------------------------------------------ planes
     def _plane(self, cursor: PlaneCursor, k: int) -> _Fields:
         plane = cursor.plane(k)

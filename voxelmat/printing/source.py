@@ -9,6 +9,7 @@ from typing import Protocol
 import numpy as np
 from numpy.typing import NDArray
 
+from voxelmat.errors import ResourceError
 from voxelmat.kernels.sites import deal_sites
 from voxelmat.printing.compose import TraySource
 from voxelmat.printing.halftone import Slicer, packed_planes
@@ -79,6 +80,8 @@ def source_of(job: PrintJob, scratch: Path | None = None) -> LayerSource:
     ------
     InputError
         If a window of several does not start at a whole byte of the images.
+    ResourceError
+        If error diffusion would carry more than there is memory for.
     """
     slicers: list[Slicer] = []
     shared: dict[tuple[int, Matrix], DesignPlanes] = {}
@@ -86,9 +89,31 @@ def source_of(job: PrintJob, scratch: Path | None = None) -> LayerSource:
         key = (id(item.part), item.raster.rotation)
         slicers.append(slicer_of(job, item, scratch, shared.get(key)))
         shared[key] = slicers[-1].planes
+    _check_state(slicers)
     if len(slicers) == 1 and job.window == job.parts[0].raster:
         return slicers[0]
     return TraySource(job.parts, slicers, job.window)
+
+
+#: Share of the memory that can be had which the state of error diffusion may take. Ours.
+STATE_SHARE = 0.5
+
+
+def _check_state(slicers: Sequence[Slicer]) -> None:
+    """Refuse error diffusion of layers whose state does not fit, before a layer is written."""
+    needed = sum(s.state_bytes for s in slicers)
+    if not needed:
+        return
+    from voxelmat.fea.resources import available_bytes  # brings the solver with it
+
+    free = available_bytes()
+    if free is not None and needed > STATE_SHARE * free:
+        raise ResourceError(
+            f"Error diffusion carries {needed / 2**30:.3g} GiB from layer to layer here (four "
+            "bytes a site and resin, and one a site), and at most half of the "
+            f"{free / 2**30:.3g} GiB of free memory may go to it. Take the halftone 'blue noise', "
+            "which carries nothing, or print fewer parts at a time."
+        )
 
 
 class Dealer:
