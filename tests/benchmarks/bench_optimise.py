@@ -82,7 +82,7 @@ def csr_product(shape):
 
 def cantilever(shape):
     """x = 0 clamped, a line load at the lower edge of the far face; two resins and void."""
-    nx, ny, nz = shape
+    nx, ny, _nz = shape
     part = Part(
         grid=VoxelGrid(shape=shape, spacing=(1.0, 1.0, 1.0)),
         resins=(resin("light", 500.0, 0.4e-9), resin("stiff", 2000.0, 1e-9)),
