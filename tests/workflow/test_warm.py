@@ -21,8 +21,8 @@ from voxelmat.model.region import FaceRegion
 from voxelmat.monitor import CancelFlag
 from voxelmat.workflow.warm import warm, warm_lines
 
-# Run once by whoever makes the mask that is shipped, never by a user.
-NEVER = {"void_and_cluster"}
+# Run once by whoever makes the mask that is shipped, never by a user; compiled into its caller.
+NEVER = {"void_and_cluster", "hash_row"}
 
 
 class Listener:

@@ -16,6 +16,7 @@ from voxelmat.shape.inside import contains
 from voxelmat.shape.solid import box, cylinder
 from voxelmat.workflow.build import Built, build
 from voxelmat.workflow.pipeline import run
+from voxelmat.workflow.warm_printing import rare_prints
 
 __all__ = ["warm", "warm_lines"]
 
@@ -161,6 +162,7 @@ def warm(monitor: Monitor = SILENT) -> list[Warmed]:
             ("optimiser", tiny.stages("optimise")),
             ("slicing", tiny.stages("stack")),
             ("reading back", tiny.stages("stack", "as printed")),
+            ("rare prints", lambda: rare_prints(Path(name) / "rare")),
             ("faults of a stack", _first_seen),
         ]
         return compile_groups(groups, monitor)
