@@ -80,6 +80,8 @@ class Physics:
         self._once: dict[str, Any] = {}
         self._fields: Fields | None = None
         self.cg_iterations = 0
+        #: Whether smooth maxima are corrected anew at this design; see `voxelmat.topopt.smooth`.
+        self.renewing = False
 
     def _first_alike(self, n: int) -> int:
         """The first case with the same supports and springs as case n."""

@@ -45,6 +45,8 @@ _OF_MISS = 3e-3
 #: are solved closer by this factor.
 _FORGIVING = (ComplianceResponse, WorstComplianceResponse, TargetResponse, Amount)
 _CLOSER = 0.1
+#: Iterations from one correction of smooth maxima to the true ones to the next.
+_RENEW_EVERY = 5
 
 
 class LayoutProblem:
@@ -65,16 +67,19 @@ class LayoutProblem:
         asked = (goal.response, *(b.response for b in bounds))
         close = not all(isinstance(r, _FORGIVING) for r in asked)
         self._usual = physics.tolerance * (_CLOSER if close else 1.0)
+        self._corrected = any(hasattr(r, "truth") for r in asked)
         self._seen = False
 
     def begin(self, iteration: int, history: tuple[IterationRecord, ...]) -> bool:
-        """Set the penalty, and the solver tolerance that the progress so far calls for."""
+        """Set the penalty, the solver tolerance, and whether smooth maxima are corrected anew."""
         self.physics.tolerance = self._tolerance(history)
         c, void = self._projection, self.unknowns.void
         if void is not None and c.penalties:
             penalty = c.penalties[min(c.stage(iteration), len(c.penalties) - 1)]
             self.unknowns.void = replace(void, penalty=penalty)
-        return iteration > 0 and c.stage(iteration) != c.stage(iteration - 1)
+        self.physics.renewing = self._corrected and iteration % _RENEW_EVERY == 0
+        another = iteration > 0 and c.stage(iteration) != c.stage(iteration - 1)
+        return another or self.physics.renewing
 
     def sharpness(self, iteration: int) -> float:
         """Of the projection in this iteration."""

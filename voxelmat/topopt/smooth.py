@@ -1,10 +1,11 @@
 """A smooth maximum with its slopes, corrected to the true one as a run goes on.
 
 The p-norm (sum v^P)^(1/P) of many equal values lies far above the largest (1.9 times for the
-stresses of a bracket at P = 8). So it is scaled by the ratio of the true maximum to it, taken
-from the designs before, half of the way each time (C. Le, J. Norato, T. Bruns, C. Ha, D.
-Tortorelli, Struct. Multidisc. Optim. 41 (2010) 605, from memory). The ratio is held while a
-design is evaluated, so the gradient stays exact, and it goes into checkpoints.
+stresses of a bracket at P = 8). So it is scaled by the ratio of the true maximum to it (C. Le,
+J. Norato, T. Bruns, C. Ha, D. Tortorelli, Struct. Multidisc. Optim. 41 (2010) 605, from memory).
+The ratio is taken at some designs and held in between, not brought up to date at each: then
+value and gradient belong together, and an optimiser that compares a design with the one before it
+compares values of one function. It goes into checkpoints.
 """
 
 from __future__ import annotations
@@ -34,17 +35,17 @@ def smooth_maximum(values: Array, exponent: float) -> tuple[float, Array]:
 
 
 def correction(physics: Physics, key: str, value: float, largest: float) -> float:
-    """The ratio that `physics` remembers under `key`, which is brought up to date; 1 for value 0.
+    """The ratio that `physics` remembers under `key`, taken anew where it says so; 1 for value 0.
 
     Apply it last: adjoints that the solver keeps must not depend on it.
     """
     if value == 0.0:
         return 1.0
-    now = largest / value
-    known = physics.recall(f"ratio {key}")
-    ratio = now if known is None else float(known[0])
-    physics.remember(f"ratio {key}", np.array([0.5 * (ratio + now)]))
-    return ratio
+    known = None if physics.renewing else physics.recall(f"ratio {key}")
+    if known is not None:
+        return float(known[0])
+    physics.remember(f"ratio {key}", np.array([largest / value]))
+    return largest / value
 
 
 def scaled(ratio: float, value: float, slopes: Mapping[str, Array]) -> tuple[float, Slopes]:
