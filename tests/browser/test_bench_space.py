@@ -82,6 +82,25 @@ def shot(notebook, name):
         notebook.page.screenshot(path=Path(os.environ["VOXELMAT_SHOTS"]) / f"{name}.png")
 
 
+def pair_turns_together(notebook):
+    """Two results side by side: what turns one turns the other, and one picture comes back."""
+    notebook.ask("pair = bench.stage.compare(bench.answers.result(), bench.answers.result())")
+    images = notebook.page.locator(".vm-pair img.space")
+    images.nth(1).wait_for()
+    notebook.page.wait_for_timeout(500)
+    before = images.nth(1).get_attribute("data-seq")
+    images.nth(0).focus()
+    notebook.page.keyboard.press("ArrowLeft")
+    notebook.page.wait_for_function(
+        "([node, n]) => node.dataset.seq !== n", arg=[images.nth(1).element_handle(), before]
+    )
+    assert notebook.ask("print(pair.left.eye == pair.right.eye)") == "True"
+    assert images.nth(0).bounding_box()["y"] == images.nth(1).bounding_box()["y"]  # beside
+    shot(notebook, "space-pair")
+    notebook.page.get_by_role("button", name="Back to one picture").first.click()
+    notebook.page.locator(".vm-pair").wait_for(state="detached")
+
+
 def test_the_part_is_turned_cut_picked_measured_and_saved(notebook, open_bench, gl):
     open_bench("space")
     notebook.ask("bench.jobs.settle(120)")
@@ -173,6 +192,7 @@ def test_materials_loads_fields_and_the_state_after_reopening(notebook, open_ben
     corner = space.pixels()[20:40, -40:-20]
     assert corner.mean() < 60
     shot(notebook, "space-dark")
+    pair_turns_together(notebook)
     notebook.page.wait_for_timeout(900)  # what was seen is kept a moment later
     notebook.page.evaluate(
         "window.jupyterapp.shell.currentWidget.sessionContext.session.kernel.restart()"

@@ -253,6 +253,9 @@ def test_two_results_share_camera_cut_factor_and_scale(made_up):
     told(right, kind="paint", value="von Mises stress")
     assert left.tools["painted"] == right.tools["painted"] == "von Mises stress"
     assert left._scene.half == right._scene.half
+    told(left, kind="see", name="rigid-example", how="ghost")
+    assert left.look.how("rigid-example") == right.look.how("rigid-example") == "ghost"
+    assert "'gone'" in told(left, kind="see", name="gone", how="ghost")
     left_pixels, right_pixels = pixels(left.jpeg()), pixels(right.jpeg())
     assert left_pixels.shape == right_pixels.shape
     assert np.abs(left_pixels - right_pixels).mean() > 0.1

@@ -60,13 +60,14 @@ class Comparison:
                 view.room_for(half)
                 view.changed = _follow(view, other)
                 view.ask = self._asked
+            for view, column in zip(views, ("vm-one", "vm-two"), strict=True):
+                view.add_class(column)
             columns = views
         else:
-            columns = [still_picture(drawn_without_gl(s), s.title) for s in shown]
-        self._columns = [
-            ipywidgets.VBox([notice(n), c]) for n, c in zip(self._names, columns, strict=True)
-        ]
-        pair = ipywidgets.Box(self._columns)
+            for name, one in zip(self._names, shown, strict=True):
+                still = still_picture(drawn_without_gl(one), one.title)
+                columns.append(ipywidgets.VBox([notice(name), still]))
+        pair = ipywidgets.Box(columns)
         pair.add_class("vm-pair")
         rest = [] if probe.works else [notice(f"The pictures stand still. {probe.reason}")]
         self.widget = ipywidgets.VBox([pair, *rest])
@@ -126,16 +127,36 @@ class Comparison:
 
     def _show(self, shown: list[Shown]) -> None:
         fields = all(isinstance(t, StaticResult) for t in self._things)
-        tools: dict[str, Any] = {"paints": ["material", *(FIELDS if fields else ())]}
-        for view, one in zip((self.left, self.right), shown, strict=True):
-            if view is not None:
-                leaves = self._leave is not None and view is self.left
-                view.show(one, None, {**tools, "several": leaves})
+        tools: dict[str, Any] = {
+            "paints": ["material", *(FIELDS if fields else ())],
+            "several": self._leave is not None,
+            "more": [(g.name, g.colour) for s in shown for g in s.solid.groups],
+        }
+        views = [v for v in (self.left, self.right) if v is not None]
+        for view, name, one in zip(views, self._names, shown, strict=False):
+            view.show(one, None, tools, (name,))
+
+    def see(self, name: str, how: str) -> None:
+        """Show a material or a body, hide it, or leave its ghost, wherever it occurs.
+
+        Raises
+        ------
+        InputError
+            If there is nothing of that name in either.
+        """
+        views = [v for v in (self.left, self.right) if v is not None]
+        known = {g for v in views for g in v.materials}
+        if name not in known:
+            raise InputError(f"There is no '{name}'; there are {', '.join(sorted(known))}.")
+        for view in views:
+            view.match(view.look.seen(name, how))
 
     def _asked(self, message: dict[str, Any]) -> bool:
         kind, value = message["kind"], message.get("value")
         if kind == "one" and self._leave is not None:
             self._leave()
+        elif kind == "see":
+            self.see(str(message["name"]), str(message["how"]))
         elif kind == "paint":
             self.paint(str(value))
         elif kind == "factor":

@@ -126,6 +126,14 @@ class Scene:
             float(up + (0.5 - y) * self.size[1] * self.pixel_mm),
         )
 
+    def along(self, axis: int, dx: float, dy: float) -> float:
+        """How far a move in the picture (shares of its height, down) goes along an axis, mm."""
+        across = self.eye.axes()[:2, axis]
+        length = float(np.hypot(*across))
+        # An axis that points at the viewer has no direction in the picture: then up is onwards.
+        share = (dx * across[0] - dy * across[1]) / length**2 if length > 0.2 else -dy
+        return share * 2.0 * self.half
+
     def fit(self) -> None:
         """Move and zoom so that what is drawn fills the picture."""
         if not len(self._points):

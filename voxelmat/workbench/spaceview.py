@@ -148,10 +148,15 @@ class SpaceView(anywidget.AnyWidget):
         InputError
             If there is nothing of that name.
         """
-        known = [g.name for g in self._shown.solid.groups]
-        if name not in known:
-            raise InputError(f"There is no '{name}' in the picture; there are {', '.join(known)}.")
+        if name not in self.materials:
+            there = ", ".join(self.materials)
+            raise InputError(f"There is no '{name}' in the picture; there are {there}.")
         self._looks(self._look.seen(name, how))
+
+    @property
+    def materials(self) -> list[str]:
+        """Names of what `see` can hide: resins, blends, bodies."""
+        return [g.name for g in self._shown.solid.groups]
 
     @property
     def look(self) -> Look:
@@ -201,8 +206,9 @@ class SpaceView(anywidget.AnyWidget):
         """What the tool bar shows."""
         look, solid, shown = self._look, self._shown.solid, self._shown
         n = solid.drawn.grid.shape["xyz".index(look.axis)]
+        groups = {g.name: g.colour for g in solid.groups} | dict(self._extra.get("more", ()))
         return {
-            "materials": [[g.name, g.colour, look.how(g.name)] for g in solid.groups],
+            "materials": [[name, colour, look.how(name)] for name, colour in groups.items()],
             "paints": list(shown.paints),
             "painted": shown.painted,
             "factor": shown.factor,
@@ -339,8 +345,7 @@ class SpaceView(anywidget.AnyWidget):
         elif kind == "fit":
             self.fit()
         elif kind == "cut":
-            share, axis = float(message["share"]), str(message["axis"])
-            self.cut_away(share, axis, bool(message["above"]))
+            self.cut_away(message["share"], str(message["axis"]), bool(message["above"]))
         elif kind == "other side":
             self._looks(self._look.turned_over())
         elif kind == "slide":
@@ -369,13 +374,9 @@ class SpaceView(anywidget.AnyWidget):
     def _slide(self, dx: float, dy: float) -> None:
         """Move the cutting plane with the pointer: shares of the picture's height."""
         a = "xyz".index(self._look.axis)
-        across = self.eye.axes()[:2, a]
-        length = float(np.hypot(*across))
-        # An axis that points at the viewer has no direction in the picture: then up is onwards.
-        along = (dx * across[0] - dy * across[1]) / length**2 if length > 0.2 else -dy
         low, high = self._shown.solid.box
-        span = self._scene.size[1] * self._scene.pixel_mm
-        self._looks(replace(self._look, share=self._look.share + along * span / (high - low)[a]))
+        step = self._scene.along(a, dx, dy) / (high - low)[a]
+        self._looks(replace(self._look, share=self._look.share + step))
 
     def _repaint(self, kind: str, value: Any) -> None:
         shown = self._shown
