@@ -61,6 +61,10 @@ class Density:
         """All alike."""
         return np.full(self.n, rho)
 
+    def like(self, rho: Array) -> Array:
+        """Unknowns that are, as nearly as sharing allows, rho, (nz, ny, nx), before the filter."""
+        return self._sharing.average(rho[self._free]) if self.void is not None else np.empty(0)
+
     def make(self, x: Array, draft: Draft) -> None:
         """`rho` and `filtered`."""
         c = self._choice

@@ -116,6 +116,16 @@ class Unknowns:
         """Unknowns of a uniform design: density `rho` and fractions (K,) in every free voxel."""
         return np.concatenate([kind.start(rho, fractions) for kind in self.kinds[::-1]])
 
+    def like(self, rho: Array, w: Array) -> Array:
+        """Unknowns of densities (nz, ny, nx) and fractions (K, nz, ny, nx), before filters.
+
+        Kinds of `extra` start as in a uniform design.
+        """
+        inside = self.choice.domain
+        mean = float(rho[inside].mean()), w[:, inside].mean(1)
+        extra = [kind.start(*mean) for kind in self.kinds[-2:0:-1]]
+        return np.concatenate([self.density.like(rho), *extra, self.blending.like(w)])
+
     def solidity(self, fields: Fields) -> Array:
         """Weight of each unknown's change: blends count by how solid their voxel is."""
         return np.concatenate([kind.weight(fields.draft) for kind in self.kinds[::-1]])
