@@ -186,7 +186,7 @@ from voxelmat.printing import imagefiles, stack
 from voxelmat.printing.profile import load_profile
 encode = imagefiles.encode_bitmap
 def slow(*args):
-    time.sleep(0.002)
+    time.sleep(0.01)
     return encode(*args)
 imagefiles.encode_bitmap = slow
 stack.write_stack(layered_part("distance", shape=(8, 7, 6)), load_profile("invented-standard"),
@@ -266,7 +266,7 @@ def test_a_stack_with_a_foreign_file_is_left_alone(tmp_path):
 
 
 def test_bad_options(tmp_path):
-    with pytest.raises(InputError, match="columns, .*machine, none"):
+    with pytest.raises(InputError, match=r"columns, .*machine, none"):
         write_stack(part(), STANDARD, tmp_path / "s", support="pillars")
     with pytest.raises(InputError, match="no support channel"):
         write_stack(

@@ -178,7 +178,8 @@ def test_round_trip_of_random_parts(tmp_path_factory, job):
             float(filled.sum()) * part.grid.voxel_volume, rel=1e-5
         )
     allowed = {"floating piece", "volume"}  # loose voxels are likely; few sites make few droplets
-    assert {f.code for f in preflight(stack, part) if f.severity == "stop"} <= allowed
+    found = preflight(stack, part, deep=False)  # what is judged in space never says stop
+    assert {f.code for f in found if f.severity == "stop"} <= allowed
     printed = stack_to_part(stack, part)
     table, wanted = printed.palette_fractions(), part.palette_fractions()
     pure = (part.labels == 1) | (part.labels == 2)

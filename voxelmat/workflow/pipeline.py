@@ -2,21 +2,17 @@
 
 from __future__ import annotations
 
-import time
-from collections.abc import Callable, Iterator, Mapping, Sequence
-from contextlib import contextmanager
+from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass, field, replace
 from pathlib import Path
 from typing import Any
 
-from filelock import FileLock, Timeout
-
-from voxelmat.errors import Cancelled, InputError, ResourceError
+from voxelmat.errors import Cancelled, InputError
 from voxelmat.fea.cases import solve_cases
 from voxelmat.fea.energy_error import energy_error
 from voxelmat.fea.refine import ErrorEstimate, error_estimate
 from voxelmat.fea.resources import check_fits, estimate_solve, peak_bytes
-from voxelmat.io.atomic import explain_os_error, write_json
+from voxelmat.io.atomic import write_json
 from voxelmat.io.store import save_part
 from voxelmat.kernels.threads import threads
 from voxelmat.model.design import Design
@@ -37,6 +33,7 @@ from voxelmat.workflow.printed import as_printed
 from voxelmat.workflow.printing_stage import PrintStage, check_stage, stack_stage
 from voxelmat.workflow.report import write_report
 from voxelmat.workflow.report_data import RunData
+from voxelmat.workflow.running import Clock, held
 from voxelmat.workflow.verdicts import safety_factors, verdicts
 
 __all__ = ["STAGES", "RunResult", "run"]
@@ -94,40 +91,6 @@ class RunResult:
         )
 
 
-@dataclass(slots=True)
-class _Clock:
-    """Seconds a stage."""
-
-    seconds: dict[str, float] = field(default_factory=dict)
-
-    @contextmanager
-    def stage(self, name: str) -> Iterator[None]:
-        start = time.perf_counter()
-        try:
-            yield
-        finally:
-            self.seconds[name] = self.seconds.get(name, 0.0) + time.perf_counter() - start
-
-
-@contextmanager
-def _held(folder: Path) -> Iterator[None]:
-    """Make the folder and keep other runs out of it."""
-    try:
-        folder.mkdir(parents=True, exist_ok=True)
-        lock = FileLock(folder / ".voxelmat.lock", timeout=0)
-        lock.acquire()
-    except Timeout:
-        raise ResourceError(
-            f"Another run is writing to '{folder}'. Wait for it to end, or choose another --out."
-        ) from None
-    except OSError as error:
-        raise explain_os_error(folder, error) from error
-    try:
-        yield
-    finally:
-        lock.release()
-
-
 def run(
     design: Design | Built | str | Path,
     folder: str | Path = "out",
@@ -175,7 +138,7 @@ def run(
     if workers < 1:
         raise InputError(f"At least one worker writes the layers; got {workers}.", key="workers")
     folder = Path(folder)
-    with _held(folder):
+    with held(folder):
         return _Run(folder, frozenset(stages), monitor, workers, scheduler, watch).all(design)
 
 
@@ -197,7 +160,7 @@ class _Run:
         self.scheduler = scheduler
         self.stages = stages
         self.monitor = monitor
-        self.clock = _Clock()
+        self.clock = Clock()
         self.started = utc_now()
         self.expected = 0  # bytes of the largest solve, foretold
 

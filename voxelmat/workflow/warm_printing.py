@@ -1,4 +1,4 @@
-"""Compiles what only some prints call: error diffusion, ramps, shared channels, trays, overhangs."""
+"""Compiles what only some prints call: diffusion, ramps, shared channels, trays, overhangs."""
 
 from __future__ import annotations
 
