@@ -110,7 +110,7 @@ class Price:
     def sentence(self) -> str:
         """Such as "Mass: 0.2 g more (1 % of the limit) buys 3 % less compliance"."""
         if self.slope == 0:
-            return f"The limit on {self.name} costs nothing: another value is as good."
+            return f"The limit on {self.name} holds the objective back by nothing, to first order."
         step = 0.01 * abs(self.limit)
         looser = "more" if self.sense == "at most" else "less"
         change = step * abs(self.slope)
