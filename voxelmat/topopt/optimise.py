@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import dataclasses
 import hashlib
+import itertools
 import time
 from collections.abc import Callable, Sequence
 from pathlib import Path
@@ -27,6 +28,7 @@ from voxelmat.topopt.method import stepper_of
 from voxelmat.topopt.physics import Case
 from voxelmat.topopt.problem import start_of
 from voxelmat.topopt.setup import layout_problem, unknowns_of
+from voxelmat.topopt.staged import in_stages, needs_stages
 from voxelmat.topopt.unknowns import Choice
 
 __all__ = ["optimise"]
@@ -83,6 +85,8 @@ def optimise(
     ConvergenceError
         If the linear solver fails.
     """
+    if needs_stages(spec):
+        return _staged(part, load_cases, spec, monitor, checkpoint, element, watch)
     started = utc_now()
     progress = _Progress(monitor, spec.iterations)
     problem, notes = layout_problem(part, load_cases, spec, element=element, monitor=progress)
@@ -117,6 +121,35 @@ def optimise(
         finished_utc=utc_now(),
     )
     return dataclasses.replace(result, provenance=provenance)
+
+
+def _staged(
+    part: Part,
+    load_cases: Sequence[LoadCase],
+    spec: DesignSpec,
+    monitor: Monitor,
+    checkpoint: Path | None,
+    element: str,
+    watch: Callable[[Iterate], None] | None,
+) -> DesignResult:
+    """Several runs one after the other, each with a checkpoint of its own."""
+    runs = itertools.count(1)
+
+    def one(asked: DesignSpec, like: DesignResult | None) -> DesignResult:
+        n = next(runs)
+        kept = None if checkpoint is None else checkpoint.with_stem(f"{checkpoint.stem}-run{n}")
+        start = None
+        if like is not None:
+            problem, _ = layout_problem(part, load_cases, asked, element=element)
+            density = np.ascontiguousarray(like.density.T, dtype=np.float64)
+            fractions = np.ascontiguousarray(like.fractions.transpose(0, 3, 2, 1), dtype=np.float64)
+            start = problem.unknowns.like(density, fractions)
+        return optimise(
+            part, load_cases, asked, monitor=monitor, checkpoint=kept, element=element,
+            watch=watch, start=start,
+        )  # fmt: skip
+
+    return in_stages(part, spec, one)
 
 
 def _watcher(
