@@ -8,6 +8,7 @@ from hypothesis import strategies as st
 
 from voxelmat.errors import InputError
 from voxelmat.model.measure_physics import CellProperty, CellTarget
+from voxelmat.topopt.filter import ConeFilter
 from voxelmat.topopt.physics import Physics
 from voxelmat.topopt.response_cell import cell_response, effective_stiffness
 
@@ -102,3 +103,17 @@ def test_uniform_cell_is_its_material(unknowns):
 def test_bad_measures_are_refused(change, words):
     with pytest.raises(InputError, match=words):
         change()
+
+
+@pytest.mark.parametrize("radius", [1.5, 4.0])
+def test_filter_of_a_cell_does_not_know_where_the_cell_begins(radius):
+    # Moved round the cell before or after the filter: the same; and its transpose is one.
+    rng = np.random.default_rng(0)
+    x, y = rng.random((2, 4, 3, 5))
+    around = ConeFilter(np.ones(x.shape, bool), SPACING, radius, periodic=True)
+    move = {"shift": (1, 2, 3), "axis": (0, 1, 2)}
+    np.testing.assert_allclose(around(np.roll(x, **move)), np.roll(around(x), **move), rtol=1e-12)
+    assert np.vdot(around(x), y) == pytest.approx(np.vdot(x, around.transpose(y)), rel=1e-12)
+    np.testing.assert_allclose(around(np.ones(x.shape)), 1.0, rtol=1e-12)
+    plain = ConeFilter(np.ones(x.shape, bool), SPACING, radius)
+    assert not np.allclose(plain(x), around(x))

@@ -95,9 +95,15 @@ class Blending:
         self._mirror = Mirror(choice.mirrors if plain else (), choice.domain | (choice.kept_mu > 0))
         group = choice.group if choice.zones is None else choice.zones
         self._sharing = Sharing(self._free, group)
-        self._filter = None if choice.zones is not None else ConeFilter(self._free, spacing, radius)
+        self._filter = (
+            None
+            if choice.zones is not None
+            else ConeFilter(self._free, spacing, radius, periodic=choice.periodic)
+        )
         self._wide = (
-            None if width is None else ConeFilter(choice.domain & ~choice.empty, spacing, width)
+            None
+            if width is None
+            else ConeFilter(choice.domain & ~choice.empty, spacing, width, periodic=choice.periodic)
         )
 
     @property

@@ -12,6 +12,7 @@ from voxelmat.errors import InputError
 from voxelmat.fea.assemble import moduli
 from voxelmat.model.design_rules import Zones
 from voxelmat.model.design_spec import DesignSpec, ResinLimit
+from voxelmat.model.measure_physics import CellProperty, CellTarget
 from voxelmat.model.part import DISTANCE_STEPS, Part
 from voxelmat.topopt.links import box_of, groups, spread
 from voxelmat.topopt.measures import asked_nodes
@@ -143,6 +144,7 @@ def build_choice(
         kept_mu=mu,
         mirrors=mirrors,
         group=group,
+        periodic=any(isinstance(m, CellProperty | CellTarget) for m in spec.measures),
         zones=_zones(spec, domain & (resin < 0) & ~empty, mirrors, box),
     )
     return choice, tuple(notes)

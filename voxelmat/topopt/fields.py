@@ -50,6 +50,8 @@ class Choice:
         Voxels of one number are alike (extruded, repeated); see `voxelmat.topopt.links`.
     zones : ndarray of int or None
         Voxels of one number have one blend.
+    periodic : bool
+        The design is one cell of many, so filters go on across the faces of the grid.
     """
 
     domain: Bools
@@ -62,6 +64,7 @@ class Choice:
     mirrors: tuple[int, ...] = ()
     group: Numbers | None = None
     zones: Numbers | None = None
+    periodic: bool = False
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

@@ -67,6 +67,8 @@ class ConeFilter:
         Voxel edge along x, y, z, mm.
     radius : float
         mm.
+    periodic : bool
+        The grid repeats itself along all three axes, as a cell does.
 
     References
     ----------
@@ -75,19 +77,29 @@ class ConeFilter:
     """
 
     def __init__(
-        self, domain: NDArray[np.bool_], spacing: tuple[float, float, float], radius: float
+        self,
+        domain: NDArray[np.bool_],
+        spacing: tuple[float, float, float],
+        radius: float,
+        *,
+        periodic: bool = False,
     ) -> None:
         self.domain = np.ascontiguousarray(domain, dtype=bool)
         self._inside = self.domain.astype(np.float64)
         self._weights, self._offsets = cone_weights(spacing, radius)
+        reach = np.abs(self._offsets).max(axis=0) if periodic else np.zeros(3, dtype=int)
+        self._reach = tuple(int(n) for n in reach)
         total = self._sum(self._inside)
         self._scale = np.divide(self._inside, total, out=np.zeros_like(total), where=total > 0)
 
     def _sum(self, x: NDArray[np.float64]) -> NDArray[np.float64]:
+        if any(self._reach):
+            x = np.pad(x, [(n, n) for n in self._reach], mode="wrap")
         out = np.empty_like(x)
         with computing():
             neighbour_sum(x, self._weights, self._offsets, out)
-        return out
+        inner = tuple(slice(n, m - n) for n, m in zip(self._reach, x.shape, strict=True))
+        return out[inner]
 
     def __call__(self, x: NDArray[np.float64]) -> NDArray[np.float64]:
         """Filter a field of shape (nz, ny, nx)."""

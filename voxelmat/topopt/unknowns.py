@@ -73,8 +73,9 @@ class Unknowns:
         self.choice, self.palette, self.threshold = choice, palette, threshold
         self.sharpness = 0.0
         self.resins = palette.bulk.size
+        smooth = ConeFilter(choice.domain, spacing, radius, periodic=choice.periodic)
         self.density = Density(
-            choice, void, ConeFilter(choice.domain, spacing, radius), threshold,
+            choice, void, smooth, threshold,
             None if overhang is None or void is None else SelfSupport(overhang, spacing),
         )  # fmt: skip
         self.blending = Blending(
