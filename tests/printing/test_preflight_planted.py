@@ -14,6 +14,7 @@ from voxelmat.model.blend import EMPTY, Blend
 from voxelmat.model.grid import VoxelGrid
 from voxelmat.model.part import Part
 from voxelmat.printing import scan as scan_module
+from voxelmat.printing.bands import split_rows
 from voxelmat.printing.preflight import preflight
 from voxelmat.printing.profile import load_profile
 from voxelmat.printing.readback import read_stack
@@ -249,7 +250,8 @@ def test_bands_of_rows_find_the_same(tmp_path, monkeypatch):
     whole = scan_module.scan(stack, *sizes)
     monkeypatch.setattr(scan_module, "_MEMORY", 90_000)
     banded = scan_module.scan(stack, *sizes)
-    assert len(scan_module._bands(36, 2, sizes)) > 1
+    planes = 7 * sum(s[0] for s in sizes)
+    assert len(split_rows((36, 128), planes, scan_module._reach(sizes), 90_000)) > 1
     for kind in ("walls", "gaps"):
         one, many = getattr(whole, kind), getattr(banded, kind)
         assert sum(p.sites for p in one) == sum(p.sites for p in many) > 0

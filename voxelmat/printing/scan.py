@@ -3,13 +3,14 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass, field, replace
+from dataclasses import dataclass, field
 
 import numpy as np
 from numpy.typing import NDArray
 
 from voxelmat.kernels.bitplane import count_planes, first_site, lone_sites
 from voxelmat.monitor import SILENT, Monitor
+from voxelmat.printing.bands import Band, split_rows
 from voxelmat.printing.decoded import DecodedLayer, decoded_layers
 from voxelmat.printing.layerdesign import ExpectedLayers
 from voxelmat.printing.oddlayers import LayerDifferences
@@ -88,51 +89,9 @@ def _count(plane: Plane) -> int:
     return int(total[0])
 
 
-class _Band:
-    """Thin walls and gaps in a band of rows, and the rows beside it that they depend on."""
-
-    def __init__(self, first: int, last: int, rows: int, width: int, kinds: tuple[Sites, Sites]):
-        reach = _reach(kinds)
-        self._first = first
-        self._rows = slice(max(0, first - reach), min(rows, last + reach))
-        self._inner = slice(first - self._rows.start, last - self._rows.start)
-        height = self._rows.stop - self._rows.start
-        self._screens = [
-            ThinScreen(height, width, sites, solid=solid)
-            for sites, solid in zip(kinds, (True, False), strict=True)
-        ]
-        self._pieces = [Pieces(last - first, width) for _ in kinds]
-
-    def push(self, plane: Plane) -> None:
-        for screen, pieces in zip(self._screens, self._pieces, strict=True):
-            thin = screen.push(np.ascontiguousarray(plane[self._rows]))
-            if thin is not None:
-                pieces.add(np.ascontiguousarray(thin[self._inner]))
-
-    def found(self) -> list[list[Piece]]:
-        for screen, pieces in zip(self._screens, self._pieces, strict=True):
-            for thin in screen.finish():
-                pieces.add(np.ascontiguousarray(thin[self._inner]))
-        return [[self._moved(p) for p in pieces.found()] for pieces in self._pieces]
-
-    def _moved(self, piece: Piece) -> Piece:
-        column, row, layer = piece.place
-        return replace(piece, place=(column, row + self._first, layer))
-
-
 def _reach(kinds: tuple[Sites, Sites]) -> int:
     """Rows to either side that decide whether a site is thin."""
     return max(sites[1] // 2 - (-3 * sites[1] // 2) + 1 for sites in kinds)
-
-
-def _bands(rows: int, words: int, kinds: tuple[Sites, Sites]) -> list[tuple[int, int]]:
-    """First and last row of bands whose screens stay within `_MEMORY`."""
-    planes = 7 * sum(sites[0] for sites in kinds)
-    fit = _MEMORY // (planes * words * 8)
-    if fit >= rows:
-        return [(0, rows)]
-    size = max(fit - 2 * _reach(kinds), 16)
-    return [(a, min(a + size, rows)) for a in range(0, rows, size)]
 
 
 class _Main:
@@ -205,12 +164,19 @@ def scan(
     """
     _, rows, width = stack.raster.image_shape
     kinds = (wall, gap)
-    bands = _bands(rows, (width + 63) // 64, kinds)
+    bands = split_rows((rows, width), 7 * (wall[0] + gap[0]), _reach(kinds), _MEMORY)
+
+    def screens(height: int) -> list[ThinScreen]:
+        return [
+            ThinScreen(height, width, sites, solid=solid)
+            for sites, solid in zip(kinds, (True, False), strict=True)
+        ]
+
     main = _Main(stack)
     total = stack.n_layers * len(bands)
     thin: list[list[list[Piece]]] = []
-    for number, (first, last) in enumerate(bands):
-        band = _Band(first, last, rows, width, kinds)
+    for number, inner in enumerate(bands):
+        band = Band(inner, (rows, width), _reach(kinds), screens)
         for k, layer in enumerate(decoded_layers(stack)):
             part, _ = layer.union(support=False)
             if number == 0:

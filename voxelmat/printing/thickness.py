@@ -18,9 +18,10 @@ from voxelmat.model.finding import Finding
 from voxelmat.model.profile import PrintProfile
 from voxelmat.monitor import SILENT, Monitor
 from voxelmat.printing.ballscreen import BallScreen
+from voxelmat.printing.bands import Band, split_rows
 from voxelmat.printing.decoded import decoded_layers
 from voxelmat.printing.measure import Measured, Sites, Triple, image_sizes, measure
-from voxelmat.printing.pieces import Piece, Pieces
+from voxelmat.printing.pieces import Piece
 from voxelmat.printing.readback import Stack
 from voxelmat.units import quantity
 
@@ -72,43 +73,6 @@ def _kinds(stack: Stack, profile: PrintProfile) -> list[_Kind]:
     return found
 
 
-class _Band:
-    """The screens on a band of rows and the rows beside it that they depend on."""
-
-    def __init__(self, rows: tuple[int, int], stack: Stack, sizes: list[tuple[Sites, bool]]):
-        _, height, width = stack.raster.image_shape
-        reach = max(3 * s[1] for s, _ in sizes) + 2
-        self.first = rows[0]
-        self._rows = slice(max(0, rows[0] - reach), min(height, rows[1] + reach))
-        self._inner = slice(rows[0] - self._rows.start, rows[1] - self._rows.start)
-        high = self._rows.stop - self._rows.start
-        self._screens = [BallScreen(high, width, s, solid=solid) for s, solid in sizes]
-        self._pieces = [Pieces(rows[1] - rows[0], width) for _ in sizes]
-
-    def push(self, plane: NDArray[np.uint64]) -> None:
-        plane = np.ascontiguousarray(plane[self._rows])
-        for screen, pieces in zip(self._screens, self._pieces, strict=True):
-            thin = screen.push(plane)
-            if thin is not None:
-                pieces.add(np.ascontiguousarray(thin[self._inner]))
-
-    def found(self) -> list[list[Piece]]:
-        for screen, pieces in zip(self._screens, self._pieces, strict=True):
-            for thin in screen.finish():
-                pieces.add(np.ascontiguousarray(thin[self._inner]))
-        return [pieces.found() for pieces in self._pieces]
-
-
-def _bands(stack: Stack, sizes: list[tuple[Sites, bool]]) -> list[tuple[int, int]]:
-    _, rows, width = stack.raster.image_shape
-    planes = sum(8 * s[0] + s[2] for s, _ in sizes)
-    fit = _MEMORY // (planes * ((width + 63) // 64) * 8)
-    if fit >= rows:
-        return [(0, rows)]
-    size = max(16, fit - 2 * (max(3 * s[1] for s, _ in sizes) + 2))
-    return [(a, min(a + size, rows)) for a in range(0, rows, size)]
-
-
 def thickness_findings(
     stack: Stack, profile: PrintProfile | None = None, *, monitor: Monitor = SILENT
 ) -> list[Finding]:
@@ -132,19 +96,25 @@ def thickness_findings(
     pitch = image_triple(stack, stack.pitch_mm)
     kinds = _kinds(stack, profile)
     sizes = [(image_sizes(k.ball, pitch), k.solid) for k in kinds]
-    places: list[list[tuple[Piece, int]]] = [[] for _ in kinds]
-    bands = _bands(stack, sizes)
-    for number, rows in enumerate(bands):
-        band = _Band(rows, stack, sizes)
+    places: list[list[Piece]] = [[] for _ in kinds]
+    _, rows, width = stack.raster.image_shape
+    reach = max(3 * s[1] for s, _ in sizes) + 2
+    bands = split_rows((rows, width), sum(8 * s[0] + s[2] for s, _ in sizes), reach, _MEMORY)
+
+    def screens(height: int) -> list[BallScreen]:
+        return [BallScreen(height, width, s, solid=solid) for s, solid in sizes]
+
+    for number, inner in enumerate(bands):
+        band = Band(inner, (rows, width), reach, screens)
         for k, layer in enumerate(decoded_layers(stack)):
             band.push(layer.union(support=False)[0])
             done = number * stack.n_layers + k + 1
             monitor.report("measuring thickness", done=done, total=stack.n_layers * len(bands))
         for kept, pieces in zip(places, band.found(), strict=True):
-            kept += [(p, band.first) for p in pieces if p.sites >= _LEAST]
+            kept += [p for p in pieces if p.sites >= _LEAST]
     found: list[Finding] = []
     for kind, thin in zip(kinds, places, strict=True):
-        thin.sort(key=lambda p: -p[0].sites)
+        thin.sort(key=lambda p: -p.sites)
         found += _named(stack, profile, kind, thin, pitch)
     return found
 
@@ -153,14 +123,14 @@ def _named(
     stack: Stack,
     profile: PrintProfile,
     kind: _Kind,
-    pieces: list[tuple[Piece, int]],
+    pieces: list[Piece],
     pitch: Triple,
 ) -> Iterator[Finding]:
     """Measure the largest pieces and list those that are under their limit."""
     listed = 0
-    for piece, first in pieces[:_MEASURED]:
+    for piece in pieces[:_MEASURED]:
         column, row, layer = piece.place
-        at = (layer, row + first, column)
+        at = (layer, row, column)
         low, result = _measured(stack, kind, at, pitch)
         if result is None or (kind.flat is not None and result.flat != kind.flat):
             continue
