@@ -19,6 +19,10 @@ BOOKS = sorted(FOLDER.glob("*.ipynb"))
 PLACE = "a folder of the test"
 COARSE = {
     "bracket.ipynb": {"SPACING_MM": 2.7, "ITERATIONS": 5, "VOLUME": 0.8, "OUT": PLACE},
+    "designs.ipynb": {
+        "NAMES": ["bracket", "pad"], "COARSER": 2.0, "ITERATIONS": 3, "FRONT": [0.35, 0.5],
+        "OUT": PLACE,
+    },
     "grip.ipynb": {
         "SPACING_MM": 3.0, "PRINTER": "invented-coarse", "SUPPORT": "machine", "OUT": PLACE,
     },
@@ -29,10 +33,15 @@ COARSE = {
     "workbench.ipynb": {"SPACING_MM": 4.0, "WORK": PLACE},
 }  # fmt: skip
 #: How many live views each shows, how many other pictures, and what it leaves in PLACE.
-SHOWN = {"bracket.ipynb": 2, "grip.ipynb": 4, "tray.ipynb": 1, "workbench.ipynb": 1}
-PICTURES = {"bracket.ipynb": 1, "grip.ipynb": 2, "tray.ipynb": 1, "workbench.ipynb": 0}
+SHOWN = {
+    "bracket.ipynb": 2, "designs.ipynb": 1, "grip.ipynb": 4, "tray.ipynb": 1, "workbench.ipynb": 1,
+}  # fmt: skip
+PICTURES = {
+    "bracket.ipynb": 1, "designs.ipynb": 3, "grip.ipynb": 2, "tray.ipynb": 1, "workbench.ipynb": 0,
+}  # fmt: skip
 LEFT = {
     "bracket.ipynb": "bracket.npz",
+    "designs.ipynb": "front/front.json",
     "grip.ipynb": "report.html",
     "tray.ipynb": "ticket.html",
     "workbench.ipynb": "grip.toml",
