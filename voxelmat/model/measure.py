@@ -123,7 +123,7 @@ class Displacement:
     direction: Vector = (0.0, 0.0, 1.0)
     load_case: str | None = None
     of: Literal["mean", "largest"] = "mean"
-    exponent: float = 16.0
+    exponent: float = 8.0
     label: str = ""
 
     def __post_init__(self) -> None:
@@ -162,7 +162,7 @@ class TargetDeflection:
     direction: Vector = (0.0, 0.0, 1.0)
     load_case: str | None = None
     error: Literal["rms", "worst"] = "rms"
-    exponent: float = 16.0
+    exponent: float = 8.0
 
     def __post_init__(self) -> None:
         nodes = _nodes(self.nodes, "a target deflection")

@@ -23,6 +23,7 @@ from voxelmat.model.measure_amount import Cost, Mass, ResinVolume, Volume
 from voxelmat.topopt.limits import Bound, Goal
 from voxelmat.topopt.loop import Evaluation
 from voxelmat.topopt.physics import Physics
+from voxelmat.topopt.response_area import AreaResponse
 from voxelmat.topopt.response_motion import (
     LargestMotionResponse,
     MeanMotionResponse,
@@ -130,6 +131,8 @@ class LayoutProblem:
 
     def _size(self, slope: Array) -> float | None:
         """What the objective is scaled by, where its first value may be near 0."""
+        if isinstance(self.objective, AreaResponse):
+            return self.objective.most
         if not isinstance(self.objective, MeanMotionResponse):
             return None
         # A third of what all unknowns could move it by: about the value, for a compliance.
@@ -138,7 +141,9 @@ class LayoutProblem:
     def _check_that_it_matters(self, slope: Array) -> None:
         p = self.unknowns.palette
         twins = np.ptp(p.bulk) == 0 and np.ptp(p.shear) == 0
-        if not slope.any() and not twins:
+        # A uniform start has no surface, and no unknown by itself makes one to first order.
+        area = isinstance(self.objective, AreaResponse)
+        if not (slope.any() or twins or area):
             raise InputError(
                 f"No unknown of this design changes the {self.objective.name}, so there is "
                 "nothing to optimise: free voxels that matter to it, or choose another objective."
