@@ -1,8 +1,11 @@
 """Goals beyond statics through the public call: each run gets where the physics lets it."""
 
+import dataclasses
+
 import numpy as np
 import pytest
 
+from voxelmat.errors import InputError
 from voxelmat.model.blend import EMPTY, Blend
 from voxelmat.model.design_spec import DesignSpec, Projection, ResinLimit, VolumeLimit
 from voxelmat.model.goal import AtLeast, Maximise, Minimise
@@ -17,7 +20,11 @@ from voxelmat.model.measure_physics import (
     CellTarget,
     ContactPeak,
     Frequency,
+    MeanTemperature,
     PeakTemperature,
+    ThermalCompliance,
+    TrappedSupport,
+    Warpage,
 )
 from voxelmat.model.part import Part
 from voxelmat.model.region import Box, FaceRegion
@@ -35,6 +42,7 @@ def resin(name, E, nu, k):
         name=name, kind="rigid", E=Constant(value=E, unit="MPa"), nu=Constant(value=nu),
         density=Constant(value=1e-9, unit="tonne/mm3"),
         conductivity=Constant(value=k, unit="W/(m K)"),
+        expansion=Constant(value=2e-4 if E < 10 else 7e-5, unit="1/K"),
     )  # fmt: skip
 
 
@@ -158,3 +166,53 @@ def test_peak_of_contact_pressure_falls_where_the_pad_is_soft_under_the_ball():
     assert result.constraints[0].value > 0.399
     assert result.objective < 0.6 * result.history[0].objective
     assert result.fractions[1, 3, 3, -1] < 0.05 < 0.5 < result.fractions[1, 0, 0].mean()
+
+
+def _goals():
+    case = HeatCase(
+        name="on",
+        fixed=(FixedTemperature(region=WALL.region, temperature_degC=20.0),),
+        sources=(HeatSource(total_mW=5.0),),
+    )
+    ball = SphereIndenter(name="ball", position=(2.0, 1.5, 2.0), push="z-", radius=5.0)
+    floor = LoadCase(name="hold", supports=(Support(region=FaceRegion(name="floor", side="z-")),))
+    tip = FaceRegion(name="tip", side="x+")
+    return {
+        "frequency": Maximise(measure=Frequency(supports=(WALL,), count=2)),
+        "cell": Maximise(measure=CellProperty(kind="shear")),
+        "peak": Minimise(measure=PeakTemperature(heat_case=case)),
+        "mean": Minimise(measure=MeanTemperature(heat_case=case, region=tip)),
+        "heat": Minimise(measure=ThermalCompliance(heat_case=case)),
+        "contact": Minimise(measure=ContactPeak(indenter=ball, load_case=floor, depth_mm=0.1)),
+        "warping": Minimise(measure=Warpage(change_K=20.0, region=tip, supports=(WALL,))),
+    }
+
+
+@pytest.mark.parametrize("name", list(_goals()))
+def test_a_resumed_run_does_the_same(tmp_path, name):
+    # To the last bit: what responses remember between designs is in the checkpoint.
+    least = AtLeast(measure=ResinVolume(resin="stiff"), value=0.1)
+    limits = (ResinLimit(resin="stiff", fraction=0.5), least)
+    spec = DesignSpec(
+        resins=("soft", "stiff"), void=False, filter_radius=1.2, iterations=7,
+        objective=_goals()[name], limits=limits,
+    )  # fmt: skip
+    part = block((4, 3, 2), SOFT, STIFF)
+    start = np.random.default_rng(0).uniform(0.2, 0.6, 24)
+    whole = optimise(part, [], spec, start=start)
+    path = tmp_path / "run.npz"
+    optimise(part, [], dataclasses.replace(spec, iterations=5), start=start, checkpoint=path)
+    resumed = optimise(part, [], spec, start=start, checkpoint=path)
+    assert len(resumed.history) == len(whole.history) > 5
+    assert resumed.objective == whole.objective
+    np.testing.assert_array_equal(resumed.fractions, whole.fractions)
+
+
+def test_trapped_support_needs_voids_and_says_so():
+    spec = DesignSpec(
+        resins=("soft", "stiff"), void=False, filter_radius=1.2,
+        objective=Minimise(measure=TrappedSupport()),
+        limits=(ResinLimit(resin="stiff", fraction=0.5),),
+    )  # fmt: skip
+    with pytest.raises(InputError, match="allows no empty voxels"):
+        optimise(block((4, 3, 2), SOFT, STIFF), [], spec)
