@@ -60,13 +60,14 @@ class RobustProblem(LayoutProblem):
         super().__init__(unknowns, physics, goal, bounds, projection)
         self.ensemble, self._systems = ensemble, systems
         self._nominal = Scenario(realisation=NOMINAL, physics=physics)
-        self._refresh = True
+        self._anew = self._refresh = True
         self._fields: dict[Realisation, Fields] = {}
 
     # ------------------------------------------------------------------ iterations
     def begin(self, iteration: int, history: tuple[IterationRecord, ...]) -> bool:
         """Also: whether the amounts of the dilated design are looked at anew."""
         other = super().begin(iteration, history)
+        self._anew = iteration == 0 or other
         self._refresh = iteration % _REFRESH == 0 or other
         return other or (self._refresh and self._holds_amounts())
 
@@ -117,7 +118,7 @@ class RobustProblem(LayoutProblem):
         """How bad a response is over the ensemble, and its slope by the unknowns.
 
         `excess` turns values into what must be small, with slope `by`; `size` is what a change
-        of it is measured by, the nominal one where left out.
+        of it is measured by, that of the objective where left out.
         """
         e = self.ensemble
         known: dict[int, tuple[float, Scenario, Any]] = {}
@@ -136,7 +137,7 @@ class RobustProblem(LayoutProblem):
         ways = self._ways(response)
         scatters = bool(e.materials or e.loads) and not isinstance(response, Amount)
         nominal = at(self._nominal) if scatters or self._nominal in ways else 0.0
-        scale = size or max(abs(nominal), abs(at(ways[0])), 1e-300)
+        scale = self._scale(max(abs(nominal), abs(at(ways[0])))) if size is None else size
         total, parts = worst(np.array([at(s) for s in ways]), _WIDTH * scale)
         for s, p in zip(ways, parts, strict=True):
             count(s, float(p))
@@ -153,6 +154,15 @@ class RobustProblem(LayoutProblem):
                 fields = self._fields[s.realisation]
                 slope += (weight * by) * self.unknowns.transpose(fields, slopes)
         return float(total), slope
+
+    def _scale(self, size: float) -> float:
+        """Size of the objective at the beginning of a stage: a constant, so slopes are exact."""
+        known = self.physics.recall("size of the objective")
+        if self._anew or known is None:
+            known = np.array([max(size, 1e-300)])
+            self.physics.remember("size of the objective", known)
+            self._anew = False
+        return float(known[0])
 
     def _scatter(
         self,
