@@ -246,7 +246,7 @@ def notebook(lab, chromium, request):
     base, folder = lab
     context = chromium.new_context(viewport={"width": 1280, "height": 720}, reduced_motion="reduce")
     page = context.new_page()
-    page.set_default_timeout(30_000)
+    page.set_default_timeout(60_000)
     broken, outside = [], []
     page.on("pageerror", lambda e: broken.append(str(e)))
     page.on(
