@@ -151,7 +151,10 @@ def test_words():
     value = StagedValue(name="mass", unit="tonne", sense="at most", limit=2e-6, optimised=2e-6,
                         palette=2.001e-6, printed=2.2e-6)  # fmt: skip
     (remark,) = value.remarks
-    assert remark == "As printed the mass is 2.20 g instead of 2.00 (at most 2.00), which breaks the limit."  # noqa: E501
+    assert (
+        remark
+        == "As printed the mass is 2.20 g instead of 2.00 (at most 2.00), which breaks the limit."
+    )  # noqa: E501
     lost = dataclasses.replace(value, palette=np.nan, printed=None)
     assert "does not hang together" in lost.remarks[0]
     lower = dataclasses.replace(value, sense="at least", optimised=3e-6, palette=1e-6)
@@ -160,6 +163,6 @@ def test_words():
                   objective_value=2.0, slope=-6e4)  # fmt: skip
     assert price.sentence == "Mass: 1.00 g more (1 % of the limit) buys 3.0 % less deflection."
     reach = Reach(name="frequency", unit="Hz", sense="at least", limit=500.0, least=10.0,
-                  greatest=400.0, of_least="all soft", of_greatest="all hard", bound=False)  # fmt: skip
+                  greatest=400.0, of_least="soft", of_greatest="hard", bound=False)  # fmt: skip
     assert reach.missed_by == pytest.approx(100.0)
     assert "100 Hz out of reach" in reach.sentence

@@ -35,11 +35,12 @@ at_most_fraction = 0.4
 measure = "mass"
 at_most_g = 0.6
 """
+MANY = range(1, 102)
 
 
 @pytest.fixture
 def asked(design):
-    text = design.read_text().replace("spacing_mm = [1.0, 1.0, 1.0]", "spacing_mm = [2.0, 2.0, 2.0]")
+    text = design.read_text().replace("[1.0, 1.0, 1.0]", "[2.0, 2.0, 2.0]")
     design.write_text(text + ASKED)
     return design
 
@@ -121,7 +122,7 @@ def test_a_point_beaten_by_a_tighter_one_is_marked(asked):
         ([], "one or two limits"),
         ([Sweep(key="optimise.limit[0].resin", values=(1.0,))], "not the value of a limit"),
         ([Sweep(key="optimise.limit[0].at_most_fraction", values=(0.2, 0.2))], "twice"),
-        ([Sweep(key="optimise.limit[0].at_most_fraction", values=tuple(np.linspace(0.1, 0.9, 101)))],
+        ([Sweep(key="optimise.limit[0].at_most_fraction", values=tuple(0.001 * n for n in MANY))],
          "at most 100"),
     ],
 )  # fmt: skip
