@@ -13,6 +13,9 @@ from voxelmat.model.design_spec import (
     TargetDeflection,
     VolumeLimit,
 )
+from voxelmat.model.goal import AtLeast, AtMost, Maximise, Minimise
+from voxelmat.model.measure import Displacement
+from voxelmat.model.measure_amount import Mass
 
 SHAPE = (4, 3, 2)
 
@@ -25,6 +28,37 @@ def spec(**kw):
         "limits": (VolumeLimit(fraction=0.5),),
     }
     return DesignSpec(**{**base, **kw})
+
+
+def general_specs():
+    """One with each way of asking for a measure; all different."""
+    nodes = np.zeros((2, 5, 4, 3), bool)
+    nodes[0, 0], nodes[1, 1] = True, True
+    measures = [Displacement(nodes=n, of=of) for n in nodes for of in ("mean", "largest")]
+    measures += [Compliance(load_cases=("a",)), Mass(), Mass(with_kept=True)]
+    goals = [spec(objective=kind(measure=m)) for m in measures for kind in (Minimise, Maximise)]
+    limits = [
+        spec(limits=(kind(measure=m, value=value),))
+        for m in measures
+        for kind in (AtMost, AtLeast)
+        for value in (0.5, 0.6)
+    ]
+    return goals + limits
+
+
+def test_a_measure_alone_is_minimised():
+    assert spec(objective=Minimise(measure=Compliance())).objective == Compliance()
+    assert spec(objective=Minimise(measure=Compliance())).digest == spec().digest
+    lightest = spec(objective=Minimise(measure=Mass()), limits=(AtMost(measure=Compliance(),
+                                                                       value=2.0),))  # fmt: skip
+    assert [type(m) for m in lightest.measures] == [Mass, Compliance]
+    for bad in ({"measure": Mass}, {"measure": 3.0}):
+        with pytest.raises(InputError, match="takes a measure"):
+            Maximise(**bad)
+    with pytest.raises(InputError, match="finite number"):
+        AtMost(measure=Mass(), value=float("nan"))
+    with pytest.raises(InputError, match="scale of a limit"):
+        AtMost(measure=Mass(), value=1.0, scale=0.0)
 
 
 def test_digest_follows_what_the_design_depends_on():
@@ -42,6 +76,7 @@ def test_digest_follows_what_the_design_depends_on():
         spec(objective=target),
         spec(objective=other),
         spec(limits=()),
+        *general_specs(),
     ]
     assert len({s.digest for s in different}) == len(different)
     assert spec(solid=one).digest == spec(solid=one.copy(), iterations=3, levels=8).digest

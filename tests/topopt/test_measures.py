@@ -127,6 +127,17 @@ def test_strength_in_uniaxial_tension():
         assert value(Stretch()) == pytest.approx(1 / (3 * shear) / elongation, rel=1e-6)
         only = Stress(resins=("rigid",))
         assert value(only) == pytest.approx(n / 50.0, abs=1e-9)
+    # A kept half of the bar is judged by its own record.
+    labels = part.labels.copy()
+    labels[4:] = 2
+    keep = np.zeros(SHAPE, bool)
+    keep[4:] = True
+    s = spec(void=False, keep=keep, limits=(ResinLimit(resin="rigid", fraction=0.9),))
+    twin = RIGID.replace(name="soft", strength=constant(25.0, "MPa"))
+    half = block(resins=(twin, RIGID)).replace(labels=labels)
+    _, value = problem_of(half, [case], s, x=np.zeros(32))
+    assert value(Stress(region=keep)) == pytest.approx(1 / 50.0, rel=1e-6)
+    assert value(Stress()) == pytest.approx(1 / 25.0, rel=1e-6)
     with pytest.raises(InputError, match="needs the strength of 'plain'"):
         problem_of(
             part, [case], spec(resins=("soft", "plain"), objective=Minimise(measure=Stress()))

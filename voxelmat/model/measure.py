@@ -257,8 +257,8 @@ class Stress(_Strength):
     """Largest von Mises stress over the resin's own tensile strength; 1 is all of it.
 
     A blend's strength is taken as the harmonic mean of its resins', which is nearer to the
-    weaker (an assumption: no record holds the strength of a blend). In half-empty voxels the stress of the solid counts by the
-    root of the density, so that material can vanish (relaxation).
+    weaker (an assumption: no record holds the strength of a blend). In half-empty voxels the
+    stress of the solid counts by the root of the density, so that material can vanish.
 
     Attributes
     ----------
