@@ -131,8 +131,9 @@ class LayoutProblem:
 
     def _size(self, slope: Array) -> float | None:
         """What the objective is scaled by, where its first value may be near 0."""
-        if isinstance(self.objective, AreaResponse):
-            return self.objective.most
+        most: float | None = getattr(self.objective, "most", None)
+        if most is not None:
+            return most
         if not isinstance(self.objective, MeanMotionResponse):
             return None
         # A third of what all unknowns could move it by: about the value, for a compliance.

@@ -109,6 +109,11 @@ class CellPropertyResponse(_CellResponse):
     kind: str
     axes: tuple[int, int] = (0, 1)
 
+    @property
+    def most(self) -> float | None:
+        """Size of a ratio, which may begin near 0; None for moduli."""
+        return 1.0 if self.kind == "poisson" else None
+
     def of(self, C: Array) -> tuple[float, Array]:
         """Linear in C for averages and entries, by the inverse S of C for the rest."""
         a, b = self.axes
