@@ -8,6 +8,7 @@ from hypothesis import strategies as st
 
 from voxelmat.errors import InputError
 from voxelmat.model.measure_physics import CellProperty, CellTarget
+from voxelmat.topopt.fields import Choice
 from voxelmat.topopt.filter import ConeFilter
 from voxelmat.topopt.physics import Physics
 from voxelmat.topopt.response_cell import cell_response, effective_stiffness
@@ -117,3 +118,19 @@ def test_filter_of_a_cell_does_not_know_where_the_cell_begins(radius):
     np.testing.assert_allclose(around(np.ones(x.shape)), 1.0, rtol=1e-12)
     plain = ConeFilter(np.ones(x.shape, bool), SPACING, radius)
     assert not np.allclose(plain(x), around(x))
+
+
+def test_cell_whose_material_does_not_reach_through_has_no_poisson_ratio(unknowns):
+    outside = np.zeros((3, 3, 3), bool)
+    outside[:, :, 0] = True
+    choice = Choice(
+        domain=~outside, solid=outside & False, empty=outside & False,
+        resin=np.full(outside.shape, -1), fill=(~outside).astype(float),
+        kept_lam=np.zeros(outside.shape), kept_mu=np.zeros(outside.shape),
+    )  # fmt: skip
+    u = unknowns((3, 3, 3), [1.0, 9.0], [0.3, 0.3], void=False, choice=choice, spacing=SPACING)
+    physics = cell_physics()
+    physics.update(u.forward(np.full(u.n, 0.5)))
+    with pytest.raises(InputError, match="no load in some direction"):
+        cell_response(CellProperty(kind="poisson")).value(physics)
+    assert cell_response(CellProperty(kind="axial", axes=("y", "y"))).value(physics)[0] > 0

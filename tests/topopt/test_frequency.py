@@ -1,11 +1,14 @@
 """Frequencies of designs: gradients, repeated ones, a formula, mass in void, and a mount."""
 
+import dataclasses
+
 import numpy as np
 import pytest
 from design_gradients import smallest_error
 from hypothesis import HealthCheck, given, settings
 from hypothesis import strategies as st
 
+from voxelmat.errors import InputError
 from voxelmat.model.blend import EMPTY, Blend
 from voxelmat.model.design_spec import DesignSpec, Projection, VolumeLimit
 from voxelmat.model.goal import Maximise
@@ -196,3 +199,21 @@ def test_plate_beam_goes_towards_the_published_optimum():
     part, spec = plate_beam(8)
     result = optimise(part, [], spec)
     assert 350 < 2 * np.pi * result.objective < 456.4
+
+
+def test_loose_pieces_and_moving_supports_are_refused():
+    part, spec = plate_beam(2)
+    labels = np.ones(part.grid.shape, np.uint16)
+    labels[7:9] = 0
+    wall = Support(region=FaceRegion(name="left", side="x-"))
+    for shape, support, words in (
+        (part.replace(labels=labels), wall, "pieces of the part are loose"),
+        (part, dataclasses.replace(wall, displacement=(0.1, 0.0, 0.0)), "hold still"),
+    ):
+        goal = Maximise(measure=Frequency(supports=(support,)))
+        with pytest.raises(InputError, match=words):
+            layout_problem(shape, [], dataclasses.replace(spec, objective=goal))
+    with pytest.raises(InputError, match="1 to 50 modes"):
+        Frequency(count=0)
+    with pytest.raises(InputError, match="both its region and its size"):
+        Frequency(carried_tonne=1.0)

@@ -16,6 +16,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from voxelmat.errors import InputError
 from voxelmat.fea.cell import affine, solve_cell
 from voxelmat.model.measure_physics import CellProperty, CellTarget
 from voxelmat.topopt.physics import Physics
@@ -26,6 +27,8 @@ Array = NDArray[np.float64]
 
 # Shares of the largest slope below this are rounding and get no form.
 _ROUNDING = 1e-14
+# Below this share of the largest, the least stiffness of a cell is none.
+_SINGULAR = 1e-13
 # Weights of C in the averages over all directions (W. Voigt, from memory).
 _BULK = np.zeros((6, 6))
 _BULK[:3, :3] = 1.0 / 9.0
@@ -124,6 +127,13 @@ class CellPropertyResponse(_CellResponse):
                 weight[a, b] += 0.5
                 weight[b, a] += 0.5
             return float((weight * C).sum()), weight
+        ends = np.linalg.eigvalsh(C)
+        if not ends[0] > _SINGULAR * ends[-1]:
+            raise InputError(
+                f"The cell carries no load in some direction, so its {self.name} is not defined. "
+                "Let the shape reach through the grid along x, y and z, or raise the stiffness "
+                "that empty voxels keep."
+            )
         S = np.linalg.inv(C)
         by_S = np.zeros((6, 6))
         if self.kind == "poisson":

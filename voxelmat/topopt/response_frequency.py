@@ -28,7 +28,7 @@ from voxelmat.fea.mass import Mass, densities
 from voxelmat.fea.modal import anchors
 from voxelmat.fea.operator import touched_nodes
 from voxelmat.fea.packed import Apply, Packed
-from voxelmat.fea.rigid import rigid_fields, rigid_motions
+from voxelmat.fea.rigid import check_one_body, rigid_fields, rigid_motions
 from voxelmat.fea.scalar_element import modal_factors
 from voxelmat.fea.scalar_forms import scalar_forms
 from voxelmat.model.measure_physics import Frequency
@@ -217,9 +217,10 @@ def frequency_response(
     Raises
     ------
     InputError
-        A support that moves, a region without material.
+        A support that moves, a region without material, loose pieces.
     """
-    acts, _ = anchors(part, measure.supports, measure.springs, "a design's frequency")
+    acts, anchored = anchors(part, measure.supports, measure.springs, "a design's frequency")
+    check_one_body(np.ascontiguousarray(part.solid.T), anchored, part.grid)
     c, p = unknowns.choice, unknowns.palette
     if acts.plates is not None or any(bed.leans for bed in acts.beds):
         raise InputError(
