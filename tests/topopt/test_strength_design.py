@@ -9,6 +9,7 @@ import numpy as np
 import pytest
 from measured_part import block, constant, problem_of, pulled, resin, spec
 
+from voxelmat.errors import Cancelled
 from voxelmat.model.blend import EMPTY, Blend
 from voxelmat.model.design_spec import Compliance, Projection, ResinLimit, VolumeLimit
 from voxelmat.model.goal import AtMost, Maximise, Minimise
@@ -136,3 +137,26 @@ def test_identical_resins_give_the_single_resin_answer():
         one = optimise(part, [pulled(part)], spec(resins=("a",), **kw))
         two = optimise(part, [pulled(part)], spec(resins=("a", "b"), **kw))
         assert two.objective == pytest.approx(one.objective, rel=1e-4)
+
+
+class _StopAt:
+    def __init__(self, done):
+        self.done = done
+
+    def report(self, stage, *, done, total, **figures):
+        if done >= self.done:
+            raise Cancelled("enough")
+
+
+def test_resumed_equals_uninterrupted_bit_for_bit(tmp_path):
+    # The ratio of the true maximum is held over five iterations, and so through an interruption.
+    part = block((6, 2, 3))
+    s = spec(objective=Minimise(measure=Stress()), iterations=12)
+    path = tmp_path / "design.npz"
+    whole = optimise(part, [pulled(part)], s)
+    stopped = optimise(part, [pulled(part)], s, monitor=_StopAt(8), checkpoint=path)
+    assert stopped.cancelled
+    rest = optimise(part, [pulled(part)], s, checkpoint=path)
+    assert rest.iterations == 12
+    np.testing.assert_array_equal(rest.unknowns, whole.unknowns)
+    assert rest.objective == whole.objective
