@@ -66,7 +66,7 @@ GIVEN = {
             "[" + ", ".join("5.0" if i == j else '"any"' for i in range(6)) + "]" for j in range(6)
         ) + "]", "at_most = 0.2", 0.2,
     ),
-    "peak temperature": (HEAT + '\nregion = "top"', "at_most_K = 20.0", 20.0),
+    "peak temperature": (HEAT + '\nregion = "top"', "at_most_degC = 20.0", 20.0),
     "mean temperature": (HEAT + '\nregion = "top"', "at_most_degC = 60.0", 60.0),
     "thermal compliance": (HEAT + "\nvoid_W_mK = 0.02", "at_most_mW_K = 20.0", 20.0),
     "contact peak": (
@@ -227,6 +227,28 @@ def test_questions_without_an_answer_are_refused(design, text, message):
     assert caught.value.file
 
 
+def test_several_starts_are_ranked(design):
+    coarse(design)
+    write(design, 'starts = 2\nobjective = "compliance"\n[[optimise.limit]]\n'
+                  'kind = "resin"\nresin = "measured-hard"\nat_most_fraction = 0.4\n')  # fmt: skip
+    found = optimised(build(design))
+    (note,) = [n for n in found.notes if "best of 2 starts" in n]
+    assert note.count(",") == 1
+
+
+def test_sizes_from_the_profile(design):
+    write(design, 'void = true\nsize_from_profile = true\nobjective = "compliance"\n')
+    spec = design_spec(build(design))
+    assert spec.robust is not None
+    assert spec.filter_radius > 1.5  # wider than the file says: the printer is coarse
+    coarse(design)
+    text = design.read_text().replace("[2.0, 2.0, 2.0]", "[4.0, 4.0, 4.0]")
+    design.write_text(text)
+    with pytest.raises(InputError, match="finer grid") as caught:
+        design_spec(build(design))
+    assert caught.value.key == "optimise.size_from_profile"
+
+
 def test_no_load(design):
     coarse(design)
     text = design.read_text()
@@ -242,8 +264,14 @@ def test_no_load(design):
 def test_a_missed_limit_is_told_by_how_much(design):
     """One iteration cannot halve the work; the result says so and is not called feasible."""
     coarse(design)
-    write(design, '[optimise.minimise]\nmeasure = "resin volume"\nresin = "measured-hard"\n'
-                  '[[optimise.limit]]\nmeasure = "compliance"\nat_most_N_mm = 0.0006\n')  # fmt: skip
+    text = """[optimise.minimise]
+measure = "resin volume"
+resin = "measured-hard"
+[[optimise.limit]]
+measure = "compliance"
+at_most_N_mm = 0.0006
+"""
+    write(design, text)
     found = optimised(build(design))
     if found.feasible:
         pytest.fail("the limit was meant to be missed after two iterations")

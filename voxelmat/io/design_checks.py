@@ -329,6 +329,11 @@ def _check_optimise(design: Design, targets: list[str]) -> None:
         _known(skin["resin"], ask.resins, "resin in optimise.resins", "optimise.skin.resin")
     if "zones" in ask.rules and "zone_count" in ask.rules:
         raise InputError("Zones are either named or counted, not both.", key="optimise.zone_count")
+    if ask.rules.get("size_from_profile") and design.printing is None:
+        raise InputError(
+            "Sizes are to follow the print profile, but the design names none; add [print].",
+            key="optimise.size_from_profile",
+        )
     for name, key in named_in_measures(ask, "target"):
         _known(name, targets, "target", key)
     for name, key in named_in_measures(ask, "resin"):

@@ -46,7 +46,7 @@ Triple = tuple[float, float, float]
 RULE_KEYS = (
     "blends", "extruded", "repeated", "zones", "zone_count", "robust", "material_scatter",
     "load_scatter", "skin", "support_angle_deg", "interface_width_mm", "blend_radius_mm",
-    "most_resins", "penalties",
+    "most_resins", "penalties", "starts", "size_from_profile",
 )  # fmt: skip
 
 

@@ -16,6 +16,7 @@ from voxelmat.model.design_rules import (
     Skin,
     Zones,
 )
+from voxelmat.topopt.sizes import minimum_from_profile
 from voxelmat.workflow.build import Built
 from voxelmat.workflow.regions import at_key
 
@@ -46,6 +47,14 @@ def rules_of(built: Built, rules: Mapping[str, Any]) -> dict[str, Any]:
     if "robust" in rules:
         with at_key(built.design, "optimise.robust"):
             found["robust"] = Robust(**rules["robust"])
+    if rules.get("size_from_profile") and built.profile is not None:
+        with at_key(built.design, "optimise.size_from_profile"):
+            found |= minimum_from_profile(
+                built.profile,
+                margin=found["robust"].margin if "robust" in found else Robust().margin,
+                spacing=built.part.grid.spacing,
+                pure=rules.get("blends") == "pure",
+            )
     if "zone_count" in rules:
         found["zones"] = ChosenZones(count=rules["zone_count"])
     elif "zones" in rules:

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 from dataclasses import replace
 from pathlib import Path
 
@@ -30,6 +30,7 @@ from voxelmat.topopt.feasibility import check_reach, reachable, worth_checking
 from voxelmat.topopt.iterate import Iterate
 from voxelmat.topopt.made import values_of_part
 from voxelmat.topopt.optimise import optimise
+from voxelmat.topopt.starts import ranked_starts
 from voxelmat.units import number, quantity
 from voxelmat.workflow.asked_measures import goal_of, limit_of
 from voxelmat.workflow.asked_rules import rules_of
@@ -74,20 +75,31 @@ def optimised(
         doubts: tuple[str, ...] = ()
         if worth_checking(spec) and (checkpoint is None or not checkpoint.exists()):
             doubts = check_reach(reachable(built.part, built.load_cases, spec, monitor=monitor))
-        found = optimise(
-            built.part,
-            built.load_cases,
-            spec,
-            monitor=monitor,
-            checkpoint=checkpoint,
-            watch=watch,
-            start=start,
-        )
+        starts = built.design.optimise.rules.get("starts", 1) if built.design.optimise else 1
+        if starts > 1 and start is None:
+            ranked = ranked_starts(built.part, built.load_cases, spec, starts, monitor=monitor)
+            found, doubts = ranked[0], (*doubts, _starts_note(ranked))
+        else:
+            found = optimise(
+                built.part,
+                built.load_cases,
+                spec,
+                monitor=monitor,
+                checkpoint=checkpoint,
+                watch=watch,
+                start=start,
+            )
         return replace(found, notes=(*found.notes, *doubts, *shortfalls(found)))
     except InputError as error:
         if error.file is not None:
             raise
         raise InputError(error.message, file=built.design.file_name, key="optimise") from error
+
+
+def _starts_note(ranked: Sequence[DesignResult]) -> str:
+    values = ", ".join(number(r.objective) for r in ranked)
+    unit = f" {ranked[0].objective_unit}".rstrip()
+    return f"The best of {len(ranked)} starts is taken; {ranked[0].objective_name}: {values}{unit}."
 
 
 def shortfalls(found: DesignResult) -> tuple[str, ...]:
@@ -152,10 +164,10 @@ def design_spec(built: Built) -> DesignSpec:
         "protected_depth": entry.protected_depth_mm,
     }
     try:
+        rules = {"filter_radius": entry.filter_radius_mm, **rules_of(built, entry.rules)}
         return DesignSpec(
             resins=entry.resins,
             objective=_objective(built, entry),
-            filter_radius=entry.filter_radius_mm,
             limits=(
                 *(_limit(limit) for limit in entry.limits),
                 *(limit_of(built, limit) for limit in entry.measured),
@@ -173,7 +185,7 @@ def design_spec(built: Built) -> DesignSpec:
             protected=_union(built, entry.protected),
             symmetry=entry.symmetry,
             seed=built.design.seed,
-            **rules_of(built, entry.rules),
+            **rules,
             **{k: v for k, v in given.items() if v is not None},  # type: ignore[arg-type]
         )
     except InputError as error:
