@@ -56,3 +56,15 @@ def test_the_part_is_built_once_for_a_design(bench):
 def test_code_is_python():
     line = code_of("mix", {"blend": {"soft": 0.25}, "at": (1, 2.0), "name": "it's"})
     assert line == "mix(blend={'soft': 0.25}, at=(1, 2.0,), name=\"it's\")"
+
+
+def test_why_there_is_no_part_stays_until_it_is_mended(bench):
+    bench.answers.set_live(False)
+    bench.shape.box_region("nowhere", [90, 90, 90], [91, 91, 91])
+    with pytest.raises(InputError, match="'nowhere'"):
+        bench.build()
+    bench.guarded(lambda: None)  # another click clears the message, not the trouble
+    assert "'nowhere'" in bench.trouble
+    bench.undo()
+    bench.build()
+    assert bench.trouble == ""
