@@ -64,7 +64,9 @@ MEASURE_KEYS: Mapping[str, MeasureKeys] = {
     "cell modulus": MeasureKeys("MPa", needs=("property",), may=("axes",)),
     "cell poisson": MeasureKeys(needs=("axes",)),
     "cell target": MeasureKeys(needs=("stiffness_MPa",)),
-    "peak temperature": MeasureKeys("K", needs=_HEAT[:1], may=(*_HEAT[1:], "region", "exponent")),
+    "peak temperature": MeasureKeys(
+        "degC", needs=_HEAT[:1], may=(*_HEAT[1:], "region", "exponent")
+    ),
     "mean temperature": MeasureKeys("degC", needs=(*_HEAT[:1], "region"), may=_HEAT[1:]),
     "thermal compliance": MeasureKeys("mW_K", needs=_HEAT[:1], may=_HEAT[1:]),
     "contact peak": MeasureKeys(

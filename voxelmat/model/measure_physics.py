@@ -159,7 +159,9 @@ class _Heat:
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class PeakTemperature(_Heat):
-    """Largest steady temperature over the coldest one that is given, K, by a corrected p-norm.
+    """Largest steady temperature, degC, by a corrected p-norm.
+
+    The norm is over what exceeds the coldest temperature that the heat case gives.
 
     Attributes
     ----------
@@ -178,7 +180,7 @@ class PeakTemperature(_Heat):
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class MeanTemperature(_Heat):
-    """Steady temperature over the coldest one that is given, mean over a region's nodes, K.
+    """Steady temperature, mean over the nodes of a region, degC.
 
     Attributes
     ----------

@@ -51,6 +51,8 @@ class Conducting:
     ----------
     key : str
         Names the solution among those of the design.
+    coldest : float
+        Coldest temperature that is given, degC.
     held : ndarray of bool, shape (nz+1, ny+1, nx+1)
     given : ndarray of float64
         Temperature at held nodes over the coldest that is given, K.
@@ -69,6 +71,7 @@ class Conducting:
     """
 
     key: str
+    coldest: float
     held: Bools
     given: Array
     heat: Array
@@ -124,7 +127,7 @@ class Conducting:
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
 class TemperatureResponse:
-    """A weighted sum of temperatures at nodes.
+    """A weighted sum of temperatures over the coldest one that is given, and a level on top.
 
     Attributes
     ----------
@@ -132,6 +135,8 @@ class TemperatureResponse:
     weight : ndarray of float64, shape (nz+1, ny+1, nx+1)
     key : str
         Tells it from other responses.
+    level : float
+        What is added.
     """
 
     conducting: Conducting
@@ -139,12 +144,13 @@ class TemperatureResponse:
     key: str
     name: str
     unit: str
+    level: float = 0.0
 
     def value(self, physics: Physics) -> tuple[float, dict[str, Array]]:
         """Value, and derivatives by ``rho`` and ``w``."""
         T = self.conducting.solved(physics)[1]
         slopes = self.conducting.slopes(physics, self.weight, self.key)
-        return float((self.weight * T).sum()), slopes
+        return self.level + float((self.weight * T).sum()), slopes
 
     def report(self, value: float) -> float:
         """As it is."""
@@ -153,7 +159,9 @@ class TemperatureResponse:
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
 class PeakResponse:
-    """Largest temperature of some nodes, by a p-norm that is corrected to it.
+    """Largest temperature of some nodes, degC, by a p-norm that is corrected to it.
+
+    The norm is over what exceeds the coldest temperature that is given.
 
     Attributes
     ----------
@@ -169,7 +177,7 @@ class PeakResponse:
     exponent: float
     key: str
     name: str
-    unit: str = "K"
+    unit: str = "degC"
 
     def value(self, physics: Physics) -> tuple[float, dict[str, Array]]:
         """Value, and derivatives by ``rho`` and ``w``."""
@@ -177,7 +185,9 @@ class PeakResponse:
         rise = np.where(self.nodes, np.maximum(T, 0.0), 0.0)
         peak, by_T = smooth_maximum(rise, self.exponent)
         slopes = self.conducting.slopes(physics, by_T, self.key)
-        return scaled(correction(physics, self.key, peak, float(rise.max())), peak, slopes)
+        ratio = correction(physics, self.key, peak, float(rise.max()))
+        value, slopes = scaled(ratio, peak, slopes)
+        return self.conducting.coldest + value, slopes
 
     def report(self, value: float) -> float:
         """As it is."""
@@ -185,7 +195,8 @@ class PeakResponse:
 
     def truth(self, physics: Physics) -> float:
         """The largest."""
-        return max(float(self.conducting.solved(physics)[1][self.nodes].max()), 0.0)
+        rise = float(self.conducting.solved(physics)[1][self.nodes].max())
+        return self.conducting.coldest + max(rise, 0.0)
 
 
 def temperature_response(
@@ -220,14 +231,15 @@ def temperature_response(
         return TemperatureResponse(
             conducting=conducting,
             key=key,
-            name=f"mean temperature rise{where}",
-            unit="K",
+            name=f"mean temperature{where}",
+            unit="degC",
+            level=conducting.coldest,
             weight=nodes / float(nodes.sum()),
         )
     return PeakResponse(
         conducting=conducting,
         key=key,
-        name=f"peak temperature rise{where}",
+        name=f"peak temperature{where}",
         nodes=nodes,
         exponent=measure.exponent,
     )
@@ -269,6 +281,7 @@ def _conducting(measure: Measure, part: Part, unknowns: Unknowns) -> Conducting:
     void = measure.void_W_per_m_K
     return Conducting(
         key=f"heat {_digest(measure)}",
+        coldest=coldest,
         held=acts.held,
         given=np.where(acts.held, acts.given - coldest, 0.0),
         heat=acts.heat(coldest),
