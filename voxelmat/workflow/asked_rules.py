@@ -76,7 +76,9 @@ def rules_of(built: Built, rules: Mapping[str, Any]) -> dict[str, Any]:
 
 def _load_scatter(said: Mapping[str, Any]) -> LoadScatter:
     names = {"angle_deg": "angle", "offset_mm": "offset"}
-    given = {names.get(k, k): tuple(v) if isinstance(v, list) else v for k, v in said.items()}
+    given: dict[str, Any] = {
+        names.get(k, k): tuple(v) if isinstance(v, list) else v for k, v in said.items()
+    }
     return LoadScatter(**given)
 
 
