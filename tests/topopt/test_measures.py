@@ -14,7 +14,7 @@ from measured_part import (
     spec,
 )
 
-from voxelmat.errors import InputError
+from voxelmat.errors import InputError, ResourceError
 from voxelmat.fea.interfaces import interface_tractions
 from voxelmat.fea.static import solve
 from voxelmat.model.design_spec import Compliance, ResinLimit
@@ -39,6 +39,7 @@ from voxelmat.model.measure_amount import (
     Volume,
 )
 from voxelmat.model.region import FaceRegion
+from voxelmat.topopt import measures
 
 BOND = Bond(first="soft", second="rigid", tensile=constant(1.0, "MPa"), shear=constant(2.0, "MPa"))
 
@@ -144,7 +145,7 @@ def test_strength_in_uniaxial_tension():
         )
 
 
-def test_interfaces_agree_with_the_solved_part():
+def test_interfaces_agree_with_the_solved_part(monkeypatch):
     # Rigid x > 4, soft below, pulled by 1 MPa across.
     part, case = uniform_bar()
     labels = part.labels.copy()
@@ -169,6 +170,9 @@ def test_interfaces_agree_with_the_solved_part():
     assert value(measure) == pytest.approx(0.25, rel=1e-6)
     with pytest.raises(InputError, match="needs a bond of 'soft' and 'rigid'"):
         value(InterfaceTraction(bonds=()))
+    monkeypatch.setattr(measures, "_MOST_FACES", 100)
+    with pytest.raises(ResourceError, match=r"2 resins in 1 load cases takes 1.9e.02"):
+        value(measure)
 
 
 @pytest.mark.parametrize("normal", [(1, 0, 0), (1, 1, 0), (1, 2, 3)])

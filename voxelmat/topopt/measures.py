@@ -9,7 +9,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from voxelmat.errors import InputError
+from voxelmat.errors import InputError, ResourceError
 from voxelmat.model.interface import find_bond
 from voxelmat.model.measure import (
     Compliance,
@@ -40,6 +40,9 @@ __all__ = ["asked_nodes", "needs_loads", "response_of", "root_of", "with_springs
 
 Array = NDArray[np.float64]
 Bools = NDArray[np.bool_]
+
+#: Pairs of resins times faces times load cases: about 2 GB.
+_MOST_FACES = 6e7
 
 
 def response_of(measure: object, setting: Setting) -> Response:
@@ -207,6 +210,14 @@ def _interface(m: InterfaceTraction, s: Setting) -> Response:
     names = s.unknowns.palette.names
     if len(names) < 2:
         raise InputError("A design of one resin has no interface between resins; drop the measure.")
+    cases = s.numbers(m.load_cases, "traction on interfaces")
+    numbers = len(names) * (len(names) - 1) // 2 * 3 * s.part.grid.n_voxels * len(cases)
+    if numbers > _MOST_FACES:
+        raise ResourceError(
+            f"The traction on all interfaces of {len(names)} resins in {len(cases)} load cases "
+            f"takes {numbers:.2g} numbers in memory several times over (at most {_MOST_FACES:.0g}"
+            "); use fewer resins, fewer load cases or a coarser grid."
+        )
     tensile, shear = np.ones((2, len(names), len(names)))
     for a in range(len(names)):
         for b in range(a + 1, len(names)):
@@ -220,7 +231,7 @@ def _interface(m: InterfaceTraction, s: Setting) -> Response:
             tensile[a, b] = bond.tensile.value if value else bond.tensile.band[0]
             shear[a, b] = bond.shear.value if value else bond.shear.band[0]
     return InterfaceResponse(
-        cases=s.numbers(m.load_cases, "traction on interfaces"),
+        cases=cases,
         tensile=tensile,
         shear=shear,
         domain=s.unknowns.choice.domain,
