@@ -7,7 +7,13 @@ import pytest
 
 from voxelmat.errors import InputError
 from voxelmat.model.blend import EMPTY, Blend
-from voxelmat.model.design_spec import DesignSpec, Projection, ResinLimit, VolumeLimit
+from voxelmat.model.design_spec import (
+    Compliance,
+    DesignSpec,
+    Projection,
+    ResinLimit,
+    VolumeLimit,
+)
 from voxelmat.model.goal import AtLeast, Maximise, Minimise
 from voxelmat.model.grid import VoxelGrid
 from voxelmat.model.heatcase import FixedTemperature, HeatCase, HeatSource
@@ -207,6 +213,20 @@ def test_a_resumed_run_does_the_same(tmp_path, name):
     assert len(resumed.history) == len(whole.history) > 5
     assert resumed.objective == whole.objective
     np.testing.assert_array_equal(resumed.fractions, whole.fractions)
+
+
+def test_a_load_case_without_force_may_stand_beside_a_frequency():
+    case = LoadCase(name="held", supports=(WALL,))
+    spec = DesignSpec(
+        resins=("soft", "stiff"), void=False, filter_radius=1.2, iterations=3,
+        objective=_goals()["frequency"], limits=(ResinLimit(resin="stiff", fraction=0.5),),
+    )  # fmt: skip
+    part = block((4, 3, 2), SOFT, STIFF)
+    with_case = optimise(part, [case], spec)
+    assert with_case.objective == optimise(part, [], spec).objective
+    stiff = dataclasses.replace(spec, objective=Compliance())
+    with pytest.raises(InputError, match="no load on anything"):
+        optimise(part, [case], stiff)
 
 
 def test_trapped_support_needs_voids_and_says_so():

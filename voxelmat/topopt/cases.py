@@ -21,6 +21,8 @@ def as_arrays(
 ) -> tuple[Case, ...]:
     """Forces, supports and springs of each load case on the nodes of the part.
 
+    Where none is `needed`, those without a force are left out: they hold a part that vibrates.
+
     Raises
     ------
     InputError
@@ -33,10 +35,11 @@ def as_arrays(
     names = [c.name for c in load_cases]
     if len(set(names)) != len(names):
         raise InputError(f"Each load case needs a name of its own; got {', '.join(names)}.")
-    return tuple(_case(part, case) for case in load_cases)
+    found = (_case(part, case, needed) for case in load_cases)
+    return tuple(case for case in found if case is not None)
 
 
-def _case(part: Part, case: LoadCase) -> Case:
+def _case(part: Part, case: LoadCase, needed: bool) -> Case | None:
     if any(isinstance(load, BodyForce) for load in case.loads):
         raise InputError(
             f"Load case '{case.name}' has a body force, which would change with the design; the "
@@ -50,6 +53,8 @@ def _case(part: Part, case: LoadCase) -> Case:
             "the design; give the force instead, or hold that support at 0 mm."
         )
     if not np.any(a.force[~a.held] != 0):
+        if not needed:
+            return None
         raise InputError(
             f"Load case '{case.name}' has no load on anything that can move, so there is nothing "
             "to design for; add a force, a pressure or a pressure map."
