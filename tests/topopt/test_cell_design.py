@@ -7,6 +7,7 @@ from hypothesis import HealthCheck, given, settings
 from hypothesis import strategies as st
 
 from voxelmat.errors import InputError
+from voxelmat.model.bounds import hashin_shtrikman
 from voxelmat.model.measure_physics import CellProperty, CellTarget
 from voxelmat.topopt.fields import Choice
 from voxelmat.topopt.filter import ConeFilter
@@ -134,3 +135,29 @@ def test_cell_whose_material_does_not_reach_through_has_no_poisson_ratio(unknown
     with pytest.raises(InputError, match="no load in some direction"):
         cell_response(CellProperty(kind="poisson")).value(physics)
     assert cell_response(CellProperty(kind="axial", axes=("y", "y"))).value(physics)[0] > 0
+
+
+@pytest.mark.parametrize("outside_in", [False, True])
+def test_two_phase_cells_keep_within_their_bounds(unknowns, outside_in):
+    # C6: Hashin & Shtrikman 1963, E 1 and 100, nu .3; at a fraction of 0.2 K in [1.1631, 8.1135]
+    # and G in [.5813, 4.829] (formula evaluated). For cubic cells K and the Voigt mean of G.
+    bulk, shear = np.array([1.0, 100.0]) / 1.2, np.array([1.0, 100.0]) / 2.6
+    w = np.array([[0.8], [0.2]])
+    found = [float(np.exp(v[0])) for b in hashin_shtrikman(w, bulk, shear) for v in (b.low, b.high)]
+    assert found == pytest.approx([1.1631, 8.1135, 0.5813, 4.829], rel=1e-4)
+    stiff = np.zeros((6, 6, 6))
+    stiff[1:5, 1:5, 1:5] = 1.0  # a cube, or walls round one
+    stiff = 1.0 - stiff if outside_in else stiff
+    u = unknowns(stiff.shape, [1.0, 100.0], [0.3, 0.3], void=False, radius=0.5, spacing=(1, 1, 1))
+    physics = Physics((), (1, 1, 1), tolerance=1e-8)
+    physics.update(u.forward(stiff.ravel()))
+    share = stiff.mean()
+    bands = hashin_shtrikman(np.array([[1 - share], [share]]), bulk, shear)
+    where = []
+    for kind, band in zip(("bulk", "shear"), bands, strict=True):
+        value = cell_response(CellProperty(kind=kind)).value(physics)[0]
+        low, high = float(np.exp(band.low[0])), float(np.exp(band.high[0]))
+        assert low < value < high
+        where.append((value - low) / (high - low))
+    # Stiff walls come near the upper bound, a stiff cube near the lower one.
+    assert min(where) > 0.8 if outside_in else max(where) < 0.2
