@@ -127,7 +127,7 @@ def unknowns():
     def build(
         shape, E, nu, *, void=True, radius=1.5, spacing=(1.0, 1.0, 1.0), penalty=3.0,
         kind="bounded", floor=1e-6, density=None, law=None, choice=None,
-        simplex=False,
+        simplex=False, empty_beyond=False,
     ):  # fmt: skip
         soft = floor * min(E)
         laws = VoidLaw(
@@ -137,6 +137,7 @@ def unknowns():
         return Unknowns(
             choice or _block(shape), _palette(E, nu, density, law),
             void=laws if void else None, spacing=spacing, radius=radius, simplex=simplex,
+            empty_beyond=empty_beyond,
         )  # fmt: skip
 
     return build

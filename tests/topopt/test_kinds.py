@@ -83,6 +83,7 @@ CASES = {
     "wide and extruded": {"links": {"group": groups(BOX, (), (1,), {})}, "width": 1.9},
     "zones": {"links": {"zones": two_zones()}, "frozen": True},
     "self-support": {"overhang": 40.0, "frozen": True},
+    "empty beyond": {"empty_beyond": True, "frozen": True},
 }
 
 

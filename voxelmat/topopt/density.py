@@ -27,7 +27,7 @@ class Density:
     void : VoidLaw or None
         None: every voxel of the domain is solid, and there is no unknown.
     smooth : ConeFilter
-        Over the domain.
+        Over the domain; over kept voxels, too, where what is beyond counts as empty.
     threshold : float
         Of the projection.
     overhang : SelfSupport or None
@@ -69,8 +69,10 @@ class Density:
         """`rho` and `filtered`."""
         c = self._choice
         raw = np.where(c.domain & ~c.empty, 1.0, 0.0)
+        if self._filter.empty_beyond:
+            raw[self._kept] = 1.0
         if self.void is None:
-            draft.rho = draft.filtered = raw
+            draft.rho = draft.filtered = np.where(c.domain, raw, 0.0)
             return
         free = self._free
         raw[free] = self._sharing.expand(x)

@@ -201,6 +201,8 @@ def _start_fractions(spec: DesignSpec) -> Array:
 def suits_criteria(spec: DesignSpec, unknowns: Unknowns) -> bool:
     """Whether optimality criteria apply: compliance, one limit, only solid or empty."""
     only_density = unknowns.n == unknowns.n_rho
+    if spec.robust is not None or spec.scatter or spec.support_angle is not None:
+        return False  # slopes may have either sign
     if not isinstance(spec.objective, Compliance) or len(spec.limits) != 1 or not only_density:
         return False
     (limit,) = spec.limits

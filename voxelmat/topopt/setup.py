@@ -95,4 +95,5 @@ def unknowns_of(part: Part, spec: DesignSpec, choice: Choice) -> Unknowns:
         width=spec.interface_width,
         overhang=spec.support_angle,
         simplex=spec.method == "mirror",
+        empty_beyond=spec.robust is not None,
     )

@@ -116,15 +116,17 @@ def minimum_from_profile(
     return out
 
 
-def lost_to_opening(mask: Bools, edge: int = 2) -> float:
+def lost_to_opening(mask: Bools, edge: int = 2, *, goes_on: bool = False) -> float:
     """Share of the marked voxels that no cube of `edge`^3 marked voxels covers.
 
-    Beyond the grid counts as not marked.
+    Beyond the grid counts as not marked, or, where it `goes_on`, as the voxel next to it.
     """
     if not mask.any():
         return 0.0
-    kept = binary_opening(mask, np.ones((edge, edge, edge), dtype=bool))
-    return float((mask & ~kept).sum() / mask.sum())
+    around = np.pad(mask, edge, mode="edge" if goes_on else "constant")
+    kept = binary_opening(around, np.ones((edge, edge, edge), dtype=bool))
+    inner = tuple(slice(edge, edge + n) for n in mask.shape)
+    return float((mask & ~kept[inner]).sum() / mask.sum())
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

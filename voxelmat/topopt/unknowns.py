@@ -50,6 +50,8 @@ class Unknowns:
         Self-support angle, degrees.
     simplex : bool
         Blend unknowns are fractions, see `Blending`.
+    empty_beyond : bool
+        What lies beyond the shape counts as empty in the filter of densities, see `ConeFilter`.
     extra : tuple of Kind
         Further kinds; they see the blends' moduli and come before the voids.
     """
@@ -68,12 +70,16 @@ class Unknowns:
         width: float | None = None,
         overhang: float | None = None,
         simplex: bool = False,
+        empty_beyond: bool = False,
         extra: tuple[Kind, ...] = (),
     ) -> None:
         self.choice, self.palette, self.threshold = choice, palette, threshold
         self.sharpness = 0.0
         self.resins = palette.bulk.size
-        smooth = ConeFilter(choice.domain, spacing, radius, periodic=choice.periodic)
+        around = choice.domain | (choice.kept_mu > 0) if empty_beyond else choice.domain
+        smooth = ConeFilter(
+            around, spacing, radius, periodic=choice.periodic, empty_beyond=empty_beyond
+        )
         self.density = Density(
             choice, void, smooth, threshold,
             None if overhang is None or void is None else SelfSupport(overhang, spacing),
