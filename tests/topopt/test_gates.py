@@ -111,6 +111,21 @@ def test_pad_with_a_target_deflection(unknowns, pad):
 
 
 @pytest.mark.slow
+def test_pad_with_a_map_of_targets(unknowns, pad):
+    # Record .0012 after 50 iterations, 48 x 48 x 24, filter 2.5, mean mass <= 1.15, start .3; gate
+    # .003. Pressure as for the smaller pad; the densities are our own.
+    n, shape = 48, (24, 48, 48)
+    u = unknowns(shape, [1.0, 2000.0], [0.49, 0.35], void=False, radius=2.5)
+    physics = Physics(pad(shape, 0.05 + hump(n, 0.15, 0.18)), (1, 1, 1), tolerance=1e-5)
+    along = np.cos(2 * np.pi * np.arange(n + 1) / n)
+    wanted = -0.5 * (1 + 0.4 * along[:, None] * along[None])
+    bound = Bound(response=mean_of(shape, [1.0, 1.2]), limit=1.15)
+    history = descend(u, physics, top_target(shape, wanted), (bound,), np.full(u.n, 0.3), 50)
+    assert history[-1].objective <= 0.003
+    assert history[-1].violation <= 1e-3
+
+
+@pytest.mark.slow
 def test_six_resins_whose_cost_is_not_monotone(unknowns, pad):
     # Record .134 with a softmax over the simplex; gate .16. An ordered path is trapped at .47.
     n, nz = 28, 12
