@@ -1,11 +1,13 @@
 """Rules in whole designs: pure, extruded, zones, few resins, skin, least sizes; bad input."""
 
+import dataclasses
+
 import numpy as np
 import pytest
 
 from voxelmat.errors import InputError
 from voxelmat.model.blend import EMPTY, Blend
-from voxelmat.model.design_rules import ChosenZones, Robust, Skin, Zones
+from voxelmat.model.design_rules import ChosenZones, LoadScatter, Robust, Skin, Zones
 from voxelmat.model.design_spec import (
     Compliance,
     DesignSpec,
@@ -277,3 +279,35 @@ def test_zone_numbers_are_whole():
         Zones(numbers=np.full(SHAPE, -1))
     with pytest.raises(InputError, match="1 to 4096 zones"):
         ChosenZones(count=0)
+
+
+def test_a_robust_design_resumes_to_the_bit_and_says_what_it_was_judged_by(tmp_path):
+    s = spec(
+        resins=("rigid",), void=True, limits=(VolumeLimit(fraction=0.5),), robust=Robust(),
+        scatter=(LoadScatter(angle=10.0),), iterations=6,
+    )  # fmt: skip
+    whole = optimise(block(), [tip(block())], s)
+    file = tmp_path / "state.npz"
+    optimise(block(), [tip(block())], dataclasses.replace(s, iterations=3), checkpoint=file)
+    resumed = optimise(block(), [tip(block())], s, checkpoint=file)
+    np.testing.assert_array_equal(resumed.unknowns, whole.unknowns)
+    assert any(n.startswith("Judged over 7 ways to come out: compliance") for n in whole.notes)
+
+
+def test_a_self_supporting_design_has_no_overhangs():
+    part = block((10, 2, 8))
+    s = spec(
+        resins=("rigid",), void=True, limits=(VolumeLimit(fraction=0.5),), support_angle=45.0,
+        iterations=24, projection=Projection(sharpness=(1.0, 4.0, 16.0), every=6),
+    )  # fmt: skip
+    result = optimise(part, [tip(part)], s)
+    solid = result.density > 0.5
+    below = np.pad(solid, ((1, 1), (1, 1), (0, 0)))[:, :, :-1]
+    held = (
+        below[1:-1, 1:-1] | below[:-2, 1:-1] | below[2:, 1:-1] | below[1:-1, :-2] | below[1:-1, 2:]
+    )
+    over = solid[:, :, 1:] & ~held
+    frozen = np.zeros(part.grid.shape, bool)
+    frozen[0], frozen[-1] = True, True
+    assert not (over & ~frozen[:, :, 1:]).any()
+    assert result.feasible

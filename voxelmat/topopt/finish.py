@@ -10,6 +10,7 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
+from scipy.ndimage import label
 
 from voxelmat.model.design_result import ConstraintValue, DesignResult
 from voxelmat.model.design_spec import DesignSpec
@@ -81,7 +82,15 @@ def finished(
         ),
         density=np.where(unknowns.choice.kept_mu > 0, 1.0, fields.rho).T.astype(np.float32),
         fractions=np.ascontiguousarray(fields.w, dtype=np.float32).transpose(0, 3, 2, 1),
-        notes=(*notes, *_radius_note(part, spec), *_law_notes(fields), *more, *remarks),
+        notes=(
+            *notes,
+            *_radius_note(part, spec),
+            *_law_notes(fields),
+            *_pieces_note(problem, fields),
+            *more,
+            *remarks,
+            *problem.remarks(outcome.state.whole),
+        ),
         stages=stages,
         prices=prices,
         unknowns=outcome.state.whole,
@@ -156,6 +165,19 @@ def _cost(problem: LayoutProblem, values: Array, rounded: Array, relative: bool)
     for bound, was, now in zip(problem.bounds, values[1:], rounded[1:], strict=True):
         worst = max(worst, bound.excess(now) - max(bound.excess(was), 0.0))
     return float(worst)
+
+
+def _pieces_note(problem: LayoutProblem, fields: Fields) -> tuple[str, ...]:
+    """Solid that hangs on nothing: it would fall off, or print as a part of its own."""
+    solid = (fields.rho > 0.5) | (problem.unknowns.choice.kept_mu > 0)
+    numbers, count = label(solid)
+    if count < 2:
+        return ()
+    loose = int(solid.sum() - np.bincount(numbers[solid]).max())
+    return (
+        f"The solid is {count} pieces that touch in no face; {loose} voxels lie apart from the "
+        "largest. Raise the filter radius, the iterations or the volume.",
+    )
 
 
 def _radius_note(part: Part, spec: DesignSpec) -> tuple[str, ...]:

@@ -150,6 +150,10 @@ class LayoutProblem:
                 "nothing to optimise: free voxels that matter to it, or choose another objective."
             )
 
+    def remarks(self, x: Array) -> tuple[str, ...]:
+        """What people are told about x besides its values: nothing here."""
+        return ()
+
     def warm_state(self) -> dict[str, Array]:
         """Last displacements and adjoints."""
         return self.physics.warm_state()

@@ -34,6 +34,7 @@ from voxelmat.topopt.physics import Physics
 from voxelmat.topopt.problem import LayoutProblem
 from voxelmat.topopt.responses import Amount, ComplianceResponse, Response
 from voxelmat.topopt.unknowns import Unknowns
+from voxelmat.units import quantity
 
 __all__ = ["RobustProblem"]
 
@@ -215,6 +216,16 @@ class RobustProblem(LayoutProblem):
         ratio = 1.0 if known is None else float(known[0])
         slope = self.unknowns.transpose(self._fields[dilated.realisation], slopes)
         return bound.excess(ratio * value), bound.slope * ratio * slope
+
+    def remarks(self, x: Array) -> tuple[str, ...]:
+        """How the objective that was judged compares with that of the nominal design."""
+        judged = self.evaluate(x, self.unknowns.sharpness).reported
+        nominal = self.objective.report(self.objective.value(self.physics)[0])
+        name, unit = self.objective.name, self.objective.unit
+        return (
+            f"Judged over {1 + len(self.ensemble.all)} ways to come out: {name} "
+            f"{quantity(judged, unit)}; as designed {quantity(nominal, unit)}.",
+        )
 
     # ------------------------------------------------------------------ keeping
     def warm_state(self) -> dict[str, Array]:
