@@ -311,3 +311,19 @@ def test_a_self_supporting_design_has_no_overhangs():
     frozen[0], frozen[-1] = True, True
     assert not (over & ~frozen[:, :, 1:]).any()
     assert result.feasible
+
+
+def test_robust_borders_between_resins_keep_phases_and_end_pure():
+    s = spec(
+        resins=("middle", "rigid"), blends="pure", robust=Robust(margin=0.1), iterations=15,
+        projection=Projection(sharpness=(0.0, 4.0, 16.0), every=5),
+    )  # fmt: skip
+    problem, _ = layout_problem(block(), [tip(block())], s)
+    ensemble = problem.ensemble
+    assert ensemble.eroded is None  # nothing may be empty
+    assert [w.realisation.bias[0] > 0 for w in ensemble.phases] == [False, True]
+    result = optimise(block(), [tip(block())], s)
+    assert {b for b in result.part.palette if b != EMPTY} <= {
+        Blend.pure("middle"), Blend.pure("rigid"),
+    }  # fmt: skip
+    assert any(n.startswith("Judged over 3 ways") for n in result.notes)
