@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import dataclasses
 import tempfile
 from collections.abc import Callable
 from pathlib import Path
@@ -14,7 +15,9 @@ from voxelmat.monitor import SILENT, Monitor
 from voxelmat.printing.scan import FirstSeen
 from voxelmat.shape.inside import contains
 from voxelmat.shape.solid import box, cylinder
+from voxelmat.topopt.optimise import optimise
 from voxelmat.workflow.build import Built, build
+from voxelmat.workflow.designing import design_spec
 from voxelmat.workflow.pipeline import run
 from voxelmat.workflow.warm_printing import rare_prints
 
@@ -126,6 +129,25 @@ class _TinyJob:
 
         return job
 
+    def other_methods(self) -> None:
+        """The optimisers that the design's own run does not take, with empty voxels and three resins."""
+        if self._built is None:
+            self.shape()
+        if self._built is None:
+            return
+        built = self._built
+        third = built.library["rigid-tough"]
+        part = built.part.replace(resins=(*built.part.resins, third))
+        spec = design_spec(built)
+        more = (*spec.resins, third.name)
+        asked = (
+            dataclasses.replace(spec, method="mma", iterations=3),
+            dataclasses.replace(spec, method="gcmma", iterations=3),
+            dataclasses.replace(spec, method="mirror", resins=more, void=True, iterations=3),
+        )
+        for one in asked:
+            optimise(part, built.load_cases, one)
+
 
 def _first_seen() -> None:
     """What only a stack with faults calls."""
@@ -160,6 +182,7 @@ def warm(monitor: Monitor = SILENT) -> list[Warmed]:
             *solver_groups(),
             ("shapes and voxels", tiny.shape),
             ("optimiser", tiny.stages("optimise")),
+            ("other optimisers", tiny.other_methods),
             ("slicing", tiny.stages("stack")),
             ("reading back", tiny.stages("stack", "as printed")),
             ("rare prints", lambda: rare_prints(Path(name) / "rare")),
