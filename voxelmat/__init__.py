@@ -29,6 +29,8 @@ if TYPE_CHECKING:
     from voxelmat.io.volumes import export, import_volume, volume_to_part
     from voxelmat.io.vti import write_vti
     from voxelmat.model.blend import Blend
+    from voxelmat.model.design_spec import DesignSpec
+    from voxelmat.model.goal import AtLeast, AtMost, Maximise, Minimise
     from voxelmat.model.grid import VoxelGrid
     from voxelmat.model.halftone import Halftone
     from voxelmat.model.heatcase import HeatCase
@@ -44,7 +46,7 @@ if TYPE_CHECKING:
     from voxelmat.printing.inspection import measure
     from voxelmat.printing.job import PrintJob
     from voxelmat.printing.orient import compare_orientations
-    from voxelmat.printing.preflight import preflight
+    from voxelmat.printing.preflight import check_stack, preflight
     from voxelmat.printing.profile import load_profile
     from voxelmat.printing.proof import write_proof
     from voxelmat.printing.readback import read_stack
@@ -53,6 +55,7 @@ if TYPE_CHECKING:
     from voxelmat.shape.to_store import voxelise_to_store
     from voxelmat.topopt.optimise import optimise
     from voxelmat.workbench.app import open_workbench
+    from voxelmat.workbench.comparison import compare
     from voxelmat.workflow.build import build
     from voxelmat.workflow.pipeline import run
     from voxelmat.workflow.report import write_report
@@ -62,12 +65,17 @@ if TYPE_CHECKING:
 __version__ = "0.1.0"
 
 _HOMES = {
+    "AtLeast": "voxelmat.model.goal",
+    "AtMost": "voxelmat.model.goal",
     "Blend": "voxelmat.model.blend",
+    "DesignSpec": "voxelmat.model.design_spec",
     "Dimension": "voxelmat.model.inspection",
     "Halftone": "voxelmat.model.halftone",
     "HeatCase": "voxelmat.model.heatcase",
     "LoadCase": "voxelmat.model.loadcase",
     "Material": "voxelmat.model.material",
+    "Maximise": "voxelmat.model.goal",
+    "Minimise": "voxelmat.model.goal",
     "Part": "voxelmat.model.part",
     "PrintJob": "voxelmat.printing.job",
     "PrintProfile": "voxelmat.model.profile",
@@ -78,6 +86,8 @@ _HOMES = {
     "VoxelGrid": "voxelmat.model.grid",
     "buckling": "voxelmat.fea.buckling",
     "build": "voxelmat.workflow.build",
+    "check_stack": "voxelmat.printing.preflight",
+    "compare": "voxelmat.workbench.comparison",
     "compare_orientations": "voxelmat.printing.orient",
     "conduct": "voxelmat.fea.heat",
     "conduct_over_time": "voxelmat.fea.heat",
@@ -123,12 +133,17 @@ _HOMES = {
 }
 
 __all__ = [
+    "AtLeast",
+    "AtMost",
     "Blend",
+    "DesignSpec",
     "Dimension",
     "Halftone",
     "HeatCase",
     "LoadCase",
     "Material",
+    "Maximise",
+    "Minimise",
     "Part",
     "PrintJob",
     "PrintProfile",
@@ -140,6 +155,8 @@ __all__ = [
     "__version__",
     "buckling",
     "build",
+    "check_stack",
+    "compare",
     "compare_orientations",
     "conduct",
     "conduct_over_time",

@@ -130,7 +130,7 @@ class _TinyJob:
         return job
 
     def other_methods(self) -> None:
-        """The optimisers that the design's own run does not take, with empty voxels and three resins."""
+        """The optimisers that the design's own run does not take, with three resins and voids."""
         if self._built is None:
             self.shape()
         if self._built is None:
