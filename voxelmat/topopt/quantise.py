@@ -49,7 +49,8 @@ def quantise(fractions: Array, weight: Array, stiffness: Array, levels: int) -> 
     Quantised
     """
     if not len(fractions):  # an early design may lie below the level of its outline everywhere
-        return Quantised(table=np.eye(fractions.shape[1])[:1], index=np.empty(0, np.intp), error=0.0)
+        first = np.eye(fractions.shape[1])[:1]
+        return Quantised(table=first, index=np.empty(0, np.intp), error=0.0)
     clean = np.where(fractions < _TRACE, 0.0, fractions)
     clean /= clean.sum(1, keepdims=True)
     rows, back = np.unique(clean, axis=0, return_inverse=True)
