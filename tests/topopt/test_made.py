@@ -154,7 +154,7 @@ def test_words():
     assert (
         remark
         == "As printed the mass is 2.20 g instead of 2.00 (at most 2.00), which breaks the limit."
-    )  # noqa: E501
+    )
     lost = dataclasses.replace(value, palette=np.nan, printed=None)
     assert "does not hang together" in lost.remarks[0]
     lower = dataclasses.replace(value, sense="at least", optimised=3e-6, palette=1e-6)

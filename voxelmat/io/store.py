@@ -55,7 +55,9 @@ def material_of(record: dict[str, Any]) -> Material:
     fields = dict(record)
     for key, value in record.items():
         if isinstance(value, dict) and "factor" in value:
-            course = {k: tuple(v) if isinstance(v, list) else v for k, v in value.items()}
+            course: dict[str, Any] = {
+                k: tuple(v) if isinstance(v, list) else v for k, v in value.items()
+            }
             fields[key] = TemperatureFactor(**course)
         elif isinstance(value, dict):
             fields[key] = Constant(**value)

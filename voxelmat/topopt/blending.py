@@ -42,7 +42,7 @@ def sharpen(w: Array, exponent: float, bias: Array) -> tuple[Array, Array]:
 
 def sharpen_back(sharp: Array, ratio: Array, exponent: float, slope: Array) -> Array:
     """Derivative by the fractions before `sharpen`, from that by those after it."""
-    return exponent * ratio * (slope - (slope * sharp).sum(0))
+    return np.asarray(exponent * ratio * (slope - (slope * sharp).sum(0)))
 
 
 def purest(w: Array) -> Array:
