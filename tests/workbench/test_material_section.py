@@ -80,6 +80,18 @@ def test_the_blend_is_laid_by_a_rule_and_taken_back(bench):
         bench.mix.put_in(3)
 
 
+def test_a_rule_takes_the_blend_in_hand_by_its_button(bench):
+    section = bench.sections["mix"]
+    bench.mix.mix({"measured-soft": 1, "measured-hard": 1})
+    section.act("where", "pad")
+    section.act("put", None)
+    bench.mix.share("measured-hard", 0.2)
+    section.act("rule", ["Use blend", 0])
+    assert bench.draft.data["layout"][0]["blend"]["measured-hard"] == pytest.approx(0.2)
+    pictures = [c for c in section.controls() if c["kind"] == "picture"]
+    assert any("band" in p["alt"] for p in pictures)
+
+
 def test_compared_blends_come_back_after_reopening(bench, small_design):
     bench.mix.mix({"measured-soft": 1, "measured-hard": 3})
     bench.mix.compare()

@@ -15,6 +15,7 @@ from voxelmat.model.blend import Blend
 from voxelmat.printing.mask import thresholds
 from voxelmat.units import number, quantity
 from voxelmat.workbench import controls as c
+from voxelmat.workbench.plots import lines_png
 from voxelmat.workbench.section import Section, number_from
 from voxelmat.workflow.blendfacts import BlendFacts, blend_facts, blend_of_hardness
 from voxelmat.workflow.draft_keys import add_at
@@ -36,6 +37,7 @@ class MaterialSection(Section):
     def __init__(self, bench: Any) -> None:
         super().__init__(bench)
         self._library: tuple[Any, Library] | None = None
+        self._curves: tuple[Any, ...] = (None, [], [], {})
 
     # ------------------------------------------------------------------ the blend in hand
     @property
@@ -220,6 +222,7 @@ class MaterialSection(Section):
         ]
 
     def _soft_and_stiff(self) -> list[str]:
+        """The resins of the blend in hand, the softest first."""
         return sorted(self.parts, key=lambda n: self.library[n].E.value)
 
     def _facts(self, facts: BlendFacts) -> list[c.Control]:
@@ -233,6 +236,10 @@ class MaterialSection(Section):
                 f"One layer of droplets of {facts.blend}",
             ),
         ]  # fmt: skip
+        pair = self._soft_and_stiff()
+        if len(pair) == 2:
+            png = self._curve(pair[0], pair[1], round(facts.blend.fraction(pair[1]), 3))
+            shown.append(c.picture(png, f"Modulus against the share of {pair[1]}, with its band"))
         if not facts.calibrated:
             shown.append(c.words("No measured curve covers this blend; logarithms are mixed.",
                                  tone="warn"))  # fmt: skip
@@ -259,6 +266,27 @@ class MaterialSection(Section):
             )  # fmt: skip
         return shown
 
+    def _curve(self, soft: str, stiff: str, share: float) -> bytes:
+        """Modulus and its band against the share of the stiffer resin, and the blend in hand."""
+        key = (self.law, soft, stiff)
+        if self._curves[0] != key:
+            at = [n / 20 for n in range(21)]
+            facts = [
+                blend_facts(self.library, self.law, Blend.of({soft: 1 - x, stiff: x})) for x in at
+            ]
+            self._curves = (key, at, facts, {})
+        _, at, facts, drawn = self._curves
+        if share not in drawn:
+            here = blend_facts(self.library, self.law, Blend.of({soft: 1 - share, stiff: share}))
+            curves = {
+                "E": (at, [f.E for f in facts]),
+                "lowest": (at, [f.E_low for f in facts]),
+                "highest": (at, [f.E_high for f in facts]),
+                "in hand": ([share, share], [here.E_low, here.E_high]),
+            }
+            drawn[share] = lines_png(curves, f"share of {stiff}", "E, MPa", logarithmic=True)
+        return bytes(drawn[share])
+
     def _rules(self) -> list[c.Control]:
         rules = self.bench.draft.data.get("layout", [])
         rows = [[r.get("region", "whole part"), r["kind"], _rule_words(r)] for r in rules]
@@ -268,7 +296,7 @@ class MaterialSection(Section):
                 rows,
                 caption="Layout, in order; later rules win",
                 name="rule",
-                actions=["Remove"],
+                actions=["Use blend", "Remove"],
             )
         ]
 
@@ -297,8 +325,10 @@ class MaterialSection(Section):
             self.call("compare")
         elif name == "compared":
             self.call("mix", parts=dict(self.compared[int(value[1])].fractions))
-        elif name == "rule":
+        elif name == "rule" and value[0] == "Remove":
             self.call("remove_rule", rule=int(value[1]))
+        elif name == "rule":
+            self.call("put_in", rule=int(value[1]))
 
 
 def _fact_rows(facts: BlendFacts) -> list[list[str]]:
