@@ -277,12 +277,11 @@ class MaterialSection(Section):
             self._curves = (key, at, facts, {})
         _, at, facts, drawn = self._curves
         if share not in drawn:
-            here = blend_facts(self.library, self.law, Blend.of({soft: 1 - share, stiff: share}))
             curves = {
                 "E": (at, [f.E for f in facts]),
                 "lowest": (at, [f.E_low for f in facts]),
                 "highest": (at, [f.E_high for f in facts]),
-                "in hand": ([share, share], [here.E_low, here.E_high]),
+                "in hand": ([share, share], [facts[0].E_low, facts[-1].E_high]),
             }
             drawn[share] = lines_png(curves, f"share of {stiff}", "E, MPa", logarithmic=True)
         return bytes(drawn[share])
