@@ -29,6 +29,7 @@ if TYPE_CHECKING:
     from voxelmat.io.volumes import export, import_volume, volume_to_part
     from voxelmat.io.vti import write_vti
     from voxelmat.model.blend import Blend
+    from voxelmat.model.design_rules import Robust
     from voxelmat.model.design_spec import DesignSpec
     from voxelmat.model.goal import AtLeast, AtMost, Maximise, Minimise
     from voxelmat.model.grid import VoxelGrid
@@ -53,13 +54,16 @@ if TYPE_CHECKING:
     from voxelmat.printing.stack import write_job, write_stack
     from voxelmat.printing.tray import Tray, TrayEntry, lay_out, write_tray
     from voxelmat.shape.to_store import voxelise_to_store
+    from voxelmat.topopt.feasibility import reachable
     from voxelmat.topopt.optimise import optimise
+    from voxelmat.topopt.sizes import minimum_from_profile
     from voxelmat.workbench.app import open_workbench
     from voxelmat.workbench.comparison import compare
     from voxelmat.workflow.build import build
     from voxelmat.workflow.pipeline import run
     from voxelmat.workflow.report import write_report
     from voxelmat.workflow.ticket import write_ticket
+    from voxelmat.workflow.tradeoff import Sweep, tradeoff
     from voxelmat.workflow.traying import run_tray
 
 __version__ = "0.1.0"
@@ -79,7 +83,9 @@ _HOMES = {
     "Part": "voxelmat.model.part",
     "PrintJob": "voxelmat.printing.job",
     "PrintProfile": "voxelmat.model.profile",
+    "Robust": "voxelmat.model.design_rules",
     "StoredPart": "voxelmat.io.bigpart",
+    "Sweep": "voxelmat.workflow.tradeoff",
     "Tray": "voxelmat.printing.tray",
     "TrayEntry": "voxelmat.printing.tray",
     "Volume": "voxelmat.model.volume",
@@ -108,12 +114,14 @@ _HOMES = {
     "load_library": "voxelmat.io.materials",
     "load_profile": "voxelmat.printing.profile",
     "measure": "voxelmat.printing.inspection",
+    "minimum_from_profile": "voxelmat.topopt.sizes",
     "modes": "voxelmat.fea.modal",
     "open_big_part": "voxelmat.io.bigpart",
     "open_workbench": "voxelmat.workbench.app",
     "optimise": "voxelmat.topopt.optimise",
     "preflight": "voxelmat.printing.preflight",
     "press": "voxelmat.fea.contact",
+    "reachable": "voxelmat.topopt.feasibility",
     "read_mesh": "voxelmat.io.mesh",
     "read_stack": "voxelmat.printing.readback",
     "run": "voxelmat.workflow.pipeline",
@@ -121,6 +129,7 @@ _HOMES = {
     "save_big_part": "voxelmat.io.bigpart_write",
     "solve": "voxelmat.fea.static",
     "solve_cases": "voxelmat.fea.cases",
+    "tradeoff": "voxelmat.workflow.tradeoff",
     "volume_to_part": "voxelmat.io.volumes",
     "voxelise_to_store": "voxelmat.shape.to_store",
     "write_job": "voxelmat.printing.stack",
@@ -147,7 +156,9 @@ __all__ = [
     "Part",
     "PrintJob",
     "PrintProfile",
+    "Robust",
     "StoredPart",
+    "Sweep",
     "Tray",
     "TrayEntry",
     "Volume",
@@ -177,12 +188,14 @@ __all__ = [
     "load_library",
     "load_profile",
     "measure",
+    "minimum_from_profile",
     "modes",
     "open_big_part",
     "open_workbench",
     "optimise",
     "preflight",
     "press",
+    "reachable",
     "read_mesh",
     "read_stack",
     "run",
@@ -190,6 +203,7 @@ __all__ = [
     "save_big_part",
     "solve",
     "solve_cases",
+    "tradeoff",
     "volume_to_part",
     "voxelise_to_store",
     "write_job",
