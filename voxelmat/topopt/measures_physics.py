@@ -8,6 +8,7 @@ from typing import Any
 from voxelmat.model.measure_physics import (
     CellProperty,
     CellTarget,
+    ConnectedSolid,
     ContactPeak,
     Frequency,
     MeanTemperature,
@@ -17,6 +18,7 @@ from voxelmat.model.measure_physics import (
     Warpage,
 )
 from voxelmat.topopt.response_cell import cell_response
+from voxelmat.topopt.response_connected import connected_response
 from voxelmat.topopt.response_contact import contact_response
 from voxelmat.topopt.response_frequency import frequency_response
 from voxelmat.topopt.response_temperature import temperature_response
@@ -40,6 +42,7 @@ PHYSICS: dict[type, Callable[[Any, Setting], Response]] = {
     Frequency: lambda m, s: frequency_response(m, s.part, s.unknowns, s.key),
     CellProperty: _cell,
     CellTarget: _cell,
+    ConnectedSolid: lambda m, s: connected_response(m, s.part, s.cases, s.unknowns, s.key),
     ContactPeak: lambda m, s: contact_response(m, s.part, s.unknowns, s.key),
     PeakTemperature: _temperature,
     MeanTemperature: _temperature,
