@@ -8,6 +8,7 @@ import numpy as np
 import pytest
 from PIL import Image
 
+from voxelmat.errors import InputError
 from voxelmat.model.blend import EMPTY, Blend
 from voxelmat.model.grid import VoxelGrid
 from voxelmat.model.part import Part
@@ -74,6 +75,26 @@ def test_pictures_come_out_the_same_twice(made_up):
     part = made_up.grip()
     assert cut_picture(part).png == cut_picture(part).png
     assert space_picture(part).png == space_picture(part).png
+
+
+def test_a_part_without_material_has_a_picture_that_says_so(made_up):
+    part = made_up.grip()
+    bare = part.replace(
+        labels=np.zeros_like(part.labels),
+        occupancy=None,
+        distance=np.full(part.grid.shape, 127, dtype=np.int8, order="F"),
+        bodies={},
+    )
+    picture = space_picture(bare)
+    assert picture.alt.startswith("No material")
+    assert (pixels(picture) < 128).any()
+    assert cut_picture(bare).png
+    faces, _ = faces_of_cut(bare, np.ones(bare.grid.shape, dtype=bool))
+    none = np.zeros((0, 3), dtype=np.uint8)
+    with pytest.raises(InputError, match="nothing to draw"):
+        draw_faces(faces, none, bare.grid.spacing)
+    whole, _ = faces_of_cut(part, part.solid)
+    assert (draw_faces(faces, none, part.grid.spacing, width=200, around=whole).rgb == 255).all()
 
 
 def test_depth_picture_of_a_block_has_the_true_outline(made_up):

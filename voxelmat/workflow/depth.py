@@ -8,6 +8,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from voxelmat.errors import InputError
 from voxelmat.model.part import Part
 from voxelmat.model.surface import Faces, carriers, exposed_faces
 
@@ -147,7 +148,7 @@ def draw_faces(
     Parameters
     ----------
     faces : Faces
-        At least one.
+        None at all leave the picture white where `around` has some.
     rgb : ndarray of uint8, shape (n, 3)
         Colour of each face before shading.
     spacing : tuple of float
@@ -161,7 +162,17 @@ def draw_faces(
     Returns
     -------
     Shot
+
+    Raises
+    ------
+    InputError
+        No face in `faces` and none in `around`.
     """
+    if not len(faces) and not (around and len(around)):
+        raise InputError(
+            "There is nothing to draw: the part has no voxel of material inside its outline. Look "
+            "at its bodies, or at the limits that its design had to keep."
+        )
     camera = camera or Camera()
     axes = camera.axes()
     box = _box_corners(around or faces, spacing)

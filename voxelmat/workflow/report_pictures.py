@@ -185,6 +185,14 @@ def _dress(ax: Axes, shot: Shot, title: str) -> None:
     ax.set_ylim(rows, 0)
 
 
+def _nothing() -> Picture:
+    """What stands where a part without material would be shown."""
+    fig = figure(9.0, 1.2)
+    words = "No material: the part has no voxel inside its outline."
+    fig.text(0.5, 0.5, words, ha="center", va="center", fontsize=11)
+    return Picture(png=png(fig), alt=words, caption=words)
+
+
 def space_picture(part: Part) -> Picture:
     """The part in space: whole, and with the half nearest to the viewer taken away."""
     rgb = palette_rgb(part)
@@ -192,6 +200,8 @@ def space_picture(part: Part) -> Picture:
     away[:, : middle(part)[1], :] = False
     shots = []
     whole, _ = faces_of_cut(part, np.ones(part.grid.shape, dtype=bool))
+    if not len(whole):
+        return _nothing()
     for faces in (whole, faces_of_cut(part, away)[0]):
         colours = rgb[part.labels[tuple(faces.voxel.T)]]
         shots.append(draw_faces(faces, colours, part.grid.spacing, width=760, around=whole))
