@@ -74,6 +74,11 @@ GIVEN = {
         'position_mm = [6.0, 4.0, 14.0], push = "z-" }', "at_most_MPa = 0.5", 0.5,
     ),
     "trapped support": ('closed = "bottom"', "at_most = 0.3", 0.3),
+    "connected solid": ('held_in = "press"', "at_most = 5.0", 5.0),
+    "warping": (
+        'region = "top"\nheld_in = "press"\nchange_K = -20.0\ndirection = "x+"',
+        "at_most_mm = 0.05", 0.05,
+    ),
 }  # fmt: skip
 
 
@@ -113,6 +118,37 @@ def test_settings_arrive(design):
     assert spec.measure.direction == (0.0, 0.0, -1.0)
     assert spec.measure.of == "largest"
     np.testing.assert_array_equal(spec.measure.nodes, built.regions["top"].nodes(built.part))
+
+
+def test_what_holds_the_part_arrives(design):
+    coarse(design)
+    write(design, '[optimise.minimise]\nmeasure = "warping"\nregion = "top"\n'
+                  'held_in = "press"\nchange_K = -20.0\ndirection = "x-"\n'
+                  '[[optimise.limit]]\nmeasure = "connected solid"\nat_most = 2.0\n'
+                  '[[optimise.limit]]\nmeasure = "connected solid"\nheld_in = "press"\n'
+                  'exponent = 8.0\nat_most = 2.0\n')  # fmt: skip
+    built = build(design)
+    spec = design_spec(built)
+    (case,) = built.load_cases
+    assert case.supports
+    assert spec.measure.supports == case.supports
+    assert spec.measure.change_K == -20.0
+    assert spec.measure.direction == (-1.0, 0.0, 0.0)
+    anywhere, named = (limit.measure for limit in spec.limits)
+    assert (anywhere.supports, named.supports, named.exponent) == ((), case.supports, 8.0)
+
+
+def test_a_connected_solid_is_designed_from_the_file(design):
+    coarse(design)
+    write(design, 'void = true\nobjective = "compliance"\n[[optimise.limit]]\n'
+                  'measure = "connected solid"\nat_most = 3.0\n[[optimise.limit]]\n'
+                  'kind = "volume"\nat_most_fraction = 0.6\n')  # fmt: skip
+    design.write_text(design.read_text().replace("iterations = 2\n", "iterations = 40\n"))
+    found = optimised(build(design))
+    assert found.feasible, found.notes
+    (kept,) = [c for c in found.constraints if c.name == "connected solid"]
+    assert kept.limit == 3.0
+    assert 0 < kept.value < 3.1
 
 
 def test_rules_arrive(design):
@@ -155,6 +191,10 @@ objective = "compliance"
         ('[optimise.minimise]\nmeasure = "frequency"', "optimise.minimise.held_in", "needs it"),
         ('[optimise.minimise]\nmeasure = "frequency"\nheld_in = "prss"',
          "optimise.minimise.held_in", "press"),
+        ('[optimise.minimise]\nmeasure = "connected solid"\nheld_in = "prss"',
+         "optimise.minimise.held_in", "press"),
+        ('[optimise.minimise]\nmeasure = "warping"\nregion = "top"\nheld_in = "press"',
+         "optimise.minimise.change_K", "needs it"),
         ('[optimise.minimise]\nmeasure = "resin volume"\nresin = "gold"',
          "optimise.minimise.resin", "gold"),
         ('[optimise.minimise]\nmeasure = "volume"\nregion = "tap"', "optimise.minimise.region",
@@ -214,6 +254,12 @@ def test_one_resin_and_forty_one(design):
          '[[optimise.limit]]\nmeasure = "mass"\nat_most_g = 5.0', "no surface of its own"),
         ('[optimise.minimise]\nmeasure = "mass"\n'
          '[[optimise.limit]]\nmeasure = "compliance"\nat_most_N_mm = 1e-9', "out of reach"),
+        ('[optimise.minimise]\nmeasure = "compliance"\n'
+         '[[optimise.limit]]\nmeasure = "connected solid"\nat_most = 2.0', "no empty voxels"),
+        ('[optimise.minimise]\nmeasure = "warping"\nregion = "top"\nheld_in = "press"\n'
+         "change_K = 10.0", "no thermal expansion"),
+        ('[optimise.minimise]\nmeasure = "warping"\nregion = "top"\nheld_in = "press"\n'
+         "change_K = 0.0", "needs a change of temperature"),
         ('[optimise.minimise]\nmeasure = "cost"\n'
          '[[optimise.limit]]\nmeasure = "compliance"\nat_most_N_mm = 1.0', "cost per kg"),
     ],

@@ -73,6 +73,8 @@ MEASURE_KEYS: Mapping[str, MeasureKeys] = {
         "MPa", needs=("indenter", "load_case"), may=("depth_mm", "force_N", "exponent")
     ),
     "trapped support": MeasureKeys(may=("closed", "exponent")),
+    "connected solid": MeasureKeys(may=("held_in", "exponent")),
+    "warping": MeasureKeys("mm", needs=("change_K", "region", "held_in"), may=("direction",)),
 }  # fmt: skip
 
 #: Measures that no load case has a part in.

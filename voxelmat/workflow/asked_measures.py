@@ -35,12 +35,14 @@ from voxelmat.model.measure_entry import MeasureEntry
 from voxelmat.model.measure_physics import (
     CellProperty,
     CellTarget,
+    ConnectedSolid,
     ContactPeak,
     Frequency,
     MeanTemperature,
     PeakTemperature,
     ThermalCompliance,
     TrappedSupport,
+    Warpage,
 )
 from voxelmat.model.region import parse_side
 from voxelmat.workflow.build import Built
@@ -149,15 +151,21 @@ def _interface(built: Built, given: Given) -> InterfaceTraction:
     return InterfaceTraction(bonds=built.resolved.bonds, region=_voxels(built, given), **rest)
 
 
-def _frequency(built: Built, given: Given) -> Frequency:
+def _holding(built: Built, given: Given) -> dict[str, Any]:
+    """Supports and springs of the load case that the part is held in."""
+    if "held_in" not in given:
+        return {}
     case = _case(built, given["held_in"])
     springs = tuple(x for x in case.loads if isinstance(x, GroundSpring | Foundation))
+    return {"supports": case.supports, "springs": springs}
+
+
+def _frequency(built: Built, given: Given) -> Frequency:
     carried = built.regions[given["carried"]] if "carried" in given else None
     return Frequency(
-        supports=case.supports,
-        springs=springs,
         carried=carried,
         carried_tonne=given.get("carried_g", 0.0) * _TONNE_PER_G,
+        **_holding(built, given),
         **_some(given, "count", "exponent"),
     )
 
@@ -235,6 +243,15 @@ def _support(built: Built, given: Given) -> TrappedSupport:
     return TrappedSupport(closed=_region(built, given, "closed"), **_some(given, "exponent"))
 
 
+def _warping(built: Built, given: Given) -> Warpage:
+    return Warpage(
+        change_K=given["change_K"],
+        region=_region(built, given),
+        direction=_along(given.get("direction", "z+")),
+        **_holding(built, given),
+    )
+
+
 _MADE: dict[str, Callable[[Built, Given], object]] = {
     "compliance": lambda b, g: Compliance(**_some(g, "load_cases")),
     "worst compliance": lambda b, g: WorstCompliance(**_some(g, "load_cases", "exponent")),
@@ -262,4 +279,6 @@ _MADE: dict[str, Callable[[Built, Given], object]] = {
     "thermal compliance": lambda b, g: ThermalCompliance(**_heat(b, g)),
     "contact peak": _contact,
     "trapped support": _support,
+    "connected solid": lambda b, g: ConnectedSolid(**_holding(b, g), **_some(g, "exponent")),
+    "warping": _warping,
 }
