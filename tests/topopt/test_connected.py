@@ -166,6 +166,7 @@ def test_an_island_is_designed_away():
     joined = designed(AtMost(measure=ConnectedSolid(), value=2.0))
     assert joined.feasible
     assert pieces(joined) == 1
+    assert scipy.ndimage.label(joined.part.fill >= 0.5)[1] == 1  # nor by slivers of the outline
     assert loose.objective < joined.objective < 1.2 * loose.objective
 
 
