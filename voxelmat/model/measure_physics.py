@@ -260,9 +260,9 @@ class ConnectedSolid:
     connected. In a block of 14 x 7 x 7 voxels held at its end a bar of 3 x 3 along it gives 0.75;
     with its middle voxels taken out over a length of 1, 19; half the bar and an island of 3^3, 18;
     the same joined by a neck of one voxel, 0.99; all at half density, 2: 2 is a limit to begin
-    with. Islands of a few voxels stay cool (8 voxels: 5, one: no more than without) and are left
-    to the filter. A made part reads higher than its design where a neck is so thin that its outline
-    only partly fills voxels (5 for a design at 2), though it is in one piece.
+    with. An island of 8 voxels gives 5, one of a single voxel 0.7: what is smaller than the filter
+    is left to the filter. A made part reads higher than its design where a neck is so thin
+    that its outline only partly fills voxels (5 for a design at 2), though it is in one piece.
 
     Attributes
     ----------
