@@ -73,6 +73,7 @@ def test_kept_without_outputs_and_paths(path):
 @pytest.mark.parametrize("path", BOOKS, ids=lambda p: p.name)
 def test_runs_from_top_to_bottom(path, tmp_path, monkeypatch):
     monkeypatch.setenv("PYTHONPATH", os.pathsep.join([str(ROOT), os.environ.get("PYTHONPATH", "")]))
+    monkeypatch.delenv("MPLBACKEND", raising=False)  # the kernel shows plots by its own
     book = _read(path)
     (cell,) = [c for c in book.cells if "parameters" in c.metadata.get("tags", [])]
     lines = cell.source.splitlines()
