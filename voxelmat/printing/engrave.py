@@ -198,7 +198,7 @@ class _Cut:
         depth = np.where(wide, inner - half, half - outer)
         steps = np.rint(depth * DISTANCE_STEPS / min(self.spacing))
         core = (slice(_PAD, -_PAD),) * 3
-        return np.clip(steps[core], -127, 127).astype(np.int8)
+        return np.asarray(np.clip(steps[core], -127, 127), dtype=np.int8)
 
     def _mark(self, place: tuple[int, int, int], name: str) -> Mark:
         """Cell centres in part coordinates."""
