@@ -9,6 +9,7 @@ from __future__ import annotations
 import struct
 import zlib
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 from isal import isal_zlib
@@ -16,9 +17,17 @@ from numpy.typing import NDArray
 
 from voxelmat.errors import FileFormatError, InputError
 
-__all__ = ["Bitmap", "decode_bitmap", "decode_indexed", "encode_bitmap", "encode_indexed"]
+__all__ = [
+    "Bitmap",
+    "decode_bitmap",
+    "decode_indexed",
+    "deflated",
+    "encode_bitmap",
+    "encode_indexed",
+]
 
 _SIGNATURE = b"\x89PNG\r\n\x1a\n"
+_PIECE = 1 << 16  # bytes
 _LARGEST = 1 << 20  # sites along one side; far beyond any tray, far below any overflow
 
 
@@ -46,15 +55,20 @@ def _chunk(kind: bytes, data: bytes) -> bytes:
     return struct.pack(">I", len(data)) + kind + data + struct.pack(">I", code)
 
 
-def _deflate(raw: NDArray[np.uint8]) -> bytes:
-    """Compress; the same input gives the same bytes in any thread and process.
+def deflated(raw: NDArray[np.uint8], packer: Any) -> bytes:
+    """Compress, piece by piece; the same input gives the same bytes in any thread and process.
 
-    The one-shot ``isal_zlib.compress`` does not: it starts from memory that nobody has cleared,
-    so that its choice of matches, and with it the file's digest, changes from thread to thread.
+    Given more than 64 KiB at once, isal starts from memory that nobody has cleared: its choice of
+    matches, and with it the file's digest, then changes now and then, once in some thousand files.
     """
-    packer = isal_zlib.compressobj(1)
-    packed: bytes = packer.compress(raw.data) + packer.flush()
-    return packed
+    flat = raw.reshape(-1)
+    pieces = [packer.compress(flat[i : i + _PIECE].data) for i in range(0, flat.size, _PIECE)]
+    return b"".join(pieces) + bytes(packer.flush())
+
+
+def _deflate(raw: NDArray[np.uint8]) -> bytes:
+    """Compress for a PNG."""
+    return deflated(raw, isal_zlib.compressobj(1))
 
 
 def encode_bitmap(bits: NDArray[np.uint8], width: int, pixels_per_metre: tuple[int, int]) -> bytes:

@@ -19,6 +19,7 @@ from isal import isal_zlib
 from numpy.typing import NDArray
 
 from voxelmat.errors import FileFormatError, InputError
+from voxelmat.io.png import deflated
 
 __all__ = ["PageFormat", "TiffPages", "decode_page", "encode_page", "write_pages"]
 
@@ -105,9 +106,7 @@ def encode_page(bits: NDArray[np.uint8], form: PageFormat) -> bytes:
     if bits.shape != (form.rows, form.stride):
         raise InputError(f"A page of {form.width} x {form.rows} does not fit {bits.shape} bytes.")
     if form.compression == "deflate":
-        packer = isal_zlib.compressobj(1)
-        packed: bytes = packer.compress(np.ascontiguousarray(bits).data) + packer.flush()
-        return packed
+        return deflated(np.ascontiguousarray(bits), isal_zlib.compressobj(1))
     strip = _group4(bits, form)
     return _REVERSED[np.frombuffer(strip, np.uint8)].tobytes() if form.low_first else strip
 
