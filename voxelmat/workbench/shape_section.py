@@ -9,20 +9,18 @@ import numpy as np
 
 from voxelmat.errors import InputError
 from voxelmat.io.mesh import read_mesh
-from voxelmat.model.blend import Blend
 from voxelmat.printing.place import rotation_matrix
 from voxelmat.units import LENGTH_MM, number
 from voxelmat.workbench import controls as c
 from voxelmat.workbench.files import bring_in
 from voxelmat.workbench.section import Section, number_from
+from voxelmat.workbench.shape_words import UNITS, edges_mm, free_name, made_of, start_edge
 from voxelmat.workflow.draft_keys import add_at
 from voxelmat.workflow.regions import grown_face
 
 __all__ = ["ShapeSection"]
 
 MESHES = (".stl", ".obj", ".ply", ".3mf")
-#: Voxels that a new design starts with, about.
-_START_VOXELS = 200_000
 #: A face may lie so far off an axis and still be laid on the tray, degrees; ours.
 _LEVEL_DEG = 1.0
 _SIDES = ("x-", "x+", "y-", "y+", "z-", "z+")
@@ -52,7 +50,7 @@ class ShapeSection(Section):
         stated = path.suffix.lower() == ".3mf"
         read_mesh(path, None if stated else "mm")  # refuses what cannot be read, now
         self.offered = path
-        self._form.update(unit="" if stated else "mm", body=_free(path.stem, self._bodies))
+        self._form.update(unit="" if stated else "mm", body=free_name(path.stem, self._bodies))
         self.bench.tell("shape")
         return path
 
@@ -63,9 +61,9 @@ class ShapeSection(Section):
         """
         path = self.bench.draft.path.parent / file
         if path.suffix.lower() == ".3mf":
-            return {"": _edges(path, None)}
-        x, y, z = _edges(path, "mm")
-        return {u: (x * f, y * f, z * f) for u, f in LENGTH_MM.items() if u in _UNITS}
+            return {"": edges_mm(path, None)}
+        x, y, z = edges_mm(path, "mm")
+        return {u: (x * f, y * f, z * f) for u, f in LENGTH_MM.items() if u in UNITS}
 
     def add_body(self, file: str, unit: str = "", name: str = "", resin: str = "") -> None:
         """Make a mesh file a body of the design.
@@ -85,7 +83,7 @@ class ShapeSection(Section):
         stated = path.suffix.lower() == ".3mf"
         meshes = read_mesh(path, unit or None)
         body: dict[str, Any] = {
-            "name": name or _free(path.stem, self._bodies),
+            "name": name or free_name(path.stem, self._bodies),
             "mesh": file,
         }
         if unit and not stated:
@@ -96,10 +94,13 @@ class ShapeSection(Section):
             body["blend"] = dict(self.bench.mix.blend.fractions)
         several = len(meshes) > 1
         entries = [
-            {**body, **({"name": _free(m.name, self._bodies), "object": m.name} if several else {})}
+            {
+                **body,
+                **({"name": free_name(m.name, self._bodies), "object": m.name} if several else {}),
+            }
             for m in meshes
         ]
-        edge = _start_edge(np.concatenate([m.vertices for m in meshes]))
+        edge = start_edge(np.concatenate([m.vertices for m in meshes]))
 
         def edit(data: dict[str, Any]) -> None:
             if not data["body"]:
@@ -254,7 +255,7 @@ class ShapeSection(Section):
         shown.append(c.file_drop("file", "Mesh (STL, OBJ, PLY, 3MF)", ",".join(MESHES)))
         if not bodies:
             return shown
-        rows = [[b["name"], b["mesh"], _made_of(b)] for b in bodies]
+        rows = [[b["name"], b["mesh"], made_of(b)] for b in bodies]
         shown.append(
             c.table(["body", "file", "of"], rows, caption="Bodies", name="body",
                     actions=["Remove"])
@@ -371,31 +372,3 @@ class ShapeSection(Section):
             self.call("side_region", name=name, side=str(self._form["side"]))
         self._form["region"] = ""
         self.bench.highlight(name)
-
-
-_UNITS = ("mm", "cm", "m", "um", "inch", "foot")
-
-
-def _edges(path: Path, unit: str | None) -> tuple[float, float, float]:
-    points = np.concatenate([m.vertices for m in read_mesh(path, unit)])
-    x, y, z = (float(v) for v in np.ptp(points, axis=0))
-    return x, y, z
-
-
-def _start_edge(points: np.ndarray[Any, Any]) -> float:
-    """A voxel edge of two digits with which the box holds about `_START_VOXELS`."""
-    edges = np.maximum(np.ptp(points, axis=0), 1e-3)
-    return float(f"{(float(np.prod(edges)) / _START_VOXELS) ** (1 / 3):.2g}")
-
-
-def _made_of(body: dict[str, Any]) -> str:
-    if "blend" in body:
-        return str(Blend.of(body["blend"]))
-    return str(body.get("resin") or body.get("bought_in", {}).get("name", "bought in"))
-
-
-def _free(name: str, taken: list[str]) -> str:
-    """A name that is not taken yet."""
-    if name not in taken:
-        return name
-    return next(f"{name} {n}" for n in range(2, 10_000) if f"{name} {n}" not in taken)
