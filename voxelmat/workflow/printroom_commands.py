@@ -52,7 +52,7 @@ def _number(text: str, word: str, what: str) -> float:
     except ValueError:
         value = math.nan
     if not math.isfinite(value):
-        raise InputError(f"{word}: {what} is a number; got {text!r}.", key=word)
+        raise InputError(f"{what[:1].upper()}{what[1:]} is a number; got {text!r}.", key=word)
     return value
 
 
@@ -61,7 +61,7 @@ def parse_day(text: str, word: str) -> date:
     try:
         return date.fromisoformat(text)
     except ValueError:
-        raise InputError(f"{word} takes a day as 2026-12-01; got {text!r}.", key=word) from None
+        raise InputError(f"A day is written as 2026-12-01; got {text!r}.", key=word) from None
 
 
 def _today() -> date:
