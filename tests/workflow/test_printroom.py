@@ -198,7 +198,7 @@ def test_kit_and_back(tmp_path, capsys):
         (("ticket", "STACK", "--loaded", "hard=lots"), "is a number"),
         (("ticket", "STACK", "--loaded", "hard=-1"), "0 or more"),
         (("ticket", "STACK", "--loaded", "other=5"), "lays no 'other'"),
-        (("ticket", "STACK", "--expiry", "hard=31.12.2026"), "takes a day"),
+        (("ticket", "STACK", "--expiry", "hard=31.12.2026"), "A day is written"),
         (("ticket", "STACK", "--lot", "hard=a", "--lot", "hard=b"), "given twice"),
         (("proof", "STACK", "--minutes", "0.01"), "no proof print"),
         (("proof", "STACK", "--height-mm", "nan"), "above 0"),
