@@ -4,10 +4,13 @@ import json
 import tomllib
 
 import pytest
+from hypothesis import given, settings
+from hypothesis import strategies as st
 
 from voxelmat.errors import InputError
 from voxelmat.workflow.draft import Draft
 from voxelmat.workflow.draft_keys import add_at, get_at, remove_at, set_at
+from voxelmat.workflow.draft_steps import difference, patched
 from voxelmat.workflow.draft_toml import updated_toml
 
 
@@ -120,6 +123,42 @@ def test_a_thousand_steps_share_what_did_not_change(design):
         _press(draft, 0.02 + 0.001 * (n + 1))
     regions = {id(step.data["region"]) for step in draft._undo}
     assert len(regions) == 1
+
+
+JSON = st.recursive(
+    st.none() | st.booleans() | st.integers(-3, 3) | st.sampled_from(["a", "b"]),
+    lambda inner: st.lists(inner, max_size=4) | st.dictionaries(st.sampled_from("abc"), inner),
+    max_leaves=8,
+)
+TABLES = st.dictionaries(st.sampled_from("abcd"), JSON)
+
+
+@settings(max_examples=60, deadline=None)
+@given(TABLES, TABLES)
+def test_a_step_is_what_it_changed(start, end):
+    change = json.loads(json.dumps(difference(start, end)))
+    assert patched(start, change) == end
+
+
+def test_an_autosave_holds_a_long_painting_once(design):
+    draft = Draft(design)
+    path = [[0.1 * n, 2.0, 3.0] for n in range(40)]
+    for n in range(30):
+        rule = {"kind": "stroke", "brush": "sphere", "radius_mm": 1.0 + n, "path_mm": path}
+        rule["blend"] = {"measured-hard": 1.0}
+        draft.change("stroke", lambda d, rule=rule: add_at(d, "layout", rule))
+    draft.undo()
+    kept = next(design.parent.glob(".*.draft.json")).stat().st_size
+    assert kept < 3 * len(json.dumps(draft.data, indent=2))  # 30 copies would be some 15 times it
+    again = Draft(design)
+    for _ in range(29):
+        again.undo()
+        draft.undo()
+    assert again.data == draft.data
+    for _ in range(30):
+        again.redo()
+        draft.redo()
+    assert again.data == draft.data
 
 
 def test_a_read_only_folder_is_a_notice_and_no_loss(design, monkeypatch):

@@ -16,6 +16,7 @@ from voxelmat.io.design import complete_design
 from voxelmat.io.schema import read_toml
 from voxelmat.model.design import FORMAT, Design
 from voxelmat.provenance import text_digest
+from voxelmat.workflow.draft_steps import difference, patched
 from voxelmat.workflow.draft_toml import updated_toml
 
 __all__ = ["Draft", "Step"]
@@ -23,7 +24,7 @@ __all__ = ["Draft", "Step"]
 Data = dict[str, Any]
 #: Steps that can be undone in a session, and those of them that the autosave keeps.
 _MOST_STEPS, _KEPT_STEPS = 1000, 50
-_AUTOSAVE_FORMAT = 1
+_AUTOSAVE_FORMAT = 2
 
 
 @dataclass(frozen=True, slots=True)
@@ -230,8 +231,8 @@ class Draft:
                 "format": _AUTOSAVE_FORMAT,
                 "of": text_digest(self._saved),
                 "data": self._data,
-                "undo": [[s.label, s.data] for s in self._undo[-_KEPT_STEPS:]],
-                "redo": [[s.label, s.data] for s in self._redo[-_KEPT_STEPS:]],
+                "undo": _packed(self._data, self._undo),
+                "redo": _packed(self._data, self._redo),
                 "view": self.view,
             }
             try:
@@ -265,8 +266,8 @@ class Draft:
                     )
                 return
             design = complete_design(data, self.path) if data["body"] else None
-            self._undo = [Step(label, before) for label, before in record["undo"]]
-            self._redo = [Step(label, before) for label, before in record["redo"]]
+            self._undo = _unpacked(data, record["undo"])
+            self._redo = _unpacked(data, record["redo"])
             self.view = dict(record["view"])
         except (OSError, ValueError, LookupError, TypeError, VoxelmatError) as error:
             self.notices.append(
@@ -286,6 +287,24 @@ def _plain(data: Mapping[str, Any]) -> Data:
     """Through JSON and back, so that what is compared later has the same types."""
     plain: Data = json.loads(json.dumps(data))
     return plain
+
+
+def _packed(data: Data, steps: list[Step]) -> list[Any]:
+    """The newest steps, the newest first, each as what turns the one before it into it."""
+    packed = []
+    for step in reversed(steps[-_KEPT_STEPS:]):
+        packed.append([step.label, difference(data, step.data)])
+        data = step.data
+    return packed
+
+
+def _unpacked(data: Data, packed: list[Any]) -> list[Step]:
+    """The inverse of `_packed`."""
+    steps = []
+    for label, change in packed:
+        data = patched(data, change)
+        steps.append(Step(str(label), data))
+    return steps[::-1]
 
 
 def _shared(fresh: Data, old: Data) -> Data:
