@@ -35,6 +35,21 @@ def test_undo_and_redo_go_through_every_change(design):
     assert draft.redo() == ""
 
 
+def test_what_was_put_in_is_not_the_callers_any_more(design):
+    draft = Draft(design)
+    spacing = [2.0, 2.0, 2.0]
+    draft.change("voxels", lambda d: set_at(d, "grid.spacing_mm", spacing))
+    spacing[0] = 0.5
+    region = {"name": "spot", "kind": "face", "side": "x-"}
+    draft.change("region", lambda d: add_at(d, "region", region))
+    region["side"] = "x+"
+    assert draft.data["grid"]["spacing_mm"] == [2.0, 2.0, 2.0]
+    assert draft.data["region"][-1]["side"] == "x-"
+    before = draft.data
+    draft.change("seed", lambda d: set_at(d, "seed", 8))
+    assert before["seed"] == 3  # what was read stays what it was
+
+
 def test_a_refused_change_leaves_everything(design):
     draft = Draft(design)
     before = draft.data

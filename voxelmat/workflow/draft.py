@@ -71,9 +71,11 @@ class Draft:
     # ------------------------------------------------------------------ what it holds
     @property
     def data(self) -> Data:
-        """The design's tables; a copy that may be changed without any effect."""
-        with self._lock:
-            return copy.deepcopy(self._data)
+        """The design's tables, to be read only: `change` makes the next ones, on a copy.
+
+        A screen reads them many times a second, so they are not copied here.
+        """
+        return self._data
 
     @property
     def empty(self) -> bool:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import copy
 import re
 from typing import Any
 
@@ -72,7 +73,7 @@ def set_at(data: dict[str, Any], key: str, value: Any) -> None:
     if isinstance(last, int):
         _down(place, [last], key)
     try:
-        place[last] = value
+        place[last] = copy.deepcopy(value)  # the caller may go on changing his own
     except TypeError:
         raise InputError("There is no table to put this into.", key=key) from None
 
@@ -87,7 +88,7 @@ def add_at(data: dict[str, Any], key: str, entry: Any) -> None:
         found = _down(place, [last], key)
     if not isinstance(found, list):
         raise InputError("This is not a list, so nothing can be added to it.", key=key)
-    found.append(entry)
+    found.append(copy.deepcopy(entry))
 
 
 def remove_at(data: dict[str, Any], key: str) -> None:
